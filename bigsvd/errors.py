@@ -1,0 +1,98 @@
+"""Every error a caller can meet, as one tree.
+
+    BigsvdError
+    ├── OptionError          (ValueError)  an option is out of range or contradicts another
+    │   └── MemoryCeilingError             the plan does not fit --memory
+    ├── SourceError          (OSError)     the input cannot be used
+    │   ├── NoMatrixError                  no such file, or no matrix under that path
+    │   ├── SeveralMatricesError           the choice must be made by the user
+    │   ├── UnsupportedMatrixError         1-D, empty, text, object type, unknown codec
+    │   ├── DamagedSourceError             bytes that do not decode, absent chunks
+    │   └── SourceChangedError             the file is not the one the run began with
+    ├── NonFiniteError       (ValueError)  NaN or infinity in the matrix
+    └── ResultError          (OSError)     the result store cannot be written or opened
+        ├── ResultExistsError
+        ├── IncompleteResultError
+        └── DamagedResultError
+
+A run that ends short of its tolerance is a verdict in the certificate, not an error.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+
+
+class BigsvdError(Exception):
+    """Base of all errors raised on purpose.
+
+    Parameters
+    ----------
+    problem : str
+        What was asked against what is needed, one sentence.
+    evidence : iterable of str
+        Values, units and places that show it, one line each.
+    remedy : str
+        One thing the user can type.
+    """
+
+    def __init__(self, problem: str, *, evidence: Iterable[str] = (), remedy: str = "") -> None:
+        self.problem = problem
+        self.evidence = tuple(evidence)
+        self.remedy = remedy
+        lines = [problem, *(f"    {line}" for line in self.evidence)]
+        if remedy:
+            lines.append(remedy)
+        super().__init__("\n".join(lines))
+
+
+class OptionError(BigsvdError, ValueError):
+    """An option is out of range, or contradicts another or the matrix."""
+
+
+class MemoryCeilingError(OptionError):
+    """The least that the plan needs is more than the memory ceiling."""
+
+
+class SourceError(BigsvdError, OSError):
+    """The input cannot be used."""
+
+
+class NoMatrixError(SourceError):
+    """No such file, or no matrix under the given path."""
+
+
+class SeveralMatricesError(SourceError):
+    """Several matrices would do; the user must name one."""
+
+
+class UnsupportedMatrixError(SourceError):
+    """The dataset is not a numeric matrix, or its encoding is not known here."""
+
+
+class DamagedSourceError(SourceError):
+    """Stored bytes are absent or do not decode."""
+
+
+class SourceChangedError(SourceError):
+    """The input is no longer the one the run began with."""
+
+
+class NonFiniteError(BigsvdError, ValueError):
+    """The matrix holds NaN or infinity."""
+
+
+class ResultError(BigsvdError, OSError):
+    """The result store cannot be written or opened."""
+
+
+class ResultExistsError(ResultError):
+    """Something already stands where the result should go."""
+
+
+class IncompleteResultError(ResultError):
+    """The store was never finished."""
+
+
+class DamagedResultError(ResultError):
+    """A part of the store is missing or does not match its checksum."""

@@ -1,0 +1,87 @@
+"""What is known of a matrix without reading it, and what every source must offer."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+
+
+@dataclass(frozen=True)
+class MatrixSpec:
+    """All that planning knows of a matrix, in the orientation in which it is stored.
+
+    Attributes
+    ----------
+    name : str
+        What to call it in messages: file, and the path inside it.
+    shape : (int, int)
+        Rows and columns as stored.
+    dtype : numpy.dtype
+        Type of the entries as they are decoded, in native byte order.
+    chunks : (int, int)
+        The smallest rectangle that can be read without reading anything twice: a chunk, or a whole shard.
+        (1, 1) where any rectangle will do; (1, columns) for a row-contiguous file.
+    storage : str
+        Storage class, the key of the nominal rates: ``memory``, ``plain``, ``compressed``, ``zarr``, ``npy``, ``graph``.
+    encoding : str
+        Chunking and filters in words, for people.
+    stored_bytes : int or None
+        Bytes on disk, where the format tells.
+    samples_hint : str or None
+        ``rows`` or ``columns`` where labels or markers in the file say which axis holds the samples.
+    hint_reason : str
+        The marker that says so, for people.
+    fingerprint : str
+        Identifies the input as it was when opened (sizes, times, metadata); empty where there is none.
+    """
+
+    name: str
+    shape: tuple[int, int]
+    dtype: np.dtype
+    chunks: tuple[int, int]
+    storage: str
+    encoding: str = ""
+    stored_bytes: int | None = None
+    samples_hint: str | None = None
+    hint_reason: str = ""
+    fingerprint: str = ""
+
+    @property
+    def decoded_bytes(self) -> int:
+        """Bytes of the whole matrix in its stored type."""
+        return self.shape[0] * self.shape[1] * self.dtype.itemsize
+
+
+class Source(Protocol):
+    """A matrix that can be read in rectangles, by several threads at once.
+
+    A source is cheap to pickle: it travels as its address and is opened again, once per process.
+    """
+
+    @property
+    def spec(self) -> MatrixSpec:
+        """What is known of the matrix without reading it."""
+        ...
+
+    def read(self, rows: tuple[int, int], columns: tuple[int, int], out: np.ndarray) -> None:
+        """Read the half-open rectangle rows × columns into `out`.
+
+        Parameters
+        ----------
+        rows, columns : (int, int)
+            First and one past the last, in stored order.
+        out : ndarray, shape (rows, columns), dtype ``spec.dtype``
+            Any strides; wholly overwritten.
+
+        Raises
+        ------
+        DamagedSourceError
+            If stored bytes are absent or do not decode; names file, dataset and place.
+        """
+        ...
+
+    def close(self) -> None:
+        """Release the file. Reading again opens it again."""
+        ...
