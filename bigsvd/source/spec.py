@@ -24,7 +24,8 @@ class MatrixSpec:
         The smallest rectangle that can be read without reading anything twice: a chunk, or a whole shard.
         (1, 1) where any rectangle will do; (1, columns) for a row-contiguous file.
     storage : str
-        Storage class, the key of the nominal rates: ``memory``, ``plain``, ``compressed``, ``zarr``, ``npy``, ``graph``.
+        Storage class, the key of the nominal rates: ``memory``, ``plain``, ``compressed``, ``zarr``, ``npy`` or
+        ``graph``.
     encoding : str
         Chunking and filters in words, for people.
     stored_bytes : int or None
@@ -35,6 +36,8 @@ class MatrixSpec:
         The marker that says so, for people.
     fingerprint : str
         Identifies the input as it was when opened (sizes, times, metadata); empty where there is none.
+    cautions : tuple of str
+        What a reader of the plan should know about how entries are read, such as attributes that are not applied.
     """
 
     name: str
@@ -47,6 +50,7 @@ class MatrixSpec:
     samples_hint: str | None = None
     hint_reason: str = ""
     fingerprint: str = ""
+    cautions: tuple[str, ...] = ()
 
     @property
     def decoded_bytes(self) -> int:

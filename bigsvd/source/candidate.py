@@ -1,0 +1,115 @@
+"""What an array in a file is, whether it can be decomposed, and the choice of one among several."""
+
+from __future__ import annotations
+
+import shlex
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+
+from bigsvd.errors import NoMatrixError, SeveralMatricesError, UnsupportedMatrixError
+from bigsvd.units import show_count, show_shape
+
+LISTED = 12
+
+
+@dataclass(frozen=True)
+class Candidate:
+    """One array found in a file.
+
+    Attributes
+    ----------
+    path : str
+        Its address inside the file, as ``--matrix`` takes it; empty where the file holds one array only.
+    shape : tuple of int
+        Empty for scalars and for what is no array.
+    dtype : str
+        Type of the stored entries in words.
+    chunks : tuple of int or None
+        Chunk (for sharded arrays: shard), None where the array is stored in one piece.
+    encoding : str
+        Filters, codecs and layout in words.
+    stored_bytes, decoded_bytes : int or None
+        Bytes on disk and in memory, where they can be told without reading the array.
+    usable : bool
+        Whether it can be decomposed.
+    reason : str
+        If not, why not.
+    samples_hint, hint_reason : str or None, str
+        As in `MatrixSpec`.
+    """
+
+    path: str
+    shape: tuple[int, ...] = ()
+    dtype: str = ""
+    chunks: tuple[int, ...] | None = None
+    encoding: str = ""
+    stored_bytes: int | None = None
+    decoded_bytes: int | None = None
+    usable: bool = False
+    reason: str = ""
+    samples_hint: str | None = None
+    hint_reason: str = ""
+
+    @property
+    def line(self) -> str:
+        """All of it in one line of a list."""
+        size = show_shape(self.shape) if self.shape else ""
+        words = [part for part in (f"{size} {self.dtype}".strip(), self.reason) if part]
+        return f"{self.path or '(the array)'}  " + ": ".join(words)
+
+
+SPARSE = "a sparse group; sparse groups are not read yet"
+
+
+def why_unusable(shape: tuple[int, ...] | None, numeric: bool, type_words: str) -> str:
+    """Reason for which an array is no matrix; empty where it is one."""
+    if shape is None:
+        return "it holds no values"
+    if not numeric:
+        return f"not numbers but {type_words}"
+    if len(shape) != 2:
+        return "a single value" if not shape else f"{len(shape)}-D, and a matrix has 2 axes"
+    if 0 in shape:
+        return "it is empty"
+    return ""
+
+
+def choose(candidates: Sequence[Candidate], where: str) -> Candidate:
+    """Take the one matrix that a file holds; refuse to guess between several, and say what is there if none is."""
+    usable = [candidate for candidate in candidates if candidate.usable]
+    matrices = [candidate for candidate in usable if min(candidate.shape) > 1]
+    sparse = [candidate for candidate in candidates if candidate.reason == SPARSE]
+    # Files of some programs keep scalars and vectors as 1 × n matrices: they are taken only if there is nothing else.
+    choice = matrices or usable
+    if len(choice) == 1 and not sparse:
+        return choice[0]
+    if choice:
+        example = max(choice, key=lambda candidate: candidate.decoded_bytes or 0).path
+        problem = (
+            f"{where} holds {show_count(len(choice))} matrices and none was named"
+            if len(choice) > 1
+            else f"{where} holds one dense matrix beside sparse groups, and none was named"
+        )
+        raise SeveralMatricesError(
+            problem,
+            evidence=listing([*choice, *sparse]),
+            remedy=f'Name one: --matrix {shlex.quote(example)} (in Python: matrix="{example}")',
+        )
+    if not candidates:
+        raise NoMatrixError(
+            f"{where} holds no arrays at all", remedy="Give a file that holds a two-dimensional array of numbers."
+        )
+    raise UnsupportedMatrixError(
+        f"{where} holds no matrix that can be read: a two-dimensional array of numbers is needed",
+        evidence=listing(candidates),
+        remedy=f"See all of it with: bigsvd inspect {shlex.quote(where)}",
+    )
+
+
+def listing(candidates: Iterable[Candidate]) -> list[str]:
+    """Lines that name candidates, the largest first, the rest counted."""
+    ordered = sorted(candidates, key=lambda candidate: (not candidate.usable, -(candidate.decoded_bytes or 0)))
+    lines = [candidate.line for candidate in ordered[:LISTED]]
+    if len(ordered) > LISTED:
+        lines.append(f"… and {show_count(len(ordered) - LISTED)} more")
+    return lines

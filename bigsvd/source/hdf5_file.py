@@ -1,0 +1,65 @@
+"""An HDF5 file opened for reading, and what it means when that fails."""
+
+from __future__ import annotations
+
+import errno
+import os
+import re
+from typing import Any
+
+from bigsvd.errors import DamagedSourceError, NoMatrixError, SourceError
+from bigsvd.units import show_count
+
+_TRUNCATED = re.compile(r"eof = (\d+).*stored_eof = (\d+)")
+
+
+def open_hdf5(path: str) -> Any:
+    """Open an HDF5 file read-only, with the filters of hdf5plugin at hand.
+
+    Locks are taken where the file system knows them. The chunk cache is off: chunks are read whole and once.
+    """
+    import h5py
+    import hdf5plugin  # noqa: F401  registers its filters
+
+    try:
+        return h5py.File(path, "r", locking="best-effort", rdcc_nbytes=0)
+    except OSError as error:
+        raise _why_not_opened(path, error) from error
+
+
+def _why_not_opened(path: str, error: OSError) -> SourceError:
+    text = str(error)
+    truncated = _TRUNCATED.search(text)
+    if truncated:
+        found, needed = int(truncated[1]), int(truncated[2])
+        return DamagedSourceError(
+            f"{path} is cut short: {found / needed:.1%} of it is there",
+            evidence=[f"{show_count(found)} bytes found, {show_count(needed)} bytes when it was written"],
+            remedy="Copy or download the file again.",
+        )
+    if isinstance(error, FileNotFoundError):
+        return NoMatrixError(f"{path} does not exist", remedy="Check the path.")
+    if error.errno in (errno.EACCES, errno.EPERM):
+        return SourceError(
+            f"{path} may not be read by this user",
+            evidence=[text],
+            remedy="Ask its owner for read permission, or copy it to where you may read it.",
+        )
+    if error.errno in (errno.EAGAIN, errno.EWOULDBLOCK) or "unable to lock file" in text:
+        return SourceError(
+            f"{path} is locked: another program has it open for writing",
+            evidence=[text],
+            remedy="Close it there, or work on a copy of the file.",
+        )
+    if "already open for" in text:
+        return DamagedSourceError(
+            f"{path} is marked as open for writing: its writer is still at work, or crashed and left it incomplete",
+            evidence=[text],
+            remedy="If no program writes to it any more, write the file again; clearing the mark with h5clear does not"
+            " bring back what was never written.",
+        )
+    return DamagedSourceError(
+        f"{path} begins like an HDF5 file but cannot be opened",
+        evidence=[text, f"{show_count(os.path.getsize(path))} bytes in the file"],
+        remedy="Copy or download the file again.",
+    )

@@ -1,0 +1,64 @@
+"""Half-open rectangles of a matrix and the chunks they touch."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+import numpy as np
+
+from bigsvd.source.spec import MatrixSpec
+from bigsvd.units import show_count
+
+Span = tuple[int, int]
+
+
+def require_rectangle(spec: MatrixSpec, rows: Span, columns: Span, out: np.ndarray) -> None:
+    """Refuse a rectangle outside the matrix, or a buffer that does not fit it: mistakes of the calling code."""
+    for axis, (start, stop), side in (("rows", rows, spec.shape[0]), ("columns", columns, spec.shape[1])):
+        if not 0 <= start <= stop <= side:
+            raise ValueError(f"{axis} {start}:{stop} asked of a matrix with {side}")
+    wanted = (rows[1] - rows[0], columns[1] - columns[0])
+    if out.shape != wanted or out.dtype != spec.dtype:
+        raise ValueError(f"buffer is {out.dtype} {out.shape}, the rectangle needs {spec.dtype} {wanted}")
+
+
+def touched(rows: Span, columns: Span, chunks: tuple[int, int]) -> Iterator[tuple[int, int]]:
+    """Coordinates, in the chunk grid, of all chunks that a rectangle touches, in storage order."""
+    if rows[0] < rows[1] and columns[0] < columns[1]:
+        for i in range(rows[0] // chunks[0], (rows[1] - 1) // chunks[0] + 1):
+            for j in range(columns[0] // chunks[1], (columns[1] - 1) // chunks[1] + 1):
+                yield i, j
+
+
+def overlap(position: int, chunk: int, span: Span) -> tuple[slice, slice]:
+    """Where chunk number `position` and `span` overlap: inside the chunk, and inside the span's buffer."""
+    first = position * chunk
+    start, stop = max(first, span[0]), min(first + chunk, span[1])
+    return slice(start - first, stop - first), slice(start - span[0], stop - span[0])
+
+
+def clip(position: int, chunk: int, span: Span) -> Span:
+    """Part of `span` that lies in chunk number `position`."""
+    return max(position * chunk, span[0]), min((position + 1) * chunk, span[1])
+
+
+def grid_shape(shape: tuple[int, int], chunks: tuple[int, int]) -> tuple[int, int]:
+    """Number of chunks along each axis."""
+    return -(-shape[0] // chunks[0]), -(-shape[1] // chunks[1])
+
+
+def show_place(rows: Span, columns: Span) -> str:
+    """Name a rectangle for people, counting from 0."""
+    return (
+        f"rows {show_count(rows[0])} to {show_count(rows[1] - 1)}, "
+        f"columns {show_count(columns[0])} to {show_count(columns[1] - 1)} (counted from 0)"
+    )
+
+
+def show_chunk(coordinates: tuple[int, int], shape: tuple[int, int], chunks: tuple[int, int]) -> str:
+    """Name a chunk by its coordinates in the grid and the entries it holds."""
+    rows, columns = (
+        (position * chunk, min((position + 1) * chunk, side))
+        for position, chunk, side in zip(coordinates, chunks, shape, strict=True)
+    )
+    return f"chunk ({coordinates[0]}, {coordinates[1]}): {show_place(rows, columns)}"
