@@ -1,0 +1,124 @@
+"""How a stored matrix is cut: the axis the panels run along, their edges, and the grouping into segments and waves."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from bigsvd.source import MatrixSpec
+
+# A wave lasts at most this long on one worker at nominal rates, so that little is lost when a run is cut.
+WAVE_SECONDS = 10.0
+# Panels of whole chunks are made small enough for a pilot of several and a full pipeline, large enough to read well.
+MOST_PANEL_BYTES = 16 * 2**20
+LEAST_PANEL_BYTES = 32 * 2**10
+WANTED_PANELS = 160
+
+
+@dataclass(frozen=True)
+class Geometry:
+    """One way to sweep a stored matrix.
+
+    Attributes
+    ----------
+    axis : int
+        Stored axis the panels run along (0: panels are ranges of stored rows).
+    lines, across : int
+        Entries along that axis and across it: a panel is panel_lines × across, the basis across × width.
+    lines_are_samples : bool
+        Whether the swept axis holds the samples (means are then taken along the sweep).
+    edges : tuple of int
+        Panel p covers lines edges[p] … edges[p + 1].
+    amplification : float
+        Bytes read over bytes of the matrix; above 1 where panels are parts of chunks.
+    panel_bytes : int
+        Largest panel in the stored type.
+    """
+
+    axis: int
+    lines: int
+    across: int
+    lines_are_samples: bool
+    edges: tuple[int, ...]
+    amplification: float
+    panel_bytes: int
+
+    @property
+    def panels(self) -> int:
+        """Number of panels."""
+        return len(self.edges) - 1
+
+    def rectangle(self, panel: int) -> tuple[tuple[int, int], tuple[int, int]]:
+        """Stored rows and columns of a panel."""
+        along = (self.edges[panel], self.edges[panel + 1])
+        return (along, (0, self.across)) if self.axis == 0 else ((0, self.across), along)
+
+
+def cut(spec: MatrixSpec, axis: int, samples_axis: int, room: int, panel_lines: int | None = None) -> Geometry:
+    """Cut a matrix into panels of whole chunks along an axis.
+
+    Parameters
+    ----------
+    spec : MatrixSpec
+    axis : int
+        Stored axis the panels run along.
+    samples_axis : int
+        Stored axis that holds the samples.
+    room : int
+        Bytes one panel may take in its stored type.
+    panel_lines : int or None
+        Lines per panel where the caller insists.
+
+    Returns
+    -------
+    Geometry
+        With panels of part of a chunk, and the amplification that costs, where a whole chunk does not fit in `room`.
+    """
+    lines, across = spec.shape[axis], spec.shape[1 - axis]
+    unit = min(spec.chunks[axis], lines)
+    line_bytes = max(1, across * spec.dtype.itemsize)
+    target = max(min(room, MOST_PANEL_BYTES, lines * line_bytes // WANTED_PANELS), LEAST_PANEL_BYTES) // line_bytes
+    amplification = 1.0
+    if panel_lines is not None:
+        height = panel_lines
+        if height % unit and height < lines:
+            amplification = _amplification(lines, unit, height)
+    elif room // line_bytes >= unit:
+        height = max(1, target // unit) * unit
+    else:
+        height = max(1, room // line_bytes)
+        amplification = _amplification(lines, unit, height)
+    edges = (*range(0, lines, height), lines)
+    return Geometry(axis, lines, across, axis == samples_axis, edges, amplification, min(height, lines) * line_bytes)
+
+
+def _amplification(lines: int, unit: int, height: int) -> float:
+    """Lines decoded over lines needed, when panels of `height` cut chunks of `unit` lines."""
+    decoded = 0
+    for start in range(0, lines, height):
+        stop = min(start + height, lines)
+        decoded += min(math.ceil(stop / unit) * unit, lines) - start // unit * unit
+    return decoded / lines
+
+
+def group(panels: int, panel_seconds: float, leaves: int) -> tuple[tuple[tuple[int, int], ...], ...]:
+    """Group panels into waves of segments.
+
+    Parameters
+    ----------
+    panels : int
+    panel_seconds : float
+        Nominal time of one panel on one worker.
+    leaves : int
+        Segments per wave, whose partial sums memory must hold.
+
+    Returns
+    -------
+    tuple of waves, each a tuple of (first panel, one past the last) segments
+        Every segment of a full wave has the same number of panels.
+    """
+    per_wave = max(leaves, min(panels, int(WAVE_SECONDS / max(panel_seconds, 1e-9))))
+    waves = math.ceil(panels / per_wave)
+    run = max(1, math.ceil(panels / (waves * leaves)))
+    segments = [(start, min(start + run, panels)) for start in range(0, panels, run)]
+    return tuple(tuple(segments[first : first + leaves]) for first in range(0, len(segments), leaves))

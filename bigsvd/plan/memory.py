@@ -1,0 +1,100 @@
+"""What a plan will hold in memory, term by term, phase by phase."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from bigsvd.plan.geometry import Geometry
+from bigsvd.plan.rates import BASE_BYTES
+from bigsvd.plan.widths import Widths
+from bigsvd.source import MatrixSpec
+from bigsvd.units import show_bytes, show_count
+
+# A panel is converted and multiplied in units: single-precision sums stay within 512 terms (docs/method.md), and a unit of this
+# many lines and columns stays in the cache. Wider matrices are converted once for each of the two products.
+UNIT_LINES = 512
+UNIT_COLUMNS = 8192
+# Lines gathered before a Householder fold: several times the width, so that the old triangle is a small part of the work.
+LEAST_FOLD_LINES = 1024
+# Most memory that writing and verifying the result takes beside the scratch buffers.
+RESULT_BYTES = 96 * 2**20
+
+
+@dataclass(frozen=True)
+class MemoryTerm:
+    """One term of the memory plan."""
+
+    size: int
+    what: str
+
+
+def fold_lines(width: int) -> int:
+    """Lines gathered before a fold of `width` columns."""
+    return max(LEAST_FOLD_LINES, 2 * width)
+
+
+def memory_terms(
+    spec: MatrixSpec, geometry: Geometry, route: str, widths: Widths, *, workers: int, leaves: int, pilot_bytes: int, resident: bool
+) -> tuple[MemoryTerm, ...]:
+    """Terms of the phase that needs most.
+
+    Parameters
+    ----------
+    spec, geometry, route, widths
+        The candidate plan.
+    workers : int
+        Threads that each hold a panel and its working buffers.
+    leaves : int
+        Segments per wave; two waves may be alive.
+    pilot_bytes : int
+        The sample held for the pilot.
+    resident : bool
+        Whether the whole matrix is held in its stored type.
+
+    Returns
+    -------
+    tuple of MemoryTerm
+        Their sum is the planned peak.
+    """
+    entry = 16 if spec.dtype.kind == "c" else 8
+    n = geometry.across
+    column = n * entry
+    whole_spectrum = route in ("gram", "tsqr", "direct")
+    folded = n + 1 if route in ("tsqr", "direct") else widths.limit + 1
+    triangle = folded**2 * entry
+    panel = 0 if resident else geometry.panel_bytes
+    chunk = int(np.prod(spec.chunks)) * spec.dtype.itemsize
+    decode = 0 if resident or spec.storage in ("memory", "npy", "graph") else 3 * chunk
+    unit = UNIT_LINES * (min(n, UNIT_COLUMNS) + 3 * widths.block + widths.limit) * entry + widths.block * column
+    fold = 3 * (fold_lines(folded) + folded) * folded * entry
+    leaf = widths.block * column + (widths.limit + 1) ** 2 * entry + 4 * column
+    if route == "gram":
+        leaf = max(leaf, n * column + 4 * column)
+    if route in ("tsqr", "direct"):
+        leaf = max(leaf, triangle + 4 * column)
+    live = 2 * leaves
+    held = [MemoryTerm(BASE_BYTES, "interpreter and libraries")]
+    if resident:
+        held.append(MemoryTerm(spec.decoded_bytes, "the whole matrix, held in its stored type"))
+    held.append(
+        MemoryTerm(2 * widths.limit * column, f"basis and its products, {show_count(widths.limit)} columns of {show_count(n)}")
+    )
+    pilot = [MemoryTerm(pilot_bytes, "pilot sample in its stored type")] if pilot_bytes else []
+    reading = [
+        MemoryTerm(workers * (panel + decode), f"{workers} panels in flight, {show_bytes(panel)} each, and their decoding"),
+        MemoryTerm(workers * (unit + fold), f"working buffers of {workers} workers: conversion, products, QR"),
+        MemoryTerm(live * leaf, f"partial sums of up to {live} segments, {show_bytes(leaf)} each"),
+        MemoryTerm(2 * widths.block * column, f"columns being multiplied, {show_count(widths.block)}"),
+    ]
+    dense = n * column if whole_spectrum else 0
+    growing = [MemoryTerm(5 * widths.block * column + 6 * dense, "new directions: residuals and their QR, small dense steps")]
+    writing = [MemoryTerm(RESULT_BYTES + workers * unit, "writing and verifying the result")]
+    phases = [pilot + reading, reading, growing, writing]
+    return (*held, *max(phases, key=lambda terms: sum(term.size for term in terms)))
+
+
+def total(terms: tuple[MemoryTerm, ...]) -> int:
+    """Sum of the terms, bytes."""
+    return sum(term.size for term in terms)
