@@ -42,6 +42,8 @@ class Agreement(NamedTuple):
         Degrees between planted and found vector, the larger of left and right.
     expected_value, expected_angle : float
         What the exact decomposition of the noisy matrix gives, to within the chance of one draw of the noise.
+    spread : float
+        Standard deviation of that chance in the value: of uᵀNv, the noise of one entry.
     """
 
     component: int
@@ -50,11 +52,16 @@ class Agreement(NamedTuple):
     angle: float
     expected_value: float
     expected_angle: float
+    spread: float
 
     @property
     def as_expected(self) -> bool:
-        """Whether the value is within 0.5 % of the expected one, and the angle at most a tenth (and 0.1°) above it."""
-        near = abs(self.found_value / self.expected_value - 1) <= 5e-3
+        """Whether the value is within 5 spreads and 1e-3 of the expected one, and the angle at most a tenth above it.
+
+        1e-3 is the default tolerance of a decomposition; the angle may be 0.1° more, where it is small.
+        """
+        apart = abs(self.found_value - self.expected_value)
+        near = apart <= 5 * self.spread + 1e-3 * self.expected_value
         return near and self.angle <= 1.1 * self.expected_angle + 0.1
 
 
@@ -110,16 +117,11 @@ def compare_with_planted(factors: FoundFactors, folder: Path, which: str) -> lis
         _angles(left[:, :count], np.asarray(found_left[:, :count])),
         _angles(right[:, :count], np.asarray(found_right[:, :count])),
     )
-    return [
-        Agreement(
-            i + 1,
-            float(values[i]),
-            float(found[i]),
-            float(angles[i]),
-            *_expected(values[i], noise, len(left), len(right)),
-        )
-        for i in range(count)
-    ]
+    table = []
+    for i in range(count):
+        expected = _expected(float(values[i]), noise, len(left), len(right))
+        table.append(Agreement(i + 1, float(values[i]), float(found[i]), float(angles[i]), *expected, noise))
+    return table
 
 
 def _angles(one: np.ndarray, other: np.ndarray) -> np.ndarray:
