@@ -1,0 +1,127 @@
+"""The shape of a result store: names, dimensions, chunks and files, and what they cost. Opens nothing."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+FORMAT = 1
+VECTORS = {"left_vectors": ("row", "component"), "right_vectors": ("column", "component")}
+VALUES = {"singular_values": ("component",), "column_mean": ("column",), "column_scale": ("column",)}
+SPECTRUM = ("value", "lower", "upper", "variance", "variance_share", "cumulative_share")
+GROUPS = ("spectrum", "certificate")
+MEMBERS = frozenset({"zarr.json", *VECTORS, *VALUES, *GROUPS, "row_name", "column_name"})
+
+_CHUNK_BYTES = 32 * 2**20
+_LARGEST_CHUNK_BYTES = 64 * 2**20
+# 2 × 400 files of vectors, 2 × 20 of column_mean and column_scale, about 60 others: under 1,000 at any size.
+_VECTOR_FILES = 400
+_VALUE_FILES = 20
+_OTHER_FILES = 64
+
+
+@dataclass(frozen=True)
+class VectorGrid:
+    """How the vectors of one side are cut: chunks of whole rows, one or more of them to a file.
+
+    Attributes
+    ----------
+    rows, rank : int
+        Shape of the array.
+    chunk_rows : int
+        Rows of one chunk.
+    chunks_per_file : int
+        1, or the number of chunks of a shard where single chunks would make too many files.
+    """
+
+    rows: int
+    rank: int
+    chunk_rows: int
+    chunks_per_file: int
+
+    @property
+    def chunks(self) -> int:
+        """Number of chunks."""
+        return -(-self.rows // self.chunk_rows)
+
+    @property
+    def files(self) -> int:
+        """Number of files."""
+        return -(-self.chunks // self.chunks_per_file)
+
+
+@dataclass(frozen=True)
+class StoreCost:
+    """What writing a result takes.
+
+    Attributes
+    ----------
+    disk_bytes : int
+        Upper bound of the bytes on disk.
+    memory_bytes : int
+        Upper bound of the bytes that `FactorsWriter` holds at any time, beside the blocks handed to it, the mean
+        and the scale.
+    files : int
+        Upper bound of the number of files.
+    """
+
+    disk_bytes: int
+    memory_bytes: int
+    files: int
+
+
+def plan_grid(rows: int, rank: int, itemsize: int) -> VectorGrid:
+    """Cut an array of `rows` × `rank` entries into chunks of 16–64 MiB (or one smaller one) in at most 400 files.
+
+    Examples
+    --------
+    >>> plan_grid(100_000, 20, 8)
+    VectorGrid(rows=100000, rank=20, chunk_rows=100000, chunks_per_file=1)
+    >>> grid = plan_grid(100_000_000, 50, 8)
+    >>> grid.chunks, grid.chunks_per_file, grid.files
+    (597, 2, 299)
+    """
+    row_bytes = rank * itemsize
+    target = min(max(rows * row_bytes // _VECTOR_FILES, _CHUNK_BYTES), _LARGEST_CHUNK_BYTES)
+    chunks = -(-rows // max(target // row_bytes, 1))
+    chunk_rows = -(-rows // chunks)
+    chunks = -(-rows // chunk_rows)
+    return VectorGrid(rows, rank, chunk_rows, -(-chunks // _VECTOR_FILES))
+
+
+def plan_chunk(length: int, itemsize: int) -> int:
+    """Entries per chunk of a one-dimensional array: 32 MiB, or more where that would make over 20 files."""
+    return max(min(length, _CHUNK_BYTES // itemsize), -(-length // _VALUE_FILES), 1)
+
+
+def store_cost(shape: tuple[int, int], rank: int, dtype: np.dtype) -> StoreCost:
+    """Bound the bytes, memory and files of a result before anything is written.
+
+    Parameters
+    ----------
+    shape : (int, int)
+        Rows and columns (m, n) of the decomposed matrix.
+    rank : int
+        Components k.
+    dtype : numpy.dtype
+        Type of the stored vectors.
+
+    Returns
+    -------
+    StoreCost
+
+    Examples
+    --------
+    >>> cost = store_cost((100_000_000, 5_000), 50, np.dtype("float64"))
+    >>> cost.disk_bytes // 10**9, cost.memory_bytes // 2**20, cost.files
+    (40, 257, 404)
+    """
+    grids = [plan_grid(side, rank, dtype.itemsize) for side in shape]
+    vectors = sum(shape) * rank * dtype.itemsize
+    chunk = max(grid.chunk_rows * rank * dtype.itemsize for grid in grids)
+    # zstd adds at most 1/256 to what it cannot compress; 1 KiB a component is room for the spectrum beyond the rank.
+    disk = vectors + vectors // 256 + 25 * shape[1] + 1024 * rank + 2**20
+    files = sum(grid.files for grid in grids) + 2 * _VALUE_FILES + _OTHER_FILES
+    # The buffer of each side, the encoded chunk and the one being read back.
+    return StoreCost(disk, 4 * chunk + 2**21, files)
