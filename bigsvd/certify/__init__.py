@@ -1,5 +1,36 @@
 """What a run proves: intervals, order, angles, the bound on what was missed, the verdict. Imports no solver."""
 
 from bigsvd.certify.certificate import STATES, Certificate, SliceCheck
+from bigsvd.certify.evidence import Evidence, WholeSpectrum
+from bigsvd.certify.missed import CHAIN_FAILURE, ChainState, chain_bound, energy_bound, least_projection
+from bigsvd.certify.rounding import (
+    SumDepth,
+    fold_rounding,
+    gram_rounding,
+    measured_rounding,
+    product_rounding,
+    tall_rounding,
+)
+from bigsvd.certify.verdict import certify, rounding_limited, spectrum_intervals
 
-__all__ = ["STATES", "Certificate", "SliceCheck"]
+__all__ = [
+    "CHAIN_FAILURE",
+    "STATES",
+    "Certificate",
+    "ChainState",
+    "Evidence",
+    "SliceCheck",
+    "SumDepth",
+    "WholeSpectrum",
+    "certify",
+    "chain_bound",
+    "energy_bound",
+    "fold_rounding",
+    "gram_rounding",
+    "least_projection",
+    "measured_rounding",
+    "product_rounding",
+    "rounding_limited",
+    "spectrum_intervals",
+    "tall_rounding",
+]

@@ -1,0 +1,22 @@
+"""The only loop that reads the matrix: panels, dask graphs, sums in a fixed order."""
+
+from bigsvd.sweep.events import Control, Listener, Progress, StoppedError
+from bigsvd.sweep.panels import PanelReader
+from bigsvd.sweep.partial import Partial, fold
+from bigsvd.sweep.scratch import Scratch
+from bigsvd.sweep.segment import SweepTask
+from bigsvd.sweep.waves import Engine, one_blas_thread
+
+__all__ = [
+    "Control",
+    "Engine",
+    "Listener",
+    "PanelReader",
+    "Partial",
+    "Progress",
+    "Scratch",
+    "StoppedError",
+    "SweepTask",
+    "fold",
+    "one_blas_thread",
+]

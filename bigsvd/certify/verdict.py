@@ -1,0 +1,140 @@
+"""From evidence to certificate: states, verdict and words."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from bigsvd.certify.angles import bound_angles
+from bigsvd.certify.certificate import Certificate
+from bigsvd.certify.evidence import Evidence
+from bigsvd.certify.intervals import BULK_WIDTH, choose_intervals
+from bigsvd.certify.order import index_bounds
+
+# Neighbours q places further on within this ratio show crowding (1.03 in a flat bulk, 1.4 for 1/√i, 2 for 1/i).
+CROWD_RATIO = 0.9
+RESOLVED, OPEN, BULK = range(3)
+
+
+def certify(evidence: Evidence, rank: int, reach: int, tolerance: float, *, strict: bool) -> Certificate:
+    """State what is known of the leading components.
+
+    Parameters
+    ----------
+    evidence : Evidence
+    rank : int
+        Components k.
+    reach : int
+        How far ahead crowding is looked for, q.
+    tolerance : float
+        Wanted width of the intervals, relative to the value.
+    strict : bool
+        Whether the bulk counts as unmet.
+
+    Returns
+    -------
+    Certificate
+    """
+    theta = evidence.theta
+    upper = index_bounds(evidence)
+    if evidence.whole is not None:
+        known = evidence.whole.value + evidence.whole.error
+        count = min(len(known), len(upper))
+        upper[:count] = np.minimum(upper[:count], known[:count])
+    intervals = choose_intervals(evidence, upper, rank, tolerance)
+    value = theta[:rank].copy()
+    null = value <= evidence.value_rounding
+    value[null] = 0.0
+    lower = np.where(null, 0.0, np.minimum(intervals.lower, value))
+    top = np.maximum(intervals.upper, value)
+    scale = theta[0] if len(theta) and theta[0] > 0 else 1.0
+    relative = np.where(null, top / scale, (top - lower) / np.where(null, 1.0, np.maximum(value, np.finfo(float).tiny)))
+    state = np.full(rank, OPEN, np.int8)
+    crowded = np.array([i + reach < len(theta) and theta[i + reach] >= CROWD_RATIO * theta[i] for i in range(rank)], bool)
+    state[crowded & ~null & (relative <= BULK_WIDTH)] = BULK
+    state[relative <= tolerance] = RESOLVED
+    angles = bound_angles(evidence, upper, rank)
+    angles.bound[null] = np.nan
+    norms = evidence.residual_norms[:rank]
+    residual = np.where(null, norms / max(scale, np.finfo(float).tiny), norms / np.maximum(value, np.finfo(float).tiny))
+    noise = max(evidence.value_rounding, float(np.sqrt(np.max(evidence.product_rounding, initial=0.0))))
+    if evidence.whole is not None and np.isfinite(evidence.whole.vector_error):
+        noise = evidence.whole.vector_error
+    captured = float(np.sum(value**2))
+    share = min(1.0, captured / evidence.energy) if evidence.energy > 0 else 1.0
+    met = not np.any(state == OPEN) and not (strict and np.any(state == BULK))
+    proved = np.arange(rank) < intervals.proved
+    return Certificate(
+        value=value,
+        lower=lower,
+        upper=top,
+        residual=residual,
+        state=state,
+        index_proved=proved,
+        angle_bound=angles.bound,
+        tied_first=angles.first,
+        tied_last=angles.last,
+        null=null,
+        below_noise=~null & (value <= noise),
+        missed_bound=float(evidence.missed),
+        missed_how=evidence.missed_how,
+        failure_probability=evidence.failure_probability,
+        rounding=float(max(evidence.value_rounding, np.max(evidence.product_rounding[:rank] / np.maximum(theta[:rank], scale * 1e-300)))),
+        rounding_how=evidence.rounding_how,
+        captured_share=share,
+        total_energy=evidence.energy,
+        tolerance=tolerance,
+        strict=strict,
+        tolerance_met=met,
+        verdict=_words(state, null, relative, proved, tolerance, strict=strict),
+    )
+
+
+def spectrum_intervals(evidence: Evidence) -> tuple[np.ndarray, np.ndarray]:
+    """Ends by index of all computed values, shape (L,) each."""
+    lower = np.maximum(evidence.theta - evidence.value_rounding, 0.0)
+    upper = index_bounds(evidence)[:-1]
+    if evidence.whole is not None:
+        count = min(len(upper), len(evidence.whole.value))
+        upper[:count] = np.minimum(upper[:count], (evidence.whole.value + evidence.whole.error)[:count])
+    return lower, np.maximum(upper, evidence.theta)
+
+
+def rounding_limited(evidence: Evidence, certificate: Certificate) -> bool:
+    """Whether every open component is wide by rounding alone, so that more sweeps in this precision would not help."""
+    waiting = certificate.state == OPEN
+    if certificate.strict:
+        waiting |= certificate.state == BULK
+    rank = certificate.rank
+    theta = np.maximum(evidence.theta[:rank], np.finfo(float).tiny)
+    floor = 2 * (evidence.product_rounding[:rank] / theta / np.sqrt(2) + evidence.value_rounding) / theta
+    return bool(np.any(waiting) and np.all(floor[waiting] > certificate.tolerance))
+
+
+def _words(
+    state: np.ndarray, null: np.ndarray, relative: np.ndarray, proved: np.ndarray, tolerance: float, *, strict: bool
+) -> str:
+    """Say it in a sentence or two."""
+    rank = len(state)
+    counts = [int(np.sum(state == code)) for code in (RESOLVED, OPEN, BULK)]
+    parts = [f"{counts[0]} of {rank} components resolved to {tolerance:g}"]
+    if counts[2]:
+        widest = float(relative[state == BULK].max())
+        which = "lie" if counts[2] > 1 else "lies"
+        parts.append(f"{counts[2]} {which} in the bulk, values known to {_percent(widest)}, vectors not to be read singly")
+    if counts[1]:
+        widest = float(relative[state == OPEN].max())
+        parts.append(f"{counts[1]} open, values known to {_percent(widest)}" if widest < 1 else f"{counts[1]} open")
+    if np.any(null):
+        parts.append(f"{int(null.sum())} zero to rounding")
+    number = int(proved.sum())
+    if number == rank:
+        parts.append("order proved for all")
+    else:
+        parts.append(f"order proved for the first {number}" if number else "order not proved")
+    ending = " (strict: the bulk counts as unmet)" if strict and counts[2] else ""
+    return "; ".join(parts) + ending
+
+
+def _percent(share: float) -> str:
+    """A relative width as people say it."""
+    return f"{100 * share:.2g} %" if share >= 1e-4 else f"{share:.1e}"

@@ -1,0 +1,84 @@
+"""What a run tells whoever listens, and how it is asked to stop."""
+
+from __future__ import annotations
+
+import threading
+from dataclasses import dataclass
+from typing import Protocol
+
+
+@dataclass(frozen=True)
+class Progress:
+    """How far a stage has come.
+
+    Attributes
+    ----------
+    stage : str
+        ``probe``, ``pilot``, ``sweep``, ``slices``, ``write`` or ``verify``.
+    sweep : int
+        Number of the sweep, from 1; 0 outside sweeps.
+    bytes_done, bytes_total : int
+        Decoded bytes of this stage.
+    note : str
+        What else there is to say, one line; empty for none.
+    """
+
+    stage: str
+    sweep: int
+    bytes_done: int
+    bytes_total: int
+    note: str = ""
+
+
+class Listener(Protocol):
+    """Called from any thread, at least once per panel."""
+
+    def __call__(self, event: Progress) -> None:
+        """Take note of an event; must return at once."""
+        ...
+
+
+class StoppedError(Exception):
+    """The run was asked to stop; raised inside workers between two panels."""
+
+
+class Control:
+    """Counts the bytes read, passes progress on and carries the wish to stop to the workers.
+
+    Parameters
+    ----------
+    listener : Listener or None
+    """
+
+    def __init__(self, listener: Listener | None = None) -> None:
+        self.bytes_read = 0
+        self._listener = listener
+        self._lock = threading.Lock()
+        self._stop = threading.Event()
+        self._stage = ("", 0, 0)
+        self._done = 0
+
+    def begin(self, stage: str, total: int, sweep: int = 0, note: str = "") -> None:
+        """Open a stage of so many bytes."""
+        with self._lock:
+            self._stage, self._done = (stage, sweep, total), 0
+        self.tell(note)
+
+    def advance(self, size: int, *, read: int | None = None) -> None:
+        """Count bytes of the present stage; `read` is what was decoded from the source for them."""
+        with self._lock:
+            self._done += size
+            self.bytes_read += size if read is None else read
+        if self._stop.is_set():
+            raise StoppedError
+        self.tell()
+
+    def tell(self, note: str = "") -> None:
+        """Pass the present state to the listener."""
+        if self._listener is not None:
+            stage, sweep, total = self._stage
+            self._listener(Progress(stage, sweep, self._done, total, note))
+
+    def stop(self) -> None:
+        """Ask the workers to stop after their present panel."""
+        self._stop.set()

@@ -1,0 +1,70 @@
+"""Panels of the stored matrix as they are handed to the workers, read anew or kept."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from bigsvd.plan import Geometry
+from bigsvd.source import Source
+from bigsvd.sweep.events import Control
+
+
+class PanelReader:
+    """Reads panels; keeps those it was told to keep.
+
+    Parameters
+    ----------
+    source : Source
+    geometry : Geometry
+    control : Control
+        Counts what is read.
+    keep : bool
+        Keep every panel in its stored type once it was read.
+    """
+
+    def __init__(self, source: Source, geometry: Geometry, control: Control, *, keep: bool = False) -> None:
+        self.source = source
+        self.geometry = geometry
+        self.control = control
+        self.keep = keep
+        self._kept: dict[int, np.ndarray] = {}
+
+    @property
+    def dtype(self) -> np.dtype:
+        """Stored type."""
+        return self.source.spec.dtype
+
+    def buffer(self) -> np.ndarray:
+        """Memory for the largest panel; nothing when panels are kept."""
+        height = 0 if self.keep else max(b - a for a, b in zip(self.geometry.edges, self.geometry.edges[1:], strict=False))
+        return np.empty(height * self.geometry.across, self.dtype)
+
+    def fetch(self, panel: int, buffer: np.ndarray) -> np.ndarray:
+        """Return the panel, contiguous as stored, shape (rows, columns) of its rectangle."""
+        kept = self._kept.get(panel)
+        rows, columns = self.geometry.rectangle(panel)
+        shape = (rows[1] - rows[0], columns[1] - columns[0])
+        size = shape[0] * shape[1] * self.dtype.itemsize
+        if kept is not None:
+            self.control.advance(size, read=0)
+            return kept
+        if self.keep:
+            out = np.empty(shape, self.dtype)
+        else:
+            out = buffer[: shape[0] * shape[1]].reshape(shape)
+        self.source.read(rows, columns, out)
+        if self.keep:
+            self._kept[panel] = out
+        self.control.advance(size, read=self.decoded(panel))
+        return out
+
+    def decoded(self, panel: int) -> int:
+        """Bytes decoded to read a panel: more than its own where it is part of a chunk."""
+        start, stop = self.geometry.edges[panel : panel + 2]
+        unit = min(self.source.spec.chunks[self.geometry.axis], self.geometry.lines)
+        lines = min(-(-stop // unit) * unit, self.geometry.lines) - start // unit * unit
+        return lines * self.geometry.across * self.dtype.itemsize
+
+    def forget(self) -> None:
+        """Drop the kept panels."""
+        self._kept = {}

@@ -1,0 +1,117 @@
+"""What one segment of a sweep adds up, and how two such sums become one."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+
+@dataclass(eq=False)
+class Partial:
+    """Sums over a run of panels, all in double.
+
+    Attributes
+    ----------
+    lines : int
+        Lines summed over.
+    energy : float
+        ‖A_p‖²_F of the shifted panels.
+    line_sum : ndarray, shape (across,), or None
+        Sum of the lines: what is left of the mean.
+    square_sum : ndarray, shape (across,), or None
+        Sum of |entries|² per column (first sweep of a scaled matrix).
+    lowest, highest : ndarray, shape (across,), or None
+        Smallest and largest stored entries per column; of complex entries real and imaginary parts side by side.
+    products : ndarray, shape (width, across), or None
+        Σ Y_pᴴ A_p: the conjugate transpose of AᴴA B.
+    gram : ndarray, shape (across, across), or None
+        Σ A_pᴴ A_p.
+    triangle : ndarray, shape (columns, columns), or None
+        Triangular factor of the folded block.
+    line_mean, line_inverse_scale, line_constant : list of ndarray
+        Statistics of lines that are whole features, in order.
+    ledger : list of int
+        Per panel, the sum modulo 2⁶⁴ of its stored words.
+    rounding : ndarray, shape (3, width), or None
+        Units recomputed in double, Σ‖ΔY_u‖² and Σ‖ΔZ_u‖² per column.
+    bad : int
+        NaN and infinities met.
+    first_bad : (int, int) or None
+        Stored row and column of the first.
+    overflow : bool
+        Finite entries whose squares overflow the working precision.
+    """
+
+    lines: int = 0
+    energy: float = 0.0
+    line_sum: np.ndarray | None = None
+    square_sum: np.ndarray | None = None
+    lowest: np.ndarray | None = None
+    highest: np.ndarray | None = None
+    products: np.ndarray | None = None
+    gram: np.ndarray | None = None
+    triangle: np.ndarray | None = None
+    line_mean: list[np.ndarray] | None = None
+    line_inverse_scale: list[np.ndarray] | None = None
+    line_constant: list[np.ndarray] | None = None
+    ledger: list[int] | None = None
+    rounding: np.ndarray | None = None
+    bad: int = 0
+    first_bad: tuple[int, int] | None = None
+    overflow: bool = False
+
+
+def combine(first: Partial, second: Partial) -> Partial:
+    """Add the sums of two neighbouring runs of panels into the first.
+
+    Cost: the size of the sums, and 4·columns³ flops where triangles are folded.
+    """
+    first.lines += second.lines
+    first.energy += second.energy
+    first.bad += second.bad
+    first.overflow |= second.overflow
+    if second.first_bad is not None:
+        first.first_bad = min(first.first_bad or second.first_bad, second.first_bad)
+    for name in ("line_sum", "square_sum", "products", "gram", "rounding"):
+        more = getattr(second, name)
+        if more is not None:
+            np.add(getattr(first, name), more, out=getattr(first, name))
+    if first.lowest is None or first.highest is None:
+        first.lowest, first.highest = second.lowest, second.highest
+    elif second.lowest is not None and second.highest is not None:
+        np.minimum(first.lowest, second.lowest, out=first.lowest)
+        np.maximum(first.highest, second.highest, out=first.highest)
+    if second.triangle is not None:
+        assert first.triangle is not None
+        first.triangle = fold([first.triangle, second.triangle])
+    for name in ("line_mean", "line_inverse_scale", "line_constant", "ledger"):
+        more = getattr(second, name)
+        if more is not None:
+            getattr(first, name).extend(more)
+    return first
+
+
+def fold(blocks: Sequence[np.ndarray]) -> np.ndarray:
+    """Triangular factor of blocks stacked upon each other, without squaring: RᴴR = Σ XᴴX.
+
+    Parameters
+    ----------
+    blocks : sequence of ndarray, shape (any, columns)
+
+    Returns
+    -------
+    ndarray, shape (columns, columns)
+        Upper triangular.
+
+    Notes
+    -----
+    Method: tall-skinny QR, Demmel, Grigori, Hoemmen, Langou, SIAM J. Sci. Comput. 34 (2012).
+    """
+    stacked = np.concatenate(blocks)
+    triangle = np.linalg.qr(stacked, mode="r")
+    columns = stacked.shape[1]
+    if len(triangle) < columns:
+        triangle = np.concatenate([triangle, np.zeros((columns - len(triangle), columns), triangle.dtype)])
+    return triangle

@@ -1,0 +1,358 @@
+"""The only loop that reads A: a run of panels, converted, multiplied, summed and folded by one worker."""
+
+from __future__ import annotations
+
+import threading
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from bigsvd.plan import UNIT_COLUMNS, UNIT_LINES, fold_lines
+from bigsvd.prepare import LineStatistics, Preparation, line_statistics, prepare_unit
+from bigsvd.sweep.panels import PanelReader
+from bigsvd.sweep.partial import Partial, fold
+from bigsvd.sweep.scratch import Scratch
+
+# Single-precision sums run over at most this many terms before they are added up in double.
+SINGLE_TERMS = 512
+
+
+@dataclass(frozen=True, eq=False)
+class SweepTask:
+    """What every segment of one sweep does with its panels.
+
+    Attributes
+    ----------
+    reader : PanelReader
+    preparation : Preparation
+    dtype : numpy.dtype
+        Working precision of conversion and products.
+    kind : str
+        ``basis`` multiplies by `block`; ``gram`` builds AᴴA; ``fold`` folds the panels themselves.
+    block : ndarray, shape (across, width), or None
+        Columns to multiply, in working precision.
+    scratch : Scratch or None
+        Where Y goes and earlier columns come from; None where only the products are wanted.
+    target : int
+        Number of the scratch block that is written.
+    ones : bool
+        Whether a column of ones is folded first, so that dropping it centres the triangle exactly.
+    learn : bool
+        Whether squares and extremes per column are taken.
+    line_features : bool
+        Whether line statistics are taken (lines are features).
+    sampled : frozenset of int
+        Panels whose first unit is recomputed in double, to measure rounding.
+    """
+
+    reader: PanelReader
+    preparation: Preparation
+    dtype: np.dtype
+    kind: str
+    block: np.ndarray | None = None
+    scratch: Scratch | None = None
+    target: int = 0
+    ones: bool = False
+    learn: bool = False
+    line_features: bool = False
+    sampled: frozenset[int] = frozenset()
+    only_count: threading.Event = field(default_factory=threading.Event)
+
+    @property
+    def wide(self) -> np.dtype:
+        """Type of all sums."""
+        return np.dtype(np.complex128 if self.dtype.kind == "c" else np.float64)
+
+
+def run_segment(task: SweepTask, first: int, stop: int) -> Partial:
+    """Sweep panels first … stop.
+
+    Parameters
+    ----------
+    task : SweepTask
+    first, stop : int
+        Half-open range of panels.
+
+    Returns
+    -------
+    Partial
+        Sums over the panels, taken in order.
+
+    Notes
+    -----
+    Cost per panel: one read, 4·lines·across·width flops, 2·lines·columns² flops for the fold.
+    """
+    with np.errstate(all="ignore"):
+        segment = _Segment(task)
+        for panel in range(first, stop):
+            segment.take(panel)
+        return segment.finish()
+
+
+class _Segment:
+    """The sums and buffers of one segment."""
+
+    def __init__(self, task: SweepTask) -> None:
+        self.task = task
+        self.across = task.reader.geometry.across
+        self.raw = task.reader.buffer()
+        self.tile = min(self.across, UNIT_COLUMNS)
+        self.work = np.empty(UNIT_LINES * self.tile, task.dtype)
+        self.sums = Partial(ledger=[])
+        if task.line_features:
+            self.sums.line_mean, self.sums.line_inverse_scale, self.sums.line_constant = [], [], []
+        elif task.ones:
+            self.sums.line_sum = np.zeros(self.across, task.wide)
+        if task.learn:
+            self.sums.square_sum = np.zeros(self.across)
+        if task.kind == "gram":
+            self.sums.gram = np.zeros((self.across, self.across), task.wide)
+        if task.block is not None:
+            self.sums.products = np.zeros((task.block.shape[1], self.across), task.wide)
+            if task.sampled:
+                self.sums.rounding = np.zeros((3, task.block.shape[1]))
+        self._start_fold()
+
+    def _start_fold(self) -> None:
+        """Allocate the block that gathers lines for the next Householder fold."""
+        task = self.task
+        self.folded = 0
+        if task.kind == "fold":
+            columns = self.across
+        elif task.scratch is not None and task.block is not None:
+            self.earlier = task.scratch.map
+            columns = self.earlier.shape[1] + task.block.shape[1]
+        else:
+            return
+        self.folded = columns + int(task.ones)
+        self.gathered = np.empty((self.folded + fold_lines(self.folded), self.folded), task.wide)
+        self.filled = 0
+        self.triangle: np.ndarray | None = None
+
+    def take(self, panel: int) -> None:
+        """Read one panel and add it to the sums."""
+        task, reader = self.task, self.task.reader
+        raw = reader.fetch(panel, self.raw)
+        assert self.sums.ledger is not None
+        self.sums.ledger.append(_word_sum(raw))
+        lines = raw if reader.geometry.axis == 0 else raw.T
+        start = reader.geometry.edges[panel]
+        if task.only_count.is_set():
+            self._count_bad(lines, start)
+            return
+        if task.learn:
+            self._extremes(lines)
+        for offset in range(0, len(lines), UNIT_LINES):
+            unit = lines[offset : offset + UNIT_LINES]
+            self._take_unit(unit, start + offset, measure=offset == 0 and panel in task.sampled)
+
+    def _take_unit(self, unit: np.ndarray, start: int, *, measure: bool) -> None:
+        """Convert a few lines, multiply them and add up."""
+        task, sums = self.task, self.sums
+        statistics = self._statistics(unit)
+        converted = self._tiles(unit, statistics, task.dtype)
+        energy, tall = 0.0, None
+        for columns, tile in converted:
+            energy += self._tile_sums(tile, columns)
+            if task.block is not None:
+                part = _product(tile, task.block[columns], task.wide)
+                tall = part if tall is None else np.add(tall, part, out=tall)
+        if not np.isfinite(energy):
+            self._not_finite(unit, start)
+            return
+        sums.energy += energy
+        sums.lines += len(unit)
+        if task.kind == "fold":
+            self._gather(start, self._whole(unit, statistics))
+        elif task.kind == "gram":
+            whole = self._whole(unit, statistics)
+            assert sums.gram is not None
+            np.add(sums.gram, whole.conj().T @ whole, out=sums.gram)
+        elif tall is not None:
+            self._second_product(unit, statistics, tall)
+            if measure:
+                self._measure(unit, statistics, tall)
+            if task.scratch is not None:
+                task.scratch.write(task.target, start, tall)
+                self._gather(start, tall)
+
+    def _statistics(self, unit: np.ndarray) -> LineStatistics | None:
+        """Statistics of lines that are whole features."""
+        if not self.task.line_features:
+            return None
+        statistics = line_statistics(unit, scale=self.task.preparation.scale)
+        sums = self.sums
+        assert sums.line_mean is not None
+        assert sums.line_inverse_scale is not None
+        assert sums.line_constant is not None
+        sums.line_mean.append(statistics.mean)
+        sums.line_inverse_scale.append(statistics.inverse_scale)
+        sums.line_constant.append(statistics.constant)
+        return statistics
+
+    def _tiles(self, unit, statistics, dtype):  # type: ignore[no-untyped-def]
+        """Yield (columns, converted tile) across a unit; a single tile stays in the working buffer."""
+        work = self.work if dtype == self.task.dtype else np.empty(UNIT_LINES * self.tile, dtype)
+        for first in range(0, self.across, self.tile):
+            columns = slice(first, min(first + self.tile, self.across))
+            width = columns.stop - first
+            flat = work[: len(unit) * width]
+            by_lines = self.task.reader.geometry.axis == 0
+            tile = flat.reshape(len(unit), width) if by_lines else flat.reshape(width, len(unit)).T
+            prepare_unit(unit, self.task.preparation, statistics, columns, tile)
+            yield columns, tile
+
+    def _whole(self, unit: np.ndarray, statistics: LineStatistics | None) -> np.ndarray:
+        """All columns of a unit, converted."""
+        if self.across <= self.tile:
+            return next(iter(self._tiles(unit, statistics, self.task.dtype)))[1]
+        return np.concatenate([tile.copy() for _, tile in self._tiles(unit, statistics, self.task.dtype)], axis=1)
+
+    def _tile_sums(self, tile: np.ndarray, columns: slice) -> float:
+        """Add the sum of lines and squares of a tile; return its energy."""
+        sums = self.sums
+        if sums.line_sum is not None:
+            sums.line_sum[columns] += np.ones(len(tile), tile.dtype) @ tile
+        if sums.square_sum is not None:
+            squares = np.einsum("ij,ij->j", tile.real, tile.real).astype(np.float64)
+            if tile.dtype.kind == "c":
+                squares += np.einsum("ij,ij->j", tile.imag, tile.imag)
+            sums.square_sum[columns] += squares
+            return float(squares.sum())
+        return _energy(tile)
+
+    def _second_product(self, unit: np.ndarray, statistics: LineStatistics | None, tall: np.ndarray) -> None:
+        """Z += AᴴY, held as its conjugate transpose."""
+        sums = self.sums
+        assert sums.products is not None
+        left = np.ascontiguousarray(tall.conj().T, dtype=self.task.dtype)
+        if self.across <= self.tile:
+            # The converted unit still lies in the working buffer.
+            shape = (len(unit), self.across)
+            flat = self.work[: shape[0] * shape[1]]
+            tile = flat.reshape(shape) if self.task.reader.geometry.axis == 0 else flat.reshape(shape[::-1]).T
+            np.add(sums.products, left @ tile, out=sums.products)
+            return
+        for columns, tile in self._tiles(unit, statistics, self.task.dtype):
+            np.add(sums.products[:, columns], left @ tile, out=sums.products[:, columns])
+
+    def _measure(self, unit: np.ndarray, statistics: LineStatistics | None, tall: np.ndarray) -> None:
+        """Recompute a unit in double and add up the differences."""
+        task = self.task
+        assert task.block is not None
+        assert self.sums.rounding is not None
+        exact = np.zeros_like(tall)
+        for columns, tile in self._tiles(unit, statistics, task.wide):
+            exact += tile @ task.block[columns].astype(task.wide)
+        self.sums.rounding[0] += 1
+        self.sums.rounding[1] += _column_squares((tall - exact).T)
+        single = np.ascontiguousarray(tall.conj().T, dtype=task.dtype)
+        narrow = self._tiles(unit, statistics, task.dtype)
+        for (_, tile), (_, wide_tile) in zip(narrow, self._tiles(unit, statistics, task.wide), strict=True):
+            self.sums.rounding[2] += _column_squares(single @ tile - exact.conj().T @ wide_tile)
+
+    def _gather(self, start: int, values: np.ndarray) -> None:
+        """Add lines to the block that is folded next, with earlier columns and the column of ones."""
+        if not self.folded:
+            return
+        task = self.task
+        done = 0
+        while done < len(values):
+            room = len(self.gathered) - self.filled
+            count = min(room, len(values) - done)
+            rows = self.gathered[self.filled : self.filled + count]
+            column = 0
+            if task.ones:
+                rows[:, 0] = 1.0
+                column = 1
+            if task.kind == "basis" and self.earlier.shape[1]:
+                assert task.scratch is not None
+                stored = task.scratch.read(start + done, start + done + count, task.target)
+                np.matmul(stored, self.earlier, out=rows[:, column : column + self.earlier.shape[1]])
+                column += self.earlier.shape[1]
+            rows[:, column:] = values[done : done + count]
+            self.filled += count
+            done += count
+            if self.filled == len(self.gathered):
+                self._fold()
+
+    def _fold(self) -> None:
+        """Replace the gathered lines by their triangular factor."""
+        triangle = fold([self.gathered[: self.filled]])
+        self.gathered[: self.folded] = triangle
+        self.filled = self.folded
+
+    def _extremes(self, lines: np.ndarray) -> None:
+        """Smallest and largest stored entries per column."""
+        if lines.dtype.kind == "c":
+            lines = np.concatenate([lines.real, lines.imag], axis=1)
+        low, high = lines.min(axis=0), lines.max(axis=0)
+        sums = self.sums
+        if sums.lowest is None or sums.highest is None:
+            sums.lowest, sums.highest = low, high
+        else:
+            np.minimum(sums.lowest, low, out=sums.lowest)
+            np.maximum(sums.highest, high, out=sums.highest)
+
+    def _not_finite(self, unit: np.ndarray, start: int) -> None:
+        """Tell true NaN and infinity from squares that overflow."""
+        if self._count_bad(unit, start):
+            self.task.only_count.set()
+        else:
+            self.sums.overflow = True
+
+    def _count_bad(self, unit: np.ndarray, start: int) -> int:
+        """Count entries that are not finite and keep the first."""
+        if unit.dtype.kind not in "fc":
+            return 0
+        bad = ~np.isfinite(unit)
+        count = int(bad.sum())
+        if count:
+            places = np.argwhere(bad)
+            places[:, 0] += start
+            if self.task.reader.geometry.axis == 1:
+                places = places[:, ::-1]
+            order = np.lexsort((places[:, 1], places[:, 0]))[0]
+            place = (int(places[order, 0]), int(places[order, 1]))
+            self.sums.first_bad = min(self.sums.first_bad or place, place)
+            self.sums.bad += count
+        return count
+
+    def finish(self) -> Partial:
+        """Fold what is left and hand over the sums."""
+        if self.folded:
+            if self.filled:
+                self._fold()
+                self.sums.triangle = self.gathered[: self.folded].copy()
+            else:
+                self.sums.triangle = np.zeros((self.folded, self.folded), self.task.wide)
+        return self.sums
+
+
+def _product(tile: np.ndarray, block: np.ndarray, wide: np.dtype) -> np.ndarray:
+    """Multiply a tile by rows of the block; sums of single precision are added up in double."""
+    if tile.dtype == wide:
+        return tile @ block
+    total = np.zeros((len(tile), block.shape[1]), wide)
+    for first in range(0, tile.shape[1], SINGLE_TERMS):
+        total += tile[:, first : first + SINGLE_TERMS] @ block[first : first + SINGLE_TERMS]
+    return total
+
+
+def _energy(tile: np.ndarray) -> float:
+    """Sum of squares; in single precision rows are summed in short runs that are added up in double."""
+    parts = (tile.real, tile.imag) if tile.dtype.kind == "c" else (tile,)
+    return float(sum(np.einsum("ij,ij->j", part, part).sum(dtype=np.float64) for part in parts))
+
+
+def _column_squares(rows: np.ndarray) -> np.ndarray:
+    """Squared norm of every row."""
+    return np.einsum("ij,ij->i", rows.real, rows.real) + np.einsum("ij,ij->i", rows.imag, rows.imag)
+
+
+def _word_sum(raw: np.ndarray) -> int:
+    """Sum of the stored 64-bit words modulo 2⁶⁴, whatever their order; the odd bytes at the end count as one word."""
+    flat = raw.reshape(-1).view(np.uint8)
+    whole = len(flat) // 8 * 8
+    total = int(np.add.reduce(flat[:whole].view(np.uint64), dtype=np.uint64))
+    return (total + int.from_bytes(flat[whole:].tobytes(), "little")) % 2**64

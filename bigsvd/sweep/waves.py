@@ -1,0 +1,106 @@
+"""A sweep on dask: waves of segments, summed by a fixed binary tree, waves folded in order."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Sequence
+from concurrent.futures import Future, ThreadPoolExecutor
+from contextlib import contextmanager
+from typing import Any
+
+from bigsvd.sweep.partial import Partial, combine
+from bigsvd.sweep.segment import SweepTask, run_segment
+
+Compute = Callable[[Any], Partial]
+Wave = Sequence[tuple[int, int]]
+
+
+class Engine:
+    """Runs the graphs of a sweep on dask's threaded scheduler in this process.
+
+    Parameters
+    ----------
+    workers : int
+        Threads. The graphs do not depend on them, so neither do the bits.
+    """
+
+    def __init__(self, workers: int) -> None:
+        self._pool = ThreadPoolExecutor(workers, thread_name_prefix="bigsvd-worker")
+        # Two waves are alive at a time: the next is submitted before the last is folded.
+        self._conductors = ThreadPoolExecutor(2, thread_name_prefix="bigsvd-wave")
+
+    def sweep(self, task: SweepTask, waves: Sequence[Wave]) -> Partial:
+        """Sweep all waves and return the total.
+
+        Parameters
+        ----------
+        task : SweepTask
+        waves : sequence of waves, each a sequence of (first panel, one past the last)
+
+        Returns
+        -------
+        Partial
+        """
+        total: Partial | None = None
+        pending: list[Future[Partial]] = []
+        try:
+            for wave in waves:
+                pending.append(self._conductors.submit(self._run, task, wave))
+                if len(pending) == 2:
+                    total = _fold_wave(total, pending.pop(0).result())
+            while pending:
+                total = _fold_wave(total, pending.pop(0).result())
+        except BaseException:
+            # Whoever raised, no worker may outlive the sweep: they hold the file, the scratch and the buffers.
+            task.reader.control.stop()
+            for future in pending:
+                future.exception()
+            raise
+        assert total is not None
+        return total
+
+    def _run(self, task: SweepTask, wave: Wave) -> Partial:
+        """Compute one wave."""
+        import dask
+
+        root = wave_graph(task, wave)
+        (result,) = dask.compute(root, scheduler="threads", pool=self._pool)
+        return result  # type: ignore[no-any-return]
+
+    def close(self) -> None:
+        """End the threads."""
+        self._pool.shutdown()
+        self._conductors.shutdown()
+
+
+def wave_graph(task: SweepTask, wave: Wave) -> Any:
+    """Build the dask graph of one wave: a task per segment, neighbours summed pairwise up a binary tree.
+
+    Returns
+    -------
+    dask.delayed.Delayed
+        Its value is the Partial of the wave.
+    """
+    from dask.delayed import delayed
+
+    shared = delayed(task, traverse=False, pure=False, name=f"task-{id(task)}")
+    run = delayed(run_segment, pure=False)
+    add = delayed(combine, pure=False)
+    level = [run(shared, first, stop) for first, stop in wave]
+    while len(level) > 1:
+        pairs = [add(level[i], level[i + 1]) for i in range(0, len(level) - 1, 2)]
+        level = pairs + level[len(pairs) * 2 :]
+    return level[0]
+
+
+def _fold_wave(total: Partial | None, wave: Partial) -> Partial:
+    """Add a wave to the total, in order."""
+    return wave if total is None else combine(total, wave)
+
+
+@contextmanager
+def one_blas_thread() -> Iterator[None]:
+    """Limit every BLAS pool to one thread: workers bring the parallelism, and thread counts change bits."""
+    from threadpoolctl import threadpool_limits
+
+    with threadpool_limits(limits=1):
+        yield
