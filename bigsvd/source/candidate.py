@@ -58,6 +58,7 @@ class Candidate:
         return f"{self.path or '(the array)'}  " + ": ".join(words)
 
 
+SPARSE_TYPES = ("csr_matrix", "csc_matrix")
 SPARSE = "a sparse group; sparse groups are not read yet"
 
 

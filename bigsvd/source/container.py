@@ -44,9 +44,9 @@ def container(path: Path) -> str:
     UnsupportedMatrixError
         If the file begins like something else; says what it looks like.
     """
+    if path.is_dir():
+        return _directory(path)
     try:
-        if path.is_dir():
-            return _directory(path)
         with path.open("rb") as file:
             head = file.read(4096)
             size = os.fstat(file.fileno()).st_size

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Any
 
-from bigsvd.source.candidate import SPARSE, Candidate
+from bigsvd.source.candidate import SPARSE, SPARSE_TYPES, Candidate
 from bigsvd.source.hdf5_dataset import describe
 from bigsvd.units import show_count
 
@@ -83,7 +83,7 @@ def is_sparse(group: Any) -> bool:
     try:
         if "MATLAB_sparse" in group.attrs or "h5sparse_format" in group.attrs:
             return True
-        if str(group.attrs.get("encoding-type", "")) in ("csr_matrix", "csc_matrix"):
+        if str(group.attrs.get("encoding-type", "")) in SPARSE_TYPES:
             return True
         children = set(group)
     except (OSError, TypeError, ValueError, RuntimeError):

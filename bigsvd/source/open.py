@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 
 from bigsvd.errors import NoMatrixError, UnsupportedMatrixError
-from bigsvd.source.candidate import Candidate, choose, listing
+from bigsvd.source.candidate import SPARSE_TYPES, Candidate, choose, listing
 from bigsvd.source.container import container
 from bigsvd.source.spec import Source
 
@@ -41,7 +41,9 @@ def open_source(where: Any, matrix: str | None = None) -> Source:
     """
     if isinstance(where, (str, os.PathLike)):
         path = _absolute(where)
-        return _OPENERS[container(path)](str(path), matrix)
+        # Below a folder without metadata an array may still lie where it is said to lie.
+        kind = "zarr" if matrix is not None and path.is_dir() else container(path)
+        return _OPENERS[kind](str(path), matrix)
     if matrix is not None:
         raise UnsupportedMatrixError(
             f"matrix={matrix!r} names an array inside a file, but what was given is {type(where).__name__}",
@@ -77,12 +79,30 @@ def _absolute(where: str | os.PathLike[str]) -> Path:
 
 
 def _from_object(thing: Any) -> Source:
+    """Tell a type by where its class comes from, so that no library is loaded to ask."""
+    origin = type(thing).__module__.split(".")[0]
     if isinstance(thing, np.ndarray):
         from bigsvd.source.memory import MemorySource
 
         return MemorySource(thing)
+    if origin == "dask" and hasattr(thing, "__dask_graph__") and hasattr(thing, "chunks"):
+        from bigsvd.source.dask_array import DaskSource
+
+        return DaskSource(thing)
+    if origin == "h5py" and hasattr(thing, "shape"):
+        return _open_hdf5(os.path.abspath(thing.file.filename), thing.name)
+    if origin == "zarr" and hasattr(thing, "chunks"):
+        root = getattr(thing.store, "root", None) or getattr(thing.store, "path", None)
+        if isinstance(root, (str, os.PathLike)) and os.path.exists(root):
+            return _open_zarr(os.path.abspath(root), thing.path or None)
+        raise UnsupportedMatrixError(
+            f"a Zarr array in a {type(thing.store).__name__} cannot be opened again by its address",
+            remedy="Give a store in a local directory or zip file, or the entries themselves: array[:].",
+        )
+    sparse = origin == "scipy" and hasattr(thing, "nnz")
     raise UnsupportedMatrixError(
-        f"a matrix cannot be read from {type(thing).__module__}.{type(thing).__name__}",
+        f"a matrix cannot be read from {type(thing).__module__}.{type(thing).__name__}"
+        + ("; sparse matrices are not read yet" if sparse else ""),
         remedy="Give a path, a NumPy array, an h5py dataset, a Zarr array or a dask array.",
     )
 
@@ -134,5 +154,53 @@ def _survey_hdf5(path: str) -> list[Candidate]:
         return walk_hdf5(file)
 
 
-_OPENERS = {"hdf5": _open_hdf5}
-_SURVEYORS = {"hdf5": _survey_hdf5}
+def _open_zarr(path: str, matrix: str | None) -> Source:
+    from bigsvd.source.zarr_array import ZarrSource
+    from bigsvd.source.zarr_metadata import read_metadata
+    from bigsvd.source.zarr_store import open_keys
+    from bigsvd.source.zarr_walk import group_attributes, walk_zarr
+
+    keys = open_keys(path)
+    start = (matrix or "").strip("/")
+    if read_metadata(keys, start) is not None:
+        return ZarrSource(path, start)
+    if start and next(iter(keys.children(start)), None) is None:
+        raise NoMatrixError(
+            f"{path} holds nothing under {start}",
+            evidence=listing(found for found in walk_zarr(keys) if found.usable),
+            remedy="Name one of its matrices with --matrix.",
+        )
+    if start and group_attributes(keys, start).get("encoding-type") in SPARSE_TYPES:
+        raise UnsupportedMatrixError(
+            f"{path}:{start} is a sparse group; sparse groups are not read yet",
+            remedy="Name a dense matrix, or store this one dense.",
+        )
+    return ZarrSource(path, choose(walk_zarr(keys, start), f"{path}:{start}" if start else path).path)
+
+
+def _survey_zarr(path: str) -> list[Candidate]:
+    from bigsvd.source.zarr_store import open_keys
+    from bigsvd.source.zarr_walk import walk_zarr
+
+    return walk_zarr(open_keys(path))
+
+
+def _open_npy(path: str, matrix: str | None) -> Source:
+    from bigsvd.source.npy import NpySource
+
+    if matrix is not None:
+        raise NoMatrixError(
+            f"{path} is an .npy file, which holds one array without a name; asked for {matrix}",
+            remedy="Leave out --matrix.",
+        )
+    return NpySource(path)
+
+
+def _survey_npy(path: str) -> list[Candidate]:
+    from bigsvd.source.npy import describe_npy
+
+    return [describe_npy(path)]
+
+
+_OPENERS = {"hdf5": _open_hdf5, "zarr": _open_zarr, "zip": _open_zarr, "npy": _open_npy}
+_SURVEYORS = {"hdf5": _survey_hdf5, "zarr": _survey_zarr, "zip": _survey_zarr, "npy": _survey_npy}

@@ -1,0 +1,68 @@
+"""Rows of an unencoded row-major array read by position in its file, straight into a buffer."""
+
+from __future__ import annotations
+
+import os
+
+import numpy as np
+
+from bigsvd.source.rectangle import Span
+
+# Part rows are fetched together with what lies between them, in a temporary of this size ...
+_SPAN_BYTES = 4 * 2**20
+# ... unless more than this lies between: then a system call a row costs less than reading it.
+_GAP_BYTES = 64 * 2**10
+
+
+def read_rows(
+    descriptor: int, offset: int, width: int, stored: np.dtype, rows: Span, columns: Span, out: np.ndarray
+) -> None:
+    """Read rows × columns of an array with `width` columns that begins at byte `offset`.
+
+    Parameters
+    ----------
+    descriptor : int
+        Open file; its position is neither used nor moved, so that threads may share it.
+    offset, width : int
+        First byte of the array, entries of a row.
+    stored : numpy.dtype
+        Type of the entries in the file.
+    rows, columns : (int, int)
+        Half-open rectangle.
+    out : ndarray, shape (rows, columns)
+        Any strides; native type of the entries.
+
+    Raises
+    ------
+    EOFError
+        If the file ends before the rectangle does.
+    """
+    height, count = out.shape
+    if not out.size:
+        return
+    row_bytes, item = width * stored.itemsize, stored.itemsize
+    start = offset + rows[0] * row_bytes + columns[0] * item
+    same_bytes = stored.newbyteorder("=") == out.dtype
+    if same_bytes and out.flags.c_contiguous and count == width:
+        _fill(descriptor, start, out.reshape(-1).view(np.uint8).data)
+        if not stored.isnative:
+            out.byteswap(inplace=True)
+        return
+    band = max(1, _SPAN_BYTES // row_bytes) if row_bytes - count * item <= _GAP_BYTES else 1
+    for first in range(0, height, band):
+        last = min(first + band, height)
+        span = (last - first - 1) * row_bytes + count * item
+        raw = np.empty(span, np.uint8)
+        _fill(descriptor, start + first * row_bytes, raw.data)
+        part = np.ndarray((last - first, count), stored, raw, strides=(row_bytes, item))
+        out[first:last] = part
+
+
+def _fill(descriptor: int, position: int, buffer: memoryview) -> None:
+    """Fill a buffer from a position; one call may return less than was asked for (Linux: at most 2 GiB)."""
+    done = 0
+    while done < len(buffer):
+        got = os.preadv(descriptor, [buffer[done:]], position + done)
+        if got == 0:
+            raise EOFError(f"the file ends at byte {position + done:,}, {len(buffer) - done:,} bytes too early")
+        done += got

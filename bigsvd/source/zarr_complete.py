@@ -1,0 +1,75 @@
+"""Whether every chunk of a Zarr array is there: an absent one would be read as the fill value."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from bigsvd.source.rectangle import grid_shape
+from bigsvd.source.zarr_metadata import ZarrMetadata
+from bigsvd.source.zarr_store import KeyStore
+
+_ABSENT = 2**64 - 1
+
+
+def absent_keys(keys: KeyStore, at: str, metadata: ZarrMetadata) -> np.ndarray:
+    """Compare the stored keys with the grid, listing folders once and keeping one byte a chunk.
+
+    Returns
+    -------
+    ndarray of bool, shape (chunk rows, chunk columns)
+        True where no value is stored, or an empty one.
+    """
+    rows, columns = metadata.shape
+    absent = np.ones(grid_shape((rows, columns), (metadata.chunks[0], metadata.chunks[1])), np.bool_)
+    folder = "/".join(part for part in (at, metadata.prefix.rstrip("/") if "/" in metadata.prefix else "") if part)
+    if metadata.separator == "/":
+        for row, is_file in keys.children(folder):
+            if not is_file and row.isdecimal() and int(row) < absent.shape[0]:
+                _note(absent[int(row)], keys.children(f"{folder}/{row}" if folder else row))
+    else:
+        start = "" if "/" in metadata.prefix else metadata.prefix
+        for name, is_file in keys.children(folder):
+            row, _, column = name.removeprefix(start).partition(metadata.separator)
+            if is_file and name.startswith(start) and row.isdecimal() and int(row) < absent.shape[0]:
+                _note(absent[int(row)], [(column, is_file)])
+    return absent
+
+
+def _note(absent_row: np.ndarray, names: Any) -> None:
+    for column, is_file in names:
+        if is_file and column.isdecimal() and int(column) < len(absent_row):
+            absent_row[int(column)] = False
+
+
+def other_names(keys: KeyStore, at: str) -> list[str]:
+    """Names, beside the metadata, that look like chunks under another key encoding."""
+    names = [name for name, _ in keys.children(at) if name[:1].isdecimal() or name == "c" or name.startswith("c.")]
+    return sorted(names)[:4]
+
+
+def absent_inside(keys: KeyStore, key: str, place: tuple[int, int], metadata: ZarrMetadata) -> int:
+    """Count the inner chunks that the index of a shard marks as never written.
+
+    The index holds two little-endian 64-bit numbers an inner chunk, both 2⁶⁴ − 1 where it is absent
+    (Zarr v3 specification, sharding codec). Its checksum is verified when the shard is read.
+    """
+    shard, inner = metadata.shard, metadata.inner
+    if shard is None or inner is None:
+        return 0
+    codecs = [step["name"] for step in shard.get("index_codecs", ())]
+    if codecs not in (["bytes"], ["bytes", "crc32c"]):
+        return 0
+    sides = [outer // part for outer, part in zip(metadata.chunks, inner, strict=True)]
+    size = 16 * sides[0] * sides[1]
+    from_end = shard.get("index_location", "end") == "end"
+    raw = keys.part(key, -(size + 4 * (len(codecs) - 1)) if from_end else 0, size)
+    if len(raw) < size:
+        return 0
+    index = np.frombuffer(raw, "<u8").reshape(*sides, 2)
+    used = [
+        -(-min(outer, side - position * outer) // part)
+        for outer, part, side, position in zip(metadata.chunks, inner, metadata.shape, place, strict=True)
+    ]
+    return int(np.count_nonzero(np.all(index[: used[0], : used[1]] == np.uint64(_ABSENT), axis=2)))

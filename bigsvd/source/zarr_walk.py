@@ -1,0 +1,98 @@
+"""Every array in a Zarr store, by its metadata."""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+from bigsvd.errors import DamagedSourceError
+from bigsvd.source.candidate import SPARSE, SPARSE_TYPES, Candidate, why_unusable
+from bigsvd.source.entries import decoded_type
+from bigsvd.source.hints import NO_HINT, Hint, annotated_hint, hint_from_names
+from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
+from bigsvd.source.zarr_store import KeyStore, read_document
+from bigsvd.units import show_count
+
+MOST_NODES = 20_000
+DEEPEST = 32
+
+
+def walk_zarr(keys: KeyStore, start: str = "", most_nodes: int = MOST_NODES) -> list[Candidate]:
+    """List all arrays below a node; what another program left beside them (``._zarr.json``) is not looked at."""
+    found: list[Candidate] = []
+    root = group_attributes(keys, "")
+    waiting, seen = [start], 0
+    while waiting:
+        path = waiting.pop(0)
+        seen += 1
+        if seen > most_nodes:
+            found.append(Candidate("…", reason=f"more than {show_count(most_nodes)} nodes; the rest is not listed"))
+            break
+        try:
+            array = read_metadata(keys, path)
+            attributes = group_attributes(keys, path) if array is None else {}
+        except DamagedSourceError as error:
+            found.append(Candidate(path, reason=f"{error.problem} ({'; '.join(error.evidence)})"))
+            continue
+        if array is not None:
+            found.append(describe_zarr(array, path, root, stored_bytes(keys, path)))
+        elif attributes.get("encoding-type") in SPARSE_TYPES:
+            found.append(Candidate(path, reason=SPARSE))
+        elif path.count("/") < DEEPEST:
+            names = sorted(name for name, is_file in keys.children(path) if not is_file and not name.startswith("."))
+            waiting += [f"{path}/{name}" if path else name for name in names]
+    return found
+
+
+def group_attributes(keys: KeyStore, path: str) -> dict[str, Any]:
+    """Attributes of a group in either format; empty where there are none."""
+    at = f"{path}/" if path else ""
+    third = read_document(keys, f"{at}zarr.json")
+    attributes = third.get("attributes") if third is not None else read_document(keys, f"{at}.zattrs")
+    return attributes if isinstance(attributes, dict) else {}
+
+
+def describe_zarr(array: ZarrMetadata, path: str, root: dict[str, Any], stored: int | None) -> Candidate:
+    """Say all that is known of an array without opening it."""
+    numeric = array.dtype is not None and decoded_type(array.dtype) is not None
+    reason = why_unusable(array.shape, numeric, array.type_words)
+    hint, hint_reason = zarr_hint(array, path, root) if not reason else NO_HINT
+    return Candidate(
+        path=path,
+        shape=array.shape,
+        dtype=array.type_words,
+        chunks=array.chunks,
+        encoding=array.encoding,
+        stored_bytes=stored,
+        decoded_bytes=math.prod(array.shape) * array.dtype.itemsize if array.dtype is not None else None,
+        usable=not reason,
+        reason=reason,
+        samples_hint=hint,
+        hint_reason=hint_reason,
+    )
+
+
+def zarr_hint(array: ZarrMetadata, path: str, root: dict[str, Any]) -> Hint:
+    """Look for markers of the AnnData layout, then at the names of the dimensions."""
+    hint = annotated_hint(path, root.get("encoding-type"))
+    if hint[0]:
+        return hint
+    names = [name if isinstance(name, str) else None for name in array.dimension_names]
+    return hint_from_names(names, "dimension_names" if array.zarr_format == 3 else "_ARRAY_DIMENSIONS")
+
+
+def stored_bytes(keys: KeyStore, path: str, most_files: int = 10_000) -> int | None:
+    """Bytes of all values below an array; None where adding them up would take long."""
+    total, files, waiting = 0, 0, [path]
+    while waiting:
+        at = waiting.pop()
+        for name, is_file in keys.children(at):
+            key = f"{at}/{name}" if at else name
+            if not is_file:
+                waiting.append(key)
+                continue
+            files += 1
+            if files > most_files:
+                return None
+            total += keys.size(key) or 0
+    return total
