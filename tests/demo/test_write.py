@@ -8,6 +8,7 @@ import pytest
 import zarr
 
 from bigsvd.demo import DemoFile, compare_with_planted, write_demo
+from bigsvd.demo.__main__ import main
 from bigsvd.errors import ResultExistsError
 
 SCALE = 0.02
@@ -161,3 +162,24 @@ def test_progress_counts_every_decoded_byte(tmp_path):
     seen: dict[str, tuple[int, int]] = {}
     files = write_demo(tmp_path, scale=0.001, progress=lambda name, done, total: seen.update({name: (done, total)}))
     assert seen == {file.which: (file.decoded_bytes, file.decoded_bytes) for file in files}
+
+
+def test_printed_comparison_ends_with_0_when_found_and_3_when_not(demo, monkeypatch, capsys):
+    folder, files = demo
+    factors = {f"{file.which}_factors.zarr": Factors(matrix_of(file)) for file in files}
+    monkeypatch.setattr("bigsvd.factors.open_factors", lambda path: factors[path.name])
+    assert main([str(folder)]) == 0
+    printed = capsys.readouterr().out
+    assert printed.startswith("Invented data.")
+    assert "Every planted component was found" in printed
+    water = factors["tide_water_factors.zarr"]
+    water.right_vectors = np.roll(water.right_vectors, 1, axis=1)
+    assert main([str(folder)]) == 3
+    assert "Not every planted component was found" in capsys.readouterr().out
+
+
+def test_printed_comparison_without_results_ends_with_2(demo, capsys):
+    folder, _ = demo
+    assert main([str(folder)]) == 2
+    assert "night_watch_factors.zarr" in capsys.readouterr().err
+    assert main([]) == 2
