@@ -5,21 +5,21 @@ from __future__ import annotations
 import os
 import shlex
 import threading
-import zlib
 from typing import Any
 
 import numpy as np
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, UnsupportedMatrixError
 from bigsvd.source.entries import decoded_type, pair_view, type_caution
+from bigsvd.source.hdf5_complete import locate, require_complete
 from bigsvd.source.hdf5_dataset import describe, missing_filters, unapplied_attributes
+from bigsvd.source.hdf5_direct import Fill, direct_reader
 from bigsvd.source.hdf5_file import open_hdf5
+from bigsvd.source.positional import Descriptor
 from bigsvd.source.rectangle import Span, clip, require_rectangle, show_chunk, show_place, touched
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
 from bigsvd.units import show_shape
-
-_LIBRARY_ERRORS = (OSError, RuntimeError, ValueError, TypeError, KeyError, zlib.error)
 
 
 class Hdf5Source:
@@ -38,13 +38,14 @@ class Hdf5Source:
         self.dataset = dataset
         self._forget()
         self.stamps: tuple[FileStamp, ...] = (FileStamp.of(path),)
-        opened = self.opened()
+        opened, _ = self._opened()
         self.stamps += tuple(FileStamp.of(name) for name in other_files(opened, path) if os.path.exists(name))
         self.spec = _spec(opened, path, dataset, self.stamps)
 
     def _forget(self) -> None:
         self._lock = threading.Lock()
         self._file: Any = None
+        self._dataset: Any = None
         self._process = 0
 
     def __getstate__(self) -> dict[str, Any]:
@@ -57,57 +58,65 @@ class Hdf5Source:
     def __repr__(self) -> str:
         return f"Hdf5Source({self.path!r}, {self.dataset!r})"
 
-    def opened(self) -> Any:
-        """Return the open h5py dataset; a handle that came through a fork is left alone and another one opened."""
+    def _opened(self) -> tuple[Any, Fill]:
+        """Return the open dataset and the way to read it.
+
+        A handle that came through a fork is left alone, neither used nor closed, and another one opened.
+        """
         with self._lock:
             if self._file is None or self._process != os.getpid():
-                for stamp in self.stamps:
-                    stamp.require_unchanged()
+                self._require_unchanged()
                 self._file = open_hdf5(self.path)
                 self._process = os.getpid()
-            return self._file[self.dataset]
+                self._descriptor = Descriptor(self.path)
+                self._dataset = open_dataset(self._file, self.dataset, os.path.dirname(self.path))
+                self._fill = direct_reader(self._dataset, self._descriptor.number) or library_reader(self._dataset)
+            return self._dataset, self._fill
 
     def close(self) -> None:
         """Release the file. Reading again opens it again."""
         with self._lock:
             if self._file is not None and self._process == os.getpid():
                 self._file.close()
-            self._file = None
+                self._descriptor.close()
+            self._file = self._dataset = None
 
     def read(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Read the half-open rectangle rows × columns into `out`; see `Source.read`."""
         require_rectangle(self.spec, rows, columns, out)
         if out.size == 0:
             return
-        dataset = self.opened()
+        _, fill = self._opened()
         try:
-            self._fill(dataset, rows, columns, out)
-        except _LIBRARY_ERRORS as error:
+            fill(rows, columns, out)
+        except Exception as error:  # filters come from other packages and raise what they like
             self._require_unchanged()
             if isinstance(error, BigsvdError):
                 raise
-            raise self._damage(dataset, rows, columns, error) from error
+            raise self._damage(fill, rows, columns, error) from error
         # The library answers zeros where a file was cut short after it was opened.
         self._require_unchanged()
-
-    def _fill(self, dataset: Any, rows: Span, columns: Span, out: np.ndarray) -> None:
-        read_by_library(dataset, rows, columns, out)
 
     def _require_unchanged(self) -> None:
         for stamp in self.stamps:
             stamp.require_unchanged()
 
-    def _damage(self, dataset: Any, rows: Span, columns: Span, error: Exception) -> DamagedSourceError:
+    def require_complete(self) -> None:
+        """Look for parts that are absent; see `check_complete`."""
+        self._require_unchanged()
+        require_complete(self._opened()[0], self.spec, os.path.dirname(self.path))
+
+    def _damage(self, fill: Fill, rows: Span, columns: Span, error: Exception) -> DamagedSourceError:
         """Find the first chunk of the rectangle that does not decode, and name it."""
         place, said = show_place(rows, columns), error
-        if dataset.chunks is not None:
+        if self.spec.chunks[0] > 1:
             for coordinates in touched(rows, columns, self.spec.chunks):
                 part_rows = clip(coordinates[0], self.spec.chunks[0], rows)
                 part_columns = clip(coordinates[1], self.spec.chunks[1], columns)
                 part = np.empty((part_rows[1] - part_rows[0], part_columns[1] - part_columns[0]), self.spec.dtype)
                 try:
-                    self._fill(dataset, part_rows, part_columns, part)
-                except _LIBRARY_ERRORS as first:
+                    fill(part_rows, part_columns, part)
+                except Exception as first:
                     place, said = show_chunk(coordinates, self.spec.shape, self.spec.chunks), first
                     break
         return DamagedSourceError(
@@ -117,29 +126,44 @@ class Hdf5Source:
         )
 
 
-def read_by_library(dataset: Any, rows: Span, columns: Span, out: np.ndarray) -> None:
-    """Let h5py read and convert, straight into `out` where that lies in one piece."""
+def library_reader(dataset: Any) -> Fill:
+    """Let h5py read and convert, straight into the buffer where that lies in one piece."""
     import h5py
 
-    dtype = out.dtype
-    if dataset.dtype.names is not None:
-        dtype = pair_view(out.dtype, dataset.dtype.names)
-    target = out if out.flags.c_contiguous else np.empty(out.shape, out.dtype)
-    file_space = h5py.h5s.create_simple(dataset.shape)
-    file_space.select_hyperslab((rows[0], columns[0]), out.shape)
-    memory_space = h5py.h5s.create_simple(out.shape)
-    dataset.id.read(memory_space, file_space, target.view(dtype), h5py.h5t.py_create(dtype))
-    if target is not out:
-        out[...] = target
+    pair = dataset.dtype.names
+
+    def fill(rows: Span, columns: Span, out: np.ndarray) -> None:
+        dtype = pair_view(out.dtype, pair) if pair else out.dtype
+        target = out if out.flags.c_contiguous else np.empty(out.shape, out.dtype)
+        file_space = h5py.h5s.create_simple(dataset.shape)
+        file_space.select_hyperslab((rows[0], columns[0]), out.shape)
+        memory_space = h5py.h5s.create_simple(out.shape)
+        dataset.id.read(memory_space, file_space, target.view(dtype), h5py.h5t.py_create(dtype))
+        if target is not out:
+            out[...] = target
+
+    return fill
+
+
+def open_dataset(file: Any, inside: str, folder: str) -> Any:
+    """Open a dataset; external raw files that lie beside the HDF5 file are found there."""
+    import h5py
+
+    dataset = file[inside]
+    names = [os.fsdecode(name) for name, _, _ in dataset.external or ()]
+    if any(not os.path.isabs(name) and os.path.exists(os.path.join(folder, name)) for name in names):
+        access = h5py.h5p.create(h5py.h5p.DATASET_ACCESS)
+        access.set_efile_prefix(os.fsencode(folder))
+        return h5py.Dataset(h5py.h5d.open(file.id, os.fsencode(inside), access))
+    return dataset
 
 
 def other_files(dataset: Any, path: str) -> list[str]:
     """Paths of the other files that hold entries of a dataset: external raw files and virtual sources."""
-    folder = os.path.dirname(path)
-    names = [name for name, _, _ in dataset.external or ()]
+    names = [os.fsdecode(name) for name, _, _ in dataset.external or ()]
     if dataset.is_virtual:
         names += [source.file_name for source in dataset.virtual_sources() if source.file_name != "."]
-    return sorted({os.path.join(folder, os.fsdecode(name)) for name in names})
+    return sorted({locate(name, os.path.dirname(path)) for name in names})
 
 
 def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -> MatrixSpec:

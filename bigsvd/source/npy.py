@@ -11,7 +11,7 @@ import numpy as np
 from bigsvd.errors import DamagedSourceError, UnsupportedMatrixError
 from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type, show_type, type_caution
-from bigsvd.source.positional import read_rows
+from bigsvd.source.positional import Descriptor, read_rows
 from bigsvd.source.rectangle import Span, require_rectangle
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
@@ -54,7 +54,7 @@ class NpySource:
 
     def _forget(self) -> None:
         self._lock = threading.Lock()
-        self._descriptor = -1
+        self._descriptor: Descriptor | None = None
 
     def __getstate__(self) -> dict[str, Any]:
         return {name: value for name, value in self.__dict__.items() if name not in ("_lock", "_descriptor")}
@@ -69,17 +69,17 @@ class NpySource:
     def close(self) -> None:
         """Release the file. Reading again opens it again."""
         with self._lock:
-            if self._descriptor >= 0:
-                os.close(self._descriptor)
-            self._descriptor = -1
+            if self._descriptor is not None:
+                self._descriptor.close()
+            self._descriptor = None
 
     def _opened(self) -> int:
         # A descriptor inherited through a fork stays valid: reads give their position themselves.
         with self._lock:
-            if self._descriptor < 0:
+            if self._descriptor is None:
                 self.stamps[0].require_unchanged()
-                self._descriptor = os.open(self.path, os.O_RDONLY | os.O_CLOEXEC)
-            return self._descriptor
+                self._descriptor = Descriptor(self.path)
+            return self._descriptor.number
 
     def read(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Read the half-open rectangle rows × columns into `out`; see `Source.read`."""

@@ -58,6 +58,23 @@ def read_rows(
         out[first:last] = part
 
 
+class Descriptor:
+    """An open file that threads read by position; closed with its last owner."""
+
+    def __init__(self, path: str) -> None:
+        self.number = os.open(path, os.O_RDONLY | os.O_CLOEXEC)
+
+    def close(self) -> None:
+        """Close the file; once is enough."""
+        if self.number >= 0:
+            os.close(self.number)
+        self.number = -1
+
+    def __del__(self) -> None:
+        if hasattr(self, "number"):
+            self.close()
+
+
 def _fill(descriptor: int, position: int, buffer: memoryview) -> None:
     """Fill a buffer from a position; one call may return less than was asked for (Linux: at most 2 GiB)."""
     done = 0

@@ -1,0 +1,128 @@
+"""Whether all of an HDF5 dataset is there: chunks, external files, sources of a virtual dataset."""
+
+from __future__ import annotations
+
+import math
+import os
+from typing import Any
+
+from bigsvd.errors import DamagedSourceError, SourceError, UnsupportedMatrixError
+from bigsvd.source.complete import SHOWN, absent_error, refuse_absent
+from bigsvd.source.hdf5_chunks import ChunkTable
+from bigsvd.source.hdf5_file import open_hdf5
+from bigsvd.source.spec import MatrixSpec
+from bigsvd.units import show_count, show_shape
+
+MEANT = "write the dataset again in full, zeros included."
+
+
+def require_complete(dataset: Any, spec: MatrixSpec, folder: str) -> None:
+    """Refuse a dataset of which parts are absent, without reading entries.
+
+    Parameters
+    ----------
+    dataset : h5py.Dataset
+        Two-dimensional.
+    spec : MatrixSpec
+        For the names in messages.
+    folder : str
+        Where the file lies: other files are named relative to it.
+    """
+    if dataset.is_virtual:
+        _require_sources(dataset, spec, folder)
+    elif dataset.external:
+        _require_external(dataset, spec, folder)
+    elif dataset.chunks is not None:
+        refuse_absent(ChunkTable.of(dataset).offset < 0, spec, MEANT)
+    elif dataset.id.get_storage_size() == 0:
+        raise absent_error(spec, "its space in the file was set aside but never written", [], MEANT)
+
+
+def locate(name: str, folder: str) -> str:
+    """Path of another file that an HDF5 file names: beside it, else as seen from the working directory."""
+    beside = os.path.join(folder, name)
+    return beside if os.path.exists(beside) or not os.path.exists(name) else os.path.abspath(name)
+
+
+def _require_external(dataset: Any, spec: MatrixSpec, folder: str) -> None:
+    needed, faults = entry_bytes(dataset), []
+    for name, offset, size in dataset.external:
+        path = locate(os.fsdecode(name), folder)
+        want = min(size, needed)
+        needed -= want
+        found = os.path.getsize(path) if os.path.isfile(path) else None
+        if found is None:
+            faults.append(f"{path}: not found")
+        elif found < offset + want:
+            faults.append(f"{path}: {show_count(found)} bytes, {show_count(offset + want)} are needed")
+    if faults:
+        raise DamagedSourceError(
+            f"{spec.name} keeps its entries in external files, and {len(faults)} of {len(dataset.external)} fall short",
+            evidence=faults[:SHOWN],
+            remedy="Put the external files beside the HDF5 file, complete.",
+        )
+
+
+def entry_bytes(dataset: Any) -> int:
+    """Bytes of all entries as they are stored without filters."""
+    return int(math.prod(dataset.shape) * dataset.dtype.itemsize)
+
+
+def _require_sources(dataset: Any, spec: MatrixSpec, folder: str) -> None:
+    faults, covered = [], 0
+    sources = dataset.virtual_sources()
+    for source in sources:
+        if "%" in source.file_name or "%" in source.dset_name:
+            raise UnsupportedMatrixError(
+                f"{spec.name} is virtual over numbered files ({source.file_name}): a missing one would not show",
+                remedy="Copy it into one dataset first, or name its files one by one.",
+            )
+        covered += source.vspace.get_select_npoints()
+        fault = _source_fault(dataset, source, folder)
+        if fault:
+            faults.append(f"{source.file_name}:{source.dset_name}: {fault}")
+    if faults:
+        raise DamagedSourceError(
+            f"{spec.name} is virtual, and {len(faults)} of its {len(sources)} sources cannot be used",
+            evidence=faults[:SHOWN],
+            remedy="Put the source files where the virtual dataset names them, complete.",
+        )
+    # Mappings written by one program do not overlap; fewer entries than the matrix has means a hole.
+    if covered < math.prod(dataset.shape):
+        raise absent_error(
+            spec,
+            f"its sources cover {show_count(covered)} of {show_count(math.prod(dataset.shape))} entries",
+            [],
+            MEANT,
+        )
+
+
+def _source_fault(dataset: Any, source: Any, folder: str) -> str:
+    """What is wrong with one source of a virtual dataset; empty if nothing."""
+    if source.file_name == ".":
+        return _dataset_fault(dataset.file, source)
+    path = locate(source.file_name, folder)
+    if not os.path.isfile(path):
+        return "file not found"
+    try:
+        with open_hdf5(path) as file:
+            return _dataset_fault(file, source)
+    except SourceError as error:
+        return error.problem
+
+
+def _dataset_fault(file: Any, source: Any) -> str:
+    found = file.get(source.dset_name)
+    if found is None or not hasattr(found, "chunks"):
+        return "no such dataset in it"
+    # The extent that the mapping was made for; the selected part must lie in what is there.
+    end = [last + 1 for last in source.src_space.get_select_bounds()[1]]
+    if len(end) != len(found.shape) or any(side < need for side, need in zip(found.shape, end, strict=True)):
+        return f"its shape is {show_shape(found.shape)}, the mapping reaches to {show_shape(tuple(end))}"
+    if found.chunks is not None:
+        grid = math.prod(-(-side // chunk) for side, chunk in zip(found.shape, found.chunks, strict=True))
+        if found.id.get_num_chunks() < grid:
+            return f"{show_count(grid - found.id.get_num_chunks())} of {show_count(grid)} chunks were never written"
+    elif not found.is_virtual and not found.external and found.id.get_storage_size() == 0:
+        return "it was never written"
+    return ""
