@@ -85,7 +85,9 @@ def choose(candidates: Sequence[Candidate], where: str) -> Candidate:
     if len(choice) == 1 and not sparse:
         return choice[0]
     if choice:
-        example = max(choice, key=lambda candidate: candidate.decoded_bytes or 0).path
+        # A matrix whose layout says what its axes are is the likely one; else the largest.
+        likely = max(choice, key=lambda candidate: (candidate.samples_hint is not None, candidate.decoded_bytes or 0))
+        example = likely.path
         problem = (
             f"{where} holds {show_count(len(choice))} matrices and none was named"
             if len(choice) > 1

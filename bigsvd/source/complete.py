@@ -54,10 +54,19 @@ def refuse_absent(absent: np.ndarray, spec: MatrixSpec, meant: str) -> None:
     if absent.any():
         raise absent_error(
             spec,
-            f"{show_count(int(np.count_nonzero(absent)))} of {show_count(absent.size)} chunks are absent",
+            count_absent(int(np.count_nonzero(absent)), f"{show_count(absent.size)} chunks"),
             [show_chunk(place, spec.shape, spec.chunks) for place in first_places(absent)],
             meant,
         )
+
+
+def count_absent(count: int, whole: str) -> str:
+    """Say how many of the whole are absent.
+
+    >>> count_absent(1, "80 chunks")
+    '1 of 80 chunks is absent'
+    """
+    return f"{show_count(count)} of {whole} {'is' if count == 1 else 'are'} absent"
 
 
 def first_places(marked: np.ndarray) -> list[tuple[int, int]]:

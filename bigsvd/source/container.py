@@ -67,7 +67,9 @@ def container(path: Path) -> str:
         return "zip"
     raise UnsupportedMatrixError(
         f"{path} is neither an HDF5 file, a Zarr store nor an .npy file",
-        evidence=[f"{show_bytes(size)}; it looks like {looks_like(head)}", f"first bytes: {head[:16]!r}"],
+        evidence=[f"{show_bytes(size)}; it looks like {looks_like(head)}", f"first bytes: {head[:16]!r}"]
+        if head
+        else ["it is empty (0 bytes): an interrupted copy or download"],
         remedy="Give one of those three formats.",
     )
 
@@ -85,9 +87,7 @@ def _directory(path: Path) -> str:
 
 
 def looks_like(head: bytes) -> str:
-    """Name what a file that is none of ours begins like."""
-    if not head:
-        return "an empty file (0 bytes): an interrupted copy or download"
+    """Name what a file that is none of ours, and not empty, begins like."""
     start = head.lstrip()[:64].lower()
     if head.startswith(b"MATLAB 5.0"):
         return 'MATLAB v5; save it again in MATLAB with save(…, "-v7.3")'

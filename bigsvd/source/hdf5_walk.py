@@ -86,6 +86,7 @@ def is_sparse(group: Any) -> bool:
         if str(group.attrs.get("encoding-type", "")) in SPARSE_TYPES:
             return True
         children = set(group)
-    except (OSError, TypeError, ValueError, RuntimeError):
+        # A matrix beside its row and column labels is two-dimensional; the entries of a sparse one are a list.
+        return any(parts <= children for parts in _SPARSE_CHILDREN) and len(group["data"].shape) == 1
+    except (OSError, TypeError, ValueError, RuntimeError, KeyError, AttributeError):
         return False
-    return any(parts <= children for parts in _SPARSE_CHILDREN)

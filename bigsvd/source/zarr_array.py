@@ -9,8 +9,8 @@ from typing import Any
 
 import numpy as np
 
-from bigsvd.errors import DamagedSourceError, NoMatrixError, UnsupportedMatrixError
-from bigsvd.source.complete import SHOWN, absent_error, refuse_absent
+from bigsvd.errors import DamagedSourceError, NoMatrixError, SourceError, UnsupportedMatrixError
+from bigsvd.source.complete import SHOWN, absent_error, count_absent, refuse_absent
 from bigsvd.source.entries import decoded_type, type_caution
 from bigsvd.source.hdf5_dataset import unapplied_attributes
 from bigsvd.source.rectangle import Span, clip, require_rectangle, show_chunk, touched
@@ -137,15 +137,18 @@ class ZarrSource:
         try:
             array = open_zarr(self.keys, self.inside, self.metadata.zarr_format)
         except Exception as error:  # codecs and data types come from other packages and raise what they like
-            raise UnsupportedMatrixError(
-                f"{self.spec.name} is written in a way that is not known here",
-                evidence=[self.spec.encoding, f"zarr says: {error}"],
-                remedy="Install the package that brings this codec, or write the array again with zstd.",
-            ) from error
+            raise self._unknown(error) from error
         direct = None
         if not self.metadata.column_major and array.dtype.newbyteorder("=") == self.spec.dtype:
             direct = rust_reader(array, self.keys, self._key, self._chunks)
         return direct or python_reader(array)
+
+    def _unknown(self, error: Exception) -> UnsupportedMatrixError:
+        return UnsupportedMatrixError(
+            f"{self.spec.name} is written in a way that is not known here",
+            evidence=[self.spec.encoding, f"zarr says: {error}"],
+            remedy="Install the package that brings this codec, or write the array again with zstd.",
+        )
 
     def read(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Read the half-open rectangle rows × columns into `out`; see `Source.read`."""
@@ -169,8 +172,12 @@ class ZarrSource:
         for stamp in self.stamps:
             stamp.require_unchanged()
 
-    def _damage(self, reader: Reader, rows: Span, columns: Span, error: Exception) -> DamagedSourceError:
+    def _damage(self, reader: Reader, rows: Span, columns: Span, error: Exception) -> SourceError:
         """Find the first chunk of the rectangle that does not decode, and name it."""
+        from numcodecs.errors import UnknownCodecError  # type: ignore[import-untyped]
+
+        if isinstance(error, UnknownCodecError):
+            return self._unknown(error)
         evidence = [f"zarr says: {error}"]
         chunks = self._chunks
         for i, j in touched(rows, columns, chunks):
@@ -219,4 +226,4 @@ class ZarrSource:
                 places.append(f"{missing:,} inside the shard of {show_chunk(shard, self.spec.shape, self._chunks)}")
             inside += missing
         if inside:
-            raise absent_error(self.spec, f"{inside:,} chunks inside its shards are absent", places, MEANT)
+            raise absent_error(self.spec, count_absent(inside, "the chunks inside its shards"), places, MEANT)
