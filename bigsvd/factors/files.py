@@ -37,8 +37,8 @@ class StoreFiles(Protocol):
         """Write a whole file."""
         ...
 
-    def settle(self) -> None:
-        """Return when all that was written is on the device."""
+    def settle(self, name: str | None = None) -> None:
+        """Return when one file, or all that was written, is on the device."""
         ...
 
     def store(self, *, read_only: bool) -> Store:
@@ -78,14 +78,14 @@ class FolderFiles:
         with open(self.path / name, "wb") as file:
             file.write(data)
 
-    def settle(self) -> None:
-        """Flush every file and folder to the device and drop the pages, so that reading back reads the device."""
-        for name in self.names():
-            with open(self.path / name, "rb") as file:
+    def settle(self, name: str | None = None) -> None:
+        """Flush to the device, with the folders, and drop the pages, so that reading back reads the device."""
+        for each in self.names() if name is None else [name]:
+            with open(self.path / each, "rb") as file:
                 os.fsync(file.fileno())
                 if hasattr(os, "posix_fadvise"):
                     os.posix_fadvise(file.fileno(), 0, 0, os.POSIX_FADV_DONTNEED)
-        for folder, _, _ in os.walk(self.path):
+        for folder in [path for path, _, _ in os.walk(self.path)] if name is None else [(self.path / name).parent]:
             sync_folder(Path(folder))
 
     def store(self, *, read_only: bool) -> Store:
@@ -126,7 +126,7 @@ class MemoryFiles:
 
         self._buffers[name] = cpu.Buffer.from_bytes(data)
 
-    def settle(self) -> None:
+    def settle(self, name: str | None = None) -> None:
         """Memory has no device to wait for."""
 
     def store(self, *, read_only: bool) -> Store:

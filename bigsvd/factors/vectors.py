@@ -153,7 +153,7 @@ def shard_index(entries: list[tuple[int, int]], chunks_per_file: int) -> bytes:
     import google_crc32c
 
     index = np.full((chunks_per_file, 2), _ABSENT, dtype="<u8")
-    index[: len(entries)] = entries
+    index[: len(entries)] = np.array(entries, dtype="<u8").reshape(-1, 2)
     data = index.tobytes()
     return data + int(google_crc32c.value(data)).to_bytes(4, "little")
 
