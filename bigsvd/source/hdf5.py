@@ -14,7 +14,7 @@ from bigsvd.source.entries import decoded_type, pair_view, type_caution
 from bigsvd.source.hdf5_complete import locate, require_complete
 from bigsvd.source.hdf5_dataset import describe, missing_filters, unapplied_attributes
 from bigsvd.source.hdf5_direct import Fill, direct_reader
-from bigsvd.source.hdf5_file import open_hdf5
+from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
 from bigsvd.source.positional import Descriptor
 from bigsvd.source.rectangle import Span, clip, require_rectangle, show_chunk, show_place, touched
 from bigsvd.source.spec import MatrixSpec
@@ -38,14 +38,16 @@ class Hdf5Source:
         self.dataset = dataset
         self._forget()
         self.stamps: tuple[FileStamp, ...] = (FileStamp.of(path),)
-        opened, _ = self._opened()
-        self.stamps += tuple(FileStamp.of(name) for name in other_files(opened, path) if os.path.exists(name))
-        self.spec = _spec(opened, path, dataset, self.stamps)
+        with library_errors_named(f"{path}:{dataset}"), open_hdf5(path) as file:
+            others = other_files(file[dataset], path)
+            self.stamps += tuple(FileStamp.of(name) for name in others if os.path.exists(name))
+            self.spec = _spec(file[dataset], path, dataset, self.stamps)
+        self._opened()
 
     def _forget(self) -> None:
         self._lock = threading.Lock()
-        self._file: Any = None
-        self._dataset: Any = None
+        self._handles: tuple[Any, Descriptor, Any, Fill] | None = None
+        self._inherited: object = None
         self._process = 0
 
     def __getstate__(self) -> dict[str, Any]:
@@ -64,22 +66,24 @@ class Hdf5Source:
         A handle that came through a fork is left alone, neither used nor closed, and another one opened.
         """
         with self._lock:
-            if self._file is None or self._process != os.getpid():
+            if self._handles is None or self._process != os.getpid():
                 self._require_unchanged()
-                self._file = open_hdf5(self.path)
+                self._inherited = self._handles
                 self._process = os.getpid()
-                self._descriptor = Descriptor(self.path)
-                self._dataset = open_dataset(self._file, self.dataset, os.path.dirname(self.path))
-                self._fill = direct_reader(self._dataset, self._descriptor.number) or library_reader(self._dataset)
-            return self._dataset, self._fill
+                with library_errors_named(f"{self.path}:{self.dataset}"):
+                    file, descriptor = open_hdf5(self.path), Descriptor(self.path)
+                    dataset = open_dataset(file, self.dataset, os.path.dirname(self.path))
+                    fill = direct_reader(dataset, descriptor.number) or library_reader(dataset)
+                    self._handles = file, descriptor, dataset, fill
+            return self._handles[2], self._handles[3]
 
     def close(self) -> None:
         """Release the file. Reading again opens it again."""
         with self._lock:
-            if self._file is not None and self._process == os.getpid():
-                self._file.close()
-                self._descriptor.close()
-            self._file = self._dataset = None
+            if self._handles is not None and self._process == os.getpid():
+                self._handles[0].close()
+                self._handles[1].close()
+                self._handles = None
 
     def read(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Read the half-open rectangle rows × columns into `out`; see `Source.read`."""
@@ -104,7 +108,9 @@ class Hdf5Source:
     def require_complete(self) -> None:
         """Look for parts that are absent; see `check_complete`."""
         self._require_unchanged()
-        require_complete(self._opened()[0], self.spec, os.path.dirname(self.path))
+        dataset, _ = self._opened()
+        with library_errors_named(self.spec.name):
+            require_complete(dataset, self.spec, os.path.dirname(self.path))
 
     def _damage(self, fill: Fill, rows: Span, columns: Span, error: Exception) -> DamagedSourceError:
         """Find the first chunk of the rectangle that does not decode, and name it."""
@@ -152,6 +158,8 @@ def open_dataset(file: Any, inside: str, folder: str) -> Any:
     dataset = file[inside]
     names = [os.fsdecode(name) for name, _, _ in dataset.external or ()]
     if any(not os.path.isabs(name) and os.path.exists(os.path.join(folder, name)) for name in names):
+        # The library refuses another search path as long as the dataset is open by any handle.
+        dataset = None
         access = h5py.h5p.create(h5py.h5p.DATASET_ACCESS)
         access.set_efile_prefix(os.fsencode(folder))
         return h5py.Dataset(h5py.h5d.open(file.id, os.fsencode(inside), access))

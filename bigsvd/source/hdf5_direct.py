@@ -131,7 +131,11 @@ class _ChunkReader:
         planes = np.frombuffer(raw, np.uint8).reshape(item, *self._chunks)[:, rows, columns]
         target = out if out.strides[1] == item else np.empty(out.shape, out.dtype)
         entries = target.view(np.uint8).reshape(*target.shape, item)
-        for byte, plane in enumerate(planes if self._stored.isnative else planes[::-1]):
+        places = np.arange(item)
+        if not self._stored.isnative:
+            # The two floats of a complex number are turned each in its place.
+            places = places.reshape(2 if self._stored.kind == "c" else 1, -1)[:, ::-1].reshape(-1)
+        for byte, plane in zip(places, planes, strict=True):
             entries[:, :, byte] = plane
         if target is not out:
             out[...] = target

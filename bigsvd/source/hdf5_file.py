@@ -5,9 +5,11 @@ from __future__ import annotations
 import errno
 import os
 import re
+from collections.abc import Iterator
+from contextlib import contextmanager
 from typing import Any
 
-from bigsvd.errors import DamagedSourceError, NoMatrixError, SourceError
+from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, SourceError
 from bigsvd.units import show_count
 
 _TRUNCATED = re.compile(r"eof = (\d+).*stored_eof = (\d+)")
@@ -25,6 +27,21 @@ def open_hdf5(path: str) -> Any:
         return h5py.File(path, "r", locking="best-effort", rdcc_nbytes=0)
     except OSError as error:
         raise _why_not_opened(path, error) from error
+
+
+@contextmanager
+def library_errors_named(name: str) -> Iterator[None]:
+    """Turn what the library raises about a file's own structure into an error that names the file."""
+    try:
+        yield
+    except BigsvdError:
+        raise
+    except Exception as error:  # h5py raises OSError, RuntimeError, KeyError, ValueError, TypeError, as it comes
+        raise DamagedSourceError(
+            f"{name}: the structure of the HDF5 file cannot be read there",
+            evidence=[f"the library says: {error}"],
+            remedy="Copy or download the file again, or write it again from its origin.",
+        ) from error
 
 
 def _why_not_opened(path: str, error: OSError) -> SourceError:

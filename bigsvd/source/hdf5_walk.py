@@ -57,7 +57,10 @@ def _visit(file: Any, path: str, target: str, visited: set[Any], waiting: list[s
         return
     visited.add(identity)
     if isinstance(thing, h5py.Dataset):
-        found.append(describe(thing, path))
+        try:
+            found.append(describe(thing, path))
+        except (OSError, RuntimeError, KeyError, ValueError, TypeError) as error:
+            found.append(Candidate(path, reason=f"it cannot be described ({error})"))
     elif isinstance(thing, h5py.Group):
         if is_sparse(thing):
             found.append(Candidate(path, reason=SPARSE))

@@ -109,10 +109,10 @@ def _from_object(thing: Any) -> Source:
 
 def _open_hdf5(path: str, matrix: str | None) -> Source:
     from bigsvd.source.hdf5 import Hdf5Source
-    from bigsvd.source.hdf5_file import open_hdf5
+    from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
     from bigsvd.source.hdf5_walk import is_sparse, walk_hdf5
 
-    with open_hdf5(path) as file:
+    with library_errors_named(path), open_hdf5(path) as file:
         import h5py
 
         if matrix is None:
@@ -147,10 +147,10 @@ def _object_at(file: Any, inside: str, path: str) -> Any:
 
 
 def _survey_hdf5(path: str) -> list[Candidate]:
-    from bigsvd.source.hdf5_file import open_hdf5
+    from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
     from bigsvd.source.hdf5_walk import walk_hdf5
 
-    with open_hdf5(path) as file:
+    with library_errors_named(path), open_hdf5(path) as file:
         return walk_hdf5(file)
 
 

@@ -33,8 +33,8 @@ class ZarrMetadata:
         What an absent chunk is read as.
     prefix, separator : str
         A chunk is stored under prefix + i + separator + j.
-    column_major : bool
-        Whether entries of a chunk lie column by column.
+    column_major, big_endian : bool
+        Whether entries of a chunk lie column by column, and with their highest byte first.
     codecs : tuple of str
     attributes : dict
     dimension_names : tuple of str or None
@@ -55,6 +55,7 @@ class ZarrMetadata:
     inner: tuple[int, ...] | None = None
     shard: dict[str, Any] | None = None
     column_major: bool = False
+    big_endian: bool = False
     dimension_names: tuple[str | None, ...] = ()
     note: str = ""
 
@@ -136,6 +137,7 @@ def _version_2(document: dict[str, Any], attributes: dict[str, Any], note: str) 
         codecs=tuple(_codec_words(step["id"], step) for step in chain),
         attributes=attributes,
         column_major=document.get("order") == "F" and len(shape) > 1,
+        big_endian=dtype is not None and dtype.byteorder == ">",
         dimension_names=tuple(names) if isinstance(names, list) else (),
         note=note,
     )
@@ -172,6 +174,7 @@ def _version_3(document: dict[str, Any], attributes: dict[str, Any], note: str) 
         inner=tuple(map(int, shards[0]["chunk_shape"])) if shards else None,
         shard=shards[0] if shards and len(codecs) == 1 else None,
         column_major=any(step["name"] == "transpose" for step in steps),
+        big_endian=any((step.get("configuration") or {}).get("endian") == "big" for step in steps),
         dimension_names=tuple(document.get("dimension_names") or ()),
         note=note,
     )
