@@ -60,8 +60,7 @@ class StoreCost:
     disk_bytes : int
         Upper bound of the bytes on disk.
     memory_bytes : int
-        Upper bound of the bytes that `FactorsWriter` holds at any time, beside the blocks handed to it, the mean
-        and the scale.
+        Upper bound of the bytes that `FactorsWriter` holds at any time, beside what is handed to it.
     files : int
         Upper bound of the number of files.
     """
@@ -115,7 +114,7 @@ def store_cost(shape: tuple[int, int], rank: int, dtype: np.dtype) -> StoreCost:
     --------
     >>> cost = store_cost((100_000_000, 5_000), 50, np.dtype("float64"))
     >>> cost.disk_bytes // 10**9, cost.memory_bytes // 2**20, cost.files
-    (40, 257, 404)
+    (40, 323, 404)
     """
     grids = [plan_grid(side, rank, dtype.itemsize) for side in shape]
     vectors = sum(shape) * rank * dtype.itemsize
@@ -123,5 +122,6 @@ def store_cost(shape: tuple[int, int], rank: int, dtype: np.dtype) -> StoreCost:
     # zstd adds at most 1/256 to what it cannot compress; 1 KiB a component is room for the spectrum beyond the rank.
     disk = vectors + vectors // 256 + 25 * shape[1] + 1024 * rank + 2**20
     files = sum(grid.files for grid in grids) + 2 * _VALUE_FILES + _OTHER_FILES
-    # The buffer of each side, the encoded chunk and the one being read back.
-    return StoreCost(disk, 4 * chunk + 2**21, files)
+    # Two buffers and an encoded chunk while streaming; while reading back an encoded and a decoded chunk beside freed
+    # buffers that the allocator keeps: 4.0 chunks measured. Mean and scale are read back and opened: 40 bytes a column.
+    return StoreCost(disk, 5 * chunk + 40 * shape[1] + 2**22, files)

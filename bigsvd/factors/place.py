@@ -130,16 +130,17 @@ def install(place: Place, *, overwrite: bool) -> None:
         except BaseException:
             os.rename(place.replaced, place.out)
             raise
+        sync_folder(place.out.parent)
+        # What cannot be removed now is removed at the next opening.
+        shutil.rmtree(place.replaced, ignore_errors=True)
     else:
         os.rename(place.partial, place.out)
-    sync_folder(place.out.parent)
-    # What cannot be removed now is removed at the next opening.
-    shutil.rmtree(place.replaced, ignore_errors=True)
+        sync_folder(place.out.parent)
 
 
 def repair(place: Place) -> None:
     """Finish an exchange that a dying process left between its two renames; the caller holds the lock."""
-    if not is_result(place.replaced):
+    if not is_result(place.replaced) or _strangers(place.replaced):
         return
     if not os.path.lexists(place.out):
         os.rename(place.partial if _is_whole(place.partial) else place.replaced, place.out)

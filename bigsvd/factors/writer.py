@@ -173,9 +173,9 @@ class FactorsWriter:
         """
         wide = np.result_type(self._dtype, np.float64)
         values = {
-            "singular_values": np.asarray(singular_values, dtype=np.float64),
-            "column_mean": np.asarray(column_mean, dtype=wide),
-            "column_scale": np.asarray(column_scale, dtype=np.float64),
+            "singular_values": np.asarray(singular_values).astype(np.float64, casting="same_kind"),
+            "column_mean": np.asarray(column_mean).astype(wide, casting="same_kind"),
+            "column_scale": np.asarray(column_scale).astype(np.float64, casting="same_kind"),
         }
         computed = {name: np.asarray(array, dtype=np.float64) for name, array in spectrum.items()}
         record = self._record(attributes)
@@ -244,6 +244,13 @@ class FactorsWriter:
                     f"{name} must be finite, entry {first:,} is {array[first]}",
                     remedy="Run again with --precision double; report it if that does not help.",
                 )
+        descending = values["singular_values"]
+        if descending[-1] < 0 or (np.diff(descending) > 0).any():
+            raise OptionError(
+                "singular_values must descend and not be negative",
+                evidence=[f"given: {np.array2string(descending, threshold=10)}"],
+                remedy="Sort the components by decreasing value.",
+            )
         shapes = {array.shape for array in spectrum.values()}
         if set(spectrum) != set(SPECTRUM) or len(shapes) != 1 or len(spectrum["value"]) < self._rank:
             raise OptionError(
@@ -251,9 +258,10 @@ class FactorsWriter:
                 evidence=[f"{name}: {array.shape}" for name, array in spectrum.items()],
                 remedy="Give all six.",
             )
-        if certificate.rank != self._rank:
+        if wrong := {name: array.shape for name, array in certificate.arrays().items() if array.shape != (self._rank,)}:
             raise OptionError(
-                f"the certificate is of {certificate.rank} components, the factors have {self._rank}",
+                f"the certificate is not of {self._rank} components, as the factors are",
+                evidence=[f"{name}: {shape}" for name, shape in wrong.items()],
                 remedy=f"Certify {self._rank} components.",
             )
 

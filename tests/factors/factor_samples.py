@@ -1,5 +1,6 @@
 """Invented results for these tests, and the one kept for ever under ``stores/``."""
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -39,7 +40,7 @@ class Sample:
             lower=0.99 * self.value,
             upper=1.01 * self.value,
             residual=1e-12 * self.value,
-            state=np.array([0, 0, 1, 2, 2], np.int8)[:rank],
+            state=np.resize(np.array([0, 0, 1, 2, 2], np.int8), rank),
             index_proved=np.arange(rank) < 2,
             angle_bound=np.where(np.arange(rank) < 2, 1e-6, np.nan),
             tied_first=np.arange(rank),
@@ -103,6 +104,9 @@ def small_chunks(monkeypatch, rows_each, most_files=400):
     monkeypatch.setattr(writer, "plan_grid", plan)
 
 
+KEPT_FACTORS = {"value": 1.0, "lower": 0.5, "upper": 2.0, "residual": 0.25}
+
+
 def kept_sample(dtype: str) -> Sample:
     """What ``stores/format-1-DTYPE.zarr`` holds, computed without random numbers or LAPACK's choice of signs."""
     sample = Sample(6, 4, 2, dtype)
@@ -113,5 +117,14 @@ def kept_sample(dtype: str) -> Sample:
     sample.value = np.array([8.0, 2.0])
     sample.mean = np.array([1.0, -2.0, 0.5, 0.0])
     sample.scale = np.array([1.0, 2.0, 4.0, 1.0])
-    sample.spectrum = {name: np.array([4.0, 2.0, 1.0]) for name in sample.spectrum}
+    sample.spectrum = {name: np.array([8.0, 2.0, 1.0]) for name in sample.spectrum}
+    sample.certificate = replace(
+        sample.certificate,
+        **{name: (sample.value * factor) for name, factor in KEPT_FACTORS.items()},
+        missed_bound=1.5,
+        captured_share=0.97,
+        total_energy=70.0,
+        left_defect=float("nan"),
+    )
+    sample.attributes = sample.attributes | {"versions": {"bigsvd": "0.1.0"}}
     return sample

@@ -2,6 +2,8 @@
 
 import json
 import math
+import subprocess
+import sys
 from pathlib import Path
 
 import numpy as np
@@ -216,8 +218,10 @@ def test_a_vector_that_is_not_finite_is_named_by_row_and_component():
         ("singular_values", np.ones(4), r"singular_values has shape \(4,\)"),
         ("column_mean", np.ones(13), r"column_mean has shape \(13,\)"),
         ("column_scale", np.full(12, np.inf), "column_scale must be finite, entry 0 is inf"),
+        ("singular_values", np.array([5.0, 4.0, 3.0, 2.0, -1.0]), "must descend and not be negative"),
+        ("singular_values", np.array([5.0, 4.0, 4.5, 2.0, 1.0]), "must descend and not be negative"),
         ("spectrum", {"value": np.ones(5)}, "the spectrum needs value, lower"),
-        ("certificate", Sample(rank=4).certificate, "of 4 components, the factors have 5"),
+        ("certificate", Sample(rank=4).certificate, "not of 5 components"),
     ],
 )
 def test_a_part_that_does_not_fit_is_refused_and_nothing_left(tmp_path, part, value, message):
@@ -242,6 +246,36 @@ def test_a_rank_or_type_that_makes_no_result_is_refused(rank, dtype):
 def test_one_by_one_is_a_result(tmp_path):
     sample = Sample(rows=3, columns=1, rank=1)
     same(sample.write(tmp_path / "out.zarr"), sample)
+
+
+MEASURE = r"""
+import re, sys
+sys.path.insert(0, sys.argv[1])
+from pathlib import Path
+import numpy as np
+from factor_samples import Sample
+from bigsvd.factors import FactorsWriter, store_cost
+Sample(rank=10, columns=12).write(Path(sys.argv[2]))
+rows, small = 800_000, Sample(rows=20, columns=12, rank=10)
+rng = np.random.default_rng(1)
+def peak():
+    return 1024 * int(re.search(r"VmHWM:\s+(\d+) kB", Path("/proc/self/status").read_text())[1])
+before = peak()
+with FactorsWriter(Path(sys.argv[2]), shape=(rows, 12), rank=10, dtype=np.dtype("f8"), overwrite=True) as writer:
+    for start in range(0, rows, 1_000):
+        writer.write_vectors("left", start, rng.standard_normal((1_000, 10)))
+    writer.write_vectors("right", 0, small.right)
+    writer.finish(**small.parts)
+print(peak() - before, store_cost((rows, 12), 10, np.dtype("f8")).memory_bytes)
+"""
+
+
+@pytest.mark.skipif(not Path("/proc/self/status").exists(), reason="peak resident size is read from /proc")
+def test_the_cost_bounds_the_memory_that_writing_takes(tmp_path):
+    line = [sys.executable, "-c", MEASURE, str(Path(__file__).parent), str(tmp_path / "out.zarr")]
+    run = subprocess.run(line, capture_output=True, text=True, check=True)
+    measured, bound = (int(word) for word in run.stdout.split())
+    assert 20 * 2**20 < measured <= bound < 180 * 2**20
 
 
 def test_the_cost_bounds_what_is_written(tmp_path):
