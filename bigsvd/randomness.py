@@ -73,7 +73,9 @@ _FAR_BOTTOM = (
 _LN2 = 0.6931471805599453094
 
 
-def gaussian_block(seed: int, stream: int, rows: int, columns: int, *, complex_entries: bool = False) -> np.ndarray:
+def gaussian_block(
+    seed: int, stream: int, rows: int, columns: int, *, first_row: int = 0, complex_entries: bool = False
+) -> np.ndarray:
     """Standard normal entries, keyed by position.
 
     Parameters
@@ -84,16 +86,27 @@ def gaussian_block(seed: int, stream: int, rows: int, columns: int, *, complex_e
         Which block of the run this is; blocks of different streams are independent.
     rows, columns : int
         Shape; entry (i, j) depends on `columns`, not on `rows`.
+    first_row : int
+        Row of the whole block that the first returned row is.
     complex_entries : bool
         Complex entries of unit variance, real and imaginary parts each N(0, ½).
 
     Returns
     -------
     ndarray, shape (rows, columns), float64 or complex128
+
+    Examples
+    --------
+    >>> whole = gaussian_block(7, 1, 100, 3)
+    >>> bool((gaussian_block(7, 1, 10, 3, first_row=90) == whole[90:]).all())
+    True
     """
-    count = rows * columns * (2 if complex_entries else 1)
-    # The key is two 64-bit words: seed and stream never meet another pair.
-    bits = np.random.Philox(key=np.array([seed & (2**64 - 1), stream], dtype=np.uint64)).random_raw(count)
+    words = columns * (2 if complex_entries else 1)
+    # The key is two 64-bit words: seed and stream never meet another pair. Each counter value yields four words.
+    generator = np.random.Philox(key=np.array([seed & (2**64 - 1), stream], dtype=np.uint64))
+    skipped, extra = divmod(first_row * words, 4)
+    generator.advance(skipped)
+    bits = generator.random_raw(extra + rows * words)[extra:]
     normals = _normal((bits >> np.uint64(11)).astype(np.float64) * 2.0**-53 + 2.0**-54)
     if complex_entries:
         return (normals.view(np.complex128) * np.sqrt(0.5)).reshape(rows, columns)

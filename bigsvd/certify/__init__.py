@@ -4,6 +4,7 @@ from bigsvd.certify.certificate import STATES, Certificate, SliceCheck
 from bigsvd.certify.evidence import Evidence, WholeSpectrum
 from bigsvd.certify.missed import CHAIN_FAILURE, ChainState, chain_bound, energy_bound, least_projection
 from bigsvd.certify.rounding import (
+    gamma,
     SumDepth,
     fold_rounding,
     gram_rounding,
@@ -26,6 +27,7 @@ __all__ = [
     "chain_bound",
     "energy_bound",
     "fold_rounding",
+    "gamma",
     "gram_rounding",
     "least_projection",
     "measured_rounding",

@@ -18,10 +18,11 @@ class ChainState:
     ----------
     power : int
         s, how often (I−P)AᴴA was applied.
-    norm : float
-        ‖T_s‖₂ of the block T_s = ((I−P)AᴴA)^s (I−P)Ω, at most.
+    log_norm : float
+        Logarithm of ‖T_s‖₂ of the block T_s = ((I−P)AᴴA)^s (I−P)Ω.
     lost : float
-        Spectral norm of all that was lost on the way (rounding, directions that did not fit in the basis), carried to T_s.
+        Spectral norm of all that was lost on the way (rounding, directions that did not fit in the basis), carried to
+        T_s, relative to ‖T_s‖₂.
     vectors : int
         Columns r of Ω.
     complex_entries : bool
@@ -30,7 +31,7 @@ class ChainState:
     """
 
     power: int
-    norm: float
+    log_norm: float
     lost: float
     vectors: int
     complex_entries: bool
@@ -58,8 +59,11 @@ def chain_bound(state: ChainState) -> float:
     if state.power == 0 or state.vectors == 0:
         return float("inf")
     quantile = least_projection(state.vectors, state.complex_entries) * state.shrink
-    # The top-end factor covers the rounding of the root itself.
-    return float(((state.norm + state.lost) / quantile) ** (1 / (2 * state.power)) * (1 + 1e-14))
+    if state.log_norm == -np.inf:
+        return 0.0
+    exponent = (state.log_norm + np.log1p(state.lost) - np.log(quantile)) / (2 * state.power)
+    # The factor covers the rounding of the root itself.
+    return float(np.exp(exponent) * (1 + 1e-13))
 
 
 def least_projection(vectors: int, complex_entries: bool) -> float:

@@ -1,15 +1,19 @@
 """Pure arithmetic on specs: axis, panels, route, widths, memory, time. Opens nothing."""
 
 from bigsvd.plan.geometry import Geometry
-from bigsvd.plan.memory import UNIT_COLUMNS, UNIT_LINES, MemoryTerm, fold_lines
-from bigsvd.plan.plan import Plan, make_plan
+from bigsvd.plan.memory import TALL_LINES, UNIT_COLUMNS, UNIT_LINES, MemoryTerm, fold_lines
+from bigsvd.plan.plan import NOMINAL_SHARE_OF_SLICES, Plan, make_plan
 from bigsvd.plan.rates import BASE_BYTES, READ_RATE
-from bigsvd.plan.request import Request
-from bigsvd.plan.widths import Widths, crowd_reach
+from bigsvd.plan.request import DEFAULT_MAX_RANK, DEFAULT_RANK, Request
+from bigsvd.plan.widths import Widths, crowd_reach, krylov_widths
 
 __all__ = [
     "BASE_BYTES",
+    "DEFAULT_MAX_RANK",
+    "DEFAULT_RANK",
+    "NOMINAL_SHARE_OF_SLICES",
     "READ_RATE",
+    "TALL_LINES",
     "UNIT_COLUMNS",
     "UNIT_LINES",
     "Geometry",
@@ -19,5 +23,6 @@ __all__ = [
     "Widths",
     "crowd_reach",
     "fold_lines",
+    "krylov_widths",
     "make_plan",
 ]

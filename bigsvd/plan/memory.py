@@ -18,8 +18,8 @@ UNIT_LINES = 512
 UNIT_COLUMNS = 8192
 # Lines gathered before a Householder fold: several times the width, so that the old triangle is a small part of the work.
 LEAST_FOLD_LINES = 1024
-# Most memory that writing and verifying the result takes beside the scratch buffers.
-RESULT_BYTES = 96 * 2**20
+# Lines of Y that are turned into left vectors at a time (solve reads so many).
+TALL_LINES = 4096
 
 
 @dataclass(frozen=True)
@@ -36,7 +36,7 @@ def fold_lines(width: int) -> int:
 
 
 def memory_terms(
-    spec: MatrixSpec, geometry: Geometry, route: str, widths: Widths, *, workers: int, leaves: int, pilot_bytes: int, resident: bool
+    spec: MatrixSpec, geometry: Geometry, route: str, widths: Widths, *, workers: int, leaves: int, pilot_bytes: int, resident: bool, result_bytes: int
 ) -> tuple[MemoryTerm, ...]:
     """Terms of the phase that needs most.
 
@@ -52,6 +52,8 @@ def memory_terms(
         The sample held for the pilot.
     resident : bool
         Whether the whole matrix is held in its stored type.
+    result_bytes : int
+        What writing the result holds.
 
     Returns
     -------
@@ -90,7 +92,8 @@ def memory_terms(
     ]
     dense = n * column if whole_spectrum else 0
     growing = [MemoryTerm(5 * widths.block * column + 6 * dense, "new directions: residuals and their QR, small dense steps")]
-    writing = [MemoryTerm(RESULT_BYTES + workers * unit, "writing and verifying the result")]
+    lines = min(TALL_LINES, geometry.lines)
+    writing = [MemoryTerm(result_bytes + 4 * lines * 2 * widths.limit * entry, "left vectors from scratch, writing and reading back the result")]
     phases = [pilot + reading, reading, growing, writing]
     return (*held, *max(phases, key=lambda terms: sum(term.size for term in terms)))
 

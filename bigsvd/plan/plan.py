@@ -18,6 +18,8 @@ from bigsvd.source import MatrixSpec
 from bigsvd.units import show_bytes, show_count, show_seconds, show_shape
 
 PILOT_SHARE = 0.05
+# Share of the matrix that the exact check on slices reads, for the estimate of bytes.
+NOMINAL_SHARE_OF_SLICES = 0.01
 FEWEST_PILOT_PANELS = 8
 # Workers that costs are compared with and memory is sized for; the number that really runs changes neither.
 NOMINAL_WORKERS = 2
@@ -70,6 +72,10 @@ class Plan:
     reasons : tuple of (str, str)
         Each choice and why, in words.
     remarks : tuple of str
+    waves : tuple of tuple of (int, int)
+        Segments of every wave, as ranges of panels.
+    result_bytes : int
+        What writing the result holds.
     """
 
     request: Request
@@ -89,11 +95,20 @@ class Plan:
     reasons: tuple[tuple[str, str], ...] = ()
     remarks: tuple[str, ...] = ()
     waves: tuple[tuple[tuple[int, int], ...], ...] = field(default=())
+    result_bytes: int = 0
 
     @property
     def planned_bytes(self) -> int:
         """Planned peak of the resident size."""
         return total(self.memory)
+
+    @property
+    def nominal_dense_seconds(self) -> float:
+        """Nominal time of folding Y and of the small dense steps, over all sweeps."""
+        factor = COMPLEX_FACTOR if self.spec.dtype.kind == "c" else 1.0
+        width, n = self.widths.limit, self.geometry.across
+        folding = self.geometry.lines * width**2 / QR_RATE / max(1, self.workers)
+        return factor * self.nominal_sweeps * (folding + 6 * n * width * self.widths.block / PRODUCT_RATE["double"])
 
     @property
     def rank(self) -> int:
@@ -135,7 +150,9 @@ class Plan:
         return f"samples: {samples} ({counts[0]}); features: {features} ({counts[1]}); {', '.join(done)}"
 
 
-def make_plan(spec: MatrixSpec, request: Request, *, ceiling: int, processors: int | None = None) -> Plan:
+def make_plan(
+    spec: MatrixSpec, request: Request, *, ceiling: int, processors: int | None = None, result_bytes: int = 0
+) -> Plan:
     """Decide how a matrix will be decomposed.
 
     Parameters
@@ -146,6 +163,8 @@ def make_plan(spec: MatrixSpec, request: Request, *, ceiling: int, processors: i
         Bytes the process may hold.
     processors : int or None
         Processors at hand; decides only how many workers run.
+    result_bytes : int
+        Bytes that writing the result holds.
 
     Returns
     -------
@@ -163,7 +182,7 @@ def make_plan(spec: MatrixSpec, request: Request, *, ceiling: int, processors: i
     samples_axis = 0 if request.samples == "rows" else 1
     axes = {"auto": (0, 1), "rows": (0,), "columns": (1,)}[request.axis]
     routes = ("direct", "gram", "tsqr", "krylov") if request.route == "auto" else (request.route,)
-    drafts = [plan for axis in axes for route in routes for plan in _candidates(spec, request, axis, samples_axis, route, ceiling)]
+    drafts = [plan for axis in axes for route in routes for plan in _candidates(spec, request, axis, samples_axis, route, ceiling, result_bytes)]
     found = [plan for plan in drafts if plan.planned_bytes <= ceiling]
     if not found:
         raise _too_small(request, ceiling, drafts)
@@ -182,7 +201,7 @@ def _preference(plan: Plan) -> tuple[float, int]:
 
 
 def _candidates(
-    spec: MatrixSpec, request: Request, axis: int, samples_axis: int, route: str, ceiling: int
+    spec: MatrixSpec, request: Request, axis: int, samples_axis: int, route: str, ceiling: int, result_bytes: int
 ) -> Iterator[Plan]:
     """Plans for one axis and route, from roomy to tight."""
     across = spec.shape[1 - axis]
@@ -207,7 +226,7 @@ def _candidates(
                         continue
                     for workers in (NOMINAL_WORKERS, 1):
                         draft = Plan(
-                            request, spec, geometry, route, resident, widths, leaves, pilot, may_be_single, workers, (), ceiling, 0.0, 0
+                            request, spec, geometry, route, resident, widths, leaves, pilot, may_be_single, workers, (), ceiling, 0.0, 0, result_bytes=result_bytes
                         )
                         seconds, sweeps = _nominal(draft, tight)
                         yield replace(draft, memory=_terms(draft, workers), nominal_seconds=seconds, nominal_sweeps=sweeps)
@@ -244,6 +263,7 @@ def _terms(plan: Plan, workers: int) -> tuple[MemoryTerm, ...]:
     return memory_terms(
         plan.spec, plan.geometry, plan.route, plan.widths,
         workers=workers, leaves=plan.leaves, pilot_bytes=pilot_bytes, resident=plan.resident,
+        result_bytes=plan.result_bytes,
     )  # fmt: skip
 
 

@@ -1,0 +1,28 @@
+"""How the basis is found: pilot, growth, restart, whole spectra, statistics of the first sweep, tall vectors."""
+
+from bigsvd.solve.grow import carry_chains, gaussian_directions, grow_block, start_block
+from bigsvd.solve.pilot import Pilot, take_pilot
+from bigsvd.solve.state import Chain, Ritz, State
+from bigsvd.solve.statistics import Learnt, correct_gram, correct_products, learn
+from bigsvd.solve.tall import TallVectors, column_phases
+from bigsvd.solve.whole import from_gram, from_triangle
+
+__all__ = [
+    "Chain",
+    "Learnt",
+    "Pilot",
+    "Ritz",
+    "State",
+    "TallVectors",
+    "carry_chains",
+    "column_phases",
+    "correct_gram",
+    "correct_products",
+    "from_gram",
+    "from_triangle",
+    "gaussian_directions",
+    "grow_block",
+    "learn",
+    "start_block",
+    "take_pilot",
+]

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import threading
+import time
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -57,12 +58,28 @@ class Control:
         self._stop = threading.Event()
         self._stage = ("", 0, 0)
         self._done = 0
+        self._began = time.perf_counter()
+        self._timings: dict[str, float] = {}
 
     def begin(self, stage: str, total: int, sweep: int = 0, note: str = "") -> None:
         """Open a stage of so many bytes."""
         with self._lock:
+            self._close_stage()
             self._stage, self._done = (stage, sweep, total), 0
         self.tell(note)
+
+    def timings(self) -> dict[str, float]:
+        """Seconds spent in every stage so far; sweeps together."""
+        with self._lock:
+            self._close_stage()
+            return dict(self._timings)
+
+    def _close_stage(self) -> None:
+        """Add the time since the stage began to its account."""
+        now = time.perf_counter()
+        if self._stage[0]:
+            self._timings[self._stage[0]] = self._timings.get(self._stage[0], 0.0) + now - self._began
+        self._began = now
 
     def advance(self, size: int, *, read: int | None = None) -> None:
         """Count bytes of the present stage; `read` is what was decoded from the source for them."""

@@ -1,0 +1,332 @@
+"""The whole flow on one page: open, plan, sweep to a certificate, check slices, write. Read this first."""
+
+from __future__ import annotations
+
+import tempfile
+import time
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from bigsvd import machine
+from bigsvd.certify import SliceCheck
+from bigsvd.factors import Factors, FactorsWriter, check_output, open_factors, store_cost
+from bigsvd.forecast import Forecast, make_forecast
+from bigsvd.plan import DEFAULT_MAX_RANK, DEFAULT_RANK, Plan, Request, make_plan
+from bigsvd.record import run_record, spectrum_record
+from bigsvd.run import Outcome, run
+from bigsvd.slices import check_slice, draw_slices
+from bigsvd.solve import TallVectors, column_phases
+from bigsvd.source import MatrixSpec, Source, check_complete, open_source
+from bigsvd.sweep import Control, Listener, one_blas_thread
+from bigsvd.units import parse_bytes
+from bigsvd.verify import Verification, verify_factors
+
+__all__ = ["decompose", "forecast", "open_factors", "open_matrix", "verify"]
+
+
+def open_matrix(path: Any, matrix: str | None = None) -> Source:
+    """Open a matrix without reading it.
+
+    Parameters
+    ----------
+    path : path, ndarray, h5py.Dataset, zarr.Array or dask array
+        An HDF5 file, a Zarr store, a ``.npy`` file, or an array.
+    matrix : str, optional
+        Path of the array inside the file; needed where the file holds several.
+
+    Returns
+    -------
+    Source
+        Its ``spec`` says what is there; `decompose` takes it as it takes a path.
+    """
+    return path if hasattr(path, "spec") and hasattr(path, "read") else open_source(path, matrix)
+
+
+def decompose(
+    source: Any,
+    out: str | Path | None = None,
+    *,
+    matrix: str | None = None,
+    scratch: str | Path | None = None,
+    overwrite: bool = False,
+    progress: Listener | None = None,
+    **options: Any,
+) -> Factors:
+    """Compute the leading singular factors of a matrix larger than memory, with a certificate.
+
+    The matrix decomposed is A = U Σ Vᴴ, samples × features, after the declared preparation. It is streamed in panels under a
+    memory ceiling; nothing of its size is ever held.
+
+    Parameters
+    ----------
+    source : path, array or Source
+        What `open_matrix` takes.
+    out : path, optional
+        Folder to be made, a Zarr store; None keeps the factors in memory.
+    matrix : str, optional
+        Path of the array inside the file.
+    scratch : path, optional
+        Folder for the tall products (samples × a few hundred columns); beside `out` by default.
+    overwrite : bool
+        Replace an earlier result at `out`, once the new one is complete.
+    progress : callable, optional
+        Called with a `bigsvd.sweep.Progress` at least once per panel, from any thread.
+    **options
+        rank : int, default 50
+            Components, clipped to min(m, n).
+        variance : float
+            Instead of a rank: the share of the total variance to reach, with at most `max_rank` (500) components.
+        samples : {"rows", "columns"}
+            Stored axis that holds the samples; rows unless labels in the file say otherwise.
+        center : {"features", "none"}
+        scale : {"none", "unit"}
+            Unit variance with n − 1; constant features stay zero.
+        tolerance : float, default 1e-3
+            Width of the intervals relative to the values.
+        strict : bool
+            Components in a bulk of noise count as unmet.
+        max_sweeps : int, default 8
+        memory : int or str
+            Ceiling of the resident size, such as ``"2GiB"``; by default half of what the machine allows.
+        workers : int
+            Threads; they change the time, not the bits.
+        precision : {"auto", "single", "double"}
+        route : {"auto", "direct", "gram", "tsqr", "krylov"}
+        axis : {"auto", "rows", "columns"}
+            Axis the panels run along.
+        seed : int, default 0
+
+    Returns
+    -------
+    Factors
+        Opened from where they were written. ``certificate.tolerance_met`` says whether the tolerance was met.
+
+    Raises
+    ------
+    OptionError, SourceError, NonFiniteError, ResultError
+        See `bigsvd.errors`; nothing is left behind and an earlier result stays as it was.
+
+    Examples
+    --------
+    >>> import numpy as np, bigsvd
+    >>> rng = np.random.default_rng(1)
+    >>> pool = rng.normal(size=(400, 3)) @ rng.normal(size=(3, 60)) + 5.0
+    >>> factors = bigsvd.decompose(pool, rank=3)
+    >>> factors.certificate.tolerance_met
+    True
+    >>> np.allclose(factors.rebuild(), pool)
+    True
+    """
+    started = time.perf_counter()
+    opened = open_matrix(source, matrix)
+    own = opened is not source
+    target = None if out is None else Path(out)
+    control = Control(progress)
+    try:
+        with _environment() as held_before:
+            foreseen = _foresee(opened, options, control, probe=True)
+            plan = foreseen.plan
+            if target is not None:
+                check_output(target, overwrite=overwrite, source_path=_path_of(source))
+            check_complete(opened)
+            folder = _scratch_folder(scratch, target)
+            outcome = run(opened, plan, control, folder)
+            try:
+                checks = _check_slices(opened, outcome, folder, control)
+                return _write(target, outcome, checks, foreseen, control, overwrite, started, held_before)
+            finally:
+                outcome.scratch.close()
+    finally:
+        if own:
+            opened.close()
+
+
+def forecast(source: Any, *, matrix: str | None = None, progress: Listener | None = None, **options: Any) -> Forecast:
+    """Say what `decompose` would do with the same options, and what it would cost; reads no more than a probe.
+
+    Parameters
+    ----------
+    source, matrix, progress, **options
+        As for `decompose`.
+
+    Returns
+    -------
+    Forecast
+    """
+    opened = open_matrix(source, matrix)
+    try:
+        with _environment():
+            return _foresee(opened, options, Control(progress), probe=True)
+    finally:
+        if opened is not source:
+            opened.close()
+
+
+def verify(
+    store: str | Path | Factors,
+    source: Any = None,
+    *,
+    matrix: str | None = None,
+    memory: int | str | None = None,
+    workers: int | None = None,
+    seed: int | None = None,
+    progress: Listener | None = None,
+) -> Verification:
+    """Check a result against itself, and with `source` against the matrix in one independent sweep and fresh slices.
+
+    Parameters
+    ----------
+    store : path or Factors
+        A result of `decompose`.
+    source : path, array or Source, optional
+        The matrix it was made from.
+    matrix : str, optional
+        Path of the array inside the file.
+    memory, workers
+        As for `decompose`.
+    seed : int, optional
+        Of the fresh slices; another than the run's by default.
+    progress : callable, optional
+
+    Returns
+    -------
+    Verification
+    """
+    started = time.perf_counter()
+    factors = store if isinstance(store, Factors) else open_factors(store)
+    control = Control(progress)
+    if source is None:
+        return verify_factors(factors, None, None, control, Path(tempfile.gettempdir()), seed, started)
+    opened = open_matrix(source, matrix)
+    try:
+        with _environment():
+            request = _request({"memory": memory, "workers": workers} | factors.attributes["request"])
+            plan = make_plan(
+                opened.spec, replace(request, route="krylov", precision="double"), ceiling=_ceiling(request),
+                processors=machine.processors(), result_bytes=0,
+            )  # fmt: skip
+            return verify_factors(factors, opened, plan, control, _scratch_folder(None, None), seed, started)
+    finally:
+        if opened is not source:
+            opened.close()
+
+
+@contextmanager
+def _environment() -> Iterator[int]:
+    """One BLAS thread, a tuned allocator, a fresh record of the peak; yields the resident size before the run."""
+    machine.tune_allocator()
+    machine.reset_peak()
+    held = machine.resident_bytes()
+    with one_blas_thread():
+        yield held
+
+
+def _request(options: dict[str, Any]) -> Request:
+    """The user's options as a request."""
+    memory = options.get("memory")
+    return Request(**{**options, "memory": None if memory is None else parse_bytes(memory)})
+
+
+def _ceiling(request: Request) -> int:
+    """The memory ceiling, bytes."""
+    return request.memory if request.memory is not None else machine.default_ceiling()
+
+
+def _foresee(source: Source, options: dict[str, Any], control: Control, *, probe: bool) -> Forecast:
+    """Plan, and predict the time."""
+    request = _request(options)
+    plan = make_plan(
+        source.spec, request, ceiling=_ceiling(request), processors=machine.processors(),
+        result_bytes=_result_bytes(source.spec, request),
+    )  # fmt: skip
+    free = machine.available_bytes()
+    if free < plan.planned_bytes:
+        note = f"only {free >> 20} MiB of memory are free now, less than the {plan.planned_bytes >> 20} MiB planned: expect swapping"
+        plan = replace(plan, remarks=(*plan.remarks, note))
+    return make_forecast(source, plan, control, probe=probe)
+
+
+def _result_bytes(spec: MatrixSpec, request: Request) -> int:
+    """What writing the result holds in memory."""
+    wanted = request.rank or (request.max_rank if request.variance is not None else DEFAULT_RANK) or DEFAULT_MAX_RANK
+    rank = max(1, min(wanted, *spec.shape)) if min(spec.shape) > 0 else 1
+    wide = np.dtype(np.complex128 if spec.dtype.kind == "c" else np.float64)
+    return store_cost((max(1, spec.shape[0]), max(1, spec.shape[1])), rank, wide).memory_bytes
+
+
+def _path_of(source: Any) -> Path | None:
+    """The file behind what the user gave, for the check that the output does not harm it."""
+    return Path(source) if isinstance(source, (str, Path)) else None
+
+
+def _scratch_folder(scratch: str | Path | None, out: Path | None) -> Path:
+    """Where the tall products go."""
+    if scratch is not None:
+        return Path(scratch).expanduser()
+    return Path(tempfile.gettempdir()) if out is None else out.expanduser().resolve().parent
+
+
+def _check_slices(source: Source, outcome: Outcome, folder: Path, control: Control) -> tuple[SliceCheck, ...]:
+    """The exact check on slices of the user's own file."""
+    plan = outcome.plan
+    rectangles = draw_slices(plan.spec, plan.geometry.axis, plan.request.seed)
+    control.begin("slices", len(rectangles))
+    checks = []
+    for rectangle in rectangles:
+        checks.append(check_slice(source, rectangle, plan, outcome.precision, folder, control))
+        control.advance(1, read=0)
+    return tuple(checks)
+
+
+def _write(
+    out: Path | None,
+    outcome: Outcome,
+    checks: tuple[SliceCheck, ...],
+    foreseen: Forecast,
+    control: Control,
+    overwrite: bool,
+    started: float,
+    held_before: int,
+) -> Factors:
+    """Write the factors: tall vectors from scratch, the others from memory, then everything that is known of them."""
+    plan, certificate = outcome.plan, outcome.certificate
+    rank = certificate.rank
+    tall_side, basis_side = ("left", "right") if plan.geometry.lines_are_samples else ("right", "left")
+    tall = TallVectors(outcome.scratch, outcome.state, outcome.ritz, certificate.null, plan.request.seed)
+    basis = outcome.state.used @ outcome.ritz.rotation[:, :rank]
+    if tall_side == "right":
+        # The swept matrix is Aᵀ = U Σ Vᴴ, so A = conj(V) Σ Uᵀ: the right vectors of A are conj(U).
+        tall.fix_phase()
+        phase = tall.phase
+    else:
+        phase = column_phases(basis)
+        tall.phase = phase
+    basis = basis * phase
+    with FactorsWriter(out, shape=(plan.samples, plan.features), rank=rank, dtype=outcome.scratch.dtype, overwrite=overwrite) as writer:
+        control.begin("write", (plan.samples + plan.features) * rank * outcome.scratch.dtype.itemsize)
+        conjugate = tall_side == "right"
+        gram = np.zeros((rank, rank), outcome.scratch.dtype)
+        for start, block in tall.blocks():
+            gram += block.conj().T @ block
+            writer.write_vectors(tall_side, start, block.conj() if conjugate else block)
+            control.advance(block.nbytes, read=0)
+        writer.write_vectors(basis_side, 0, basis.conj() if conjugate else basis)
+        control.advance(basis.nbytes, read=0)
+        defects = {
+            tall_side: float(np.linalg.norm(gram - np.eye(rank))),
+            basis_side: float(np.linalg.norm(basis.conj().T @ basis - np.eye(rank))),
+        }
+        certificate = replace(certificate, left_defect=defects["left"], right_defect=defects["right"], slices=checks)
+        return writer.finish(
+            singular_values=certificate.value,
+            column_mean=outcome.mean,
+            column_scale=1.0 / outcome.inverse_scale,
+            spectrum=spectrum_record(outcome, certificate),
+            certificate=certificate,
+            attributes=run_record(outcome, foreseen, control, started, held_before),
+        )

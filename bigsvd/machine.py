@@ -1,0 +1,109 @@
+"""What this machine allows and what the process holds: memory limits, resident size, processors, the allocator."""
+
+from __future__ import annotations
+
+import os
+from pathlib import Path
+
+_STEP = 256 * 2**20
+_MALLOC_TRIM, _MALLOC_MMAP = -1, -3
+
+
+def default_ceiling() -> int:
+    """Half of the least of physical memory, control-group limit and address-space limit, rounded down to 256 MiB.
+
+    A fixed figure of the machine, not what happens to be free, so that the same command makes the same plan.
+    """
+    return max(_STEP, memory_limit() // 2 // _STEP * _STEP)
+
+
+def memory_limit() -> int:
+    """The most this process could ever hold, bytes."""
+    import psutil
+
+    limits = [int(psutil.virtual_memory().total), *_group_limits()]
+    try:
+        import resource
+
+        soft, _ = resource.getrlimit(resource.RLIMIT_AS)
+        if soft != resource.RLIM_INFINITY:
+            limits.append(soft)
+    except ImportError:
+        # Not a Unix: there is no such limit.
+        pass
+    return min(limits)
+
+
+def _group_limits() -> list[int]:
+    """Limits of the control groups this process is in, both versions, where they are visible."""
+    limits = []
+    for name in ("/sys/fs/cgroup/memory.max", "/sys/fs/cgroup/memory/memory.limit_in_bytes"):
+        try:
+            text = Path(name).read_text().strip()
+        except OSError:
+            continue
+        if text.isdigit():
+            limits.append(int(text))
+    return limits
+
+
+def available_bytes() -> int:
+    """Memory that is free or can be freed at once, bytes."""
+    import psutil
+
+    return int(psutil.virtual_memory().available)
+
+
+def processors() -> int:
+    """Processors this process may use."""
+    try:
+        return len(os.sched_getaffinity(0))
+    except AttributeError:
+        return os.cpu_count() or 1
+
+
+def resident_bytes() -> int:
+    """Resident size of the process now."""
+    import psutil
+
+    return int(psutil.Process().memory_info().rss)
+
+
+def reset_peak() -> None:
+    """Begin the record of the peak anew, where the system can (Linux)."""
+    try:
+        Path("/proc/self/clear_refs").write_text("5")
+    except OSError:
+        # Elsewhere, and in some containers, the record goes back to the start of the process: an upper bound.
+        pass
+
+
+def peak_resident_bytes() -> int:
+    """Largest resident size since `reset_peak`, by the operating system's own record."""
+    try:
+        for line in Path("/proc/self/status").read_text().splitlines():
+            if line.startswith("VmHWM:"):
+                return int(line.split()[1]) * 1024
+    except OSError:
+        pass
+    import resource
+    import sys
+
+    peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+    return int(peak) if sys.platform == "darwin" else int(peak) * 1024
+
+
+def tune_allocator() -> None:
+    """Make glibc hand large blocks back at once.
+
+    Its threshold otherwise grows to 32 MiB with use, and freed buffers stay in the heap, beyond any plan.
+    """
+    import ctypes
+
+    try:
+        library = ctypes.CDLL(None)
+        library.mallopt(_MALLOC_MMAP, 2**20)
+        library.mallopt(_MALLOC_TRIM, 8 * 2**20)
+    except (OSError, AttributeError, TypeError):
+        # Another C library: nothing to tune.
+        return

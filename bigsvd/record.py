@@ -1,0 +1,112 @@
+"""What a result says of the run that made it: spectrum and attributes."""
+
+from __future__ import annotations
+
+import importlib.metadata
+import platform
+import time
+from dataclasses import asdict
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from bigsvd import machine
+from bigsvd.certify import Certificate, spectrum_intervals
+from bigsvd.plan import BASE_BYTES
+from bigsvd.run import Outcome
+from bigsvd.sweep import Control
+
+if TYPE_CHECKING:
+    from bigsvd.forecast import Forecast
+
+_VERSIONS = ("bigsvd", "numpy", "scipy", "dask", "zarr", "h5py")
+
+
+def spectrum_record(outcome: Outcome, certificate: Certificate) -> dict[str, np.ndarray]:
+    """All computed values with their ends, variances and shares, each of shape (computed,).
+
+    The first k rows repeat the certificate; the others are Ritz values with ends by index.
+    """
+    theta = outcome.evidence.theta[: min(outcome.plan.samples, outcome.plan.features)]
+    count = len(theta)
+    lower, upper = spectrum_intervals(outcome.evidence)
+    value = theta.copy()
+    lower, upper = lower[:count].copy(), upper[:count].copy()
+    rank = certificate.rank
+    value[:rank], lower[:rank], upper[:rank] = certificate.value, certificate.lower, certificate.upper
+    freedom = max(1, outcome.plan.samples - 1)
+    energy = outcome.evidence.energy
+    share = value**2 / energy if energy > 0 else np.zeros(count)
+    return {
+        "value": value,
+        "lower": lower,
+        "upper": upper,
+        "variance": value**2 / freedom,
+        "variance_share": share,
+        "cumulative_share": np.minimum(np.cumsum(share), 1.0),
+    }
+
+
+def run_record(outcome: Outcome, foreseen: Forecast, control: Control, started: float, held_before: int) -> dict[str, Any]:
+    """Attributes of the result: source, preparation, plan, costs, versions."""
+    plan, spec, geometry = outcome.plan, outcome.plan.spec, outcome.plan.geometry
+    request = asdict(plan.request)
+    peak = machine.peak_resident_bytes()
+    # Called from a program that already held more than an empty interpreter, the ceiling bounds the growth.
+    counted = peak - max(0, held_before - BASE_BYTES)
+    return {
+        "source": {
+            "name": spec.name,
+            "shape": list(spec.shape),
+            "dtype": str(spec.dtype),
+            "encoding": spec.encoding,
+            "storage": spec.storage,
+            "decoded_bytes": spec.decoded_bytes,
+            "stored_bytes": spec.stored_bytes,
+            "fingerprint": spec.fingerprint,
+        },
+        "preparation": {
+            "words": plan.orientation_words(),
+            "samples": plan.request.samples,
+            "center": plan.request.center,
+            "scale": plan.request.scale,
+            "constant_features": outcome.constant,
+        },
+        "plan": {
+            "route": plan.route,
+            "axis": ("rows", "columns")[geometry.axis],
+            "panels": geometry.panels,
+            "panel_bytes": geometry.panel_bytes,
+            "width": outcome.state.width,
+            "restarts": outcome.state.restarts,
+            "leaves": plan.leaves,
+            "pilot_panels": len(plan.pilot_panels),
+            "resident": plan.resident,
+            "reasons": [list(pair) for pair in plan.reasons],
+            "memory": [[term.size, term.what] for term in plan.memory],
+        },
+        "request": {name: request[name] for name in ("samples", "center", "scale", "tolerance", "strict", "seed", "rank")},
+        "width": outcome.state.width,
+        "sweeps": outcome.sweeps,
+        "bytes_read": control.bytes_read,
+        "matrix_bytes": spec.decoded_bytes,
+        "seconds": time.perf_counter() - started,
+        "predicted_seconds": foreseen.seconds,
+        "peak_resident_bytes": counted,
+        "memory_bytes": plan.ceiling,
+        "planned_bytes": plan.planned_bytes,
+        "workers": plan.workers,
+        "precision": outcome.precision,
+        "seed": plan.request.seed,
+        "remarks": [*plan.remarks, *outcome.remarks],
+        "timings": control.timings(),
+        "versions": {name: _version(name) for name in _VERSIONS} | {"python": platform.python_version()},
+    }
+
+
+def _version(name: str) -> str:
+    """Version of an installed package."""
+    try:
+        return importlib.metadata.version(name)
+    except importlib.metadata.PackageNotFoundError:
+        return "unknown"

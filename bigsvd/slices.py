@@ -1,0 +1,232 @@
+"""The exact check on slices: small rectangles of the user's own file, through the run's own route, against LAPACK."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+import numpy as np
+
+from bigsvd.certify import SliceCheck
+from bigsvd.plan import Plan, make_plan
+from bigsvd.prepare import Preparation, line_statistics, prepare_unit
+from bigsvd.randomness import draw_without_repeat
+from bigsvd.run import Outcome, run
+from bigsvd.source import MatrixSpec, Source
+from bigsvd.sweep import Control
+
+STREAM_SLICES = 2
+MOST_SLICES = 3
+# All slices together read at most this share of the matrix.
+SLICE_SHARE = 0.01
+# Entries and flops that keep an exact decomposition within about a second.
+MOST_ENTRIES = 1_500_000
+MOST_FLOPS = 1.0e9
+LEAST_PANELS = 4
+SLICE_RANK = 10
+# LAPACK's own rounding, relative to the largest value.
+LAPACK_ROUNDING = 1e-12
+
+
+@dataclass(frozen=True)
+class Rectangle:
+    """A half-open rectangle of the stored matrix."""
+
+    rows: tuple[int, int]
+    columns: tuple[int, int]
+
+
+class SliceSource:
+    """A rectangle of another source, as a source of its own.
+
+    Parameters
+    ----------
+    parent : Source
+    rectangle : Rectangle
+    """
+
+    def __init__(self, parent: Source, rectangle: Rectangle) -> None:
+        self.parent, self.rectangle = parent, rectangle
+        rows, columns = rectangle.rows, rectangle.columns
+        shape = (rows[1] - rows[0], columns[1] - columns[0])
+        self._spec = replace(
+            parent.spec, name=f"{parent.spec.name}[{rows[0]}:{rows[1]}, {columns[0]}:{columns[1]}]", shape=shape,
+            chunks=(1, 1), stored_bytes=None, samples_hint=None, fingerprint="",
+        )  # fmt: skip
+
+    @property
+    def spec(self) -> MatrixSpec:
+        """What is known of the rectangle."""
+        return self._spec
+
+    def read(self, rows: tuple[int, int], columns: tuple[int, int], out: np.ndarray) -> None:
+        """Read part of the rectangle."""
+        top, left = self.rectangle.rows[0], self.rectangle.columns[0]
+        self.parent.read((top + rows[0], top + rows[1]), (left + columns[0], left + columns[1]), out)
+
+    def close(self) -> None:
+        """Nothing to release: the parent is not ours."""
+
+
+def draw_slices(spec: MatrixSpec, axis: int, seed: int) -> tuple[Rectangle, ...]:
+    """Draw rectangles of whole chunks by seed, clipped to what LAPACK does in about a second.
+
+    Parameters
+    ----------
+    spec : MatrixSpec
+    axis : int
+        Axis of the sweep; the slices are longer along it.
+    seed : int
+
+    Returns
+    -------
+    tuple of Rectangle
+        Empty where a single chunk is more than 1 % of the matrix.
+    """
+    allowed = SLICE_SHARE * spec.shape[0] * spec.shape[1]
+    unit = [min(spec.chunks[side], spec.shape[side]) for side in (0, 1)]
+    count = min(MOST_SLICES, int(allowed // (unit[0] * unit[1])))
+    if count == 0:
+        return ()
+    size = _grow(unit, spec.shape, min(allowed / count, MOST_ENTRIES), axis)
+    places = [
+        draw_without_repeat(seed, STREAM_SLICES + 64 * (side + 1), max(1, (spec.shape[side] - size[side]) // unit[side] + 1), count)
+        if (spec.shape[side] - size[side]) // unit[side] + 1 >= count
+        else [0] * count
+        for side in (0, 1)
+    ]
+    clipped = _clip(size, axis)
+    return tuple(
+        Rectangle((row * unit[0], row * unit[0] + clipped[0]), (column * unit[1], column * unit[1] + clipped[1]))
+        for row, column in zip(places[0], reversed(places[1]), strict=True)
+    )
+
+
+def _grow(unit: list[int], shape: tuple[int, int], entries: float, axis: int) -> list[int]:
+    """Enlarge a chunk by whole chunks towards the allowed number of entries, lines three times the width."""
+    size = list(unit)
+    while True:
+        longer = axis if size[axis] < 3 * size[1 - axis] else 1 - axis
+        for side in (longer, 1 - longer):
+            grown = list(size)
+            grown[side] = min(size[side] + max(unit[side], size[side] // unit[side] // 2 * unit[side]), shape[side])
+            if grown != size and grown[0] * grown[1] <= entries:
+                size = grown
+                break
+        else:
+            return size
+
+
+def _clip(size: list[int], axis: int) -> tuple[int, int]:
+    """Cut a slice down to an affordable exact decomposition."""
+    lines, across = size[axis], size[1 - axis]
+    while max(lines, across) * min(lines, across) ** 2 > MOST_FLOPS:
+        if lines > 2 * across:
+            lines = lines * 9 // 10
+        else:
+            across = across * 9 // 10
+    return (lines, across) if axis == 0 else (across, lines)
+
+
+def check_slice(
+    source: Source, rectangle: Rectangle, plan: Plan, precision: str, scratch_folder: Path, control: Control
+) -> SliceCheck:
+    """Decompose a slice by the run's own route, and exactly, and compare.
+
+    Parameters
+    ----------
+    source : Source
+        The whole matrix.
+    rectangle : Rectangle
+    plan : Plan
+        Of the whole run: its route, axis and preparation are used.
+    precision : str
+        ``single`` or ``double``, as the run settled it.
+    scratch_folder : Path
+    control : Control
+        Counts what is read.
+
+    Returns
+    -------
+    SliceCheck
+    """
+    part = SliceSource(source, rectangle)
+    shape = part.spec.shape
+    lines = shape[plan.geometry.axis]
+    rank = max(1, min(plan.rank, SLICE_RANK, min(shape) // 2))
+    request = replace(
+        plan.request, rank=rank, variance=None, axis=("rows", "columns")[plan.geometry.axis], route=plan.route, precision=precision,
+        panel_lines=max(1, lines // (2 * LEAST_PANELS)), width_limit=1, memory=None, max_sweeps=max(8, plan.request.max_sweeps),
+    )  # fmt: skip
+    small = make_plan(part.spec, request, ceiling=max(plan.ceiling, 2**30), processors=plan.workers)
+    small = replace(small, resident=True)
+    kept = np.empty(shape, part.spec.dtype)
+    part.read((0, shape[0]), (0, shape[1]), kept)
+    control.bytes_read += _decoded(source.spec, rectangle)
+    quiet = Control()
+    outcome = run(_Kept(part.spec, kept), small, quiet, scratch_folder)
+    try:
+        return _compare(outcome, _prepared(kept, plan), rectangle)
+    finally:
+        outcome.scratch.close()
+
+
+class _Kept:
+    """The slice as it was read through the run's own source."""
+
+    def __init__(self, spec: MatrixSpec, values: np.ndarray) -> None:
+        self.spec, self.values = spec, values
+
+    def read(self, rows: tuple[int, int], columns: tuple[int, int], out: np.ndarray) -> None:
+        out[...] = self.values[rows[0] : rows[1], columns[0] : columns[1]]
+
+    def close(self) -> None:
+        """Nothing is open."""
+
+
+def _decoded(spec: MatrixSpec, rectangle: Rectangle) -> int:
+    """Bytes decoded to read a rectangle: whole chunks."""
+    sides = []
+    for side, (start, stop) in enumerate((rectangle.rows, rectangle.columns)):
+        unit = min(spec.chunks[side], spec.shape[side])
+        sides.append(min(-(-stop // unit) * unit, spec.shape[side]) - start // unit * unit)
+    return sides[0] * sides[1] * spec.dtype.itemsize
+
+
+def _prepared(stored: np.ndarray, plan: Plan) -> np.ndarray:
+    """The slice, lines by across, prepared in double with its own statistics, features handled as whole lines."""
+    wide = np.result_type(stored.dtype, np.float64)
+    lines = stored if plan.geometry.axis == 0 else stored.T
+    by_feature = lines.T if plan.geometry.lines_are_samples else lines
+    statistics = line_statistics(by_feature, scale=plan.scaled)
+    out = np.empty(by_feature.shape, wide)
+    preparation = Preparation(across_features=False, center=plan.centred, scale=plan.scaled)
+    prepare_unit(by_feature, preparation, statistics, slice(0, by_feature.shape[1]), out)
+    return out.T if plan.geometry.lines_are_samples else out
+
+
+def _compare(outcome: Outcome, exact: np.ndarray, rectangle: Rectangle) -> SliceCheck:
+    """Differences in values and angles, and whether every bound held."""
+    from scipy.linalg import svd
+
+    _, value, right = svd(exact, full_matrices=False, lapack_driver="gesdd")
+    certificate = outcome.certificate
+    rank = certificate.rank
+    top = max(float(value[0]), np.finfo(float).tiny)
+    slack = LAPACK_ROUNDING * top
+    proved = certificate.index_proved
+    held = bool(
+        np.all((certificate.lower <= value[:rank] + slack)[proved]) and np.all((value[:rank] <= certificate.upper + slack)[proved])
+    )
+    for i in np.flatnonzero(~proved):
+        held &= bool(np.any((value >= certificate.lower[i] - slack) & (value <= certificate.upper[i] + slack)))
+    vectors = outcome.state.used @ outcome.ritz.rotation[:, :rank]
+    largest = 0.0
+    for first in np.unique(certificate.tied_first[np.isfinite(certificate.angle_bound)]):
+        group = slice(int(first), int(certificate.tied_last[first]) + 1)
+        outside = vectors[:, group] - right[group].conj().T @ (right[group] @ vectors[:, group])
+        angle = float(np.arcsin(min(1.0, np.linalg.norm(outside, 2))))
+        largest = max(largest, angle)
+        held &= bool(angle <= certificate.angle_bound[group].max() + 1e-7)
+    difference = float(np.max(np.abs(value[:rank] - certificate.value)) / top)
+    return SliceCheck(rectangle.rows, rectangle.columns, rank, difference, largest, held)
