@@ -21,6 +21,7 @@ from factor_samples import Sample, small_chunks
 from bigsvd.errors import DamagedResultError, OptionError, ResultError, ResultExistsError
 from bigsvd.factors import check_output, open_factors, place, writer
 from bigsvd.factors.files import FolderFiles
+from bigsvd.factors.lock import OutputLock
 from bigsvd.factors.place import Place
 
 HERE = Path(__file__).parent
@@ -432,6 +433,46 @@ def test_a_strangers_replaced_is_neither_used_nor_removed(tmp_path, old):
     shutil.rmtree(old)
     assert "is not a bigsvd result" in refused(tmp_path, old, ResultExistsError)
     assert (tmp_path / "out.zarr.replaced/thesis").read_text() == "mine"
+
+
+def test_two_results_of_which_the_newer_is_damaged_are_left_to_the_user(tmp_path, old):
+    shutil.copytree(old, tmp_path / "out.zarr.replaced")
+    (old / "left_vectors/c.0.0").unlink()
+    assert "Keep the one you trust as out.zarr" in refused(tmp_path, old, ResultExistsError, overwrite=True)
+    with pytest.raises(DamagedResultError):
+        open_factors(old)
+    assert (tmp_path / "out.zarr.replaced").is_dir()
+
+
+def test_a_result_opens_while_its_writer_removes_the_earlier_one(tmp_path, old):
+    shutil.copytree(old, tmp_path / "out.zarr.replaced")
+    lock = OutputLock(Place.at(old).lock, old)
+    lock.acquire()
+    assert seed_of(old) == 3
+    old.rename(tmp_path / "out.zarr.partial")
+    with pytest.raises(ResultError, match="another run is writing"):
+        open_factors(old)
+    lock.release()
+    assert seed_of(old) == 3
+    assert [path.name for path in tmp_path.iterdir()] == ["out.zarr"]
+
+
+def test_a_lock_file_removed_while_it_is_taken_is_made_again(out, monkeypatch):
+    """The holder before us removes its file after we opened it: a lock on that file would be a lock on nothing."""
+    lock, flock, calls = OutputLock(Place.at(out).lock, out), fcntl.flock, []
+
+    def late(handle, how):
+        calls.append(handle)
+        if len(calls) == 1:
+            lock.path.unlink()
+        flock(handle, how)
+
+    monkeypatch.setattr(fcntl, "flock", late)
+    lock.acquire()
+    assert len(calls) == 2
+    with pytest.raises(ResultError, match="another run is writing"):
+        OutputLock(lock.path, out).acquire()
+    lock.release()
 
 
 def test_home_and_dots_in_a_path_are_understood(tmp_path, monkeypatch):

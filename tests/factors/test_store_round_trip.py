@@ -55,6 +55,7 @@ def test_a_result_comes_back_as_it_was_written(tmp_path, dtype, in_memory):
 def test_any_block_size_gives_the_same_vectors_in_chunks_and_in_shards(tmp_path, monkeypatch, block, most_files, dtype):
     small_chunks(monkeypatch, 16, most_files)
     sample = Sample(rows=150, columns=20, dtype=dtype)
+    same(sample.write(None, block=block), sample)
     same(sample.write(tmp_path / "out.zarr", block=block), sample)
     same(open_factors(tmp_path / "out.zarr"), sample)
     files = sorted(path.name for path in (tmp_path / "out.zarr/left_vectors").glob("c.*"))
