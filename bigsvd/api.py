@@ -6,7 +6,7 @@ import tempfile
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -14,17 +14,24 @@ import numpy as np
 
 from bigsvd import machine
 from bigsvd.certify import SliceCheck
+from bigsvd.drive import (
+    Forecast,
+    Outcome,
+    Verification,
+    check_slice,
+    draw_slices,
+    make_forecast,
+    run,
+    run_record,
+    spectrum_record,
+    verify_factors,
+)
 from bigsvd.factors import Factors, FactorsWriter, check_output, open_factors, store_cost
-from bigsvd.forecast import Forecast, make_forecast
-from bigsvd.plan import DEFAULT_MAX_RANK, DEFAULT_RANK, Plan, Request, make_plan
-from bigsvd.record import run_record, spectrum_record
-from bigsvd.run import Outcome, run
-from bigsvd.slices import check_slice, draw_slices
+from bigsvd.plan import DEFAULT_MAX_RANK, DEFAULT_RANK, Request, make_plan
 from bigsvd.solve import TallVectors, column_phases
 from bigsvd.source import MatrixSpec, Source, check_complete, open_source
 from bigsvd.sweep import Control, Listener, one_blas_thread
 from bigsvd.units import parse_bytes
-from bigsvd.verify import Verification, verify_factors
 
 __all__ = ["decompose", "forecast", "open_factors", "open_matrix", "verify"]
 

@@ -4,9 +4,9 @@ from bigsvd.certify.certificate import STATES, Certificate, SliceCheck
 from bigsvd.certify.evidence import Evidence, WholeSpectrum
 from bigsvd.certify.missed import CHAIN_FAILURE, ChainState, chain_bound, energy_bound, least_projection
 from bigsvd.certify.rounding import (
-    gamma,
     SumDepth,
     fold_rounding,
+    gamma,
     gram_rounding,
     measured_rounding,
     product_rounding,

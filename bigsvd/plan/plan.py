@@ -220,7 +220,7 @@ def _candidates(
             widths = _widths(request, across, route, tight)
             for leaves in _LEAVES:
                 for resident in (True, False):
-                    if resident and not holdable or not resident and route == "direct":
+                    if (resident and not holdable) or (not resident and route == "direct"):
                         continue
                     if resident and spec.storage == "memory" and route != "direct":
                         continue

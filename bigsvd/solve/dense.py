@@ -62,7 +62,7 @@ def split(columns: np.ndarray, basis: np.ndarray) -> tuple[np.ndarray, np.ndarra
 
 
 def combine_columns(tall: np.ndarray, coefficients: np.ndarray) -> np.ndarray:
-    """tall · coefficients."""
+    """Tall · coefficients."""
     return tall @ coefficients  # type: ignore[no-any-return]
 
 

@@ -9,6 +9,9 @@ import numpy as np
 
 from bigsvd.source.rectangle import grid_shape
 
+# Beyond this the table would take more than 40 MB beside the panels, and the library keeps the places.
+MOST_CHUNKS = 2_000_000
+
 
 @dataclass(frozen=True, eq=False)
 class ChunkTable:
@@ -45,3 +48,17 @@ class ChunkTable:
 
         dataset.id.chunk_iter(note)
         return table
+
+
+def absent_chunks(dataset: Any) -> np.ndarray:
+    """Mark the chunks that were never written; shape (chunk rows, chunk columns), a byte a chunk."""
+    chunks = dataset.chunks
+    absent = np.ones(grid_shape(dataset.shape, chunks), np.bool_)
+
+    def note(chunk: Any) -> None:
+        row, column = (start // side for start, side in zip(chunk.chunk_offset, chunks, strict=True))
+        if row < absent.shape[0] and column < absent.shape[1]:
+            absent[row, column] = False
+
+    dataset.id.chunk_iter(note)
+    return absent

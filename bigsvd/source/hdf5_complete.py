@@ -8,8 +8,9 @@ from typing import Any
 
 from bigsvd.errors import DamagedSourceError, SourceError, UnsupportedMatrixError
 from bigsvd.source.complete import SHOWN, absent_error, refuse_absent
-from bigsvd.source.hdf5_chunks import ChunkTable
+from bigsvd.source.hdf5_chunks import absent_chunks
 from bigsvd.source.hdf5_file import open_hdf5
+from bigsvd.source.rectangle import grid_shape
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.units import show_count, show_shape
 
@@ -33,7 +34,9 @@ def require_complete(dataset: Any, spec: MatrixSpec, folder: str) -> None:
     elif dataset.external:
         _require_external(dataset, spec, folder)
     elif dataset.chunks is not None:
-        refuse_absent(ChunkTable.of(dataset).offset < 0, spec, MEANT)
+        grid = math.prod(grid_shape(dataset.shape, dataset.chunks))
+        if dataset.id.get_num_chunks() < grid:
+            refuse_absent(absent_chunks(dataset), spec, MEANT)
     elif dataset.id.get_storage_size() == 0:
         raise absent_error(spec, "its space in the file was set aside but never written", [], MEANT)
 

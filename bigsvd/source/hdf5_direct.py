@@ -8,6 +8,7 @@ by the calling thread. A test holds the result equal to h5py's, byte for byte.
 from __future__ import annotations
 
 import importlib
+import math
 import os
 import zlib
 from collections.abc import Callable
@@ -15,10 +16,10 @@ from typing import Any
 
 import numpy as np
 
-from bigsvd.source.hdf5_chunks import ChunkTable
+from bigsvd.source.hdf5_chunks import MOST_CHUNKS, ChunkTable
 from bigsvd.source.hdf5_dataset import filter_ids
 from bigsvd.source.positional import read_rows
-from bigsvd.source.rectangle import Span, overlap, touched
+from bigsvd.source.rectangle import Span, grid_shape, overlap, touched
 
 Fill = Callable[[Span, Span, np.ndarray], None]
 _DEFLATE, _SHUFFLE = 1, 2
@@ -50,6 +51,8 @@ def direct_reader(dataset: Any, descriptor: int) -> Fill | None:
         return lambda rows, columns, out: read_rows(descriptor, offset, width, stored, rows, columns, out)
     chain = tuple(code for code, _, _ in filter_ids(dataset))
     if any(code not in (_DEFLATE, _SHUFFLE) for code in chain) or len(set(chain)) < len(chain):
+        return None
+    if math.prod(grid_shape(dataset.shape, dataset.chunks)) > MOST_CHUNKS:
         return None
     reader = _ChunkReader(dataset, descriptor, chain)
     return reader.fill if reader.agrees_with(dataset) else None

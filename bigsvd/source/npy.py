@@ -111,7 +111,7 @@ def read_header(path: str) -> tuple[tuple[int, ...], np.dtype, bool, int]:
             version = np.lib.format.read_magic(file)
             read = np.lib.format.read_array_header_1_0 if version == (1, 0) else np.lib.format.read_array_header_2_0
             shape, column_order, stored = read(file)
-        except (ValueError, EOFError, SyntaxError, TypeError) as error:
+        except Exception as error:  # the header is parsed as Python source, and fails as that may fail
             raise DamagedSourceError(
                 f"{path} begins like an .npy file, but its header cannot be read",
                 evidence=[str(error)],

@@ -6,10 +6,12 @@ from typing import Any
 
 import numpy as np
 
+from bigsvd.errors import UnsupportedMatrixError
 from bigsvd.source.rectangle import grid_shape
 from bigsvd.source.zarr_metadata import ZarrMetadata
 from bigsvd.source.zarr_store import KeyStore
 
+MOST_CHUNKS = 100_000_000
 _ABSENT = 2**64 - 1
 
 
@@ -22,7 +24,14 @@ def absent_keys(keys: KeyStore, at: str, metadata: ZarrMetadata) -> np.ndarray:
         True where no value is stored, or an empty one.
     """
     rows, columns = metadata.shape
-    absent = np.ones(grid_shape((rows, columns), (metadata.chunks[0], metadata.chunks[1])), np.bool_)
+    grid = grid_shape((rows, columns), (metadata.chunks[0], metadata.chunks[1]))
+    if grid[0] * grid[1] > MOST_CHUNKS:
+        raise UnsupportedMatrixError(
+            f"{keys.path}/{at} has {grid[0] * grid[1]:,} chunks, and more than {MOST_CHUNKS:,} are not handled",
+            evidence=[f"{rows:,} × {columns:,} in {metadata.encoding}"],
+            remedy="Write the array again in chunks of about a megabyte, or in shards.",
+        )
+    absent = np.ones(grid, np.bool_)
     folder = "/".join(part for part in (at, metadata.prefix.rstrip("/") if "/" in metadata.prefix else "") if part)
     if metadata.separator == "/":
         for row, is_file in keys.children(folder):

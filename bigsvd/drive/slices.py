@@ -8,10 +8,10 @@ from pathlib import Path
 import numpy as np
 
 from bigsvd.certify import SliceCheck
+from bigsvd.drive.run import Outcome, run
 from bigsvd.plan import Plan, make_plan
 from bigsvd.prepare import Preparation, line_statistics, prepare_unit
 from bigsvd.randomness import draw_without_repeat
-from bigsvd.run import Outcome, run
 from bigsvd.source import MatrixSpec, Source
 from bigsvd.sweep import Control
 

@@ -9,10 +9,10 @@ from pathlib import Path
 import numpy as np
 
 from bigsvd.certify import SliceCheck
+from bigsvd.drive.slices import check_slice, draw_slices
 from bigsvd.factors import Factors
 from bigsvd.plan import Plan
 from bigsvd.prepare import Preparation
-from bigsvd.slices import check_slice, draw_slices
 from bigsvd.source import Source
 from bigsvd.sweep import Control, Engine, PanelReader, Scratch, SweepTask
 

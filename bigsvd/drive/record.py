@@ -12,12 +12,12 @@ import numpy as np
 
 from bigsvd import machine
 from bigsvd.certify import Certificate, spectrum_intervals
+from bigsvd.drive.run import Outcome
 from bigsvd.plan import BASE_BYTES
-from bigsvd.run import Outcome
 from bigsvd.sweep import Control
 
 if TYPE_CHECKING:
-    from bigsvd.forecast import Forecast
+    from bigsvd.drive.probe import Forecast
 
 _VERSIONS = ("bigsvd", "numpy", "scipy", "dask", "zarr", "h5py")
 
