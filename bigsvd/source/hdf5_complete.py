@@ -114,14 +114,28 @@ def _source_fault(dataset: Any, source: Any, folder: str) -> str:
         return error.problem
 
 
+def _extent_fault(shape: tuple[int, ...], source: Any) -> str:
+    """Whether what is there holds the part that the mapping takes; the library fills or hangs where it does not."""
+    import h5py
+
+    if source.src_space.get_select_type() == h5py.h5s.SEL_ALL:
+        # Taken whole: the mapping tells no extent of the source, only how many entries it makes.
+        taken = source.vspace.get_select_npoints()
+        whole = math.prod(shape)
+        return "" if whole == taken else f"it holds {show_count(whole)} entries, the mapping takes {show_count(taken)}"
+    end = tuple(last + 1 for last in source.src_space.get_select_bounds()[1])
+    if len(end) != len(shape) or any(side < need for side, need in zip(shape, end, strict=True)):
+        return f"its shape is {show_shape(shape)}, the mapping reaches to {show_shape(end)}"
+    return ""
+
+
 def _dataset_fault(file: Any, source: Any) -> str:
     found = file.get(source.dset_name)
     if found is None or not hasattr(found, "chunks"):
         return "no such dataset in it"
-    # The extent that the mapping was made for; the selected part must lie in what is there.
-    end = [last + 1 for last in source.src_space.get_select_bounds()[1]]
-    if len(end) != len(found.shape) or any(side < need for side, need in zip(found.shape, end, strict=True)):
-        return f"its shape is {show_shape(found.shape)}, the mapping reaches to {show_shape(tuple(end))}"
+    fault = _extent_fault(found.shape, source)
+    if fault:
+        return fault
     if found.chunks is not None:
         grid = math.prod(-(-side // chunk) for side, chunk in zip(found.shape, found.chunks, strict=True))
         if found.id.get_num_chunks() < grid:
