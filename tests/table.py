@@ -353,7 +353,7 @@ def stored_epsilon(factors: Any) -> float:
 
 def working_epsilon(factors: Any) -> float:
     """ε of the coarsest arithmetic in the run: of the products, or of the stored vectors."""
-    single = factors.attributes["plan"]["precision"] == "single"
+    single = factors.attributes["precision"] == "single"
     return max(stored_epsilon(factors), float(np.finfo(np.float32).eps) if single else EPS)
 
 

@@ -116,7 +116,7 @@ BAD_OPTIONS: dict[str, dict[str, Any]] = {
     "precision unknown": {"precision": "half"},
     "axis unknown": {"axis": "depth"},
     "seed negative": {"seed": -1},
-    "panels of no lines": {"panel_rows": 0},
+    "panels of no lines": {"panel_lines": 0},
 }
 
 
@@ -125,7 +125,7 @@ def test_a_bad_option_is_refused_and_named(case: str, folder: Path) -> None:
     options = BAD_OPTIONS[case]
     error = refused(OptionError, folder / "one.h5", folder, **options)
     assert isinstance(error, ValueError)
-    name = "panel" if "panel_rows" in options else next(iter(options)).replace("_", "-")
+    name = "panel" if "panel_lines" in options else next(iter(options)).replace("_", "-")
     assert name in str(error).replace("_", "-"), f"the option is not named: {error}"
 
 
@@ -219,7 +219,7 @@ def test_nan_is_named_by_row_and_column_of_the_file(route: str, axis: str, sampl
     matrix = sound()
     matrix[201, 41], matrix[225, 55], matrix[239, 59] = np.nan, np.nan, np.nan
     matrix[230, 50], matrix[231, 51] = np.inf, -np.inf
-    options = {"route": route, "axis": axis, "samples": samples, "rank": 4, "panel_rows": 12 if axis == "rows" else 4}
+    options = {"route": route, "axis": axis, "samples": samples, "rank": 4, "panel_lines": 12 if axis == "rows" else 4}
     text = str(refused(NonFiniteError, matrix, tmp_path, **options))
     assert re.search(r"row 201\b.{0,12}column 41\b", text), text
     assert re.search(r"\b3 NaN", text), text
@@ -231,7 +231,7 @@ def test_nan_is_named_by_row_and_column_of_the_file(route: str, axis: str, sampl
 def test_the_very_last_entry_is_looked_at(dtype: str, bad: float, tmp_path: Path) -> None:
     matrix = sound().astype(dtype)
     matrix[-1, -1] = bad * 1j if dtype == "c16" and np.isnan(bad) else bad
-    text = str(refused(NonFiniteError, matrix, tmp_path, rank=3, route="krylov", panel_rows=16, axis="rows"))
+    text = str(refused(NonFiniteError, matrix, tmp_path, rank=3, route="krylov", panel_lines=16, axis="rows"))
     assert re.search(r"row 239\b.{0,12}column 59\b", text), text
 
 

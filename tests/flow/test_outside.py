@@ -283,7 +283,7 @@ CLOSED_FORMS: dict[str, Callable[[], tuple[np.ndarray, Any]]] = {
 def test_closed_forms_are_met(name: str, route: str) -> None:
     matrix, values = CLOSED_FORMS[name]()
     exact = np.sort(np.asarray(values, float))[::-1]
-    factors = pca(matrix, center="none", route=route, axis="rows", panel_rows=2)
+    factors = pca(matrix, center="none", route=route, axis="rows", panel_lines=2)
     found, count = np.asarray(factors.singular_values[:]), len(exact)
     rounding = 8 * count * EPS * exact[0]
     allowed = np.full(count, rounding)
@@ -300,7 +300,7 @@ def test_closed_forms_are_met(name: str, route: str) -> None:
 def test_closed_forms_lie_in_the_intervals_of_a_few_components(name: str) -> None:
     matrix, values = CLOSED_FORMS[name]()
     exact = np.sort(np.asarray(values, float))[::-1]
-    factors = pca(matrix, center="none", route="krylov", rank=4, axis="rows", panel_rows=2)
+    factors = pca(matrix, center="none", route="krylov", rank=4, axis="rows", panel_lines=2)
     table.assert_intervals_hold(factors.certificate, exact, 8 * len(exact) * EPS * exact[0])
 
 
@@ -354,7 +354,7 @@ def test_full_solver_pca_of_scikit_learn_agrees(name: str, route: str) -> None:
     matrix = data_set(name)
     k = min(10, matrix.shape[1])
     reference = PCA(svd_solver="full").fit(matrix)
-    factors = pca(matrix, rank=k, route=route, axis="rows", panel_rows=-(-len(matrix) // 12), tolerance=1e-6)
+    factors = pca(matrix, rank=k, route=route, axis="rows", panel_lines=-(-len(matrix) // 12), tolerance=1e-6)
     found, total = variances(factors), reference.explained_variance_.sum()
     # the certified width where it is wider than rounding; breast_cancer spans 1e-12 in variance
     width = np.asarray(factors.certificate.upper) ** 2 - np.asarray(factors.certificate.lower) ** 2
