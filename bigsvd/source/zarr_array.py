@@ -9,7 +9,7 @@ from typing import Any
 
 import numpy as np
 
-from bigsvd.errors import DamagedSourceError, NoMatrixError, SourceError, UnsupportedMatrixError
+from bigsvd.errors import DamagedSourceError, NoMatrixError, UnsupportedMatrixError
 from bigsvd.source.complete import SHOWN, absent_error, count_absent, refuse_absent
 from bigsvd.source.entries import decoded_type, type_caution
 from bigsvd.source.hdf5_dataset import unapplied_attributes
@@ -140,6 +140,9 @@ class ZarrSource:
         """
         try:
             array = open_zarr(self.keys, self.inside, self.metadata.zarr_format)
+            # numcodecs looks its codecs up at the first use; an unknown one must show before the run.
+            for codec in getattr(array.metadata, "codecs", ()):
+                getattr(codec, "_codec", None)
         except Exception as error:  # codecs and data types come from other packages and raise what they like
             raise self._unknown(error) from error
         direct = None
@@ -177,12 +180,8 @@ class ZarrSource:
         for stamp in self.stamps:
             stamp.require_unchanged()
 
-    def _damage(self, reader: Reader, rows: Span, columns: Span, error: Exception) -> SourceError:
+    def _damage(self, reader: Reader, rows: Span, columns: Span, error: Exception) -> DamagedSourceError:
         """Find the first chunk of the rectangle that does not decode, and name it."""
-        from numcodecs.errors import UnknownCodecError  # type: ignore[import-untyped]
-
-        if isinstance(error, UnknownCodecError):
-            return self._unknown(error)
         evidence = [f"zarr says: {error}"]
         chunks = self._chunks
         for i, j in touched(rows, columns, chunks):
