@@ -1,0 +1,122 @@
+"""The arrays of a file: which are matrices, how they are stored, why the others will not do, and what to type next."""
+
+from __future__ import annotations
+
+import re
+import shlex
+from collections.abc import Sequence
+from pathlib import PurePath
+
+from bigsvd.report.layout import cells, table, wrap
+from bigsvd.report.plain import Json, plain
+from bigsvd.source import Candidate
+from bigsvd.units import show_bytes, show_count, show_shape
+
+# Lines to type are given for so many matrices; of more, for the likeliest.
+MOST_LINES_TO_TYPE = 5
+HEADER = ("matrix", "shape", "type", "decoded", "stored", "chunks and filters")
+
+
+def survey_lines(where: str, found: Sequence[Candidate], width: int) -> list[str]:
+    """List what a file holds.
+
+    Parameters
+    ----------
+    where : str
+        The file, as it was typed.
+    found : sequence of Candidate
+        Every array of the file, usable or not.
+    width : int
+        Cells of a line; where the table is wider, chunks and filters go below each matrix.
+
+    Returns
+    -------
+    list of str
+    """
+    usable = [candidate for candidate in found if candidate.usable]
+    others = [candidate for candidate in found if not candidate.usable]
+    arrays = "array" if len(found) == 1 else "arrays"
+    matrices = "matrix" if len(usable) == 1 else "matrices"
+    lines = [f"{where}: {show_count(len(found))} {arrays}, {show_count(len(usable))} {matrices} that can be decomposed"]
+    if usable:
+        lines += ["", *_matrix_table(usable, width)]
+        hints = [
+            f"{_name(one)}: samples are its {one.samples_hint} ({one.hint_reason})"
+            for one in usable
+            if one.samples_hint
+        ]
+        lines += [line for hint in hints for line in ["", *wrap(hint, width)]]
+        lines += ["", "To decompose, type:", *_to_type(where, usable)]
+    if others:
+        rows = [[_name(one), f"{show_shape(one.shape)} {one.dtype}".strip() or "–", one.reason] for one in others]
+        lines += ["", "Not usable:", *("  " + line for line in table(["array", "what", "why not"], rows, "lll"))]
+    return lines
+
+
+def survey_facts(where: str, found: Sequence[Candidate]) -> Json:
+    """All of it as one JSON object; its keys are documented in docs/json.md."""
+    usable = [candidate for candidate in found if candidate.usable]
+    matrices = [
+        plain(one) | {"command": command_line(where, one, named=len(usable) > 1) if one.usable else None}
+        for one in found
+    ]
+    return {"file": where, "matrices": matrices}
+
+
+def command_line(where: str, candidate: Candidate, *, named: bool) -> str:
+    """The line that decomposes one matrix of a file, quoted for a shell.
+
+    >>> command_line("night watch.h5", Candidate("/frames", samples_hint="columns"), named=True)
+    "bigsvd decompose 'night watch.h5' --out night_watch_frames_factors.zarr --matrix /frames --samples columns"
+    """
+    stem = PurePath(where).stem
+    if named:
+        stem += "_" + candidate.path.strip("/")
+    words = ["bigsvd", "decompose", where, "--out", re.sub(r"[^\w.-]+", "_", stem).strip("_") + "_factors.zarr"]
+    if named:
+        words += ["--matrix", candidate.path]
+    if candidate.samples_hint == "columns":
+        words += ["--samples", "columns"]
+    return shlex.join(words)
+
+
+def _name(candidate: Candidate) -> str:
+    """Path of an array inside its file."""
+    return candidate.path or "(the array)"
+
+
+def _matrix_table(usable: Sequence[Candidate], width: int) -> list[str]:
+    """One line a matrix, or two where the terminal is narrow."""
+    rows = [
+        [
+            _name(one),
+            show_shape(one.shape),
+            one.dtype,
+            _size(one.decoded_bytes),
+            _size(one.stored_bytes),
+            one.encoding or "–",
+        ]
+        for one in usable
+    ]
+    lines = table(HEADER, rows, "lrlrrl")
+    if max(map(cells, lines)) <= width:
+        return lines
+    head, *body = table(HEADER[:-1], [row[:-1] for row in rows], "lrlrr")
+    return [
+        head,
+        *(line for short, row in zip(body, rows, strict=True) for line in (short, *wrap(row[-1], width, first="    "))),
+    ]
+
+
+def _size(size: int | None) -> str:
+    """Bytes, or a question mark where the format does not tell."""
+    return "?" if size is None else show_bytes(size)
+
+
+def _to_type(where: str, usable: Sequence[Candidate]) -> list[str]:
+    """Lines to type, of many matrices the likeliest one's."""
+    named = len(usable) > 1
+    if len(usable) <= MOST_LINES_TO_TYPE:
+        return ["  " + command_line(where, one, named=named) for one in usable]
+    likely = max(usable, key=lambda one: (one.samples_hint is not None, min(one.shape) > 1, one.decoded_bytes or 0))
+    return ["  " + command_line(where, likely, named=named), "  or any other by its path after --matrix"]

@@ -1,0 +1,208 @@
+"""Progress on standard error: one live line on a terminal, a plain line now and then elsewhere, nothing when quiet."""
+
+from __future__ import annotations
+
+import threading
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from typing import TYPE_CHECKING, TextIO
+
+from bigsvd.units import show_bytes, show_seconds
+
+if TYPE_CHECKING:
+    from rich.text import Text
+
+    from bigsvd.sweep import Listener, Progress
+
+# Seconds between plain lines within a stage.
+PLAIN_EVERY = 10.0
+_TITLES = {
+    "probe": "probe",
+    "pilot": "pilot",
+    "slices": "exact check on slices",
+    "write": "writing",
+    "verify": "verifying",
+}
+# Stages whose amount is a number of things, not of bytes.
+_COUNTED = ("slices",)
+# Below this much of a stage, a rate says nothing yet.
+_LEAST_SECONDS = 0.5
+
+
+class Stage:
+    """What is known of the present stage, and how to say it.
+
+    Parameters
+    ----------
+    event : Progress
+        The first of the stage.
+    now : float
+        Seconds of a steady clock.
+    """
+
+    def __init__(self, event: Progress, now: float) -> None:
+        self.event, self.note, self.began = event, event.note, now
+
+    def take(self, event: Progress) -> None:
+        """Keep the latest event, of two threads' the one further on; notes stay until there is another."""
+        if event.bytes_done >= self.event.bytes_done:
+            self.event = event
+        self.note = event.note or self.note
+
+    def continues(self, event: Progress) -> bool:
+        """Whether an event belongs to this stage."""
+        return (event.stage, event.sweep) == (self.event.stage, self.event.sweep) and (
+            event.bytes_total == self.event.bytes_total
+        )
+
+    def words(self, now: float, resident: int) -> str:
+        """Stage, amount, rate, time left and resident size, on one line."""
+        event, seconds = self.event, now - self.began
+        done, total = event.bytes_done, event.bytes_total
+        if event.stage in _COUNTED:
+            return _join(self._title(), f"{done} of {total}", f"{show_bytes(resident)} resident")
+        parts = [
+            self._title(),
+            f"{show_bytes(done)} of {show_bytes(total)}" + (f" ({done / total:.0%})" if total else ""),
+        ]
+        if seconds >= _LEAST_SECONDS and done:
+            parts.append(f"{show_bytes(done / seconds)}/s")
+            if done < total:
+                parts.append(f"{show_seconds(seconds / done * (total - done))} left of this {_kind(event)}")
+        return _join(*parts, f"{show_bytes(resident)} resident")
+
+    def closing_words(self, now: float, resident: int) -> str:
+        """How the stage ended, on one line."""
+        event, seconds = self.event, now - self.began
+        amount = str(event.bytes_done) if event.stage in _COUNTED else show_bytes(event.bytes_done)
+        rate = f"{show_bytes(event.bytes_done / seconds)}/s" if seconds > 0 and event.stage not in _COUNTED else ""
+        return _join(self._title(), f"{amount} in {show_seconds(seconds)}", rate, f"{show_bytes(resident)} resident")
+
+    def _title(self) -> str:
+        """Name of the stage for people."""
+        event = self.event
+        title = f"sweep {event.sweep}" if event.sweep else _TITLES.get(event.stage, event.stage)
+        return f"{title}, {self.note}" if self.note else title
+
+
+class Reporter:
+    """A listener that keeps the latest event and prints little; called from any thread.
+
+    Parameters
+    ----------
+    write : callable
+        Takes one finished line.
+    every : float or None
+        Seconds between lines within a stage; None for lines at the ends of stages only.
+    clock : callable
+        Steady seconds.
+    """
+
+    def __init__(
+        self,
+        write: Callable[[str], None],
+        *,
+        every: float | None = PLAIN_EVERY,
+        clock: Callable[[], float] = time.monotonic,
+    ) -> None:
+        self._write, self._every, self._clock = write, every, clock
+        self._lock = threading.Lock()
+        self._stage: Stage | None = None
+        self._printed = clock()
+
+    def __call__(self, event: Progress) -> None:
+        """Take note of an event."""
+        with self._lock:
+            now = self._clock()
+            if self._stage is None or not self._stage.continues(event):
+                self._end(now)
+                self._stage, self._printed = Stage(event, now), now
+                return
+            self._stage.take(event)
+            if self._every is not None and now - self._printed >= self._every:
+                self._printed = now
+                self._write(self._stage.words(now, _resident()))
+
+    def line(self) -> str:
+        """The present state; empty before anything happened."""
+        with self._lock:
+            return "" if self._stage is None else self._stage.words(self._clock(), _resident())
+
+    def close(self) -> None:
+        """Say how the last stage ended."""
+        with self._lock:
+            self._end(self._clock())
+            self._stage = None
+
+    def _end(self, now: float) -> None:
+        """Print the closing line of a stage in which anything was done."""
+        if self._stage is not None and self._stage.event.bytes_done:
+            self._write(self._stage.closing_words(now, _resident()))
+
+
+@contextmanager
+def show_progress(stream: TextIO, *, quiet: bool = False) -> Iterator[Listener | None]:
+    """Report progress while the block runs.
+
+    Parameters
+    ----------
+    stream : file
+        Standard error. On a terminal the present state is one line that is drawn again four times a second; elsewhere
+        there is a plain line every ten seconds. Both keep one line for each finished stage.
+    quiet : bool
+        Nothing at all.
+
+    Yields
+    ------
+    Listener or None
+        What `bigsvd.decompose` takes as `progress`.
+    """
+    if quiet:
+        yield None
+    elif stream.isatty():
+        with _live(stream) as reporter:
+            yield reporter
+    else:
+        reporter = Reporter(lambda line: print(line, file=stream, flush=True))
+        try:
+            yield reporter
+        finally:
+            reporter.close()
+
+
+@contextmanager
+def _live(stream: TextIO) -> Iterator[Reporter]:
+    """Draw the present state in place, below the lines of finished stages."""
+    from rich.console import Console
+    from rich.live import Live
+    from rich.text import Text
+
+    console = Console(file=stream, highlight=False, markup=False, soft_wrap=True)
+    reporter = Reporter(lambda line: console.print(line), every=None)
+
+    def draw() -> Text:
+        return Text(reporter.line(), no_wrap=True, overflow="ellipsis")
+
+    with Live(get_renderable=draw, console=console, refresh_per_second=4, transient=True, redirect_stdout=False):
+        try:
+            yield reporter
+        finally:
+            reporter.close()
+
+
+def _join(*parts: str) -> str:
+    """Put a line together from what there is to say."""
+    return " · ".join(part for part in parts if part)
+
+
+def _kind(event: Progress) -> str:
+    """What the time left is the time of."""
+    return "sweep" if event.sweep else "stage"
+
+
+def _resident() -> int:
+    """Resident size of this process, bytes."""
+    import psutil
+
+    return int(psutil.Process().memory_info().rss)
