@@ -214,7 +214,7 @@ def verify(
         with _environment():
             request = _request({"memory": memory, "workers": workers} | factors.attributes["request"])
             plan = make_plan(
-                opened.spec, replace(request, route="krylov", precision="double"), ceiling=_ceiling(request),
+                opened.spec, replace(request, route="krylov", precision="double", axis=factors.attributes["plan"]["axis"]), ceiling=_ceiling(request),
                 processors=machine.processors(), result_bytes=0,
             )  # fmt: skip
             return verify_factors(factors, opened, plan, control, _scratch_folder(None, None), seed, started)

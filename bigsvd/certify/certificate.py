@@ -60,7 +60,8 @@ class Certificate:
         Singular values and the ends of their intervals. Distinct singular values of the matrix can be
         matched with the intervals, one each; where `index_proved`, interval i holds σ_i itself.
     residual : ndarray, shape (k,)
-        ‖Aᴴu_i − σ_i v_i‖, with its rounding term.
+        ‖Aᴴu_i − σ_i v_i‖, with its rounding term, where panels hold samples (AV = UΣ then holds to rounding);
+        ‖A v_i − σ_i u_i‖ where they hold features (AᴴU = VΣ then holds).
     state : ndarray of int8, shape (k,)
         Index into ``STATES``: resolved (width within the tolerance), open, or in the bulk.
     index_proved : ndarray of bool, shape (k,)

@@ -14,7 +14,12 @@ from bigsvd.cli.program import MET, NOT_MET, print_json
 @click.argument("file")
 @click.option("--out", required=True, metavar="OUT.zarr", help="Folder to be made for the result, a Zarr store.")
 @decomposition_options
-@click.option("--scratch", metavar="DIR", help="Where intermediate products go.  [default: beside OUT.zarr]")
+@click.option(
+    "--scratch",
+    type=click.Path(exists=True, file_okay=False, writable=True),
+    metavar="DIR",
+    help="Where intermediate products go.  [default: beside OUT.zarr]",
+)
 @click.option("--overwrite", is_flag=True, help="Replace an earlier result, once the new one is complete.")
 @output_options
 def decompose(file: str, out: str, overwrite: bool, quiet: bool, as_json: bool, **options: Any) -> int:

@@ -11,7 +11,7 @@ from bigsvd.cli.program import print_json
 
 
 @click.command(short_help="Write two invented matrices to try the program on.")
-@click.argument("folder", metavar="DIR")
+@click.argument("folder", metavar="DIR", type=click.Path(file_okay=False))
 @output_options
 def demo(folder: str, quiet: bool, as_json: bool) -> None:
     """Write two invented matrices with known structure into DIR, to try the program on.

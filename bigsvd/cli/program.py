@@ -21,7 +21,7 @@ MET, FAILED, REFUSED, NOT_MET = 0, 1, 2, 3
 INTERRUPTED, TERMINATED = 130, 143
 TRACEBACK = "BIGSVD_TRACEBACK"
 # Errors of the machine, which no other command line would mend.
-_MACHINE = (errno.ENOSPC, errno.EDQUOT, errno.EIO, errno.ENOMEM)
+_MACHINE = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EIO, errno.ENOMEM)
 
 
 class Terminated(KeyboardInterrupt):
@@ -59,7 +59,7 @@ class Program(click.Group):
         except KeyboardInterrupt as stop:
             terminated = isinstance(stop, Terminated)
             click.echo(
-                f"{'Terminated' if terminated else 'Interrupted'}: stopped between two panels, nothing was kept.",
+                f"{'Terminated' if terminated else 'Interrupted'}: stopped, and nothing half done was kept.",
                 err=True,
             )
             return TERMINATED if terminated else INTERRUPTED
@@ -113,12 +113,13 @@ def _unexpected(error: Exception) -> tuple[str, str]:
     """Problem and remedy of an error that nobody raised on purpose."""
     if isinstance(error, MemoryError):
         return "The machine has no memory left for this run.", "Free some, or lower --memory."
-    if isinstance(error, OSError) and error.errno in _MACHINE:
+    traced = f"Run it again with {TRACEBACK}=1 in the environment to see where it happened."
+    if isinstance(error, OSError) and error.strerror:
         place = f" ({error.filename})" if error.filename else ""
-        return f"{error.strerror}{place}.", "Make room, or choose --out and --scratch on another disk."
+        remedy = "Make room, or choose --out and --scratch on another disk." if error.errno in _MACHINE else traced
+        return f"The system refused what was asked of it: {error.strerror}{place}.", remedy
     text = " ".join(str(error).split()) or "no message"
-    traced = f"Please report it; run it again with {TRACEBACK}=1 in the environment to see where it happened."
-    return f"This is a fault of bigsvd: {type(error).__name__}: {text}.", traced
+    return f"This is a fault of bigsvd: {type(error).__name__}: {text}.", f"Please report it. {traced}"
 
 
 @contextmanager

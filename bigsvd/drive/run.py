@@ -270,6 +270,7 @@ class _Run:
         task = SweepTask(
             self.reader, self.preparation, self.work, kind, block,
             scratch=self.scratch if block is not None else None, target=target, ones=self.ones,
+            add_lines=self.across_features and (plan.centred or plan.scaled),
             learn=first and self.across_features and plan.scaled,
             line_features=not self.across_features and (plan.centred or plan.scaled), sampled=sampled,
         )  # fmt: skip

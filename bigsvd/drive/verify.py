@@ -164,9 +164,9 @@ def _outer_checks(factors: Factors, source: Source, plan: Plan, control: Control
     excess = residual - (certificate.residual * (1 + 1e-6) + slack)
     live = ~certificate.null
     return [
-        Check("AV − UΣ: largest column", float(np.sqrt(off.max(initial=0.0))), slack),
+        Check("AᴴU − VΣ: largest column" if conjugate else "AV − UΣ: largest column", float(np.sqrt(off.max(initial=0.0))), slack),
         Check(
-            "AᴴU − VΣ: excess over the certified residual",
+            f"{'AV − UΣ' if conjugate else 'AᴴU − VΣ'}: excess over the certified residual",
             float(max(0.0, excess[live].max(initial=0.0))),
             0.0,
         ),

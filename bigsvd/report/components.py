@@ -118,7 +118,7 @@ def _remarks(certificate: Certificate, listed: list[int]) -> list[str]:
             "Bulk: neighbours too close to tell apart; the interval holds, the vector is not to be read singly."
         )
     if np.any(certificate.state == STATES.index("open")):
-        remarks.append("Open: not yet known to the tolerance; more sweeps may resolve it.")
+        remarks.append("Open: not yet known to the tolerance; more sweeps (--max-sweeps) may resolve it.")
     if np.any(certificate.null):
         end = show_up(float(np.max(certificate.upper[certificate.null])))
         remarks.append(f"Zero: no larger than rounding ({end}); the vectors only complete the basis.")

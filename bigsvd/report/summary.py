@@ -93,15 +93,21 @@ def slice_words(slices: tuple[SliceCheck, ...]) -> str:
     angles = [check.angle for check in slices if np.isfinite(check.angle)]
     turned = f", vectors by at most {show_angle(max(angles))}" if angles else ""
     broken = [check for check in slices if not check.within_bounds]
+    largest = max(((rows[1] - rows[0], columns[1] - columns[0]) for rows, columns in _places(slices)), key=np.prod)
     text = (
-        f"{len(slices)} of the file, decomposed the same way and exactly by LAPACK: values differ by at most "
-        f"{show_up(values)} of the largest{turned}; "
+        f"{len(slices)} of the file, up to {show_shape(largest)}, decomposed the same way and exactly by LAPACK: "
+        f"values differ by at most {show_up(values)} of the largest{turned}; "
     )
     if not broken:
         return f"{text}every bound held"
     first = broken[0]
     where = f"rows {first.rows[0]:,}–{first.rows[1] - 1:,}, columns {first.columns[0]:,}–{first.columns[1] - 1:,}"
     return f"{text}BOUNDS BROKEN in {len(broken)} of them, first at {where}: do not rely on this result"
+
+
+def _places(slices: tuple[SliceCheck, ...]) -> list[tuple[tuple[int, int], tuple[int, int]]]:
+    """Rows and columns of the slices."""
+    return [(check.rows, check.columns) for check in slices]
 
 
 def cost_words(attributes: Mapping[str, Any]) -> list[tuple[str, str]]:
@@ -112,9 +118,12 @@ def cost_words(attributes: Mapping[str, Any]) -> list[tuple[str, str]]:
     predicted = attributes.get("predicted_seconds")
     guess = f" (predicted {show_seconds(predicted)})" if predicted is not None else ""
     plan = attributes["plan"]
+    sweep_words = f"{sweeps} {'sweep' if sweeps == 1 else 'sweeps'}"
+    if plan.get("resident") and sweeps > 1:
+        sweep_words += ", of which the first read the file and the others what it held"
     pairs = [
         ("route", f"{plan['route']} along {plan['axis']}, {attributes['precision']} precision"),
-        ("read", f"{show_bytes(read)}{times} in {sweeps} {'sweep' if sweeps == 1 else 'sweeps'}, all checks included"),
+        ("read", f"{show_bytes(read)}{times} in {sweep_words}, all checks included"),
         (
             "time",
             f"{show_seconds(attributes['seconds'])}{guess} with {workers} {'worker' if workers == 1 else 'workers'}",

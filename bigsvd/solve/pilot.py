@@ -88,7 +88,7 @@ def take_pilot(
     waves = [[(panel, panel + 1) for panel in panels[first : first + leaves]] for first in range(0, len(panels), leaves)]
     base = SweepTask(
         reader, preparation, wide, "basis",
-        ones=preparation.across_features, learn=preparation.across_features and preparation.scale,
+        add_lines=preparation.across_features and (preparation.center or preparation.scale), learn=preparation.across_features and preparation.scale,
         line_features=not preparation.across_features and (preparation.center or preparation.scale),
     )  # fmt: skip
     first = engine.sweep(base, waves)
@@ -98,7 +98,7 @@ def take_pilot(
         return Pilot(preparation, None, np.zeros(0), first.energy * raise_scale, None, False)
     fits = _fits_single(first, reader.geometry.across)
     work = single if may_be_single and fits else wide
-    task = replace(base, preparation=preparation, dtype=work, ones=False, learn=False)
+    task = replace(base, preparation=preparation, dtype=work, add_lines=False, learn=False)
     across = reader.geometry.across
     empty = np.zeros((across, 0), wide)
     basis = orthonormalise(gaussian_directions(across, directions, seed, wide), empty)

@@ -16,7 +16,7 @@ from bigsvd.source.hdf5_dataset import describe, missing_filters, unapplied_attr
 from bigsvd.source.hdf5_direct import Fill, direct_reader
 from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
 from bigsvd.source.positional import Descriptor
-from bigsvd.source.rectangle import Span, clip, require_rectangle, show_chunk, show_place, touched
+from bigsvd.source.rectangle import Span, clip, fill_by_bands, require_rectangle, show_chunk, show_place, touched
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
 from bigsvd.units import show_shape
@@ -138,15 +138,17 @@ def library_reader(dataset: Any) -> Fill:
 
     pair = dataset.dtype.names
 
+    chunk_rows = dataset.chunks[0] if dataset.chunks else 1
+
     def fill(rows: Span, columns: Span, out: np.ndarray) -> None:
+        if not out.flags.c_contiguous:
+            fill_by_bands(fill, rows, columns, out, chunk_rows)
+            return
         dtype = pair_view(out.dtype, pair) if pair else out.dtype
-        target = out if out.flags.c_contiguous else np.empty(out.shape, out.dtype)
         file_space = h5py.h5s.create_simple(dataset.shape)
         file_space.select_hyperslab((rows[0], columns[0]), out.shape)
         memory_space = h5py.h5s.create_simple(out.shape)
-        dataset.id.read(memory_space, file_space, target.view(dtype), h5py.h5t.py_create(dtype))
-        if target is not out:
-            out[...] = target
+        dataset.id.read(memory_space, file_space, out.view(dtype), h5py.h5t.py_create(dtype))
 
     return fill
 

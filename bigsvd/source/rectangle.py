@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 
 import numpy as np
 
@@ -10,6 +10,7 @@ from bigsvd.source.spec import MatrixSpec
 from bigsvd.units import show_count
 
 Span = tuple[int, int]
+_BAND_BYTES = 4 * 2**20
 
 
 def require_rectangle(spec: MatrixSpec, rows: Span, columns: Span, out: np.ndarray) -> None:
@@ -45,6 +46,19 @@ def clip(position: int, chunk: int, span: Span) -> Span:
 def grid_shape(shape: tuple[int, int], chunks: tuple[int, int]) -> tuple[int, int]:
     """Number of chunks along each axis."""
     return -(-shape[0] // chunks[0]), -(-shape[1] // chunks[1])
+
+
+def fill_by_bands(
+    fill: Callable[[Span, Span, np.ndarray], None], rows: Span, columns: Span, out: np.ndarray, chunk_rows: int
+) -> None:
+    """Fill a buffer that does not lie in one piece, through a temporary of whole chunks and about 4 MiB."""
+    row_bytes = max(1, out.shape[1] * out.itemsize)
+    band = chunk_rows * max(1, _BAND_BYTES // (chunk_rows * row_bytes))
+    for number in range(rows[0] // band, (rows[1] - 1) // band + 1):
+        start, stop = clip(number, band, rows)
+        part = np.empty((stop - start, out.shape[1]), out.dtype)
+        fill((start, stop), columns, part)
+        out[start - rows[0] : stop - rows[0]] = part
 
 
 def show_place(rows: Span, columns: Span) -> str:

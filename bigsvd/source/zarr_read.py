@@ -9,7 +9,7 @@ from typing import Any
 
 import numpy as np
 
-from bigsvd.source.rectangle import Span, overlap, touched
+from bigsvd.source.rectangle import Span, fill_by_bands, overlap, touched
 from bigsvd.source.zarr_store import DirectoryKeys, KeyStore, ZipKeys
 
 Reader = Callable[[Span, Span, np.ndarray], None]
@@ -51,16 +51,16 @@ def rust_reader(array: Any, keys: KeyStore, key_of: KeyOf, chunks: tuple[int, in
         return None
 
     def read(rows: Span, columns: Span, out: np.ndarray) -> None:
-        target = out if out.flags.c_contiguous else np.empty(out.shape, out.dtype)
+        if not out.flags.c_contiguous:
+            fill_by_bands(read, rows, columns, out, chunks[0])
+            return
         items = []
         for i, j in touched(rows, columns, chunks):
             inner_rows, outer_rows = overlap(i, chunks[0], rows)
             inner_columns, outer_columns = overlap(j, chunks[1], columns)
             places = [inner_rows, inner_columns], list(chunks), [outer_rows, outer_columns], list(out.shape)
             items.append(ChunkItem(key_of((i, j)), *places))
-        pipeline.retrieve_chunks_and_apply_index(items, target)
-        if target is not out:
-            out[...] = target
+        pipeline.retrieve_chunks_and_apply_index(items, out)
 
     return read
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import stat
 import zipfile
 from collections.abc import Iterator
 from pathlib import Path
@@ -63,8 +64,11 @@ class DirectoryKeys:
 
     def size(self, key: str) -> int | None:
         """Ask the file system; a directory in place of a file counts as absent."""
-        at = self._at(key)
-        return os.path.getsize(at) if os.path.isfile(at) else None
+        try:
+            found = os.stat(self._at(key))
+        except (FileNotFoundError, NotADirectoryError):
+            return None
+        return found.st_size if stat.S_ISREG(found.st_mode) else None
 
     def part(self, key: str, start: int, size: int) -> bytes:
         """Read a few bytes of a file."""

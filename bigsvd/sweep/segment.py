@@ -37,6 +37,8 @@ class SweepTask:
         Number of the scratch block that is written.
     ones : bool
         Whether a column of ones is folded first, so that dropping it centres the triangle exactly.
+    add_lines : bool
+        Whether the lines are summed, for the mean.
     learn : bool
         Whether squares and extremes per column are taken.
     line_features : bool
@@ -53,6 +55,7 @@ class SweepTask:
     scratch: Scratch | None = None
     target: int = 0
     ones: bool = False
+    add_lines: bool = False
     learn: bool = False
     line_features: bool = False
     sampled: frozenset[int] = frozenset()
@@ -101,7 +104,7 @@ class _Segment:
         self.sums = Partial(ledger=[])
         if task.line_features:
             self.sums.line_mean, self.sums.line_inverse_scale, self.sums.line_constant = [], [], []
-        elif task.ones:
+        elif task.add_lines:
             self.sums.line_sum = np.zeros(self.across, task.wide)
         if task.learn:
             self.sums.square_sum = np.zeros(self.across)
