@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import pickle
+import subprocess
+import sys
 import threading
+import zlib
 from pathlib import Path
 from typing import Any
 
@@ -16,6 +19,7 @@ from source_samples import TYPES, matrix, read_panels, read_whole, same
 from bigsvd.errors import DamagedSourceError, SourceChangedError
 from bigsvd.source import open_source
 from bigsvd.source.hdf5 import library_reader
+from bigsvd.source.hdf5_direct import inflater
 
 FILTERS: dict[str, dict[str, Any]] = {
     "none": {},
@@ -191,6 +195,37 @@ def test_a_source_travels_as_its_address(tmp_path: Path) -> None:
     again = pickle.loads(luggage)
     assert again.spec == source.spec
     assert same(read_whole(again), values)
+
+
+def test_a_forked_child_opens_the_file_for_itself(tmp_path: Path) -> None:
+    script = """
+import os, sys
+import numpy as np
+from bigsvd.source import open_source
+source = open_source(sys.argv[1])
+out = np.zeros((37, 23), "f4")
+source.read((0, 37), (0, 23), out)
+parent = source._opened()[0].id.id
+child = os.fork()
+if child == 0:
+    again = np.zeros((37, 23), "f4")
+    source.read((0, 37), (0, 23), again)
+    os._exit(0 if (again == out).all() and out.any() and source._opened()[0].id.id != parent else 1)
+assert os.waitstatus_to_exitcode(os.waitpid(child, 0)[1]) == 0
+source.read((0, 37), (0, 23), out)
+"""
+    path = write(tmp_path / "a.h5", matrix("f4"), chunks=(10, 7), **FILTERS["zstd"])
+    subprocess.run([sys.executable, "-c", script, path], check=True, timeout=60)
+
+
+def test_the_faster_inflate_gives_the_same_bytes(tmp_path: Path) -> None:
+    isal = pytest.importorskip("isal.isal_zlib", reason="isal is not installed")
+    assert inflater() is isal.decompress
+    raw = matrix("u2", (300, 200)).tobytes()
+    for level in (1, 6, 9):
+        assert inflater()(zlib.compress(raw, level), bufsize=len(raw)) == raw
+    with pytest.raises(isal.error):
+        inflater()(zlib.compress(raw)[:-50], bufsize=len(raw))
 
 
 def test_a_closed_source_opens_again(tmp_path: Path) -> None:

@@ -39,7 +39,7 @@ def test_real_files_open_or_are_refused_in_words(room: str) -> None:
         except BigsvdError as error:
             refusals.append((path, error))
             continue
-        for candidate in found:
+        for candidate in found[:60]:
             assert candidate.usable or candidate.reason, path
             try:
                 source = open_source(FOLDER / "files" / path, candidate.path or None)
