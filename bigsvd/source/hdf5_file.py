@@ -24,9 +24,18 @@ def open_hdf5(path: str) -> Any:
     import hdf5plugin  # noqa: F401  registers its filters
 
     try:
-        return h5py.File(path, "r", locking="best-effort", rdcc_nbytes=0)
+        file = h5py.File(path, "r", locking="best-effort", rdcc_nbytes=0)
     except OSError as error:
         raise _why_not_opened(path, error) from error
+    if file.mode != "r":
+        # The library joins all handles of one process; what the writing one still holds back is not in the file.
+        file.close()
+        raise SourceError(
+            f"{path} is open for writing in this very process",
+            evidence=["what was written and not yet flushed cannot be read from the file"],
+            remedy='Close it first, or open it with h5py.File(path, "r").',
+        )
+    return file
 
 
 @contextmanager

@@ -89,7 +89,11 @@ def _from_object(thing: Any) -> Source:
         from bigsvd.source.dask_array import DaskSource
 
         return DaskSource(thing)
-    if origin == "h5py" and hasattr(thing, "shape"):
+    if origin == "h5py" and type(thing).__name__ == "Dataset":
+        if not thing:
+            raise NoMatrixError(
+                "the h5py dataset belongs to a file that is closed", remedy="Give the path of the file."
+            )
         return _open_hdf5(os.path.abspath(thing.file.filename), thing.name)
     if origin == "zarr" and hasattr(thing, "chunks"):
         root = getattr(thing.store, "root", None) or getattr(thing.store, "path", None)

@@ -186,6 +186,16 @@ def test_open_datasets_are_taken_by_their_address(tmp_path: Path) -> None:
     assert same(read_whole(source), values)
 
 
+def test_a_dataset_of_a_file_open_for_writing_or_closed_is_refused(tmp_path: Path) -> None:
+    with h5py.File(tmp_path / "a.h5", "w") as file:
+        dataset = file.create_dataset("x", data=matrix("f4"))
+        for where in (dataset, tmp_path / "a.h5"):
+            with pytest.raises(SourceError, match="open for writing in this very process"):
+                open_source(where)
+    with pytest.raises(NoMatrixError, match="closed"):
+        open_source(dataset)
+
+
 def test_other_objects_are_refused_by_name() -> None:
     with pytest.raises(UnsupportedMatrixError, match=r"MemoryStore cannot be opened again.*\n.*array\[:\]"):
         open_source(zarr.create_array({}, data=matrix("f4")))
