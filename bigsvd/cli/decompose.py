@@ -51,12 +51,11 @@ def decompose(file: str, out: str, overwrite: bool, quiet: bool, as_json: bool, 
 
     chosen = given(options)
     probed = 0
+    if not quiet:
+        forecast = api.forecast(file, **{name: value for name, value in chosen.items() if name != "scratch"})
+        probed = forecast.probe_bytes
+        print_lines([*announcement(forecast, text_width()), ""], err=True)
     with show_progress(progress_stream(), quiet=quiet) as listener:
-        if not quiet:
-            matrix = {name: value for name, value in chosen.items() if name != "scratch"}
-            forecast = api.forecast(file, progress=listener, **matrix)
-            probed = forecast.probe_bytes
-            print_lines([*announcement(forecast, text_width()), ""], err=True)
         factors = api.decompose(file, out, overwrite=overwrite, progress=listener, **chosen)
     factors.attributes["bytes_read"] += probed
     if as_json:

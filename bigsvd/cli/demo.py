@@ -31,7 +31,7 @@ def demo(folder: str, quiet: bool, as_json: bool) -> None:
 
         def tell(name: str, done: int, total: int) -> None:
             if listener is not None:
-                listener(Progress("write", 0, done, total, name))
+                listener(Progress(f"writing {name}", 0, done, total))
 
         files = write_demo(Path(folder), progress=tell)
     if as_json:

@@ -37,8 +37,8 @@ def show_interval(value: float, lower: float, upper: float) -> tuple[str, str]:
     ('1.00000000', '± 0')
     """
     if not all(map(math.isfinite, (value, lower, upper))):
-        top = show_up(upper) if math.isfinite(upper) else "?"
-        return show_figures(value, 4), f"{show_down(lower) if math.isfinite(lower) else '?'}…{top}"
+        low, high = ("?" if math.isnan(lower) else show_down(lower)), ("?" if math.isnan(upper) else show_up(upper))
+        return show_figures(value, 4), f"{low}…{high}"
     if value == 0:
         return "0", f"≤ {show_up(upper)}"
     half = max(value - lower, upper - value)

@@ -59,31 +59,34 @@ class Stage:
     def words(self, now: float, resident: int) -> str:
         """Stage, amount, rate, time left and resident size, on one line."""
         event, seconds = self.event, now - self.began
-        done, total = event.bytes_done, event.bytes_total
+        done, total = self._done(), event.bytes_total
         if event.stage in _COUNTED:
-            return _join(self._title(), f"{done} of {total}", f"{show_bytes(resident)} resident")
-        parts = [
-            self._title(),
-            f"{show_bytes(done)} of {show_bytes(total)}" + (f" ({done / total:.0%})" if total else ""),
-        ]
+            return f"{self._title()}: {done} of {total}, {show_bytes(resident)} resident"
+        parts = [f"{show_bytes(done)} of {show_bytes(total)}" + (f" ({done / total:.0%})" if total else "")]
         if seconds >= _LEAST_SECONDS and done:
             parts.append(f"{show_bytes(done / seconds)}/s")
             if done < total:
-                parts.append(f"{show_seconds(seconds / done * (total - done))} left of this {_kind(event)}")
-        return _join(*parts, f"{show_bytes(resident)} resident")
+                parts.append(f"{show_seconds(seconds / done * (total - done))} left")
+        return f"{self._title()}: {', '.join(parts)}, {show_bytes(resident)} resident"
 
     def closing_words(self, now: float, resident: int) -> str:
         """How the stage ended, on one line."""
-        event, seconds = self.event, now - self.began
-        amount = str(event.bytes_done) if event.stage in _COUNTED else show_bytes(event.bytes_done)
-        rate = f"{show_bytes(event.bytes_done / seconds)}/s" if seconds > 0 and event.stage not in _COUNTED else ""
-        return _join(self._title(), f"{amount} in {show_seconds(seconds)}", rate, f"{show_bytes(resident)} resident")
+        seconds, done = now - self.began, self._done()
+        counted = self.event.stage in _COUNTED
+        parts = [f"{done if counted else show_bytes(done)} in {show_seconds(seconds)}"]
+        if seconds > 0 and not counted:
+            parts.append(f"{show_bytes(done / seconds)}/s")
+        parts += [f"{show_bytes(resident)} resident", *([self.note] if self.note else [])]
+        return f"{self._title()}: {', '.join(parts)}"
+
+    def _done(self) -> int:
+        """Amount done; a stage that goes over its bytes several times is done when it went over them once."""
+        return min(self.event.bytes_done, self.event.bytes_total or self.event.bytes_done)
 
     def _title(self) -> str:
         """Name of the stage for people."""
         event = self.event
-        title = f"sweep {event.sweep}" if event.sweep else _TITLES.get(event.stage, event.stage)
-        return f"{title}, {self.note}" if self.note else title
+        return f"sweep {event.sweep}" if event.sweep else _TITLES.get(event.stage, event.stage)
 
 
 class Reporter:
@@ -113,16 +116,19 @@ class Reporter:
 
     def __call__(self, event: Progress) -> None:
         """Take note of an event."""
+        line = ""
         with self._lock:
             now = self._clock()
             if self._stage is None or not self._stage.continues(event):
-                self._end(now)
+                line = self._end(now)
                 self._stage, self._printed = Stage(event, now), now
-                return
-            self._stage.take(event)
-            if self._every is not None and now - self._printed >= self._every:
-                self._printed = now
-                self._write(self._stage.words(now, _resident()))
+            else:
+                self._stage.take(event)
+                if self._every is not None and now - self._printed >= self._every:
+                    line, self._printed = self._stage.words(now, _resident()), now
+        # Written without the lock: whoever draws the live line holds the terminal and waits for `line`.
+        if line:
+            self._write(line)
 
     def line(self) -> str:
         """The present state; empty before anything happened."""
@@ -132,13 +138,13 @@ class Reporter:
     def close(self) -> None:
         """Say how the last stage ended."""
         with self._lock:
-            self._end(self._clock())
-            self._stage = None
+            line, self._stage = self._end(self._clock()), None
+        if line:
+            self._write(line)
 
-    def _end(self, now: float) -> None:
-        """Print the closing line of a stage in which anything was done."""
-        if self._stage is not None and self._stage.event.bytes_done:
-            self._write(self._stage.closing_words(now, _resident()))
+    def _end(self, now: float) -> str:
+        """The closing line of a stage in which anything was done."""
+        return self._stage.closing_words(now, _resident()) if self._stage and self._stage.event.bytes_done else ""
 
 
 @contextmanager
@@ -189,16 +195,6 @@ def _live(stream: TextIO) -> Iterator[Reporter]:
             yield reporter
         finally:
             reporter.close()
-
-
-def _join(*parts: str) -> str:
-    """Put a line together from what there is to say."""
-    return " · ".join(part for part in parts if part)
-
-
-def _kind(event: Progress) -> str:
-    """What the time left is the time of."""
-    return "sweep" if event.sweep else "stage"
 
 
 def _resident() -> int:
