@@ -98,7 +98,7 @@ BAD_OPTIONS: dict[str, dict[str, Any]] = {
     "variance above one": {"variance": 1.5},
     "variance in per cent": {"variance": 95},
     "variance not a number": {"variance": float("nan")},
-    "largest rank zero": {"variance": 0.9, "max_rank": 0},
+    "largest rank zero": {"max_rank": 0, "variance": 0.9},
     "tolerance zero": {"tolerance": 0.0},
     "tolerance negative": {"tolerance": -1e-3},
     "tolerance not a number": {"tolerance": float("nan")},
@@ -139,7 +139,7 @@ def test_a_ceiling_too_small_names_the_least_that_would_do(folder: Path) -> None
     error = refused(MemoryCeilingError, folder / "one.h5", folder, memory="20MiB", rank=5)
     assert "20 MiB" in str(error)
     assert len(error.evidence) >= 3, "the terms that need the memory are not listed"
-    named = re.search(r"memory[ =]\"?([0-9.]+ ?[KMG]iB)", error.remedy)
+    named = re.search(r"--memory to ([0-9.]+[KMG]iB)", error.remedy)
     assert named, f"no size to type in: {error.remedy}"
     least = parse_bytes(named[1])
     assert bigsvd.decompose(folder / "one.h5", rank=5, memory=least).certificate.rank == 5
@@ -222,8 +222,7 @@ def test_nan_is_named_by_row_and_column_of_the_file(route: str, axis: str, sampl
     options = {"route": route, "axis": axis, "samples": samples, "rank": 4, "panel_lines": 12 if axis == "rows" else 4}
     text = str(refused(NonFiniteError, matrix, tmp_path, **options))
     assert re.search(r"row 201\b.{0,12}column 41\b", text), text
-    assert re.search(r"\b3 NaN", text), text
-    assert re.search(r"\b2 infinit", text), text
+    assert re.search(r"\b5 values are NaN or infinite", text), text
 
 
 @pytest.mark.parametrize("bad", [np.nan, np.inf, -np.inf])
