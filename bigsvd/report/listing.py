@@ -12,8 +12,9 @@ from bigsvd.report.plain import Json, plain
 from bigsvd.source import Candidate
 from bigsvd.units import show_bytes, show_count, show_shape
 
-# Lines to type are given for so many matrices; of more, for the likeliest.
-MOST_LINES_TO_TYPE = 5
+# Lines to type are given for so many matrices; for more, one to fill in.
+MOST_LINES_TO_TYPE = 8
+MOST_UNUSABLE = 40
 HEADER = ("matrix", "shape", "type", "decoded", "stored", "chunks and filters")
 
 
@@ -37,7 +38,8 @@ def survey_lines(where: str, found: Sequence[Candidate], width: int) -> list[str
     others = [candidate for candidate in found if not candidate.usable]
     arrays = "array" if len(found) == 1 else "arrays"
     matrices = "matrix" if len(usable) == 1 else "matrices"
-    lines = [f"{where}: {show_count(len(found))} {arrays}, {show_count(len(usable))} {matrices} that can be decomposed"]
+    count = f"{show_count(len(found))} {arrays}, {show_count(len(usable))} {matrices} that can be decomposed"
+    lines = wrap(f"{where}: {count}", width)
     if usable:
         lines += ["", *_matrix_table(usable, width)]
         hints = [
@@ -48,8 +50,10 @@ def survey_lines(where: str, found: Sequence[Candidate], width: int) -> list[str
         lines += [line for hint in hints for line in ["", *wrap(hint, width)]]
         lines += ["", "To decompose, type:", *_to_type(where, usable)]
     if others:
-        rows = [[_name(one), f"{show_shape(one.shape)} {one.dtype}".strip() or "–", one.reason] for one in others]
+        rows = [[_name(one), _what(one), one.reason] for one in others[:MOST_UNUSABLE]]
         lines += ["", "Not usable:", *("  " + line for line in table(["array", "what", "why not"], rows, "lll"))]
+        if len(others) > MOST_UNUSABLE:
+            lines.append(f"  … and {show_count(len(others) - MOST_UNUSABLE)} more, which --json lists")
     return lines
 
 
@@ -118,5 +122,11 @@ def _to_type(where: str, usable: Sequence[Candidate]) -> list[str]:
     named = len(usable) > 1
     if len(usable) <= MOST_LINES_TO_TYPE:
         return ["  " + command_line(where, one, named=named) for one in usable]
-    likely = max(usable, key=lambda one: (one.samples_hint is not None, min(one.shape) > 1, one.decoded_bytes or 0))
-    return ["  " + command_line(where, likely, named=named), "  or any other by its path after --matrix"]
+    line = command_line(where, Candidate("PATH"), named=True)
+    return ["  " + line, "  where PATH is one of those above"]
+
+
+def _what(candidate: Candidate) -> str:
+    """Shape and type of an array, the type left out where the reason names it."""
+    kind = "" if candidate.reason.endswith(candidate.dtype) else candidate.dtype
+    return f"{show_shape(candidate.shape)} {kind}".strip() or "–"
