@@ -153,7 +153,7 @@ def constant_features() -> Entry:
 
 def noisy() -> Entry:
     """Ten components over Gaussian noise: the tail is a bulk in which neighbours cannot be told apart."""
-    noise = np.random.default_rng(27).standard_normal((1200, 240)) / np.sqrt(1200)
+    noise = np.random.default_rng(27).standard_normal((900, 200)) / np.sqrt(900)
     return Entry(planted(np.linspace(9, 3, 10), noise.shape, 28) + noise, 20)
 
 

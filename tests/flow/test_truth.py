@@ -331,7 +331,7 @@ def test_the_same_call_twice_gives_the_same_bits(route: str) -> None:
 @pytest.mark.parametrize("axis", ["rows", "columns"])
 @pytest.mark.parametrize("route", ["gram", "tsqr", "krylov"])
 def test_one_two_and_four_workers_give_the_same_bits(route: str, axis: str) -> None:
-    made = table.entry("noisy")  # 1,200 long: 24 panels
+    made = table.entry("noisy")  # 900 long: 18 panels
     options = {"axis": axis, "samples": axis, "route": route, "rank": 12, "panel_lines": 50}
     one, two, four = (bits(run(made.matrix, CENTRED, workers=workers, **options)) for workers in (1, 2, 4))
     assert one == two == four
