@@ -66,12 +66,12 @@ def component_lines(certificate: Certificate, width: int) -> list[str]:
 
 def ties(certificate: Certificate) -> list[tuple[int, int, float]]:
     """Groups of components whose angle bound is for their joint subspace: first, last (from 0), radians."""
-    found = []
-    for first in range(certificate.rank):
-        last = int(certificate.tied_last[first])
-        if certificate.tied_first[first] == first and last > first and np.isfinite(certificate.angle_bound[first]):
-            found.append((first, last, float(np.max(certificate.angle_bound[first : last + 1]))))
-    return found
+    found: dict[tuple[int, int], float] = {}
+    for i in np.flatnonzero(np.isfinite(certificate.angle_bound)):
+        group = int(certificate.tied_first[i]), int(certificate.tied_last[i])
+        if group[0] < group[1]:
+            found[group] = max(found.get(group, 0.0), float(certificate.angle_bound[i]))
+    return [(*group, bound) for group, bound in sorted(found.items())]
 
 
 def _state(certificate: Certificate, i: int) -> str:

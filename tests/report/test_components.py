@@ -77,6 +77,14 @@ def test_a_tie_names_its_members_and_the_bound_of_their_space() -> None:
     assert "2–4 within 0.58°" in "\n".join(lines)
 
 
+def test_a_member_with_a_bound_of_its_own_does_not_hide_the_tie() -> None:
+    tied = certificate(3, tied_first=np.array([0, 0, 2]), tied_last=np.array([0, 1, 2]))
+    lines = component_lines(tied, 100)
+    assert row(lines, 1).endswith("≤ 0.058°")
+    assert row(lines, 2).endswith("tied with 1–2")
+    assert "1–2 within 0.058°" in "\n".join(lines)
+
+
 def test_noise_is_marked() -> None:
     lines = component_lines(certificate(2, below_noise=np.array([False, True])), 100)
     assert "resolved*" in row(lines, 2)
