@@ -56,9 +56,10 @@ def certify(evidence: Evidence, rank: int, reach: int, tolerance: float, *, stri
     angles.bound[null] = np.nan
     norms = evidence.residual_norms[:rank]
     residual = np.where(null, norms / max(scale, np.finfo(float).tiny), norms / np.maximum(value, np.finfo(float).tiny))
-    noise = max(evidence.value_rounding, float(np.sqrt(np.max(evidence.product_rounding, initial=0.0))))
-    if evidence.whole is not None and np.isfinite(evidence.whole.vector_error):
-        noise = evidence.whole.vector_error
+    # Worst-case terms bound; what a value drowns in is the rounding of an orthogonal factorisation, ε·‖A‖_F and a little.
+    noise = 8 * np.finfo(float).eps * np.sqrt(len(theta) * evidence.energy)
+    if evidence.rounding_how == "measured":
+        noise = evidence.value_rounding
     captured = float(np.sum(value**2))
     share = min(1.0, captured / evidence.energy) if evidence.energy > 0 else 1.0
     met = not np.any(state == OPEN) and not (strict and np.any(state == BULK))
@@ -100,14 +101,15 @@ def spectrum_intervals(evidence: Evidence) -> tuple[np.ndarray, np.ndarray]:
 
 
 def rounding_limited(evidence: Evidence, certificate: Certificate) -> bool:
-    """Whether every open component is wide by rounding alone, so that more sweeps in this precision would not help."""
+    """Whether every open component is wide by little else than rounding, so that more sweeps in this precision would not help."""
     waiting = certificate.state == OPEN
     if certificate.strict:
         waiting |= certificate.state == BULK
     rank = certificate.rank
     theta = np.maximum(evidence.theta[:rank], np.finfo(float).tiny)
     floor = 2 * (evidence.product_rounding[:rank] / theta / np.sqrt(2) + evidence.value_rounding) / theta
-    return bool(np.any(waiting) and np.all(floor[waiting] > certificate.tolerance))
+    width = (certificate.upper - certificate.lower) / theta
+    return bool(np.any(waiting) and np.all((floor > certificate.tolerance)[waiting]) and np.all((width <= 2 * floor)[waiting]))
 
 
 def _words(

@@ -36,6 +36,7 @@ from bigsvd.solve import (
     carry_chains,
     correct_gram,
     correct_products,
+    first_statistics,
     from_gram,
     from_triangle,
     gaussian_directions,
@@ -193,11 +194,12 @@ class _Run:
 
     def _first_block(self) -> np.ndarray:
         """The columns that the first basis sweep multiplies, by route."""
+        start = None
         if self.plan.pilot_panels:
-            start = self._take_pilot()
-        else:
-            # No sample: shift zero and double precision, centred exactly by the column of ones.
-            start = None
+            if self.plan.mean_only:
+                self._take_mean()
+            else:
+                start = self._take_pilot()
         if self.plan.route == "krylov":
             widths = self._widths()
             if start is None:
@@ -218,6 +220,15 @@ class _Run:
         grow = min(widths.grow, max(1, room - keep - 2 * widths.test))
         return Widths(min(widths.start, planned.start), widths.test, grow, keep, room)
 
+    def _take_mean(self) -> None:
+        """Hold one panel for the first sweep, and take a first mean and scale from it."""
+        panel = self.plan.pilot_panels[0]
+        self.control.begin("pilot", self.reader.decoded(panel))
+        self.reader.hold(panel)
+        held = self.reader.peek(panel)
+        if self.across_features:
+            self.preparation = first_statistics(held if self.plan.geometry.axis == 0 else held.T, self.preparation, self.wide)
+
     def _take_pilot(self) -> np.ndarray | None:
         """Read the sample; learn a first mean, the precision, and directions."""
         plan = self.plan
@@ -233,6 +244,8 @@ class _Run:
         self.preparation = pilot.preparation
         if pilot.directions is None:
             return None
+        if allowed and not pilot.single_fits:
+            self.remarks.append("double precision: squares of the entries would overflow or vanish in single")
         if allowed and pilot.single_fits:
             fits = plan.request.precision == "single" or self._single_is_enough(pilot.theta, pilot.energy, pilot.rounding)
             self.work = self.single if fits else self.wide
@@ -308,8 +321,7 @@ class _Run:
             if first or learnt.column_scale is not None:
                 self.learnt = learnt
             if self.plan.centred or self.plan.scaled:
-                shift = learnt.mean.astype(self.work).astype(self.wide) if self.plan.centred else None
-                self.preparation = replace(self.preparation, shift=shift, inverse_scale=learnt.inverse_scale)
+                self.preparation = self.preparation.learnt(learnt.mean, learnt.inverse_scale, self.work)
         else:
             self.energy = sums.energy
             if first and sums.line_mean is not None and sums.line_inverse_scale is not None and sums.line_constant is not None:
@@ -398,7 +410,8 @@ class _Run:
                 error /= float(learnt.column_scale.min()) ** 2
             value, vectors = from_gram(gram)
             error += gamma(10.0 * plan.geometry.across) * float(value[0]) ** 2
-            errors = np.minimum(error / np.maximum(value, np.finfo(float).tiny), np.sqrt(error))
+            # |a² − b²| ≤ e gives |a − b| ≤ min(e/a, √e).
+            errors = error / np.maximum(value, np.sqrt(error)) if error > 0 else np.zeros(len(value))
             self.whole = WholeSpectrum(value, errors, float("inf"))
             rank = min(plan.rank, plan.geometry.lines, len(value))
             if value[rank - 1] < GRAM_RATIO * value[0] and plan.request.route == "auto":

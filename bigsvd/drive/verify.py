@@ -134,7 +134,7 @@ def _outer_checks(factors: Factors, source: Source, plan: Plan, control: Control
         block = block.conj()
     preparation = Preparation(geometry.lines_are_samples, plan.centred, plan.scaled)
     if geometry.lines_are_samples:
-        preparation = preparation.learnt(factors.column_mean.astype(wide), 1.0 / factors.column_scale)
+        preparation = preparation.learnt(factors.column_mean.astype(wide), 1.0 / factors.column_scale, wide)
     scratch = Scratch(folder, geometry.lines, wide)
     engine = Engine(plan.workers)
     try:

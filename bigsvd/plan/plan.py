@@ -111,6 +111,11 @@ class Plan:
         return factor * self.nominal_sweeps * (folding + 6 * n * width * self.widths.block / PRODUCT_RATE["double"])
 
     @property
+    def mean_only(self) -> bool:
+        """Whether the pilot gives a first mean only, and its panel is held for the first sweep."""
+        return _mean_only(self.route, self.geometry)
+
+    @property
     def rank(self) -> int:
         """Components wanted; for ``--variance`` the most there may be."""
         assert self.request.rank is not None
@@ -247,14 +252,18 @@ def _widths(request: Request, across: int, route: str, tight: bool) -> Widths:
 
 def _pilot(spec: MatrixSpec, geometry: Geometry, request: Request, route: str, ceiling: int) -> tuple[int, ...]:
     """Panels of the pilot, drawn by seed and spread over the file."""
-    if route == "direct" or geometry.panels < FEWEST_PILOT_PANELS:
-        return ()
-    if route != "krylov":
-        # A first mean is enough: it keeps large offsets out of the sums.
-        return tuple(draw_without_repeat(request.seed, STREAM_PILOT, geometry.panels, 1)) if request.center != "none" else ()
+    if _mean_only(route, geometry):
+        # One panel gives a first mean, which keeps large offsets out of the sums; it is held, not read twice.
+        wanted = request.center != "none" or request.scale != "none"
+        return tuple(draw_without_repeat(request.seed, STREAM_PILOT, geometry.panels, 1)) if wanted else ()
     most = min(PILOT_SHARE * spec.decoded_bytes, ceiling / 8)
     count = max(1, int(most // max(1, geometry.panel_bytes)))
     return tuple(draw_without_repeat(request.seed, STREAM_PILOT, geometry.panels, min(count, geometry.panels)))
+
+
+def _mean_only(route: str, geometry: Geometry) -> bool:
+    """Whether a sample would serve for nothing but a first mean."""
+    return route != "krylov" or geometry.panels < FEWEST_PILOT_PANELS
 
 
 def _terms(plan: Plan, workers: int) -> tuple[MemoryTerm, ...]:
@@ -278,9 +287,9 @@ def _nominal(plan: Plan, tight: bool) -> tuple[float, int]:
     # Fewer segments leave a core idle at the end of each wave.
     idle = 1 + 0.05 / plan.leaves
     if plan.route == "krylov":
-        sweeps = NOMINAL_SWEEPS + (1 if tight else 0) + (0 if plan.pilot_panels else 1)
+        sweeps = NOMINAL_SWEEPS + (1 if tight else 0) + (1 if plan.mean_only else 0)
         columns = widths.start + widths.test + (sweeps - 1) * (widths.grow + 2 * widths.test)
-        pilot = len(plan.pilot_panels) / max(1, plan.geometry.panels)
+        pilot = 0.0 if plan.mean_only else len(plan.pilot_panels) / max(1, plan.geometry.panels)
         work = 4.0 * m * n * columns / product * (1 + 2 * pilot)
         work += factor * sweeps * m * widths.limit**2 / QR_RATE
         seconds = (read * (1 + pilot) + (sweeps - 1) * again + work) / plan.workers * idle
@@ -378,7 +387,7 @@ def _reasons(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str
 
 def _pilot_words(plan: Plan) -> str:
     """What the pilot reads, or why there is none."""
-    if not plan.pilot_panels:
+    if plan.mean_only:
         return f"none: fewer than {FEWEST_PILOT_PANELS} panels would make a poor sample; Gaussian start, one more sweep"
     share = len(plan.pilot_panels) / plan.geometry.panels
     return f"{show_count(len(plan.pilot_panels))} panels drawn by seed over the whole file, {100 * share:.1f} % of it"

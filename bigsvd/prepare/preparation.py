@@ -23,6 +23,8 @@ class Preparation:
         Subtracted from every line, in units of the file; None for zero.
     inverse_scale : ndarray, shape (across,), or None
         Multiplied into every line after the shift; None for one.
+    about : ndarray, shape (across,), or None
+        Features that are scaled but not centred: a first mean, in prepared units, about which squares are taken.
     """
 
     across_features: bool
@@ -30,10 +32,22 @@ class Preparation:
     scale: bool
     shift: np.ndarray | None = None
     inverse_scale: np.ndarray | None = None
+    about: np.ndarray | None = None
 
-    def learnt(self, shift: np.ndarray, inverse_scale: np.ndarray | None) -> Preparation:
-        """Return the same preparation with better statistics."""
-        return replace(self, shift=shift, inverse_scale=inverse_scale)
+    def learnt(self, mean: np.ndarray, inverse_scale: np.ndarray | None, work: np.dtype) -> Preparation:
+        """Return the same preparation with better statistics, the shift representable in the working precision.
+
+        Parameters
+        ----------
+        mean : ndarray, shape (across,)
+            In units of the file.
+        inverse_scale : ndarray, shape (across,), or None
+        work : numpy.dtype
+        """
+        if self.center:
+            return replace(self, shift=mean.astype(work).astype(mean.dtype), inverse_scale=inverse_scale)
+        about = mean * inverse_scale if inverse_scale is not None else mean
+        return replace(self, inverse_scale=inverse_scale, about=about if self.scale else None)
 
 
 @dataclass(frozen=True, eq=False)

@@ -9,6 +9,7 @@ import numpy as np
 from bigsvd.prepare import Preparation
 from bigsvd.solve.dense import orthonormalise
 from bigsvd.solve.grow import gaussian_directions
+from bigsvd.solve.statistics import shift_and_scale
 from bigsvd.sweep import Engine, PanelReader, Partial, SweepTask
 
 # Subspace iterations on the sample: its own sampling error, not convergence, limits the directions it gives.
@@ -128,16 +129,12 @@ def _first_statistics(sums: Partial, preparation: Preparation, work: np.dtype) -
     if not preparation.across_features or sums.line_sum is None or not sums.lines:
         return preparation
     mean = sums.line_sum / sums.lines
-    inverse = None
-    if preparation.scale and sums.square_sum is not None:
-        spread = np.sqrt(np.clip(sums.square_sum / sums.lines - np.abs(mean) ** 2, 0.0, None))
-        # A feature that is constant in the sample says nothing of its scale.
-        safe = (spread > 1e-6 * np.abs(mean)) & (spread > 0)
-        inverse = np.where(safe, 1.0 / np.where(safe, spread, 1.0), 1.0)
     if not np.all(np.isfinite(mean)):
         return preparation
-    shift = mean.astype(work).astype(mean.dtype) if preparation.center else None
-    return replace(preparation, shift=shift, inverse_scale=inverse)
+    variance = np.zeros(len(mean))
+    if sums.square_sum is not None:
+        variance = sums.square_sum / sums.lines - np.abs(mean) ** 2
+    return shift_and_scale(mean, variance, preparation, work)
 
 
 def _fits_single(sums: Partial, across: int) -> bool:

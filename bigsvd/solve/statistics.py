@@ -41,6 +41,45 @@ class Learnt:
     swept_energy: float
 
 
+def first_statistics(lines: np.ndarray, preparation: Preparation, work: np.dtype) -> Preparation:
+    """Take a first mean and first scales from some lines.
+
+    Parameters
+    ----------
+    lines : ndarray, shape (lines, across)
+        As stored.
+    preparation : Preparation
+    work : numpy.dtype
+        Working precision, in which the shift is to be representable.
+
+    Returns
+    -------
+    Preparation
+        Unchanged where the lines are not finite: the sweep will say so, with places.
+    """
+    wide = np.dtype(np.complex128 if lines.dtype.kind == "c" else np.float64)
+    with np.errstate(all="ignore"):
+        mean = lines.mean(axis=0, dtype=wide)
+        if not np.all(np.isfinite(mean)):
+            return preparation
+        squares = np.zeros(len(mean))
+        if preparation.scale:
+            for line in lines:
+                squares += np.abs(line - mean) ** 2
+    return shift_and_scale(mean, squares / len(lines), preparation, work)
+
+
+def shift_and_scale(mean: np.ndarray, variance: np.ndarray, preparation: Preparation, work: np.dtype) -> Preparation:
+    """Preparation with a shift representable in `work`, and scales where they can be told from rounding."""
+    inverse = None
+    if preparation.scale:
+        spread = np.sqrt(np.clip(variance, 0.0, None))
+        # A feature that is constant in the sample says nothing of its scale.
+        safe = (spread > 1e-6 * np.abs(mean)) & np.isfinite(spread) & (spread > 0)
+        inverse = np.where(safe, 1.0 / np.where(safe, spread, 1.0), 1.0)
+    return preparation.learnt(mean, inverse, work)
+
+
 def learn(sums: Partial, preparation: Preparation) -> Learnt:
     """Work out the statistics from the sums of a sweep whose features lie across it.
 
@@ -61,7 +100,8 @@ def learn(sums: Partial, preparation: Preparation) -> Learnt:
     energy = sums.energy - lines * float(np.sum(np.abs(offset) ** 2)) if preparation.center else sums.energy
     before = preparation.inverse_scale if preparation.inverse_scale is not None else np.ones(across)
     shift = preparation.shift if preparation.shift is not None else np.zeros(across)
-    mean = shift + offset / before
+    about = preparation.about if preparation.about is not None else np.zeros(across)
+    mean = shift + (about + offset) / before
     if not preparation.scale or sums.square_sum is None:
         return Learnt(offset, mean, None, preparation.inverse_scale, 0, max(energy, 0.0), sums.energy)
     assert sums.lowest is not None
@@ -74,7 +114,8 @@ def learn(sums: Partial, preparation: Preparation) -> Learnt:
     if preparation.center:
         energy = float((lines - 1) * np.sum(~constant))
     else:
-        energy = float(np.sum(sums.square_sum / scale**2))
+        squares = lines * (np.abs(about + offset) ** 2 - np.abs(offset) ** 2) + sums.square_sum
+        energy = float(np.sum(squares / scale**2))
     return Learnt(offset, mean, scale, before / scale, int(constant.sum()), energy, sums.energy)
 
 

@@ -41,7 +41,7 @@ class PanelReader:
 
     def fetch(self, panel: int, buffer: np.ndarray) -> np.ndarray:
         """Return the panel, contiguous as stored, shape (rows, columns) of its rectangle."""
-        kept = self._kept.get(panel)
+        kept = self._kept.get(panel) if self.keep else self._kept.pop(panel, None)
         rows, columns = self.geometry.rectangle(panel)
         shape = (rows[1] - rows[0], columns[1] - columns[0])
         size = shape[0] * shape[1] * self.dtype.itemsize
@@ -57,6 +57,18 @@ class PanelReader:
             self._kept[panel] = out
         self.control.advance(size, read=self.decoded(panel))
         return out
+
+    def hold(self, panel: int) -> None:
+        """Read a panel now and hold it until it is fetched."""
+        rows, columns = self.geometry.rectangle(panel)
+        out = np.empty((rows[1] - rows[0], columns[1] - columns[0]), self.dtype)
+        self.source.read(rows, columns, out)
+        self._kept[panel] = out
+        self.control.advance(out.nbytes, read=self.decoded(panel))
+
+    def peek(self, panel: int) -> np.ndarray:
+        """A held panel, which stays held."""
+        return self._kept[panel]
 
     def decoded(self, panel: int) -> int:
         """Bytes decoded to read a panel: more than its own where it is part of a chunk."""

@@ -213,15 +213,15 @@ class _Segment:
 
     def _tile_sums(self, tile: np.ndarray, columns: slice) -> float:
         """Add the sum of lines and squares of a tile; return its energy."""
-        sums = self.sums
+        sums, about = self.sums, self.task.preparation.about
+        centred = tile if about is None or sums.line_sum is None else tile - about[columns].astype(tile.dtype)
         if sums.line_sum is not None:
-            sums.line_sum[columns] += np.ones(len(tile), tile.dtype) @ tile
+            sums.line_sum[columns] += np.ones(len(tile), tile.dtype) @ centred
         if sums.square_sum is not None:
-            squares = np.einsum("ij,ij->j", tile.real, tile.real).astype(np.float64)
+            squares = np.einsum("ij,ij->j", centred.real, centred.real).astype(np.float64)
             if tile.dtype.kind == "c":
-                squares += np.einsum("ij,ij->j", tile.imag, tile.imag)
+                squares += np.einsum("ij,ij->j", centred.imag, centred.imag)
             sums.square_sum[columns] += squares
-            return float(squares.sum())
         return _energy(tile)
 
     def _second_product(self, unit: np.ndarray, statistics: LineStatistics | None, tall: np.ndarray) -> None:
