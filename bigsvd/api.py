@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import tempfile
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
-from dataclasses import replace
+from dataclasses import fields, replace
 from pathlib import Path
 from typing import Any
 
@@ -26,12 +26,13 @@ from bigsvd.drive import (
     spectrum_record,
     verify_factors,
 )
+from bigsvd.errors import OptionError
 from bigsvd.factors import Factors, FactorsWriter, check_output, open_factors, store_cost
-from bigsvd.plan import DEFAULT_MAX_RANK, DEFAULT_RANK, Request, make_plan
+from bigsvd.plan import Request, make_plan
 from bigsvd.solve import TallVectors, column_phases
 from bigsvd.source import MatrixSpec, Source, check_complete, open_source
 from bigsvd.sweep import Control, Listener, one_blas_thread
-from bigsvd.units import parse_bytes
+from bigsvd.units import parse_bytes, show_bytes
 
 __all__ = ["decompose", "forecast", "open_factors", "open_matrix", "verify"]
 
@@ -62,12 +63,13 @@ def decompose(
     scratch: str | Path | None = None,
     overwrite: bool = False,
     progress: Listener | None = None,
+    planned: Callable[[Forecast], None] | None = None,
     **options: Any,
 ) -> Factors:
     """Compute the leading singular factors of a matrix larger than memory, with a certificate.
 
-    The matrix decomposed is A = U Σ Vᴴ, samples × features, after the declared preparation. It is streamed in panels under a
-    memory ceiling; nothing of its size is ever held.
+    The matrix decomposed is A = U Σ Vᴴ, samples × features, after the declared preparation. It is streamed in panels
+    under a memory ceiling; nothing of its size is ever held.
 
     Parameters
     ----------
@@ -83,6 +85,8 @@ def decompose(
         Replace an earlier result at `out`, once the new one is complete.
     progress : callable, optional
         Called with a `bigsvd.sweep.Progress` at least once per panel, from any thread.
+    planned : callable, optional
+        Called with the `Forecast` once it is made, before the run begins.
     **options
         rank : int, default 50
             Components, clipped to min(m, n).
@@ -138,6 +142,8 @@ def decompose(
         with _environment() as held_before:
             foreseen = _foresee(opened, options, control, probe=True)
             plan = foreseen.plan
+            if planned is not None:
+                planned(foreseen)
             if target is not None:
                 check_output(target, overwrite=overwrite, source_path=_path_of(source))
             check_complete(opened)
@@ -212,10 +218,11 @@ def verify(
     opened = open_matrix(source, matrix)
     try:
         with _environment():
-            request = _request({"memory": memory, "workers": workers} | factors.attributes["request"])
+            made_with = factors.attributes["request"] | {"rank": factors.rank, "variance": None}
+            request = _request({**made_with, "memory": memory, "workers": workers})
             plan = make_plan(
-                opened.spec, replace(request, route="krylov", precision="double", axis=factors.attributes["plan"]["axis"]), ceiling=_ceiling(request),
-                processors=machine.processors(), result_bytes=0,
+                opened.spec, replace(request, route="krylov", precision="double",
+                axis=factors.attributes["plan"]["axis"]), ceiling=_ceiling(request), processors=machine.processors(),
             )  # fmt: skip
             return verify_factors(factors, opened, plan, control, _scratch_folder(None, None), seed, started)
     finally:
@@ -235,6 +242,10 @@ def _environment() -> Iterator[int]:
 
 def _request(options: dict[str, Any]) -> Request:
     """The user's options as a request."""
+    known = {field.name for field in fields(Request)}
+    for name in options:
+        if name not in known:
+            raise OptionError(f"{name!r} is not an option", remedy=f"Choose from: {', '.join(sorted(known))}.")
     memory = options.get("memory")
     return Request(**{**options, "memory": None if memory is None else parse_bytes(memory)})
 
@@ -249,21 +260,21 @@ def _foresee(source: Source, options: dict[str, Any], control: Control, *, probe
     request = _request(options)
     plan = make_plan(
         source.spec, request, ceiling=_ceiling(request), processors=machine.processors(),
-        result_bytes=_result_bytes(source.spec, request),
+        result_bytes=lambda rank: _result_bytes(source.spec, rank),
     )  # fmt: skip
     free = machine.available_bytes()
     if free < plan.planned_bytes:
-        note = f"only {free >> 20} MiB of memory are free now, less than the {plan.planned_bytes >> 20} MiB planned: expect swapping"
+        planned = show_bytes(plan.planned_bytes)
+        note = f"only {show_bytes(free)} of memory are free now, less than the {planned} planned: expect swapping"
         plan = replace(plan, remarks=(*plan.remarks, note))
     return make_forecast(source, plan, control, probe=probe)
 
 
-def _result_bytes(spec: MatrixSpec, request: Request) -> int:
+def _result_bytes(spec: MatrixSpec, rank: int) -> int:
     """What writing the result holds in memory."""
-    wanted = request.rank or (request.max_rank if request.variance is not None else DEFAULT_RANK) or DEFAULT_MAX_RANK
-    rank = max(1, min(wanted, *spec.shape)) if min(spec.shape) > 0 else 1
     wide = np.dtype(np.complex128 if spec.dtype.kind == "c" else np.float64)
-    return store_cost((max(1, spec.shape[0]), max(1, spec.shape[1])), rank, wide).memory_bytes
+    # Which axis holds the samples does not change the sum over both sides.
+    return store_cost(spec.shape, rank, wide).memory_bytes
 
 
 def _path_of(source: Any) -> Path | None:
@@ -314,7 +325,9 @@ def _write(
         phase = column_phases(basis)
         tall.phase = phase
     basis = basis * phase
-    with FactorsWriter(out, shape=(plan.samples, plan.features), rank=rank, dtype=outcome.scratch.dtype, overwrite=overwrite) as writer:
+    with FactorsWriter(
+        out, shape=(plan.samples, plan.features), rank=rank, dtype=outcome.scratch.dtype, overwrite=overwrite
+    ) as writer:
         control.begin("write", (plan.samples + plan.features) * rank * outcome.scratch.dtype.itemsize)
         conjugate = tall_side == "right"
         gram = np.zeros((rank, rank), outcome.scratch.dtype)

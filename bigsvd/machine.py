@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 from pathlib import Path
 
@@ -71,11 +72,9 @@ def resident_bytes() -> int:
 
 def reset_peak() -> None:
     """Begin the record of the peak anew, where the system can (Linux)."""
-    try:
+    # Elsewhere, and in some containers, the record goes back to the start of the process: an upper bound.
+    with contextlib.suppress(OSError):
         Path("/proc/self/clear_refs").write_text("5")
-    except OSError:
-        # Elsewhere, and in some containers, the record goes back to the start of the process: an upper bound.
-        pass
 
 
 def peak_resident_bytes() -> int:

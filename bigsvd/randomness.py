@@ -1,15 +1,16 @@
 """Random numbers as a contract: entry (i, j) of a Gaussian block is a function of seed, stream and position alone.
 
-Raw Philox bits (a published counter-based generator, Salmon et al., SC 2011) are mapped to normals by our own code, built
-from additions, multiplications, divisions and square roots only, so that neither panels, workers nor library versions move a bit.
+Raw Philox bits (a published counter-based generator, Salmon et al., SC 2011) are mapped to normals by our own code,
+built from additions, multiplications, divisions and square roots only, so that neither panels, workers nor library
+versions move a bit.
 """
 
 from __future__ import annotations
 
 import numpy as np
 
-# Wichura, Algorithm AS 241 (PPND16), Applied Statistics 37 (1988), 477–484: coefficients, highest power first. From memory,
-# checked in the tests against scipy.special.ndtri to 1e-14.
+# Wichura, Algorithm AS 241 (PPND16), Applied Statistics 37 (1988), 477–484: coefficients, highest power first. From
+# memory, checked in the tests against scipy.special.ndtri to 1e-14.
 _CENTRE_TOP = (
     2509.0809287301226727,
     33430.575583588128105,
@@ -148,7 +149,7 @@ def _ratio(x: np.ndarray, top: tuple[float, ...], bottom: tuple[float, ...]) -> 
 
 
 def _logarithm(x: np.ndarray) -> np.ndarray:
-    """Natural logarithm by exponent and the series of 2·artanh, exact operations only (np.log differs between builds)."""
+    """Natural logarithm by exponent and the series of 2·artanh: np.log differs between builds."""
     mantissa, exponent = np.frexp(x)
     low = mantissa < np.sqrt(0.5)
     mantissa = np.where(low, mantissa * 2.0, mantissa)

@@ -70,13 +70,11 @@ def show_bytes(size: float) -> str:
     >>> show_bytes(1234)
     '1.21 KiB'
     """
-    value = float(size)
-    for unit in ("B", "KiB", "MiB", "GiB"):
+    value, unit = float(size), "B"
+    for larger in ("KiB", "MiB", "GiB", "TiB"):
         if abs(value) < 1024:
             break
-        value /= 1024
-    else:
-        unit = "TiB"
+        value, unit = value / 1024, larger
     if unit == "B":
         return f"{int(value)} B"
     text = f"{value:.0f}" if value >= 100 else f"{value:.1f}" if value >= 10 else f"{value:.2f}"

@@ -56,8 +56,9 @@ def bound_angles(evidence: Evidence, upper: np.ndarray, rank: int) -> Angles:
         start, stop = groups[position]
         sine = _sine(evidence, upper, start, stop)
         if sine <= TIED_SINE:
-            bound[start:stop] = np.arcsin(sine)
-            first[start:stop], last[start:stop] = start, stop - 1
+            # What a vector has of its own stays: a neighbour that has no bound takes nothing away from it.
+            new = start + np.flatnonzero(np.isnan(bound[start:stop]))
+            bound[new], first[new], last[new] = np.arcsin(sine), start, stop - 1
             position += 1
             continue
         # Join the neighbour across the smaller gap; what cannot be joined any more has no bound.
@@ -70,10 +71,6 @@ def bound_angles(evidence: Evidence, upper: np.ndarray, rank: int) -> Angles:
             position -= 1
         else:
             groups[position : position + 2] = [(start, groups[position + 1][1])]
-    for start, stop in groups:
-        if _sine(evidence, upper, start, stop) > TIED_SINE:
-            bound[start:stop] = np.nan
-            first[start:stop], last[start:stop] = np.arange(start, stop), np.arange(start, stop)
     return Angles(bound, first, last)
 
 
@@ -105,6 +102,7 @@ def _sine(evidence: Evidence, upper: np.ndarray, start: int, stop: int) -> float
         values = np.concatenate([[np.inf], whole.value, [0.0]])
         distance = min(values[start] - values[start + 1], values[stop] - values[stop + 1]) - 2 * error
         if distance > 0:
-            # Wedin, BIT 12 (1972): once for the fold, once for the Rayleigh–Ritz step on its vectors; left vectors are Y/θ.
+            # Wedin, BIT 12 (1972): once for the fold, once for the Rayleigh–Ritz step on its vectors; left vectors are
+            # Y/θ.
             sine = min(sine, 2 * np.sqrt(2) * error / distance + evidence.value_rounding / theta)
     return float(sine)

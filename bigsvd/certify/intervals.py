@@ -1,4 +1,4 @@
-"""The statement about values: intervals that distinct singular values can be matched with, and the choice between both statements."""
+"""Intervals: by value, which distinct singular values can be matched with, or by index; and the choice between them."""
 
 from __future__ import annotations
 
@@ -40,11 +40,11 @@ class _Group:
 def choose_intervals(evidence: Evidence, upper: np.ndarray, rank: int, tolerance: float) -> Intervals:
     """Report the first g components by index and the rest by value, for the g that says most.
 
-    By index: θ_i ≤ σ_i ≤ u_i, from `order.index_bounds`; holds for every i, but may be wide. By value: the singular values of A
-    can be matched with the Ritz values of any set of components within its joint ‖R‖/√2 (Kahan, Parlett and Jiang, SIAM J. Numer.
-    Anal. 19 (1982), on the dilation of A); components whose intervals overlap are joined until the groups are disjoint, so that
-    each group holds as many distinct singular values. Both may be mixed where every interval by value ends below θ_g: the
-    values it holds are then none of the first g.
+    By index: θ_i ≤ σ_i ≤ u_i, from `order.index_bounds`; holds for every i, but may be wide. By value: the singular
+    values of A can be matched with the Ritz values of any set of components within its joint ‖R‖/√2 (Kahan, Parlett and
+    Jiang, SIAM J. Numer. Anal. 19 (1982), on the dilation of A); components whose intervals overlap are joined until
+    the groups are disjoint, so that each group holds as many distinct singular values. Both may be mixed where every
+    interval by value ends below θ_g: the values it holds are then none of the first g.
 
     Parameters
     ----------
@@ -53,7 +53,8 @@ def choose_intervals(evidence: Evidence, upper: np.ndarray, rank: int, tolerance
         Upper ends by index.
     rank : int
     tolerance : float
-        Decides which choice says most: most components within it, then most narrow enough for the bulk, then the narrowest.
+        Decides which choice says most: most components within it, then most narrow enough for the bulk, then the
+        narrowest.
 
     Returns
     -------

@@ -1,4 +1,4 @@
-"""How large a singular value can hide outside the basis: powers of AᴴA applied to Gaussian vectors that know nothing of it."""
+"""How large a singular value can hide outside the basis, by powers of AᴴA on Gaussian vectors that know nothing of it."""
 
 from __future__ import annotations
 
@@ -41,9 +41,9 @@ class ChainState:
 def chain_bound(state: ChainState) -> float:
     """Bound ‖A(I−P)‖ with probability 1 − 1e-10, at all powers of the chain at once.
 
-    With v the leading right singular vector of A(I−P) and σ its singular value, vᴴT_s = σ^{2s} vᴴΩ, so σ^{2s}‖vᴴΩ‖ ≤ ‖T_s‖₂.
-    v does not depend on Ω, hence ‖vᴴΩ‖² follows the chi-square law with r degrees of freedom (complex: half that of 2r), and
-    falls below its 1e-10 quantile x with probability 1e-10. That is one event for all s:
+    With v the leading right singular vector of A(I−P) and σ its singular value, vᴴT_s = σ^{2s} vᴴΩ, so σ^{2s}‖vᴴΩ‖ ≤
+    ‖T_s‖₂. v does not depend on Ω, hence ‖vᴴΩ‖² follows the chi-square law with r degrees of freedom (complex: half
+    that of 2r), and falls below its 1e-10 quantile x with probability 1e-10. That is one event for all s:
 
         σ ≤ (‖T_s‖₂ / √x)^{1/2s}
 

@@ -13,7 +13,8 @@ _PLACES = 48
 def index_bounds(evidence: Evidence) -> np.ndarray:
     """Upper bounds of the singular values by index; the lower bound of σ_i is θ_i (interlacing).
 
-    Let c_g bound AᴴA on the orthogonal complement of the first g Ritz vectors. Then σ_{g+1}² ≤ c_g (Courant–Fischer), and
+    Let c_g bound AᴴA on the orthogonal complement of the first g Ritz vectors. Then σ_{g+1}² ≤ c_g (Courant–Fischer),
+    and
 
         c_L = β²
         c_{i−1} = min over g ≥ i of  λ_max [[θ_i², t], [t, c_g]],   t = ‖S restricted to columns i … g‖

@@ -1,4 +1,7 @@
-"""Worst-case rounding terms of a sweep in double, and those measured in single (Higham, Accuracy and Stability, 2nd ed., ch. 3, 19)."""
+"""Rounding terms of a sweep: worst case in double, measured in single.
+
+Higham, Accuracy and Stability of Numerical Algorithms, 2nd ed. (2002), chapters 3 and 19.
+"""
 
 from __future__ import annotations
 
@@ -52,7 +55,8 @@ def tall_rounding(depth: SumDepth, frobenius: float, width: int) -> float:
     """
     product = gamma(depth.across + 4, complex_entries=depth.complex_entries)
     folded = gamma(
-        depth.fold_columns * (depth.fold_rows + 2.0 * depth.fold_columns * depth.folds), complex_entries=depth.complex_entries
+        depth.fold_columns * (depth.fold_rows + 2.0 * depth.fold_columns * depth.folds),
+        complex_entries=depth.complex_entries,
     )
     # ‖ΔY‖_F over all columns: ‖Y‖_F ≤ ‖A‖_F and ‖B‖_F ≤ √width.
     return (product * np.sqrt(width) + folded) * frobenius
@@ -77,7 +81,10 @@ def product_rounding(depth: SumDepth, frobenius: float, tall_norms: np.ndarray) 
 def fold_rounding(depth: SumDepth, frobenius: float) -> float:
     """Backward error ‖E‖ of folding A itself."""
     rows = depth.fold_rows + 2.0 * depth.fold_columns * depth.folds
-    return gamma(depth.fold_columns * rows, complex_entries=depth.complex_entries) * frobenius + 4 * UNIT_ROUNDOFF * frobenius
+    return (
+        gamma(depth.fold_columns * rows, complex_entries=depth.complex_entries) * frobenius
+        + 4 * UNIT_ROUNDOFF * frobenius
+    )
 
 
 def gram_rounding(depth: SumDepth, frobenius: float) -> float:

@@ -42,24 +42,23 @@ def certify(evidence: Evidence, rank: int, reach: int, tolerance: float, *, stri
         upper[:count] = np.minimum(upper[:count], known[:count])
     intervals = choose_intervals(evidence, upper, rank, tolerance)
     value = theta[:rank].copy()
-    null = value <= evidence.value_rounding
+    noise = _noise_floor(evidence)
+    null = value <= noise
     value[null] = 0.0
     lower = np.where(null, 0.0, np.minimum(intervals.lower, value))
     top = np.maximum(intervals.upper, value)
     scale = theta[0] if len(theta) and theta[0] > 0 else 1.0
     relative = np.where(null, top / scale, (top - lower) / np.where(null, 1.0, np.maximum(value, np.finfo(float).tiny)))
     state = np.full(rank, OPEN, np.int8)
-    crowded = np.array([i + reach < len(theta) and theta[i + reach] >= CROWD_RATIO * theta[i] for i in range(rank)], bool)
+    crowded = np.array(
+        [i + reach < len(theta) and theta[i + reach] >= CROWD_RATIO * theta[i] for i in range(rank)], bool
+    )
     state[crowded & ~null & (relative <= BULK_WIDTH)] = BULK
     state[relative <= tolerance] = RESOLVED
     angles = bound_angles(evidence, upper, rank)
     angles.bound[null] = np.nan
     norms = evidence.residual_norms[:rank]
     residual = np.where(null, norms / max(scale, np.finfo(float).tiny), norms / np.maximum(value, np.finfo(float).tiny))
-    # Worst-case terms bound; what a value drowns in is the rounding of an orthogonal factorisation, ε·‖A‖_F and a little.
-    noise = 8 * np.finfo(float).eps * np.sqrt(len(theta) * evidence.energy)
-    if evidence.rounding_how == "measured":
-        noise = evidence.value_rounding
     captured = float(np.sum(value**2))
     share = min(1.0, captured / evidence.energy) if evidence.energy > 0 else 1.0
     met = not np.any(state == OPEN) and not (strict and np.any(state == BULK))
@@ -75,11 +74,11 @@ def certify(evidence: Evidence, rank: int, reach: int, tolerance: float, *, stri
         tied_first=angles.first,
         tied_last=angles.last,
         null=null,
-        below_noise=~null & (value <= noise),
+        below_noise=~null & (value <= evidence.value_rounding),
         missed_bound=float(evidence.missed),
         missed_how=evidence.missed_how,
         failure_probability=evidence.failure_probability,
-        rounding=float(max(evidence.value_rounding, np.max(evidence.product_rounding[:rank] / np.maximum(theta[:rank], scale * 1e-300)))),
+        rounding=_largest_rounding(evidence, ~null & (value > evidence.value_rounding)),
         rounding_how=evidence.rounding_how,
         captured_share=share,
         total_energy=evidence.energy,
@@ -88,6 +87,23 @@ def certify(evidence: Evidence, rank: int, reach: int, tolerance: float, *, stri
         tolerance_met=met,
         verdict=_words(state, null, relative, proved, tolerance, strict=strict),
     )
+
+
+def _noise_floor(evidence: Evidence) -> float:
+    """What a value drowns in: the rounding of an orthogonal factorisation, ε·‖A‖_F and a little; in single as measured.
+
+    The worst-case terms of the intervals are far larger: values between both are kept, with intervals that reach zero.
+    """
+    if evidence.rounding_how == "measured":
+        return evidence.value_rounding
+    return float(8 * np.finfo(float).eps * np.sqrt(len(evidence.theta) * evidence.energy))
+
+
+def _largest_rounding(evidence: Evidence, which: np.ndarray) -> float:
+    """Largest rounding term in the residuals of the chosen components."""
+    rank = len(which)
+    terms = evidence.product_rounding[:rank][which] / evidence.theta[:rank][which]
+    return float(max(evidence.value_rounding, np.max(terms, initial=0.0)))
 
 
 def spectrum_intervals(evidence: Evidence) -> tuple[np.ndarray, np.ndarray]:
@@ -101,15 +117,18 @@ def spectrum_intervals(evidence: Evidence) -> tuple[np.ndarray, np.ndarray]:
 
 
 def rounding_limited(evidence: Evidence, certificate: Certificate) -> bool:
-    """Whether every open component is wide by little else than rounding, so that more sweeps in this precision would not help."""
+    """Whether every open component is wide by little else than rounding, so that more sweeps would not help."""
     waiting = certificate.state == OPEN
     if certificate.strict:
         waiting |= certificate.state == BULK
     rank = certificate.rank
-    theta = np.maximum(evidence.theta[:rank], np.finfo(float).tiny)
+    # A value of zero is limited by rounding whatever the tolerance; 1e-150 stands for it without overflow.
+    theta = np.maximum(evidence.theta[:rank], 1e-150)
     floor = 2 * (evidence.product_rounding[:rank] / theta / np.sqrt(2) + evidence.value_rounding) / theta
     width = (certificate.upper - certificate.lower) / theta
-    return bool(np.any(waiting) and np.all((floor > certificate.tolerance)[waiting]) and np.all((width <= 2 * floor)[waiting]))
+    return bool(
+        np.any(waiting) and np.all((floor > certificate.tolerance)[waiting]) and np.all((width <= 2 * floor)[waiting])
+    )
 
 
 def _words(
@@ -122,7 +141,9 @@ def _words(
     if counts[2]:
         widest = float(relative[state == BULK].max())
         which = "lie" if counts[2] > 1 else "lies"
-        parts.append(f"{counts[2]} {which} in the bulk, values known to {_percent(widest)}, vectors not to be read singly")
+        parts.append(
+            f"{counts[2]} {which} in the bulk, values known to {_percent(widest)}, vectors not to be read singly"
+        )
     if counts[1]:
         widest = float(relative[state == OPEN].max())
         parts.append(f"{counts[1]} open, values known to {_percent(widest)}" if widest < 1 else f"{counts[1]} open")

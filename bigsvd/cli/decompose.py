@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import click
 
 from bigsvd.cli.options import decomposition_options, given, output_options, print_lines, progress_stream, text_width
 from bigsvd.cli.program import MET, NOT_MET, print_json
+
+if TYPE_CHECKING:
+    from bigsvd.drive import Forecast
 
 
 @click.command(short_help="Compute factors of a matrix and prove how good they are.")
@@ -49,15 +52,13 @@ def decompose(file: str, out: str, overwrite: bool, quiet: bool, as_json: bool, 
     from bigsvd import api
     from bigsvd.report import announcement, decomposition_facts, show_progress, summary_lines
 
-    chosen = given(options)
-    probed = 0
-    if not quiet:
-        forecast = api.forecast(file, **{name: value for name, value in chosen.items() if name != "scratch"})
-        probed = forecast.probe_bytes
-        print_lines([*announcement(forecast, text_width()), ""], err=True)
-    with show_progress(progress_stream(), quiet=quiet) as listener:
-        factors = api.decompose(file, out, overwrite=overwrite, progress=listener, **chosen)
-    factors.attributes["bytes_read"] += probed
+    with show_progress(progress_stream(), quiet=quiet) as reporter:
+
+        def planned(forecast: Forecast) -> None:
+            if reporter is not None:
+                reporter.say([*announcement(forecast, text_width()), ""])
+
+        factors = api.decompose(file, out, overwrite=overwrite, progress=reporter, planned=planned, **given(options))
     if as_json:
         print_json(decomposition_facts(factors.certificate, factors.attributes, factors.path))
     else:

@@ -70,9 +70,8 @@ def make_forecast(source: Source, plan: Plan, control: Control, *, probe: bool) 
     single = np.dtype(np.complex64 if spec.dtype.kind == "c" else np.float32)
     work = single if plan.may_be_single and plan.request.precision != "double" else wide
     block = np.full((geometry.across, plan.widths.block), 1.0 / geometry.across, work)
-    task = SweepTask(
-        PanelReader(source, geometry, control), Preparation(geometry.lines_are_samples, plan.centred, plan.scaled), work, "basis", block
-    )  # fmt: skip
+    preparation = Preparation(geometry.lines_are_samples, plan.centred, plan.scaled)
+    task = SweepTask(PanelReader(source, geometry, control), preparation, work, "basis", block)
     engine = Engine(plan.workers)
     try:
         start = time.perf_counter()
@@ -81,6 +80,7 @@ def make_forecast(source: Source, plan: Plan, control: Control, *, probe: bool) 
     finally:
         engine.close()
     sweep = seconds * geometry.lines / lines
-    # Folding, scratch and the small dense steps come on top of what the probe does; the nominal model knows their share.
+    # Folding, scratch and the small dense steps come on top of what the probe does; the nominal model knows their
+    # share.
     predicted = sweep * (plan.nominal_sweeps + pilot * 3) + plan.nominal_dense_seconds
     return Forecast(plan, predicted, control.bytes_read - before, int(expected) + control.bytes_read - before)

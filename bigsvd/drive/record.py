@@ -19,6 +19,7 @@ from bigsvd.sweep import Control
 if TYPE_CHECKING:
     from bigsvd.drive.probe import Forecast
 
+_REQUEST = ("samples", "center", "scale", "tolerance", "strict", "seed", "rank", "variance", "max_rank", "max_sweeps")
 _VERSIONS = ("bigsvd", "numpy", "scipy", "dask", "zarr", "h5py")
 
 
@@ -47,7 +48,9 @@ def spectrum_record(outcome: Outcome, certificate: Certificate) -> dict[str, np.
     }
 
 
-def run_record(outcome: Outcome, foreseen: Forecast, control: Control, started: float, held_before: int) -> dict[str, Any]:
+def run_record(
+    outcome: Outcome, foreseen: Forecast, control: Control, started: float, held_before: int
+) -> dict[str, Any]:
     """Attributes of the result: source, preparation, plan, costs, versions."""
     plan, spec, geometry = outcome.plan, outcome.plan.spec, outcome.plan.geometry
     request = asdict(plan.request)
@@ -85,7 +88,7 @@ def run_record(outcome: Outcome, foreseen: Forecast, control: Control, started: 
             "reasons": [list(pair) for pair in plan.reasons],
             "memory": [[term.size, term.what] for term in plan.memory],
         },
-        "request": {name: request[name] for name in ("samples", "center", "scale", "tolerance", "strict", "seed", "rank")},
+        "request": {name: request[name] for name in _REQUEST},
         "width": outcome.state.width,
         "sweeps": outcome.sweeps,
         "bytes_read": control.bytes_read,

@@ -90,7 +90,9 @@ def draw_slices(spec: MatrixSpec, axis: int, seed: int) -> tuple[Rectangle, ...]
         return ()
     size = _grow(unit, spec.shape, min(allowed / count, MOST_ENTRIES), axis)
     places = [
-        draw_without_repeat(seed, STREAM_SLICES + 64 * (side + 1), max(1, (spec.shape[side] - size[side]) // unit[side] + 1), count)
+        draw_without_repeat(
+            seed, STREAM_SLICES + 64 * (side + 1), max(1, (spec.shape[side] - size[side]) // unit[side] + 1), count
+        )
         if (spec.shape[side] - size[side]) // unit[side] + 1 >= count
         else [0] * count
         for side in (0, 1)
@@ -155,8 +157,9 @@ def check_slice(
     lines = shape[plan.geometry.axis]
     rank = max(1, min(plan.rank, SLICE_RANK, min(shape) // 2))
     request = replace(
-        plan.request, rank=rank, variance=None, axis=("rows", "columns")[plan.geometry.axis], route=plan.route, precision=precision,
-        panel_lines=max(1, lines // (2 * LEAST_PANELS)), width_limit=1, memory=None, max_sweeps=max(8, plan.request.max_sweeps),
+        plan.request, rank=rank, variance=None, axis=("rows", "columns")[plan.geometry.axis], route=plan.route,
+        precision=precision, panel_lines=max(1, lines // (2 * LEAST_PANELS)), width_limit=1, memory=None,
+        max_sweeps=max(8, plan.request.max_sweeps),
     )  # fmt: skip
     small = make_plan(part.spec, request, ceiling=max(plan.ceiling, 2**30), processors=plan.workers)
     small = replace(small, resident=True)
@@ -216,7 +219,8 @@ def _compare(outcome: Outcome, exact: np.ndarray, rectangle: Rectangle) -> Slice
     slack = LAPACK_ROUNDING * top
     proved = certificate.index_proved
     held = bool(
-        np.all((certificate.lower <= value[:rank] + slack)[proved]) and np.all((value[:rank] <= certificate.upper + slack)[proved])
+        np.all((certificate.lower <= value[:rank] + slack)[proved])
+        and np.all((value[:rank] <= certificate.upper + slack)[proved])
     )
     for i in np.flatnonzero(~proved):
         held &= bool(np.any((value >= certificate.lower[i] - slack) & (value <= certificate.upper[i] + slack)))

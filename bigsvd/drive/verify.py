@@ -1,4 +1,4 @@
-"""A second look at a result: the factors against themselves, and against the matrix in one sweep that knows no solver."""
+"""A second look at a result: the factors against themselves, and against the matrix in a sweep that knows no solver."""
 
 from __future__ import annotations
 
@@ -58,7 +58,13 @@ class Verification:
 
 
 def verify_factors(
-    factors: Factors, source: Source | None, plan: Plan | None, control: Control, folder: Path, seed: int | None, started: float
+    factors: Factors,
+    source: Source | None,
+    plan: Plan | None,
+    control: Control,
+    folder: Path,
+    seed: int | None,
+    started: float,
 ) -> Verification:
     """Check factors against themselves and, with a source, against the matrix.
 
@@ -164,11 +170,19 @@ def _outer_checks(factors: Factors, source: Source, plan: Plan, control: Control
     excess = residual - (certificate.residual * (1 + 1e-6) + slack)
     live = ~certificate.null
     return [
-        Check("AᴴU − VΣ: largest column" if conjugate else "AV − UΣ: largest column", float(np.sqrt(off.max(initial=0.0))), slack),
+        Check(
+            "AᴴU − VΣ: largest column" if conjugate else "AV − UΣ: largest column",
+            float(np.sqrt(off.max(initial=0.0))),
+            slack,
+        ),
         Check(
             f"{'AV − UΣ' if conjugate else 'AᴴU − VΣ'}: excess over the certified residual",
             float(max(0.0, excess[live].max(initial=0.0))),
             0.0,
         ),
-        Check("energy: relative difference", abs(sums.energy - certificate.total_energy) / max(certificate.total_energy, 1e-300), 1e-6),
+        Check(
+            "energy: relative difference",
+            abs(sums.energy - certificate.total_energy) / max(certificate.total_energy, 1e-300),
+            1e-6,
+        ),
     ]

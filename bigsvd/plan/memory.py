@@ -12,11 +12,12 @@ from bigsvd.plan.widths import Widths
 from bigsvd.source import MatrixSpec
 from bigsvd.units import show_bytes, show_count
 
-# A panel is converted and multiplied in units: single-precision sums stay within 512 terms (docs/method.md), and a unit of this
-# many lines and columns stays in the cache. Wider matrices are converted once for each of the two products.
+# A panel is converted and multiplied in units: single-precision sums stay within 512 terms (docs/method.md), and a unit
+# of this many lines and columns stays in the cache. Wider matrices are converted once for each of the two products.
 UNIT_LINES = 512
 UNIT_COLUMNS = 8192
-# Lines gathered before a Householder fold: several times the width, so that the old triangle is a small part of the work.
+# Lines gathered before a Householder fold: several times the width, so that the old triangle is a small part of the
+# work.
 LEAST_FOLD_LINES = 1024
 # Lines of Y that are turned into left vectors at a time (solve reads so many).
 TALL_LINES = 4096
@@ -36,7 +37,16 @@ def fold_lines(width: int) -> int:
 
 
 def memory_terms(
-    spec: MatrixSpec, geometry: Geometry, route: str, widths: Widths, *, workers: int, leaves: int, pilot_bytes: int, resident: bool, result_bytes: int
+    spec: MatrixSpec,
+    geometry: Geometry,
+    route: str,
+    widths: Widths,
+    *,
+    workers: int,
+    leaves: int,
+    pilot_bytes: int,
+    resident: bool,
+    result_bytes: int,
 ) -> tuple[MemoryTerm, ...]:
     """Terms of the phase that needs most.
 
@@ -81,19 +91,30 @@ def memory_terms(
     if resident:
         held.append(MemoryTerm(spec.decoded_bytes, "the whole matrix, held in its stored type"))
     held.append(
-        MemoryTerm(2 * widths.limit * column, f"basis and its products, {show_count(widths.limit)} columns of {show_count(n)}")
+        MemoryTerm(
+            2 * widths.limit * column, f"basis and its products, {show_count(widths.limit)} columns of {show_count(n)}"
+        )
     )
     pilot = [MemoryTerm(pilot_bytes, "pilot sample in its stored type")] if pilot_bytes else []
     reading = [
-        MemoryTerm(workers * (panel + decode), f"{workers} panels in flight, {show_bytes(panel)} each, and their decoding"),
+        MemoryTerm(
+            workers * (panel + decode), f"{workers} panels in flight, {show_bytes(panel)} each, and their decoding"
+        ),
         MemoryTerm(workers * (unit + fold), f"working buffers of {workers} workers: conversion, products, QR"),
         MemoryTerm(live * leaf, f"partial sums of up to {live} segments, {show_bytes(leaf)} each"),
         MemoryTerm(2 * widths.block * column, f"columns being multiplied, {show_count(widths.block)}"),
     ]
     dense = n * column if whole_spectrum else 0
-    growing = [MemoryTerm(5 * widths.block * column + 6 * dense, "new directions: residuals and their QR, small dense steps")]
+    growing = [
+        MemoryTerm(5 * widths.block * column + 6 * dense, "new directions: residuals and their QR, small dense steps")
+    ]
     lines = min(TALL_LINES, geometry.lines)
-    writing = [MemoryTerm(result_bytes + 4 * lines * 2 * widths.limit * entry, "left vectors from scratch, writing and reading back the result")]
+    writing = [
+        MemoryTerm(
+            result_bytes + 4 * lines * 2 * widths.limit * entry,
+            "left vectors from scratch, writing and reading back the result",
+        )
+    ]
     phases = [pilot + reading, reading, growing, writing]
     return (*held, *max(phases, key=lambda terms: sum(term.size for term in terms)))
 

@@ -2,9 +2,8 @@
 
 from __future__ import annotations
 
-import math
 import os
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
 
 from bigsvd.errors import MemoryCeilingError, OptionError
@@ -35,6 +34,14 @@ _LEAVES = (8, 4, 2, 1)
 _NO_MATTER_SECONDS = 2.0
 _ROUTE_ORDER = ("direct", "tsqr", "gram", "krylov")
 SINGLE_KINDS = ("f2", "f4", "i1", "i2", "u1", "u2", "b1", "c8")
+
+
+ResultBytes = Callable[[int], int]
+
+
+def _nothing(rank: int) -> int:
+    """Bytes of a result that is not written."""
+    return 0
 
 
 @dataclass(frozen=True)
@@ -156,7 +163,12 @@ class Plan:
 
 
 def make_plan(
-    spec: MatrixSpec, request: Request, *, ceiling: int, processors: int | None = None, result_bytes: int = 0
+    spec: MatrixSpec,
+    request: Request,
+    *,
+    ceiling: int,
+    processors: int | None = None,
+    result_bytes: ResultBytes = _nothing,
 ) -> Plan:
     """Decide how a matrix will be decomposed.
 
@@ -168,8 +180,8 @@ def make_plan(
         Bytes the process may hold.
     processors : int or None
         Processors at hand; decides only how many workers run.
-    result_bytes : int
-        Bytes that writing the result holds.
+    result_bytes : callable
+        Bytes that writing a result of so many components holds.
 
     Returns
     -------
@@ -187,8 +199,18 @@ def make_plan(
     samples_axis = 0 if request.samples == "rows" else 1
     axes = {"auto": (0, 1), "rows": (0,), "columns": (1,)}[request.axis]
     routes = ("direct", "gram", "tsqr", "krylov") if request.route == "auto" else (request.route,)
-    drafts = [plan for axis in axes for route in routes for plan in _candidates(spec, request, axis, samples_axis, route, ceiling, result_bytes)]
-    found = [plan for plan in drafts if plan.planned_bytes <= ceiling]
+    assert request.rank is not None
+    written = result_bytes(request.rank)
+
+    def drafts(bytes_allowed: int) -> list[Plan]:
+        return [
+            plan
+            for axis in axes
+            for route in routes
+            for plan in _candidates(spec, request, axis, samples_axis, route, bytes_allowed, written)
+        ]
+
+    found = [plan for plan in drafts(ceiling) if plan.planned_bytes <= ceiling]
     if not found:
         raise _too_small(request, ceiling, drafts)
     best = min(found, key=_preference)
@@ -231,10 +253,26 @@ def _candidates(
                         continue
                     for workers in (NOMINAL_WORKERS, 1):
                         draft = Plan(
-                            request, spec, geometry, route, resident, widths, leaves, pilot, may_be_single, workers, (), ceiling, 0.0, 0, result_bytes=result_bytes
+                            request,
+                            spec,
+                            geometry,
+                            route,
+                            resident,
+                            widths,
+                            leaves,
+                            pilot,
+                            may_be_single,
+                            workers,
+                            (),
+                            ceiling,
+                            0.0,
+                            0,
+                            result_bytes=result_bytes,
                         )
                         seconds, sweeps = _nominal(draft, tight)
-                        yield replace(draft, memory=_terms(draft, workers), nominal_seconds=seconds, nominal_sweeps=sweeps)
+                        yield replace(
+                            draft, memory=_terms(draft, workers), nominal_seconds=seconds, nominal_sweeps=sweeps
+                        )
 
 
 def _widths(request: Request, across: int, route: str, tight: bool) -> Widths:
@@ -326,7 +364,7 @@ def _worker_words(workers: int, request: Request, plan: Plan) -> str:
     if request.workers is not None and workers == request.workers:
         return f"{workers}, as asked"
     if request.workers is not None:
-        return f"{workers}; {request.workers} were asked, but their buffers do not fit under the ceiling or there are fewer segments"
+        return f"{workers}; for the {request.workers} asked there is no room under the ceiling, or no segment"
     return f"{workers}, one BLAS thread each; the number changes the time, not the bits"
 
 
@@ -344,7 +382,9 @@ def _reasons(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str
         why = f"nominally {show_seconds(best.nominal_seconds)} against {show_seconds(rival)} along the other axis"
     axis = f"panels are ranges of {along}; {why}"
     lines = geometry.edges[1] - geometry.edges[0]
-    panels = f"{show_count(geometry.panels)} panels of {show_count(lines)} {along}, {show_bytes(geometry.panel_bytes)} each"
+    panels = (
+        f"{show_count(geometry.panels)} panels of {show_count(lines)} {along}, {show_bytes(geometry.panel_bytes)} each"
+    )
     if geometry.amplification > 1.001:
         panels += (
             f"; whole chunks of {show_shape(spec.chunks)} do not fit under the ceiling, so panels are parts of chunks"
@@ -376,10 +416,19 @@ def _reasons(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str
             )
         )
     if not best.may_be_single:
-        why = f"products of {spec.dtype} in double" if best.route == "krylov" else "sums over the whole spectrum in double"
+        why = (
+            f"products of {spec.dtype} in double"
+            if best.route == "krylov"
+            else "sums over the whole spectrum in double"
+        )
         reasons.append(("precision", f"double: {why}"))
     elif request.precision == "auto":
-        reasons.append(("precision", "single if the pilot shows that its rounding stays below a quarter of the tolerance, else double"))
+        reasons.append(
+            (
+                "precision",
+                "single if the pilot shows that its rounding stays below a quarter of the tolerance, else double",
+            )
+        )
     else:
         reasons.append(("precision", f"{request.precision}, as asked"))
     return tuple(reasons)
@@ -393,21 +442,34 @@ def _pilot_words(plan: Plan) -> str:
     return f"{show_count(len(plan.pilot_panels))} panels drawn by seed over the whole file, {100 * share:.1f} % of it"
 
 
-def _too_small(request: Request, ceiling: int, drafts: list[Plan]) -> OptionError:
+def _too_small(request: Request, ceiling: int, drafts: Callable[[int], list[Plan]]) -> OptionError:
     """The error that names the least that would do."""
-    if not drafts:
+    now = drafts(ceiling)
+    if not now:
         return OptionError(
-            f"--route {request.route} does not suit this matrix: its short side is longer than {show_count(LONGEST_SHORT_SIDE)},"
-            " or it does not fit in half the ceiling",
+            f"--route {request.route} does not suit this matrix: its short side is longer than"
+            f" {show_count(LONGEST_SHORT_SIDE)}, or it does not fit in half the ceiling",
             remedy="Give --route krylov.",
         )
-    least = min(drafts, key=lambda plan: plan.planned_bytes)
+    # Panels follow from the ceiling, so the least is found by planning at others, to a MiB.
+    low, high = ceiling >> 20, min(plan.planned_bytes for plan in now) >> 20
+    while not _fits(drafts, high):
+        low, high = high, high * 2
+    while high - low > 1:
+        middle = (low + high) // 2
+        low, high = (low, middle) if _fits(drafts, middle) else (middle, high)
+    least = min(drafts(high << 20), key=lambda plan: plan.planned_bytes)
     evidence = [f"{show_bytes(term.size):>9}  {term.what}" for term in least.memory]
-    named = math.ceil(least.planned_bytes / 2**24) * 16
     what = f"rank {request.rank}" if request.variance is None else f"--variance with --max-rank {request.rank}"
     lower = "--rank" if request.variance is None else "--max-rank"
     return MemoryCeilingError(
-        f"{what} needs at least {named} MiB, but --memory is {show_bytes(ceiling)}:",
+        f"{what} needs at least {high} MiB, but --memory is {show_bytes(ceiling)}:",
         evidence=evidence,
-        remedy=f"Raise --memory to {named}MiB, or lower {lower}.",
+        remedy=f"Raise --memory to {high}MiB, or lower {lower}.",
     )
+
+
+def _fits(drafts: Callable[[int], list[Plan]], mebibytes: int) -> bool:
+    """Whether any plan fits under so many MiB."""
+    ceiling = mebibytes << 20
+    return any(plan.planned_bytes <= ceiling for plan in drafts(ceiling))

@@ -1,8 +1,9 @@
-"""Nominal rates: what costs are compared with. Data, so that the same command makes the same choices on every machine."""
+"""Nominal rates: what costs are compared with. Data, so that a command makes the same choices on every machine."""
 
 from __future__ import annotations
 
-# Decoded bytes per second that one worker reads, by storage class (calibrated on two cores of 2.4–2.6 GHz, file in the page cache).
+# Decoded bytes per second that one worker reads, by storage class (calibrated on two cores of 2.4–2.6 GHz, file in the
+# page cache).
 READ_RATE = {
     "memory": 4.0e9,
     "npy": 1.5e9,

@@ -102,9 +102,7 @@ def check_request(request: Request, spec: MatrixSpec) -> tuple[Request, tuple[st
     for name, allowed in _CHOICES.items():
         if getattr(request, name) not in allowed:
             choices = ", ".join(choice for choice in allowed if choice)
-            raise OptionError(
-                f"--{name} {getattr(request, name)} is not a choice", remedy=f"Choose one of: {choices}."
-            )
+            raise OptionError(f"--{name} {getattr(request, name)} is not a choice", remedy=f"Choose one of: {choices}.")
     _check_numbers(request)
     remarks = []
     least = min(spec.shape)
@@ -114,9 +112,10 @@ def check_request(request: Request, spec: MatrixSpec) -> tuple[Request, tuple[st
     if request.variance is not None:
         rank = request.max_rank
     if rank > least:
-        if request.rank is not None or request.variance is not None:
+        if request.rank is not None:
             remarks.append(
-                f"rank clipped from {show_count(rank)} to {show_count(least)}, all that a {show_shape(spec.shape)} matrix has"
+                f"rank clipped from {show_count(rank)} to {show_count(least)},"
+                f" all that a {show_shape(spec.shape)} matrix has"
             )
         rank = least
     return replace(request, rank=rank, samples=_settle_samples(request, spec)), tuple(remarks)
@@ -139,15 +138,23 @@ def _check_numbers(request: Request) -> None:
             continue
         if not isinstance(value, numbers.Integral) or isinstance(value, bool) or value < least:
             raise OptionError(
-                f"{option} must be a whole number of at least {least}, not {value!r}", remedy=f"Try {option} {max(least, 20)}."
+                f"{option} must be a whole number of at least {least}, not {value!r}",
+                remedy=f"Try {option} {max(least, 20)}.",
             )
     shares = {"variance": request.variance, "tolerance": request.tolerance}
     for name, share in shares.items():
         if share is None and name == "variance":
             continue
-        if not isinstance(share, numbers.Real) or isinstance(share, bool) or not math.isfinite(share) or not 0 < share <= 1:
+        if (
+            not isinstance(share, numbers.Real)
+            or isinstance(share, bool)
+            or not math.isfinite(share)
+            or not 0 < share <= 1
+        ):
             example = "0.95" if name == "variance" else "1e-3"
-            raise OptionError(f"--{name} must lie above 0 and at most 1, not {share!r}", remedy=f"Try --{name} {example}.")
+            raise OptionError(
+                f"--{name} must lie above 0 and at most 1, not {share!r}", remedy=f"Try --{name} {example}."
+            )
 
 
 def _settle_samples(request: Request, spec: MatrixSpec) -> Samples:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import threading
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from contextlib import contextmanager
 from typing import TYPE_CHECKING, TextIO
 
@@ -13,7 +13,7 @@ from bigsvd.units import show_bytes, show_seconds
 if TYPE_CHECKING:
     from rich.text import Text
 
-    from bigsvd.sweep import Listener, Progress
+    from bigsvd.sweep import Progress
 
 # Seconds between plain lines within a stage.
 PLAIN_EVERY = 10.0
@@ -130,6 +130,10 @@ class Reporter:
         if line:
             self._write(line)
 
+    def say(self, lines: Iterable[str]) -> None:
+        """Write lines that stay, above the live one."""
+        self._write("\n".join(lines))
+
     def line(self) -> str:
         """The present state; empty before anything happened."""
         with self._lock:
@@ -148,7 +152,7 @@ class Reporter:
 
 
 @contextmanager
-def show_progress(stream: TextIO, *, quiet: bool = False) -> Iterator[Listener | None]:
+def show_progress(stream: TextIO, *, quiet: bool = False) -> Iterator[Reporter | None]:
     """Report progress while the block runs.
 
     Parameters
@@ -161,7 +165,7 @@ def show_progress(stream: TextIO, *, quiet: bool = False) -> Iterator[Listener |
 
     Yields
     ------
-    Listener or None
+    Reporter or None
         What `bigsvd.decompose` takes as `progress`.
     """
     if quiet:

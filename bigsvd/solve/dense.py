@@ -9,7 +9,7 @@ ROWS = 8192
 
 
 def orthonormalise(columns: np.ndarray, basis: np.ndarray) -> np.ndarray:
-    """Orthonormal columns that span `columns` and are orthogonal to `basis`, by two rounds of block Gram–Schmidt and QR.
+    """Orthonormal columns that span `columns`, orthogonal to `basis`: two rounds of block Gram–Schmidt and QR.
 
     Parameters
     ----------
@@ -81,7 +81,7 @@ def triangle_svd(triangle: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
 
 
 def gram_eigen(gram: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Eigenvalues, decreasing and clipped at zero, and eigenvectors of a Hermitian matrix; the matrix is overwritten."""
+    """Eigenvalues, decreasing and clipped at zero, and eigenvectors of a Hermitian matrix, which is overwritten."""
     from scipy.linalg import eigh
 
     value, vector = eigh(gram, overwrite_a=True, check_finite=False)

@@ -1,4 +1,4 @@
-"""New directions for the next sweep: residuals of the leading Ritz vectors, test vectors carried on, fresh test vectors."""
+"""Directions of the next sweep: residuals of leading Ritz vectors, test vectors carried on, fresh test vectors."""
 
 from __future__ import annotations
 
@@ -50,12 +50,12 @@ def gaussian_directions(across: int, count: int, seed: int, dtype: np.dtype) -> 
 
 def test_vectors(chain: Chain, state: State, seed: int) -> np.ndarray:
     """The Gaussian block Ω of a chain, shape (across, vectors)."""
-    return gaussian_block(seed, chain.stream, state.across, chain.vectors, complex_entries=state.basis.dtype.kind == "c")
+    return gaussian_block(
+        seed, chain.stream, state.across, chain.vectors, complex_entries=state.basis.dtype.kind == "c"
+    )
 
 
-def grow_block(
-    state: State, ritz: Ritz, *, count: int, tests: int, limit: int, seed: int, sweep: int
-) -> np.ndarray:
+def grow_block(state: State, ritz: Ritz, *, count: int, tests: int, limit: int, seed: int, sweep: int) -> np.ndarray:
     """Directions of the next sweep, orthonormal and orthogonal to the basis.
 
     Parameters

@@ -81,16 +81,20 @@ def take_pilot(
 
     Notes
     -----
-    Cost: one read of the sample; randomized subspace iteration (Halko, Martinsson, Tropp, SIAM Rev. 53 (2011)) on it in memory.
+    Cost: one read of the sample; randomized subspace iteration (Halko, Martinsson, Tropp, SIAM Rev. 53 (2011)) on it in
+    memory.
     """
     stored = reader.dtype
     wide = np.dtype(np.complex128 if stored.kind == "c" else np.float64)
     single = np.dtype(np.complex64 if stored.kind == "c" else np.float32)
-    waves = [[(panel, panel + 1) for panel in panels[first : first + leaves]] for first in range(0, len(panels), leaves)]
+    waves = [
+        [(panel, panel + 1) for panel in panels[first : first + leaves]] for first in range(0, len(panels), leaves)
+    ]
     base = SweepTask(
         reader, preparation, wide, "basis",
-        add_lines=preparation.across_features and (preparation.center or preparation.scale), learn=preparation.across_features and preparation.scale,
-        line_features=not preparation.across_features and (preparation.center or preparation.scale),
+        add_lines=preparation.across_features and (preparation.center or preparation.scale),
+        learn=preparation.across_features and preparation.scale, line_features=not preparation.across_features and
+        (preparation.center or preparation.scale),
     )  # fmt: skip
     first = engine.sweep(base, waves)
     preparation = _first_statistics(first, preparation, single if may_be_single else wide)
@@ -117,7 +121,9 @@ def take_pilot(
     return Pilot(preparation, basis @ vector[:, ::-1], theta, last.energy * raise_scale, last.rounding, fits)
 
 
-def _normal_product(engine: Engine, task: SweepTask, basis: np.ndarray, waves: list[list[tuple[int, int]]]) -> np.ndarray:
+def _normal_product(
+    engine: Engine, task: SweepTask, basis: np.ndarray, waves: list[list[tuple[int, int]]]
+) -> np.ndarray:
     """AᴴA times a basis, on the sample."""
     sums = engine.sweep(replace(task, block=basis.astype(task.dtype)), waves)
     assert sums.products is not None

@@ -91,8 +91,9 @@ def learn(sums: Partial, preparation: Preparation) -> Learnt:
 
     Notes
     -----
-    ‖A‖² = ‖Ã‖² − m‖δ‖²; deviations from Σ|ã|² − m|δ|² about a shift near the mean. Constant means smallest = largest over the
-    whole file, never a deviation of zero. With deviations scaled to one, the energy is exactly (m − 1) × varying features.
+    ‖A‖² = ‖Ã‖² − m‖δ‖²; deviations from Σ|ã|² − m|δ|² about a shift near the mean. Constant means smallest = largest
+    over the whole file, never a deviation of zero. With deviations scaled to one, the energy is exactly (m − 1) ×
+    varying features.
     """
     lines = sums.lines
     across = _across(sums)
@@ -119,7 +120,9 @@ def learn(sums: Partial, preparation: Preparation) -> Learnt:
     return Learnt(offset, mean, scale, before / scale, int(constant.sum()), energy, sums.energy)
 
 
-def correct_products(products: np.ndarray, block: np.ndarray, learnt: Learnt, lines: int, *, centred: bool) -> np.ndarray:
+def correct_products(
+    products: np.ndarray, block: np.ndarray, learnt: Learnt, lines: int, *, centred: bool
+) -> np.ndarray:
     """Turn Σ ÃᴴÃB into AᴴA B', in place: Z −= m·conj(δ)(δᵀB), then the change of scale.
 
     Parameters

@@ -28,8 +28,8 @@ class TallVectors:
 
     Notes
     -----
-    Cost: each pass reads the scratch once. Method: Yamamoto, Nakatsukasa, Yanagisawa, Fukaya, ETNA 44 (2015); a second round
-    is made where the first finds a defect above √ε.
+    Cost: each pass reads the scratch once. Method: Yamamoto, Nakatsukasa, Yanagisawa, Fukaya, ETNA 44 (2015); a second
+    round is made where the first finds a defect above √ε.
     """
 
     def __init__(self, scratch: Scratch, state: State, ritz: Ritz, null: np.ndarray, seed: int) -> None:

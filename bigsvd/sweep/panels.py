@@ -36,7 +36,9 @@ class PanelReader:
 
     def buffer(self) -> np.ndarray:
         """Memory for the largest panel; nothing when panels are kept."""
-        height = 0 if self.keep else max(b - a for a, b in zip(self.geometry.edges, self.geometry.edges[1:], strict=False))
+        height = (
+            0 if self.keep else max(b - a for a, b in zip(self.geometry.edges, self.geometry.edges[1:], strict=False))
+        )
         return np.empty(height * self.geometry.across, self.dtype)
 
     def fetch(self, panel: int, buffer: np.ndarray) -> np.ndarray:
@@ -48,10 +50,7 @@ class PanelReader:
         if kept is not None:
             self.control.advance(size, read=0)
             return kept
-        if self.keep:
-            out = np.empty(shape, self.dtype)
-        else:
-            out = buffer[: shape[0] * shape[1]].reshape(shape)
+        out = np.empty(shape, self.dtype) if self.keep else buffer[: shape[0] * shape[1]].reshape(shape)
         self.source.read(rows, columns, out)
         if self.keep:
             self._kept[panel] = out

@@ -1,4 +1,4 @@
-"""The tall products Y = A·B on disk: blocks of columns written once, and the map from what is stored to the present basis."""
+"""The tall products Y = A·B on disk: blocks written once, and the map from what is stored to the present basis."""
 
 from __future__ import annotations
 
@@ -70,7 +70,7 @@ class Scratch:
             data, offset = data[done:], offset + done
 
     def read(self, start: int, stop: int, blocks: int | None = None) -> np.ndarray:
-        """Read lines start … stop of the first `blocks` blocks (all by default) side by side, shape (lines, columns)."""
+        """Read lines start … stop of the first `blocks` blocks (all by default), shape (lines, columns)."""
         chosen = self._files[:blocks]
         out = np.empty((stop - start, sum(columns for _, columns in chosen)), self.dtype)
         first = 0

@@ -1,0 +1,247 @@
+"""The sweeps of one run: what is read, prepared, checked, and learnt of means and scales on the way."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from itertools import pairwise
+from pathlib import Path
+
+import numpy as np
+
+from bigsvd.certify import SumDepth, gamma
+from bigsvd.errors import NonFiniteError, OptionError, SourceChangedError
+from bigsvd.plan import UNIT_LINES, Plan
+from bigsvd.prepare import Preparation
+from bigsvd.randomness import draw_without_repeat
+from bigsvd.solve import Learnt, Pilot, first_statistics, learn, take_pilot
+from bigsvd.source import Source
+from bigsvd.sweep import Control, Engine, PanelReader, Partial, Scratch, SweepTask
+from bigsvd.units import show_count
+
+# Panels whose first unit is recomputed in double, to measure rounding in single.
+ROUNDING_PANELS = 8
+STREAM_ROUNDING = 3
+
+
+class OverflowInSingleError(Exception):
+    """Squares of finite entries overflow single precision: the sweep must be made again in double."""
+
+
+@dataclass(eq=False)
+class Sweeps:
+    """Reads the matrix, as often as it is asked to.
+
+    Attributes
+    ----------
+    source : Source
+    plan : Plan
+    control : Control
+    scratch_folder : Path
+    made : int
+        Sweeps made so far.
+    energy, energy_rounding : float
+        ‖A‖²_F of the prepared matrix, and a bound of its rounding.
+    learnt : Learnt or None
+        Statistics of features that lie across the sweep.
+    line_mean, line_inverse : ndarray, shape (lines,), or None
+        Statistics of features that are lines.
+    """
+
+    source: Source
+    plan: Plan
+    control: Control
+    scratch_folder: Path
+    made: int = 0
+    energy: float = 0.0
+    energy_rounding: float = 0.0
+    learnt: Learnt | None = None
+    line_mean: np.ndarray | None = None
+    line_inverse: np.ndarray | None = None
+    line_constant: int = 0
+    _ledger: list[int] | None = field(default=None, repr=False)
+
+    def __post_init__(self) -> None:
+        complex_entries = self.plan.spec.dtype.kind == "c"
+        self.wide = np.dtype(np.complex128 if complex_entries else np.float64)
+        self.single = np.dtype(np.complex64 if complex_entries else np.float32)
+        self.work = self.wide
+        self.scratch = Scratch(self.scratch_folder, self.plan.geometry.lines, self.wide)
+        self.engine = Engine(self.plan.workers)
+        self.reader = PanelReader(self.source, self.plan.geometry, self.control, keep=self.plan.resident)
+        self.across_features = self.plan.geometry.lines_are_samples
+        self.preparation = Preparation(self.across_features, self.plan.centred, self.plan.scaled)
+
+    @property
+    def ones(self) -> bool:
+        """Whether sweeps carry a column of ones to centre exactly."""
+        return self.across_features and self.plan.centred
+
+    @property
+    def in_single(self) -> bool:
+        """Whether products are made in single precision."""
+        return self.work == self.single
+
+    @property
+    def units(self) -> int:
+        """Units of a whole sweep."""
+        return sum(-(-(stop - start) // UNIT_LINES) for start, stop in pairwise(self.plan.geometry.edges))
+
+    def take_mean(self) -> None:
+        """Hold one panel for the first sweep, and take a first mean and scale from it."""
+        panel = self.plan.pilot_panels[0]
+        self.control.begin("pilot", self.reader.decoded(panel))
+        self.reader.hold(panel)
+        held = self.reader.peek(panel)
+        if self.across_features:
+            lines = held if self.plan.geometry.axis == 0 else held.T
+            self.preparation = first_statistics(lines, self.preparation, self.wide)
+
+    def take_pilot(self, directions: int, *, may_be_single: bool) -> Pilot:
+        """Read the sample and solve it; later sweeps start from its mean and scales."""
+        plan = self.plan
+        panels = [self.reader.decoded(panel) for panel in plan.pilot_panels]
+        self.control.begin("pilot", sum(panels))
+        pilot = take_pilot(
+            PanelReader(self.source, plan.geometry, self.control, keep=True), self.engine, plan.pilot_panels, plan.leaves,
+            self.preparation, directions=directions, may_be_single=may_be_single, seed=plan.request.seed,
+        )  # fmt: skip
+        self.preparation = pilot.preparation
+        return pilot
+
+    def sweep(self, kind: str, block: np.ndarray | None) -> tuple[Partial, Learnt | None]:
+        """Read the whole matrix once.
+
+        Parameters
+        ----------
+        kind : str
+            ``basis``, ``gram`` or ``fold``.
+        block : ndarray, shape (across, b), or None
+            Columns to multiply, in working precision.
+
+        Returns
+        -------
+        sums : Partial
+        learnt : Learnt or None
+            Statistics of features that lie across the sweep, as this sweep found them.
+
+        Raises
+        ------
+        NonFiniteError, SourceChangedError
+        OverflowInSingleError
+            After which the caller asks again in double.
+        """
+        plan = self.plan
+        first = self.learnt is None and self.line_mean is None
+        self.made += 1
+        width = 0 if block is None else block.shape[1]
+        words = f"{self.scratch.map.shape[1]} + {width} columns" if width else "the whole spectrum"
+        self.control.begin("sweep", plan.spec.decoded_bytes, self.made, words)
+        sampled: frozenset[int] = frozenset()
+        if self.in_single:
+            count = min(ROUNDING_PANELS, plan.geometry.panels)
+            sampled = frozenset(draw_without_repeat(plan.request.seed, STREAM_ROUNDING, plan.geometry.panels, count))
+        target = self.scratch.add_block(width) if block is not None else 0
+        task = SweepTask(
+            self.reader, self.preparation, self.work, kind, block,
+            scratch=self.scratch if block is not None else None, target=target, ones=self.ones,
+            add_lines=self.across_features and (plan.centred or plan.scaled),
+            learn=first and self.across_features and plan.scaled,
+            line_features=not self.across_features and (plan.centred or plan.scaled), sampled=sampled,
+        )  # fmt: skip
+        sums = self.engine.sweep(task, plan.waves)
+        self._refuse_bad(sums)
+        self._refuse_change(sums)
+        if sums.overflow:
+            self._give_up_single(block is not None)
+        return sums, self._take_statistics(sums)
+
+    def _refuse_bad(self, sums: Partial) -> None:
+        """Refuse a matrix that holds NaN or infinity, with places."""
+        if not sums.bad:
+            return
+        row, column = sums.first_bad or (0, 0)
+        what = "value is" if sums.bad == 1 else "values are"
+        raise NonFiniteError(
+            f"{self.plan.spec.name}: {show_count(sums.bad)} {what} NaN or infinite, and a decomposition needs numbers",
+            evidence=[f"first at row {show_count(row)}, column {show_count(column)} (counted from 0)"],
+            remedy="Replace or drop them in the file, then run again.",
+        )
+
+    def _refuse_change(self, sums: Partial) -> None:
+        """Refuse a file that changed under the run: the words of a panel are not those of the first sweep."""
+        if self._ledger is not None and sums.ledger != self._ledger:
+            pairs = zip(self._ledger, sums.ledger or [], strict=True)
+            changed = [panel for panel, (before, now) in enumerate(pairs) if before != now]
+            rows, columns = self.plan.geometry.rectangle(changed[0])
+            raise SourceChangedError(
+                f"{self.plan.spec.name} changed under the run: sweep {self.made} read other values than sweep 1",
+                evidence=[
+                    f"{len(changed)} of {len(self._ledger)} panels differ, the first at rows {rows[0]:,}–{rows[1] - 1:,},"
+                    f" columns {columns[0]:,}–{columns[1] - 1:,}"
+                ],
+                remedy="Make sure that nothing writes to the file, then run again.",
+            )
+        self._ledger = sums.ledger
+
+    def _give_up_single(self, scratched: bool) -> None:
+        """Drop what overflowed; in double nothing can be done."""
+        if scratched:
+            self.scratch.drop_last_block()
+        if self.in_single:
+            self.work = self.wide
+            raise OverflowInSingleError
+        raise OptionError(
+            f"{self.plan.spec.name}: squares of its entries overflow double precision",
+            remedy="Multiply the matrix by a power of two such as 2**-500, then run again.",
+        )
+
+    def _take_statistics(self, sums: Partial) -> Learnt | None:
+        """Keep what this sweep says of means and scales; later sweeps are prepared with it."""
+        first = self.learnt is None and self.line_mean is None
+        depth = self.depth(1)
+        per_sum = gamma(depth.unit_lines + depth.additions + 4, complex_entries=depth.complex_entries)
+        if self.in_single:
+            per_sum = 2 * UNIT_LINES * 2.0**-24
+        self.energy_rounding = per_sum * sums.energy
+        if self.across_features:
+            learnt = learn(sums, self.preparation)
+            self.energy = learnt.energy
+            if first:
+                self.learnt = learnt
+            if self.plan.centred or self.plan.scaled:
+                self.preparation = self.preparation.learnt(learnt.mean, learnt.inverse_scale, self.work)
+            return learnt
+        self.energy = sums.energy
+        if first and sums.line_mean and sums.line_inverse_scale and sums.line_constant:
+            self.line_mean = np.concatenate(sums.line_mean)
+            self.line_inverse = np.concatenate(sums.line_inverse_scale)
+            self.line_constant = int(np.concatenate(sums.line_constant).sum())
+        return None
+
+    def depth(self, columns: int) -> SumDepth:
+        """How the sums of a sweep that folds so many columns are nested."""
+        plan, edges = self.plan, self.plan.geometry.edges
+        runs = [edges[first : stop + 1] for wave in plan.waves for first, stop in wave]
+        longest = max(run[-1] - run[0] for run in runs)
+        units = max(sum(-(-(stop - start) // UNIT_LINES) for start, stop in pairwise(run)) for run in runs)
+        levels = int(np.ceil(np.log2(max(2, plan.leaves)))) + len(plan.waves)
+        return SumDepth(
+            across=plan.geometry.across, unit_lines=UNIT_LINES, additions=units + levels, fold_rows=longest,
+            fold_columns=columns, folds=levels, complex_entries=self.wide.kind == "c",
+        )  # fmt: skip
+
+    def feature_statistics(self) -> tuple[np.ndarray, np.ndarray, int]:
+        """Mean and inverse scale of every feature in units of the file, and how many features are constant."""
+        features = self.plan.features
+        mean, inverse, constant = np.zeros(features), np.ones(features), 0
+        if self.across_features and self.learnt is not None:
+            mean, constant = self.learnt.mean, self.learnt.constant
+            if self.plan.scaled and self.learnt.inverse_scale is not None:
+                inverse = self.learnt.inverse_scale
+        elif self.line_mean is not None and self.line_inverse is not None:
+            mean, inverse, constant = self.line_mean, self.line_inverse, self.line_constant
+        return (mean if self.plan.centred else np.zeros(features)), inverse, constant
+
+    def close(self) -> None:
+        """End the workers."""
+        self.engine.close()
