@@ -1,6 +1,6 @@
 """What the certificate says after every sweep, for five spectra: the table in docs/method.md.
 
-Each matrix is 6,000 × 1,500 with exactly known singular values, held in memory and swept as a file would be. The columns:
+Each matrix is 6,000 × 1,500 with exactly known singular values, in memory, swept as a file would be. The columns:
 
     index       widest interval by index, u_i − θ_i over θ_i, of the components that are not in the bulk
     residual    widest interval by residuals alone, √2·‖r_i‖ over θ_i
@@ -39,7 +39,6 @@ class Case:
 
     values: Callable[[np.ndarray], np.ndarray]
     clear: int = RANK
-
 
 
 def noise(count: int) -> np.ndarray:
