@@ -8,7 +8,7 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import fields, replace
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 
@@ -33,6 +33,8 @@ from bigsvd.solve import TallVectors, column_phases
 from bigsvd.source import MatrixSpec, Source, check_complete, open_source
 from bigsvd.sweep import Control, Listener, one_blas_thread
 from bigsvd.units import parse_bytes, show_bytes
+
+Side = Literal["left", "right"]
 
 __all__ = ["decompose", "forecast", "open_factors", "open_matrix", "verify"]
 
@@ -314,7 +316,8 @@ def _write(
     """Write the factors: tall vectors from scratch, the others from memory, then everything that is known of them."""
     plan, certificate = outcome.plan, outcome.certificate
     rank = certificate.rank
-    tall_side, basis_side = ("left", "right") if plan.geometry.lines_are_samples else ("right", "left")
+    tall_side: Side = "left" if plan.geometry.lines_are_samples else "right"
+    basis_side: Side = "right" if plan.geometry.lines_are_samples else "left"
     tall = TallVectors(outcome.scratch, outcome.state, outcome.ritz, certificate.null, plan.request.seed)
     basis = outcome.state.used @ outcome.ritz.rotation[:, :rank]
     if tall_side == "right":

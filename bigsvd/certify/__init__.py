@@ -2,6 +2,7 @@
 
 from bigsvd.certify.certificate import STATES, Certificate, SliceCheck
 from bigsvd.certify.evidence import Evidence, WholeSpectrum
+from bigsvd.certify.intervals import BULK_WIDTH
 from bigsvd.certify.missed import CHAIN_FAILURE, ChainState, chain_bound, energy_bound, least_projection
 from bigsvd.certify.rounding import (
     SumDepth,
@@ -12,9 +13,10 @@ from bigsvd.certify.rounding import (
     product_rounding,
     tall_rounding,
 )
-from bigsvd.certify.verdict import certify, rounding_limited, spectrum_intervals
+from bigsvd.certify.verdict import certify, crowded, rounding_limited, spectrum_intervals
 
 __all__ = [
+    "BULK_WIDTH",
     "CHAIN_FAILURE",
     "STATES",
     "Certificate",
@@ -25,6 +27,7 @@ __all__ = [
     "WholeSpectrum",
     "certify",
     "chain_bound",
+    "crowded",
     "energy_bound",
     "fold_rounding",
     "gamma",

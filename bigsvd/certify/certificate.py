@@ -149,4 +149,5 @@ class Certificate:
             for check in facts["slices"]
         )
         rest = {name: value for name, value in facts.items() if name != "slices"}
-        return cls(**{name: np.asarray(arrays[name]) for name in _ARRAYS}, **rest, slices=slices)
+        parts: dict[str, Any] = {name: np.asarray(arrays[name]) for name in _ARRAYS}
+        return cls(**parts, **rest, slices=slices)

@@ -66,7 +66,7 @@ class Evidence:
     def residual_norms(self) -> np.ndarray:
         """‖S_i‖ with its rounding term, shape (L,)."""
         diagonal = np.clip(np.diag(self.residual_gram).real, 0, None)
-        return np.sqrt(diagonal) + self.product_rounding  # type: ignore[no-any-return]
+        return np.sqrt(diagonal) + self.product_rounding
 
     def block_residual(self, first: int, stop: int) -> float:
         """‖S restricted to columns first … stop‖₂ with its rounding term."""

@@ -1,4 +1,4 @@
-"""How large a singular value can hide outside the basis, by powers of AᴴA on Gaussian vectors that know nothing of it."""
+"""How large a singular value can hide outside the basis: powers of AᴴA on Gaussian vectors independent of it."""
 
 from __future__ import annotations
 

@@ -49,7 +49,7 @@ def index_bounds(evidence: Evidence) -> np.ndarray:
         rest = bound[i + 1 :]
         half = (theta_squared[i] - rest) / 2
         bound[i] = ((theta_squared[i] + rest) / 2 + np.hypot(half, coupling)).min()
-    return np.sqrt(bound) * (1 + 1e-15)  # type: ignore[no-any-return]
+    return np.sqrt(bound) * (1 + 1e-15)
 
 
 def _tail_norms(evidence: Evidence, width: int) -> np.ndarray:

@@ -75,7 +75,7 @@ def product_rounding(depth: SumDepth, frobenius: float, tall_norms: np.ndarray) 
     """
     own = gamma(depth.unit_lines + depth.additions + 4, complex_entries=depth.complex_entries)
     carried = gamma(depth.across + 4, complex_entries=depth.complex_entries)
-    return own * frobenius * tall_norms + carried * frobenius**2  # type: ignore[no-any-return]
+    return own * frobenius * tall_norms + carried * frobenius**2
 
 
 def fold_rounding(depth: SumDepth, frobenius: float) -> float:

@@ -50,10 +50,7 @@ def certify(evidence: Evidence, rank: int, reach: int, tolerance: float, *, stri
     scale = theta[0] if len(theta) and theta[0] > 0 else 1.0
     relative = np.where(null, top / scale, (top - lower) / np.where(null, 1.0, np.maximum(value, np.finfo(float).tiny)))
     state = np.full(rank, OPEN, np.int8)
-    crowded = np.array(
-        [i + reach < len(theta) and theta[i + reach] >= CROWD_RATIO * theta[i] for i in range(rank)], bool
-    )
-    state[crowded & ~null & (relative <= BULK_WIDTH)] = BULK
+    state[crowded(theta, rank, reach) & ~null & (relative <= BULK_WIDTH)] = BULK
     state[relative <= tolerance] = RESOLVED
     angles = bound_angles(evidence, upper, rank)
     angles.bound[null] = np.nan
@@ -87,6 +84,11 @@ def certify(evidence: Evidence, rank: int, reach: int, tolerance: float, *, stri
         tolerance_met=met,
         verdict=_words(state, null, relative, proved, tolerance, strict=strict),
     )
+
+
+def crowded(theta: np.ndarray, rank: int, reach: int) -> np.ndarray:
+    """Whether each of the leading values has a neighbour `reach` places further on within a tenth, shape (rank,)."""
+    return np.array([i + reach < len(theta) and theta[i + reach] >= CROWD_RATIO * theta[i] for i in range(rank)], bool)
 
 
 def _noise_floor(evidence: Evidence) -> float:

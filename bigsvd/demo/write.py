@@ -24,8 +24,8 @@ from bigsvd.errors import ResultError, ResultExistsError
 from bigsvd.units import show_bytes
 
 PLANTED_FILE = "planted.npz"
-FRAME_CHUNK = (500, 2_560)  # ten image rows of 500 frames, 2.6 MB
-SAMPLE_CHUNK = (2_000, 2_048)  # 16 MB
+FRAME_CHUNK = (200, 4_096)  # sixteen image rows of 200 frames, 1.6 MB
+SAMPLE_CHUNK = (500, 2_048)  # 4 MB
 GZIP_LEVEL = 1
 
 Progress = Callable[[str, int, int], None]

@@ -64,7 +64,7 @@ class Sweeps:
         complex_entries = self.plan.spec.dtype.kind == "c"
         self.wide = np.dtype(np.complex128 if complex_entries else np.float64)
         self.single = np.dtype(np.complex64 if complex_entries else np.float32)
-        self.work = self.wide
+        self.work: np.dtype = self.wide
         self.scratch = Scratch(self.scratch_folder, self.plan.geometry.lines, self.wide)
         self.engine = Engine(self.plan.workers)
         self.reader = PanelReader(self.source, self.plan.geometry, self.control, keep=self.plan.resident)
@@ -102,7 +102,8 @@ class Sweeps:
         panels = [self.reader.decoded(panel) for panel in plan.pilot_panels]
         self.control.begin("pilot", sum(panels))
         pilot = take_pilot(
-            PanelReader(self.source, plan.geometry, self.control, keep=True), self.engine, plan.pilot_panels, plan.leaves,
+            PanelReader(self.source, plan.geometry, self.control, keep=True),
+            self.engine, plan.pilot_panels, plan.leaves,
             self.preparation, directions=directions, may_be_single=may_be_single, seed=plan.request.seed,
         )  # fmt: skip
         self.preparation = pilot.preparation
@@ -176,8 +177,8 @@ class Sweeps:
             raise SourceChangedError(
                 f"{self.plan.spec.name} changed under the run: sweep {self.made} read other values than sweep 1",
                 evidence=[
-                    f"{len(changed)} of {len(self._ledger)} panels differ, the first at rows {rows[0]:,}–{rows[1] - 1:,},"
-                    f" columns {columns[0]:,}–{columns[1] - 1:,}"
+                    f"{len(changed)} of {len(self._ledger)} panels differ, the first at rows"
+                    f" {rows[0]:,}–{rows[1] - 1:,}, columns {columns[0]:,}–{columns[1] - 1:,}"
                 ],
                 remedy="Make sure that nothing writes to the file, then run again.",
             )

@@ -5,6 +5,7 @@ from __future__ import annotations
 import time
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -117,7 +118,7 @@ def _inner_checks(factors: Factors) -> list[Check]:
     ]
 
 
-def _defect(vectors) -> float:  # type: ignore[no-untyped-def]
+def _defect(vectors: Any) -> float:
     """‖XᴴX − I‖_F of an array on disk."""
     rank = vectors.shape[1]
     gram = np.zeros((rank, rank), np.complex128 if np.dtype(vectors.dtype).kind == "c" else np.float64)
@@ -157,7 +158,7 @@ def _outer_checks(factors: Factors, source: Source, plan: Plan, control: Control
         off = np.zeros(len(values))
         for start in range(0, geometry.lines, ROWS):
             stop = min(start + ROWS, geometry.lines)
-            vectors = tall[start:stop]
+            vectors = np.asarray(tall[start:stop])
             difference = scratch.read(start, stop) - (vectors.conj() if conjugate else vectors) * values
             off += np.sum(np.abs(difference) ** 2, axis=0)
     finally:

@@ -1,7 +1,7 @@
 """Pure arithmetic on specs: axis, panels, route, widths, memory, time. Opens nothing."""
 
 from bigsvd.plan.geometry import Geometry
-from bigsvd.plan.memory import TALL_LINES, UNIT_COLUMNS, UNIT_LINES, MemoryTerm, fold_lines
+from bigsvd.plan.memory import TALL_LINES, UNIT_LINES, MemoryTerm, fold_lines, tile_columns
 from bigsvd.plan.plan import NOMINAL_SHARE_OF_SLICES, Plan, make_plan
 from bigsvd.plan.rates import BASE_BYTES, READ_RATE
 from bigsvd.plan.request import DEFAULT_MAX_RANK, DEFAULT_RANK, Request
@@ -14,7 +14,6 @@ __all__ = [
     "NOMINAL_SHARE_OF_SLICES",
     "READ_RATE",
     "TALL_LINES",
-    "UNIT_COLUMNS",
     "UNIT_LINES",
     "Geometry",
     "MemoryTerm",
@@ -25,4 +24,5 @@ __all__ = [
     "fold_lines",
     "krylov_widths",
     "make_plan",
+    "tile_columns",
 ]

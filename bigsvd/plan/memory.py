@@ -7,17 +7,17 @@ from dataclasses import dataclass
 import numpy as np
 
 from bigsvd.plan.geometry import Geometry
-from bigsvd.plan.rates import BASE_BYTES
+from bigsvd.plan.rates import BASE_BYTES, BLAS_BYTES
 from bigsvd.plan.widths import Widths
 from bigsvd.source import MatrixSpec
 from bigsvd.units import show_bytes, show_count
 
-# A panel is converted and multiplied in units: single-precision sums stay within 512 terms (docs/method.md), and a unit
-# of this many lines and columns stays in the cache. Wider matrices are converted once for each of the two products.
+# A panel is converted and multiplied in units: single-precision sums stay within 512 terms (docs/method.md).
 UNIT_LINES = 512
-UNIT_COLUMNS = 8192
-# Lines gathered before a Householder fold: several times the width, so that the old triangle is a small part of the
-# work.
+# Units wider than this are cut into tiles, and converted once for each of the two products.
+WIDEST_UNIT = 8192
+TILE_COLUMNS = 4096
+# Lines gathered before a Householder fold: several times the width, so that the old triangle is a small part of it.
 LEAST_FOLD_LINES = 1024
 # Lines of Y that are turned into left vectors at a time (solve reads so many).
 TALL_LINES = 4096
@@ -36,6 +36,11 @@ def fold_lines(width: int) -> int:
     return max(LEAST_FOLD_LINES, 2 * width)
 
 
+def tile_columns(across: int) -> int:
+    """Columns of a unit that are converted at a time."""
+    return across if across <= WIDEST_UNIT else TILE_COLUMNS
+
+
 def memory_terms(
     spec: MatrixSpec,
     geometry: Geometry,
@@ -45,6 +50,7 @@ def memory_terms(
     workers: int,
     leaves: int,
     pilot_bytes: int,
+    hold_pilot: bool,
     resident: bool,
     result_bytes: int,
 ) -> tuple[MemoryTerm, ...]:
@@ -60,6 +66,8 @@ def memory_terms(
         Segments per wave; two waves may be alive.
     pilot_bytes : int
         The sample held for the pilot.
+    hold_pilot : bool
+        Whether the sample is held until the first sweep reaches it.
     resident : bool
         Whether the whole matrix is held in its stored type.
     result_bytes : int
@@ -79,14 +87,16 @@ def memory_terms(
     panel = 0 if resident else geometry.panel_bytes
     chunk = int(np.prod(spec.chunks)) * spec.dtype.itemsize
     decode = 0 if resident or spec.storage in ("memory", "npy", "graph") else 3 * chunk
-    unit = UNIT_LINES * (min(n, UNIT_COLUMNS) + 3 * widths.block + widths.limit) * entry + widths.block * column
+    unit = (UNIT_LINES * (tile_columns(n) + 3 * widths.block + widths.limit) + widths.block * tile_columns(n)) * entry
     fold = 3 * (fold_lines(folded) + folded) * folded * entry
     leaf = widths.block * column + (widths.limit + 1) ** 2 * entry + 4 * column
     if route == "gram":
         leaf = max(leaf, n * column + 4 * column)
     if route in ("tsqr", "direct"):
         leaf = max(leaf, triangle + 4 * column)
-    live = 2 * leaves
+    # Two waves of leaves exist, but a sum waits only for a neighbour that is still running: every worker holds one of
+    # its own and leaves at most one waiting on each level of the tree; the root of the earlier wave waits to be folded.
+    live = min(2 * leaves, workers * leaves.bit_length() + 1)
     held = [MemoryTerm(BASE_BYTES, "interpreter and libraries")]
     if resident:
         held.append(MemoryTerm(spec.decoded_bytes, "the whole matrix, held in its stored type"))
@@ -95,15 +105,25 @@ def memory_terms(
             2 * widths.limit * column, f"basis and its products, {show_count(widths.limit)} columns of {show_count(n)}"
         )
     )
-    pilot = [MemoryTerm(pilot_bytes, "pilot sample in its stored type")] if pilot_bytes else []
+    # The sample multiplies fewer columns than a sweep, and is given back before the first.
+    small = min(widths.start, widths.block) * column
+    pilot = [
+        MemoryTerm(pilot_bytes, "pilot sample in its stored type"),
+        MemoryTerm(workers * (unit + BLAS_BYTES), f"working buffers of {workers} workers"),
+        MemoryTerm((live + 4) * small, "sums and directions of the sample"),
+    ]
     reading = [
         MemoryTerm(
             workers * (panel + decode), f"{workers} panels in flight, {show_bytes(panel)} each, and their decoding"
         ),
-        MemoryTerm(workers * (unit + fold), f"working buffers of {workers} workers: conversion, products, QR"),
+        MemoryTerm(
+            workers * (unit + fold + BLAS_BYTES), f"working buffers of {workers} workers: conversion, products, QR"
+        ),
         MemoryTerm(live * leaf, f"partial sums of up to {live} segments, {show_bytes(leaf)} each"),
-        MemoryTerm(2 * widths.block * column, f"columns being multiplied, {show_count(widths.block)}"),
+        MemoryTerm(widths.block * column, f"columns being multiplied, {show_count(widths.block)}"),
     ]
+    if hold_pilot and pilot_bytes:
+        reading.append(MemoryTerm(pilot_bytes, "the panel that gave the first mean"))
     dense = n * column if whole_spectrum else 0
     growing = [
         MemoryTerm(5 * widths.block * column + 6 * dense, "new directions: residuals and their QR, small dense steps")
@@ -115,7 +135,7 @@ def memory_terms(
             "left vectors from scratch, writing and reading back the result",
         )
     ]
-    phases = [pilot + reading, reading, growing, writing]
+    phases = [reading, growing, writing, *([pilot] if pilot_bytes else [])]
     return (*held, *max(phases, key=lambda terms: sum(term.size for term in terms)))
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import os
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
@@ -24,6 +25,8 @@ FEWEST_PILOT_PANELS = 8
 NOMINAL_WORKERS = 2
 # Sweeps a block Krylov run is expected to take after the pilot (1/i spectrum, docs/method.md).
 NOMINAL_SWEEPS = 3
+# Sweeps that restarts cost, by the growths there is room for.
+RESTART_SWEEPS = {3: 0.0, 2: 0.3, 0: 1.5}
 # Longest short side for which a route that computes the whole spectrum is considered.
 LONGEST_SHORT_SIDE = 6000
 STREAM_PILOT, STREAM_SLICES = 1, 2
@@ -243,8 +246,8 @@ def _candidates(
             continue
         seen.add(geometry.panels)
         pilot = _pilot(spec, geometry, request, route, ceiling)
-        for tight in (False, True):
-            widths = _widths(request, across, route, tight)
+        for growths in (3, 2, 0):
+            widths = _widths(request, across, route, growths)
             for leaves in _LEAVES:
                 for resident in (True, False):
                     if (resident and not holdable) or (not resident and route == "direct"):
@@ -269,16 +272,16 @@ def _candidates(
                             0,
                             result_bytes=result_bytes,
                         )
-                        seconds, sweeps = _nominal(draft, tight)
+                        seconds, sweeps = _nominal(draft, growths)
                         yield replace(
                             draft, memory=_terms(draft, workers), nominal_seconds=seconds, nominal_sweeps=sweeps
                         )
 
 
-def _widths(request: Request, across: int, route: str, tight: bool) -> Widths:
-    """Columns of the basis for a route."""
+def _widths(request: Request, across: int, route: str, growths: int) -> Widths:
+    """Columns of the basis for a route, with room for so many growths before a restart."""
     assert request.rank is not None
-    widths = krylov_widths(request.rank, across, tight=tight or route != "krylov")
+    widths = krylov_widths(request.rank, across, growths=growths if route == "krylov" else 0)
     if route != "krylov":
         closing = closing_width(request.rank, across)
         return replace(widths, start=closing, limit=min(across, closing + widths.grow + 2 * widths.test))
@@ -307,14 +310,15 @@ def _mean_only(route: str, geometry: Geometry) -> bool:
 def _terms(plan: Plan, workers: int) -> tuple[MemoryTerm, ...]:
     """Memory terms of a plan with so many workers."""
     pilot_bytes = len(plan.pilot_panels) * plan.geometry.panel_bytes
+    held = plan.mean_only and not plan.resident
     return memory_terms(
         plan.spec, plan.geometry, plan.route, plan.widths,
-        workers=workers, leaves=plan.leaves, pilot_bytes=pilot_bytes, resident=plan.resident,
+        workers=workers, leaves=plan.leaves, pilot_bytes=pilot_bytes, hold_pilot=held, resident=plan.resident,
         result_bytes=plan.result_bytes,
     )  # fmt: skip
 
 
-def _nominal(plan: Plan, tight: bool) -> tuple[float, int]:
+def _nominal(plan: Plan, growths: int) -> tuple[float, int]:
     """Seconds at nominal rates, and the sweeps they count."""
     m, n = plan.geometry.lines, plan.geometry.across
     factor = COMPLEX_FACTOR if plan.spec.dtype.kind == "c" else 1.0
@@ -325,13 +329,14 @@ def _nominal(plan: Plan, tight: bool) -> tuple[float, int]:
     # Fewer segments leave a core idle at the end of each wave.
     idle = 1 + 0.05 / plan.leaves
     if plan.route == "krylov":
-        sweeps = NOMINAL_SWEEPS + (1 if tight else 0) + (1 if plan.mean_only else 0)
+        sweeps = NOMINAL_SWEEPS + RESTART_SWEEPS[growths] + (1 if plan.mean_only else 0)
         columns = widths.start + widths.test + (sweeps - 1) * (widths.grow + 2 * widths.test)
         pilot = 0.0 if plan.mean_only else len(plan.pilot_panels) / max(1, plan.geometry.panels)
         work = 4.0 * m * n * columns / product * (1 + 2 * pilot)
         work += factor * sweeps * m * widths.limit**2 / QR_RATE
         seconds = (read * (1 + pilot) + (sweeps - 1) * again + work) / plan.workers * idle
-        return seconds + factor * sweeps * 6 * n * widths.limit * widths.block / PRODUCT_RATE["double"], sweeps
+        dense = factor * sweeps * 6 * n * widths.limit * widths.block / PRODUCT_RATE["double"]
+        return seconds + dense, math.ceil(sweeps)
     closing = again + 4.0 * m * n * widths.start * factor / PRODUCT_RATE["double"]
     rate = PRODUCT_RATE["double"] if plan.route == "gram" else QR_RATE
     first = read + 2.0 * m * n * n * factor / rate

@@ -44,18 +44,26 @@ class Widths:
         return min(self.limit, max(self.start + self.test, self.grow + 2 * self.test))
 
 
-def krylov_widths(rank: int, across: int, *, tight: bool = False) -> Widths:
+def krylov_widths(rank: int, across: int, *, growths: int = 3) -> Widths:
     """Widths for `rank` wanted components of a matrix `across` wide.
 
-    A tight choice spends less memory and more sweeps. The limit is what three sweeps use; the least that works is one
-    block beside the kept Ritz vectors.
+    Parameters
+    ----------
+    rank : int
+    across : int
+    growths : int
+        How often the basis may grow before it is restarted; 0 for the narrowest blocks and the least memory: one block
+        beside the kept Ritz vectors. A tighter choice spends more sweeps.
+
+    Returns
+    -------
+    Widths
     """
-    keep = rank + crowd_reach(rank) + 10 if rank >= 10 else 2 * rank + 20
-    start = keep if tight else max(keep, 3 * rank + 10)
-    grow = max(rank + 10, keep // 2) if tight else keep
+    keep = rank + crowd_reach(rank) + 10
+    start = max(keep, 3 * rank + 10) if growths else keep
+    grow = keep if growths else max(rank + 10, keep // 2)
     least = max(start + TEST_VECTORS, keep + grow + 2 * TEST_VECTORS)
-    roomy = start + TEST_VECTORS + 2 * (grow + 2 * TEST_VECTORS)
-    limit = least if tight else roomy
+    limit = max(least, start + TEST_VECTORS + growths * (grow + 2 * TEST_VECTORS))
     return Widths(
         min(start, across), min(TEST_VECTORS, across), min(grow, across), min(keep, across), min(limit, across)
     )

@@ -33,7 +33,7 @@ def orthonormalise(columns: np.ndarray, basis: np.ndarray) -> np.ndarray:
         columns = np.linalg.qr(columns)[0]
     # After the second round a dependent column may still lean on the basis by its own rounding.
     _subtract_projection(columns, basis)
-    return np.linalg.qr(columns)[0]  # type: ignore[no-any-return]
+    return np.linalg.qr(columns)[0]
 
 
 def _subtract_projection(columns: np.ndarray, basis: np.ndarray) -> np.ndarray:
@@ -42,7 +42,7 @@ def _subtract_projection(columns: np.ndarray, basis: np.ndarray) -> np.ndarray:
     for first in range(0, len(columns), ROWS):
         rows = slice(first, first + ROWS)
         columns[rows] -= basis[rows] @ coefficients
-    return coefficients  # type: ignore[no-any-return]
+    return coefficients
 
 
 def split(columns: np.ndarray, basis: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -63,7 +63,7 @@ def split(columns: np.ndarray, basis: np.ndarray) -> tuple[np.ndarray, np.ndarra
 
 def combine_columns(tall: np.ndarray, coefficients: np.ndarray) -> np.ndarray:
     """Tall · coefficients."""
-    return tall @ coefficients  # type: ignore[no-any-return]
+    return tall @ coefficients
 
 
 def triangle_svd(triangle: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

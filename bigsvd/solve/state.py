@@ -208,7 +208,7 @@ class State:
         """Some rows of Z W − B W Θ²."""
         part = self.used_products[rows] @ rotation
         part -= (self.used[rows] @ rotation) * theta**2
-        return part  # type: ignore[no-any-return]
+        return part
 
     def restart(self, keep: int, ritz: Ritz, scratch: Scratch) -> None:
         """Compress the basis to its leading Ritz vectors; nothing is multiplied again."""

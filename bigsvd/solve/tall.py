@@ -64,7 +64,7 @@ class TallVectors:
                 self.seed, STREAM_NULL, stop - start, missing, first_row=start, complex_entries=self.complex
             )
             vectors[:, self.null] = gauss / np.sqrt(self.scratch.lines)
-        return (vectors @ self.mixing) * self.phase  # type: ignore[no-any-return]
+        return (vectors @ self.mixing) * self.phase
 
     def blocks(self) -> Iterator[tuple[int, np.ndarray]]:
         """Yield (first line, lines of U) over all lines."""
@@ -90,16 +90,16 @@ def _inverse_root(gram: np.ndarray) -> np.ndarray:
     """C with (UC)ᴴ(UC) = I: the inverse of the Cholesky factor, or of the symmetric root where that fails."""
     try:
         lower = np.linalg.cholesky(gram)
-        return np.linalg.inv(lower.conj().T)  # type: ignore[no-any-return]
+        return np.linalg.inv(lower.conj().T)
     except np.linalg.LinAlgError:
         value, vector = np.linalg.eigh(gram)
-        return vector / np.sqrt(np.maximum(value, value[-1] * 1e-14))  # type: ignore[no-any-return]
+        return vector / np.sqrt(np.maximum(value, value[-1] * 1e-14))
 
 
 def _phases(entries: np.ndarray) -> np.ndarray:
     """Factors that make entries real and positive."""
     modulus = np.abs(entries)
-    return np.where(modulus > 0, entries.conj() / np.where(modulus > 0, modulus, 1.0), 1.0)  # type: ignore[no-any-return]
+    return np.where(modulus > 0, entries.conj() / np.where(modulus > 0, modulus, 1.0), 1.0)
 
 
 def column_phases(vectors: np.ndarray) -> np.ndarray:

@@ -110,7 +110,7 @@ def fold(blocks: Sequence[np.ndarray]) -> np.ndarray:
     Method: tall-skinny QR, Demmel, Grigori, Hoemmen, Langou, SIAM J. Sci. Comput. 34 (2012).
     """
     stacked = np.concatenate(blocks)
-    triangle = np.linalg.qr(stacked, mode="r")
+    triangle = np.asarray(np.linalg.qr(stacked, mode="r"))
     columns = stacked.shape[1]
     if len(triangle) < columns:
         triangle = np.concatenate([triangle, np.zeros((columns - len(triangle), columns), triangle.dtype)])

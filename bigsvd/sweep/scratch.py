@@ -63,7 +63,7 @@ class Scratch:
     def write(self, block: int, start: int, values: np.ndarray) -> None:
         """Write lines start … of a block."""
         handle, columns = self._files[block]
-        data = memoryview(np.ascontiguousarray(values, self.dtype)).cast("B")
+        data = np.ascontiguousarray(values, self.dtype).data.cast("B")
         offset = start * columns * self.dtype.itemsize
         while data:
             done = os.pwrite(handle, data, offset)
@@ -76,7 +76,7 @@ class Scratch:
         first = 0
         for handle, columns in chosen:
             part = np.empty((stop - start, columns), self.dtype)
-            view = memoryview(part).cast("B")
+            view = part.data.cast("B")
             offset = start * columns * self.dtype.itemsize
             while view:
                 done = os.preadv(handle, [view], offset)

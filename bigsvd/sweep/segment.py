@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 import threading
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 
 import numpy as np
 
-from bigsvd.plan import UNIT_COLUMNS, UNIT_LINES, fold_lines
+from bigsvd.plan import UNIT_LINES, fold_lines, tile_columns
 from bigsvd.prepare import LineStatistics, Preparation, line_statistics, prepare_unit
 from bigsvd.sweep.panels import PanelReader
 from bigsvd.sweep.partial import Partial, fold
@@ -99,7 +100,7 @@ class _Segment:
         self.task = task
         self.across = task.reader.geometry.across
         self.raw = task.reader.buffer()
-        self.tile = min(self.across, UNIT_COLUMNS)
+        self.tile = tile_columns(self.across)
         self.work = np.empty(UNIT_LINES * self.tile, task.dtype)
         self.sums = Partial(ledger=[])
         if task.line_features:
@@ -193,7 +194,9 @@ class _Segment:
         sums.line_constant.append(statistics.constant)
         return statistics
 
-    def _tiles(self, unit, statistics, dtype):  # type: ignore[no-untyped-def]
+    def _tiles(
+        self, unit: np.ndarray, statistics: LineStatistics | None, dtype: np.dtype
+    ) -> Iterator[tuple[slice, np.ndarray]]:
         """Yield (columns, converted tile) across a unit; a single tile stays in the working buffer."""
         work = self.work if dtype == self.task.dtype else np.empty(UNIT_LINES * self.tile, dtype)
         for first in range(0, self.across, self.tile):

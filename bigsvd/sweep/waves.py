@@ -60,11 +60,8 @@ class Engine:
 
     def _run(self, task: SweepTask, wave: Wave) -> Partial:
         """Compute one wave."""
-        import dask
-
-        root = wave_graph(task, wave)
-        (result,) = dask.compute(root, scheduler="threads", pool=self._pool)
-        return result  # type: ignore[no-any-return]
+        result: Partial = wave_graph(task, wave).compute(scheduler="threads", pool=self._pool)
+        return result
 
     def close(self) -> None:
         """End the threads."""

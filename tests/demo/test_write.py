@@ -58,7 +58,7 @@ def test_files_hold_what_is_reported_of_them(demo):
     with h5py.File(stack.path) as opened:
         frames = opened[stack.matrix]
         assert (frames.shape, frames.dtype) == (stack.shape, stack.dtype) == ((400, 160 * 256), np.dtype("u2"))
-        assert (frames.compression, frames.shuffle, frames.chunks) == ("gzip", True, (400, 2560))
+        assert (frames.compression, frames.shuffle, frames.chunks) == ("gzip", True, (200, 4096))
         assert [name for name in opened["camera"] if opened["camera"][name].ndim == 2] == ["frames"]
     array = zarr.open_array(str(water.path), mode="r")
     assert (array.shape, array.dtype) == (water.shape, water.dtype) == ((1000, 8192), np.dtype("f4"))
