@@ -42,6 +42,8 @@ from bigsvd.sweep import Control, Scratch
 
 # Rounding above this share of the tolerance: double.
 ROUNDING_SHARE = 0.25
+# An interval this many times as wide as its rounding is not wide by rounding.
+ROUNDING_PART = 4
 # Rank that --variance starts with, before it is known how many are needed.
 FIRST_GUESS = 50
 
@@ -253,7 +255,9 @@ class _Run:
             used, products, sums.triangle, sweeps.scratch, error, centred=sweeps.ones, exact=exact
         )  # fmt: skip
         self.tall_error = float(np.hypot(self.tall_error, tall * growth)) + gamma(depth.fold_columns * 2) * frobenius
-        carry_chains(self.state, sweeps.energy, self.plan.request.seed, column_scale)
+        carry_chains(
+            self.state, sweeps.energy, self.plan.request.seed, column_scale, measured=self.rounding_how == "measured"
+        )
 
     def _whole_spectrum(self) -> np.ndarray:
         """Sweep for the whole spectrum; return the leading right vectors, whose sweep closes the route."""
@@ -368,13 +372,14 @@ class _Run:
         if self.plan.request.precision == "single":
             return self.state.width >= self.state.across
         theta = np.maximum(evidence.theta[: certificate.rank], 1e-150)
-        width = (
-            2 * (evidence.product_rounding[: certificate.rank] / theta / np.sqrt(2) + evidence.value_rounding) / theta
-        )
+        rounding = evidence.product_rounding[: certificate.rank] / theta / np.sqrt(2) + evidence.value_rounding
+        width = certificate.upper - certificate.lower
         waiting = certificate.state == STATES.index("open")
         if self.plan.request.strict:
             waiting |= certificate.state == STATES.index("bulk")
-        return bool(np.any(width[waiting] > ROUNDING_SHARE * self.plan.request.tolerance))
+        spent = 2 * rounding > ROUNDING_SHARE * self.plan.request.tolerance * theta
+        # While convergence is what is missing, single goes on.
+        return bool(np.any(waiting & spent & (width < ROUNDING_PART * 2 * rounding)))
 
     def _go_over_to_double(self, ritz: Ritz, widths: Widths) -> np.ndarray:
         """Begin again in double from the present Ritz vectors and their residuals."""

@@ -9,7 +9,7 @@ import numpy as np
 
 from bigsvd.certify import SliceCheck
 from bigsvd.drive.run import Outcome, run
-from bigsvd.plan import Plan, make_plan
+from bigsvd.plan import SLICE_ENTRIES, Plan, make_plan
 from bigsvd.prepare import Preparation, line_statistics, prepare_unit
 from bigsvd.randomness import draw_without_repeat
 from bigsvd.source import MatrixSpec, Source
@@ -19,9 +19,8 @@ STREAM_SLICES = 2
 MOST_SLICES = 3
 # All slices together read at most this share of the matrix.
 SLICE_SHARE = 0.01
-# Entries and the product of longer side and square of the shorter that keep an exact decomposition within about a
+# The product of longer side and square of the shorter that keep an exact decomposition within about a
 # second.
-MOST_ENTRIES = 1_500_000
 MOST_FLOPS = 2.5e8
 LEAST_PANELS = 4
 SLICE_RANK = 10
@@ -89,7 +88,7 @@ def draw_slices(spec: MatrixSpec, axis: int, seed: int) -> tuple[Rectangle, ...]
     count = min(MOST_SLICES, int(allowed // (unit[0] * unit[1])))
     if count == 0:
         return ()
-    size = _grow(unit, spec.shape, min(allowed / count, MOST_ENTRIES), axis)
+    size = _grow(unit, spec.shape, min(allowed / count, SLICE_ENTRIES), axis)
     places = [
         draw_without_repeat(
             seed, STREAM_SLICES + 64 * (side + 1), max(1, (spec.shape[side] - size[side]) // unit[side] + 1), count

@@ -21,6 +21,9 @@ TILE_COLUMNS = 4096
 LEAST_FOLD_LINES = 1024
 # Lines of Y that are turned into left vectors at a time (solve reads so many).
 TALL_LINES = 4096
+# Entries of a slice that is checked exactly, and the copies of them that both ways of solving it hold.
+SLICE_ENTRIES = 600_000
+SLICE_COPIES = 8
 
 
 @dataclass(frozen=True)
@@ -135,7 +138,9 @@ def memory_terms(
             "left vectors from scratch, writing and reading back the result",
         )
     ]
-    phases = [reading, growing, writing, *([pilot] if pilot_bytes else [])]
+    slices = SLICE_ENTRIES * SLICE_COPIES * entry + workers * BLAS_BYTES
+    checking = [MemoryTerm(slices, "a slice, decomposed the same way and by LAPACK")]
+    phases = [reading, growing, checking, writing, *([pilot] if pilot_bytes else [])]
     return (*held, *max(phases, key=lambda terms: sum(term.size for term in terms)))
 
 

@@ -95,7 +95,9 @@ def grow_block(state: State, ritz: Ritz, *, count: int, tests: int, limit: int, 
     return np.hstack([block, orthonormalise(test_vectors(chain, state, seed), beside)])
 
 
-def carry_chains(state: State, energy: float, seed: int, column_scale: np.ndarray | None) -> None:
+def carry_chains(
+    state: State, energy: float, seed: int, column_scale: np.ndarray | None, *, measured: bool = False
+) -> None:
     """Apply (I−P)AᴴA once more to every chain whose vectors lie in the basis.
 
     Parameters
@@ -107,6 +109,8 @@ def carry_chains(state: State, energy: float, seed: int, column_scale: np.ndarra
     seed : int
     column_scale : ndarray, shape (across,), or None
         Factors by which the first sweep's coordinates were changed (scaling learnt in it).
+    measured : bool
+        Rounding of the products was measured, and is independent from column to column.
     """
     for chain in state.chains:
         outside = state.basis[:, : chain.prefix]
@@ -127,7 +131,12 @@ def carry_chains(state: State, energy: float, seed: int, column_scale: np.ndarra
         tau -= outside @ (outside.conj().T @ tau)
         captured = float(np.linalg.norm(state.triangle[:, : chain.prefix]) ** 2)
         left = max(0.0, energy - captured) + 1e-13 * energy
-        rounding = float(np.linalg.norm(state.product_error)) * float(np.linalg.norm(coefficients, 2))
+        # Each column of Z errs by its own bound; test vectors hardly touch the columns of large values.
+        weights = np.abs(coefficients)
+        if measured:
+            rounding = float(np.linalg.norm(state.product_error[:, None] * weights))
+        else:
+            rounding = float(np.linalg.norm(state.product_error @ weights))
         lost = left * (chain.lost + missing) + rounding
         norm = float(np.linalg.norm(tau, 2))
         chain.power += 1

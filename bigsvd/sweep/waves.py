@@ -97,6 +97,8 @@ def _fold_wave(total: Partial | None, wave: Partial) -> Partial:
 @contextmanager
 def one_blas_thread() -> Iterator[None]:
     """Limit every BLAS pool to one thread: workers bring the parallelism, and thread counts change bits."""
+    # SciPy brings a BLAS of its own; a limit set before it is loaded would not reach it.
+    import scipy.linalg  # noqa: F401
     from threadpoolctl import threadpool_limits
 
     with threadpool_limits(limits=1):
