@@ -66,16 +66,18 @@ def page_lines(record: dict[str, Any]) -> list[str]:
         "# Performance",
         "",
         f"Written by `scripts/bench` on {record['date']}. {machine['processors']} processors ({machine['processor']}), "
-        f"{show_bytes(machine['memory_bytes'])} of memory, {machine['system']}, Python {machine['python']}; {versions}.",
+        f"{show_bytes(machine['memory_bytes'])} of memory, {machine['system']}, Python {machine['python']}; "
+        f"{versions}.",
         "",
         f"Rank {record['rank']}, {prepared}. Every time is that of a whole process, from its start to its factors in "
-        f"files: median of {record['runs']} interleaved runs (lowest–highest, how many){busy}. All files were in the page "
-        "cache. bigsvd proves its intervals to a tolerance of 1e-3, and checks them on slices of the file, within that "
-        "time; the others prove nothing, and their number of iterations was found by trying against the known truth.",
+        f"files: median of {record['runs']} interleaved runs (lowest–highest, how many){busy}. All files were in the "
+        "page cache. bigsvd proves its intervals to a tolerance of 1e-3, and checks them on slices of the file, within "
+        "that time; the others prove nothing: their number of iterations was found by trying against the known truth.",
         "",
-        "*value error*: largest relative error of the singular values; *angle*: largest angle between the spaces of right "
-        "vectors, radians; both against factors that another program computed in double (`bench/exact.py`). *peak*: "
-        f"largest resident size; *over*: above the ceiling of {show_bytes(record['memory_bytes'])}, which only bigsvd can "
+        "*value error*: largest relative error of the singular values; *angle*: largest angle between the spaces of "
+        "right vectors, radians; both against factors that another program computed in double (`bench/exact.py`). "
+        f"*peak*: largest resident size; *over*: above the ceiling of {show_bytes(record['memory_bytes'])}, which only "
+        "bigsvd can "
         "be given. dask reads bands of about 16 MB and multiplies with one thread a task, its fastest setting here. Of "
         "equal error is what reaches the larger of bigsvd's error and 1e-6, where single precision ends.",
         "",
