@@ -57,14 +57,11 @@ class Candidate:
         For `bench/worker.py`.
     once : bool
         Only for the record: a single run.
-    rival : bool
-        Takes part in the choice of the best setting.
     """
 
     name: str
     arguments: list[str]
     once: bool = False
-    rival: bool = False
     seconds: list[float] = field(default_factory=list)
     processor_seconds: list[float] = field(default_factory=list)
     peak_bytes: list[int] = field(default_factory=list)
