@@ -4,6 +4,7 @@ from bigsvd.certify.certificate import STATES, Certificate, SliceCheck
 from bigsvd.certify.evidence import Evidence, WholeSpectrum
 from bigsvd.certify.intervals import BULK_WIDTH
 from bigsvd.certify.missed import CHAIN_FAILURE, ChainState, chain_bound, energy_bound, least_projection
+from bigsvd.certify.order import upper_ends
 from bigsvd.certify.rounding import (
     SumDepth,
     fold_rounding,
@@ -12,6 +13,7 @@ from bigsvd.certify.rounding import (
     measured_rounding,
     product_rounding,
     tall_rounding,
+    triangle_rounding,
 )
 from bigsvd.certify.verdict import certify, crowded, rounding_limited, spectrum_intervals
 
@@ -38,4 +40,6 @@ __all__ = [
     "rounding_limited",
     "spectrum_intervals",
     "tall_rounding",
+    "triangle_rounding",
+    "upper_ends",
 ]

@@ -65,6 +65,8 @@ class Certificate:
     state : ndarray of int8, shape (k,)
         Index into ``STATES``: resolved (width within the tolerance), open, or in the bulk.
     index_proved : ndarray of bool, shape (k,)
+        Interval i is about σ_i, and either a gap further on is proved (so that nothing was missed above it) or the
+        interval is within the tolerance.
     angle_bound : ndarray, shape (k,)
         Upper bound of the angle between each vector (for tied components: the subspace of the tie) and the
         true one, radians, the larger of left and right; NaN where there is none.

@@ -49,6 +49,8 @@ class Evidence:
     energy : float
         ‖A‖²_F.
     whole : WholeSpectrum or None
+    ends : ndarray, shape (L + 1,), or None
+        Upper ends by index where they are known already (`order.upper_ends`, and what earlier sweeps proved).
     """
 
     theta: np.ndarray
@@ -61,6 +63,7 @@ class Evidence:
     failure_probability: float
     energy: float
     whole: WholeSpectrum | None = None
+    ends: np.ndarray | None = None
 
     @property
     def residual_norms(self) -> np.ndarray:

@@ -61,7 +61,8 @@ def choose_intervals(evidence: Evidence, upper: np.ndarray, rank: int, tolerance
     Intervals
     """
     theta = evidence.theta[:rank]
-    floor = np.maximum(theta, np.finfo(float).tiny)
+    # Relative widths only rank the choices; a value of zero must not overflow them.
+    floor = np.maximum(theta, max(float(theta[0]) if rank else 0.0, 1e-150) * 1e-30)
     by_index = _index_intervals(evidence, upper, rank)
     index_width = np.minimum((by_index[1] - by_index[0]) / floor, 1e9)
     best_key = _merit(index_width, tolerance, rank)

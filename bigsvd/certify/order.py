@@ -10,6 +10,30 @@ from bigsvd.certify.evidence import Evidence
 _PLACES = 48
 
 
+def upper_ends(evidence: Evidence, earlier: np.ndarray | None = None) -> np.ndarray:
+    """Upper ends by index from everything that is known: this basis, a whole spectrum, earlier sweeps.
+
+    Parameters
+    ----------
+    evidence : Evidence
+    earlier : ndarray, shape (any,), or None
+        Ends proved with earlier bases. They are facts about A, and stay true when the basis is restarted.
+
+    Returns
+    -------
+    ndarray, shape (L + 1,)
+        u with σ_{i+1} ≤ u[i].
+    """
+    upper = index_bounds(evidence)
+    known = [] if evidence.whole is None else [evidence.whole.value + evidence.whole.error]
+    if earlier is not None:
+        known.append(earlier)
+    for ends in known:
+        count = min(len(ends), len(upper))
+        upper[:count] = np.minimum(upper[:count], ends[:count])
+    return upper
+
+
 def index_bounds(evidence: Evidence) -> np.ndarray:
     """Upper bounds of the singular values by index; the lower bound of σ_i is θ_i (interlacing).
 

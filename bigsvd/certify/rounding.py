@@ -49,17 +49,17 @@ def gamma(terms: float, *, complex_entries: bool = False) -> float:
 
 
 def tall_rounding(depth: SumDepth, frobenius: float, width: int) -> float:
-    """Bound of the error of the singular values of R: rounding of Y and of the Householder folds.
+    """Bound ‖ΔY‖_F of the rounding of Y = AB: γ‖A‖_F‖B‖_F, with ‖B‖_F = √width."""
+    return gamma(depth.across + 4, complex_entries=depth.complex_entries) * frobenius * float(np.sqrt(width))
 
-    Column by column the folds err by γ̃_{rows·columns}‖y‖ (Higham, Theorem 19.4), summed over the chain of folds.
+
+def triangle_rounding(depth: SumDepth, norm: float) -> float:
+    """Bound of the error of the singular values of R, ‖R‖_F = norm: the chain of folds, and its own decomposition.
+
+    Column by column a fold errs by γ̃_{rows·columns}‖y‖ (Higham, Theorem 19.4), summed over the chain.
     """
-    product = gamma(depth.across + 4, complex_entries=depth.complex_entries)
-    folded = gamma(
-        depth.fold_columns * (depth.fold_rows + 2.0 * depth.fold_columns * depth.folds),
-        complex_entries=depth.complex_entries,
-    )
-    # ‖ΔY‖_F over all columns: ‖Y‖_F ≤ ‖A‖_F and ‖B‖_F ≤ √width.
-    return (product * np.sqrt(width) + folded) * frobenius
+    rows = depth.fold_rows + 2.0 * depth.fold_columns * depth.folds
+    return gamma(depth.fold_columns * (rows + 10.0), complex_entries=depth.complex_entries) * norm
 
 
 def product_rounding(depth: SumDepth, frobenius: float, tall_norms: np.ndarray) -> np.ndarray:

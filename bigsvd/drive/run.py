@@ -23,6 +23,8 @@ from bigsvd.certify import (
     product_rounding,
     rounding_limited,
     tall_rounding,
+    triangle_rounding,
+    upper_ends,
 )
 from bigsvd.drive.sweeps import OverflowInSingleError, Sweeps
 from bigsvd.drive.whole import WholeSweep, gram_is_enough, sweep_fold, sweep_gram
@@ -124,9 +126,12 @@ class _Run:
     plan: Plan
     sweeps: Sweeps
     tall_error: float = 0.0
+    fold_error: float = 0.0
     rounding_how: str = "proved"
     whole: WholeSweep | None = None
     chains_made: int = 0
+    relied: bool = False
+    proved_ends: np.ndarray = field(default_factory=lambda: np.zeros(0))
     remarks: list[str] = field(default_factory=list)
 
     def __post_init__(self) -> None:
@@ -142,7 +147,7 @@ class _Run:
         while True:
             self._sweep_basis()
             ritz = self.state.ritz()
-            evidence = self._evidence(ritz)
+            evidence = self._with_ends(self._evidence(ritz))
             reached = self._settle_rank(evidence)
             rank = min(self.rank, len(evidence.theta))
             certificate = certify(evidence, rank, crowd_reach(rank), request.tolerance, strict=request.strict)
@@ -156,7 +161,7 @@ class _Run:
         mean, inverse, constant = self.sweeps.feature_statistics()
         return Outcome(
             self.plan, self.state, ritz, evidence, certificate, self.sweeps.scratch, mean, inverse, constant,
-            self.sweeps.made, "single" if self.sweeps.in_single else "double", tuple(self.remarks),
+            self.sweeps.made, "single" if self.sweeps.in_single else "double", (*self.sweeps.remarks, *self.remarks),
         )  # fmt: skip
 
     def _first_block(self) -> np.ndarray:
@@ -254,7 +259,9 @@ class _Run:
         growth = self.state.absorb(
             used, products, sums.triangle, sweeps.scratch, error, centred=sweeps.ones, exact=exact
         )  # fmt: skip
-        self.tall_error = float(np.hypot(self.tall_error, tall * growth)) + gamma(depth.fold_columns * 2) * frobenius
+        self.tall_error = float(np.hypot(self.tall_error, tall * growth))
+        # Every sweep folds all of Y anew, so only its own fold counts.
+        self.fold_error = triangle_rounding(depth, float(np.linalg.norm(sums.triangle))) * growth
         carry_chains(
             self.state, sweeps.energy, self.plan.request.seed, column_scale, measured=self.rounding_how == "measured"
         )
@@ -298,7 +305,7 @@ class _Run:
         top = float(theta[0]) if len(theta) else 0.0
         defect = state.basis_defect()
         depth = sweeps.depth(state.triangle.shape[0])
-        value_rounding = self.tall_error + defect * top + tall_rounding(depth, top * np.sqrt(len(theta)), 1)
+        value_rounding = self.tall_error + self.fold_error + defect * top
         weights = np.abs(ritz.rotation)
         if self.rounding_how == "measured":
             product = np.sqrt((weights**2).T @ state.product_error**2)
@@ -311,17 +318,23 @@ class _Run:
             missed, how, probability, sweeps.energy, None if self.whole is None else self.whole.spectrum,
         )  # fmt: skip
 
+    def _with_ends(self, evidence: Evidence) -> Evidence:
+        """Add the upper ends by index, with what earlier sweeps proved of them."""
+        ends = upper_ends(evidence, self.proved_ends)
+        self.proved_ends = np.concatenate([ends, self.proved_ends[len(ends) :]])
+        return replace(evidence, ends=ends)
+
     def _missed(self, theta: np.ndarray, value_rounding: float) -> tuple[float, str, float]:
         """The best bound on what lies outside the basis."""
         if self.state.width >= self.state.across:
-            return 0.0, "the basis spans the whole space", 0.0
+            return 0.0, "the basis spans the whole space", self.chains_made * CHAIN_FAILURE if self.relied else 0.0
         # Deterministic bounds first: of equal ones, the stronger statement is kept.
         left = energy_bound(self.sweeps.energy, theta, self.sweeps.energy_rounding, value_rounding)
-        best = left, "energy that the factors leave", 0.0
+        best = left, "energy that the factors leave"
         if self.whole is not None:
             next_value = self.whole.missed(min(self.plan.widths.start, self.plan.geometry.across))
             if next_value < best[0]:
-                best = next_value, "next value of the whole spectrum", 0.0
+                best = next_value, "next value of the whole spectrum"
         for chain in self.state.chains:
             bound = chain_bound(
                 ChainState(
@@ -329,9 +342,10 @@ class _Run:
                 )
             )
             if bound < best[0]:
-                how = f"{chain.vectors} Gaussian test vectors, power {chain.power} of AᴴA"
-                best = bound, how, self.chains_made * CHAIN_FAILURE
-        return best
+                best = bound, f"{chain.vectors} Gaussian test vectors, power {chain.power} of AᴴA"
+                self.relied = True
+        # Ends proved in an earlier sweep may rest on test vectors even where the present bound does not.
+        return *best, self.chains_made * CHAIN_FAILURE if self.relied else 0.0
 
     def _finished(self, evidence: Evidence, certificate: Certificate, reached: bool) -> bool:
         """Whether to stop here."""

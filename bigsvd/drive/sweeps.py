@@ -45,6 +45,8 @@ class Sweeps:
         Statistics of features that lie across the sweep.
     line_mean, line_inverse : ndarray, shape (lines,), or None
         Statistics of features that are lines.
+    remarks : list of str
+        What the sweeps found worth saying.
     """
 
     source: Source
@@ -58,6 +60,7 @@ class Sweeps:
     line_mean: np.ndarray | None = None
     line_inverse: np.ndarray | None = None
     line_constant: int = 0
+    remarks: list[str] = field(default_factory=list)
     _ledger: list[int] | None = field(default=None, repr=False)
 
     def __post_init__(self) -> None:
@@ -182,6 +185,8 @@ class Sweeps:
                 ],
                 remedy="Make sure that nothing writes to the file, then run again.",
             )
+        if self._ledger is None and sums.beyond:
+            self.remarks.append("integers beyond 2⁵³ were rounded to double precision")
         self._ledger = sums.ledger
 
     def _give_up_single(self, scratched: bool) -> None:

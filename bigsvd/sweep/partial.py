@@ -42,6 +42,8 @@ class Partial:
         Stored row and column of the first.
     overflow : bool
         Finite entries whose squares overflow the working precision.
+    beyond : bool
+        64-bit integers that double precision cannot hold exactly, beyond 2⁵³.
     """
 
     lines: int = 0
@@ -61,6 +63,7 @@ class Partial:
     bad: int = 0
     first_bad: tuple[int, int] | None = None
     overflow: bool = False
+    beyond: bool = False
 
 
 def combine(first: Partial, second: Partial) -> Partial:
@@ -72,6 +75,7 @@ def combine(first: Partial, second: Partial) -> Partial:
     first.energy += second.energy
     first.bad += second.bad
     first.overflow |= second.overflow
+    first.beyond |= second.beyond
     if second.first_bad is not None:
         first.first_bad = min(first.first_bad or second.first_bad, second.first_bad)
     for name in ("line_sum", "square_sum", "products", "gram", "rounding"):
@@ -109,7 +113,8 @@ def fold(blocks: Sequence[np.ndarray]) -> np.ndarray:
     -----
     Method: tall-skinny QR, Demmel, Grigori, Hoemmen, Langou, SIAM J. Sci. Comput. 34 (2012).
     """
-    stacked = np.concatenate(blocks)
+    # A single block is not copied once more: LAPACK's own two copies are what memory was planned for.
+    stacked = blocks[0] if len(blocks) == 1 else np.concatenate(blocks)
     triangle = np.asarray(np.linalg.qr(stacked, mode="r"))
     columns = stacked.shape[1]
     if len(triangle) < columns:

@@ -16,6 +16,7 @@ from bigsvd.sweep.scratch import Scratch
 
 # Single-precision sums run over at most this many terms before they are added up in double.
 SINGLE_TERMS = 512
+EXACT_INTEGERS = 2**53
 
 
 @dataclass(frozen=True, eq=False)
@@ -144,6 +145,8 @@ class _Segment:
         if task.only_count.is_set():
             self._count_bad(lines, start)
             return
+        if raw.dtype.kind in "iu" and raw.dtype.itemsize == 8:
+            self.sums.beyond |= bool(raw.max(initial=0) > EXACT_INTEGERS or raw.min(initial=0) < -EXACT_INTEGERS)
         if task.learn:
             self._extremes(lines)
         for offset in range(0, len(lines), UNIT_LINES):
