@@ -65,7 +65,7 @@ def streamed_factors(
     triangle = np.zeros((0, basis.shape[1]))
     for _, band in _bands(matrix, rows):
         product = band @ basis - mean @ basis
-        triangle = np.linalg.qr(np.vstack([triangle, product]), mode="r")
+        triangle = np.asarray(np.linalg.qr(np.vstack([triangle, product]), mode="r"))
     _, values, rotation = np.linalg.svd(triangle)
     right = basis @ rotation.T
     return values[:width], right[:, : min(count, width)]

@@ -76,6 +76,7 @@ def page_lines(record: dict[str, Any]) -> list[str]:
         "",
         "*value error*: largest relative error of the singular values; *angle*: largest angle between the spaces of "
         "right vectors, radians; both against factors that another program computed in double (`bench/exact.py`). "
+        "*processor s*: seconds of all threads, user and system together, which other programs disturb least. "
         f"*peak*: largest resident size; *over*: above the ceiling of {show_bytes(record['memory_bytes'])}, which only "
         "bigsvd can "
         "be given. dask reads bands of about 16 MB and multiplies with one thread a task, its fastest setting here. Of "

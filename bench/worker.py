@@ -101,7 +101,8 @@ def run_svds(given: argparse.Namespace) -> dict[str, Any]:
     mean = _mean(matrix, bands) if given.centred else np.zeros(matrix.shape[1])
 
     def band(place: slice) -> np.ndarray:
-        return np.asarray(matrix[place]) - mean
+        entries: np.ndarray = np.asarray(matrix[place]) - mean
+        return entries
 
     def forward(vector: np.ndarray) -> np.ndarray:
         return np.concatenate([band(place) @ vector for place in bands])
@@ -169,13 +170,16 @@ def _mean(matrix: Any, bands: list[slice]) -> np.ndarray:
     total = np.zeros(matrix.shape[1])
     for place in bands:
         total += np.asarray(matrix[place]).sum(axis=0, dtype="f8")
-    return total / matrix.shape[0]
+    total /= matrix.shape[0]
+    return total
 
 
 def _save(path: Path, left: np.ndarray | None, values: np.ndarray, right: np.ndarray) -> None:
     """Keep the factors; left vectors only where the candidate makes them."""
-    kept = {"singular_values": values, "right_vectors": right}
-    np.savez(path, **kept if left is None else {**kept, "left_vectors": left})
+    if left is None:
+        np.savez(path, singular_values=values, right_vectors=right)
+    else:
+        np.savez(path, singular_values=values, right_vectors=right, left_vectors=left)
 
 
 if __name__ == "__main__":

@@ -124,7 +124,7 @@ def test_files_are_made_once_and_warmed_whole(kind: str, tmp_path: Path) -> None
     assert warm(path) == sum(part.stat().st_size for part in parts)
 
 
-@pytest.mark.parametrize("name", ["bigsvd", "dask"])
+@pytest.mark.parametrize("name", ["bigsvd", "dask", "svds", "incremental"])
 def test_candidates_find_the_truth_of_a_small_file(
     name: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
@@ -135,7 +135,8 @@ def test_candidates_find_the_truth_of_a_small_file(
     assert '"peak_bytes"' in capsys.readouterr().out
     with np.load(tmp_path / "out.npz") as found:
         errors = measure.errors_of(found["singular_values"], found["right_vectors"], true_values[:5], true_right)
-    assert errors.value < 1e-7
+    # IncrementalPCA is given single precision, 300 rows of it.
+    assert errors.value < (300 * 2.0**-24 if name == "incremental" else 1e-7)
     assert errors.angle < 1e-5
 
 
