@@ -344,7 +344,12 @@ def _write(
             tall_side: float(np.linalg.norm(gram - np.eye(rank))),
             basis_side: float(np.linalg.norm(basis.conj().T @ basis - np.eye(rank))),
         }
-        certificate = replace(certificate, left_defect=defects["left"], right_defect=defects["right"], slices=checks)
+        sound = all(check.within_bounds for check in checks)
+        certificate = replace(
+            certificate, left_defect=defects["left"], right_defect=defects["right"], slices=checks,
+            tolerance_met=certificate.tolerance_met and sound,
+            verdict=certificate.verdict if sound else f"{certificate.verdict}; bounds broken on slices of the file",
+        )  # fmt: skip
         return writer.finish(
             singular_values=certificate.value,
             column_mean=outcome.mean,

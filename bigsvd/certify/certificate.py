@@ -33,13 +33,14 @@ class SliceCheck:
     rows, columns : (int, int)
         The half-open rectangle, in stored order.
     rank : int
-        Components compared.
+        Components resolved in the slice.
     value_difference : float
-        Largest |σ_i − σ_i(LAPACK)| / σ_1.
+        Largest |σ_i − σ_i(LAPACK)| / σ_1 of these.
     angle : float
-        Largest principal angle between the leading right subspaces cut at proved gaps, radians.
+        Largest angle between vectors (of ties: subspaces) with a proved bound and the exact ones, radians; NaN for
+        none.
     within_bounds : bool
-        Every interval held its true value, every angle its bound.
+        Every interval held its true value, every angle its bound, in the bulk too.
     """
 
     rows: tuple[int, int]

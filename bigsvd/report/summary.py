@@ -96,7 +96,7 @@ def slice_words(slices: tuple[SliceCheck, ...]) -> str:
     largest = max(((rows[1] - rows[0], columns[1] - columns[0]) for rows, columns in _places(slices)), key=np.prod)
     text = (
         f"{len(slices)} of the file, up to {show_shape(largest)}, decomposed the same way and exactly by LAPACK: "
-        f"values differ by at most {show_up(values)} of the largest{turned}; "
+        f"values of resolved components differ by at most {show_up(values)} of the largest{turned}; "
     )
     if not broken:
         return f"{text}every bound held"
