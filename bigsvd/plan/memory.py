@@ -99,7 +99,8 @@ def memory_terms(
         leaf = max(leaf, triangle + 4 * column)
     # Two waves of leaves exist, but a sum waits only for a neighbour that is still running: every worker holds one of
     # its own and leaves at most one waiting on each level of the tree; the root of the earlier wave waits to be folded.
-    live = min(2 * leaves, workers * leaves.bit_length() + 1)
+    # Beside them the caller holds the total of all earlier waves.
+    live = min(2 * leaves, workers * leaves.bit_length() + 1) + 1
     held = [MemoryTerm(BASE_BYTES, "interpreter and libraries")]
     if resident:
         held.append(MemoryTerm(spec.decoded_bytes, "the whole matrix, held in its stored type"))
@@ -123,6 +124,8 @@ def memory_terms(
             workers * (unit + fold + BLAS_BYTES), f"working buffers of {workers} workers: conversion, products, QR"
         ),
         MemoryTerm(live * leaf, f"partial sums of up to {live} segments, {show_bytes(leaf)} each"),
+        # The caller folds one wave while the workers are at the next: two triangles stacked, and LAPACK's two copies.
+        MemoryTerm(6 * triangle, "folding one wave upon the earlier ones"),
         MemoryTerm(widths.block * column, f"columns being multiplied, {show_count(widths.block)}"),
     ]
     if hold_pilot and pilot_bytes:

@@ -206,7 +206,9 @@ MEASURED = """
 import json, re, resource, sys
 import numpy as np
 import bigsvd
+from bigsvd.plan import geometry
 path, options, held, limit = sys.argv[1], json.loads(sys.argv[2]), int(sys.argv[3]), int(sys.argv[4])
+geometry.WAVE_SECONDS = float(sys.argv[5])
 if limit:
     resource.setrlimit(resource.RLIMIT_DATA, (limit, limit))
 source = np.load(path) if held else path
@@ -222,9 +224,12 @@ linux = pytest.mark.skipif(
 )
 
 
-def measure(path: Path, *, held: bool = False, limit: int = 0, **options: Any) -> dict[str, Any]:
+def measure(
+    path: Path, *, held: bool = False, limit: int = 0, wave_seconds: float = 10.0, **options: Any
+) -> dict[str, Any]:
     """Decompose in a process of its own and return what was measured."""
-    words = [sys.executable, "-c", MEASURED, str(path), json.dumps(options), str(int(held)), str(limit)]
+    words = [sys.executable, "-c", MEASURED, str(path), json.dumps(options)]
+    words += [str(int(held)), str(limit), str(wave_seconds)]
     done = subprocess.run(words, capture_output=True, text=True, timeout=120, check=False)
     assert done.returncode == 0, done.stderr
     facts: dict[str, Any] = json.loads(done.stdout)
@@ -275,6 +280,15 @@ MEMORY_CASES = [
 def test_resident_size_stays_below_the_least_plan(name: str, options: dict[str, Any], files: dict[str, Path]) -> None:
     least = least_ceiling(files[name], **options)
     assert_as_planned(measure(files[name], memory=f"{least}MiB", **options))
+
+
+@linux
+@pytest.mark.parametrize("route", ["gram", "tsqr"])
+def test_sums_of_several_waves_fit_beside_the_workers(route: str, files: dict[str, Path]) -> None:
+    # A wave of one panel: the caller folds one wave while the workers fold the next.
+    options = {"route": route, "axis": "rows", "rank": 5, "panel_lines": 2500}
+    least = least_ceiling(files["signal.zarr"], **options)
+    assert_as_planned(measure(files["signal.zarr"], memory=f"{least}MiB", wave_seconds=1e-9, **options))
 
 
 @linux
