@@ -215,6 +215,7 @@ class _Side:
             "name": best.name,
             "ratio": best.median / own.median,
             "processor_ratio": best.processor_median / own.processor_median,
+            "fastest_ratio": min(best.seconds) / min(own.seconds),
         }
 
     def _run(self, candidate: Candidate) -> bool:

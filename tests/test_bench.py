@@ -177,7 +177,7 @@ def test_page_says_what_was_missed() -> None:
     case = {
         **{"name": "hdf5-plain-inverse-1x1", "title": "plain", "decoded_bytes": 10, "stored_bytes": 10},
         **{"table": ["| a |"], "candidates": [own], "failed": [{"name": "other", "message": ["it broke"]}]},
-        "best": {"name": "peer", "ratio": 1.5, "processor_ratio": 1.2},
+        "best": {"name": "peer", "ratio": 1.5, "processor_ratio": 1.2, "fastest_ratio": 1.4},
     }
     record = {
         **{"date": "2026-01-01", "machine": page.machine_facts(), "rank": 20, "memory_bytes": 2**30},
