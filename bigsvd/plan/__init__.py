@@ -1,9 +1,10 @@
 """Pure arithmetic on specs: axis, panels, route, widths, memory, time. Opens nothing."""
 
+from bigsvd.plan.choose import make_plan
 from bigsvd.plan.geometry import Geometry
 from bigsvd.plan.memory import SLICE_ENTRIES, TALL_LINES, UNIT_LINES, MemoryTerm, fold_lines, tile_columns
-from bigsvd.plan.plan import NOMINAL_SHARE_OF_SLICES, Plan, make_plan
-from bigsvd.plan.rates import BASE_BYTES, READ_RATE
+from bigsvd.plan.plan import Plan
+from bigsvd.plan.rates import BASE_BYTES, NOMINAL_SHARE_OF_SLICES, READ_RATE
 from bigsvd.plan.request import DEFAULT_MAX_RANK, DEFAULT_RANK, Request
 from bigsvd.plan.widths import Widths, crowd_reach, krylov_widths
 

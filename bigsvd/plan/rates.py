@@ -25,3 +25,6 @@ COMPLEX_FACTOR = 4.0
 BASE_BYTES = 120 * 2**20
 # Packing buffers that BLAS keeps for every thread that multiplies, bytes.
 BLAS_BYTES = 12 * 2**20
+
+# Share of the matrix that the exact check on slices reads, for the estimate of bytes.
+NOMINAL_SHARE_OF_SLICES = 0.01

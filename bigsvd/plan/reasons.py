@@ -1,0 +1,90 @@
+"""Why a plan is what it is, in words."""
+
+from __future__ import annotations
+
+from bigsvd.plan.plan import FEWEST_PILOT_PANELS, Plan
+from bigsvd.plan.request import Request
+from bigsvd.units import show_bytes, show_count, show_seconds, show_shape
+
+
+def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str, str], ...]:
+    """Why this axis, these panels, this route and width."""
+    spec, geometry = best.spec, best.geometry
+    other = [plan for plan in found if plan.geometry.axis != geometry.axis]
+    along = ("rows", "columns")[geometry.axis]
+    if request.axis != "auto":
+        why = "as asked"
+    elif not other:
+        why = "the other axis does not fit under the ceiling"
+    else:
+        rival = min(plan.nominal_seconds for plan in other)
+        why = f"nominally {show_seconds(best.nominal_seconds)} against {show_seconds(rival)} along the other axis"
+    axis = f"panels are ranges of {along}; {why}"
+    lines = geometry.edges[1] - geometry.edges[0]
+    panels = (
+        f"{show_count(geometry.panels)} panels of {show_count(lines)} {along}, {show_bytes(geometry.panel_bytes)} each"
+    )
+    if geometry.amplification > 1.001:
+        panels += (
+            f"; whole chunks of {show_shape(spec.chunks)} do not fit under the ceiling, so panels are parts of chunks"
+            f" and each sweep decodes {geometry.amplification:.2f} × the matrix"
+        )
+    elif spec.chunks[geometry.axis] > 1:
+        panels += f", whole chunks of {show_count(spec.chunks[geometry.axis])}"
+    rivals = {plan.route: plan.nominal_seconds for plan in sorted(found, key=lambda plan: -plan.nominal_seconds)}
+    words = {
+        "direct": "the matrix fits in memory: it is read once, folded by QR, and LAPACK does the rest",
+        "gram": f"the short side is {show_count(geometry.across)}: one sweep builds AᴴA in double, one closes",
+        "tsqr": f"the short side is {show_count(geometry.across)}: one sweep folds R by Householder QR, one closes",
+        "krylov": "a pilot finds the first directions, each sweep adds a block Krylov step and certifies",
+    }[best.route]
+    if request.route != "auto":
+        words += "; as asked"
+    elif len(rivals) > 1:
+        words += "; nominal times: " + ", ".join(f"{name} {show_seconds(rivals[name])}" for name in reversed(rivals))
+    if best.resident and best.route != "direct":
+        words += "; the matrix fits in memory, so only the first sweep reads the file"
+    reasons = [("axis", axis), ("panels", panels), ("route", words)]
+    if best.route == "krylov":
+        reasons.append(("pilot", _pilot_words(best)))
+        reasons.append(
+            (
+                "width",
+                f"starts with {best.widths.start} + {best.widths.test} test columns, grows by up to "
+                f"{best.widths.grow + 2 * best.widths.test}, restarts at {best.widths.limit}",
+            )
+        )
+    if not best.may_be_single:
+        why = (
+            f"products of {spec.dtype} in double"
+            if best.route == "krylov"
+            else "sums over the whole spectrum in double"
+        )
+        reasons.append(("precision", f"double: {why}"))
+    elif request.precision == "auto":
+        reasons.append(
+            (
+                "precision",
+                "single if the pilot shows that its rounding stays below a quarter of the tolerance, else double",
+            )
+        )
+    else:
+        reasons.append(("precision", f"{request.precision}, as asked"))
+    return tuple(reasons)
+
+
+def _pilot_words(plan: Plan) -> str:
+    """What the pilot reads, or why there is none."""
+    if plan.mean_only:
+        return f"none: fewer than {FEWEST_PILOT_PANELS} panels would make a poor sample; Gaussian start, one more sweep"
+    share = len(plan.pilot_panels) / plan.geometry.panels
+    return f"{show_count(len(plan.pilot_panels))} panels drawn by seed over the whole file, {100 * share:.1f} % of it"
+
+
+def worker_words(workers: int, request: Request, plan: Plan) -> str:
+    """Why so many workers."""
+    if request.workers is not None and workers == request.workers:
+        return f"{workers}, as asked"
+    if request.workers is not None:
+        return f"{workers}; for the {request.workers} asked there is no room under the ceiling, or no segment"
+    return f"{workers}, one BLAS thread each; the number changes the time, not the bits"
