@@ -50,10 +50,12 @@ class Engine:
             while pending:
                 total = _fold_wave(total, pending.pop(0).result())
         except BaseException:
-            # Whoever raised, no worker may outlive the sweep: they hold the file, the scratch and the buffers.
+            # Whoever raised, no worker may outlive the sweep: they hold the file, the scratch and the buffers. A graph
+            # returns at its first failure while its other segments still run, so the threads themselves are awaited.
             task.reader.control.stop()
             for future in pending:
                 future.exception()
+            self._pool.shutdown(cancel_futures=True)
             raise
         assert total is not None
         return total
