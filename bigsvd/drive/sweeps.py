@@ -153,6 +153,7 @@ class Sweeps:
             line_features=not self.across_features and (plan.centred or plan.scaled), sampled=sampled,
         )  # fmt: skip
         sums = self.engine.sweep(task, plan.waves)
+        sums.level_rounding()
         self._refuse_bad(sums)
         self._refuse_change(sums)
         if sums.overflow:

@@ -115,6 +115,7 @@ def take_pilot(
         replace(task, block=basis.astype(work), sampled=frozenset(panels) if work == single else frozenset()), waves
     )
     assert last.products is not None
+    last.level_rounding()
     small = last.products @ basis
     value, vector = np.linalg.eigh((small + small.conj().T) / 2)
     theta = np.sqrt(np.clip(value[::-1], 0.0, None) * raise_scale)

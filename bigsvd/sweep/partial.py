@@ -36,6 +36,8 @@ class Partial:
         Per panel, the sum modulo 2⁶⁴ of its stored words.
     rounding : ndarray, shape (3, width), or None
         Units recomputed in double, Σ‖ΔY_u‖² and Σ‖ΔZ_u‖² per column.
+    unit_energies : ndarray, shape (4,), or None
+        Beside `rounding`: all units, Σ‖A_u‖⁴ over them, Σ‖A_u‖² and Σ‖A_u‖⁴ over the units recomputed.
     bad : int
         NaN and infinities met.
     first_bad : (int, int) or None
@@ -60,10 +62,29 @@ class Partial:
     line_constant: list[np.ndarray] | None = None
     ledger: list[int] | None = None
     rounding: np.ndarray | None = None
+    unit_energies: np.ndarray | None = None
     bad: int = 0
     first_bad: tuple[int, int] | None = None
     overflow: bool = False
     beyond: bool = False
+
+    def level_rounding(self) -> None:
+        """Scale the measured rounding up to units of typical energy, where those recomputed were fainter.
+
+        Rounding of Y_u grows with ‖A_u‖, that of Z_u with its square. A file of faint lines and one loud block would
+        else pass with the rounding of its faint lines.
+        """
+        if self.rounding is None or self.unit_energies is None:
+            return
+        units, squares, sampled, sampled_squares = self.unit_energies
+        count = float(self.rounding[0].max(initial=0.0))
+        for row, every, recomputed in ((1, self.energy, sampled), (2, squares, sampled_squares)):
+            typical = every / units * count if count else 0.0
+            if recomputed > 0:
+                self.rounding[row] *= max(1.0, typical / recomputed)
+            else:
+                # Units of zeros show no rounding: one roundoff of what is typical stands for it.
+                self.rounding[row] = 2.0**-48 * typical
 
 
 def combine(first: Partial, second: Partial) -> Partial:
@@ -78,7 +99,7 @@ def combine(first: Partial, second: Partial) -> Partial:
     first.beyond |= second.beyond
     if second.first_bad is not None:
         first.first_bad = min(first.first_bad or second.first_bad, second.first_bad)
-    for name in ("line_sum", "square_sum", "products", "gram", "rounding"):
+    for name in ("line_sum", "square_sum", "products", "gram", "rounding", "unit_energies"):
         more = getattr(second, name)
         if more is not None:
             np.add(getattr(first, name), more, out=getattr(first, name))

@@ -116,6 +116,7 @@ class _Segment:
             self.sums.products = np.zeros((task.block.shape[1], self.across), task.wide)
             if task.sampled:
                 self.sums.rounding = np.zeros((3, task.block.shape[1]))
+                self.sums.unit_energies = np.zeros(4)
         self._start_fold()
 
     def _start_fold(self) -> None:
@@ -169,6 +170,8 @@ class _Segment:
             return
         sums.energy += energy
         sums.lines += len(unit)
+        if sums.unit_energies is not None:
+            sums.unit_energies += (1.0, energy**2, energy * measure, energy**2 * measure)
         if task.kind == "fold":
             self._gather(start, self._whole(unit, statistics))
         elif task.kind == "gram":
