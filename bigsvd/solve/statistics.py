@@ -70,13 +70,17 @@ def first_statistics(lines: np.ndarray, preparation: Preparation, work: np.dtype
 
 
 def shift_and_scale(mean: np.ndarray, variance: np.ndarray, preparation: Preparation, work: np.dtype) -> Preparation:
-    """Preparation with a shift representable in `work`, and scales where they can be told from rounding."""
+    """Preparation with shift and scales representable in `work`, scales where they can be told from rounding.
+
+    The sweep multiplies by scales rounded to `work`; others than these would enter the deviations that it learns.
+    """
     inverse = None
     if preparation.scale:
         spread = np.sqrt(np.clip(variance, 0.0, None))
         # A feature that is constant in the sample says nothing of its scale.
         safe = (spread > 1e-6 * np.abs(mean)) & np.isfinite(spread) & (spread > 0)
-        inverse = np.where(safe, 1.0 / np.where(safe, spread, 1.0), 1.0)
+        inverse = (1.0 / np.where(safe, spread, 1.0)).astype(np.empty(0, work).real.dtype).astype(np.float64)
+        inverse = np.where(safe & np.isfinite(inverse) & (inverse > 0), inverse, 1.0)
     return preparation.learnt(mean, inverse, work)
 
 

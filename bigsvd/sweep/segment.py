@@ -160,8 +160,15 @@ class _Segment:
         statistics = self._statistics(unit)
         converted = self._tiles(unit, statistics, task.dtype)
         energy, tall = 0.0, None
+        # Deviations learnt here define the matrix for the rest of the run, so they are taken in double.
+        learns_apart = task.learn and task.dtype != task.wide
+        if learns_apart:
+            for columns, tile in self._tiles(unit, statistics, task.wide):
+                self._tile_sums(tile, columns)
         for columns, tile in converted:
-            energy += self._tile_sums(tile, columns)
+            if not learns_apart:
+                self._tile_sums(tile, columns)
+            energy += _energy(tile)
             if task.block is not None:
                 part = _product(tile, task.block[columns], task.wide)
                 tall = part if tall is None else np.add(tall, part, out=tall)
@@ -220,18 +227,17 @@ class _Segment:
             return next(iter(self._tiles(unit, statistics, self.task.dtype)))[1]
         return np.concatenate([tile.copy() for _, tile in self._tiles(unit, statistics, self.task.dtype)], axis=1)
 
-    def _tile_sums(self, tile: np.ndarray, columns: slice) -> float:
-        """Add the sum of lines and squares of a tile; return its energy."""
+    def _tile_sums(self, tile: np.ndarray, columns: slice) -> None:
+        """Add the sum of lines and squares of a tile."""
         sums, about = self.sums, self.task.preparation.about
         centred = tile if about is None or sums.line_sum is None else tile - about[columns].astype(tile.dtype)
         if sums.line_sum is not None:
             sums.line_sum[columns] += np.ones(len(tile), tile.dtype) @ centred
         if sums.square_sum is not None:
-            squares = np.einsum("ij,ij->j", centred.real, centred.real).astype(np.float64)
+            squares = np.einsum("ij,ij->j", centred.real, centred.real)
             if tile.dtype.kind == "c":
                 squares += np.einsum("ij,ij->j", centred.imag, centred.imag)
             sums.square_sum[columns] += squares
-        return _energy(tile)
 
     def _second_product(self, unit: np.ndarray, statistics: LineStatistics | None, tall: np.ndarray) -> None:
         """Z += AᴴY, held as its conjugate transpose."""
