@@ -37,10 +37,12 @@ class _Group:
     half: float
 
 
-def choose_intervals(evidence: Evidence, upper: np.ndarray, rank: int, tolerance: float) -> Intervals:
+def choose_intervals(
+    evidence: Evidence, upper: np.ndarray, rank: int, tolerance: float, complete: int = 0
+) -> Intervals:
     """Report the first g components by index and the rest by value, for the g that says most.
 
-    By index: θ_i ≤ σ_i ≤ u_i, from `order.index_bounds`; holds for every i, but may be wide. By value: the singular
+    By index: θ_i ≤ σ_i ≤ u_i, from `order.upper_ends`; holds for every i, but may be wide. By value: the singular
     values of A can be matched with the Ritz values of any set of components within its joint ‖R‖/√2 (Kahan, Parlett and
     Jiang, SIAM J. Numer. Anal. 19 (1982), on the dilation of A); components whose intervals overlap are joined until
     the groups are disjoint, so that each group holds as many distinct singular values. Both may be mixed where every
@@ -49,12 +51,14 @@ def choose_intervals(evidence: Evidence, upper: np.ndarray, rank: int, tolerance
     Parameters
     ----------
     evidence : Evidence
-    upper : ndarray, shape (at least rank,)
+    upper : ndarray, shape (L + 1,)
         Upper ends by index.
     rank : int
     tolerance : float
         Decides which choice says most: most components within it, then most narrow enough for the bulk, then the
         narrowest.
+    complete : int
+        Components before the last proved gap; they are always reported by index.
 
     Returns
     -------
@@ -63,30 +67,43 @@ def choose_intervals(evidence: Evidence, upper: np.ndarray, rank: int, tolerance
     theta = evidence.theta[:rank]
     # Relative widths only rank the choices; a value of zero must not overflow them.
     floor = np.maximum(theta, max(float(theta[0]) if rank else 0.0, 1e-150) * 1e-30)
-    by_index = _index_intervals(evidence, upper, rank)
-    index_width = np.minimum((by_index[1] - by_index[0]) / floor, 1e9)
-    best_key = _merit(index_width, tolerance, rank)
-    best = rank
+    complete = min(complete, rank)
+    lower, top = _index_intervals(evidence, upper, rank)
+    _narrow_by_value(evidence, upper, complete, top)
+    index_width = np.minimum((top - lower) / floor, 1e9)
+    best_key, best = _merit(index_width, tolerance, rank), rank
     groups: list[_Group] = []
     best_groups: list[_Group] = []
     value_width = np.full(rank, 1e9)
-    for g in range(rank - 1, -1, -1):
+    for g in range(rank - 1, complete - 1, -1):
         _add_component(evidence, groups, g)
-        top = groups[-1]
-        value_width[top.first : top.stop] = np.minimum(2 * top.half / floor[top.first : top.stop], 1e9)
+        joined = groups[-1]
+        value_width[joined.first : joined.stop] = np.minimum(2 * joined.half / floor[joined.first : joined.stop], 1e9)
         above_zero = all(theta[group.stop - 1] > group.half for group in groups)
-        apart = g == 0 or theta[top.first] + top.half < theta[g - 1] - evidence.value_rounding
+        apart = g == 0 or theta[joined.first] + joined.half < theta[g - 1] - evidence.value_rounding
         if not (above_zero and apart):
             continue
-        widths = np.concatenate([index_width[:g], value_width[g:]])
-        key = _merit(widths, tolerance, g)
+        key = _merit(np.concatenate([index_width[:g], value_width[g:]]), tolerance, g)
         if key > best_key:
             best_key, best, best_groups = key, g, [_Group(group.first, group.stop, group.half) for group in groups]
-    lower, top_end = by_index[0].copy(), by_index[1].copy()
     for group in best_groups:
         members = slice(group.first, group.stop)
-        lower[members], top_end[members] = theta[members] - group.half, theta[members] + group.half
-    return Intervals(lower, top_end, best)
+        lower[members], top[members] = theta[members] - group.half, theta[members] + group.half
+    return Intervals(lower, top, best)
+
+
+def _narrow_by_value(evidence: Evidence, upper: np.ndarray, complete: int, top: np.ndarray) -> None:
+    """Let intervals by value narrow those by index where both are about the same values.
+
+    Where all groups of the first g components end above u_{g+1}, the g distinct values they hold are σ_1 … σ_g.
+    """
+    groups: list[_Group] = []
+    for component in range(complete - 1, -1, -1):
+        _add_component(evidence, groups, component)
+    if all(evidence.theta[group.stop - 1] - group.half > upper[complete] for group in groups):
+        for group in groups:
+            members = slice(group.first, group.stop)
+            top[members] = np.minimum(top[members], evidence.theta[members] + group.half)
 
 
 def _index_intervals(evidence: Evidence, upper: np.ndarray, rank: int) -> tuple[np.ndarray, np.ndarray]:

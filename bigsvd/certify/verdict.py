@@ -36,7 +36,11 @@ def certify(evidence: Evidence, rank: int, reach: int, tolerance: float, *, stri
     """
     theta = evidence.theta
     upper = evidence.ends if evidence.ends is not None else upper_ends(evidence)
-    intervals = choose_intervals(evidence, upper, rank, tolerance)
+    # An interval by index may be so wide that a missed direction fits into it. The order is proved up to the last
+    # proved gap, above which nothing else lies; beyond it only where the interval itself is within the tolerance.
+    gaps = np.flatnonzero(upper[1:] < theta - evidence.value_rounding)
+    complete = int(gaps[-1]) + 1 if len(gaps) else 0
+    intervals = choose_intervals(evidence, upper, rank, tolerance, complete)
     value = theta[:rank].copy()
     noise = _noise_floor(evidence)
     null = value <= noise
@@ -55,11 +59,7 @@ def certify(evidence: Evidence, rank: int, reach: int, tolerance: float, *, stri
     captured = float(np.sum(value**2))
     share = min(1.0, captured / evidence.energy) if evidence.energy > 0 else 1.0
     met = not np.any(state == OPEN) and not (strict and np.any(state == BULK))
-    # An interval by index may be so wide that a missed direction fits into it. The order is proved up to the last
-    # proved gap: nothing else lies above it; beyond, only where the interval itself is within the tolerance.
-    gaps = np.flatnonzero(upper[1:] < theta - evidence.value_rounding)
-    complete = int(gaps[-1]) + 1 if len(gaps) else 0
-    proved = (np.arange(rank) < intervals.proved) & ((np.arange(rank) < complete) | (relative <= tolerance))
+    proved = (np.arange(rank) < complete) | ((np.arange(rank) < intervals.proved) & (relative <= tolerance))
     return Certificate(
         value=value,
         lower=lower,

@@ -9,25 +9,17 @@ import numpy as np
 
 from bigsvd.certify import (
     BULK_WIDTH,
-    CHAIN_FAILURE,
     STATES,
     Certificate,
-    ChainState,
     Evidence,
     certify,
-    chain_bound,
     crowded,
-    energy_bound,
-    gamma,
     measured_rounding,
-    product_rounding,
     rounding_limited,
-    tall_rounding,
-    triangle_rounding,
-    upper_ends,
 )
+from bigsvd.drive.proof import Proof
 from bigsvd.drive.sweeps import OverflowInSingleError, Sweeps
-from bigsvd.drive.whole import WholeSweep, gram_is_enough, sweep_fold, sweep_gram
+from bigsvd.drive.whole import gram_is_enough, sweep_fold, sweep_gram
 from bigsvd.plan import Plan, Widths, crowd_reach, krylov_widths
 from bigsvd.solve import (
     Pilot,
@@ -125,19 +117,13 @@ class _Run:
 
     plan: Plan
     sweeps: Sweeps
-    tall_error: float = 0.0
-    fold_error: float = 0.0
-    rounding_how: str = "proved"
-    whole: WholeSweep | None = None
-    chains_made: int = 0
-    relied: bool = False
-    proved_ends: np.ndarray = field(default_factory=lambda: np.zeros(0))
     remarks: list[str] = field(default_factory=list)
 
     def __post_init__(self) -> None:
         plan = self.plan
         self.next_block = np.zeros((0, 0), self.sweeps.wide)
         self.state = State.empty(plan.geometry.across, plan.widths.limit, self.sweeps.wide)
+        self.proof = Proof(self.sweeps, self.state)
         self.rank = plan.rank if plan.request.variance is None else min(plan.rank, FIRST_GUESS)
 
     def go(self) -> Outcome:
@@ -147,7 +133,7 @@ class _Run:
         while True:
             self._sweep_basis()
             ritz = self.state.ritz()
-            evidence = self._with_ends(self._evidence(ritz))
+            evidence = self.proof.evidence(ritz)
             reached = self._settle_rank(evidence)
             rank = min(self.rank, len(evidence.theta))
             certificate = certify(evidence, rank, crowd_reach(rank), request.tolerance, strict=request.strict)
@@ -179,7 +165,7 @@ class _Run:
         if start is None:
             start = gaussian_directions(plan.geometry.across, widths.start, seed, self.sweeps.wide)
         block = start_block(start, self.state, widths.test, seed)
-        self.chains_made = len(self.state.chains)
+        self.proof.chains_made = len(self.state.chains)
         return block
 
     def _widths(self) -> Widths:
@@ -242,46 +228,34 @@ class _Run:
         if learnt is not None:
             products = correct_products(products, used, learnt, sums.lines, centred=sweeps.ones)
             column_scale = learnt.column_scale
-        frobenius = float(np.sqrt(sums.energy))
-        depth = sweeps.depth(sums.triangle.shape[0])
-        if sweeps.in_single:
-            self.rounding_how = "measured"
-            assert sums.rounding is not None
-            tall, error = measured_rounding(sums.rounding, sweeps.units)
-        else:
-            tall = tall_rounding(depth, frobenius, used.shape[1])
-            # ‖y_j‖² is the diagonal of BᴴZ.
-            norms = np.sqrt(np.abs(np.einsum("ij,ij->j", used.conj(), products)))
-            error = product_rounding(depth, frobenius, norms)
+        error, tall = self.proof.sweep_rounding(sums, used, products)
         if column_scale is not None:
             error = error / column_scale.min()
         exact = not rounded and column_scale is None
         growth = self.state.absorb(
             used, products, sums.triangle, sweeps.scratch, error, centred=sweeps.ones, exact=exact
         )  # fmt: skip
-        self.tall_error = float(np.hypot(self.tall_error, tall * growth))
-        # Every sweep folds all of Y anew, so only its own fold counts.
-        self.fold_error = triangle_rounding(depth, float(np.linalg.norm(sums.triangle))) * growth
-        carry_chains(
-            self.state, sweeps.energy, self.plan.request.seed, column_scale, measured=self.rounding_how == "measured"
-        )
+        self.proof.count_rounding(sums, tall * growth, growth)
+        carry_chains(self.state, sweeps.energy, self.plan.request.seed, column_scale, measured=self.proof.measured)
 
     def _whole_spectrum(self) -> np.ndarray:
         """Sweep for the whole spectrum; return the leading right vectors, whose sweep closes the route."""
         plan = self.plan
         if plan.route == "gram":
-            self.whole = sweep_gram(self.sweeps)
-            if plan.request.route == "auto" and not gram_is_enough(self.whole, min(plan.rank, plan.geometry.lines)):
+            self.proof.whole = sweep_gram(self.sweeps)
+            if plan.request.route == "auto" and not gram_is_enough(
+                self.proof.whole, min(plan.rank, plan.geometry.lines)
+            ):
                 self.remarks.append("small values are wanted: a fold by QR followed the sums of AᴴA")
-                self.whole = sweep_fold(self.sweeps)
+                self.proof.whole = sweep_fold(self.sweeps)
         else:
-            self.whole = sweep_fold(self.sweeps)
+            self.proof.whole = sweep_fold(self.sweeps)
         if plan.request.variance is not None:
-            share = np.cumsum(self.whole.spectrum.value**2) / max(self.sweeps.energy, np.finfo(float).tiny)
+            share = np.cumsum(self.proof.whole.spectrum.value**2) / max(self.sweeps.energy, np.finfo(float).tiny)
             enough = np.flatnonzero(share >= plan.request.variance)
             self.rank = min(plan.rank, int(enough[0]) + 1) if len(enough) else plan.rank
         width = min(plan.widths.start, plan.geometry.across)
-        return np.ascontiguousarray(self.whole.vectors[:, :width])
+        return np.ascontiguousarray(self.proof.whole.vectors[:, :width])
 
     def _settle_rank(self, evidence: Evidence) -> bool:
         """With --variance: how many components the share needs; False while they are not all in the basis."""
@@ -299,54 +273,6 @@ class _Run:
         self.rank = min(self.plan.rank, grown)
         return False
 
-    def _evidence(self, ritz: Ritz) -> Evidence:
-        """Everything the certificate rests on."""
-        state, theta, sweeps = self.state, ritz.theta, self.sweeps
-        top = float(theta[0]) if len(theta) else 0.0
-        defect = state.basis_defect()
-        depth = sweeps.depth(state.triangle.shape[0])
-        value_rounding = self.tall_error + self.fold_error + defect * top
-        weights = np.abs(ritz.rotation)
-        if self.rounding_how == "measured":
-            product = np.sqrt((weights**2).T @ state.product_error**2)
-        else:
-            product = weights.T @ state.product_error
-        formed = gamma(2.0 * state.width + 4, complex_entries=depth.complex_entries)
-        missed, how, probability = self._missed(theta, value_rounding)
-        return Evidence(
-            theta, ritz.residual_gram, value_rounding, product + (2 * defect + formed) * top**2, self.rounding_how,
-            missed, how, probability, sweeps.energy, None if self.whole is None else self.whole.spectrum,
-        )  # fmt: skip
-
-    def _with_ends(self, evidence: Evidence) -> Evidence:
-        """Add the upper ends by index, with what earlier sweeps proved of them."""
-        ends = upper_ends(evidence, self.proved_ends)
-        self.proved_ends = np.concatenate([ends, self.proved_ends[len(ends) :]])
-        return replace(evidence, ends=ends)
-
-    def _missed(self, theta: np.ndarray, value_rounding: float) -> tuple[float, str, float]:
-        """The best bound on what lies outside the basis."""
-        if self.state.width >= self.state.across:
-            return 0.0, "the basis spans the whole space", self.chains_made * CHAIN_FAILURE if self.relied else 0.0
-        # Deterministic bounds first: of equal ones, the stronger statement is kept.
-        left = energy_bound(self.sweeps.energy, theta, self.sweeps.energy_rounding, value_rounding)
-        best = left, "energy that the factors leave"
-        if self.whole is not None:
-            next_value = self.whole.missed(min(self.plan.widths.start, self.plan.geometry.across))
-            if next_value < best[0]:
-                best = next_value, "next value of the whole spectrum"
-        for chain in self.state.chains:
-            bound = chain_bound(
-                ChainState(
-                    chain.power, chain.log_norm, chain.lost, chain.vectors, self.sweeps.wide.kind == "c", chain.shrink
-                )
-            )
-            if bound < best[0]:
-                best = bound, f"{chain.vectors} Gaussian test vectors, power {chain.power} of AᴴA"
-                self.relied = True
-        # Ends proved in an earlier sweep may rest on test vectors even where the present bound does not.
-        return *best, self.chains_made * CHAIN_FAILURE if self.relied else 0.0
-
     def _finished(self, evidence: Evidence, certificate: Certificate, reached: bool) -> bool:
         """Whether to stop here."""
         full = self.state.width >= self.state.across
@@ -357,7 +283,9 @@ class _Run:
         if certificate.tolerance_met:
             # A single block Krylov sweep ends a run only when it proves the order of all it calls resolved: a direction
             # that the pilot missed shows in the second.
-            return self.whole is not None or self.sweeps.made > 1 or full or bool(np.all(certificate.index_proved))
+            return (
+                self.proof.whole is not None or self.sweeps.made > 1 or full or bool(np.all(certificate.index_proved))
+            )
         if self.sweeps.in_single:
             return False
         return full or rounding_limited(evidence, certificate)
@@ -378,7 +306,7 @@ class _Run:
             state, ritz, count=widths.grow, tests=tests, limit=widths.limit, seed=self.plan.request.seed,
             sweep=self.sweeps.made,
         )  # fmt: skip
-        self.chains_made += 1 if tests else 0
+        self.proof.chains_made += 1 if tests else 0
         return block
 
     def _rounding_too_large(self, evidence: Evidence, certificate: Certificate) -> bool:
@@ -407,11 +335,12 @@ class _Run:
         residuals = state.residuals(ritz, np.arange(grow))
         residuals = residuals[:, np.linalg.norm(residuals, axis=0) > 0]
         state.forget(sweeps.scratch)
-        sweeps.work, self.rounding_how, self.tall_error = sweeps.wide, "proved", 0.0
+        sweeps.work = sweeps.wide
+        self.proof.begin_again()
         block = start_block(
             np.hstack([vectors, residuals]), state, widths.test, self.plan.request.seed, sweep=sweeps.made
         )  # fmt: skip
-        self.chains_made += 1
+        self.proof.chains_made += 1
         return block
 
     def _share_not_reached(self, certificate: Certificate) -> Certificate:
