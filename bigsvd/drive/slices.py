@@ -23,6 +23,8 @@ SLICE_SHARE = 0.01
 # second.
 MOST_FLOPS = 2.5e8
 LEAST_PANELS = 4
+# Room for a restart of a run for ten components.
+LEAST_ACROSS = 256
 SLICE_RANK = 10
 # LAPACK's own rounding, relative to the largest value.
 LAPACK_ROUNDING = 1e-12
@@ -98,10 +100,15 @@ def draw_slices(spec: MatrixSpec, axis: int, seed: int) -> tuple[Rectangle, ...]
         for side in (0, 1)
     ]
     clipped = _clip(size, axis)
-    return tuple(
-        Rectangle((row * unit[0], row * unit[0] + clipped[0]), (column * unit[1], column * unit[1] + clipped[1]))
-        for row, column in zip(places[0], reversed(places[1]), strict=True)
-    )
+    rectangles = []
+    for number, (row, column) in enumerate(zip(places[0], reversed(places[1]), strict=True)):
+        starts = []
+        for side, place in enumerate((row, column)):
+            slack = min(size[side], spec.shape[side] - place * unit[side]) - clipped[side]
+            inside = draw_without_repeat(seed, STREAM_SLICES + 256 * (number + 1) + side, max(0, slack) + 1, 1)[0]
+            starts.append(place * unit[side] + inside)
+        rectangles.append(Rectangle((starts[0], starts[0] + clipped[0]), (starts[1], starts[1] + clipped[1])))
+    return tuple(rectangles)
 
 
 def _grow(unit: list[int], shape: tuple[int, int], entries: float, axis: int) -> list[int]:
@@ -120,8 +127,8 @@ def _grow(unit: list[int], shape: tuple[int, int], entries: float, axis: int) ->
 
 
 def _clip(size: list[int], axis: int) -> tuple[int, int]:
-    """Cut a slice down to an affordable exact decomposition."""
-    lines, across = size[axis], size[1 - axis]
+    """Cut a slice down to an affordable exact decomposition, no wider than long or than a restart needs."""
+    lines, across = size[axis], min(size[1 - axis], max(size[axis], LEAST_ACROSS))
     while max(lines, across) * min(lines, across) ** 2 > MOST_FLOPS:
         if lines > 2 * across:
             lines = lines * 9 // 10
