@@ -169,7 +169,8 @@ class _Side:
     def _dask(self, iterations: int, double: bool) -> Candidate:
         """dask with the QR iterator, reading the file anew; run once for every setting that is asked for."""
         if (iterations, double) not in self.tried:
-            name = f"dask svd_compressed, QR, {iterations} iterations{', double' if double else ''}"
+            count = f"{iterations} iteration{'' if iterations == 1 else 's'}"
+            name = f"dask svd_compressed, QR, {count}{', double' if double else ''}"
             words = ["dask", "--iterator", "QR", "--iterations", str(iterations), "--compute"]
             made = Candidate(name, words + (["--double"] if double else []))
             self.tried[iterations, double] = made
