@@ -79,7 +79,7 @@ def page_lines(record: dict[str, Any]) -> list[str]:
         "*processor s*: seconds of all threads, user and system together, which other programs disturb least. "
         f"*peak*: largest resident size; *over*: above the ceiling of {show_bytes(record['memory_bytes'])}, which only "
         "bigsvd can be given. dask reads bands of about 16 MB and multiplies with one thread a task, its fastest "
-        "setting here. Of equal error is what reaches the larger of bigsvd's error and 1e-6, the end of single precision.",
+        "setting here. Of equal error is what reaches bigsvd's error, or 1e-6, where single precision ends.",
         "",
     ]
     for case in record["cases"]:
