@@ -168,6 +168,8 @@ def test_options_reach_the_api_under_their_names(monkeypatch: pytest.MonkeyPatch
         " --memory 2GiB --workers 3 --precision double --route tsqr --axis columns --seed 9 --overwrite --max-rank 9"
     )
     run("decompose", "f.h5", "--out", "o.zarr", "--quiet", *line.split(), "--variance", "0.5")
+    for options in asked:
+        del options["planned"]
     bare, full = asked
     assert bare == {"overwrite": False, "progress": None}
     assert full == {
