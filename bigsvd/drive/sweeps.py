@@ -148,7 +148,7 @@ class Sweeps:
         task = SweepTask(
             self.reader, self.preparation, self.work, kind, block,
             scratch=self.scratch if block is not None else None, target=target, ones=self.ones,
-            add_lines=self.across_features and (plan.centred or plan.scaled),
+            add_lines=self.across_features and (plan.centred or (plan.scaled and first)),
             learn=first and self.across_features and plan.scaled,
             line_features=not self.across_features and (plan.centred or plan.scaled), sampled=sampled,
         )  # fmt: skip

@@ -6,6 +6,9 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+# Deviations of lines are taken for about so many entries at a time.
+_STATISTICS_ENTRIES = 2**18
+
 
 @dataclass(frozen=True, eq=False)
 class Preparation:
@@ -49,6 +52,16 @@ class Preparation:
         about = mean * inverse_scale if inverse_scale is not None else mean
         return replace(self, inverse_scale=inverse_scale, about=about if self.scale else None)
 
+    def about_mean(self) -> Preparation:
+        """The same, with features that are scaled but not centred shifted by their first mean.
+
+        The shift comes before the scale: of a large mean, scaled and rounded, the deviations would keep the rounding.
+        """
+        if self.about is None:
+            return self
+        mean = self.about if self.inverse_scale is None else self.about / self.inverse_scale
+        return replace(self, shift=mean, about=None)
+
 
 @dataclass(frozen=True, eq=False)
 class LineStatistics:
@@ -56,7 +69,8 @@ class LineStatistics:
 
     Attributes
     ----------
-    mean : ndarray, shape (lines,), double or complex double
+    mean, rest : ndarray, shape (lines,), double or complex double
+        The mean as it can be stored, and what the lines keep of it once that is subtracted.
     inverse_scale : ndarray, shape (lines,), double
         One over the standard deviation (n − 1); one for constant lines.
     constant : ndarray of bool, shape (lines,)
@@ -64,11 +78,12 @@ class LineStatistics:
     """
 
     mean: np.ndarray
+    rest: np.ndarray
     inverse_scale: np.ndarray
     constant: np.ndarray
 
 
-def line_statistics(raw: np.ndarray, *, scale: bool) -> LineStatistics:
+def line_statistics(raw: np.ndarray, *, scale: bool, rest: bool = True) -> LineStatistics:
     """Mean and, where asked, standard deviation of every line, in double.
 
     Parameters
@@ -77,19 +92,25 @@ def line_statistics(raw: np.ndarray, *, scale: bool) -> LineStatistics:
         Entries as stored.
     scale : bool
         Whether deviations are wanted.
+    rest : bool
+        Whether the rest of the mean is wanted; single precision is too coarse for it.
     """
     wide = np.complex128 if raw.dtype.kind == "c" else np.float64
     mean = raw.mean(axis=1, dtype=wide)
     constant = np.all(raw == raw[:, :1], axis=1)
     # The mean of equal numbers may differ from them by rounding; a constant line must become exactly zero.
     mean = np.where(constant, raw[:, 0].astype(wide), mean)
-    inverse = np.ones(len(raw))
-    if scale:
-        for line in np.flatnonzero(~constant):
-            deviation = raw[line].astype(wide) - mean[line]
-            spread = float(np.linalg.norm(deviation)) / np.sqrt(max(1, raw.shape[1] - 1))
-            inverse[line] = 1.0 / spread if spread > 0 else 1.0
-    return LineStatistics(mean, inverse, constant)
+    inverse, left = np.ones(len(raw)), np.zeros_like(mean)
+    step = max(1, _STATISTICS_ENTRIES // max(1, raw.shape[1]))
+    for first in range(0, len(raw), step) if scale or rest else ():
+        some = slice(first, first + step)
+        deviation = np.subtract(raw[some], mean[some, None], dtype=wide, casting="unsafe")
+        left[some] = deviation.mean(axis=1)
+        if scale:
+            deviation -= left[some, None]
+            spread = np.linalg.norm(deviation, axis=1) / np.sqrt(max(1, raw.shape[1] - 1))
+            inverse[some] = 1.0 / np.where(constant[some] | (spread == 0), 1.0, spread)
+    return LineStatistics(mean, left, inverse, constant)
 
 
 def prepare_unit(
@@ -130,6 +151,9 @@ def prepare_unit(
     if preparation.center:
         # In double, whatever the working precision: the mean of a line is not representable in single.
         np.subtract(part, lines.mean[:, None], out=out, dtype=wide, casting="unsafe")
+        if out.dtype == wide:
+            # The rounding of a large mean would else stay in every entry of its line.
+            out -= lines.rest[:, None]
     else:
         out[...] = part
     if preparation.scale:

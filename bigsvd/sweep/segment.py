@@ -103,6 +103,8 @@ class _Segment:
         self.raw = task.reader.buffer()
         self.tile = tile_columns(self.across)
         self.work = np.empty(UNIT_LINES * self.tile, task.dtype)
+        # Deviations learnt in a sweep define the matrix for the rest of the run: in double, about a first mean.
+        self.learning = task.preparation.about_mean()
         self.sums = Partial(ledger=[])
         if task.line_features:
             self.sums.line_mean, self.sums.line_inverse_scale, self.sums.line_constant = [], [], []
@@ -160,10 +162,9 @@ class _Segment:
         statistics = self._statistics(unit)
         converted = self._tiles(unit, statistics, task.dtype)
         energy, tall = 0.0, None
-        # Deviations learnt here define the matrix for the rest of the run, so they are taken in double.
-        learns_apart = task.learn and task.dtype != task.wide
+        learns_apart = task.learn and (task.dtype != task.wide or task.preparation.about is not None)
         if learns_apart:
-            for columns, tile in self._tiles(unit, statistics, task.wide):
+            for columns, tile in self._tiles(unit, statistics, task.wide, self.learning):
                 self._tile_sums(tile, columns)
         for columns, tile in converted:
             if not learns_apart:
@@ -197,7 +198,8 @@ class _Segment:
         """Statistics of lines that are whole features."""
         if not self.task.line_features:
             return None
-        statistics = line_statistics(unit, scale=self.task.preparation.scale)
+        task = self.task
+        statistics = line_statistics(unit, scale=task.preparation.scale, rest=task.dtype == task.wide)
         sums = self.sums
         assert sums.line_mean is not None
         assert sums.line_inverse_scale is not None
@@ -208,17 +210,23 @@ class _Segment:
         return statistics
 
     def _tiles(
-        self, unit: np.ndarray, statistics: LineStatistics | None, dtype: np.dtype
+        self,
+        unit: np.ndarray,
+        statistics: LineStatistics | None,
+        dtype: np.dtype,
+        preparation: Preparation | None = None,
     ) -> Iterator[tuple[slice, np.ndarray]]:
         """Yield (columns, converted tile) across a unit; a single tile stays in the working buffer."""
-        work = self.work if dtype == self.task.dtype else np.empty(UNIT_LINES * self.tile, dtype)
+        work = np.empty(UNIT_LINES * self.tile, dtype)
+        if dtype == self.task.dtype and preparation is None:
+            work = self.work
         for first in range(0, self.across, self.tile):
             columns = slice(first, min(first + self.tile, self.across))
             width = columns.stop - first
             flat = work[: len(unit) * width]
             by_lines = self.task.reader.geometry.axis == 0
             tile = flat.reshape(len(unit), width) if by_lines else flat.reshape(width, len(unit)).T
-            prepare_unit(unit, self.task.preparation, statistics, columns, tile)
+            prepare_unit(unit, preparation or self.task.preparation, statistics, columns, tile)
             yield columns, tile
 
     def _whole(self, unit: np.ndarray, statistics: LineStatistics | None) -> np.ndarray:
@@ -229,14 +237,13 @@ class _Segment:
 
     def _tile_sums(self, tile: np.ndarray, columns: slice) -> None:
         """Add the sum of lines and squares of a tile."""
-        sums, about = self.sums, self.task.preparation.about
-        centred = tile if about is None or sums.line_sum is None else tile - about[columns].astype(tile.dtype)
+        sums = self.sums
         if sums.line_sum is not None:
-            sums.line_sum[columns] += np.ones(len(tile), tile.dtype) @ centred
+            sums.line_sum[columns] += np.ones(len(tile), tile.dtype) @ tile
         if sums.square_sum is not None:
-            squares = np.einsum("ij,ij->j", centred.real, centred.real)
+            squares = np.einsum("ij,ij->j", tile.real, tile.real)
             if tile.dtype.kind == "c":
-                squares += np.einsum("ij,ij->j", centred.imag, centred.imag)
+                squares += np.einsum("ij,ij->j", tile.imag, tile.imag)
             sums.square_sum[columns] += squares
 
     def _second_product(self, unit: np.ndarray, statistics: LineStatistics | None, tall: np.ndarray) -> None:
