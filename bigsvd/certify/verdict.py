@@ -55,7 +55,7 @@ def certify(evidence: Evidence, rank: int, reach: int, tolerance: float, *, stri
     angles = bound_angles(evidence, upper, rank)
     angles.bound[null] = np.nan
     norms = evidence.residual_norms[:rank]
-    residual = np.where(null, norms / max(scale, np.finfo(float).tiny), norms / np.maximum(value, np.finfo(float).tiny))
+    residual = norms / np.where(null, scale, value)
     captured = float(np.sum(value**2))
     share = min(1.0, captured / evidence.energy) if evidence.energy > 0 else 1.0
     met = not np.any(state == OPEN) and not (strict and np.any(state == BULK))

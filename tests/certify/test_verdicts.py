@@ -79,6 +79,16 @@ def test_a_value_of_rounding_is_null_and_says_how_large_it_could_be() -> None:
     assert "2 zero to rounding" in certificate.verdict
 
 
+@pytest.mark.parametrize("size", [1e-60, 1e8, 1e60])
+def test_null_components_of_matrices_of_any_size_say_the_same(size: float) -> None:
+    rounding = {"value_rounding": 1e-13 * size, "product_rounding": np.full(3, 1e-13 * size**2)}
+    evidence = by_hand([5 * size, 3 * size, 0], [1e-9 * size**2, 1e-9 * size**2, 0], 1e-12 * size, **rounding)
+    certificate = certify(evidence, 3, 10, 1e-3, strict=False)
+    np.testing.assert_array_equal(certificate.null, [False, False, True])
+    assert certificate.state_words == ("resolved",) * 3
+    np.testing.assert_allclose(certificate.residual / size, [2e-10, 3.33e-10, 2e-14], rtol=0.01)
+
+
 def test_a_null_component_is_open_while_the_missed_bound_is_large() -> None:
     certificate = certify(by_hand([5, 3, 0], [1e-9, 1e-9, 0], 2.0), 3, 10, 1e-3, strict=False)
     assert certificate.null[2]
