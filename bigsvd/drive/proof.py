@@ -93,8 +93,9 @@ class Proof:
         self.fold_error = triangle_rounding(depth, float(np.linalg.norm(sums.triangle))) * growth
 
     def begin_again(self) -> None:
-        """Forget the rounding of columns that were dropped."""
+        """Forget the rounding of columns that were dropped, and what rests on it: measured is less than proved."""
         self.measured, self.tall_error = False, 0.0
+        self.proved_ends = np.zeros(0)
 
     def evidence(self, ritz: Ritz) -> Evidence:
         """Everything the certificate rests on, after a Rayleigh–Ritz step."""
@@ -136,7 +137,8 @@ class Proof:
         # Deterministic bounds first: of equal ones, the stronger statement is kept.
         left = energy_bound(self.sweeps.energy, theta, self.sweeps.energy_rounding, value_rounding)
         best = left, "energy that the factors leave"
-        if self.whole is not None:
+        if self.whole is not None and not self.state.restarts:
+            # A restart keeps Ritz vectors of a larger space, of which the whole spectrum says nothing.
             next_value = self.whole.missed(min(self.sweeps.plan.widths.start, self.state.across))
             if next_value < best[0]:
                 best = next_value, "next value of the whole spectrum"

@@ -262,8 +262,12 @@ class _Run:
         wanted = self.plan.request.variance
         if wanted is None:
             return True
+        if self.sweeps.energy == 0:
+            # Of no variance at all one component captures any share.
+            self.rank = 1
+            return True
         lower = np.maximum(evidence.theta - evidence.value_rounding, 0.0)
-        share = np.cumsum(lower**2) / max(self.sweeps.energy, np.finfo(float).tiny)
+        share = np.cumsum(lower**2) / self.sweeps.energy
         # The last figures of a share of one cannot be reached in rounded sums.
         enough = np.flatnonzero(share >= wanted * (1 - 1e-9))
         if len(enough) and enough[0] < self.plan.rank:
@@ -286,7 +290,8 @@ class _Run:
             return (
                 self.proof.whole is not None or self.sweeps.made > 1 or full or bool(np.all(certificate.index_proved))
             )
-        if self.sweeps.in_single:
+        if self.sweeps.in_single and self.plan.request.precision != "single":
+            # Double may still do better.
             return False
         return full or rounding_limited(evidence, certificate)
 
@@ -312,7 +317,7 @@ class _Run:
     def _rounding_too_large(self, evidence: Evidence, certificate: Certificate) -> bool:
         """Whether single precision spends more than its share of the tolerance on a component that is still open."""
         if self.plan.request.precision == "single":
-            return self.state.width >= self.state.across
+            return False
         theta = np.maximum(evidence.theta[: certificate.rank], 1e-150)
         rounding = evidence.product_rounding[: certificate.rank] / theta / np.sqrt(2) + evidence.value_rounding
         width = certificate.upper - certificate.lower
