@@ -46,7 +46,7 @@ def test_a_run_converges_through_restarts_at_the_width_limit(name: str, preparat
 
 
 # --------------------------------------------------------------------------------------------- from single to double
-# Without `_go_over_to_double` the run ends open in single; with `tall_error` kept by it, open in double.
+# Without `_go_over_to_double` the run ends open in single; with the rounding kept by `begin_again`, open in double.
 @pytest.mark.parametrize("scale", ["none", "unit"])
 def test_rounding_that_the_sample_does_not_show_sends_the_run_over_to_double(scale: str) -> None:
     shape, options = (3200, 80), {"rank": 8, "panel_lines": 50, "scale": scale}
@@ -103,25 +103,25 @@ def test_a_matrix_of_any_size_has_the_same_certificate_but_for_the_size(size: fl
 
 
 # ---------------------------------------------------------------------------------------------------- the pilot misses
-# With no test vectors (`widths.test` of 0) the run ends after the first sweep and does not know the direction; without
-# the Gaussian columns it would still be seen by the second sweep, but later.
+# Without the question for a proved order in `_finished` the run ends after one sweep, its tolerance met by ten true
+# singular values, without the fifth.
 def test_a_direction_that_no_sampled_panel_contains_is_found_and_placed() -> None:
-    shape, options = (3000, 100), {"rank": 10, "panel_lines": 30}
-    random = np.random.default_rng(7)
-    right = table.orthonormal(8, 100, 40).T
-    matrix = (random.standard_normal((3000, 39)) * 0.8 ** np.arange(39)) @ right[:39]
+    shape, options = (4000, 200), {"rank": 10, "panel_lines": 40, "center": "none"}
     free = [panel for panel in range(100) if panel not in pilot_panels(shape, "f8", **options)]
-    rows = slice(30 * free[-1], 30 * free[-1] + 30)  # 1 % of the rows
-    matrix[rows] += np.outer(random.choice([-6.0, 6.0], 30), right[39])
+    rare = np.zeros(4000, bool)
+    rare[40 * free[-1] : 40 * free[-1] + 40] = True  # 1 % of the rows
+    values = np.r_[np.linspace(10, 9, 10), 0.5 ** np.arange(4)]
+    right = table.orthonormal(8, 200, 15).T
+    matrix = np.zeros(shape)
+    matrix[~rare] = (table.orthonormal(7, 3960, 14) * values) @ right[:14]
+    matrix[rare] = np.outer(np.full(40, 9.5 / np.sqrt(40)), right[14])
     factors = bigsvd.decompose(matrix, **ROWS, **options)
-    truth = table.truth_of(matrix, CENTRED)
-    place = int(np.argmax(np.linalg.norm(truth.left[rows], axis=0)))
-    assert place < 10
-    assert np.linalg.norm(truth.left[rows, place]) > 0.99
+    place = 5  # 10, 9.89, 9.78, 9.67, 9.56, then 9.5
     assert factors.certificate.tolerance_met
-    assert factors.attributes["sweeps"] >= 2
-    assert abs(np.vdot(factors.right_vectors[:, place], truth.right[:, place])) > 1 - 1e-8
-    table.assert_factors_true(factors, truth)
+    assert factors.certificate.index_proved.all()
+    assert factors.singular_values[place] == pytest.approx(9.5, rel=1e-9)
+    assert abs(factors.right_vectors[:, place] @ right[14]) > 1 - 1e-9
+    table.assert_factors_true(factors, table.truth_of(matrix, PLAIN))
 
 
 # Without `mean_only` in plan/plan.py the pilot is one panel of seven, and its directions replace the Gaussian ones.
@@ -216,7 +216,7 @@ def test_a_basis_that_spans_the_whole_space_misses_nothing(rank: int, dtype: str
 
 
 # ----------------------------------------------------------------------------------------------------------- variance
-# Without the doubling in `_settle_rank` the run ends with fifty components, short of the share.
+# Without `_settle_rank` the run ends with fifty components; without its doubling it takes a sweep more.
 def test_variance_grows_past_its_first_guess() -> None:
     matrix = table.planted(np.arange(1, 301) ** -0.5, (1500, 300), 95)
     true = np.linalg.svd(centred(matrix), compute_uv=False)
@@ -228,6 +228,17 @@ def test_variance_grows_past_its_first_guess() -> None:
     assert factors.certificate.captured_share >= 0.8
     assert np.sum(factors.singular_values[:-1] ** 2) / np.sum(true**2) < 0.8
     table.assert_factors_true(factors, table.truth_of(matrix, CENTRED), share=0.8)
+
+
+def test_the_guess_doubles_so_that_the_basis_grows_with_it() -> None:
+    values = np.arange(1, 701) ** -0.5
+    factors = bigsvd.decompose(
+        table.planted(values, (1500, 700), 95), variance=0.7, max_rank=200, panel_lines=80, **ROWS
+    )
+    wanted = int(np.argmax(np.cumsum(values**2) >= 0.7 * np.sum(values**2))) + 1
+    assert factors.certificate.rank == wanted > 50
+    assert factors.attributes["sweeps"] <= 4
+    np.testing.assert_allclose(factors.singular_values[:], values[:wanted], rtol=1e-3)
 
 
 # Without `_share_not_reached` the certificate calls the tolerance met.
