@@ -143,6 +143,6 @@ def carry_chains(
         chain.tau = tau / norm if norm > 0 else tau
         chain.lost = lost / norm if norm > 0 else 0.0
         chain.log_norm += float(np.log(max(norm, lost))) if max(norm, lost) > 0 else -np.inf
-        if 0 < norm < lost:
+        if norm < lost:
             # Nothing but rounding is left: the bound rests on what may have been lost.
             chain.lost = 1.0

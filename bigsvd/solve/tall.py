@@ -35,6 +35,8 @@ class TallVectors:
     def __init__(self, scratch: Scratch, state: State, ritz: Ritz, null: np.ndarray, seed: int) -> None:
         rank = len(null)
         self.scratch, self.seed, self.null = scratch, seed, null
+        # Memory is planned for twice the basis; a run of many sweeps has stored more columns, and takes fewer lines.
+        self.step = max(1, min(TALL_LINES, TALL_LINES * 2 * state.basis.shape[1] // max(1, scratch.stored)))
         self.complex = scratch.dtype.kind == "c"
         safe = np.where(null, 1.0, np.maximum(ritz.theta[:rank], np.finfo(float).tiny))
         self.coefficients = ritz.rotation[:, :rank] / safe
@@ -51,7 +53,13 @@ class TallVectors:
 
     def fix_phase(self) -> None:
         """Make the entry of largest modulus of every column real and positive."""
-        self.phase = _phases(np.array([self.rows(int(at), int(at) + 1)[0, i] for i, at in enumerate(self.peak_lines)]))
+        # Entries of small components depend on how many lines are multiplied at once: by the blocks that are written.
+        entries = np.zeros(len(self.peak_lines), self.scratch.dtype)
+        for start in np.unique(self.peak_lines // self.step * self.step):
+            block = self.rows(int(start), min(int(start) + self.step, self.scratch.lines))
+            inside = np.flatnonzero(self.peak_lines // self.step * self.step == start)
+            entries[inside] = block[self.peak_lines[inside] - start, inside]
+        self.phase = _phases(entries)
 
     def rows(self, start: int, stop: int) -> np.ndarray:
         """Lines start … stop of U, shape (lines, k)."""
@@ -68,8 +76,8 @@ class TallVectors:
 
     def blocks(self) -> Iterator[tuple[int, np.ndarray]]:
         """Yield (first line, lines of U) over all lines."""
-        for start in range(0, self.scratch.lines, TALL_LINES):
-            yield start, self.rows(start, min(start + TALL_LINES, self.scratch.lines))
+        for start in range(0, self.scratch.lines, self.step):
+            yield start, self.rows(start, min(start + self.step, self.scratch.lines))
 
     def _inspect(self) -> tuple[np.ndarray, np.ndarray]:
         """UᴴU, and the line of the entry of largest modulus of every column."""

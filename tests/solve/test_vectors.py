@@ -53,6 +53,35 @@ def test_tall_vectors_are_orthonormal_and_satisfy_their_equation(
     scratch.close()
 
 
+def test_largest_entries_of_small_components_are_real_in_the_blocks_that_are_written(tmp_path: Path) -> None:
+    # A component of 1e-7 keeps nine figures; entries computed line by line differ from those of a block in the others.
+    matrix = samples(230, 12, imaginary=True)
+    matrix[:, 3:] *= 1e-7
+    state, scratch = empty(tmp_path, matrix, 12)
+    add_columns(
+        state, scratch, matrix, orthonormal_block(12, 12, imaginary=True), Preparation(True, False, False),
+        centred=False, exact=True,
+    )  # fmt: skip
+    vectors = TallVectors(scratch, state, state.ritz(), np.zeros(8, bool), 1)
+    vectors.fix_phase()
+    u = np.concatenate([block for _, block in vectors.blocks()])
+    largest = u[np.abs(u).argmax(axis=0), np.arange(8)]
+    assert np.all(largest.real > 0)
+    assert np.all(np.abs(largest.imag) < 1e-15)
+    scratch.close()
+
+
+def test_fewer_lines_are_taken_at_a_time_where_many_columns_were_stored(tmp_path: Path) -> None:
+    matrix = samples(230, 20)
+    state, scratch = empty(tmp_path, matrix, 20)
+    for _ in range(3):
+        state.forget(scratch)
+        block = orthonormal_block(20, 20)
+        add_columns(state, scratch, matrix, block, Preparation(True, False, False), centred=False, exact=True)
+    assert TallVectors(scratch, state, state.ritz(), np.zeros(7, bool), 1).step == tall.TALL_LINES * 2 // 3
+    scratch.close()
+
+
 @both
 def test_null_columns_are_completed_orthonormally_and_keyed_by_line(imaginary: bool, tmp_path: Path) -> None:
     matrix = samples(120, 12, imaginary=imaginary)
