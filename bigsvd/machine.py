@@ -95,14 +95,15 @@ def peak_resident_bytes() -> int:
 def tune_allocator() -> None:
     """Make glibc hand large blocks back at once.
 
-    Its threshold otherwise grows to 32 MiB with use, and freed buffers stay in the heap, beyond any plan.
+    Its threshold otherwise grows to 32 MiB with use, and freed buffers stay in the heap, beyond any plan. Below the
+    threshold blocks are used again without the kernel clearing their pages anew.
     """
     import ctypes
 
     try:
         library = ctypes.CDLL(None)
-        library.mallopt(_MALLOC_MMAP, 2**20)
-        library.mallopt(_MALLOC_TRIM, 8 * 2**20)
+        library.mallopt(_MALLOC_MMAP, 4 * 2**20)
+        library.mallopt(_MALLOC_TRIM, 16 * 2**20)
     except (OSError, AttributeError, TypeError):
         # Another C library: nothing to tune.
         return

@@ -108,7 +108,9 @@ def gaussian_block(
     skipped, extra = divmod(first_row * words, 4)
     generator.advance(skipped)
     bits = generator.random_raw(extra + rows * words)[extra:]
-    normals = _normal((bits >> np.uint64(11)).astype(np.float64) * 2.0**-53 + 2.0**-54)
+    uniform = (bits >> np.uint64(11)).astype(np.float64) * 2.0**-53 + 2.0**-54
+    # The largest word would round to one, whose normal is infinite.
+    normals = _normal(np.minimum(uniform, 1.0 - 2.0**-53))
     if complex_entries:
         return (normals.view(np.complex128) * np.sqrt(0.5)).reshape(rows, columns)
     return normals.reshape(rows, columns)

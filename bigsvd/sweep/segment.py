@@ -116,6 +116,7 @@ class _Segment:
             self.sums.gram = np.zeros((self.across, self.across), task.wide)
         if task.block is not None:
             self.sums.products = np.zeros((task.block.shape[1], self.across), task.wide)
+            self.product = np.empty(task.block.shape[1] * self.tile, task.dtype)
             if task.sampled:
                 self.sums.rounding = np.zeros((3, task.block.shape[1]))
                 self.sums.unit_energies = np.zeros(4)
@@ -256,10 +257,17 @@ class _Segment:
             shape = (len(unit), self.across)
             flat = self.work[: shape[0] * shape[1]]
             tile = flat.reshape(shape) if self.task.reader.geometry.axis == 0 else flat.reshape(shape[::-1]).T
-            np.add(sums.products, left @ tile, out=sums.products)
+            self._add_product(left, tile, slice(0, self.across))
             return
         for columns, tile in self._tiles(unit, statistics, self.task.dtype):
-            np.add(sums.products[:, columns], left @ tile, out=sums.products[:, columns])
+            self._add_product(left, tile, columns)
+
+    def _add_product(self, left: np.ndarray, tile: np.ndarray, columns: slice) -> None:
+        """Add Yᴴ times a tile to the sums in double, through a buffer that is used again."""
+        assert self.sums.products is not None
+        product = self.product[: len(left) * tile.shape[1]].reshape(len(left), tile.shape[1])
+        np.matmul(left, tile, out=product)
+        np.add(self.sums.products[:, columns], product, out=self.sums.products[:, columns])
 
     def _measure(self, unit: np.ndarray, statistics: LineStatistics | None, tall: np.ndarray) -> None:
         """Recompute a unit in double and add up the differences."""
