@@ -154,6 +154,8 @@ class _Run:
         """The columns that the first basis sweep multiplies, by route."""
         plan, seed = self.plan, self.plan.request.seed
         start = None
+        if plan.mean_only and plan.may_be_single and plan.request.precision == "single":
+            self.sweeps.work = self.sweeps.single
         if plan.pilot_panels:
             if plan.mean_only:
                 self.sweeps.take_mean()

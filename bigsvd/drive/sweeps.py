@@ -97,7 +97,7 @@ class Sweeps:
         held = self.reader.peek(panel)
         if self.across_features:
             lines = held if self.plan.geometry.axis == 0 else held.T
-            self.preparation = first_statistics(lines, self.preparation, self.wide)
+            self.preparation = first_statistics(lines, self.preparation, self.work)
 
     def take_pilot(self, directions: int, *, may_be_single: bool) -> Pilot:
         """Read the sample and solve it; later sweeps start from its mean and scales."""

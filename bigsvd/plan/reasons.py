@@ -61,6 +61,8 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
             else "sums over the whole spectrum in double"
         )
         reasons.append(("precision", f"double: {why}"))
+    elif request.precision == "auto" and best.mean_only:
+        reasons.append(("precision", "double: there is no pilot to show that single would do"))
     elif request.precision == "auto":
         reasons.append(
             (

@@ -61,11 +61,6 @@ def split(columns: np.ndarray, basis: np.ndarray) -> tuple[np.ndarray, np.ndarra
     return q, inside, t
 
 
-def combine_columns(tall: np.ndarray, coefficients: np.ndarray) -> np.ndarray:
-    """Tall · coefficients."""
-    return tall @ coefficients
-
-
 def triangle_svd(triangle: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Singular values θ, decreasing, and right vectors W of a square matrix.
 

@@ -59,3 +59,17 @@ def test_single_as_asked_stays_single_and_ends_where_rounding_limits_it() -> Non
     true = np.linalg.svd(matrix.astype(float) - matrix.mean(axis=0, dtype=float), compute_uv=False)[:5]
     assert np.all(factors.certificate.lower <= true)
     assert np.all(true <= factors.certificate.upper)
+
+
+@pytest.mark.parametrize(("precision", "found"), [("single", "single"), ("auto", "double")])
+def test_without_a_pilot_the_precision_is_what_the_plan_says(precision: str, found: str) -> None:
+    random = np.random.default_rng(8)
+    matrix = (random.standard_normal((600, 40)) * 0.7 ** np.arange(40) + 1000).astype(np.float32)
+    factors = bigsvd.decompose(
+        matrix, rank=3, precision=precision, route="krylov", axis="rows", panel_lines=150, memory="1GiB"
+    )
+    assert factors.attributes["precision"] == found
+    assert dict(factors.attributes["plan"]["reasons"])["precision"].startswith(found)
+    true = np.linalg.svd(matrix.astype(float) - matrix.mean(axis=0, dtype=float), compute_uv=False)[:3]
+    assert np.all(factors.certificate.lower <= true * (1 + 1e-13))
+    assert np.all(true <= factors.certificate.upper * (1 + 1e-13))
