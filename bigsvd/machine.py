@@ -35,16 +35,27 @@ def memory_limit() -> int:
     return min(limits)
 
 
-def _group_limits() -> list[int]:
-    """Limits of the control groups this process is in, both versions, where they are visible."""
+def _group_limits(system: Path = Path("/")) -> list[int]:
+    """Limits of the control groups this process is in and of all above them, both versions, where they are visible."""
+    try:
+        entries = (system / "proc/self/cgroup").read_text().splitlines()
+    except OSError:
+        entries = []
+    groups = system / "sys/fs/cgroup"
+    files = {groups / "memory.max", groups / "memory/memory.limit_in_bytes"}
+    for entry in entries:
+        _, controllers, group = entry.split(":", 2)
+        own = Path(group.lstrip("/"))
+        if not controllers:
+            files |= {groups / part / "memory.max" for part in (own, *own.parents)}
+        elif "memory" in controllers.split(","):
+            files |= {groups / "memory" / part / "memory.limit_in_bytes" for part in (own, *own.parents)}
     limits = []
-    for name in ("/sys/fs/cgroup/memory.max", "/sys/fs/cgroup/memory/memory.limit_in_bytes"):
-        try:
-            text = Path(name).read_text().strip()
-        except OSError:
-            continue
-        if text.isdigit():
-            limits.append(int(text))
+    for file in files:
+        with contextlib.suppress(OSError):
+            text = file.read_text().strip()
+            if text.isdigit():
+                limits.append(int(text))
     return limits
 
 
