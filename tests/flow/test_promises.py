@@ -177,9 +177,10 @@ def free_processors() -> float:
 def test_two_workers_sweep_at_least_half_as_fast_again_as_one() -> None:
     matrix = np.random.default_rng(4).standard_normal((20_000, 1000))
     best = {1: np.inf, 2: np.inf}
-    free = []
     for _ in range(3):
-        free.append(free_processors())
+        before = free_processors()
+        if before < 1.8:
+            pytest.skip(f"other programs hold the processors: two threads do {before:.2f} times the work of one")
         for workers in best:
             factors = bigsvd.decompose(
                 matrix,
@@ -192,11 +193,11 @@ def test_two_workers_sweep_at_least_half_as_fast_again_as_one() -> None:
                 tolerance=1e-9,
             )
             best[workers] = min(best[workers], factors.attributes["timings"]["sweep"])
-        free.append(free_processors())
         if best[1] / best[2] >= 1.5:
             return
-    if min(free) < 1.8:
-        pytest.skip(f"other programs hold the processors: two threads do {min(free):.2f} times the work of one")
+    after = free_processors()
+    if after < 1.8:
+        pytest.skip(f"other programs hold the processors: two threads do {after:.2f} times the work of one")
     raise AssertionError(f"one worker {best[1]:.2f} s, two workers {best[2]:.2f} s, on processors that were free")
 
 
