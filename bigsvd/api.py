@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import shutil
 import tempfile
 import time
 from collections.abc import Callable, Iterator
@@ -28,7 +29,7 @@ from bigsvd.drive import (
 )
 from bigsvd.errors import OptionError
 from bigsvd.factors import Factors, FactorsWriter, check_output, open_factors, store_cost
-from bigsvd.plan import Request, make_plan
+from bigsvd.plan import Plan, Request, make_plan
 from bigsvd.solve import TallVectors, column_phases
 from bigsvd.source import MatrixSpec, Source, check_complete, open_source
 from bigsvd.sweep import Control, Listener, one_blas_thread
@@ -142,14 +143,15 @@ def decompose(
     control = Control(progress)
     try:
         with _environment() as held_before:
+            if target is not None:
+                check_output(target, overwrite=overwrite, source_path=_path_of(source))
             foreseen = _foresee(opened, options, control, probe=True)
             plan = foreseen.plan
             if planned is not None:
                 planned(foreseen)
-            if target is not None:
-                check_output(target, overwrite=overwrite, source_path=_path_of(source))
             check_complete(opened)
             folder = _scratch_folder(scratch, target)
+            _require_scratch_space(folder, plan)
             outcome = run(opened, plan, control, folder)
             try:
                 checks = _check_slices(opened, outcome, folder, control)
@@ -289,6 +291,24 @@ def _scratch_folder(scratch: str | Path | None, out: Path | None) -> Path:
     if scratch is not None:
         return Path(scratch).expanduser()
     return Path(tempfile.gettempdir()) if out is None else out.expanduser().resolve().parent
+
+
+def _require_scratch_space(folder: Path, plan: Plan) -> None:
+    """Refuse before reading when the tall products of the expected sweeps would fill the device."""
+    needed = plan.scratch_bytes
+    try:
+        free = shutil.disk_usage(folder).free
+    except OSError as error:
+        raise OptionError(
+            f"the scratch folder {folder} cannot be used",
+            evidence=[str(error)],
+            remedy="Give --scratch a folder that exists.",
+        ) from error
+    if free < needed:
+        raise OptionError(
+            f"scratch needs about {show_bytes(needed)}, and {folder} has {show_bytes(free)} free",
+            remedy="Give --scratch a folder on a larger device.",
+        )
 
 
 def _check_slices(source: Source, outcome: Outcome, folder: Path, control: Control) -> tuple[SliceCheck, ...]:

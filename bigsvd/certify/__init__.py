@@ -4,7 +4,7 @@ from bigsvd.certify.certificate import STATES, Certificate, SliceCheck
 from bigsvd.certify.evidence import Evidence, WholeSpectrum
 from bigsvd.certify.intervals import BULK_WIDTH
 from bigsvd.certify.missed import CHAIN_FAILURE, ChainState, chain_bound, energy_bound, least_projection
-from bigsvd.certify.order import upper_ends
+from bigsvd.certify.order import index_bounds, upper_ends
 from bigsvd.certify.rounding import (
     SumDepth,
     fold_rounding,
@@ -34,6 +34,7 @@ __all__ = [
     "fold_rounding",
     "gamma",
     "gram_rounding",
+    "index_bounds",
     "least_projection",
     "measured_rounding",
     "product_rounding",

@@ -10,7 +10,7 @@ from bigsvd.certify.evidence import Evidence
 _PLACES = 48
 
 
-def upper_ends(evidence: Evidence, earlier: np.ndarray | None = None) -> np.ndarray:
+def upper_ends(evidence: Evidence, earlier: np.ndarray | None = None, own: np.ndarray | None = None) -> np.ndarray:
     """Upper ends by index from everything that is known: this basis, a whole spectrum, earlier sweeps.
 
     Parameters
@@ -18,20 +18,23 @@ def upper_ends(evidence: Evidence, earlier: np.ndarray | None = None) -> np.ndar
     evidence : Evidence
     earlier : ndarray, shape (any,), or None
         Ends proved with earlier bases. They are facts about A, and stay true when the basis is restarted.
+    own : ndarray, shape (L + 1,), or None
+        `index_bounds` of this evidence, where they were computed already.
 
     Returns
     -------
     ndarray, shape (L + 1,)
         u with σ_{i+1} ≤ u[i].
     """
-    upper = index_bounds(evidence)
+    upper = index_bounds(evidence) if own is None else own.copy()
     known = [] if evidence.whole is None else [evidence.whole.value + evidence.whole.error]
     if earlier is not None:
         known.append(earlier)
     for ends in known:
         count = min(len(ends), len(upper))
         upper[:count] = np.minimum(upper[:count], ends[:count])
-    return upper
+    # Singular values decrease, so an end bounds all that follow.
+    return np.minimum.accumulate(upper)
 
 
 def index_bounds(evidence: Evidence) -> np.ndarray:

@@ -13,6 +13,7 @@ from bigsvd.certify import (
     chain_bound,
     energy_bound,
     gamma,
+    index_bounds,
     measured_rounding,
     product_rounding,
     tall_rounding,
@@ -45,6 +46,10 @@ class Proof:
         Whether anything proved so far rests on test vectors.
     proved_ends : ndarray, shape (any,)
         Upper ends by index that earlier sweeps proved; facts about the matrix, whatever the basis.
+    own_ends : ndarray, shape (L + 1,)
+        Those that the present basis proves alone.
+    left_out : float
+        Bound of ‖A(I − VVᴴ)‖ for the Ritz vectors V that the last restart kept.
     """
 
     sweeps: Sweeps
@@ -56,15 +61,17 @@ class Proof:
     fold_error: float = 0.0
     relied: bool = False
     proved_ends: np.ndarray = field(default_factory=lambda: np.zeros(0))
+    own_ends: np.ndarray = field(default_factory=lambda: np.zeros(0))
+    left_out: float = float("inf")
 
-    def sweep_rounding(self, sums: Partial, used: np.ndarray, products: np.ndarray) -> tuple[np.ndarray, float]:
+    def sweep_rounding(self, sums: Partial, used: np.ndarray) -> tuple[np.ndarray, float]:
         """Rounding of a sweep's products.
 
         Parameters
         ----------
         sums : Partial
-        used, products : ndarray, shape (across, b)
-            The columns multiplied, and AᴴA times them.
+        used : ndarray, shape (across, b)
+            The columns multiplied.
 
         Returns
         -------
@@ -81,9 +88,11 @@ class Proof:
         assert sums.triangle is not None
         frobenius = float(np.sqrt(sums.energy))
         depth = self.sweeps.depth(sums.triangle.shape[0])
-        # ‖y_j‖² is the diagonal of BᴴZ.
-        norms = np.sqrt(np.abs(np.einsum("ij,ij->j", used.conj(), products)))
-        return product_rounding(depth, frobenius, norms), tall_rounding(depth, frobenius, used.shape[1])
+        # Norms of the columns as they were swept, means included.
+        norms = np.linalg.norm(sums.triangle[:, -used.shape[1] :], axis=0)
+        # The correction for the mean errs by the rounding of δ, twice.
+        mean = 2 * gamma(depth.unit_lines + depth.additions + 4, complex_entries=depth.complex_entries) * sums.energy
+        return product_rounding(depth, frobenius, norms) + mean, tall_rounding(depth, frobenius, used.shape[1])
 
     def count_rounding(self, sums: Partial, tall: float, growth: float) -> None:
         """Add the rounding of a sweep's Y, and replace that of the fold: every sweep folds all of Y anew."""
@@ -96,6 +105,11 @@ class Proof:
         """Forget the rounding of columns that were dropped, and what rests on it: measured is less than proved."""
         self.measured, self.tall_error = False, 0.0
         self.proved_ends = np.zeros(0)
+        self.left_out = float("inf")
+
+    def keep_ritz_vectors(self, keep: int) -> None:
+        """Note a restart: the recursion bounds what is left out, the complement of the kept Ritz vectors."""
+        self.left_out = float(self.own_ends[keep])
 
     def evidence(self, ritz: Ritz) -> Evidence:
         """Everything the certificate rests on, after a Rayleigh–Ritz step."""
@@ -126,7 +140,8 @@ class Proof:
             sweeps.energy,
             spectrum,
         )
-        ends = upper_ends(found, self.proved_ends)
+        self.own_ends = index_bounds(found)
+        ends = upper_ends(found, self.proved_ends, self.own_ends)
         self.proved_ends = np.concatenate([ends, self.proved_ends[len(ends) :]])
         return replace(found, ends=ends)
 
@@ -142,6 +157,8 @@ class Proof:
             next_value = self.whole.missed(min(self.sweeps.plan.widths.start, self.state.across))
             if next_value < best[0]:
                 best = next_value, "next value of the whole spectrum"
+        if self.left_out < best[0]:
+            best = self.left_out, "what the last restart left out"
         for chain in self.state.chains:
             bound = chain_bound(
                 ChainState(

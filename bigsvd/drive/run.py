@@ -230,7 +230,7 @@ class _Run:
         if learnt is not None:
             products = correct_products(products, used, learnt, sums.lines, centred=sweeps.ones)
             column_scale = learnt.column_scale
-        error, tall = self.proof.sweep_rounding(sums, used, products)
+        error, tall = self.proof.sweep_rounding(sums, used)
         if column_scale is not None:
             error = error / column_scale.min()
         exact = not rounded and column_scale is None
@@ -238,7 +238,13 @@ class _Run:
             used, products, sums.triangle, sweeps.scratch, error, centred=sweeps.ones, exact=exact
         )  # fmt: skip
         self.proof.count_rounding(sums, tall * growth, growth)
-        carry_chains(self.state, sweeps.energy, self.plan.request.seed, column_scale, measured=self.proof.measured)
+        carry_chains(
+            self.state,
+            sweeps.energy + sweeps.energy_rounding,
+            self.plan.request.seed,
+            column_scale,
+            measured=self.proof.measured,
+        )
 
     def _whole_spectrum(self) -> np.ndarray:
         """Sweep for the whole spectrum; return the leading right vectors, whose sweep closes the route."""
@@ -282,6 +288,8 @@ class _Run:
     def _finished(self, evidence: Evidence, certificate: Certificate, reached: bool) -> bool:
         """Whether to stop here."""
         full = self.state.width >= self.state.across
+        if self.sweeps.made < self.plan.request.least_sweeps and not full:
+            return False
         if self.sweeps.made >= self.plan.request.max_sweeps:
             return True
         if not reached:
@@ -307,6 +315,7 @@ class _Run:
         if state.width + widths.grow + 2 * tests > room and state.width > widths.keep:
             keep = min(widths.keep, state.width)
             state.restart(keep, ritz, self.sweeps.scratch)
+            self.proof.keep_ritz_vectors(keep)
             ritz = Ritz(ritz.theta[:keep], np.eye(keep, dtype=self.sweeps.wide), ritz.residual_gram[:keep, :keep])
             tests = widths.test
         block = grow_block(

@@ -166,7 +166,7 @@ def check_slice(
     request = replace(
         plan.request, rank=rank, variance=None, axis=("rows", "columns")[plan.geometry.axis], route=plan.route,
         precision=precision, panel_lines=max(1, lines // (2 * LEAST_PANELS)), width_limit=1, memory=None,
-        max_sweeps=max(8, plan.request.max_sweeps),
+        max_sweeps=max(8, plan.request.max_sweeps), least_sweeps=2,
     )  # fmt: skip
     small = make_plan(part.spec, request, ceiling=max(plan.ceiling, 2**30), processors=plan.workers)
     small = replace(small, resident=True)

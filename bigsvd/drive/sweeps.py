@@ -21,6 +21,10 @@ from bigsvd.units import show_count
 # Panels whose first unit is recomputed in double, to measure rounding in single.
 ROUNDING_PANELS = 8
 STREAM_ROUNDING = 3
+# Residuals enter as fourth powers of singular values: ‖A‖_F⁴ must be a double.
+ENERGY_RANGE = (1e-140, 1e140)
+# Ratio of the largest to the smallest change of scale above which a first sweep is made again.
+MOST_SCALE_SPREAD = 1e4
 
 
 class OverflowInSingleError(Exception):
@@ -158,7 +162,24 @@ class Sweeps:
         self._refuse_change(sums)
         if sums.overflow:
             self._give_up_single(block is not None)
-        return sums, self._take_statistics(sums)
+        learnt = self._take_statistics(sums)
+        self._refuse_range()
+        if learnt is not None and learnt.column_scale is not None and _spread(learnt.column_scale) > MOST_SCALE_SPREAD:
+            # Re-expressing what was multiplied in such coordinates would lose figures; the statistics are exact now.
+            self.remarks.append("one more sweep: the pilot's scales were far from those of the whole matrix")
+            if block is not None:
+                self.scratch.drop_last_block()
+            return self.sweep(kind, block)
+        return sums, learnt
+
+    def _refuse_range(self) -> None:
+        """Refuse a matrix whose energy squared leaves the range of double precision."""
+        if self.energy > 0 and not ENERGY_RANGE[0] < self.energy < ENERGY_RANGE[1]:
+            raise OptionError(
+                f"{self.plan.spec.name}: entries are so large or small that double precision cannot hold their powers",
+                evidence=[f"‖A‖_F = {np.sqrt(self.energy):.3g}; handled are 1e-70 to 1e70"],
+                remedy="Multiply the matrix by a power of two, which changes no figure, then run again.",
+            )
 
     def _refuse_bad(self, sums: Partial) -> None:
         """Refuse a matrix that holds NaN or infinity, with places."""
@@ -208,7 +229,8 @@ class Sweeps:
         depth = self.depth(1)
         per_sum = gamma(depth.unit_lines + depth.additions + 4, complex_entries=depth.complex_entries)
         if self.in_single:
-            per_sum = 2 * UNIT_LINES * 2.0**-24
+            # Summed in double; the entries were rounded to single when they were prepared.
+            per_sum += 4 * 2.0**-24
         self.energy_rounding = per_sum * sums.energy
         if self.across_features:
             learnt = learn(sums, self.preparation)
@@ -252,3 +274,8 @@ class Sweeps:
     def close(self) -> None:
         """End the workers."""
         self.engine.close()
+
+
+def _spread(scale: np.ndarray) -> float:
+    """Ratio of the largest to the smallest entry."""
+    return float(scale.max() / scale.min())

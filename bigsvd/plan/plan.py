@@ -89,6 +89,15 @@ class Plan:
         return factor * self.nominal_sweeps * (folding + 6 * n * width * self.widths.block / PRODUCT_RATE["double"])
 
     @property
+    def scratch_bytes(self) -> int:
+        """Disk that the tall products of the expected sweeps take; each further sweep adds a block."""
+        entry = 16 if self.spec.dtype.kind == "c" else 8
+        columns = self.widths.start + self.widths.test
+        if self.route == "krylov":
+            columns += (self.nominal_sweeps - 1) * (self.widths.grow + 2 * self.widths.test)
+        return self.geometry.lines * columns * entry
+
+    @property
     def mean_only(self) -> bool:
         """Whether the pilot gives a first mean only, and its panel is held for the first sweep."""
         return mean_is_enough(self.route, self.geometry)

@@ -56,6 +56,10 @@ class Request:
         ``auto`` or a choice forced by the user.
     panel_lines : int or None
         Lines per panel, forced (tests, slices); None lets the planner decide.
+    least_sweeps : int
+        Fewest basis sweeps (slices, so that they restart).
+    width_limit : int or None
+        Most columns of the basis, forced down to the least that works (slices, so that they restart).
     seed : int
         Seed of every random number.
     """
@@ -76,6 +80,7 @@ class Request:
     axis: str = "auto"
     panel_lines: int | None = None
     width_limit: int | None = None
+    least_sweeps: int = 1
     seed: int = 0
 
 

@@ -170,11 +170,12 @@ class _Segment:
         for columns, tile in converted:
             if not learns_apart:
                 self._tile_sums(tile, columns)
-            energy += _energy(tile)
+            energy += float(_squares(tile).sum())
             if task.block is not None:
                 part = _product(tile, task.block[columns], task.wide)
                 tall = part if tall is None else np.add(tall, part, out=tall)
-        if not np.isfinite(energy):
+        # Every entry of the products is at most the energy, so this tells overflow before it happens.
+        if not energy < np.finfo(task.dtype).max:
             self._not_finite(unit, start)
             return
         sums.energy += energy
@@ -240,12 +241,9 @@ class _Segment:
         """Add the sum of lines and squares of a tile."""
         sums = self.sums
         if sums.line_sum is not None:
-            sums.line_sum[columns] += np.ones(len(tile), tile.dtype) @ tile
+            sums.line_sum[columns] += np.add.reduce(tile, axis=0, dtype=self.task.wide)
         if sums.square_sum is not None:
-            squares = np.einsum("ij,ij->j", tile.real, tile.real)
-            if tile.dtype.kind == "c":
-                squares += np.einsum("ij,ij->j", tile.imag, tile.imag)
-            sums.square_sum[columns] += squares
+            sums.square_sum[columns] += _squares(tile)
 
     def _second_product(self, unit: np.ndarray, statistics: LineStatistics | None, tall: np.ndarray) -> None:
         """Z += AᴴY, held as its conjugate transpose."""
@@ -372,10 +370,11 @@ def _product(tile: np.ndarray, block: np.ndarray, wide: np.dtype) -> np.ndarray:
     return total
 
 
-def _energy(tile: np.ndarray) -> float:
-    """Sum of squares; in single precision rows are summed in short runs that are added up in double."""
+def _squares(tile: np.ndarray) -> np.ndarray:
+    """Sum of |entries|² per column, squared and summed in double whatever the working precision."""
     parts = (tile.real, tile.imag) if tile.dtype.kind == "c" else (tile,)
-    return float(sum(np.einsum("ij,ij->j", part, part).sum(dtype=np.float64) for part in parts))
+    sums = [np.einsum("ij,ij->j", part, part, dtype=np.float64, casting="unsafe") for part in parts]
+    return np.asarray(sums[0] if len(sums) == 1 else sums[0] + sums[1])
 
 
 def _column_squares(rows: np.ndarray) -> np.ndarray:

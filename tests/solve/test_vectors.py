@@ -103,16 +103,16 @@ def test_null_columns_are_completed_orthonormally_and_keyed_by_line(imaginary: b
 
 
 def test_vectors_that_lean_on_each_other_are_straightened(tmp_path: Path) -> None:
-    # Values down to 1e-9 of the first: Y·W·Θ⁻¹ alone misses orthonormality by 1e-7.
+    # Values down to 1e-15 of the first: the last columns of Y·W·Θ⁻¹ are rounding and lean on the others.
     matrix = samples(200, 12)
     left, _, right = np.linalg.svd(matrix - matrix.mean(axis=0), full_matrices=False)
-    graded = (left * np.logspace(0, -9, 12)) @ right
+    graded = (left * np.logspace(0, -15, 12)) @ right
     state, scratch = empty(tmp_path, graded, 12)
     later = Preparation(True, False, False)
     add_columns(state, scratch, graded, orthonormal_block(12, 12), later, centred=False, exact=True)
     ritz = state.ritz()
     raw = scratch.read(0, 200) @ scratch.map @ ritz.rotation / ritz.theta
-    assert np.linalg.norm(raw.T @ raw - np.eye(12)) > 1e-9, "rounding must show for this test to say something"
+    assert np.linalg.norm(raw.T @ raw - np.eye(12)) > 1e-3, "rounding must show for this test to say something"
     u = np.concatenate([block for _, block in TallVectors(scratch, state, ritz, np.zeros(12, bool), 1).blocks()])
     assert np.linalg.norm(u.T @ u - np.eye(12)) < 1e-13
     scratch.close()
