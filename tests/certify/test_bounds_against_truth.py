@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from evidence_samples import BASES, SPECTRA, Case, cases, exact_evidence
@@ -100,6 +102,24 @@ def test_angles_are_within_their_bounds_on_both_sides(sample: list[Case]) -> Non
                     assert angle <= allowed, f"{case.name}: components {first} … {last} at {angle} > {stated}"
     assert single > 300
     assert tied > 30
+
+
+def test_vectors_that_share_one_residual_direction_are_joined() -> None:
+    # Four Ritz values of one, all coupled to the same direction outside: only three singular values stay near one, the
+    # others move away by √4·s/2. Intervals of each vector's own residual, s/√2, would be four about three.
+    s = 1e-3
+    normal = np.diag([1 + 1e-9, 1, 1 - 1e-9, 1 - 2e-9, 1.0])
+    normal[4, :4] = normal[:4, 4] = s
+    value, vector = np.linalg.eigh(normal)
+    matrix = (vector * np.sqrt(value)) @ vector.T
+    evidence, _, _ = exact_evidence(matrix, np.eye(5)[:, :4])
+    evidence = replace(evidence, missed=5.0)  # no gap is known: only the statement by value says anything
+    intervals = choose_intervals(evidence, index_bounds(evidence), 4, 1e-2)
+    true = np.sqrt(value)
+    alone = np.full(4, s / np.sqrt(2))
+    assert unmatched_interval(evidence.theta - alone, evidence.theta + alone, true) is not None
+    assert unmatched_interval(intervals.lower, intervals.upper, true) is None
+    assert np.all(intervals.upper - intervals.lower < 4 * s)
 
 
 def test_a_direction_that_the_basis_is_blind_to_leaves_no_order_proved() -> None:
