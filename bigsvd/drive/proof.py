@@ -99,7 +99,9 @@ class Proof:
         assert sums.triangle is not None
         self.tall_error = float(np.hypot(self.tall_error, tall))
         depth = self.sweeps.depth(sums.triangle.shape[0])
-        self.fold_error = triangle_rounding(depth, float(np.linalg.norm(sums.triangle))) * growth
+        # The column of ones errs by itself: the bound of a fold holds column by column.
+        columns = sums.triangle[:, int(self.sweeps.ones) :]
+        self.fold_error = triangle_rounding(depth, float(np.linalg.norm(columns))) * growth
 
     def begin_again(self) -> None:
         """Forget the rounding of columns that were dropped, and what rests on it: measured is less than proved."""

@@ -13,7 +13,7 @@ from bigsvd.errors import NonFiniteError, OptionError, SourceChangedError
 from bigsvd.plan import UNIT_LINES, Plan
 from bigsvd.prepare import Preparation
 from bigsvd.randomness import draw_without_repeat
-from bigsvd.solve import Learnt, Pilot, first_statistics, learn, take_pilot
+from bigsvd.solve import Learnt, Pilot, first_statistics, in_range, learn, take_pilot
 from bigsvd.source import Source
 from bigsvd.sweep import Control, Engine, PanelReader, Partial, Scratch, SweepTask
 from bigsvd.units import show_count
@@ -21,8 +21,6 @@ from bigsvd.units import show_count
 # Panels whose first unit is recomputed in double, to measure rounding in single.
 ROUNDING_PANELS = 8
 STREAM_ROUNDING = 3
-# Residuals enter as fourth powers of singular values: ‖A‖_F⁴ must be a double.
-ENERGY_RANGE = (1e-140, 1e140)
 # Ratio of the largest to the smallest change of scale above which a first sweep is made again.
 MOST_SCALE_SPREAD = 1e4
 
@@ -174,10 +172,10 @@ class Sweeps:
 
     def _refuse_range(self) -> None:
         """Refuse a matrix whose energy squared leaves the range of double precision."""
-        if self.energy > 0 and not ENERGY_RANGE[0] < self.energy < ENERGY_RANGE[1]:
+        if not in_range(self.energy):
             raise OptionError(
                 f"{self.plan.spec.name}: entries are so large or small that double precision cannot hold their powers",
-                evidence=[f"‖A‖_F = {np.sqrt(self.energy):.3g}; handled are 1e-70 to 1e70"],
+                evidence=[f"‖A‖_F = {np.sqrt(self.energy):.3g}; handled are 1e-50 to 1e50"],
                 remedy="Multiply the matrix by a power of two, which changes no figure, then run again.",
             )
 

@@ -3,7 +3,7 @@
 from bigsvd.solve.grow import carry_chains, gaussian_directions, grow_block, start_block
 from bigsvd.solve.pilot import Pilot, take_pilot
 from bigsvd.solve.state import Chain, Ritz, State
-from bigsvd.solve.statistics import Learnt, correct_gram, correct_products, first_statistics, learn
+from bigsvd.solve.statistics import Learnt, correct_gram, correct_products, first_statistics, in_range, learn
 from bigsvd.solve.tall import TallVectors, column_phases
 from bigsvd.solve.whole import from_gram, from_triangle
 
@@ -23,6 +23,7 @@ __all__ = [
     "from_triangle",
     "gaussian_directions",
     "grow_block",
+    "in_range",
     "learn",
     "start_block",
     "take_pilot",

@@ -9,7 +9,7 @@ import numpy as np
 from bigsvd.prepare import Preparation
 from bigsvd.solve.dense import orthonormalise
 from bigsvd.solve.grow import gaussian_directions
-from bigsvd.solve.statistics import shift_and_scale
+from bigsvd.solve.statistics import in_range, shift_and_scale
 from bigsvd.sweep import Engine, PanelReader, Partial, SweepTask
 
 # Subspace iterations on the sample: its own sampling error, not convergence, limits the directions it gives.
@@ -99,7 +99,7 @@ def take_pilot(
     first = engine.sweep(base, waves)
     preparation = _first_statistics(first, preparation, single if may_be_single else wide)
     raise_scale = reader.geometry.lines / max(1, first.lines)
-    if first.bad or first.overflow or not directions:
+    if first.bad or first.overflow or not in_range(first.energy * raise_scale) or not directions:
         return Pilot(preparation, None, np.zeros(0), first.energy * raise_scale, None, False)
     fits = _fits_single(first, reader.geometry.across)
     work = single if may_be_single and fits else wide

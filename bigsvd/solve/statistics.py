@@ -9,6 +9,14 @@ import numpy as np
 from bigsvd.prepare import Preparation
 from bigsvd.sweep import Partial
 
+# Residuals enter as fourth powers of singular values, and squares of those are summed.
+ENERGY_RANGE = (1e-100, 1e100)
+
+
+def in_range(energy: float) -> bool:
+    """Whether powers of the singular values of a matrix of this energy stay within double precision."""
+    return energy == 0 or ENERGY_RANGE[0] < energy < ENERGY_RANGE[1]
+
 
 @dataclass(frozen=True, eq=False)
 class Learnt:

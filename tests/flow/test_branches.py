@@ -92,7 +92,7 @@ def test_a_feature_whose_scale_the_sample_misjudges_is_scaled_anew(dtype: str) -
 
 
 # Residuals enter the certificate as σ⁴, which leaves double long before σ² does.
-@pytest.mark.parametrize("size", [2.0**-200, 2.0**200])
+@pytest.mark.parametrize("size", [2.0**-120, 2.0**120])
 def test_a_matrix_of_any_size_has_the_same_certificate_but_for_the_size(size: float) -> None:
     matrix = table.entry("root_harmonic").matrix
     options = ROWS | {"rank": 8, "panel_lines": 40, "max_sweeps": 2, "tolerance": 1e-9}
