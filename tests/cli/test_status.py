@@ -131,8 +131,13 @@ def test_a_signal_ends_with_one_line(
         time.sleep(5)
 
     before = signal.getsignal(signal.SIGTERM)
+    # A test run in the background of a shell inherits Ctrl-C as ignored.
+    inherited = signal.signal(signal.SIGINT, signal.default_int_handler)
     monkeypatch.setattr(api, "forecast", wait)
-    ended = run("plan", "pool.h5")
+    try:
+        ended = run("plan", "pool.h5")
+    finally:
+        signal.signal(signal.SIGINT, inherited)
     assert ended.exit_code == status
     assert ended.stderr == f"{word}: stopped, and nothing half done was kept.\n"
     assert signal.getsignal(signal.SIGTERM) is before
