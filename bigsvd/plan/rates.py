@@ -21,7 +21,7 @@ DENSE_RATE = 4e9
 COMPLEX_FACTOR = 4.0
 
 # Resident size of the interpreter with every library loaded and its thread stacks, bytes. Measured by
-# tests/flow/test_memory.py, which fails when it no longer covers what an empty run needs.
+# tests/flow/test_promises.py, which fails when it no longer covers what an empty run needs.
 BASE_BYTES = 136 * 2**20
 # Packing buffers that BLAS keeps for every thread that multiplies, bytes.
 BLAS_BYTES = 12 * 2**20
