@@ -155,6 +155,8 @@ class Sweeps:
             line_features=not self.across_features and (plan.centred or plan.scaled), sampled=sampled,
         )  # fmt: skip
         sums = self.engine.sweep(task, plan.waves)
+        # What follows until the next stage is small and dense, and runs in the caller alone.
+        self.control.account("certificate")
         sums.level_rounding()
         self._refuse_bad(sums)
         self._refuse_change(sums)

@@ -68,6 +68,12 @@ class Control:
             self._stage, self._done = (stage, sweep, total), 0
         self.tell(note)
 
+    def account(self, name: str) -> None:
+        """Count the time from now on under another name, without telling the listener."""
+        with self._lock:
+            self._close_stage()
+            self._stage = (name, 0, 0)
+
     def timings(self) -> dict[str, float]:
         """Seconds spent in every stage so far; sweeps together."""
         with self._lock:
