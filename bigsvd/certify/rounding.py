@@ -28,6 +28,8 @@ class SumDepth:
         Longest chain of additions of partial products.
     fold_rows, fold_columns : int
         Lines that one segment folds, and columns folded.
+    folds_within : int
+        Folds by products in which it does so.
     folds : int
         Triangles folded upon each other after that.
     complex_entries : bool
@@ -38,6 +40,7 @@ class SumDepth:
     additions: int
     fold_rows: int
     fold_columns: int
+    folds_within: int
     folds: int
     complex_entries: bool
 
@@ -56,9 +59,10 @@ def tall_rounding(depth: SumDepth, frobenius: float, width: int) -> float:
 def triangle_rounding(depth: SumDepth, norm: float) -> float:
     """Bound of the error of the singular values of R, ‖R‖_F = norm: the chain of folds, and its own decomposition.
 
-    Column by column a fold errs by γ̃_{rows·columns}‖y‖ (Higham, Theorem 19.4), summed over the chain.
+    Column by column a fold by reflections errs by γ̃_{rows·columns}‖y‖ (Higham, Theorem 19.4), summed over the chain;
+    one by products by γ_{columns·(rows + 5·columns)}.
     """
-    rows = depth.fold_rows + 2.0 * depth.fold_columns * depth.folds
+    rows = depth.fold_rows + 5.0 * depth.fold_columns * depth.folds_within + 2.0 * depth.fold_columns * depth.folds
     return gamma(depth.fold_columns * (rows + 10.0), complex_entries=depth.complex_entries) * norm
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from itertools import pairwise
 from pathlib import Path
 
@@ -10,7 +10,7 @@ import numpy as np
 
 from bigsvd.certify import SumDepth, gamma
 from bigsvd.errors import NonFiniteError, OptionError, SourceChangedError
-from bigsvd.plan import UNIT_LINES, Plan
+from bigsvd.plan import UNIT_LINES, Plan, fold_lines
 from bigsvd.prepare import Preparation
 from bigsvd.randomness import draw_without_repeat
 from bigsvd.solve import Learnt, Pilot, first_statistics, in_range, learn, take_pilot
@@ -64,6 +64,8 @@ class Sweeps:
     line_constant: int = 0
     remarks: list[str] = field(default_factory=list)
     _ledger: list[int] | None = field(default=None, repr=False)
+    _unit_energies: np.ndarray | None = field(default=None, repr=False)
+    _energies_in: np.dtype | None = field(default=None, repr=False)
 
     def __post_init__(self) -> None:
         complex_entries = self.plan.spec.dtype.kind == "c"
@@ -138,6 +140,8 @@ class Sweeps:
         """
         plan = self.plan
         first = self.learnt is None and self.line_mean is None
+        # Energy and means stay what the first sweep found: the ledger shows that its words were read again.
+        fresh = self._energies_in is None or self._energies_in != self.work
         self.made += 1
         width = 0 if block is None else block.shape[1]
         words = f"{self.scratch.map.shape[1]} + {width} columns" if width else "the whole spectrum"
@@ -149,20 +153,22 @@ class Sweeps:
         target = self.scratch.add_block(width) if block is not None else 0
         task = SweepTask(
             self.reader, self.preparation, self.work, kind, block,
-            scratch=self.scratch if block is not None else None, target=target, ones=self.ones,
-            add_lines=self.across_features and (plan.centred or (plan.scaled and first)),
+            scratch=self.scratch if block is not None else None, target=target, ones=self.ones, add_energy=fresh,
+            add_lines=fresh and self.across_features and (plan.centred or (plan.scaled and first)),
             learn=first and self.across_features and plan.scaled,
             line_features=not self.across_features and (plan.centred or plan.scaled), sampled=sampled,
         )  # fmt: skip
         sums = self.engine.sweep(task, plan.waves)
         # What follows until the next stage is small and dense, and runs in the caller alone.
         self.control.account("certificate")
-        sums.level_rounding()
         self._refuse_bad(sums)
         self._refuse_change(sums)
+        if not fresh:
+            self._known_energies(sums)
+        sums.level_rounding()
         if sums.overflow:
             self._give_up_single(block is not None)
-        learnt = self._take_statistics(sums)
+        learnt = self._take_statistics(sums) if fresh else self._known_statistics()
         self._refuse_range()
         if learnt is not None and learnt.column_scale is not None and _spread(learnt.column_scale) > MOST_SCALE_SPREAD:
             # Re-expressing what was multiplied in such coordinates would lose figures; the statistics are exact now.
@@ -223,6 +229,24 @@ class Sweeps:
             remedy="Multiply the matrix by a power of two such as 2**-500, then run again.",
         )
 
+    def _known_energies(self, sums: Partial) -> None:
+        """Complete the sums of a sweep that did not take energies."""
+        sums.energy, sums.unit_energies = self.energy, self._unit_energies
+        sums.overflow = sums.products is not None and not np.all(np.isfinite(sums.products))
+
+    def _known_statistics(self) -> Learnt | None:
+        """What is known of means and scales, against the preparation that was used."""
+        if self.learnt is None:
+            return None
+        used, found = self.preparation, self.learnt
+        offset = np.zeros_like(found.mean)
+        if used.center and used.shift is not None:
+            # The shift is representable in the working precision; the rest of the mean is left.
+            offset = found.mean - used.shift
+            if used.inverse_scale is not None:
+                offset *= used.inverse_scale
+        return replace(found, offset=offset, column_scale=None, energy=self.energy, swept_energy=self.energy)
+
     def _take_statistics(self, sums: Partial) -> Learnt | None:
         """Keep what this sweep says of means and scales; later sweeps are prepared with it."""
         first = self.learnt is None and self.line_mean is None
@@ -232,6 +256,7 @@ class Sweeps:
             # Summed in double; the entries were rounded to single when they were prepared.
             per_sum += 4 * 2.0**-24
         self.energy_rounding = per_sum * sums.energy
+        self._energies_in, self._unit_energies = self.work, sums.unit_energies
         if self.across_features:
             learnt = learn(sums, self.preparation)
             self.energy = learnt.energy
@@ -256,7 +281,8 @@ class Sweeps:
         levels = int(np.ceil(np.log2(max(2, plan.leaves)))) + len(plan.waves)
         return SumDepth(
             across=plan.geometry.across, unit_lines=UNIT_LINES, additions=units + levels, fold_rows=longest,
-            fold_columns=columns, folds=levels, complex_entries=self.wide.kind == "c",
+            fold_columns=columns, folds_within=-(-longest // fold_lines(columns)), folds=levels,
+            complex_entries=self.wide.kind == "c",
         )  # fmt: skip
 
     def feature_statistics(self) -> tuple[np.ndarray, np.ndarray, int]:

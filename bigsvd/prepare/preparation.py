@@ -37,6 +37,13 @@ class Preparation:
     inverse_scale: np.ndarray | None = None
     about: np.ndarray | None = None
 
+    @property
+    def changes_nothing(self) -> bool:
+        """Whether entries are used as they are stored, but for their type."""
+        if self.across_features:
+            return self.shift is None and self.inverse_scale is None
+        return not (self.center or self.scale)
+
     def learnt(self, mean: np.ndarray, inverse_scale: np.ndarray | None, work: np.dtype) -> Preparation:
         """Return the same preparation with better statistics, the shift representable in the working precision.
 

@@ -12,8 +12,12 @@ from bigsvd.solve.grow import gaussian_directions
 from bigsvd.solve.statistics import in_range, shift_and_scale
 from bigsvd.sweep import Engine, PanelReader, Partial, SweepTask
 
-# Subspace iterations on the sample: its own sampling error, not convergence, limits the directions it gives.
+# Most subspace iterations on the sample: its own sampling error, not convergence, limits the directions it gives.
 PILOT_ITERATIONS = 4
+# They end where the leading squares grow by less than this on average: fast decay is settled after two.
+SETTLED_GROWTH = 0.01
+# Panels of the sample whose first unit is recomputed in double, to decide the precision.
+MEASURED_PANELS = 4
 # Entries whose root mean square lies outside these would over- or underflow when squared in single.
 SINGLE_RANGE = (1e-12, 1e12)
 
@@ -103,16 +107,22 @@ def take_pilot(
         return Pilot(preparation, None, np.zeros(0), first.energy * raise_scale, None, False)
     fits = _fits_single(first, reader.geometry.across)
     work = single if may_be_single and fits else wide
-    task = replace(base, preparation=preparation, dtype=work, add_lines=False, learn=False)
+    task = replace(base, preparation=preparation, dtype=work, add_energy=False, add_lines=False, learn=False)
     across = reader.geometry.across
     empty = np.zeros((across, 0), wide)
     basis = orthonormalise(gaussian_directions(across, directions, seed, wide), empty)
-    products = basis
+    before = np.zeros(0)
     for _ in range(PILOT_ITERATIONS):
         products = _normal_product(engine, task, basis, waves)
+        now = _leading_squares(basis, products)
         basis = orthonormalise(products, empty)
+        if _settled(before, now):
+            break
+        before = now
+    measured = frozenset(panels[:MEASURED_PANELS])
     last = engine.sweep(
-        replace(task, block=basis.astype(work), sampled=frozenset(panels) if work == single else frozenset()), waves
+        replace(task, block=basis.astype(work), add_energy=True, sampled=measured if work == single else frozenset()),
+        waves,
     )
     assert last.products is not None
     last.level_rounding()
@@ -129,6 +139,20 @@ def _normal_product(
     sums = engine.sweep(replace(task, block=basis.astype(task.dtype)), waves)
     assert sums.products is not None
     return sums.products.conj().T
+
+
+def _leading_squares(basis: np.ndarray, products: np.ndarray) -> np.ndarray:
+    """Squares of the leading half of the Ritz values."""
+    small = basis.conj().T @ products
+    value: np.ndarray = np.linalg.eigvalsh((small + small.conj().T) / 2)[::-1]
+    return value[: max(1, len(value) // 2)]
+
+
+def _settled(before: np.ndarray, now: np.ndarray) -> bool:
+    """Whether another iteration would hardly raise the Ritz values: the last raised their geometric mean little."""
+    if not len(before) or not now[-1] > 0 or not before[-1] > 0:
+        return False
+    return float(np.mean(np.log(now / before))) < SETTLED_GROWTH
 
 
 def _first_statistics(sums: Partial, preparation: Preparation, work: np.dtype) -> Preparation:

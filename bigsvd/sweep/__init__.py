@@ -1,8 +1,9 @@
 """The only loop that reads the matrix: panels, dask graphs, sums in a fixed order."""
 
 from bigsvd.sweep.events import Control, Listener, Progress, StoppedError
+from bigsvd.sweep.folding import fold
 from bigsvd.sweep.panels import PanelReader
-from bigsvd.sweep.partial import Partial, fold
+from bigsvd.sweep.partial import Partial
 from bigsvd.sweep.scratch import Scratch
 from bigsvd.sweep.segment import SweepTask
 from bigsvd.sweep.waves import Engine, one_blas_thread

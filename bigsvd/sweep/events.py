@@ -60,6 +60,7 @@ class Control:
         self._done = 0
         self._began = time.perf_counter()
         self._timings: dict[str, float] = {}
+        self._spent: dict[str, float] = {}
 
     def begin(self, stage: str, total: int, sweep: int = 0, note: str = "") -> None:
         """Open a stage of so many bytes."""
@@ -79,6 +80,17 @@ class Control:
         with self._lock:
             self._close_stage()
             return dict(self._timings)
+
+    def spend(self, seconds: dict[str, float]) -> None:
+        """Add up what workers spent on each phase of a sweep; seconds of several workers overlap."""
+        with self._lock:
+            for phase, more in seconds.items():
+                self._spent[phase] = self._spent.get(phase, 0.0) + more
+
+    def spent(self) -> dict[str, float]:
+        """Worker-seconds so far: read (with decoding), convert (with energy and sums), products, fold, scratch."""
+        with self._lock:
+            return dict(self._spent)
 
     def _close_stage(self) -> None:
         """Add the time since the stage began to its account."""
@@ -105,3 +117,28 @@ class Control:
     def stop(self) -> None:
         """Ask the workers to stop after their present panel."""
         self._stop.set()
+
+
+class Stopwatch:
+    """Seconds that one worker spends on each phase.
+
+    Attributes
+    ----------
+    seconds : dict of str to float
+    """
+
+    def __init__(self) -> None:
+        self.seconds: dict[str, float] = {}
+        self._phase = ""
+        self._since = 0.0
+
+    def start(self, phase: str) -> None:
+        """End the present phase and begin another."""
+        now = time.perf_counter()
+        if self._phase:
+            self.seconds[self._phase] = self.seconds.get(self._phase, 0.0) + now - self._since
+        self._phase, self._since = phase, now
+
+    def stop(self) -> None:
+        """End the present phase; what follows is not counted."""
+        self.start("")

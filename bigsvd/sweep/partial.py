@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+
+from bigsvd.sweep.folding import fold
 
 
 @dataclass(eq=False)
@@ -116,28 +117,3 @@ def combine(first: Partial, second: Partial) -> Partial:
         if more is not None:
             getattr(first, name).extend(more)
     return first
-
-
-def fold(blocks: Sequence[np.ndarray]) -> np.ndarray:
-    """Triangular factor of blocks stacked upon each other, without squaring: RᴴR = Σ XᴴX.
-
-    Parameters
-    ----------
-    blocks : sequence of ndarray, shape (any, columns)
-
-    Returns
-    -------
-    ndarray, shape (columns, columns)
-        Upper triangular.
-
-    Notes
-    -----
-    Method: tall-skinny QR, Demmel, Grigori, Hoemmen, Langou, SIAM J. Sci. Comput. 34 (2012).
-    """
-    # A single block is not copied once more: LAPACK's own two copies are what memory was planned for.
-    stacked = blocks[0] if len(blocks) == 1 else np.concatenate(blocks)
-    triangle = np.asarray(np.linalg.qr(stacked, mode="r"))
-    columns = stacked.shape[1]
-    if len(triangle) < columns:
-        triangle = np.concatenate([triangle, np.zeros((columns - len(triangle), columns), triangle.dtype)])
-    return triangle

@@ -10,8 +10,10 @@ import numpy as np
 
 from bigsvd.plan import UNIT_LINES, fold_lines, tile_columns
 from bigsvd.prepare import LineStatistics, Preparation, line_statistics, prepare_unit
+from bigsvd.sweep.events import Stopwatch
+from bigsvd.sweep.folding import fold, fold_upon
 from bigsvd.sweep.panels import PanelReader
-from bigsvd.sweep.partial import Partial, fold
+from bigsvd.sweep.partial import Partial
 from bigsvd.sweep.scratch import Scratch
 
 # Single-precision sums run over at most this many terms before they are added up in double.
@@ -39,6 +41,9 @@ class SweepTask:
         Number of the scratch block that is written.
     ones : bool
         Whether a column of ones is folded first, so that dropping it centres the triangle exactly.
+    add_energy : bool
+        Whether the energy is summed, which also tells NaN, infinity and overflow. Of a file whose words are those of
+        an earlier sweep all this is known.
     add_lines : bool
         Whether the lines are summed, for the mean.
     learn : bool
@@ -57,6 +62,7 @@ class SweepTask:
     scratch: Scratch | None = None
     target: int = 0
     ones: bool = False
+    add_energy: bool = True
     add_lines: bool = False
     learn: bool = False
     line_features: bool = False
@@ -91,7 +97,9 @@ def run_segment(task: SweepTask, first: int, stop: int) -> Partial:
         segment = _Segment(task)
         for panel in range(first, stop):
             segment.take(panel)
-        return segment.finish()
+        sums = segment.finish()
+    task.reader.control.spend(segment.watch.seconds)
+    return sums
 
 
 class _Segment:
@@ -106,6 +114,7 @@ class _Segment:
         # Deviations learnt in a sweep define the matrix for the rest of the run: in double, about a first mean.
         self.learning = task.preparation.about_mean()
         self.sums = Partial(ledger=[])
+        self.watch = Stopwatch()
         if task.line_features:
             self.sums.line_mean, self.sums.line_inverse_scale, self.sums.line_constant = [], [], []
         elif task.add_lines:
@@ -117,9 +126,11 @@ class _Segment:
         if task.block is not None:
             self.sums.products = np.zeros((task.block.shape[1], self.across), task.wide)
             self.product = np.empty(task.block.shape[1] * self.tile, task.dtype)
+            # Double multiplies faster with the long side first (76 against 61 GF a core), single does not (137, 144).
+            self.turned = np.ascontiguousarray(task.block.T) if task.dtype == task.wide else None
             if task.sampled:
                 self.sums.rounding = np.zeros((3, task.block.shape[1]))
-                self.sums.unit_energies = np.zeros(4)
+                self.sums.unit_energies = np.zeros(4) if task.add_energy else None
         self._start_fold()
 
     def _start_fold(self) -> None:
@@ -141,7 +152,9 @@ class _Segment:
     def take(self, panel: int) -> None:
         """Read one panel and add it to the sums."""
         task, reader = self.task, self.task.reader
+        self.watch.start("read")
         raw = reader.fetch(panel, self.raw)
+        self.watch.start("convert")
         assert self.sums.ledger is not None
         self.sums.ledger.append(_word_sum(raw))
         lines = raw if reader.geometry.axis == 0 else raw.T
@@ -156,24 +169,28 @@ class _Segment:
         for offset in range(0, len(lines), UNIT_LINES):
             unit = lines[offset : offset + UNIT_LINES]
             self._take_unit(unit, start + offset, measure=offset == 0 and panel in task.sampled)
+        self.watch.stop()
 
     def _take_unit(self, unit: np.ndarray, start: int, *, measure: bool) -> None:
         """Convert a few lines, multiply them and add up."""
         task, sums = self.task, self.sums
+        self.watch.start("convert")
         statistics = self._statistics(unit)
-        converted = self._tiles(unit, statistics, task.dtype)
-        energy, tall = 0.0, None
+        energy, tall, tile = 0.0, None, None
         learns_apart = task.learn and (task.dtype != task.wide or task.preparation.about is not None)
         if learns_apart:
-            for columns, tile in self._tiles(unit, statistics, task.wide, self.learning):
-                self._tile_sums(tile, columns)
-        for columns, tile in converted:
+            for columns, wide_tile in self._tiles(unit, statistics, task.wide, self.learning):
+                self._tile_sums(wide_tile, columns)
+        for columns, tile in self._tiles(unit, statistics, task.dtype):
             if not learns_apart:
                 self._tile_sums(tile, columns)
-            energy += float(_squares(tile).sum())
+            if task.add_energy:
+                energy += float(_squares(tile).sum())
             if task.block is not None:
-                part = _product(tile, task.block[columns], task.wide)
+                self.watch.start("products")
+                part = self._first_product(tile, columns)
                 tall = part if tall is None else np.add(tall, part, out=tall)
+                self.watch.start("convert")
         # Every entry of the products is at most the energy, so this tells overflow before it happens.
         if not energy < np.finfo(task.dtype).max:
             self._not_finite(unit, start)
@@ -185,14 +202,18 @@ class _Segment:
         if task.kind == "fold":
             self._gather(start, self._whole(unit, statistics))
         elif task.kind == "gram":
+            self.watch.start("products")
             whole = self._whole(unit, statistics)
             assert sums.gram is not None
             np.add(sums.gram, whole.conj().T @ whole, out=sums.gram)
         elif tall is not None:
-            self._second_product(unit, statistics, tall)
+            self.watch.start("products")
+            # A single tile is still there; several are converted anew, for memory holds one.
+            self._second_product(unit, statistics, tall, tile if self.across <= self.tile else None)
             if measure:
                 self._measure(unit, statistics, tall)
             if task.scratch is not None:
+                self.watch.start("scratch")
                 task.scratch.write(task.target, start, tall)
                 self._gather(start, tall)
 
@@ -218,17 +239,21 @@ class _Segment:
         dtype: np.dtype,
         preparation: Preparation | None = None,
     ) -> Iterator[tuple[slice, np.ndarray]]:
-        """Yield (columns, converted tile) across a unit; a single tile stays in the working buffer."""
-        work = np.empty(UNIT_LINES * self.tile, dtype)
-        if dtype == self.task.dtype and preparation is None:
-            work = self.work
+        """Yield (columns, converted tile) across a unit, in the working buffer or where it lies already."""
+        preparation = preparation or self.task.preparation
+        if unit.dtype == dtype and preparation.changes_nothing:
+            for first in range(0, self.across, self.tile):
+                columns = slice(first, min(first + self.tile, self.across))
+                yield columns, unit[:, columns]
+            return
+        work = self.work if dtype == self.task.dtype else np.empty(UNIT_LINES * self.tile, dtype)
         for first in range(0, self.across, self.tile):
             columns = slice(first, min(first + self.tile, self.across))
             width = columns.stop - first
             flat = work[: len(unit) * width]
             by_lines = self.task.reader.geometry.axis == 0
             tile = flat.reshape(len(unit), width) if by_lines else flat.reshape(width, len(unit)).T
-            prepare_unit(unit, preparation or self.task.preparation, statistics, columns, tile)
+            prepare_unit(unit, preparation, statistics, columns, tile)
             yield columns, tile
 
     def _whole(self, unit: np.ndarray, statistics: LineStatistics | None) -> np.ndarray:
@@ -245,20 +270,28 @@ class _Segment:
         if sums.square_sum is not None:
             sums.square_sum[columns] += _squares(tile)
 
-    def _second_product(self, unit: np.ndarray, statistics: LineStatistics | None, tall: np.ndarray) -> None:
+    def _first_product(self, tile: np.ndarray, columns: slice) -> np.ndarray:
+        """Y = A·B of a tile, in double; sums of single precision are added up in double."""
+        task = self.task
+        assert task.block is not None
+        if self.turned is not None:
+            return np.matmul(self.turned[:, columns], tile.T).T
+        total = np.zeros((len(tile), task.block.shape[1]), task.wide)
+        block = task.block[columns]
+        for first in range(0, tile.shape[1], SINGLE_TERMS):
+            total += tile[:, first : first + SINGLE_TERMS] @ block[first : first + SINGLE_TERMS]
+        return total
+
+    def _second_product(
+        self, unit: np.ndarray, statistics: LineStatistics | None, tall: np.ndarray, tile: np.ndarray | None
+    ) -> None:
         """Z += AᴴY, held as its conjugate transpose."""
-        sums = self.sums
-        assert sums.products is not None
         left = np.ascontiguousarray(tall.conj().T, dtype=self.task.dtype)
-        if self.across <= self.tile:
-            # The converted unit still lies in the working buffer.
-            shape = (len(unit), self.across)
-            flat = self.work[: shape[0] * shape[1]]
-            tile = flat.reshape(shape) if self.task.reader.geometry.axis == 0 else flat.reshape(shape[::-1]).T
+        if tile is not None:
             self._add_product(left, tile, slice(0, self.across))
             return
-        for columns, tile in self._tiles(unit, statistics, self.task.dtype):
-            self._add_product(left, tile, columns)
+        for columns, again in self._tiles(unit, statistics, self.task.dtype):
+            self._add_product(left, again, columns)
 
     def _add_product(self, left: np.ndarray, tile: np.ndarray, columns: slice) -> None:
         """Add Yᴴ times a tile to the sums in double, through a buffer that is used again."""
@@ -299,6 +332,7 @@ class _Segment:
             if task.kind == "basis" and self.earlier.shape[1]:
                 assert task.scratch is not None
                 stored = task.scratch.read(start + done, start + done + count, task.target)
+                self.watch.start("fold")
                 np.matmul(stored, self.earlier, out=rows[:, column : column + self.earlier.shape[1]])
                 column += self.earlier.shape[1]
             rows[:, column:] = values[done : done + count]
@@ -309,9 +343,15 @@ class _Segment:
 
     def _fold(self) -> None:
         """Replace the gathered lines by their triangular factor."""
-        triangle = fold([self.gathered[: self.filled]])
-        self.gathered[: self.folded] = triangle
+        self.watch.start("fold")
+        rows = self.gathered[: self.filled]
+        if self.triangle is None or self.task.kind == "fold":
+            self.triangle = fold([rows])
+        else:
+            self.triangle = fold_upon(self.triangle, rows[self.folded :])
+        self.gathered[: self.folded] = self.triangle
         self.filled = self.folded
+        self.watch.start("scratch")
 
     def _extremes(self, lines: np.ndarray) -> None:
         """Smallest and largest stored entries per column."""
@@ -352,22 +392,14 @@ class _Segment:
     def finish(self) -> Partial:
         """Fold what is left and hand over the sums."""
         if self.folded:
-            if self.filled:
+            if self.filled > (0 if self.triangle is None else self.folded):
                 self._fold()
+                self.watch.stop()
+            if self.filled:
                 self.sums.triangle = self.gathered[: self.folded].copy()
             else:
                 self.sums.triangle = np.zeros((self.folded, self.folded), self.task.wide)
         return self.sums
-
-
-def _product(tile: np.ndarray, block: np.ndarray, wide: np.dtype) -> np.ndarray:
-    """Multiply a tile by rows of the block; sums of single precision are added up in double."""
-    if tile.dtype == wide:
-        return tile @ block
-    total = np.zeros((len(tile), block.shape[1]), wide)
-    for first in range(0, tile.shape[1], SINGLE_TERMS):
-        total += tile[:, first : first + SINGLE_TERMS] @ block[first : first + SINGLE_TERMS]
-    return total
 
 
 def _squares(tile: np.ndarray) -> np.ndarray:

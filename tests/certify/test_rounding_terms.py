@@ -40,7 +40,7 @@ def sample(seed: int, *, imaginary: bool) -> tuple[np.ndarray, np.ndarray]:
 
 def depth(columns: int, *, imaginary: bool) -> SumDepth:
     units = LINES // UNIT
-    return SumDepth(ACROSS, UNIT, units, UNIT, columns, units, imaginary)
+    return SumDepth(ACROSS, UNIT, units, UNIT, columns, 0, units, imaginary)
 
 
 def folded(blocks: list[np.ndarray]) -> np.ndarray:
