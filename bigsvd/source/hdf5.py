@@ -10,11 +10,12 @@ from typing import Any
 import numpy as np
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, UnsupportedMatrixError
+from bigsvd.source.chunk_decoder import ChunkError
 from bigsvd.source.entries import decoded_type, pair_view, type_caution
 from bigsvd.source.hdf5_complete import locate, require_complete
 from bigsvd.source.hdf5_dataset import describe, missing_filters, unapplied_attributes
 from bigsvd.source.hdf5_direct import Fill, direct_reader
-from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
+from bigsvd.source.hdf5_file import library_errors_named, open_hdf5, register_plugins
 from bigsvd.source.positional import Descriptor
 from bigsvd.source.rectangle import Span, clip, fill_by_bands, require_rectangle, show_chunk, show_place, touched
 from bigsvd.source.spec import MatrixSpec
@@ -73,7 +74,8 @@ class Hdf5Source:
                 with library_errors_named(f"{self.path}:{self.dataset}"):
                     file, descriptor = open_hdf5(self.path), Descriptor(self.path)
                     dataset = open_dataset(file, self.dataset, os.path.dirname(self.path))
-                    fill = direct_reader(dataset, descriptor.number) or library_reader(dataset)
+                    library = library_reader(dataset)
+                    fill = direct_reader(dataset, descriptor.number, library) or library
                     self._handles = file, descriptor, dataset, fill
             return self._handles[2], self._handles[3]
 
@@ -113,23 +115,32 @@ class Hdf5Source:
             require_complete(dataset, self.spec, os.path.dirname(self.path))
 
     def _damage(self, fill: Fill, rows: Span, columns: Span, error: Exception) -> DamagedSourceError:
-        """Find the first chunk of the rectangle that does not decode, and name it."""
-        place, said = show_place(rows, columns), error
-        if self.spec.chunks[0] > 1:
-            for coordinates in touched(rows, columns, self.spec.chunks):
-                part_rows = clip(coordinates[0], self.spec.chunks[0], rows)
-                part_columns = clip(coordinates[1], self.spec.chunks[1], columns)
-                part = np.empty((part_rows[1] - part_rows[0], part_columns[1] - part_columns[0]), self.spec.dtype)
-                try:
-                    fill(part_rows, part_columns, part)
-                except Exception as first:
-                    place, said = show_chunk(coordinates, self.spec.shape, self.spec.chunks), first
-                    break
+        """Name the first chunk of the rectangle that does not decode, and say what is wrong with it."""
+        if isinstance(error, ChunkError):
+            evidence = [show_chunk(error.coordinates, self.spec.shape, self.spec.chunks), *error.evidence]
+        else:
+            evidence = self._search(fill, rows, columns, error)
         return DamagedSourceError(
             f"{self.spec.name} holds stored bytes that do not decode",
-            evidence=[place, f"the library says: {said}"],
+            evidence=evidence,
             remedy="Copy or download the file again, or write it again from its origin.",
         )
+
+    def _search(self, fill: Fill, rows: Span, columns: Span, error: Exception) -> list[str]:
+        """Read chunk by chunk, since the library does not tell which one it failed at."""
+        chunks = self.spec.chunks
+        for i, j in touched(rows, columns, chunks) if chunks[0] > 1 else ():
+            part_rows, part_columns = clip(i, chunks[0], rows), clip(j, chunks[1], columns)
+            part = np.empty((part_rows[1] - part_rows[0], part_columns[1] - part_columns[0]), self.spec.dtype)
+            try:
+                fill(part_rows, part_columns, part)
+            except Exception as first:
+                return [
+                    show_chunk((i, j), self.spec.shape, chunks),
+                    f"a chunk has {chunks[0] * chunks[1] * self.spec.dtype.itemsize:,} bytes decoded",
+                    f"the library says: {first}",
+                ]
+        return [show_place(rows, columns), f"the library says: {error}"]
 
 
 def library_reader(dataset: Any) -> Fill:
@@ -137,18 +148,23 @@ def library_reader(dataset: Any) -> Fill:
     import h5py
 
     pair = dataset.dtype.names
-
     chunk_rows = dataset.chunks[0] if dataset.chunks else 1
 
-    def fill(rows: Span, columns: Span, out: np.ndarray) -> None:
-        if not out.flags.c_contiguous:
-            fill_by_bands(fill, rows, columns, out, chunk_rows)
-            return
+    def read(rows: Span, columns: Span, out: np.ndarray) -> None:
         dtype = pair_view(out.dtype, pair) if pair else out.dtype
         file_space = h5py.h5s.create_simple(dataset.shape)
         file_space.select_hyperslab((rows[0], columns[0]), out.shape)
         memory_space = h5py.h5s.create_simple(out.shape)
         dataset.id.read(memory_space, file_space, out.view(dtype), h5py.h5t.py_create(dtype))
+
+    # Neither function refers to itself: a cycle would keep the file open after its source is gone.
+    def fill(rows: Span, columns: Span, out: np.ndarray) -> None:
+        # Virtual datasets do not tell the filters of their sources; once imported, this costs nothing.
+        register_plugins()
+        if out.flags.c_contiguous:
+            read(rows, columns, out)
+        else:
+            fill_by_bands(read, rows, columns, out, chunk_rows)
 
     return fill
 

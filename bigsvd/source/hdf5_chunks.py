@@ -49,6 +49,10 @@ class ChunkTable:
         dataset.id.chunk_iter(note)
         return table
 
+    def at(self, i: int, j: int) -> tuple[int, int, int]:
+        """Address, stored size and skipped filters of one chunk."""
+        return int(self.offset[i, j]), int(self.size[i, j]), int(self.skipped[i, j])
+
 
 def absent_chunks(dataset: Any) -> np.ndarray:
     """Mark the chunks that were never written; shape (chunk rows, chunk columns), a byte a chunk."""

@@ -8,48 +8,28 @@ import numpy as np
 
 from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type, show_type
+from bigsvd.source.hdf5_direct import decodes_directly
+from bigsvd.source.hdf5_file import register_plugins
+from bigsvd.source.hdf5_filters import filters_of
 from bigsvd.source.hints import hdf5_hint
 from bigsvd.units import show_count, show_shape
 
-_FILTERS = {
-    1: "gzip",
-    2: "shuffle",
-    3: "fletcher32",
-    4: "szip",
-    5: "nbit",
-    6: "scale-offset",
-    32000: "lzf",
-    32001: "blosc",
-    32004: "lz4",
-    32008: "bitshuffle",
-    32013: "zfp",
-    32015: "zstd",
-    32017: "sz",
-    32024: "sz3",
-    32026: "blosc2",
-    32028: "sperr",
-    307: "bzip2",
-}
 _NOT_APPLIED = ("scale_factor", "add_offset", "_FillValue", "missing_value")
 _BOTH = {"scale_factor", "add_offset"}
-
-
-def filter_ids(dataset: Any) -> list[tuple[int, str, tuple[int, ...]]]:
-    """Number, name and options of every filter, in the order in which the writer applied them."""
-    plist = dataset.id.get_create_plist()
-    chain = []
-    for position in range(plist.get_nfilters()):
-        code, _, values, name = plist.get_filter(position)
-        label = name.decode("utf-8", "replace").rstrip("\0").split(";")[0].strip()
-        chain.append((code, _FILTERS.get(code, label or "unnamed filter"), tuple(values)))
-    return chain
 
 
 def missing_filters(dataset: Any) -> list[str]:
     """Filters that this installation cannot undo, with the number under which they are registered."""
     import h5py
 
-    return [f"{name} (filter {code})" for code, name, _ in filter_ids(dataset) if not h5py.h5z.filter_avail(code)]
+    def absent() -> list[str]:
+        return [f"{step.name} (filter {step.number})" for step in chain if not h5py.h5z.filter_avail(step.number)]
+
+    chain = filters_of(dataset)
+    if not absent() or decodes_directly(dataset):
+        return []
+    register_plugins()
+    return absent()
 
 
 def show_encoding(dataset: Any) -> str:
@@ -65,7 +45,8 @@ def show_encoding(dataset: Any) -> str:
             return "contiguous in external files"
         return "compact" if plist.get_layout() == h5py.h5d.COMPACT else "contiguous"
     words = [
-        f"{name} {values[0]}" if code in (1, 32015) and values else name for code, name, values in filter_ids(dataset)
+        f"{step.name} {step.options[0]}" if step.number in (1, 32015) and step.options else step.name
+        for step in filters_of(dataset)
     ]
     return f"chunks {show_shape(dataset.chunks)}, {' + '.join(words) or 'no filter'}"
 

@@ -1,32 +1,32 @@
 """Entries of an HDF5 dataset taken from the file without the library's lock: decoding then runs in every thread.
 
-h5py lets one thread at a time into the HDF5 library, and that decodes inside it. Where the bytes in the file are
-plain (contiguous, or chunks with no other filter than shuffle and deflate) they are read by position and decoded
-by the calling thread. A test holds the result equal to h5py's, byte for byte.
+h5py lets one thread at a time into the HDF5 library, and that decodes inside it. Where the type is plain and every
+filter is known (`hdf5_filters`), bytes are read by position and decoded by the calling thread. A test holds the
+result equal to h5py's, byte for byte.
 """
 
 from __future__ import annotations
 
-import importlib
 import math
 import os
-import zlib
 from collections.abc import Callable
 from typing import Any
 
 import numpy as np
 
+from bigsvd.source.chunk_decoder import ChunkDecoder, ChunkError
+from bigsvd.source.codecs import FramingUnknownError
 from bigsvd.source.hdf5_chunks import MOST_CHUNKS, ChunkTable
-from bigsvd.source.hdf5_dataset import filter_ids
-from bigsvd.source.positional import read_rows
-from bigsvd.source.rectangle import Span, grid_shape, overlap, touched
+from bigsvd.source.hdf5_filters import filters_of
+from bigsvd.source.positional import fill_from, read_rows
+from bigsvd.source.rectangle import Span, clip, grid_shape, overlap, touched
+from bigsvd.source.workspace import Workspace, Workspaces
 
 Fill = Callable[[Span, Span, np.ndarray], None]
-_DEFLATE, _SHUFFLE = 1, 2
 
 
-def direct_reader(dataset: Any, descriptor: int) -> Fill | None:
-    """Choose the way past the library; None where the bytes in the file are not plain.
+def direct_reader(dataset: Any, descriptor: int, library: Fill) -> Fill | None:
+    """Choose the way past the library; None where type, layout or filters do not allow it.
 
     Parameters
     ----------
@@ -34,53 +34,64 @@ def direct_reader(dataset: Any, descriptor: int) -> Fill | None:
         Two-dimensional, of numbers.
     descriptor : int
         The same file, open for reading.
+    library : callable
+        Reads the chunks whose framing turns out to be another than the usual one.
     """
     import h5py
 
-    plist = dataset.id.get_create_plist()
-    stored = dataset.dtype
-    plain = stored.names is None and stored.kind in "iufc" and stored.itemsize in (1, 2, 4, 8, 16)
-    # Types with padding bits or enumerated values are left to the library's conversion.
-    if not plain or not dataset.id.get_type().equal(h5py.h5t.py_create(np.dtype(stored.str))):
+    stored = plain_type(dataset)
+    if stored is None:
         return None
     if dataset.chunks is None:
+        plist = dataset.id.get_create_plist()
         offset = dataset.id.get_offset()
         if plist.get_layout() != h5py.h5d.CONTIGUOUS or plist.get_external_count() or offset is None:
             return None
         width = dataset.shape[1]
         return lambda rows, columns, out: read_rows(descriptor, offset, width, stored, rows, columns, out)
-    chain = tuple(code for code, _, _ in filter_ids(dataset))
-    if any(code not in (_DEFLATE, _SHUFFLE) for code in chain) or len(set(chain)) < len(chain):
+    if not decodes_directly(dataset) or math.prod(grid_shape(dataset.shape, dataset.chunks)) > MOST_CHUNKS:
         return None
-    if math.prod(grid_shape(dataset.shape, dataset.chunks)) > MOST_CHUNKS:
-        return None
-    reader = _ChunkReader(dataset, descriptor, chain)
+    reader = _ChunkReader(dataset, stored, descriptor, library)
     return reader.fill if reader.agrees_with(dataset) else None
 
 
-def inflater() -> Callable[..., bytes]:
-    """Return isal's inflate where it is installed, else zlib's; both run outside Python's lock.
+def decodes_directly(dataset: Any) -> bool:
+    """Whether the chunks of a dataset can be decoded without the library, which then needs no plugin."""
+    if dataset.chunks is None or plain_type(dataset) is None:
+        return False
+    return all(step.known for step in filters_of(dataset))
 
-    On shuffled 16-bit counts isal decoded 920 MB/s a core, zlib 380.
+
+def plain_type(dataset: Any) -> np.dtype | None:
+    """Type of the entries as they lie in the file; None where the library's conversion is needed.
+
+    Truth values and other enumerations are integers under names. Types with padding bits are left to the library.
     """
-    try:
-        found: Callable[..., bytes] = importlib.import_module("isal.isal_zlib").decompress
-    except ImportError:
-        return zlib.decompress
-    return found
+    import h5py
+
+    stored, kind = dataset.dtype, dataset.id.get_type()
+    if stored.names is not None or stored.kind not in "biufc" or stored.itemsize not in (1, 2, 4, 8, 16):
+        return None
+    if isinstance(kind, h5py.h5t.TypeEnumID):
+        kind = kind.get_super()
+    bare = np.dtype("i1" if stored.kind == "b" else stored.str)
+    if not kind.equal(h5py.h5t.py_create(bare)):
+        return None
+    return np.dtype(stored.str)
 
 
 class _ChunkReader:
-    """Reads and decodes whole chunks, with nothing shared between threads but the table of their places."""
+    """Reads and decodes whole chunks; threads share the table of their places, and borrow buffers."""
 
-    def __init__(self, dataset: Any, descriptor: int, chain: tuple[int, ...]) -> None:
+    def __init__(self, dataset: Any, stored: np.dtype, descriptor: int, library: Fill) -> None:
         self._descriptor = descriptor
-        self._chain = chain
-        self._stored: np.dtype = np.dtype(dataset.dtype.str)
+        self._library = library
+        self._filters = filters_of(dataset)
+        self._stored = stored
         self._chunks: tuple[int, int] = dataset.chunks
-        self._bytes = self._chunks[0] * self._chunks[1] * self._stored.itemsize
         self._table = ChunkTable.of(dataset)
-        self._inflate = inflater()
+        self._decoder = ChunkDecoder(self._filters, stored, self._chunks)
+        self._workspaces = Workspaces()
 
     def agrees_with(self, dataset: Any) -> bool:
         """Compare one chunk with what the library finds: some of its versions forget the user block."""
@@ -89,56 +100,57 @@ class _ChunkReader:
             return True
         i, j = (int(part) for part in places[0])
         _, raw = dataset.id.read_direct_chunk((i * self._chunks[0], j * self._chunks[1]))
-        return bool(raw == self._raw(i, j))
+        offset, size, _ = self._table.at(i, j)
+        return len(raw) == size and os.pread(self._descriptor, size, offset) == raw
 
     def fill(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Decode all chunks that a rectangle touches into a buffer."""
-        for i, j in touched(rows, columns, self._chunks):
-            inner_rows, outer_rows = overlap(i, self._chunks[0], rows)
-            inner_columns, outer_columns = overlap(j, self._chunks[1], columns)
-            self._decode(i, j, inner_rows, inner_columns, out[outer_rows, outer_columns])
+        with self._workspaces.lent() as workspace:
+            for i, j in touched(rows, columns, self._chunks):
+                inner_rows, outer_rows = overlap(i, self._chunks[0], rows)
+                inner_columns, outer_columns = overlap(j, self._chunks[1], columns)
+                part = out[outer_rows, outer_columns]
+                try:
+                    self._decode(i, j, inner_rows, inner_columns, part, workspace)
+                except FramingUnknownError as framing:
+                    self._by_library(
+                        i, j, clip(i, self._chunks[0], rows), clip(j, self._chunks[1], columns), part, framing
+                    )
+                except (ChunkError, MemoryError):
+                    raise
+                except Exception as error:  # every codec raises what it likes
+                    raise self._fault(i, j, error) from error
 
-    def _raw(self, i: int, j: int) -> bytes:
-        size, offset = int(self._table.size[i, j]), int(self._table.offset[i, j])
+    def _decode(self, i: int, j: int, rows: slice, columns: slice, out: np.ndarray, workspace: Workspace) -> None:
+        offset, size, skipped = self._table.at(i, j)
         if offset < 0:
-            raise EOFError("it was never written")
-        raw = os.pread(self._descriptor, size, offset)
-        if len(raw) < size:
-            raise EOFError(f"{len(raw):,} of {size:,} stored bytes are in the file, at byte {offset:,}")
-        return raw
+            raise ChunkError((i, j), "it was never written")
+        every = (1 << len(self._filters)) - 1
+        if skipped & every == every:
+            # No filter was applied: the chunk is a small contiguous array.
+            if size != self._decoder.bytes:
+                raise ValueError(f"{size:,} bytes are stored without a filter, a chunk has {self._decoder.bytes:,}")
+            spans = (rows.start, rows.stop), (columns.start, columns.stop)
+            read_rows(self._descriptor, offset, self._chunks[1], self._stored, *spans, out)
+            return
+        held = self._decoder.place_for(size, workspace)
+        fill_from(self._descriptor, offset, held.bytes.data)
+        self._decoder.decode(held, rows, columns, out, workspace, skipped)
 
-    def _decode(self, i: int, j: int, rows: slice, columns: slice, out: np.ndarray) -> None:
-        """Undo the filters in reverse; those that the writer skipped for this chunk are marked in its mask."""
-        raw: Any = self._raw(i, j)
-        skipped = int(self._table.skipped[i, j])
-        shuffled = False
-        for position in reversed(range(len(self._chain))):
-            if skipped >> position & 1:
-                continue
-            if self._chain[position] == _DEFLATE:
-                if shuffled:
-                    raise ValueError("shuffle after deflate is not a chain that any writer makes")
-                raw = self._inflate(raw, bufsize=self._bytes)
-            else:
-                shuffled = True
-        if len(raw) != self._bytes:
-            raise ValueError(f"decoded to {len(raw):,} bytes, a chunk has {self._bytes:,}")
-        if shuffled and self._stored.itemsize > 1:
-            self._unshuffle(raw, rows, columns, out)
-        else:
-            out[...] = np.frombuffer(raw, self._stored).reshape(self._chunks)[rows, columns]
+    def _by_library(
+        self, i: int, j: int, rows: Span, columns: Span, out: np.ndarray, framing: FramingUnknownError
+    ) -> None:
+        try:
+            self._library(rows, columns, out)
+        except Exception as error:  # the library and its plugins raise what they like
+            raise self._fault(i, j, f"{framing}; the library says: {error}") from error
 
-    def _unshuffle(self, raw: bytes, rows: slice, columns: slice, out: np.ndarray) -> None:
-        """Bring the bytes of each entry together again; byte order is turned on the way, at no cost."""
-        item = self._stored.itemsize
-        planes = np.frombuffer(raw, np.uint8).reshape(item, *self._chunks)[:, rows, columns]
-        target = out if out.strides[1] == item else np.empty(out.shape, out.dtype)
-        entries = target.view(np.uint8).reshape(*target.shape, item)
-        places = np.arange(item)
-        if not self._stored.isnative:
-            # The two floats of a complex number are turned each in its place.
-            places = places.reshape(2 if self._stored.kind == "c" else 1, -1)[:, ::-1].reshape(-1)
-        for byte, plane in zip(places, planes, strict=True):
-            entries[:, :, byte] = plane
-        if target is not out:
-            out[...] = target
+    def _fault(self, i: int, j: int, said: object) -> ChunkError:
+        offset, size, skipped = self._table.at(i, j)
+        names = [step.name for number, step in enumerate(self._filters) if not skipped >> number & 1]
+        return ChunkError(
+            (i, j),
+            f"{size:,} bytes stored at byte {offset:,}, {' + '.join(names) or 'no filter'}; a chunk has"
+            f" {self._decoder.bytes:,} bytes decoded",
+            f"decoding says: {said}",
+        )

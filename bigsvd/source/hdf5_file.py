@@ -6,7 +6,7 @@ import errno
 import os
 import re
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from typing import Any
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, SourceError
@@ -16,12 +16,11 @@ _TRUNCATED = re.compile(r"eof = (\d+).*stored_eof = (\d+)")
 
 
 def open_hdf5(path: str) -> Any:
-    """Open an HDF5 file read-only, with the filters of hdf5plugin at hand.
+    """Open an HDF5 file read-only.
 
     Locks are taken where the file system knows them. The chunk cache is off: chunks are read whole and once.
     """
     import h5py
-    import hdf5plugin  # noqa: F401  registers its filters
 
     try:
         file = h5py.File(path, "r", locking="best-effort", rdcc_nbytes=0)
@@ -36,6 +35,12 @@ def open_hdf5(path: str) -> Any:
             remedy='Close it first, or open it with h5py.File(path, "r").',
         )
     return file
+
+
+def register_plugins() -> None:
+    """Give the library the filters of hdf5plugin, where that is installed; known chains are decoded without them."""
+    with suppress(ImportError):
+        import hdf5plugin  # noqa: F401  registers its filters
 
 
 @contextmanager
