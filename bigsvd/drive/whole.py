@@ -9,6 +9,7 @@ import numpy as np
 from bigsvd.certify import WholeSpectrum, fold_rounding, gamma, gram_rounding
 from bigsvd.drive.sweeps import Sweeps
 from bigsvd.solve import correct_gram, from_gram, from_triangle
+from bigsvd.sweep import mirror
 
 # Below this ratio of the last wanted to the first value, a Gram matrix has lost half the figures: fold instead.
 GRAM_RATIO = 1e-6
@@ -47,6 +48,7 @@ def sweep_gram(sweeps: Sweeps) -> WholeSweep:
     across = sweeps.plan.geometry.across
     error = gram_rounding(sweeps.depth(across), float(np.sqrt(sums.energy)))
     gram = sums.gram
+    mirror(gram)
     if learnt is not None:
         gram = correct_gram(gram, learnt, sums.lines, centred=sweeps.ones)
         if learnt.column_scale is not None:

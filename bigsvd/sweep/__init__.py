@@ -1,7 +1,7 @@
 """The only loop that reads the matrix: panels, dask graphs, sums in a fixed order."""
 
 from bigsvd.sweep.events import Control, Listener, Progress, StoppedError
-from bigsvd.sweep.folding import fold
+from bigsvd.sweep.folding import fold, mirror
 from bigsvd.sweep.panels import PanelReader
 from bigsvd.sweep.partial import Partial
 from bigsvd.sweep.scratch import Scratch
@@ -19,5 +19,6 @@ __all__ = [
     "StoppedError",
     "SweepTask",
     "fold",
+    "mirror",
     "one_blas_thread",
 ]

@@ -28,7 +28,7 @@ class Partial:
     products : ndarray, shape (width, across), or None
         Σ Y_pᴴ A_p: the conjugate transpose of AᴴA B.
     gram : ndarray, shape (across, across), or None
-        Σ A_pᴴ A_p.
+        Σ A_pᴴ A_p, lower triangle.
     triangle : ndarray, shape (columns, columns), or None
         Triangular factor of the folded block.
     line_mean, line_inverse_scale, line_constant : list of ndarray

@@ -11,7 +11,7 @@ import numpy as np
 from bigsvd.plan import UNIT_LINES, fold_lines, tile_columns
 from bigsvd.prepare import LineStatistics, Preparation, line_statistics, prepare_unit
 from bigsvd.sweep.events import Stopwatch
-from bigsvd.sweep.folding import fold, fold_upon
+from bigsvd.sweep.folding import add_gram, fold, fold_upon
 from bigsvd.sweep.panels import PanelReader
 from bigsvd.sweep.partial import Partial
 from bigsvd.sweep.scratch import Scratch
@@ -122,7 +122,7 @@ class _Segment:
         if task.learn:
             self.sums.square_sum = np.zeros(self.across)
         if task.kind == "gram":
-            self.sums.gram = np.zeros((self.across, self.across), task.wide)
+            self.sums.gram = np.zeros((self.across, self.across), task.wide, order="F")
         if task.block is not None:
             self.sums.products = np.zeros((task.block.shape[1], self.across), task.wide)
             self.product = np.empty(task.block.shape[1] * self.tile, task.dtype)
@@ -203,9 +203,8 @@ class _Segment:
             self._gather(start, self._whole(unit, statistics))
         elif task.kind == "gram":
             self.watch.start("products")
-            whole = self._whole(unit, statistics)
             assert sums.gram is not None
-            np.add(sums.gram, whole.conj().T @ whole, out=sums.gram)
+            add_gram(sums.gram, self._whole(unit, statistics))
         elif tall is not None:
             self.watch.start("products")
             # A single tile is still there; several are converted anew, for memory holds one.
