@@ -14,8 +14,9 @@ from bigsvd.source.chunk_decoder import ChunkError
 from bigsvd.source.entries import decoded_type, pair_view, type_caution
 from bigsvd.source.hdf5_complete import locate, require_complete
 from bigsvd.source.hdf5_dataset import describe, missing_filters, unapplied_attributes
-from bigsvd.source.hdf5_direct import Fill, direct_reader
+from bigsvd.source.hdf5_direct import Fill, decodes_directly, direct_reader
 from bigsvd.source.hdf5_file import library_errors_named, open_hdf5, register_plugins
+from bigsvd.source.hdf5_filters import filters_of
 from bigsvd.source.positional import Descriptor
 from bigsvd.source.rectangle import Span, clip, fill_by_bands, require_rectangle, show_chunk, show_place, touched
 from bigsvd.source.spec import MatrixSpec
@@ -202,7 +203,8 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -
             evidence=[f"shape {show_shape(said.shape)}, {said.dtype}, {said.encoding}"],
             remedy=_remedy(dataset, path),
         )
-    filtered = dataset.id.get_create_plist().get_nfilters() > 0
+    filters = filters_of(dataset)
+    codecs = tuple(step.name for step in filters) if decodes_directly(dataset) else ("library",) * bool(filters)
     rows, columns = dataset.shape
     chunks = dataset.chunks or (1, columns)
     return MatrixSpec(
@@ -210,13 +212,14 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -
         shape=(rows, columns),
         dtype=dtype,
         chunks=(min(chunks[0], rows), min(chunks[1], columns)),
-        storage="compressed" if filtered else "plain",
+        storage="compressed" if filters else "plain",
         encoding=said.encoding,
         stored_bytes=said.stored_bytes,
         samples_hint=said.samples_hint,
         hint_reason=said.hint_reason,
         fingerprint=digest(stamps, inside, dataset.shape, stored, said.encoding),
         cautions=type_caution(stored) + unapplied_attributes(set(dataset.attrs)),
+        codecs=codecs,
     )
 
 

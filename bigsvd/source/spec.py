@@ -28,6 +28,9 @@ class MatrixSpec:
         ``graph``.
     encoding : str
         Chunking and filters in words, for people.
+    codecs : tuple of str
+        What is undone to decode a chunk, for the nominal rates; ``library`` where the format's own library does it,
+        one chunk at a time.
     stored_bytes : int or None
         Bytes on disk, where the format tells.
     samples_hint : str or None
@@ -51,6 +54,7 @@ class MatrixSpec:
     hint_reason: str = ""
     fingerprint: str = ""
     cautions: tuple[str, ...] = ()
+    codecs: tuple[str, ...] = ()
 
     @property
     def decoded_bytes(self) -> int:
