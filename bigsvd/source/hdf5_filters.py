@@ -49,18 +49,8 @@ def _bare(codec: Callable[[np.ndarray, np.ndarray], int]) -> Undo:
 
 
 def _unshuffle(held: Stretch, free: Stretch, options: Options) -> Stretch:
-    """Bring the bytes of each entry together again; a rest shorter than an entry stands at the end as it is.
-
-    Options: size of an entry. Where shuffle was the first filter it is undone on the way into the panel instead.
-    """
-    item = max(1, options[0] if options else 1)
-    stored = held.bytes
-    codecs.require_room(stored.size, free.bytes)
-    whole = stored.size // item * item
-    out = free.first(stored.size)
-    out.bytes[:whole].reshape(-1, item)[...] = stored[:whole].reshape(item, -1).T
-    out.bytes[whole:] = stored[whole:]
-    return out
+    """Undo a shuffle that was not the first filter, or of other entries. Options: size of an entry."""
+    return codecs.unshuffle_bytes(held, free, options[0] if options else 1)
 
 
 def _fletcher32(held: Stretch, free: Stretch, options: Options) -> Stretch:

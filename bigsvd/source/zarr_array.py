@@ -9,17 +9,19 @@ from typing import Any
 
 import numpy as np
 
-from bigsvd.errors import DamagedSourceError, NoMatrixError, UnsupportedMatrixError
+from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, UnsupportedMatrixError
+from bigsvd.source.chunk_decoder import ChunkError
 from bigsvd.source.complete import SHOWN, absent_error, count_absent, refuse_absent
 from bigsvd.source.entries import decoded_type, type_caution
 from bigsvd.source.hdf5_dataset import unapplied_attributes
-from bigsvd.source.rectangle import Span, clip, require_rectangle, show_chunk, touched
+from bigsvd.source.rectangle import Span, clip, require_rectangle, show_chunk, show_place, touched
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
 from bigsvd.source.zarr_complete import absent_inside, absent_keys, other_names
+from bigsvd.source.zarr_direct import ChunkAbsentError, ZarrFiles
 from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
-from bigsvd.source.zarr_read import Reader, open_zarr, python_reader, rust_reader
-from bigsvd.source.zarr_store import KeyStore, open_keys
+from bigsvd.source.zarr_read import Reader, open_zarr, python_reader
+from bigsvd.source.zarr_store import DirectoryKeys, KeyStore, open_keys
 from bigsvd.source.zarr_walk import describe_zarr, group_attributes, stored_bytes
 from bigsvd.units import show_shape
 
@@ -48,6 +50,7 @@ class ZarrSource:
     def _forget(self) -> None:
         self._lock = threading.Lock()
         self._reader: Reader | None = None
+        self._library: Reader | None = None
         self._process = 0
 
     def __getstate__(self) -> dict[str, Any]:
@@ -122,7 +125,7 @@ class ZarrSource:
     def close(self) -> None:
         """Release the store. Reading again opens it again."""
         with self._lock:
-            self._reader = None
+            self._reader = self._library = None
 
     def _opened(self) -> Reader:
         with self._lock:
@@ -133,11 +136,16 @@ class ZarrSource:
             return self._reader
 
     def _open_reader(self) -> Reader:
-        """Choose the reader: Rust where it is both right and fast.
+        """Choose the reader: chunk by chunk in the calling thread where all codecs are known, else zarr-python."""
+        if self.metadata.layout is not None and isinstance(self.keys, DirectoryKeys):
+            return ZarrFiles(self._file, self.metadata, self._by_library).fill
+        self._open_library()
+        return self._by_library
 
-        zarrs 0.2.3 decodes part of a chunk wrongly where complex numbers are stored big-endian; column order it
-        decodes six times slower than zarr-python.
-        """
+    def _file(self, coordinates: tuple[int, int]) -> str:
+        return os.path.join(self.path, self._key(coordinates))
+
+    def _open_library(self) -> Reader:
         try:
             array = open_zarr(self.keys, self.inside, self.metadata.zarr_format)
             # numcodecs looks its codecs up at the first use; an unknown one must show before the run.
@@ -145,11 +153,15 @@ class ZarrSource:
                 getattr(codec, "_codec", None)
         except Exception as error:  # codecs and data types come from other packages and raise what they like
             raise self._unknown(error) from error
-        direct = None
-        swapped = self.metadata.big_endian and self.spec.dtype.kind == "c"
-        if not swapped and not self.metadata.column_major and array.dtype.newbyteorder("=") == self.spec.dtype:
-            direct = rust_reader(array, self.keys, self._key, self._chunks)
-        return direct or python_reader(array)
+        self._library = python_reader(array)
+        return self._library
+
+    def _by_library(self, rows: Span, columns: Span, out: np.ndarray) -> None:
+        """Read through zarr-python, which would answer an absent chunk with the fill value."""
+        for coordinates in touched(rows, columns, self._chunks):
+            if not self.keys.size(self._key(coordinates)):
+                raise ChunkAbsentError(coordinates)
+        (self._library or self._open_library())(rows, columns, out)
 
     def _unknown(self, error: Exception) -> UnsupportedMatrixError:
         return UnsupportedMatrixError(
@@ -164,15 +176,12 @@ class ZarrSource:
         if out.size == 0:
             return
         reader = self._opened()
-        # An absent chunk would be answered with the fill value.
-        for coordinates in touched(rows, columns, self._chunks):
-            if not self.keys.size(self._key(coordinates)):
-                place = show_chunk(coordinates, self.spec.shape, self._chunks)
-                raise absent_error(self.spec, "a chunk is absent", [f"{place}; key {self._key(coordinates)}"], MEANT)
         try:
             reader(rows, columns, out)
         except Exception as error:  # codecs come from other packages and raise what they like
             self._require_unchanged()
+            if isinstance(error, BigsvdError):
+                raise
             raise self._damage(reader, rows, columns, error) from error
         self._require_unchanged()
 
@@ -181,8 +190,25 @@ class ZarrSource:
             stamp.require_unchanged()
 
     def _damage(self, reader: Reader, rows: Span, columns: Span, error: Exception) -> DamagedSourceError:
-        """Find the first chunk of the rectangle that does not decode, and name it."""
-        evidence = [f"zarr says: {error}"]
+        """Name the first chunk of the rectangle that is absent or does not decode, and say what is wrong with it."""
+        found = error if isinstance(error, ChunkError) else self._search(reader, rows, columns, error)
+        if found is None:
+            evidence = [show_place(rows, columns), f"zarr says: {error}"]
+        else:
+            key = self._key(found.coordinates)
+            place = show_chunk(found.coordinates, self.spec.shape, self._chunks)
+            if isinstance(found, ChunkAbsentError):
+                absent = [f"{place}; key {key}", *found.evidence]
+                return absent_error(self.spec, "a chunk is absent", absent, MEANT)
+            evidence = [place, f"key {key}, {self.keys.size(key) or 0:,} bytes stored", *found.evidence]
+        return DamagedSourceError(
+            f"{self.spec.name} holds a chunk that does not decode",
+            evidence=evidence,
+            remedy="Copy that chunk again from the origin of the store, or write the array again.",
+        )
+
+    def _search(self, reader: Reader, rows: Span, columns: Span, error: Exception) -> ChunkError | None:
+        """Read chunk by chunk, since zarr-python does not tell which one it failed at."""
         chunks = self._chunks
         for i, j in touched(rows, columns, chunks):
             part_rows, part_columns = clip(i, chunks[0], rows), clip(j, chunks[1], columns)
@@ -190,18 +216,9 @@ class ZarrSource:
             try:
                 reader(part_rows, part_columns, part)
             except Exception as first:
-                key = self._key((i, j))
-                evidence = [
-                    show_chunk((i, j), self.spec.shape, chunks),
-                    f"key {key}, {self.keys.size(key):,} bytes stored",
-                    f"zarr says: {first}",
-                ]
-                break
-        return DamagedSourceError(
-            f"{self.spec.name} holds a chunk that does not decode",
-            evidence=evidence,
-            remedy="Copy that chunk again from the origin of the store, or write the array again.",
-        )
+                decoded = chunks[0] * chunks[1] * self.spec.dtype.itemsize
+                return ChunkError((i, j), f"a chunk has {decoded:,} bytes decoded", f"zarr says: {first}")
+        return None
 
     def require_complete(self) -> None:
         """Compare the stored keys with the grid; see `check_complete`."""
@@ -217,7 +234,7 @@ class ZarrSource:
                     "check the dimension separator in the metadata first.",
                 )
         refuse_absent(absent, self.spec, MEANT)
-        if self.metadata.shard is not None:
+        if self.metadata.index is not None:
             self._require_full_shards(absent.shape)
 
     def _require_full_shards(self, grid: tuple[int, ...]) -> None:

@@ -12,7 +12,6 @@ from bigsvd.source.zarr_metadata import ZarrMetadata
 from bigsvd.source.zarr_store import KeyStore
 
 MOST_CHUNKS = 100_000_000
-_ABSENT = 2**64 - 1
 
 
 def absent_keys(keys: KeyStore, at: str, metadata: ZarrMetadata) -> np.ndarray:
@@ -59,26 +58,15 @@ def other_names(keys: KeyStore, at: str) -> list[str]:
 
 
 def absent_inside(keys: KeyStore, key: str, place: tuple[int, int], metadata: ZarrMetadata) -> int:
-    """Count the inner chunks that the index of a shard marks as never written.
-
-    The index holds two little-endian 64-bit numbers an inner chunk, both 2⁶⁴ − 1 where it is absent
-    (Zarr v3 specification, sharding codec). Its checksum is verified when the shard is read.
-    """
-    shard, inner = metadata.shard, metadata.inner
-    if shard is None or inner is None:
+    """Count the inner chunks that the index of a shard marks as never written; it is checked when the shard is read."""
+    index, inner = metadata.index, metadata.inner
+    if index is None or inner is None:
         return 0
-    codecs = [step["name"] for step in shard.get("index_codecs", ())]
-    if codecs not in (["bytes"], ["bytes", "crc32c"]):
+    raw = keys.part(key, -index.bytes if index.at_end else 0, index.bytes)
+    if len(raw) < index.bytes:
         return 0
-    sides = [outer // part for outer, part in zip(metadata.chunks, inner, strict=True)]
-    size = 16 * sides[0] * sides[1]
-    from_end = shard.get("index_location", "end") == "end"
-    raw = keys.part(key, -(size + 4 * (len(codecs) - 1)) if from_end else 0, size)
-    if len(raw) < size:
-        return 0
-    index = np.frombuffer(raw, "<u8").reshape(*sides, 2)
-    used = [
+    rows, columns = (
         -(-min(outer, side - position * outer) // part)
         for outer, part, side, position in zip(metadata.chunks, inner, metadata.shape, place, strict=True)
-    ]
-    return int(np.count_nonzero(np.all(index[: used[0], : used[1]] == np.uint64(_ABSENT), axis=2)))
+    )
+    return index.absent(index.table(np.frombuffer(raw, np.uint8)), (rows, columns))

@@ -9,8 +9,15 @@ import numpy as np
 
 from bigsvd.errors import DamagedSourceError
 from bigsvd.source.entries import show_type
+from bigsvd.source.zarr_codecs import ChunkLayout, layout_2, layout_3
+from bigsvd.source.zarr_shards import ShardIndex
 from bigsvd.source.zarr_store import KeyStore, read_document
 from bigsvd.units import show_shape
+
+_KEYS_3 = {
+    *("zarr_format", "node_type", "shape", "data_type", "chunk_grid", "chunk_key_encoding", "fill_value", "codecs"),
+    *("attributes", "dimension_names", "storage_transformers"),
+}
 
 
 @dataclass(frozen=True)
@@ -24,8 +31,8 @@ class ZarrMetadata:
         The chunk is the unit of a stored key: of a sharded array, the shard.
     inner : tuple of int or None
         Chunk inside a shard.
-    shard : dict or None
-        Configuration of the sharding codec, where it is the only codec.
+    index : ShardIndex or None
+        Where the places of inner chunks stand in a shard, if sharding is the only codec and written as usual.
     dtype : numpy.dtype or None
         None where numpy has no such type.
     type_words : str
@@ -38,6 +45,8 @@ class ZarrMetadata:
     codecs : tuple of str
     attributes : dict
     dimension_names : tuple of str or None
+    layout : ChunkLayout or None
+        How the entries of a chunk, or of an inner chunk, became bytes; None where not all of it is known here.
     note : str
         What is odd about it.
     """
@@ -53,10 +62,11 @@ class ZarrMetadata:
     codecs: tuple[str, ...]
     attributes: dict[str, Any]
     inner: tuple[int, ...] | None = None
-    shard: dict[str, Any] | None = None
+    index: ShardIndex | None = None
     column_major: bool = False
     big_endian: bool = False
     dimension_names: tuple[str | None, ...] = ()
+    layout: ChunkLayout | None = None
     note: str = ""
 
     def key(self, coordinates: tuple[int, int]) -> str:
@@ -139,6 +149,7 @@ def _version_2(document: dict[str, Any], attributes: dict[str, Any], note: str) 
         column_major=document.get("order") == "F" and len(shape) > 1,
         big_endian=dtype is not None and dtype.byteorder == ">",
         dimension_names=tuple(names) if isinstance(names, list) else (),
+        layout=layout_2(document, dtype),
         note=note,
     )
 
@@ -156,6 +167,16 @@ def _version_3(document: dict[str, Any], attributes: dict[str, Any], note: str) 
     codecs = document["codecs"]
     shards = [step["configuration"] for step in codecs if step["name"] == "sharding_indexed"]
     steps = [*(shards[0]["codecs"] if shards else ()), *codecs]
+    inner = tuple(map(int, shards[0]["chunk_shape"])) if shards else ()
+    index = ShardIndex.of(shards[0], chunks, inner) if shards and len(codecs) == 1 else None
+    # What a reader must understand is told by zarr-python, which refuses what it does not.
+    known = (
+        encoding["name"] in ("default", "v2")
+        and grid["name"] == "regular"
+        and not document.get("storage_transformers")
+        and set(document) <= _KEYS_3
+        and (not shards or index is not None)
+    )
     return ZarrMetadata(
         zarr_format=3,
         shape=tuple(map(int, document["shape"])),
@@ -171,11 +192,12 @@ def _version_3(document: dict[str, Any], attributes: dict[str, Any], note: str) 
             if step["name"] not in ("bytes", "sharding_indexed")
         ),
         attributes=attributes,
-        inner=tuple(map(int, shards[0]["chunk_shape"])) if shards else None,
-        shard=shards[0] if shards and len(codecs) == 1 else None,
+        inner=inner or None,
+        index=index,
         column_major=any(step["name"] == "transpose" for step in steps),
         big_endian=any((step.get("configuration") or {}).get("endian") == "big" for step in steps),
         dimension_names=tuple(document.get("dimension_names") or ()),
+        layout=layout_3(shards[0]["codecs"] if shards else codecs, dtype) if known else None,
         note=note,
     )
 

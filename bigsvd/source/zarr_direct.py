@@ -1,0 +1,124 @@
+"""Chunks of a Zarr array taken from their files and decoded by the calling thread, without zarr-python's pipeline.
+
+zarr-python decodes through an event loop and a pool of threads of its own, into buffers of its own. Where all codecs
+are known (`zarr_codecs`), a chunk file, or an inner chunk of a shard, is read and decoded straight into the panel.
+"""
+
+from __future__ import annotations
+
+import os
+import stat
+from collections.abc import Callable
+
+import numpy as np
+
+from bigsvd.source.chunk_decoder import ChunkDecoder, ChunkError
+from bigsvd.source.codecs import FramingUnknownError
+from bigsvd.source.positional import fill_from
+from bigsvd.source.rectangle import Span, clip, overlap, touched
+from bigsvd.source.workspace import Workspace, Workspaces
+from bigsvd.source.zarr_metadata import ZarrMetadata
+
+Fill = Callable[[Span, Span, np.ndarray], None]
+
+
+class ChunkAbsentError(ChunkError):
+    """A chunk that was never written, or is gone."""
+
+
+class ZarrFiles:
+    """Reads rectangles of an array whose chunks are files in a directory.
+
+    Parameters
+    ----------
+    file_of : callable
+        Path of the file of a chunk, by its coordinates.
+    metadata : ZarrMetadata
+        With a known `layout`.
+    library : callable
+        Reads the chunks whose framing turns out to be another than the usual one.
+    """
+
+    def __init__(self, file_of: Callable[[tuple[int, int]], str], metadata: ZarrMetadata, library: Fill) -> None:
+        layout = metadata.layout
+        if layout is None:
+            raise ValueError("codecs that are not known here")
+        self._file_of = file_of
+        self._library = library
+        self._chunks = metadata.chunks[0], metadata.chunks[1]
+        self._index = metadata.index
+        inner = metadata.inner or metadata.chunks
+        self._inner = inner[0], inner[1]
+        self._decoder = ChunkDecoder(layout.stages, layout.dtype, self._inner, column_major=layout.column_major)
+        self._workspaces = Workspaces()
+
+    def fill(self, rows: Span, columns: Span, out: np.ndarray) -> None:
+        """Decode all chunks that a rectangle touches into a buffer."""
+        with self._workspaces.lent() as workspace:
+            for i, j in touched(rows, columns, self._chunks):
+                part_rows, part_columns = clip(i, self._chunks[0], rows), clip(j, self._chunks[1], columns)
+                part = out[_from(rows, part_rows), _from(columns, part_columns)]
+                try:
+                    self._read(i, j, part_rows, part_columns, part, workspace)
+                except FramingUnknownError:
+                    self._library(part_rows, part_columns, part)
+                except (ChunkError, MemoryError):
+                    raise
+                except Exception as error:  # every codec raises what it likes
+                    raise ChunkError((i, j), *self._expected(), f"decoding says: {error}") from error
+
+    def _read(self, i: int, j: int, rows: Span, columns: Span, out: np.ndarray, workspace: Workspace) -> None:
+        try:
+            descriptor = os.open(self._file_of((i, j)), os.O_RDONLY | os.O_CLOEXEC)
+        except FileNotFoundError:
+            raise ChunkAbsentError((i, j)) from None
+        try:
+            found = os.fstat(descriptor)
+            if not stat.S_ISREG(found.st_mode) or not found.st_size:
+                raise ChunkAbsentError((i, j))
+            if self._index is None:
+                self._decode(descriptor, 0, found.st_size, (i, j), rows, columns, out, workspace)
+            else:
+                self._read_shard(descriptor, found.st_size, (i, j), rows, columns, out, workspace)
+        finally:
+            os.close(descriptor)
+
+    def _read_shard(
+        self, descriptor: int, size: int, shard: tuple[int, int], rows: Span, columns: Span, out: np.ndarray,
+        workspace: Workspace,
+    ) -> None:  # fmt: skip
+        """Decode the inner chunks that are wanted, each by itself."""
+        assert self._index is not None
+        table = self._index.read(descriptor, size)
+        first = shard[0] * self._chunks[0] // self._inner[0], shard[1] * self._chunks[1] // self._inner[1]
+        for i, j in touched(rows, columns, self._inner):
+            place = self._index.place(table, (i - first[0], j - first[1]), size)
+            if place is None:
+                raise ChunkAbsentError(shard, f"the inner chunk {i - first[0]}, {j - first[1]} of its shard")
+            part_rows, part_columns = clip(i, self._inner[0], rows), clip(j, self._inner[1], columns)
+            part = out[_from(rows, part_rows), _from(columns, part_columns)]
+            try:
+                self._decode(descriptor, *place, (i, j), part_rows, part_columns, part, workspace)
+            except (FramingUnknownError, MemoryError):
+                raise
+            except Exception as error:  # every codec raises what it likes
+                where = f"inner chunk ({i - first[0]}, {j - first[1]}), {place[1]:,} bytes at byte {place[0]:,}"
+                raise ChunkError(shard, where, *self._expected(), f"decoding says: {error}") from error
+
+    def _decode(
+        self, descriptor: int, offset: int, size: int, chunk: tuple[int, int], rows: Span, columns: Span,
+        out: np.ndarray, workspace: Workspace,
+    ) -> None:  # fmt: skip
+        held = self._decoder.place_for(size, workspace)
+        fill_from(descriptor, offset, held.bytes.data)
+        inner_rows, _ = overlap(chunk[0], self._inner[0], rows)
+        inner_columns, _ = overlap(chunk[1], self._inner[1], columns)
+        self._decoder.decode(held, inner_rows, inner_columns, out, workspace)
+
+    def _expected(self) -> tuple[str, ...]:
+        return (f"a chunk has {self._decoder.bytes:,} bytes decoded",)
+
+
+def _from(whole: Span, part: Span) -> slice:
+    """Where a part of a span lies in the buffer of the whole."""
+    return slice(part[0] - whole[0], part[1] - whole[0])
