@@ -29,8 +29,7 @@ class MatrixSpec:
     encoding : str
         Chunking and filters in words, for people.
     codecs : tuple of str
-        What is undone to decode a chunk, for the nominal rates; ``library`` where the format's own library does it,
-        one chunk at a time.
+        What is undone to decode a chunk, for the nominal rates; ``library`` where the format's own library does it.
     stored_bytes : int or None
         Bytes on disk, where the format tells.
     samples_hint : str or None

@@ -95,7 +95,15 @@ class ZarrSource:
             hint_reason=said.hint_reason,
             fingerprint=digest(self.stamps, metadata, said.stored_bytes, self._sampled_chunks()),
             cautions=type_caution(metadata.dtype) + unapplied_attributes(set(metadata.attributes)),
+            codecs=self._codecs(),
         )
+
+    def _codecs(self) -> tuple[str, ...]:
+        """What is undone to decode a chunk; ``library`` where zarr-python does it."""
+        layout = self.metadata.layout
+        if layout is None or not isinstance(self.keys, DirectoryKeys):
+            return ("library",)
+        return tuple(stage.name for stage in layout.stages)
 
     def _mark_files(self) -> list[str]:
         folder = os.path.join(self.path, self.inside)
