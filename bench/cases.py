@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 from bench.data import DTYPES, make_recipe, write_benchmark
 from bigsvd.units import show_shape
@@ -15,17 +18,17 @@ KINDS = {
     "zarr-zstd": "Zarr version 3, float32, Zstandard",
     "zarr-blosc": "Zarr version 2, float32, Blosc",
 }
-DEFAULT_KINDS = ("hdf5-plain", "hdf5-gzip", "zarr-zstd")
-COLUMNS = 5_000
-# The bulk of 1/i ends near the 84th planted value of a 50,000 × 5,000 matrix: the 20 wanted stand out, their order too.
-NOISE = {"exponential": 0.0, "inverse": 0.5, "inverse-root": 0.5, "spikes": 0.0}
 SPECTRA = {
     "exponential": "σᵢ ∝ 10^(−i/10)",
     "inverse": "σᵢ ∝ 1/i over a bulk of noise",
     "inverse-root": "σᵢ ∝ 1/√i over a bulk of noise",
     "spikes": "15 values at 5…2 times the edge of a bulk of noise",
 }
-FULL_SHAPES = ((100_000, 5_000), (20_000, 60_000), (2_000_000, 300))
+# The bulk of 1/i ends near the 84th planted value of a 50,000 × 5,000 matrix: the 20 wanted stand out, their order too.
+NOISE = {"exponential": 0.0, "inverse": 0.5, "inverse-root": 0.5, "spikes": 0.0}
+SHAPES = {"first": (100_000, 5_000), "wide": (20_000, 60_000), "tall": (2_000_000, 300)}
+# A trial keeps at least so many columns: two hundred values are planted.
+LEAST_COLUMNS = 300
 
 
 @dataclass(frozen=True)
@@ -49,6 +52,17 @@ class Case:
     def decoded_bytes(self) -> int:
         return self.rows * self.columns * DTYPES[self.kind].itemsize
 
+    def facts(self) -> dict[str, Any]:
+        """What every record says of it."""
+        return {
+            "name": self.name,
+            "title": self.title,
+            "kind": self.kind,
+            "spectrum": self.spectrum,
+            "shape": [self.rows, self.columns],
+            "decoded_bytes": self.decoded_bytes,
+        }
+
     def path(self, folder: Path) -> Path:
         return folder / f"{self.name}{'.zarr' if self.kind.startswith('zarr') else '.h5'}"
 
@@ -61,29 +75,46 @@ class Case:
         return path
 
 
-def make_cases(kinds: list[str], spectra: list[str] | None, gigabytes: float, *, full: bool) -> list[Case]:
-    """The cases of a run: spectra on every kind, in the shapes of `full` or of so many decoded gigabytes.
+def programme(*, full: bool) -> list[tuple[str, str, str]]:
+    """(kind, spectrum, shape) of every case: by default those of a quarter of an hour, else all that is affordable.
 
-    Without a choice of spectra, 1/i is left to plain HDF5: the peer needs 12 to 18 reads for it, minutes each time on
-    compressed files.
+    1/i and 1/√i are left to some kinds: a peer needs 12 to 18 reads for them, minutes each time on compressed files.
     """
-    cases = []
-    for kind in kinds:
-        for spectrum in spectra or ["exponential", *(["inverse"] if kind == "hdf5-plain" else [])]:
-            if full:
-                cases += [Case(kind, spectrum, *shape) for shape in FULL_SHAPES]
-            else:
-                rows = round(gigabytes * 1e9 / (COLUMNS * DTYPES[kind].itemsize))
-                cases.append(Case(kind, spectrum, rows, COLUMNS))
+    cases = [(kind, "exponential", "first") for kind in KINDS] + [("hdf5-plain", "inverse", "first")]
+    if full:
+        cases += [("hdf5-gzip", "inverse", "first"), ("zarr-zstd", "inverse", "first")]
+        cases += [(kind, "inverse-root", "first") for kind in ("hdf5-plain", "hdf5-gzip")]
+        for shape in ("wide", "tall"):
+            for spectrum in ("exponential", "inverse"):
+                cases += [(kind, spectrum, shape) for kind in ("hdf5-plain", "hdf5-gzip")]
     return cases
 
 
-def warm(path: Path) -> int:
-    """Read every stored byte once, so that all candidates find the file in the page cache; return how many."""
-    parts = [path] if path.is_file() else [part for part in path.rglob("*") if part.is_file()]
-    total = 0
-    for part in parts:
-        with open(part, "rb", buffering=0) as file:
-            while data := file.read(1 << 24):
-                total += len(data)
-    return total
+def choose_cases(
+    *,
+    full: bool = False,
+    kinds: Sequence[str] | None = None,
+    spectra: Sequence[str] | None = None,
+    shapes: Sequence[str] | None = None,
+    gigabytes: float | None = None,
+) -> list[Case]:
+    """The programme, or every combination of what is named; `gigabytes` makes each a trial of that decoded size."""
+    chosen = programme(full=full)
+    if kinds or spectra or shapes:
+        chosen = [
+            (kind, spectrum, shape)
+            for shape in shapes or ["first"]
+            for kind in kinds or KINDS
+            for spectrum in spectra or ["exponential"]
+        ]
+    return [Case(kind, spectrum, *_shape(shape, kind, gigabytes)) for kind, spectrum, shape in chosen]
+
+
+def _shape(name: str, kind: str, gigabytes: float | None) -> tuple[int, int]:
+    """A shape of the programme, or one of nearly its proportions and so many decoded 10⁹ bytes."""
+    rows, columns = SHAPES[name]
+    if gigabytes is None:
+        return rows, columns
+    entries = gigabytes * 1e9 / DTYPES[kind].itemsize
+    columns = max(LEAST_COLUMNS, round(columns * math.sqrt(entries / (rows * columns))))
+    return max(LEAST_COLUMNS, round(entries / columns)), columns

@@ -1,15 +1,13 @@
-"""Pure parts of the benchmark: errors, medians, the choice of the peer's setting, the lines of the tables."""
+"""Pure parts of the benchmark: errors, candidates and their medians, the choice of the peer's setting."""
 
 from __future__ import annotations
 
 import statistics
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
-
-from bigsvd.units import show_bytes
 
 # A peer that works in single cannot come nearer than this, whatever it is asked: no more is asked of it.
 LEAST_ERROR = 1e-6
@@ -29,6 +27,10 @@ class Errors:
 
     value: float
     angle: float
+
+    def worst(self, other: Errors | None) -> Errors:
+        """The larger of both, each."""
+        return self if other is None else Errors(max(self.value, other.value), max(self.angle, other.angle))
 
 
 def errors_of(values: np.ndarray, right: np.ndarray, true_values: np.ndarray, true_right: np.ndarray) -> Errors:
@@ -55,18 +57,31 @@ class Candidate:
         As the tables call it.
     arguments : list of str
         For `bench/worker.py`.
-    once : bool
-        Only for the record: a single run.
+    one_blas_thread : bool
+        Where the candidate brings threads of its own.
+    centred : bool
+        The candidate cannot but centre: it is held against the centred truth.
+    first_written : bool
+        What a user would write first, defaults throughout.
+    others_pipeline : bool
+        Decodes by what its library does not take by itself; shown, never the best general-purpose setting.
+    failures : list of str
+        Why runs did not end, in words.
     """
 
     name: str
     arguments: list[str]
-    once: bool = False
+    one_blas_thread: bool = False
+    centred: bool = False
+    first_written: bool = False
+    others_pipeline: bool = False
     seconds: list[float] = field(default_factory=list)
     processor_seconds: list[float] = field(default_factory=list)
     peak_bytes: list[int] = field(default_factory=list)
+    own_peak_bytes: list[int] = field(default_factory=list)
     errors: Errors | None = None
-    told: dict[str, Any] = field(default_factory=dict)
+    failures: list[str] = field(default_factory=list)
+    told: list[dict[str, Any]] = field(default_factory=list)
 
     @property
     def median(self) -> float:
@@ -80,36 +95,64 @@ class Candidate:
     def peak(self) -> int:
         return max(self.peak_bytes)
 
+    @property
+    def own_peak(self) -> int:
+        """Without mapped files, which the system takes back where memory is short."""
+        return max(self.own_peak_bytes)
+
+    @property
+    def value_error(self) -> float:
+        return float("inf") if self.errors is None else self.errors.value
+
     def as_json(self) -> dict[str, Any]:
-        assert self.errors is not None
-        return {
+        found = {
             "name": self.name,
             "arguments": self.arguments,
+            "first_written": self.first_written,
+            "centred": self.centred,
+            "others_pipeline": self.others_pipeline,
+            "failures": self.failures,
+        }
+        if self.errors is None:
+            return found
+        return found | {
             "seconds": self.seconds,
             "processor_seconds": self.processor_seconds,
             "median_seconds": self.median,
+            "median_processor_seconds": self.processor_median,
             "peak_bytes": self.peak_bytes,
+            "own_peak_bytes": self.own_peak_bytes,
             "value_error": self.errors.value,
             "angle_error": self.errors.angle,
             "told": self.told,
         }
 
 
+class TooSlowError(Exception):
+    """A setting did not end in time: more iterations would not either."""
+
+
 def least_iterations(error_at: Callable[[int], float], target: float, *, first: int, most: int) -> int | None:
     """Smallest number of iterations whose error is at most `target`, searched from a guess; None above `most`.
 
-    `error_at` is called once a number, as seldom as the guess is good.
+    `error_at` is called once a number, as seldom as the guess is good; it raises `TooSlowError` to end the search.
     """
-    tries = min(first, most)
-    if error_at(tries) <= target:
-        while tries and error_at(tries - 1) <= target:
-            tries -= 1
-        return tries
-    while tries < most:
-        tries += 1
+    found = None
+    try:
+        tries = min(first, most)
         if error_at(tries) <= target:
-            return tries
-    return None
+            found = tries
+            while tries and error_at(tries - 1) <= target:
+                tries -= 1
+                found = tries
+            return found
+        while tries < most:
+            tries += 1
+            if error_at(tries) <= target:
+                return tries
+    except TooSlowError:
+        pass
+    return found
 
 
 def target_error(own: float) -> float:
@@ -117,40 +160,43 @@ def target_error(own: float) -> float:
     return max(own, LEAST_ERROR)
 
 
-def table(headings: Sequence[str], rows: Sequence[Sequence[str]]) -> list[str]:
-    """Lines of a Markdown table, columns aligned so that it reads in a terminal too; all but the first to the right."""
-    widths = [max(len(row[i]) for row in (headings, *rows)) for i in range(len(headings))]
+def best_peer(own: Candidate, peers: Sequence[Candidate], ceiling: int) -> Candidate | None:
+    """The fastest peer of equal error that keeps to the ceiling with all that it cannot hand back.
 
-    def line(cells: Sequence[str]) -> str:
-        first = cells[0].ljust(widths[0])
-        return f"| {' | '.join([first, *(cell.rjust(w) for cell, w in zip(cells[1:], widths[1:], strict=True))])} |"
+    Pages of a mapped file count in the resident size, but the system takes them where memory is short: they are not
+    held against a peer.
+    """
+    target = target_error(own.value_error)
+    equal = [
+        peer
+        for peer in peers
+        if peer.value_error <= target and peer.own_peak <= ceiling and not peer.others_pipeline and not peer.centred
+    ]
+    return min(equal, key=lambda peer: peer.median, default=None)
 
-    rule = [("-" * w) if i == 0 else f"{'-' * (w - 1)}:" for i, w in enumerate(widths)]
-    return [line(headings), line(rule), *(line(row) for row in rows)]
+
+def stage_seconds(told: dict[str, Any]) -> dict[str, float]:
+    """Wall seconds of every stage of a run, from what its result says of times."""
+    found = {}
+    for stage, entry in told["timings"].items():
+        if isinstance(entry, dict):
+            if "measured" in entry:
+                found[stage] = float(entry["measured"])
+        else:
+            found[stage] = float(entry)
+    return found
 
 
-HEADINGS = ("candidate", "seconds (runs)", "processor s", "ratio", "of processor s", "value error", "angle", "peak")
+def phase_times(told: dict[str, Any]) -> list[tuple[str, float, float]]:
+    """(phase, predicted, measured) seconds, of all that a result predicts; empty where it does not."""
+    return list(_predictions(told["timings"]))
 
 
-def candidate_rows(candidates: Sequence[Candidate], ceiling: int) -> list[list[str]]:
-    """Cells of one case; ratios are over the first candidate. No time without its error."""
-    own = candidates[0]
-    rows = []
-    for each in candidates:
-        assert each.errors is not None
-        low, high, count = min(each.seconds), max(each.seconds), len(each.seconds)
-        spread = f"{each.median:.1f} ({low:.1f}–{high:.1f}, {count})" if count > 1 else f"{each.median:.1f} (1)"
-        over = " over" if each.peak > ceiling else ""
-        rows.append(
-            [
-                each.name,
-                spread,
-                f"{each.processor_median:.1f}",
-                "1" if each is own else f"{each.median / own.median:.2f}",
-                "1" if each is own else f"{each.processor_median / own.processor_median:.2f}",
-                f"{each.errors.value:.1e}",
-                f"{each.errors.angle:.1e}",
-                f"{show_bytes(each.peak)}{over}",
-            ]
-        )
-    return rows
+def _predictions(entries: dict[str, Any]) -> Iterator[tuple[str, float, float]]:
+    for name, entry in entries.items():
+        if not isinstance(entry, dict):
+            continue
+        if entry.get("predicted") is not None and entry.get("measured") is not None:
+            yield name, float(entry["predicted"]), float(entry["measured"])
+        else:
+            yield from _predictions(entry)

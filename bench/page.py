@@ -1,133 +1,181 @@
-"""docs/performance.md: what was measured, on what, and what was not reached."""
+"""docs/performance.md: one table first, then what was missed and why, how it was measured, and the details."""
 
 from __future__ import annotations
 
-import importlib.metadata
-import os
-import platform
 from pathlib import Path
-from typing import Any
 
+from bench.details import compare_lines, growth_lines, limits_lines, prediction_lines
+from bench.figures import growth_picture, limits_picture, times_picture
+from bench.goals import CLOSENESS, FIRST_COLUMNS, RATIOS, READS, missed, views
+from bench.plot import Picture
+from bench.records import Merged
+from bench.tables import table
+from bench.view import View, seconds_and_error
 from bigsvd.units import show_bytes, show_seconds
 
-LIBRARIES = ("bigsvd", "numpy", "scipy", "dask", "h5py", "zarr", "zarrs", "isal", "scikit-learn")
-# Ratios to the best general-purpose setting of equal error, whole processes.
-GOALS = {"hdf5-plain": 3.0, "hdf5-gzip": 5.0, "zarr-zstd": 8.0}
+
+def write_page(path: Path, merged: Merged) -> None:
+    """Write the page, and its pictures beside it."""
+    path.parent.mkdir(parents=True, exist_ok=True)
+    for name, picture in pictures(merged).items():
+        picture.save(path.with_name(f"{path.stem}-{name}.svg"))
+    path.write_text("\n".join(page_lines(merged, path.stem)) + "\n")
 
 
-def machine_facts() -> dict[str, Any]:
-    """Processors, memory and versions; no names of hosts or places."""
-    import psutil
-
-    from bigsvd.machine import processors
-
-    return {
-        "processors": processors(),
-        "processor": _processor(),
-        "memory_bytes": int(psutil.virtual_memory().total),
-        "system": platform.system(),
-        "python": platform.python_version(),
-        "load": os.getloadavg()[0],
-        "versions": {name: found for name in LIBRARIES if (found := _version(name))},
-    }
+def pictures(merged: Merged) -> dict[str, Picture]:
+    """The pictures for which there are figures."""
+    found = {}
+    if merged.compare:
+        found["times"] = times_picture(views(merged))
+    if merged.limits:
+        found["limits"] = limits_picture(list(merged.limits.values()))
+    if merged.growth:
+        found["growth"] = growth_picture(merged.growth["entries"])
+    return found
 
 
-def _processor() -> str:
-    """Model and clock where the system tells them."""
-    try:
-        lines = Path("/proc/cpuinfo").read_text().splitlines()
-    except OSError:
-        return platform.machine()
-    told = {key.strip(): value.strip() for key, _, value in (line.partition(":") for line in lines)}
-    clock = float(told.get("cpu MHz", "0")) / 1000
-    return f"{told.get('model name', platform.machine())}{f', {clock:.1f} GHz' if clock else ''}"
-
-
-def _version(name: str) -> str | None:
-    try:
-        return importlib.metadata.version(name)
-    except importlib.metadata.PackageNotFoundError:
-        return None
-
-
-def write_page(path: Path, record: dict[str, Any]) -> None:
-    """Write the page from a record of `bench/run.py`."""
-    path.write_text("\n".join(page_lines(record)) + "\n")
-
-
-def page_lines(record: dict[str, Any]) -> list[str]:
+def page_lines(merged: Merged, stem: str = "performance") -> list[str]:
     """The page as lines of Markdown."""
-    machine = record["machine"]
+    drawn = pictures(merged)
+
+    def shown(name: str) -> list[str]:
+        return [f"![{drawn[name].title}]({stem}-{name}.svg)", ""] if name in drawn else []
+
+    lines = ["# Performance", "", _machine(merged), ""]
+    if merged.compare:
+        lines += [*_summary(merged), "", *shown("times")]
+    lines += [
+        "## What was not reached, and why",
+        "",
+        *_missed(merged),
+        "",
+        "## How it was measured",
+        "",
+        *_method(merged),
+    ]
+    if merged.compare:
+        lines += ["## Beside general-purpose libraries", ""]
+        for view in views(merged):
+            lines += compare_lines(view, merged.newest["settings"]["memory_bytes"])
+    if merged.limits:
+        lines += ["## Beside the limits of the machine", "", *shown("limits")]
+        for entry in merged.limits.values():
+            lines += limits_lines(entry)
+    if merged.growth or merged.workers:
+        lines += ["## Larger files, more workers", "", *shown("growth"), *growth_lines(merged)]
+    if merged.compare:
+        lines += ["## Predicted and measured", "", *prediction_lines(views(merged))]
+    return lines
+
+
+def _machine(merged: Merged) -> str:
+    """Where and when, in a paragraph."""
+    newest, machine = merged.newest, merged.newest["machine"]
     versions = ", ".join(f"{name} {version}" for name, version in machine["versions"].items())
-    prepared = "column means subtracted by all" if record["centred"] else "nothing centred, as `svd_compressed` has it"
-    load = machine["load"]
-    busy = f"; with a load of {load:.1f} others were at work: trust processor seconds more" if load > 3 else ""
-    lines = [
-        "# Performance",
+    notes = f" Other circumstances: {'; '.join(merged.notes)}." if merged.notes else ""
+    clock = f", {machine['clock_ghz']:.1f} GHz" if machine["clock_ghz"] else ""
+    return (
+        f"Written by `scripts/bench` on {newest['date']}. {machine['processors']} processors"
+        f" ({machine['processor']}{clock}), {show_bytes(machine['memory_bytes'])} of memory, {machine['system']},"
+        f" Python {machine['python']}; commit {newest['commit'] or 'unknown'}; {versions}.{notes}"
+    )
+
+
+def _summary(merged: Merged) -> list[str]:
+    """One line a case."""
+    rows = []
+    for view in views(merged):
+        best = view.best or view.nearest
+        wanted = RATIOS[view.entry["kind"]][0]
+        closeness = "not measured" if view.closeness is None else f"{view.closeness:.2f}"
+        if view.entry["shape"][1] == FIRST_COLUMNS and view.closeness is not None:
+            closeness += f" (≤ {CLOSENESS:g})"
+        reads = READS.get(view.entry["spectrum"])
+        rows.append(
+            [
+                view.label,
+                seconds_and_error(view.own),
+                f"{best['name']}: {seconds_and_error(best)}{'' if view.best else ', none as near'}" if best else "none",
+                f"{'' if view.best else '> '}{view.least_ratio:.2f}",
+                f"≥ {wanted:g}, {_reached(view, wanted)}",
+                closeness,
+                f"{view.reads:.2f}{f' (≤ {reads:g})' if reads else ''}",
+                show_bytes(view.peak),
+            ]
+        )
+    ceiling = show_bytes(merged.newest["settings"]["memory_bytes"])
+    peak = f"peak (≤ {ceiling})"
+    headings = ("case", "bigsvd", "best general-purpose setting", "ratio", "goal", "closeness", "reads", peak)
+    words = [
         "",
-        f"Written by `scripts/bench` on {record['date']}. {machine['processors']} processors ({machine['processor']}), "
-        f"{show_bytes(machine['memory_bytes'])} of memory, {machine['system']}, Python {machine['python']}; "
-        f"{versions}.",
+        "Whole processes: median seconds, in brackets the largest relative error of a singular value. *Ratio*: time of"
+        " the fastest general-purpose setting that comes as near to the truth, over that of bigsvd. *Closeness*: time"
+        " of the sweeps over what their parts take alone. *Reads*: of the file, pilot and checks included. *Peak*:"
+        " largest resident size. In brackets behind the figures what is wanted.",
+    ]
+    return [*table(headings, rows), *words]
+
+
+def _reached(view: View, wanted: float) -> str:
+    """Whether the goal is reached; open where the nearest peer was faster than that, and would need longer."""
+    if view.least_ratio >= wanted:
+        return "reached"
+    return "missed" if view.best else "open"
+
+
+def _missed(merged: Merged) -> list[str]:
+    found = missed(merged)
+    open_parts = [
+        words
+        for words, there in (
+            ("the comparison", merged.compare),
+            ("the limits of the machine", merged.limits),
+            ("growth", merged.growth),
+            ("workers", merged.workers),
+        )
+        if not there
+    ]
+    lines = [f"- {words}" for words in found] or ["Nothing of what was measured."]
+    return lines + (["", f"Not measured: {', '.join(open_parts)}."] if open_parts else [])
+
+
+def _method(merged: Merged) -> list[str]:
+    """What the figures mean."""
+    settings, runs = merged.newest["settings"], merged.newest["runs"]
+    prepared = (
+        "column means subtracted by all" if settings["centred"] else "nothing centred, as `svd_compressed` has it"
+    )
+    cache = "out of the page cache before every run" if settings["cold"] else "in the page cache before every run"
+    limit = {
+        "none": "No limit of the system was set: each peak is held against the ceiling.",
+        "data": "The system held every process to the ceiling (RLIMIT_DATA: all memory it may write to).",
+        "as": "The system held every process to the ceiling (RLIMIT_AS: all its addresses).",
+    }[settings["limit"]]
+    timeout = show_seconds(merged.newest["timeout"])
+    return [
+        f"Rank {settings['rank']}, {prepared}. Every time is that of a whole process, from its start to its factors in"
+        f" files: median of {runs} runs, bigsvd and the main peers in turn; others ran once, and none longer than"
+        f" {timeout}. Files were {cache}. bigsvd proves its intervals to a tolerance of 1e-3, and checks them on slices"
+        " of the file, within that time; the others prove nothing: their number of iterations was found by trying"
+        " against the known truth.",
         "",
-        f"Rank {record['rank']}, {prepared}. Every time is that of a whole process, from its start to its factors in "
-        f"files: median of {record['runs']} interleaved runs (lowest–highest, how many){busy}. All files were in the "
-        "page cache. bigsvd proves its intervals to a tolerance of 1e-3, and checks them on slices of the file, within "
-        "that time; the others prove nothing: their number of iterations was found by trying against the known truth.",
+        "*Value error*: largest relative error of the singular values; *angle*: largest angle between the spaces of"
+        " right vectors, radians; both against factors that another program computed in double (`bench/exact.py`), for"
+        " growth against what was planted, which float32 holds to about 1e-6. Of equal error is what reaches bigsvd's"
+        " error, or 1e-6, where single precision ends. *Processor s*: seconds of all threads, which other programs"
+        " disturb least.",
         "",
-        "*value error*: largest relative error of the singular values; *angle*: largest angle between the spaces of "
-        "right vectors, radians; both against factors that another program computed in double (`bench/exact.py`). "
-        "*processor s*: seconds of all threads, user and system together, which other programs disturb least. "
-        f"*peak*: largest resident size; *over*: above the ceiling of {show_bytes(record['memory_bytes'])}, which only "
-        "bigsvd can be given. dask reads bands of about 16 MB and multiplies with one thread a task, its fastest "
-        "setting here. Of equal error is what reaches bigsvd's error, or 1e-6, where single precision ends.",
+        f"*Peak*: largest resident size; *over*: above the ceiling of {show_bytes(settings['memory_bytes'])}, which"
+        " only bigsvd can be given. Pages of a mapped file count in it, but the system takes them back where memory is"
+        f" short: a peer is not ruled out by them, and the table says *mapped*. {limit}",
+        "",
+        "Tuned dask reads bands of about 16 MB of whole chunks and multiplies with one thread a task, its fastest"
+        " setting here. What is *first written* has the defaults of its library. `randomized_svd` needs an array: it is"
+        " given the mapped file where that is plain, else a copy that is decoded into a mapped float32 file within its"
+        " time.",
+        "",
+        "*Limits*: the inner functions of a sweep are caught in a run and made again alone, on the same data at the"
+        " same shapes and precision, in one thread and in as many as there are workers (`bench/limits.py`). The floor"
+        " of a sweep is the larger of the raw read of the stored bytes and the sum of the parts.",
         "",
     ]
-    for case in record["cases"]:
-        lines += [f"## {case['title']}", ""]
-        lines += [
-            f"{show_bytes(case['decoded_bytes'])} decoded, {show_bytes(case['stored_bytes'])} stored. {_own(case)}",
-            "",
-        ]
-        lines += [*case["table"], ""]
-        lines += [f"{each['name']} failed: {' '.join(each['message'])}" for each in case["failed"]]
-        lines += [_verdict(case), ""]
-    return lines + _missed(record) + [f"The whole run took {show_seconds(record['seconds'])}."]
-
-
-def _own(case: dict[str, Any]) -> str:
-    """What bigsvd did, in a sentence."""
-    told = case["candidates"][0]["told"]
-    reads = told["bytes_read"] / told["matrix_bytes"]
-    parts = ", ".join(f"{stage} {seconds:.1f}" for stage, seconds in told["timings"].items())
-    sweeps = f"{told['sweeps']} sweep{'s' if told['sweeps'] > 1 else ''}"
-    return (
-        f"bigsvd: {told['route']}, {sweeps}, {reads:.2f} reads of the file in all, {told['precision']} precision; "
-        f"{told['verdict']}. Seconds of the last run: {parts}."
-    )
-
-
-def _verdict(case: dict[str, Any]) -> str:
-    best = case["best"]
-    if best is None:
-        return "No general-purpose setting reached this error below the ceiling."
-    return (
-        f"Best general-purpose setting of equal error below the ceiling: {best['name']}, **{best['ratio']:.2f} ×** "
-        f"the time of bigsvd ({best['fastest_ratio']:.2f} × between the fastest runs of each, "
-        f"{best['processor_ratio']:.2f} × in processor seconds)."
-    )
-
-
-def _missed(record: dict[str, Any]) -> list[str]:
-    """Goals that were not reached."""
-    lines = ["## What was not reached", ""]
-    missed = []
-    for case in record["cases"]:
-        kind = next((kind for kind in GOALS if case["name"].startswith(kind)), None)
-        if kind and case["best"] and case["best"]["ratio"] < GOALS[kind]:
-            missed.append(f"- {case['title']}: {case['best']['ratio']:.2f} × where {GOALS[kind]:g} × is wanted.")
-        told = case["candidates"][0]["told"]
-        if not told["tolerance_met"]:
-            missed.append(f"- {case['title']}: tolerance not met: {told['verdict']}.")
-        if case["candidates"][0]["peak_bytes"] and max(case["candidates"][0]["peak_bytes"]) > record["memory_bytes"]:
-            missed.append(f"- {case['title']}: bigsvd went over its ceiling.")
-    return [*lines, *(missed or ["Nothing of what these cases measure."]), ""]

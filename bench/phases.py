@@ -20,19 +20,23 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
-from bench.measure import table
+from bench.tables import table
 
 # Phase, module, and the function or method in it that is wrapped where it is looked up.
 PHASES: tuple[tuple[str, str, str], ...] = (
     ("read and decode", "bigsvd.sweep.panels", "PanelReader.fetch"),
     ("word sums", "bigsvd.sweep.segment", "_word_sum"),
     ("convert and centre", "bigsvd.sweep.segment", "prepare_unit"),
-    ("energy and sums of lines", "bigsvd.sweep.segment", "_Segment._tile_sums"),
-    ("product AB", "bigsvd.sweep.segment", "_product"),
-    ("product AᴴY", "bigsvd.sweep.segment", "_Segment._second_product"),
+    ("sums of lines", "bigsvd.sweep.segment", "_Segment._tile_sums"),
+    ("energy", "bigsvd.sweep.segment", "_squares"),
+    ("product AB", "bigsvd.sweep.segment", "_Segment._first_product"),
+    ("product AᴴY", "bigsvd.sweep.segment", "_Segment._add_product"),
+    ("sum of AᴴA", "bigsvd.sweep.segment", "add_gram"),
+    ("turn Y", "bigsvd.sweep.segment", "_Segment._second_product"),
     ("rounding measured", "bigsvd.sweep.segment", "_Segment._measure"),
     ("gather for the fold", "bigsvd.sweep.segment", "_Segment._gather"),
-    ("fold QR", "bigsvd.sweep.segment", "_Segment._fold"),
+    ("QR fold", "bigsvd.sweep.segment", "fold"),
+    ("QR fold", "bigsvd.sweep.segment", "fold_upon"),
     ("scratch read", "bigsvd.sweep.scratch", "Scratch.read"),
     ("scratch write", "bigsvd.sweep.scratch", "Scratch.write"),
     ("sum of partials", "bigsvd.sweep.waves", "combine"),
@@ -55,10 +59,26 @@ PHASES: tuple[tuple[str, str, str], ...] = (
 )
 
 
+READ = "read and decode"
+# What no way of sweeping can do without: the floor of a sweep is made of these.
+FLOOR = (READ, "convert and centre", "sums of lines", "energy", "product AB", "product AᴴY", "sum of AᴴA", "QR fold")
+# Parts that every entry of the matrix needs once, however often a sweep may come to it.
+ONCE = ("convert and centre", "sums of lines", "energy")
+# All that happens inside a sweep; the rest is done by the caller between sweeps.
+IN_SWEEP = tuple(dict.fromkeys(phase for phase, module, _ in PHASES if module.startswith("bigsvd.sweep")))
+
+
 class Clocks:
-    """Processor seconds by (stage, phase), each thread's own, nested phases taken off."""
+    """Processor seconds by (stage, phase), each thread's own, nested phases taken off.
+
+    Attributes
+    ----------
+    on : bool
+        Off, the functions run as they are.
+    """
 
     def __init__(self) -> None:
+        self.on = True
         self.seconds: dict[tuple[str, str], float] = defaultdict(float)
         self.calls: dict[tuple[str, str], int] = defaultdict(int)
         self.stage = "open"
@@ -70,9 +90,15 @@ class Clocks:
 
         @functools.wraps(function)
         def run(*words: Any, **options: Any) -> Any:
-            nested = self._nested()
-            nested.append(0.0)
+            if not self.on:
+                return function(*words, **options)
+            nested, before = self._nested(), time.thread_time()
+            self.note(phase, function, words, options)
             start = time.thread_time()
+            if nested:
+                # Looking takes its time too, which is nobody's.
+                nested[-1] += start - before
+            nested.append(0.0)
             try:
                 return function(*words, **options)
             finally:
@@ -85,6 +111,9 @@ class Clocks:
                     self.calls[self.stage, phase] += 1
 
         return run
+
+    def note(self, phase: str, function: Callable[..., Any], words: tuple[Any, ...], options: dict[str, Any]) -> None:
+        """Look at a call before it is made; nothing here."""
 
     def _nested(self) -> list[float]:
         """Seconds of nested phases, for every phase that this thread is in."""
