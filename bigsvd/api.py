@@ -10,7 +10,7 @@ import threading
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager, suppress
-from dataclasses import fields, replace
+from dataclasses import dataclass, fields, replace
 from pathlib import Path
 from typing import Any, Literal
 
@@ -30,8 +30,9 @@ from bigsvd.drive import (
     spectrum_record,
     verify_factors,
 )
-from bigsvd.errors import OptionError
+from bigsvd.errors import NonFiniteError, OptionError
 from bigsvd.factors import Factors, FactorsWriter, check_output, open_factors, store_cost
+from bigsvd.journal import Journal, RunFolder, discard_finished, identity_of
 from bigsvd.plan import Plan, Request, make_plan
 from bigsvd.solve import TallVectors, column_phases
 from bigsvd.source import MatrixSpec, Source, check_complete, open_source
@@ -68,6 +69,8 @@ def decompose(
     matrix: str | None = None,
     scratch: str | Path | None = None,
     overwrite: bool = False,
+    start_over: bool = False,
+    save_every: float = 5.0,
     progress: Listener | None = None,
     planned: Callable[[Forecast], None] | None = None,
     **options: Any,
@@ -89,6 +92,10 @@ def decompose(
         Folder for the tall products (samples × a few hundred columns); beside `out` by default.
     overwrite : bool
         Replace an earlier result at `out`, once the new one is complete.
+    start_over : bool
+        Discard an unfinished run at `out` instead of going on with it.
+    save_every : float
+        Seconds between two savings of what was added up so far; a run that was cut goes on from the last.
     progress : callable, optional
         Called with a `bigsvd.sweep.Progress` at least once per panel, from any thread.
     planned : callable, optional
@@ -148,6 +155,7 @@ def decompose(
     try:
         with _environment() as held_before:
             if target is not None:
+                discard_finished(target)
                 check_output(target, overwrite=overwrite, source_path=_path_of(source))
             foreseen = _foresee(opened, options, control, probe=True)
             plan = foreseen.plan
@@ -156,12 +164,13 @@ def decompose(
             check_complete(opened)
             folder = _scratch_folder(scratch, target)
             _require_scratch_space(folder, plan)
-            outcome = run(opened, plan, control, folder)
-            try:
-                checks = _check_slices(opened, outcome, folder, control)
-                return _write(target, outcome, checks, foreseen, control, overwrite, started, held_before)
-            finally:
-                outcome.scratch.close()
+            with _journal(target, plan, scratch, control, start_over, save_every) as kept:
+                outcome = run(opened, plan, control, kept.scratch if kept else folder, kept.journal if kept else None)
+                try:
+                    checks = _check_slices(opened, outcome, kept.folder.path if kept else folder, control)
+                    return _write(target, outcome, checks, foreseen, control, overwrite, started, held_before, kept)
+                finally:
+                    outcome.scratch.close()
     finally:
         if own:
             opened.close()
@@ -249,6 +258,45 @@ def _load_meanwhile() -> None:
 
     if "zarr" not in sys.modules:
         threading.Thread(target=load, name="bigsvd-load", daemon=True).start()
+
+
+@dataclass(frozen=True)
+class _Kept:
+    """The folder of the run and what it keeps there."""
+
+    folder: RunFolder
+    journal: Journal
+
+    @property
+    def scratch(self) -> Path:
+        """Where the tall products go."""
+        return self.folder.scratch
+
+
+@contextmanager
+def _journal(
+    out: Path | None, plan: Plan, scratch: str | Path | None, control: Control, start_over: bool, save_every: float
+) -> Iterator[_Kept | None]:
+    """The run's folder beside its result, kept when the run is cut; None where it could not be gone on with.
+
+    An array in memory or a graph has no fingerprint: nothing would show that it is still the same.
+    """
+    if out is None or not plan.spec.fingerprint:
+        yield None
+        return
+    folder = RunFolder(out, identity_of(plan), None if scratch is None else Path(scratch))
+    folder.open(start_over=start_over)
+    keep = False
+    try:
+        yield _Kept(folder, Journal(folder.path, control, every=save_every))
+    except (OptionError, NonFiniteError):
+        # The same command would end the same way.
+        raise
+    except BaseException:
+        keep = folder.holds_sums()
+        raise
+    finally:
+        folder.close(keep=keep)
 
 
 @contextmanager
@@ -349,6 +397,7 @@ def _write(
     overwrite: bool,
     started: float,
     held_before: int,
+    kept: _Kept | None,
 ) -> Factors:
     """Write the factors: tall vectors from scratch, the others from memory, then everything that is known of them."""
     plan, certificate = outcome.plan, outcome.certificate
@@ -366,7 +415,12 @@ def _write(
         tall.phase = phase
     basis = basis * phase
     with FactorsWriter(
-        out, shape=(plan.samples, plan.features), rank=rank, dtype=outcome.scratch.dtype, overwrite=overwrite
+        out,
+        shape=(plan.samples, plan.features),
+        rank=rank,
+        dtype=outcome.scratch.dtype,
+        overwrite=overwrite,
+        lock=kept.folder.lock if kept else None,
     ) as writer:
         control.begin("write", (plan.samples + plan.features) * rank * outcome.scratch.dtype.itemsize)
         conjugate = tall_side == "right"
@@ -393,5 +447,6 @@ def _write(
             column_scale=1.0 / outcome.inverse_scale,
             spectrum=spectrum_record(outcome, certificate),
             certificate=certificate,
-            attributes=run_record(outcome, foreseen, control, started, held_before),
+            attributes=run_record(outcome, foreseen, control, started, held_before)
+            | {"resumed": kept.journal.resumed if kept else 0},
         )

@@ -13,7 +13,9 @@
     └── ResultError          (OSError)     the result store cannot be written or opened
         ├── ResultExistsError
         ├── IncompleteResultError
-        └── DamagedResultError
+        ├── DamagedResultError
+        ├── OtherRunError              an unfinished run of something else stands there
+        └── DamagedJournalError        an unfinished run that cannot be gone on with
 
 A run that ends short of its tolerance is a verdict in the certificate, not an error.
 """
@@ -96,3 +98,11 @@ class IncompleteResultError(ResultError):
 
 class DamagedResultError(ResultError):
     """A part of the store is missing or does not match its checksum."""
+
+
+class OtherRunError(ResultError):
+    """An unfinished run of another input, option, plan or version stands where this one would be kept."""
+
+
+class DamagedJournalError(ResultError):
+    """An unfinished run cannot be gone on with: a part of it is missing or cannot be read."""

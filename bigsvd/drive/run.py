@@ -20,6 +20,7 @@ from bigsvd.certify import (
 from bigsvd.drive.proof import Proof
 from bigsvd.drive.sweeps import OverflowInSingleError, Sweeps
 from bigsvd.drive.whole import gram_is_enough, sweep_fold, sweep_gram
+from bigsvd.journal import Journal
 from bigsvd.plan import Plan, Widths, crowd_reach, krylov_widths
 from bigsvd.solve import (
     Pilot,
@@ -78,7 +79,7 @@ class Outcome:
     remarks: tuple[str, ...]
 
 
-def run(source: Source, plan: Plan, control: Control, scratch_folder: Path) -> Outcome:
+def run(source: Source, plan: Plan, control: Control, scratch_folder: Path, journal: Journal | None = None) -> Outcome:
     """Decompose a matrix as planned, up to its certificate.
 
     Parameters
@@ -89,6 +90,8 @@ def run(source: Source, plan: Plan, control: Control, scratch_folder: Path) -> O
         Counts bytes, reports progress, carries a wish to stop.
     scratch_folder : Path
         Where the tall products are kept; the caller closes `Outcome.scratch`.
+    journal : Journal, optional
+        Keeps what the sweeps add up, and knows what an earlier process added up.
 
     Returns
     -------
@@ -101,7 +104,7 @@ def run(source: Source, plan: Plan, control: Control, scratch_folder: Path) -> O
     SourceChangedError
         If a panel differs from what it was in an earlier sweep.
     """
-    sweeps = Sweeps(source, plan, control, scratch_folder)
+    sweeps = Sweeps(source, plan, control, scratch_folder, journal)
     try:
         return _Run(plan, sweeps).go()
     except BaseException:

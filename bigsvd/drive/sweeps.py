@@ -10,6 +10,7 @@ import numpy as np
 
 from bigsvd.certify import SumDepth, gamma
 from bigsvd.errors import NonFiniteError, OptionError, SourceChangedError
+from bigsvd.journal import Journal
 from bigsvd.plan import UNIT_LINES, Plan, fold_lines
 from bigsvd.prepare import Preparation
 from bigsvd.randomness import draw_without_repeat
@@ -39,6 +40,8 @@ class Sweeps:
     plan : Plan
     control : Control
     scratch_folder : Path
+    journal : Journal or None
+        Then `scratch_folder` is this run's alone.
     made : int
         Sweeps made so far.
     energy, energy_rounding : float
@@ -55,6 +58,7 @@ class Sweeps:
     plan: Plan
     control: Control
     scratch_folder: Path
+    journal: Journal | None = None
     made: int = 0
     energy: float = 0.0
     energy_rounding: float = 0.0
@@ -72,7 +76,7 @@ class Sweeps:
         self.wide = np.dtype(np.complex128 if complex_entries else np.float64)
         self.single = np.dtype(np.complex64 if complex_entries else np.float32)
         self.work: np.dtype = self.wide
-        self.scratch = Scratch(self.scratch_folder, self.plan.geometry.lines, self.wide)
+        self.scratch = Scratch(self.scratch_folder, self.plan.geometry.lines, self.wide, own=self.journal is not None)
         self.engine = Engine(self.plan.workers)
         self.reader = PanelReader(self.source, self.plan.geometry, self.control, keep=self.plan.resident)
         self.across_features = self.plan.geometry.lines_are_samples
@@ -106,6 +110,10 @@ class Sweeps:
     def take_pilot(self, directions: int, *, may_be_single: bool) -> Pilot:
         """Read the sample and solve it; later sweeps start from its mean and scales."""
         plan = self.plan
+        kept = None if self.journal is None else self.journal.pilot(self.preparation)
+        if kept is not None:
+            self.preparation = kept.preparation
+            return kept
         panels = [self.reader.decoded(panel) for panel in plan.pilot_panels]
         self.control.begin("pilot", sum(panels))
         pilot = take_pilot(
@@ -114,6 +122,8 @@ class Sweeps:
             self.preparation, directions=directions, may_be_single=may_be_single, seed=plan.request.seed,
         )  # fmt: skip
         self.preparation = pilot.preparation
+        if self.journal is not None:
+            self.journal.keep_pilot(pilot)
         return pilot
 
     def sweep(self, kind: str, block: np.ndarray | None) -> tuple[Partial, Learnt | None]:
@@ -158,7 +168,8 @@ class Sweeps:
             learn=first and self.across_features and plan.scaled,
             line_features=not self.across_features and (plan.centred or plan.scaled), sampled=sampled,
         )  # fmt: skip
-        sums = self.engine.sweep(task, plan.waves)
+        keeper = None if self.journal is None else self.journal.next_sweep(self.scratch.flush)
+        sums = self.engine.sweep(task, plan.waves, keeper)
         # What follows until the next stage is small and dense, and runs in the caller alone.
         self.control.account("certificate")
         self._refuse_bad(sums)

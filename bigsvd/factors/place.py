@@ -3,7 +3,9 @@
     OUT             the result
     OUT.partial     the store being written; renamed to OUT when it is complete and verified
     OUT.replaced    the earlier result between the two renames of --overwrite
-    OUT.lock        held while a run writes
+    OUT.lock        held while a run is at work
+    OUT.run         the run while it is not finished: its journal and scratch
+    OUT.log         what happened when
 
 A process that dies between the two renames leaves no OUT, a complete OUT.partial and OUT.replaced: `repair` finishes
 the exchange, or takes the earlier result back where the new one is not whole.
@@ -25,7 +27,7 @@ from bigsvd.factors.lock import OutputLock
 from bigsvd.factors.manifest import compare_files, read_record
 from bigsvd.units import show_bytes
 
-_SUFFIXES = (".partial", ".replaced", ".lock")
+_SUFFIXES = (".partial", ".replaced", ".lock", ".run", ".log")
 # Left by file managers and network file systems; nobody's work.
 _LITTER = (".DS_Store", "._", ".nfs")
 
@@ -36,13 +38,15 @@ class Place:
 
     Attributes
     ----------
-    out, partial, replaced, lock : Path
+    out, partial, replaced, lock, run, log : Path
     """
 
     out: Path
     partial: Path
     replaced: Path
     lock: Path
+    run: Path
+    log: Path
 
     @classmethod
     def at(cls, out: Path) -> Place:
@@ -56,7 +60,9 @@ class Place:
         return cls(path, *(path.with_name(path.name + suffix) for suffix in _SUFFIXES))
 
 
-def check_output(out: Path, *, overwrite: bool, source_path: Path | None, result_bytes: int = 0) -> None:
+def check_output(
+    out: Path, *, overwrite: bool, source_path: Path | None, result_bytes: int = 0, held: bool = False
+) -> None:
     """Refuse an output that could not be written or would harm something; changes nothing.
 
     Parameters
@@ -69,6 +75,8 @@ def check_output(out: Path, *, overwrite: bool, source_path: Path | None, result
         The file or folder of the input; None for arrays in memory.
     result_bytes : int
         Size of the result, if known: refused when the device has less room.
+    held : bool
+        Whether this process holds the lock itself.
 
     Raises
     ------
@@ -92,7 +100,8 @@ def check_output(out: Path, *, overwrite: bool, source_path: Path | None, result
         _check_source(place, Path(source_path))
     check_standing(place, overwrite=overwrite)
     _check_partial(place)
-    OutputLock(place.lock, place.out).refuse_if_held()
+    if not held:
+        OutputLock(place.lock, place.out).refuse_if_held()
 
 
 def claim(place: Place, *, overwrite: bool, result_bytes: int) -> None:
@@ -143,9 +152,9 @@ def repair(place: Place) -> None:
     if not is_result(place.replaced) or _strangers(place.replaced):
         return
     if not os.path.lexists(place.out):
-        os.rename(place.partial if _is_whole(place.partial) else place.replaced, place.out)
+        os.rename(place.partial if is_whole(place.partial) else place.replaced, place.out)
         sync_folder(place.out.parent)
-    if os.path.lexists(place.replaced) and _is_whole(place.out):
+    if os.path.lexists(place.replaced) and is_whole(place.out):
         shutil.rmtree(place.replaced)
 
 
@@ -184,7 +193,7 @@ def check_standing(place: Place, *, overwrite: bool) -> None:
         )
     if standing == place.replaced or not os.path.lexists(place.replaced):
         return
-    if not is_result(place.replaced) or not _is_whole(place.out):
+    if not is_result(place.replaced) or not is_whole(place.out):
         raise ResultExistsError(
             f"{place.replaced} is in the way, where the earlier result goes while it is replaced",
             evidence=["It is not a bigsvd result, or the newer one beside it is not whole"],
@@ -232,7 +241,7 @@ def _check_source(place: Place, source: Path) -> None:
     while any((source.parent / name).exists() for name in ("zarr.json", ".zgroup")):
         source = source.parent
     relation = ""
-    for path in (place.out.resolve(), place.partial, place.replaced, place.lock):
+    for path in (place.out.resolve(), place.partial, place.replaced, place.lock, place.run, place.log):
         if path == source or (path.exists() and source.exists() and os.path.samefile(path, source)):
             relation = "is" if path == place.out.resolve() else f"uses {path.name}, which is"
         elif source in path.parents:
@@ -294,7 +303,7 @@ def _claims(folder: Path) -> bool | None:
     return isinstance(attributes, dict) and isinstance(attributes.get("bigsvd"), dict)
 
 
-def _is_whole(path: Path) -> bool:
+def is_whole(path: Path) -> bool:
     """Whether a folder holds a complete store, every file of its size."""
     try:
         compare_files(FolderFiles(path), read_record(path), contents=False)

@@ -49,6 +49,8 @@ class FactorsWriter:
         Type of the stored vectors: float64 or complex128, or float32 or complex64 to halve the store.
     overwrite : bool
         Whether a bigsvd result at `out` may be replaced.
+    lock : OutputLock, optional
+        Held by the caller, who lets it go; otherwise the writer takes one for itself.
 
     Raises
     ------
@@ -63,7 +65,14 @@ class FactorsWriter:
     """
 
     def __init__(
-        self, out: Path | None, *, shape: tuple[int, int], rank: int, dtype: np.dtype, overwrite: bool = False
+        self,
+        out: Path | None,
+        *,
+        shape: tuple[int, int],
+        rank: int,
+        dtype: np.dtype,
+        overwrite: bool = False,
+        lock: OutputLock | None = None,
     ) -> None:
         self._dtype = np.dtype(dtype)
         if self._dtype.name not in _TYPES:
@@ -79,7 +88,8 @@ class FactorsWriter:
         self._shape, self._rank, self._overwrite = shape, rank, overwrite
         self._cost = store_cost(shape, rank, self._dtype)
         self._place = None if out is None else Place.at(out)
-        self._lock = None if self._place is None else OutputLock(self._place.lock, self._place.out)
+        self._held = lock is not None
+        self._lock = lock or (None if self._place is None else OutputLock(self._place.lock, self._place.out))
         self._streams: dict[str, VectorStream] = {}
         self._claimed = False
 
@@ -88,8 +98,11 @@ class FactorsWriter:
             self._begin(MemoryFiles())
             return self
         disk_bytes = self._cost.disk_bytes
-        check_output(self._place.out, overwrite=self._overwrite, source_path=None, result_bytes=disk_bytes)
-        self._lock.acquire()
+        check_output(
+            self._place.out, overwrite=self._overwrite, source_path=None, result_bytes=disk_bytes, held=self._held
+        )
+        if not self._held:
+            self._lock.acquire()
         try:
             with self._guarded("start"):
                 claim(self._place, overwrite=self._overwrite, result_bytes=disk_bytes)
@@ -318,7 +331,7 @@ class FactorsWriter:
         if self._claimed and self._place is not None:
             shutil.rmtree(self._place.partial, ignore_errors=True)
             self._claimed = False
-        if self._lock is not None:
+        if self._lock is not None and not self._held:
             self._lock.release()
 
     @contextmanager

@@ -6,7 +6,7 @@ from bigsvd.sweep.panels import PanelReader
 from bigsvd.sweep.partial import Partial
 from bigsvd.sweep.scratch import Scratch
 from bigsvd.sweep.segment import SweepTask
-from bigsvd.sweep.waves import Engine, one_blas_thread
+from bigsvd.sweep.waves import Engine, WaveKeeper, one_blas_thread
 
 __all__ = [
     "Control",
@@ -18,6 +18,7 @@ __all__ = [
     "Scratch",
     "StoppedError",
     "SweepTask",
+    "WaveKeeper",
     "fold",
     "mirror",
     "one_blas_thread",

@@ -60,7 +60,7 @@ class Control:
         self._done = 0
         self._began = time.perf_counter()
         self._timings: dict[str, float] = {}
-        self._spent: dict[str, float] = {}
+        self._spent: dict[tuple[str, str], float] = {}
 
     def begin(self, stage: str, total: int, sweep: int = 0, note: str = "") -> None:
         """Open a stage of so many bytes."""
@@ -85,12 +85,23 @@ class Control:
         """Add up what workers spent on each phase of a sweep; seconds of several workers overlap."""
         with self._lock:
             for phase, more in seconds.items():
-                self._spent[phase] = self._spent.get(phase, 0.0) + more
+                key = self._stage[0], phase
+                self._spent[key] = self._spent.get(key, 0.0) + more
 
-    def spent(self) -> dict[str, float]:
-        """Worker-seconds so far: read (with decoding), convert (with energy and sums), products, fold, scratch."""
+    def spent(self, within: str | None = None) -> dict[str, float]:
+        """Worker-seconds so far: read (with decoding), convert (with energy and sums), products, fold, scratch.
+
+        Parameters
+        ----------
+        within : str or None
+            Only those of this stage.
+        """
+        found: dict[str, float] = {}
         with self._lock:
-            return dict(self._spent)
+            for (stage, phase), seconds in self._spent.items():
+                if within in (None, stage):
+                    found[phase] = found.get(phase, 0.0) + seconds
+        return found
 
     def _close_stage(self) -> None:
         """Add the time since the stage began to its account."""

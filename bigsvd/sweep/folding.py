@@ -106,7 +106,9 @@ def add_gram(gram: np.ndarray, lines: np.ndarray) -> None:
     if gram.dtype.kind == "c":
         # Of rows in C order BLAS sees the transpose, whose XᵀX̄ is the conjugate of what is wanted.
         a = lines if lines.flags.f_contiguous else lines.conj().T
-        done: np.ndarray = zherk(1.0, a, beta=1.0, c=gram, trans=2 if lines.flags.f_contiguous else 0, lower=1, overwrite_c=1)
+        done: np.ndarray = zherk(
+            1.0, a, beta=1.0, c=gram, trans=2 if lines.flags.f_contiguous else 0, lower=1, overwrite_c=1
+        )
     else:
         a = lines if lines.flags.f_contiguous else lines.T
         done = dsyrk(1.0, a, beta=1.0, c=gram, trans=1 if lines.flags.f_contiguous else 0, lower=1, overwrite_c=1)

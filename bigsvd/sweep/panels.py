@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
+
 import numpy as np
 
 from bigsvd.plan import Geometry
@@ -56,6 +58,12 @@ class PanelReader:
             self._kept[panel] = out
         self.control.advance(size, read=self.decoded(panel))
         return out
+
+    def pass_over(self, runs: Iterable[tuple[int, int]]) -> None:
+        """Count panels first … stop of each run as done, unread: an earlier process summed them."""
+        lines = sum(self.geometry.edges[stop] - self.geometry.edges[first] for first, stop in runs)
+        if lines:
+            self.control.advance(lines * self.geometry.across * self.dtype.itemsize, read=0)
 
     def hold(self, panel: int) -> None:
         """Read a panel now and hold it until it is fetched."""

@@ -18,6 +18,8 @@ class Scratch:
     ----------
     folder : Path
         Where a private folder is made; removed by `close`.
+    own : bool
+        `folder` is already ours alone: what an earlier process wrote there is used again, and the caller removes it.
     lines : int
         Lines of Y.
     dtype : numpy.dtype
@@ -30,12 +32,14 @@ class Scratch:
         re-expressions change the map, never the files.
     """
 
-    def __init__(self, folder: Path, lines: int, dtype: np.dtype) -> None:
-        self.folder = Path(tempfile.mkdtemp(prefix=".bigsvd-scratch-", dir=folder))
+    def __init__(self, folder: Path, lines: int, dtype: np.dtype, *, own: bool = False) -> None:
+        self._own = own
+        self.folder = folder if own else Path(tempfile.mkdtemp(prefix=".bigsvd-scratch-", dir=folder))
         self.lines = lines
         self.dtype = np.dtype(dtype)
         self.map = np.zeros((0, 0), self.dtype)
         self._files: list[tuple[int, int]] = []
+        self._made = 0
 
     @property
     def stored(self) -> int:
@@ -49,7 +53,10 @@ class Scratch:
 
     def add_block(self, columns: int) -> int:
         """Make room for a block of columns; return its number."""
-        handle = os.open(self.folder / f"block-{len(self._files):02d}", os.O_RDWR | os.O_CREAT | os.O_EXCL, 0o600)
+        flags = os.O_RDWR | os.O_CREAT | os.O_CLOEXEC | os.O_NOFOLLOW | (0 if self._own else os.O_EXCL)
+        # Names are not used again: a run that goes on finds under each what that very sweep wrote.
+        handle = os.open(self._path(self._made), flags, 0o600)
+        self._made += 1
         os.ftruncate(handle, self.lines * columns * self.dtype.itemsize)
         self._files.append((handle, columns))
         return len(self._files) - 1
@@ -58,7 +65,12 @@ class Scratch:
         """Forget a block whose sweep is to be made again."""
         handle, _ = self._files.pop()
         os.close(handle)
-        (self.folder / f"block-{len(self._files):02d}").unlink()
+        self._path(self._made - 1).unlink()
+
+    def flush(self) -> None:
+        """Return when what was written is on the device."""
+        for handle, _ in self._files:
+            os.fdatasync(handle)
 
     def write(self, block: int, start: int, values: np.ndarray) -> None:
         """Write lines start … of a block."""
@@ -66,7 +78,10 @@ class Scratch:
         data = np.ascontiguousarray(values, self.dtype).data.cast("B")
         offset = start * columns * self.dtype.itemsize
         while data:
-            done = os.pwrite(handle, data, offset)
+            try:
+                done = os.pwrite(handle, data, offset)
+            except OSError as error:
+                raise OSError(error.errno, error.strerror, str(self.folder)) from error
             data, offset = data[done:], offset + done
 
     def read(self, start: int, stop: int, blocks: int | None = None) -> np.ndarray:
@@ -87,10 +102,15 @@ class Scratch:
             first += columns
         return out
 
+    def _path(self, number: int) -> Path:
+        """File of the block that was made as that number."""
+        return self.folder / f"block-{number:02d}"
+
     def close(self) -> None:
-        """Delete the files."""
+        """Close the files, and delete them unless the folder is the caller's."""
         for handle, _ in self._files:
             with contextlib.suppress(OSError):
                 os.close(handle)
         self._files = []
-        shutil.rmtree(self.folder, ignore_errors=True)
+        if not self._own:
+            shutil.rmtree(self.folder, ignore_errors=True)

@@ -5,13 +5,26 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
 from contextlib import contextmanager
-from typing import Any
+from typing import Any, Protocol
 
+from bigsvd.sweep.events import StoppedError
 from bigsvd.sweep.partial import Partial, combine
 from bigsvd.sweep.segment import SweepTask, run_segment
 
 Compute = Callable[[Any], Partial]
 Wave = Sequence[tuple[int, int]]
+
+
+class WaveKeeper(Protocol):
+    """Keeps the sums of a sweep wave by wave, and knows those of the waves that need not be read again."""
+
+    def begin(self) -> tuple[int, Partial | None]:
+        """How many waves are known, and their sums."""
+        ...
+
+    def keep(self, waves: int, of: int, total: Partial, *, stopping: bool = False) -> None:
+        """Take note of the sums of the first `waves` of `of` waves; `stopping` when no more will come."""
+        ...
 
 
 class Engine:
@@ -28,34 +41,41 @@ class Engine:
         # Two waves are alive at a time: the next is submitted before the last is folded.
         self._conductors = ThreadPoolExecutor(2, thread_name_prefix="bigsvd-wave")
 
-    def sweep(self, task: SweepTask, waves: Sequence[Wave]) -> Partial:
+    def sweep(self, task: SweepTask, waves: Sequence[Wave], keeper: WaveKeeper | None = None) -> Partial:
         """Sweep all waves and return the total.
 
         Parameters
         ----------
         task : SweepTask
         waves : sequence of waves, each a sequence of (first panel, one past the last)
+        keeper : WaveKeeper, optional
 
         Returns
         -------
         Partial
         """
-        total: Partial | None = None
+        done, total = (0, None) if keeper is None else keeper.begin()
+        task.reader.pass_over(run for wave in waves[:done] for run in wave)
         pending: list[Future[Partial]] = []
         try:
-            for wave in waves:
-                pending.append(self._conductors.submit(self._run, task, wave))
-                if len(pending) == 2:
+            for ahead in range(done, len(waves) + 1):
+                if ahead < len(waves):
+                    pending.append(self._conductors.submit(self._run, task, waves[ahead]))
+                # The next wave is under way while one is folded and kept.
+                while pending and (len(pending) == 2 or ahead == len(waves)):
                     total = _fold_wave(total, pending.pop(0).result())
-            while pending:
-                total = _fold_wave(total, pending.pop(0).result())
-        except BaseException:
+                    done += 1
+                    if keeper is not None:
+                        keeper.keep(done, len(waves), total)
+        except BaseException as error:
             # Whoever raised, no worker may outlive the sweep: they hold the file, the scratch and the buffers. A graph
             # returns at its first failure while its other segments still run, so the threads themselves are awaited.
             task.reader.control.stop()
             for future in pending:
                 future.exception()
             self._pool.shutdown(cancel_futures=True)
+            if isinstance(error, StoppedError) and keeper is not None and total is not None:
+                keeper.keep(done, len(waves), total, stopping=True)
             raise
         assert total is not None
         return total

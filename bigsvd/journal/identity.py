@@ -1,0 +1,95 @@
+"""What makes two runs the same run: input, options, plan, versions, processor; and how to say what differs."""
+
+from __future__ import annotations
+
+import hashlib
+import importlib.metadata
+from collections.abc import Iterator, Mapping
+from dataclasses import asdict
+from typing import Any
+
+from bigsvd.plan import Plan
+
+# Options that change the time a run takes, not its bits; what follows from the ceiling is compared as the plan.
+_FREE = ("memory", "workers")
+_PACKAGES = ("bigsvd", "numpy", "scipy")
+_TITLES = {
+    "input": "the input",
+    "options": "option",
+    "plan": "the plan",
+    "versions": "version of",
+    "processor": "the processor",
+}
+
+
+def identity_of(plan: Plan) -> dict[str, Any]:
+    """Everything that the bits of a run follow from.
+
+    Parameters
+    ----------
+    plan : Plan
+
+    Returns
+    -------
+    dict
+        Two levels, of what JSON can hold.
+    """
+    spec, geometry = plan.spec, plan.geometry
+    request = {name: value for name, value in asdict(plan.request).items() if name not in _FREE}
+    return {
+        "input": {
+            "name": spec.name,
+            "shape": list(spec.shape),
+            "type": str(spec.dtype),
+            "fingerprint": spec.fingerprint,
+        },
+        "options": request,
+        "plan": {
+            "route": plan.route,
+            "axis": ("rows", "columns")[geometry.axis],
+            "panels": geometry.panels,
+            "panel edges": _digest(geometry.edges),
+            "waves": _digest(plan.waves),
+            "pilot": _digest(plan.pilot_panels),
+            "columns": list(asdict(plan.widths).values()),
+            "matrix held in memory": plan.resident,
+        },
+        "versions": {name: _version(name) for name in _PACKAGES},
+        "processor": {"matrix kernels": _kernels()},
+    }
+
+
+def differences(before: Mapping[str, Any], now: Mapping[str, Any]) -> Iterator[str]:
+    """Say what differs between two identities, a line each."""
+    for part, title in _TITLES.items():
+        then, here = dict(before.get(part, {})), dict(now.get(part, {}))
+        for name in [*then, *(name for name in here if name not in then)]:
+            if then.get(name) != here.get(name):
+                label = name.replace("_", "-") if part == "options" else name
+                place = f"{title} --{label}" if part == "options" else f"{title} {label}"
+                yield f"{place}: {_show(then.get(name))} when the run began, {_show(here.get(name))} now"
+
+
+def _digest(value: object) -> str:
+    """Short name of a long value."""
+    return hashlib.blake2b(repr(value).encode(), digest_size=8).hexdigest()
+
+
+def _kernels() -> str:
+    """The kernels that BLAS chose for this processor; other ones round otherwise."""
+    from threadpoolctl import threadpool_info
+
+    return ", ".join(sorted({str(pool.get("architecture", pool["internal_api"])) for pool in threadpool_info()}))
+
+
+def _version(name: str) -> str:
+    """Version of an installed package."""
+    try:
+        return importlib.metadata.version(name)
+    except importlib.metadata.PackageNotFoundError:
+        return "unknown"
+
+
+def _show(value: Any) -> str:
+    """A value for people."""
+    return "not given" if value is None else str(value)
