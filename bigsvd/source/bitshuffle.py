@@ -91,38 +91,38 @@ def _undo_blocks(held: Stretch, out: Stretch, item: int, block: int, codec: int)
     box = held.buffer[begin:end]
     flags = _TRANSPOSED | _WHOLE | _BLOSC_CODEC[codec] << 5
     _BLOSC_HEADER.pack_into(box.data, 0, 2, 1, flags, item, out.size, block, len(box))
-    box[_BLOSC_HEADER.size : table].view("<u4")[:] = np.array(places) - begin
+    box[_BLOSC_HEADER.size : table].view("<u4")[:] = places - begin
     done = len(blosc_decode(box, numthreads=1, out=out.bytes))
     if done != out.size:
         raise ValueError(f"blocks decode to {done:,} bytes, there should be {out.size:,}")
     for number in literal:
-        _undo_one(held, places[number], out.bytes[number * block :][:block], item, codec)
+        _undo_one(held, int(places[number]), out.bytes[number * block :][:block], item, codec)
     return end + shift
 
 
-def _turn_sizes(held: Stretch, count: int, block: int, total: int) -> tuple[list[int], list[int], int]:
+def _turn_sizes(held: Stretch, count: int, block: int, total: int) -> tuple[np.ndarray, np.ndarray, int]:
     """Turn the stored size of each block to the byte order of Blosc.
 
     Returns where they stand, which blocks Blosc would take for stored as they are since both sizes agree, and where
     the last one ends.
     """
-    buffer, place, stop = held.buffer.data, held.start + _HEADER.size, held.stop
-    places, literal = [], []
-    read, write = _SIZE.unpack_from, _BLOSC_SIZE.pack_into
-    for number in range(count):
-        if place + 4 > stop:
-            raise ValueError(f"the bytes end before block {number:,} of {count:,}")
-        (size,) = read(buffer, place)
-        if size > stop - place - 4:
-            raise ValueError(
-                f"block {number:,} of {count:,} is said to have {size:,} bytes, {stop - place - 4:,} remain"
-            )
-        write(buffer, place, size)
-        places.append(place)
-        if size == min(block, total - number * block):
-            literal.append(number)
-        place += 4 + size
-    return places, literal, place
+    stored, read = held.buffer.data[: held.stop], _SIZE.unpack_from
+    places, place = [], held.start + _HEADER.size
+    try:
+        # Each size tells where the next one stands: the only loop, 0.2 µs a block.
+        for _ in range(count):
+            places.append(place)
+            place += 4 + read(stored, place)[0]
+    except struct.error:
+        raise ValueError(f"the bytes end before block {len(places):,} of {count:,}") from None
+    if place > held.stop:
+        raise ValueError(f"the last block is said to end {place - held.stop:,} bytes behind the stored ones")
+    starts = np.array(places)
+    sizes = np.diff(starts, append=place) - 4
+    held.buffer[starts[:, None] + np.arange(4)] = sizes.astype("<u4").view(np.uint8).reshape(-1, 4)
+    decoded = np.full(count, block)
+    decoded[-1] = total - (count - 1) * block
+    return starts, np.flatnonzero(sizes == decoded), place
 
 
 def _undo_one(held: Stretch, place: int, out: np.ndarray, item: int, codec: int) -> None:
