@@ -1,21 +1,30 @@
-"""What a plan will cost on this machine, from a probe of a few panels."""
+"""What a plan will cost on this machine: nominal times, at the pace that a probe of a few panels finds."""
 
 from __future__ import annotations
 
-import time
-from dataclasses import dataclass
+import statistics
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from bigsvd.plan import NOMINAL_SHARE_OF_SLICES, Plan
+from bigsvd.plan import NOMINAL_SHARE_OF_SLICES, Costs, Plan, pass_costs, predict
 from bigsvd.prepare import Preparation
 from bigsvd.source import Source
 from bigsvd.sweep import Control, Engine, PanelReader, SweepTask
 
 # Below this size a run is over before a probe would say anything.
 LEAST_PROBED = 64 * 2**20
-# Panels read by every worker.
-PROBE_PANELS = 2
+# Panels that every worker reads at most: one to warm up, and those that are timed, within so many nominal seconds.
+TIMED_PANELS = 2
+PROBE_SECONDS = 0.1
+# A phase that a probe cannot see goes at the pace of one that it can: products for what is in the processor, conversion
+# for what moves bytes about.
+SEEN = ("read", "convert", "products")
+LIKE = {
+    "fold": "products", "dense": "products", "slices": "products", "waiting": "products",
+    "scratch": "convert", "store": "convert", "start": "convert",
+}  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -26,17 +35,24 @@ class Forecast:
     ----------
     plan : Plan
     seconds : float or None
-        Predicted from the probe; None below 64 MB, where nothing is probed.
+        Predicted from the probe for the sweeps that the plan expects; None below 64 MB, where nothing is probed.
     probe_bytes : int
         Decoded bytes that the probe read.
     bytes_to_read : int
         Decoded bytes that the run is expected to read, pilot, probe and slices included.
+    pace : mapping of str to float
+        By phase, time on this machine over nominal time; empty without a probe.
     """
 
     plan: Plan
     seconds: float | None
     probe_bytes: int
     bytes_to_read: int
+    pace: Mapping[str, float] = field(default_factory=dict)
+
+    def costs(self, sweeps: float | None = None, *, columns: float | None = None, single: bool | None = None) -> Costs:
+        """Cost by phase on this machine, of a run that takes so many sweeps; see `bigsvd.plan.predict`."""
+        return predict(self.plan, sweeps, columns=columns, single=single, pace=self.pace)
 
 
 def make_forecast(source: Source, plan: Plan, control: Control, *, probe: bool) -> Forecast:
@@ -57,30 +73,69 @@ def make_forecast(source: Source, plan: Plan, control: Control, *, probe: bool) 
     spec, geometry = plan.spec, plan.geometry
     pilot = len(plan.pilot_panels) / geometry.panels
     sweeps = 1 if plan.resident else plan.nominal_sweeps
-    expected = spec.decoded_bytes * (sweeps * geometry.amplification + pilot + NOMINAL_SHARE_OF_SLICES)
+    expected = int(spec.decoded_bytes * (sweeps * geometry.amplification + pilot + NOMINAL_SHARE_OF_SLICES))
     if not probe or spec.decoded_bytes < LEAST_PROBED or geometry.panels < 2:
-        return Forecast(plan, None, 0, int(expected))
+        return Forecast(plan, None, 0, expected)
     before = control.bytes_read
-    workers = min(plan.workers, geometry.panels)
-    count = min(geometry.panels, PROBE_PANELS * workers)
-    panels = [geometry.panels * part // count for part in range(count)]
-    lines = sum(geometry.edges[p + 1] - geometry.edges[p] for p in panels)
-    control.begin("probe", lines * geometry.across * spec.dtype.itemsize)
-    wide = np.dtype(np.complex128 if spec.dtype.kind == "c" else np.float64)
-    single = np.dtype(np.complex64 if spec.dtype.kind == "c" else np.float32)
-    work = single if plan.may_be_single and plan.request.precision != "double" else wide
-    block = np.full((geometry.across, plan.widths.block), 1.0 / geometry.across, work)
-    preparation = Preparation(geometry.lines_are_samples, plan.centred, plan.scaled)
-    task = SweepTask(PanelReader(source, geometry, control), preparation, work, "basis", block)
-    engine = Engine(plan.workers)
+    pace = _measure(source, plan, control)
+    read = control.bytes_read - before
+    forecast = Forecast(plan, None, read, expected + read, pace)
+    return replace(forecast, seconds=forecast.costs().seconds)
+
+
+class _Readings(Control):
+    """Keeps what every segment spent."""
+
+    def __init__(self) -> None:
+        super().__init__()
+        self.each: list[dict[str, float]] = []
+
+    def spend(self, seconds: dict[str, float]) -> None:
+        """Note the seconds of a segment."""
+        self.each.append(seconds)
+
+
+def _measure(source: Source, plan: Plan, control: Control) -> dict[str, float]:
+    """Pace of every phase: each worker sweeps a panel to warm up, then some that are timed."""
+    geometry = plan.geometry
+    columns = plan.widths.start + plan.widths.test
+    single = plan.may_be_single and plan.request.precision != "double"
+    workers = max(1, min(plan.workers, geometry.panels // 2))
+    nominal = sum(pass_costs(plan, 1 / geometry.panels, columns, single=single).shared.values())
+    timed = int(max(1, min(TIMED_PANELS, geometry.panels // workers - 1, PROBE_SECONDS / nominal - 1)))
+    firsts = [geometry.panels * part // workers for part in range(workers)]
+    control.begin("probe", workers * (1 + timed) * geometry.panel_bytes)
+    readings = _Readings()
+    task = _task(source, plan, readings, columns, single=single)
+    engine = Engine(workers)
     try:
-        start = time.perf_counter()
-        engine.sweep(task, [[(panel, panel + 1) for panel in panels]])
-        seconds = time.perf_counter() - start
+        engine.sweep(task, [[(first, first + 1) for first in firsts]])
+        readings.each.clear()
+        engine.sweep(task, [[(first + 1, first + 1 + timed) for first in firsts]])
     finally:
         engine.close()
-    sweep = seconds * geometry.lines / lines
-    # Folding, scratch and the small dense steps come on top of what the probe does; the nominal model knows their
-    # share.
-    predicted = sweep * (plan.nominal_sweeps + pilot * 3) + plan.nominal_dense_seconds
-    return Forecast(plan, predicted, control.bytes_read - before, int(expected) + control.bytes_read - before)
+    control.advance(workers * (1 + timed) * geometry.panel_bytes, read=readings.bytes_read)
+    share = timed / geometry.panels
+    expected = pass_costs(replace(plan, workers=workers), share, columns, single=single).shared
+    seen = {
+        phase: statistics.median(each.get(phase, 0.0) for each in readings.each) / expected[phase] for phase in SEEN
+    }
+    return seen | {phase: seen[like] for phase, like in LIKE.items()}
+
+
+def _task(source: Source, plan: Plan, control: Control, columns: int, *, single: bool) -> SweepTask:
+    """A sweep with columns of 1/n, prepared as later sweeps are, about a mean of zero."""
+    wide = np.dtype(np.complex128 if plan.spec.dtype.kind == "c" else np.float64)
+    narrow = np.dtype(np.complex64 if plan.spec.dtype.kind == "c" else np.float32)
+    across, work = plan.geometry.across, narrow if single else wide
+    across_features = plan.geometry.lines_are_samples
+    preparation = Preparation(
+        across_features, plan.centred, plan.scaled,
+        shift=np.zeros(across, work) if across_features and plan.centred else None,
+        inverse_scale=np.ones(across) if across_features and plan.scaled else None,
+    )  # fmt: skip
+    block = np.full((across, columns), 1 / across, work)
+    return SweepTask(
+        PanelReader(source, plan.geometry, control), preparation, work, "basis", block,
+        line_features=not across_features and (plan.centred or plan.scaled),
+    )  # fmt: skip

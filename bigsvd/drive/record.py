@@ -13,7 +13,7 @@ import numpy as np
 from bigsvd import machine
 from bigsvd.certify import Certificate, spectrum_intervals
 from bigsvd.drive.run import Outcome
-from bigsvd.plan import BASE_BYTES
+from bigsvd.plan import BASE_BYTES, CALLER, SHARED
 from bigsvd.sweep import Control
 
 if TYPE_CHECKING:
@@ -55,6 +55,7 @@ def run_record(
     plan, spec, geometry = outcome.plan, outcome.plan.spec, outcome.plan.geometry
     request = asdict(plan.request)
     peak = machine.peak_resident_bytes()
+    seconds = time.perf_counter() - started
     # Called from a program that already held more than an empty interpreter, the ceiling bounds the growth.
     counted = peak - max(0, held_before - BASE_BYTES)
     return {
@@ -93,8 +94,10 @@ def run_record(
         "sweeps": outcome.sweeps,
         "bytes_read": control.bytes_read,
         "matrix_bytes": spec.decoded_bytes,
-        "seconds": time.perf_counter() - started,
+        "seconds": seconds,
         "predicted_seconds": foreseen.seconds,
+        "predicted_sweeps": plan.nominal_sweeps,
+        "phases": phase_record(outcome, foreseen, control, seconds),
         "peak_resident_bytes": counted,
         "memory_bytes": plan.ceiling,
         "planned_bytes": plan.planned_bytes,
@@ -104,6 +107,51 @@ def run_record(
         "remarks": [*plan.remarks, *outcome.remarks],
         "timings": control.timings(),
         "versions": {name: _version(name) for name in _VERSIONS} | {"python": platform.python_version()},
+    }
+
+
+def phase_record(
+    outcome: Outcome, foreseen: Forecast, control: Control, seconds: float
+) -> dict[str, dict[str, float | None]]:
+    """What every phase took beside what was predicted of it, for the sweeps, columns and precision that it came to.
+
+    Parameters
+    ----------
+    outcome : Outcome
+    foreseen : Forecast
+    control : Control
+    seconds : float
+        Of the whole run.
+
+    Returns
+    -------
+    dict of str to dict
+        ``predicted`` and ``measured``, seconds on the clock, and ``worker_seconds``, the sum over the workers, of the
+        phases that they share.
+    """
+    plan, wall, spent = outcome.plan, control.timings(), control.spent()
+    made = foreseen.costs(outcome.sweeps, columns=outcome.scratch.stored, single=outcome.precision == "single").wall
+    stages = ("pilot", "sweep", "certificate", "slices", "write")
+    took = {stage: wall.get(stage, 0.0) for stage in stages}
+    beside = {stage: took[stage] - sum(control.spent(stage).values()) / plan.workers for stage in ("pilot", "sweep")}
+    caller = {
+        "start": seconds - sum(took.values()),
+        "waiting": max(0.0, beside["sweep"]),
+        # What the pilot solves lies between its products.
+        "dense": took["certificate"] + max(0.0, beside["pilot"]),
+        "slices": took["slices"],
+        "store": took["write"],
+    }
+    shared: dict[str, dict[str, float | None]] = {
+        name: {
+            "predicted": made[name],
+            "measured": spent.get(name, 0.0) / plan.workers,
+            "worker_seconds": spent.get(name, 0.0),
+        }
+        for name in SHARED
+    }
+    return shared | {
+        name: {"predicted": made[name], "measured": caller[name], "worker_seconds": None} for name in CALLER
     }
 
 

@@ -178,7 +178,7 @@ class _Run:
         planned = self.plan.widths
         if self.plan.request.variance is None:
             return planned
-        widths = krylov_widths(self.rank, self.plan.geometry.across)
+        widths = krylov_widths(self.rank, self.plan.geometry.across, profile=planned.profile)
         keep = min(widths.keep, max(1, planned.limit // 2))
         grow = min(widths.grow, max(1, planned.limit - keep - 2 * widths.test))
         return Widths(min(widths.start, planned.start), widths.test, grow, keep, planned.limit)

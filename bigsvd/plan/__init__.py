@@ -3,20 +3,23 @@
 from bigsvd.plan.choose import make_plan
 from bigsvd.plan.geometry import Geometry
 from bigsvd.plan.memory import SLICE_ENTRIES, TALL_LINES, UNIT_LINES, MemoryTerm, fold_lines, tile_columns
+from bigsvd.plan.phases import CALLER, SHARED, Costs, pass_costs, predict
 from bigsvd.plan.plan import Plan
-from bigsvd.plan.rates import BASE_BYTES, NOMINAL_SHARE_OF_SLICES, READ_RATE
+from bigsvd.plan.rates import BASE_BYTES, NOMINAL_SHARE_OF_SLICES
 from bigsvd.plan.request import DEFAULT_MAX_RANK, DEFAULT_RANK, Request
 from bigsvd.plan.widths import Widths, crowd_reach, krylov_widths
 
 __all__ = [
     "BASE_BYTES",
+    "CALLER",
     "DEFAULT_MAX_RANK",
     "DEFAULT_RANK",
     "NOMINAL_SHARE_OF_SLICES",
-    "READ_RATE",
+    "SHARED",
     "SLICE_ENTRIES",
     "TALL_LINES",
     "UNIT_LINES",
+    "Costs",
     "Geometry",
     "MemoryTerm",
     "Plan",
@@ -26,5 +29,7 @@ __all__ = [
     "fold_lines",
     "krylov_widths",
     "make_plan",
+    "pass_costs",
+    "predict",
     "tile_columns",
 ]

@@ -7,9 +7,11 @@ from collections.abc import Callable
 from dataclasses import replace
 
 from bigsvd.errors import MemoryCeilingError, OptionError
-from bigsvd.plan.candidates import LONGEST_SHORT_SIDE, candidates, preference, terms_of, waves_of
+from bigsvd.plan.candidates import LONGEST_SHORT_SIDE, candidates, preference, price, terms_of, waves_of
 from bigsvd.plan.memory import total
+from bigsvd.plan.phases import predict
 from bigsvd.plan.plan import Plan
+from bigsvd.plan.rates import NOMINAL, Rates
 from bigsvd.plan.reasons import explain, worker_words
 from bigsvd.plan.request import Request, check_request
 from bigsvd.source import MatrixSpec
@@ -30,6 +32,7 @@ def make_plan(
     ceiling: int,
     processors: int | None = None,
     result_bytes: ResultBytes = _nothing,
+    rates: Rates = NOMINAL,
 ) -> Plan:
     """Decide how a matrix will be decomposed.
 
@@ -43,6 +46,8 @@ def make_plan(
         Processors at hand; decides only how many workers run.
     result_bytes : callable
         Bytes that writing a result of so many components holds.
+    rates : Rates
+        What costs are compared with; others than the nominal ones make other plans.
 
     Returns
     -------
@@ -71,16 +76,18 @@ def make_plan(
             for plan in candidates(spec, request, axis, samples_axis, route, bytes_allowed, written)
         ]
 
-    found = [plan for plan in drafts(ceiling) if plan.planned_bytes <= ceiling]
+    found = [price(plan, rates) for plan in drafts(ceiling) if plan.planned_bytes <= ceiling]
     if not found:
         raise _too_small(request, ceiling, drafts)
     best = min(found, key=preference)
     workers = request.workers or processors or os.cpu_count() or 1
     workers = _fitting_workers(best, min(workers, 2 * best.leaves))
     reasons = (*explain(best, found, request), ("workers", worker_words(workers, request, best)))
-    return replace(
-        best, workers=workers, memory=terms_of(best, workers), reasons=reasons, remarks=remarks, waves=waves_of(best)
-    )
+    made = replace(
+        best, workers=workers, memory=terms_of(best, workers), reasons=reasons, remarks=remarks,
+        waves=waves_of(best, rates),
+    )  # fmt: skip
+    return replace(made, nominal_phases=predict(made, rates=rates).wall)
 
 
 def _fitting_workers(plan: Plan, wanted: int) -> int:

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 from bigsvd.plan.geometry import Geometry
 from bigsvd.plan.memory import MemoryTerm, total
-from bigsvd.plan.rates import COMPLEX_FACTOR, PRODUCT_RATE, QR_RATE
 from bigsvd.plan.request import Request
 from bigsvd.plan.widths import Widths
 from bigsvd.source import MatrixSpec
@@ -43,10 +44,12 @@ class Plan:
     memory : tuple of MemoryTerm
     ceiling : int
         Bytes.
+    expected_sweeps : float
+        Sweeps expected on average, by which plans are compared.
     nominal_seconds : float
-        Time at nominal rates.
-    nominal_sweeps : int
-        Sweeps expected.
+        Their time at nominal rates with two workers.
+    nominal_phases : mapping of str to float
+        Seconds of every phase at nominal rates, with the workers of this plan, in `nominal_sweeps` sweeps.
     reasons : tuple of (str, str)
         Each choice and why, in words.
     remarks : tuple of str
@@ -68,8 +71,9 @@ class Plan:
     workers: int
     memory: tuple[MemoryTerm, ...]
     ceiling: int
-    nominal_seconds: float
-    nominal_sweeps: int
+    expected_sweeps: float
+    nominal_seconds: float = 0.0
+    nominal_phases: Mapping[str, float] = field(default_factory=dict)
     reasons: tuple[tuple[str, str], ...] = ()
     remarks: tuple[str, ...] = ()
     waves: tuple[tuple[tuple[int, int], ...], ...] = field(default=())
@@ -81,12 +85,9 @@ class Plan:
         return total(self.memory)
 
     @property
-    def nominal_dense_seconds(self) -> float:
-        """Nominal time of folding Y and of the small dense steps, over all sweeps."""
-        factor = COMPLEX_FACTOR if self.spec.dtype.kind == "c" else 1.0
-        width, n = self.widths.limit, self.geometry.across
-        folding = self.geometry.lines * width**2 / QR_RATE / max(1, self.workers)
-        return factor * self.nominal_sweeps * (folding + 6 * n * width * self.widths.block / PRODUCT_RATE["double"])
+    def nominal_sweeps(self) -> int:
+        """Sweeps expected, in whole ones."""
+        return math.ceil(self.expected_sweeps)
 
     @property
     def scratch_bytes(self) -> int:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Protocol
 
-from bigsvd.plan import Plan
+from bigsvd.plan import Costs, Plan
 from bigsvd.report.layout import labelled, table
 from bigsvd.report.plain import Json, plain
 from bigsvd.units import show_bytes, show_seconds, show_shape
@@ -24,6 +24,10 @@ class Foresight(Protocol):
     @property
     def seconds(self) -> float | None:
         """Time predicted from a probe; None where there was none."""
+        ...
+
+    def costs(self, sweeps: float | None = None) -> Costs:
+        """Cost by phase of a run that takes so many sweeps; by default those that the plan expects."""
         ...
 
     @property
@@ -132,8 +136,13 @@ def plan_facts(forecast: Foresight) -> Json:
         "bytes_to_read": forecast.bytes_to_read,
         "probe_bytes": forecast.probe_bytes,
         "sweeps": plan.nominal_sweeps,
-        "nominal_seconds": plan.nominal_seconds,
+        "nominal_seconds": sum(plan.nominal_phases.values()),
+        "nominal_phases": plan.nominal_phases,
         "predicted_seconds": forecast.seconds,
+        "predicted_by_sweeps": [
+            {"sweeps": sweeps, "seconds": forecast.costs(sweeps).seconds}
+            for sweeps in range(_least_sweeps(plan), plan.request.max_sweeps + 1)
+        ],
         "reasons": [{"choice": name, "reason": words} for name, words in plan.reasons],
         "remarks": plan.remarks,
     }
@@ -168,8 +177,16 @@ def _cost_words(forecast: Foresight) -> list[tuple[str, str]]:
 
 
 def _time_words(forecast: Foresight) -> str:
-    """Predicted time and what the prediction rests on."""
-    if forecast.seconds is not None:
-        probe = f"from a probe of {show_bytes(forecast.probe_bytes)} on this machine"
-        return f"about {show_seconds(forecast.seconds)}, {probe}"
-    return f"about {show_seconds(forecast.plan.nominal_seconds)} at nominal rates"
+    """Predicted time, for the expected sweeps and for the fewest, and what the prediction rests on."""
+    plan, least = forecast.plan, _least_sweeps(forecast.plan)
+    words = f"about {show_seconds(forecast.costs().seconds)} in {plan.nominal_sweeps} sweeps"
+    if least < plan.nominal_sweeps:
+        words += f", {show_seconds(forecast.costs(least).seconds)} if {'one is' if least == 1 else 'two are'} enough"
+    if forecast.seconds is None:
+        return f"{words}, at nominal rates"
+    return f"{words}, from a probe of {show_bytes(forecast.probe_bytes)} on this machine"
+
+
+def _least_sweeps(plan: Plan) -> int:
+    """Fewest sweeps that a run can take."""
+    return 1 if plan.route == "krylov" else 2

@@ -11,10 +11,22 @@ import numpy as np
 
 from bigsvd.certify import Certificate, SliceCheck
 from bigsvd.report.components import component_lines, shares
-from bigsvd.report.layout import labelled, wrap
+from bigsvd.report.layout import labelled, table, wrap
 from bigsvd.report.numbers import show_angle, show_captured, show_probability, show_up
 from bigsvd.report.plain import Json, plain
 from bigsvd.units import show_bytes, show_count, show_seconds, show_shape
+
+# Phases as people read them; others go by their own names.
+PHASES = {
+    "read": "read and decode",
+    "convert": "convert, energy and means",
+    "fold": "QR",
+    "start": "start and probe",
+    "waiting": "workers waiting",
+    "dense": "dense steps",
+    "store": "left vectors and store",
+}
+LEAST_SHOWN = 0.01
 
 
 def summary_lines(certificate: Certificate, attributes: Mapping[str, Any], out: Path | None, width: int) -> list[str]:
@@ -53,6 +65,7 @@ def summary_lines(certificate: Certificate, attributes: Mapping[str, Any], out: 
         *wrap(verdict_words(certificate), width),
         "",
         *labelled([*accuracy_words(certificate, attributes), *cost_words(attributes)], width),
+        *phase_lines(attributes),
         *([] if out is None else ["", f"Open it:  {xarray_line(out)}"]),
     ]
 
@@ -116,7 +129,9 @@ def cost_words(attributes: Mapping[str, Any]) -> list[tuple[str, str]]:
     sweeps, workers = attributes["sweeps"], attributes["workers"]
     times = f" ({read / matrix:.2f} × the matrix)" if matrix else ""
     predicted = attributes.get("predicted_seconds")
-    guess = f" (predicted {show_seconds(predicted)})" if predicted is not None else ""
+    assumed = attributes.get("predicted_sweeps")
+    for_sweeps = "" if assumed in (None, sweeps) else f" for {assumed} sweeps"
+    guess = f" (predicted {show_seconds(predicted)}{for_sweeps})" if predicted is not None else ""
     plan = attributes["plan"]
     sweep_words = f"{sweeps} {'sweep' if sweeps == 1 else 'sweeps'}"
     if plan.get("resident") and sweeps > 1:
@@ -134,6 +149,24 @@ def cost_words(attributes: Mapping[str, Any]) -> list[tuple[str, str]]:
     pairs.append(("memory", "; ".join([f"{show_bytes(attributes['peak_resident_bytes'])} at its peak", *parts])))
     pairs += [("remarks", remark) for remark in attributes.get("remarks", ())]
     return pairs
+
+
+def phase_lines(attributes: Mapping[str, Any]) -> list[str]:
+    """Time by phase, predicted and taken; phases below a hundredth of the whole are left to the last line."""
+    phases: Mapping[str, Mapping[str, Any]] = attributes.get("phases") or {}
+    if not phases:
+        return []
+    sums = {which: sum(float(one[which]) for one in phases.values()) for which in ("predicted", "measured")}
+    rows = [
+        [PHASES.get(name, name), f"{one['predicted']:.2f}", f"{one['measured']:.2f}"]
+        for name, one in phases.items()
+        if any(float(one[which]) >= LEAST_SHOWN * sums[which] for which in sums)
+    ]
+    rows.append(["in all", f"{sums['predicted']:.2f}", f"{sums['measured']:.2f}"])
+    workers, sweeps = attributes["workers"], attributes["sweeps"]
+    shared = "" if workers == 1 else f"; work of {workers} workers counted once"
+    head = f"Seconds by phase, predicted for {'one sweep' if sweeps == 1 else f'{sweeps} sweeps'} like these{shared}:"
+    return ["", head, *("  " + line for line in table(["", "predicted", "taken"], rows, "lrr"))]
 
 
 def xarray_line(out: Path) -> str:
@@ -155,6 +188,7 @@ def decomposition_facts(certificate: Certificate, attributes: Mapping[str, Any],
         "matrix_bytes",
         "seconds",
         "predicted_seconds",
+        "predicted_sweeps",
         "peak_resident_bytes",
         "memory_bytes",
     )
@@ -200,6 +234,7 @@ def decomposition_facts(certificate: Certificate, attributes: Mapping[str, Any],
         "slices": certificate.slices,
         "remarks": attributes.get("remarks", []),
         "timings": attributes.get("timings", {}),
+        "phases": attributes.get("phases", {}),
         "versions": attributes.get("versions", {}),
     }
     result: Json = plain(facts)

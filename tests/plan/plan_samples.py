@@ -10,6 +10,7 @@ from bigsvd.source import MatrixSpec
 
 MIB = 2**20
 STORAGES = ("memory", "npy", "plain", "compressed", "zarr", "graph")
+CODECS = (("shuffle", "gzip"), ("bitshuffle",), ("zstd",), ("library",), ("a codec of tomorrow",))
 TYPES = ("b1", "u1", "i2", "u2", "i4", "i8", "f2", "f4", "f8", "c8", "c16")
 
 
@@ -20,11 +21,14 @@ def spec(
     *,
     chunks: tuple[int, int] = (1, 1),
     storage: str = "plain",
+    codecs: tuple[str, ...] | None = None,
     **parts: str,
 ) -> MatrixSpec:
-    """Spec of a matrix that need not exist."""
+    """Spec of a matrix that need not exist; chunks that are compressed pass shuffle and gzip unless told otherwise."""
+    if codecs is None:
+        codecs = ("shuffle", "gzip") if storage == "compressed" else ()
     hints = {"samples_hint": parts.get("samples_hint"), "hint_reason": parts.get("hint_reason", "")}
-    return MatrixSpec("cells.h5/counts", (rows, columns), np.dtype(dtype), chunks, storage, **hints)
+    return MatrixSpec("cells.h5/counts", (rows, columns), np.dtype(dtype), chunks, storage, codecs=codecs, **hints)
 
 
 def plan_of(matrix: MatrixSpec, *, ceiling: int = 2048 * MIB, processors: int = 2, **options: object) -> Plan:
@@ -42,7 +46,8 @@ def specs(draw: st.DrawFn) -> MatrixSpec:
         chunks = (1, 1)
     if storage == "npy":
         chunks = (1, columns)
-    return spec(rows, columns, draw(st.sampled_from(TYPES)), chunks=chunks, storage=storage)
+    codecs = draw(st.sampled_from(CODECS)) if storage in ("compressed", "zarr") else ()
+    return spec(rows, columns, draw(st.sampled_from(TYPES)), chunks=chunks, storage=storage, codecs=codecs)
 
 
 @st.composite

@@ -16,8 +16,9 @@ from bigsvd.plan import Plan, Request, make_plan
 from bigsvd.source import MatrixSpec
 
 CEILINGS = st.sampled_from([200, 256, 300, 512, 1024, 4096, 65536]).map(lambda size: size * MIB)
-# What may differ between plans for another number of workers: how many run, what their buffers take, and the words.
-OF_WORKERS = {"workers", "memory", "reasons", "request"}
+# What may differ between plans for another number of workers: how many run, what their buffers take and how long their
+# phases, and the words.
+OF_WORKERS = {"workers", "memory", "reasons", "request", "nominal_phases"}
 checks = [HealthCheck.too_slow, HealthCheck.filter_too_much]
 many = settings(max_examples=50, deadline=None, suppress_health_check=checks)
 few = settings(max_examples=25, deadline=None, suppress_health_check=checks)

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 import pytest
 
-from bigsvd.plan import Plan, Request, make_plan
+from bigsvd.plan import Costs, Plan, Request, make_plan
 from bigsvd.report import announcement, plan_facts, plan_lines
 from bigsvd.source import MatrixSpec
 
@@ -25,6 +25,11 @@ class Forecast:
     seconds: float | None
     probe_bytes: int
     bytes_to_read: int
+
+    def costs(self, sweeps: float | None = None) -> Costs:
+        """40 seconds, and 30 for every sweep."""
+        sweeps = self.plan.nominal_sweeps if sweeps is None else sweeps
+        return Costs({"read": 60.0 * sweeps}, {"start": 40.0}, 2)
 
 
 def forecast(seconds: float | None = 130.0, **options: object) -> Forecast:
@@ -43,7 +48,7 @@ def test_plan_says_matrix_orientation_choices_bytes_and_time() -> None:
         "rank 20; intervals within 0.001 of the value; seed 0",
         "in all; the ceiling is 1 GiB",
         "22.4 GiB (3.00 × the matrix)",
-        "about 2 min 10 s, from a probe of 64 MiB",
+        "about 2 min 10 s in 3 sweeps, 1 min 10 s if one is enough, from a probe of 64 MiB",
         "64 MiB were read for this plan",
     ):
         assert fact in said, fact
