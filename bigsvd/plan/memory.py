@@ -4,8 +4,6 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-import numpy as np
-
 from bigsvd.plan.geometry import Geometry
 from bigsvd.plan.rates import BASE_BYTES, BLAS_BYTES
 from bigsvd.plan.widths import Widths
@@ -88,8 +86,6 @@ def memory_terms(
     folded = n + 1 if route in ("tsqr", "direct") else widths.limit + 1
     triangle = folded**2 * entry
     panel = 0 if resident else geometry.panel_bytes
-    chunk = int(np.prod(spec.chunks)) * spec.dtype.itemsize
-    decode = 0 if resident or spec.storage in ("memory", "npy", "graph") else 3 * chunk
     unit = (UNIT_LINES * (tile_columns(n) + 3 * widths.block + widths.limit) + widths.block * tile_columns(n)) * entry
     fold = 3 * (fold_lines(folded) + folded) * folded * entry
     leaf = widths.block * column + (widths.limit + 1) ** 2 * entry + 4 * column
@@ -102,6 +98,9 @@ def memory_terms(
     # Beside them the caller holds the total of all earlier waves.
     live = min(2 * leaves, workers * leaves.bit_length() + 1) + 1
     held = [MemoryTerm(BASE_BYTES, "interpreter and libraries")]
+    if spec.decode_bytes:
+        # Kept from one read to the next, hence in every phase.
+        held.append(MemoryTerm(workers * spec.decode_bytes, f"buffers in which {workers} workers decode"))
     if resident:
         held.append(MemoryTerm(spec.decoded_bytes, "the whole matrix, held in its stored type"))
     held.append(
@@ -117,9 +116,7 @@ def memory_terms(
         MemoryTerm((live + 4) * small, "sums and directions of the sample"),
     ]
     reading = [
-        MemoryTerm(
-            workers * (panel + decode), f"{workers} panels in flight, {show_bytes(panel)} each, and their decoding"
-        ),
+        MemoryTerm(workers * panel, f"{workers} panels in flight, {show_bytes(panel)} each"),
         MemoryTerm(
             workers * (unit + fold + BLAS_BYTES), f"working buffers of {workers} workers: conversion, products, QR"
         ),

@@ -49,6 +49,15 @@ def most_stored(decoded: int) -> int:
     return decoded + decoded // 4 + 2**16
 
 
+def decode_bytes(decoded: int) -> int:
+    """Most bytes held beside the panel to decode chunks of so many bytes.
+
+    Stored bytes, the result of one stage, and for chains of several codecs, Blosc2 and SZIP a third buffer: 3.04 chunks
+    at most were measured, of 16 MiB; and a constant for frames and bands.
+    """
+    return 3 * decoded + 2**20
+
+
 class ChunkDecoder:
     """Undoes a chain and puts the wanted part of a chunk where it belongs.
 

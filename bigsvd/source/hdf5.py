@@ -10,15 +10,24 @@ from typing import Any
 import numpy as np
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, UnsupportedMatrixError
-from bigsvd.source.chunk_decoder import ChunkError
+from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
 from bigsvd.source.entries import decoded_type, pair_view, type_caution
 from bigsvd.source.hdf5_complete import locate, require_complete
 from bigsvd.source.hdf5_dataset import describe, missing_filters, unapplied_attributes
-from bigsvd.source.hdf5_direct import Fill, decodes_directly, direct_reader
+from bigsvd.source.hdf5_direct import Fill, decodes_directly, direct_reader, plain_type
 from bigsvd.source.hdf5_file import library_errors_named, open_hdf5, register_plugins
 from bigsvd.source.hdf5_filters import filters_of
-from bigsvd.source.positional import Descriptor
-from bigsvd.source.rectangle import Span, clip, fill_by_bands, require_rectangle, show_chunk, show_place, touched
+from bigsvd.source.positional import Descriptor, reading_bytes
+from bigsvd.source.rectangle import (
+    BAND_BYTES,
+    Span,
+    clip,
+    fill_by_bands,
+    require_rectangle,
+    show_chunk,
+    show_place,
+    touched,
+)
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
 from bigsvd.units import show_shape
@@ -214,6 +223,7 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -
         chunks=(min(chunks[0], rows), min(chunks[1], columns)),
         storage="compressed" if filters else "plain",
         encoding=said.encoding,
+        decode_bytes=_decode_bytes(dataset, chunks),
         stored_bytes=said.stored_bytes,
         samples_hint=said.samples_hint,
         hint_reason=said.hint_reason,
@@ -221,6 +231,15 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -
         cautions=type_caution(stored) + unapplied_attributes(set(dataset.attrs)),
         codecs=codecs,
     )
+
+
+def _decode_bytes(dataset: Any, chunks: tuple[int, int]) -> int:
+    """Most bytes that a thread holds beside its panel; chunks may reach past the matrix."""
+    item = dataset.dtype.itemsize
+    if dataset.chunks is None or not filters_of(dataset):
+        direct = reading_bytes(chunks[1] * item)
+        return direct if plain_type(dataset) is not None else direct + BAND_BYTES
+    return decode_bytes(chunks[0] * chunks[1] * item) + (0 if decodes_directly(dataset) else BAND_BYTES)
 
 
 def _remedy(dataset: Any, path: str) -> str:

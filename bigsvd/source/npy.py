@@ -11,7 +11,7 @@ import numpy as np
 from bigsvd.errors import DamagedSourceError, UnsupportedMatrixError
 from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type, show_type, type_caution
-from bigsvd.source.positional import Descriptor, read_rows
+from bigsvd.source.positional import Descriptor, read_rows, reading_bytes
 from bigsvd.source.rectangle import Span, require_rectangle
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
@@ -47,6 +47,7 @@ class NpySource:
             chunks=(rows, 1) if self.column_order else (1, columns),
             storage="npy",
             encoding=said.encoding,
+            decode_bytes=reading_bytes((rows if self.column_order else columns) * self.stored.itemsize),
             stored_bytes=said.stored_bytes,
             fingerprint=digest(self.stamps),
             cautions=type_caution(self.stored),

@@ -15,6 +15,11 @@ _SPAN_BYTES = 256 * 2**10
 _GAP_BYTES = 64 * 2**10
 
 
+def reading_bytes(row_bytes: int) -> int:
+    """Most bytes held beside the panel while rows of so many bytes are read."""
+    return _SPAN_BYTES + row_bytes
+
+
 def read_rows(
     descriptor: int, offset: int, width: int, stored: np.dtype, rows: Span, columns: Span, out: np.ndarray
 ) -> None:

@@ -10,7 +10,7 @@ from bigsvd.source.spec import MatrixSpec
 from bigsvd.units import show_count
 
 Span = tuple[int, int]
-_BAND_BYTES = 4 * 2**20
+BAND_BYTES = 4 * 2**20
 
 
 def require_rectangle(spec: MatrixSpec, rows: Span, columns: Span, out: np.ndarray) -> None:
@@ -53,7 +53,7 @@ def fill_by_bands(
 ) -> None:
     """Fill a buffer that does not lie in one piece, through a temporary of whole chunks and about 4 MiB."""
     row_bytes = max(1, out.shape[1] * out.itemsize)
-    band = chunk_rows * max(1, _BAND_BYTES // (chunk_rows * row_bytes))
+    band = chunk_rows * max(1, BAND_BYTES // (chunk_rows * row_bytes))
     for number in range(rows[0] // band, (rows[1] - 1) // band + 1):
         start, stop = clip(number, band, rows)
         part = np.empty((stop - start, out.shape[1]), out.dtype)

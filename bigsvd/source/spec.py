@@ -40,6 +40,8 @@ class MatrixSpec:
         Identifies the input as it was when opened (sizes, times, metadata); empty where there is none.
     cautions : tuple of str
         What a reader of the plan should know about how entries are read, such as attributes that are not applied.
+    decode_bytes : int
+        Most bytes that a thread holds beside its panel once it has read: buffers are kept for its next read.
     """
 
     name: str
@@ -54,6 +56,7 @@ class MatrixSpec:
     fingerprint: str = ""
     cautions: tuple[str, ...] = ()
     codecs: tuple[str, ...] = ()
+    decode_bytes: int = 0
 
     @property
     def decoded_bytes(self) -> int:

@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, UnsupportedMatrixError
-from bigsvd.source.chunk_decoder import ChunkError
+from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
 from bigsvd.source.complete import SHOWN, absent_error, count_absent, refuse_absent
 from bigsvd.source.entries import decoded_type, type_caution
 from bigsvd.source.hdf5_dataset import unapplied_attributes
@@ -90,6 +90,7 @@ class ZarrSource:
             chunks=(min(metadata.chunks[0], rows), min(metadata.chunks[1], columns)),
             storage="zarr",
             encoding=said.encoding,
+            decode_bytes=self._decode_bytes(metadata.dtype.itemsize),
             stored_bytes=said.stored_bytes,
             samples_hint=said.samples_hint,
             hint_reason=said.hint_reason,
@@ -98,12 +99,22 @@ class ZarrSource:
             codecs=self._codecs(),
         )
 
+    @property
+    def _direct(self) -> bool:
+        """Whether chunks are decoded in the calling thread, all codecs being known."""
+        return self.metadata.layout is not None and isinstance(self.keys, DirectoryKeys)
+
     def _codecs(self) -> tuple[str, ...]:
         """What is undone to decode a chunk; ``library`` where zarr-python does it."""
         layout = self.metadata.layout
-        if layout is None or not isinstance(self.keys, DirectoryKeys):
-            return ("library",)
-        return tuple(stage.name for stage in layout.stages)
+        return tuple(stage.name for stage in layout.stages) if layout is not None and self._direct else ("library",)
+
+    def _decode_bytes(self, item: int) -> int:
+        """Most bytes that a thread holds beside its panel: zarr-python decodes whole shards at once."""
+        index = self.metadata.index
+        inner = self.metadata.inner if self._direct else None
+        rows, columns = inner or self._chunks
+        return decode_bytes(rows * columns * item) + (2 * index.bytes if index is not None else 0)
 
     def _mark_files(self) -> list[str]:
         folder = os.path.join(self.path, self.inside)
@@ -145,7 +156,7 @@ class ZarrSource:
 
     def _open_reader(self) -> Reader:
         """Choose the reader: chunk by chunk in the calling thread where all codecs are known, else zarr-python."""
-        if self.metadata.layout is not None and isinstance(self.keys, DirectoryKeys):
+        if self._direct:
             return ZarrFiles(self._file, self.metadata, self._by_library).fill
         self._open_library()
         return self._by_library
