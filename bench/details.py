@@ -175,14 +175,22 @@ def prediction_lines(found: Sequence[View]) -> list[str]:
     """Time predicted from the probe beside the time taken, whole and by phase."""
     rows, phases = [], []
     for view in found:
-        predicted, measured = view.predicted_seconds, view.inside_seconds
+        predicted, measured, told = view.predicted_seconds, view.inside_seconds, view.told
         off = "" if predicted is None else f"{predicted / measured - 1:+.0%}"
-        rows.append([view.label, "none" if predicted is None else f"{predicted:.1f}", f"{measured:.1f}", off])
+        sweeps = f"{told['predicted_sweeps']} → {told['sweeps']}"
+        rows.append([view.label, "none" if predicted is None else f"{predicted:.1f}", f"{measured:.1f}", off, sweeps])
         phases += [
             [view.label if not number else "", phase, f"{guess:.2f}", f"{seconds:.2f}"]
             for number, (phase, guess, seconds) in enumerate(view.phases())
         ]
-    lines = [*table(("case", "predicted, s", "taken, s", "off"), rows), ""]
-    if phases:
-        lines += [*table(("case", "phase", "predicted, s", "taken, s"), phases), ""]
-    return lines
+    return [
+        "Seconds of the decomposition, without the start of the interpreter: predicted from a probe before the run, for"
+        " the sweeps that were expected, and taken.",
+        "",
+        *table(("case", "predicted, s", "taken, s", "off", "sweeps, expected → made"), rows),
+        "",
+        "By phase, on the clock, predicted for the sweeps, columns and precision that the run came to:",
+        "",
+        *table(("case", "phase", "predicted, s", "taken, s"), phases),
+        "",
+    ]

@@ -95,6 +95,9 @@ def _prediction(view: View) -> list[str]:
     if predicted is None or abs(predicted - measured) <= PREDICTION * measured:
         return []
     words = f"{predicted:.1f} s were predicted and {measured:.1f} s taken, {predicted / measured - 1:+.0%}"
+    assumed, made = view.told["predicted_sweeps"], view.told["sweeps"]
+    if assumed != made:
+        words += f"; {assumed} sweeps were predicted and {made} made"
     known = [(abs(guess - seconds), phase, guess, seconds) for phase, guess, seconds in view.phases()]
     known.sort(reverse=True)
     off = [f"{phase} {guess:.2f} for {seconds:.2f} s" for gap, phase, guess, seconds in known if gap > WORTH * measured]

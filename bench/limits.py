@@ -53,10 +53,10 @@ class SweepClock:
         self.resident = False
         sweep = Engine.sweep
 
-        def timed(engine: Engine, task: Any, waves: Any) -> Any:
+        def timed(engine: Engine, task: Any, *words: Any, **options: Any) -> Any:
             start = time.perf_counter()
             try:
-                return sweep(engine, task, waves)
+                return sweep(engine, task, *words, **options)
             finally:
                 if self.captures.stage.startswith("sweep"):
                     self.seconds[self.captures.stage] = time.perf_counter() - start

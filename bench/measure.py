@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import statistics
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -175,28 +175,6 @@ def best_peer(own: Candidate, peers: Sequence[Candidate], ceiling: int) -> Candi
     return min(equal, key=lambda peer: peer.median, default=None)
 
 
-def stage_seconds(told: dict[str, Any]) -> dict[str, float]:
-    """Wall seconds of every stage of a run, from what its result says of times."""
-    found = {}
-    for stage, entry in told["timings"].items():
-        if isinstance(entry, dict):
-            if "measured" in entry:
-                found[stage] = float(entry["measured"])
-        else:
-            found[stage] = float(entry)
-    return found
-
-
 def phase_times(told: dict[str, Any]) -> list[tuple[str, float, float]]:
-    """(phase, predicted, measured) seconds, of all that a result predicts; empty where it does not."""
-    return list(_predictions(told["timings"]))
-
-
-def _predictions(entries: dict[str, Any]) -> Iterator[tuple[str, float, float]]:
-    for name, entry in entries.items():
-        if not isinstance(entry, dict):
-            continue
-        if entry.get("predicted") is not None and entry.get("measured") is not None:
-            yield name, float(entry["predicted"]), float(entry["measured"])
-        else:
-            yield from _predictions(entry)
+    """(phase, predicted, measured) seconds on the clock, from what a result says of its phases."""
+    return [(name, float(each["predicted"]), float(each["measured"])) for name, each in told["phases"].items()]

@@ -141,7 +141,8 @@ def _missed(merged: Merged) -> list[str]:
 
 def _method(merged: Merged) -> list[str]:
     """What the figures mean."""
-    settings, runs = merged.newest["settings"], merged.newest["runs"]
+    settings, count = merged.newest["settings"], merged.newest["runs"]
+    runs = f"{count} run{'' if count == 1 else 's'}"
     prepared = (
         "column means subtracted by all" if settings["centred"] else "nothing centred, as `svd_compressed` has it"
     )
@@ -154,7 +155,7 @@ def _method(merged: Merged) -> list[str]:
     timeout = show_seconds(merged.newest["timeout"])
     return [
         f"Rank {settings['rank']}, {prepared}. Every time is that of a whole process, from its start to its factors in"
-        f" files: median of {runs} runs, bigsvd and the main peers in turn; others ran once, and none longer than"
+        f" files: median of {runs}, bigsvd and the main peers in turn; others ran once, and none longer than"
         f" {timeout}. Files were {cache}. bigsvd proves its intervals to a tolerance of 1e-3, and checks them on slices"
         " of the file, within that time; the others prove nothing: their number of iterations was found by trying"
         " against the known truth.",

@@ -6,7 +6,7 @@ import statistics
 from dataclasses import dataclass
 from typing import Any
 
-from bench.measure import phase_times, stage_seconds
+from bench.measure import phase_times
 from bigsvd.units import show_shape
 
 SHORT_KINDS = {
@@ -119,17 +119,15 @@ class View:
         return stages_of(self.own)
 
     def phases(self) -> list[tuple[str, float, float]]:
-        """(phase, predicted, measured), medians over the runs."""
+        """(phase, predicted for the sweeps that were made, measured), medians over the runs."""
         runs = [phase_times(told) for told in self.own["told"]]
-        found = []
-        for phase in dict.fromkeys(name for run in runs for name, _, _ in run):
-            mine = [(predicted, measured) for run in runs for name, predicted, measured in run if name == phase]
-            predicted, measured = (statistics.median(part) for part in zip(*mine, strict=True))
-            found.append((phase, predicted, measured))
-        return found
+        return [
+            (mine[0][0], statistics.median(each[1] for each in mine), statistics.median(each[2] for each in mine))
+            for mine in zip(*runs, strict=True)
+        ]
 
 
 def stages_of(run: dict[str, Any]) -> dict[str, float]:
     """Wall seconds of every stage of a candidate that is bigsvd, medians over its runs."""
-    runs = [stage_seconds(told) for told in run["told"]]
+    runs = [told["timings"] for told in run["told"]]
     return {stage: statistics.median(each.get(stage, 0.0) for each in runs) for stage in runs[-1]}

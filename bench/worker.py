@@ -26,7 +26,10 @@ BLOCK_BYTES = 16_000_000
 # A band of whole stored chunks across the matrix may take so much; wider, blocks are parts of it.
 MOST_BAND_BYTES = 64_000_000
 # What is told of a run of bigsvd, beside every time.
-TOLD = ("sweeps", "bytes_read", "matrix_bytes", "precision", "width", "workers", "planned_bytes", "timings")
+TOLD = (
+    *("sweeps", "predicted_sweeps", "bytes_read", "matrix_bytes", "precision", "width", "workers", "planned_bytes"),
+    *("timings", "phases"),
+)
 
 
 def main(arguments: list[str] | None = None) -> None:

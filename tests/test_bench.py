@@ -127,15 +127,6 @@ def test_best_peer_is_as_near_as_bigsvd_below_the_ceiling_and_by_its_own_pipelin
     assert measure.best_peer(own, others[1:], 2 * MIB) is None
 
 
-def test_phases_are_found_wherever_a_result_predicts_them() -> None:
-    told = {"timings": {"sweep": 2.0, "write": {"predicted": 1.0, "measured": 3.0}}}
-    assert measure.stage_seconds(told) == {"sweep": 2.0, "write": 3.0}
-    assert measure.phase_times(told) == [("write", 1.0, 3.0)]
-    deeper = {"timings": {"sweep": 2.0, "phases": {"read": {"predicted": 1.5, "measured": 1.0}}}}
-    assert measure.stage_seconds(deeper) == {"sweep": 2.0}
-    assert measure.phase_times(deeper) == [("read", 1.5, 1.0)]
-
-
 def test_blocks_hold_whole_stored_chunks() -> None:
     assert worker.block_shape((50_000, 5_000), 4, None, 16_000_000) == (800, 5_000)
     assert worker.block_shape((50_000, 5_000), 4, (1_000, 2_000), 16_000_000) == (1_000, 5_000)
@@ -354,6 +345,7 @@ def own_run(seconds: float, *, reads: float = 1.1, peak: int = 256 * MIB, predic
         **{"sweeps": 1, "bytes_read": reads * 100, "matrix_bytes": 100, "precision": "single", "width": 94},
         **{"route": "krylov", "pilot_share": 0.05, "planned_bytes": 300 * MIB, "tolerance_met": True, "verdict": "20"},
         **{"seconds": 0.8 * seconds, "predicted_seconds": predicted, "timings": {"sweep": 0.5 * seconds, "write": 0.1}},
+        **{"predicted_sweeps": 2, "phases": {"read": {"predicted": predicted, "measured": 0.4 * seconds}}},
     }
     made = candidate("bigsvd", [seconds] * 3, 1e-8)
     made.peak_bytes, made.told = [peak] * 3, [told] * 3
@@ -455,7 +447,8 @@ def test_every_miss_is_told_with_its_figures(tmp_path: Path) -> None:
     assert "With its sweeps at their floor of 0.50 s it would be 3.33 ×." in text
     assert "2.50 reads where 2.1 are wanted: 1 sweeps, a pilot of 0.05, 1.45 for probe" in text
     assert "peak 600 MiB above the ceiling of 512 MiB" in text
-    assert "5.0 s were predicted and 1.6 s taken, +212%" in text
+    assert "5.0 s were predicted and 1.6 s taken, +212%; 2 sweeps were predicted and 1 made" in text
+    assert "most in read 5.00 for 0.80 s" in text
     assert "sweeps at 2.00 × their floor where 1.15 is wanted: 1.00 s where the parts alone take 0.50 s" in text
     # Of two processors for one second: 0.9 − 2·0.3 in products, 0.2 in scratch, 2.0 − 1.5 idle.
     assert "0.50 processors idle or waiting, 0.30 product AB beyond its time alone, 0.20 scratch write" in text
