@@ -19,6 +19,7 @@ import numpy as np
 from bigsvd import machine
 from bigsvd.certify import SliceCheck
 from bigsvd.drive import (
+    Deadline,
     Forecast,
     Outcome,
     Verification,
@@ -37,7 +38,7 @@ from bigsvd.plan import Plan, Request, make_plan
 from bigsvd.solve import TallVectors, column_phases
 from bigsvd.source import MatrixSpec, Source, check_complete, open_source
 from bigsvd.sweep import Control, Listener, one_blas_thread
-from bigsvd.units import parse_bytes, show_bytes
+from bigsvd.units import parse_bytes, parse_deadline, show_bytes
 
 Side = Literal["left", "right"]
 
@@ -71,6 +72,7 @@ def decompose(
     overwrite: bool = False,
     start_over: bool = False,
     save_every: float = 5.0,
+    finish_by: str | float | None = None,
     progress: Listener | None = None,
     planned: Callable[[Forecast], None] | None = None,
     **options: Any,
@@ -96,6 +98,9 @@ def decompose(
         Discard an unfinished run at `out` instead of going on with it.
     save_every : float
         Seconds between two savings of what was added up so far; a run that was cut goes on from the last.
+    finish_by : str or float, optional
+        When the result is to be in place: ``"06:30"``, ``"2026-12-02T06:30"``, a duration such as ``"8h"``, or seconds.
+        What the last whole sweep certified is then written, and the journal kept.
     progress : callable, optional
         Called with a `bigsvd.sweep.Progress` at least once per panel, from any thread.
     planned : callable, optional
@@ -151,6 +156,7 @@ def decompose(
     own = opened is not source
     target = None if out is None else Path(out)
     control = Control(progress)
+    until = None if finish_by is None else parse_deadline(finish_by, time.time())
     _load_meanwhile()
     try:
         with _environment() as held_before:
@@ -165,10 +171,16 @@ def decompose(
             folder = _scratch_folder(scratch, target)
             _require_scratch_space(folder, plan)
             with _journal(target, plan, scratch, control, start_over, save_every) as kept:
-                outcome = run(opened, plan, control, kept.scratch if kept else folder, kept.journal if kept else None)
+                outcome = run(
+                    opened, plan, control, kept.scratch if kept else folder, kept.journal if kept else None,
+                    _deadline(until, foreseen),
+                )  # fmt: skip
                 try:
                     checks = _check_slices(opened, outcome, kept.folder.path if kept else folder, control)
-                    return _write(target, outcome, checks, foreseen, control, overwrite, started, held_before, kept)
+                    factors = _write(target, outcome, checks, foreseen, control, overwrite, started, held_before, kept)
+                    if kept is not None and outcome.out_of_time:
+                        kept.folder.stay()
+                    return factors
                 finally:
                     outcome.scratch.close()
     finally:
@@ -258,6 +270,14 @@ def _load_meanwhile() -> None:
 
     if "zarr" not in sys.modules:
         threading.Thread(target=load, name="bigsvd-load", daemon=True).start()
+
+
+def _deadline(until: float | None, foreseen: Forecast) -> Deadline | None:
+    """When to stop reading, so that slices, writing and reading back still fit."""
+    if until is None:
+        return None
+    wall = foreseen.costs().wall
+    return Deadline(until, wall["slices"] + wall["store"])
 
 
 @dataclass(frozen=True)

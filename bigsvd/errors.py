@@ -9,6 +9,7 @@
     │   ├── UnsupportedMatrixError         1-D, empty, text, object type, unknown codec
     │   ├── DamagedSourceError             bytes that do not decode, absent chunks
     │   └── SourceChangedError             the file is not the one the run began with
+    ├── DeadlineError        (TimeoutError) --finish-by came before anything was certified
     ├── NonFiniteError       (ValueError)  NaN or infinity in the matrix
     └── ResultError          (OSError)     the result store cannot be written or opened
         ├── ResultExistsError
@@ -82,6 +83,10 @@ class SourceChangedError(SourceError):
 
 class NonFiniteError(BigsvdError, ValueError):
     """The matrix holds NaN or infinity."""
+
+
+class DeadlineError(BigsvdError, TimeoutError):
+    """The time given was over before the first sweep was."""
 
 
 class ResultError(BigsvdError, OSError):

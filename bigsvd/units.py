@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import re
+from contextlib import suppress
+from datetime import datetime, timedelta
 
 from bigsvd.errors import OptionError
 
@@ -22,6 +24,7 @@ _BYTE_UNITS = {
     "g": 2**30,
     "t": 2**40,
 }
+_DURATION = re.compile(r"(?=.)(?:([0-9]+(?:[.][0-9]+)?)h)?(?:([0-9]+(?:[.][0-9]+)?)min)?(?:([0-9]+(?:[.][0-9]+)?)s)?")
 _BYTES = re.compile(r"\s*([0-9]+(?:\.[0-9]+)?)\s*([a-zA-Z]*)\s*")
 
 
@@ -79,6 +82,54 @@ def show_bytes(size: float) -> str:
         return f"{int(value)} B"
     text = f"{value:.0f}" if value >= 100 else f"{value:.1f}" if value >= 10 else f"{value:.2f}"
     return f"{text.rstrip('0').rstrip('.') if '.' in text else text} {unit}"
+
+
+def parse_deadline(text: str | float, now: float) -> float:
+    """Read a moment such as ``06:30`` or ``2026-12-02T06:30``, or a duration such as ``8h``, ``2h30min`` or ``90s``.
+
+    Parameters
+    ----------
+    text : str or float
+        A number is a duration in seconds.
+    now : float
+        Seconds since 1970.
+
+    Returns
+    -------
+    float
+        Seconds since 1970. A time of day is the next one, by the clock of this machine.
+
+    Raises
+    ------
+    OptionError
+        If the text is neither, or the moment has passed.
+
+    Examples
+    --------
+    >>> parse_deadline("1h30min", 1000.0)
+    6400.0
+    """
+    moment: float | None = None
+    words = str(text).strip()
+    if isinstance(text, (int, float)):
+        moment = now + text
+    elif words and (match := _DURATION.fullmatch(words.replace(" ", ""))):
+        hours, minutes, seconds = (float(part or 0) for part in match.groups())
+        moment = now + 3600 * hours + 60 * minutes + seconds
+    elif re.fullmatch(r"[0-9]{1,2}:[0-9]{2}", words):
+        hour, minute = map(int, words.split(":"))
+        if hour < 24 and minute < 60:
+            today = datetime.fromtimestamp(now).replace(hour=hour, minute=minute, second=0, microsecond=0)
+            moment = (today if today.timestamp() > now else today + timedelta(days=1)).timestamp()
+    else:
+        with suppress(ValueError):
+            moment = datetime.fromisoformat(words).timestamp()
+    if moment is None or not moment > now:
+        raise OptionError(
+            f"--finish-by needs a time to come or a duration, not {words!r}",
+            remedy="Write --finish-by 06:30 or --finish-by 8h.",
+        )
+    return moment
 
 
 def show_seconds(seconds: float) -> str:

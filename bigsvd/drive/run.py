@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import time
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 
@@ -17,12 +18,15 @@ from bigsvd.certify import (
     measured_rounding,
     rounding_limited,
 )
+from bigsvd.drive.deadline import Deadline
 from bigsvd.drive.proof import Proof
 from bigsvd.drive.sweeps import OverflowInSingleError, Sweeps
 from bigsvd.drive.whole import gram_is_enough, sweep_fold, sweep_gram
+from bigsvd.errors import DeadlineError
 from bigsvd.journal import Journal
 from bigsvd.plan import Plan, Widths, crowd_reach, krylov_widths
 from bigsvd.solve import (
+    Aside,
     Pilot,
     Ritz,
     State,
@@ -33,7 +37,8 @@ from bigsvd.solve import (
     start_block,
 )
 from bigsvd.source import Source
-from bigsvd.sweep import Control, Scratch
+from bigsvd.sweep import Control, OutOfTimeError, Scratch
+from bigsvd.units import show_bytes, show_seconds
 
 # Rounding above this share of the tolerance: double.
 ROUNDING_SHARE = 0.25
@@ -63,6 +68,8 @@ class Outcome:
     sweeps : int
     precision : str
     remarks : tuple of str
+    out_of_time : bool
+        The deadline came first: this is what the last whole sweep certified.
     """
 
     plan: Plan
@@ -77,9 +84,28 @@ class Outcome:
     sweeps: int
     precision: str
     remarks: tuple[str, ...]
+    out_of_time: bool = False
 
 
-def run(source: Source, plan: Plan, control: Control, scratch_folder: Path, journal: Journal | None = None) -> Outcome:
+@dataclass(frozen=True, eq=False)
+class _Answer:
+    """What a whole sweep certified, and what the run knew then."""
+
+    ritz: Ritz
+    evidence: Evidence
+    certificate: Certificate
+    sweeps: int
+    precision: str
+
+
+def run(
+    source: Source,
+    plan: Plan,
+    control: Control,
+    scratch_folder: Path,
+    journal: Journal | None = None,
+    deadline: Deadline | None = None,
+) -> Outcome:
     """Decompose a matrix as planned, up to its certificate.
 
     Parameters
@@ -92,6 +118,8 @@ def run(source: Source, plan: Plan, control: Control, scratch_folder: Path, jour
         Where the tall products are kept; the caller closes `Outcome.scratch`.
     journal : Journal, optional
         Keeps what the sweeps add up, and knows what an earlier process added up.
+    deadline : Deadline, optional
+        When it comes, what the last whole sweep certified is the outcome.
 
     Returns
     -------
@@ -103,14 +131,18 @@ def run(source: Source, plan: Plan, control: Control, scratch_folder: Path, jour
         If the matrix holds NaN or infinity.
     SourceChangedError
         If a panel differs from what it was in an earlier sweep.
+    DeadlineError
+        If the time is over before anything is certified.
     """
     sweeps = Sweeps(source, plan, control, scratch_folder, journal)
+    control.read_until = None if deadline is None else deadline.read_until
     try:
-        return _Run(plan, sweeps).go()
+        return _Run(plan, sweeps, deadline).go()
     except BaseException:
         sweeps.scratch.close()
         raise
     finally:
+        control.read_until = None
         sweeps.close()
 
 
@@ -120,7 +152,10 @@ class _Run:
 
     plan: Plan
     sweeps: Sweeps
+    deadline: Deadline | None = None
     remarks: list[str] = field(default_factory=list)
+    answer: _Answer | None = None
+    aside: Aside | None = None
 
     def __post_init__(self) -> None:
         plan = self.plan
@@ -130,28 +165,76 @@ class _Run:
         self.rank = plan.rank if plan.request.variance is None else min(plan.rank, FIRST_GUESS)
 
     def go(self) -> Outcome:
-        """Sweep until the certificate is good enough, or nothing more can be gained."""
+        """Sweep until the certificate is good enough, nothing more can be gained, or the time is over."""
+        try:
+            self.next_block = self._first_block()
+            while True:
+                columns, began = self.next_block.shape[1], time.perf_counter()
+                self._sweep_basis()
+                self.aside = None
+                reached = self._certify()
+                assert self.answer is not None
+                if self._finished(self.answer.evidence, self.answer.certificate, reached):
+                    break
+                answer, single = self.answer, self.sweeps.in_single
+                self.next_block = self._next_block(answer.ritz, answer.evidence, answer.certificate)
+                if not self.next_block.shape[1]:
+                    break
+                # In double a column costs about twice as much.
+                ratio = self.next_block.shape[1] / columns * (2 if single and not self.sweeps.in_single else 1)
+                seconds = (time.perf_counter() - began) * max(0.5, ratio)
+                if self.deadline is not None and not self.deadline.allows(seconds):
+                    return self._out_of_time()
+        except OutOfTimeError:
+            return self._out_of_time()
+        certificate = self.answer.certificate
+        return self._outcome(certificate if reached else self._share_not_reached(certificate))
+
+    def _certify(self) -> bool:
+        """Take the step after a sweep; returns whether the rank that --variance needs is known."""
+        ritz = self.state.ritz()
+        evidence = self.proof.evidence(ritz)
+        reached = self._settle_rank(evidence)
+        rank = min(self.rank, len(evidence.theta))
         request = self.plan.request
-        self.next_block = self._first_block()
-        while True:
-            self._sweep_basis()
-            ritz = self.state.ritz()
-            evidence = self.proof.evidence(ritz)
-            reached = self._settle_rank(evidence)
-            rank = min(self.rank, len(evidence.theta))
-            certificate = certify(evidence, rank, crowd_reach(rank), request.tolerance, strict=request.strict)
-            if self._finished(evidence, certificate, reached):
-                break
-            self.next_block = self._next_block(ritz, evidence, certificate)
-            if not self.next_block.shape[1]:
-                break
-        if not reached:
-            certificate = self._share_not_reached(certificate)
+        certificate = certify(evidence, rank, crowd_reach(rank), request.tolerance, strict=request.strict)
+        self.answer = _Answer(ritz, evidence, certificate, self.sweeps.made, self._precision())
+        return reached
+
+    def _precision(self) -> str:
+        """Of the products of the present sweep."""
+        return "single" if self.sweeps.in_single else "double"
+
+    def _outcome(self, certificate: Certificate, *, out_of_time: bool = False) -> Outcome:
+        """What the run leaves, by its last answer."""
+        assert self.answer is not None
+        answer = self.answer
         mean, inverse, constant = self.sweeps.feature_statistics()
         return Outcome(
-            self.plan, self.state, ritz, evidence, certificate, self.sweeps.scratch, mean, inverse, constant,
-            self.sweeps.made, "single" if self.sweeps.in_single else "double", (*self.sweeps.remarks, *self.remarks),
+            self.plan, self.state, answer.ritz, answer.evidence, certificate, self.sweeps.scratch, mean, inverse,
+            constant, answer.sweeps, answer.precision, (*self.sweeps.remarks, *self.remarks), out_of_time,
         )  # fmt: skip
+
+    def _out_of_time(self) -> Outcome:
+        """Go back to what the last whole sweep certified."""
+        if self.answer is None:
+            reserve = self.deadline.reserve if self.deadline is not None else 0.0
+            raise DeadlineError(
+                f"{self.plan.spec.name}: the time given was over before the first sweep was, so nothing is certified",
+                evidence=[
+                    f"{show_bytes(self.sweeps.control.bytes_read)} were read",
+                    f"the last {show_seconds(reserve)} were set aside for checks and writing",
+                ],
+                remedy="Give a later --finish-by.",
+            )
+        scratch = self.sweeps.scratch
+        if self.aside is not None:
+            self.answer = replace(self.answer, ritz=self.state.take_back(self.aside, scratch))
+        if scratch.stored > scratch.map.shape[0]:
+            scratch.leave_last_block()
+        certificate = self.answer.certificate
+        words = f"stopped at the deadline after sweep {self.answer.sweeps}; {certificate.verdict}"
+        return self._outcome(replace(certificate, tolerance_met=False, verdict=words), out_of_time=True)
 
     def _first_block(self) -> np.ndarray:
         """The columns that the first basis sweep multiplies, by route."""
@@ -320,6 +403,8 @@ class _Run:
             state.restart(keep, ritz, self.sweeps.scratch)
             self.proof.keep_ritz_vectors(keep)
             ritz = Ritz(ritz.theta[:keep], np.eye(keep, dtype=self.sweeps.wide), ritz.residual_gram[:keep, :keep])
+            assert self.answer is not None
+            self.answer = replace(self.answer, ritz=ritz)
             tests = widths.test
         block = grow_block(
             state, ritz, count=widths.grow, tests=tests, limit=widths.limit, seed=self.plan.request.seed,
@@ -348,11 +433,13 @@ class _Run:
         self.remarks.append(
             f"double precision from sweep {sweeps.made + 1} on: rounding in single exceeds a quarter of the tolerance"
         )
-        keep = min(widths.keep, state.width)
-        grow = max(0, min(widths.grow, widths.limit - keep - widths.test, state.across - keep, state.width))
+        keep, rank = min(widths.keep, state.width), min(self.rank, state.width)
+        room = min(widths.limit, state.basis.shape[1]) - rank - keep - widths.test
+        grow = max(0, min(widths.grow, room, state.across - keep, state.width))
         vectors = state.used @ ritz.rotation[:, :keep]
         residuals = state.residuals(ritz, np.arange(grow))
         residuals = residuals[:, np.linalg.norm(residuals, axis=0) > 0]
+        self.aside = state.set_aside(rank, ritz, sweeps.scratch, next_width=keep + residuals.shape[1] + widths.test)
         state.forget(sweeps.scratch)
         sweeps.work = sweeps.wide
         self.proof.begin_again()

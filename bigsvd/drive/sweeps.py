@@ -168,7 +168,9 @@ class Sweeps:
             learn=first and self.across_features and plan.scaled,
             line_features=not self.across_features and (plan.centred or plan.scaled), sampled=sampled,
         )  # fmt: skip
-        keeper = None if self.journal is None else self.journal.next_sweep(self.scratch.flush)
+        keeper = None
+        if self.journal is not None:
+            keeper = self.journal.next_sweep(self.scratch.flush, known=block is None or self.scratch.found_last)
         sums = self.engine.sweep(task, plan.waves, keeper)
         # What follows until the next stage is small and dense, and runs in the caller alone.
         self.control.account("certificate")

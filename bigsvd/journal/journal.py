@@ -112,10 +112,18 @@ class Journal:
         if self.due(whole=True):
             self._write(self.folder / PILOT, *from_pilot(pilot))
 
-    def next_sweep(self, flush: Flush) -> SweepJournal:
-        """The journal of the next sweep of this process; `flush` brings its scratch to the device."""
+    def next_sweep(self, flush: Flush, *, known: bool) -> SweepJournal:
+        """The journal of the next sweep of this process.
+
+        Parameters
+        ----------
+        flush : callable
+            Brings its scratch to the device.
+        known : bool
+            Whether the scratch that an earlier process wrote for it is there; otherwise all of it is read again.
+        """
         self._calls += 1
-        return SweepJournal(self, self._calls, flush)
+        return SweepJournal(self, self._calls, flush, known=known)
 
     def due(self, *, whole: bool) -> bool:
         """Whether it is time to save; what a whole sweep or pilot found is kept sooner."""
@@ -163,14 +171,16 @@ class SweepJournal:
         Which sweep of the run, from 1; sweeps that are made again count.
     flush : callable
         Brings scratch to the device: sums are worth nothing without the Y that belongs to them.
+    known : bool
+        Whether that Y is there.
     """
 
-    def __init__(self, journal: Journal, sweep: int, flush: Flush) -> None:
-        self._journal, self._sweep, self._flush = journal, sweep, flush
+    def __init__(self, journal: Journal, sweep: int, flush: Flush, *, known: bool) -> None:
+        self._journal, self._sweep, self._flush, self._known = journal, sweep, flush, known
 
     def begin(self) -> tuple[int, Partial | None]:
         """Waves that need not be read again, and their sums."""
-        for each in reversed(self._journal.saved()):
+        for each in reversed(self._journal.saved() if self._known else []):
             if each.sweep == self._sweep:
                 read = self._journal._read(each.path)
                 if read is not None:

@@ -81,6 +81,7 @@ class RunFolder:
         self.path = self.place.run
         self.identity = dict(identity)
         self.lock = OutputLock(self.place.lock, self.place.out)
+        self._stays = False
         chosen = None if scratch is None else scratch.expanduser().resolve()
         name = f".{self.place.out.name}.scratch"
         self.scratch = self.path / "scratch" if chosen is None else chosen / name
@@ -114,9 +115,14 @@ class RunFolder:
         """Whether there is anything to go on from."""
         return bool(saved_in(self.path)) or (self.path / PILOT).exists()
 
+    def stay(self) -> None:
+        """Keep the folder although a result is in place, the one that a deadline left time for; the run may go on."""
+        self._stays = True
+        (self.path / "stopped").touch()
+
     def close(self, *, keep: bool) -> None:
         """Let go of the lock; remove everything unless the run is to be gone on with."""
-        if not keep:
+        if not (keep or self._stays):
             self._remove()
         self.lock.release()
 

@@ -2,12 +2,13 @@
 
 from bigsvd.solve.grow import carry_chains, gaussian_directions, grow_block, start_block
 from bigsvd.solve.pilot import Pilot, take_pilot
-from bigsvd.solve.state import Chain, Ritz, State
+from bigsvd.solve.state import Aside, Chain, Ritz, State
 from bigsvd.solve.statistics import Learnt, correct_gram, correct_products, first_statistics, in_range, learn
 from bigsvd.solve.tall import TallVectors, column_phases
 from bigsvd.solve.whole import from_gram, from_triangle
 
 __all__ = [
+    "Aside",
     "Chain",
     "Learnt",
     "Pilot",

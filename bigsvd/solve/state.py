@@ -63,6 +63,26 @@ class Chain:
     shrink: float = 1.0
 
 
+@dataclass(frozen=True, eq=False)
+class Aside:
+    """A certified answer that is kept while the basis is begun again; its vectors wait in the last columns.
+
+    Attributes
+    ----------
+    theta : ndarray, shape (rank,)
+    map : ndarray, shape (stored columns, rank)
+        As `Scratch.map`.
+    mean_row : ndarray, shape (rank,)
+    vectors : ndarray, shape (across, rank), or None
+        Where the last columns are needed: the basis then spans nearly the whole space, which is small.
+    """
+
+    theta: np.ndarray
+    map: np.ndarray
+    mean_row: np.ndarray
+    vectors: np.ndarray | None
+
+
 @dataclass(eq=False)
 class State:
     """Everything a block Krylov run carries from sweep to sweep.
@@ -186,6 +206,28 @@ class State:
         self.mean_row = np.zeros(0, self.basis.dtype)
         self.product_error = np.zeros(0)
         self.chains = []
+
+    def set_aside(self, rank: int, ritz: Ritz, scratch: Scratch, *, next_width: int) -> Aside:
+        """Keep the leading Ritz vectors where the next basis, of so many columns, does not reach."""
+        kept = ritz.rotation[:, :rank]
+        if next_width + rank > self.basis.shape[1]:
+            return Aside(ritz.theta[:rank], scratch.map @ kept, self.mean_row @ kept, self.used @ kept)
+        place = slice(self.basis.shape[1] - rank, None)
+        for first in range(0, self.across, ROWS):
+            rows = slice(first, first + ROWS)
+            self.basis[rows, place] = self.used[rows] @ kept
+        return Aside(ritz.theta[:rank], scratch.map @ kept, self.mean_row @ kept, None)
+
+    def take_back(self, aside: Aside, scratch: Scratch) -> Ritz:
+        """Return to the answer that was set aside."""
+        rank = len(aside.theta)
+        there = self.basis[:, self.basis.shape[1] - rank :].copy() if aside.vectors is None else aside.vectors
+        self.basis[:, :rank] = there
+        self.width = rank
+        self.triangle = np.diag(aside.theta).astype(self.basis.dtype)
+        self.mean_row = aside.mean_row
+        scratch.map = aside.map
+        return Ritz(aside.theta, np.eye(rank, dtype=self.basis.dtype), np.zeros((rank, rank), self.basis.dtype))
 
     def ritz(self) -> Ritz:
         """Take the Rayleigh–Ritz step on the present basis."""

@@ -1,6 +1,6 @@
 """The only loop that reads the matrix: panels, dask graphs, sums in a fixed order."""
 
-from bigsvd.sweep.events import Control, Listener, Progress, StoppedError
+from bigsvd.sweep.events import Control, Listener, OutOfTimeError, Progress, StoppedError
 from bigsvd.sweep.folding import fold, mirror
 from bigsvd.sweep.panels import PanelReader
 from bigsvd.sweep.partial import Partial
@@ -12,6 +12,7 @@ __all__ = [
     "Control",
     "Engine",
     "Listener",
+    "OutOfTimeError",
     "PanelReader",
     "Partial",
     "Progress",

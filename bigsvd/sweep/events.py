@@ -43,16 +43,32 @@ class StoppedError(Exception):
     """The run was asked to stop; raised inside workers between two panels."""
 
 
+class OutOfTimeError(StoppedError):
+    """The time for reading is over; raised inside workers between two panels."""
+
+
+# Stages of which no more is read once the time for reading is over.
+_READING = ("pilot", "sweep")
+
+
 class Control:
     """Counts the bytes read, passes progress on and carries the wish to stop to the workers.
 
     Parameters
     ----------
     listener : Listener or None
+
+    Attributes
+    ----------
+    bytes_read : int
+        Decoded bytes read so far.
+    read_until : float or None
+        When pilot and sweeps are to stop reading, seconds since 1970.
     """
 
     def __init__(self, listener: Listener | None = None) -> None:
         self.bytes_read = 0
+        self.read_until: float | None = None
         self._listener = listener
         self._lock = threading.Lock()
         self._stop = threading.Event()
@@ -117,6 +133,9 @@ class Control:
             self.bytes_read += size if read is None else read
         if self._stop.is_set():
             raise StoppedError
+        # The clock on the wall: a machine that slept meanwhile is out of time as well.
+        if self.read_until is not None and self._stage[0] in _READING and time.time() > self.read_until:
+            raise OutOfTimeError
         self.tell()
 
     def tell(self, note: str = "") -> None:

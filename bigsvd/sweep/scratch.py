@@ -30,6 +30,8 @@ class Scratch:
     map : ndarray, shape (stored columns, width)
         Y of the present basis is (stored columns) · map, up to a constant row that centring removes. Restarts and
         re-expressions change the map, never the files.
+    found_last : bool
+        Whether the block made last was there already, written by an earlier process.
     """
 
     def __init__(self, folder: Path, lines: int, dtype: np.dtype, *, own: bool = False) -> None:
@@ -40,6 +42,7 @@ class Scratch:
         self.map = np.zeros((0, 0), self.dtype)
         self._files: list[tuple[int, int]] = []
         self._made = 0
+        self.found_last = False
 
     @property
     def stored(self) -> int:
@@ -57,7 +60,9 @@ class Scratch:
         # Names are not used again: a run that goes on finds under each what that very sweep wrote.
         handle = os.open(self._path(self._made), flags, 0o600)
         self._made += 1
-        os.ftruncate(handle, self.lines * columns * self.dtype.itemsize)
+        size = self.lines * columns * self.dtype.itemsize
+        self.found_last = os.fstat(handle).st_size == size
+        os.ftruncate(handle, size)
         self._files.append((handle, columns))
         return len(self._files) - 1
 
@@ -66,6 +71,11 @@ class Scratch:
         handle, _ = self._files.pop()
         os.close(handle)
         self._path(self._made - 1).unlink()
+
+    def leave_last_block(self) -> None:
+        """Forget a block whose sweep was cut, but keep its file for the run that goes on."""
+        handle, _ = self._files.pop()
+        os.close(handle)
 
     def flush(self) -> None:
         """Return when what was written is on the device."""
