@@ -49,13 +49,13 @@ def check_complete(source: Source) -> None:
         source.require_complete()
 
 
-def refuse_absent(absent: np.ndarray, spec: MatrixSpec, meant: str) -> None:
+def refuse_absent(absent: np.ndarray, spec: MatrixSpec, chunks: tuple[int, int], meant: str) -> None:
     """Raise if any chunk of a grid is marked as absent; `meant` is the remedy if it holds only the fill value."""
     if absent.any():
         raise absent_error(
             spec,
             count_absent(int(np.count_nonzero(absent)), f"{show_count(absent.size)} chunks"),
-            [show_chunk(place, spec.shape, spec.chunks) for place in first_places(absent)],
+            [show_chunk(place, spec.shape, chunks) for place in first_places(absent)],
             meant,
         )
 

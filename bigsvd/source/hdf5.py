@@ -107,7 +107,7 @@ class Hdf5Source:
             fill(rows, columns, out)
         except Exception as error:  # filters come from other packages and raise what they like
             self._require_unchanged()
-            if isinstance(error, BigsvdError):
+            if isinstance(error, (BigsvdError, MemoryError)):
                 raise
             raise self._damage(fill, rows, columns, error) from error
         # The library answers zeros where a file was cut short after it was opened.

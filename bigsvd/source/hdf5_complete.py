@@ -36,7 +36,7 @@ def require_complete(dataset: Any, spec: MatrixSpec, folder: str) -> None:
     elif dataset.chunks is not None:
         grid = math.prod(grid_shape(dataset.shape, dataset.chunks))
         if dataset.id.get_num_chunks() < grid:
-            refuse_absent(absent_chunks(dataset), spec, MEANT)
+            refuse_absent(absent_chunks(dataset), spec, dataset.chunks, MEANT)
     elif dataset.id.get_storage_size() == 0:
         raise absent_error(spec, "its space in the file was set aside but never written", [], MEANT)
 

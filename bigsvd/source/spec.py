@@ -21,7 +21,7 @@ class MatrixSpec:
     dtype : numpy.dtype
         Type of the entries as they are decoded, in native byte order.
     chunks : (int, int)
-        The smallest rectangle that can be read without reading anything twice: a chunk, or a whole shard.
+        The smallest rectangle that can be read without reading anything twice: a chunk, or one inside a shard.
         (1, 1) where any rectangle will do; (1, columns) for a row-contiguous file.
     storage : str
         Storage class, the key of the nominal rates: ``memory``, ``plain``, ``compressed``, ``zarr``, ``npy`` or

@@ -87,7 +87,7 @@ class ZarrSource:
             name=name,
             shape=(rows, columns),
             dtype=dtype,
-            chunks=(min(metadata.chunks[0], rows), min(metadata.chunks[1], columns)),
+            chunks=(min(self._decoded_chunk[0], rows), min(self._decoded_chunk[1], columns)),
             storage="zarr",
             encoding=said.encoding,
             decode_bytes=self._decode_bytes(metadata.dtype.itemsize),
@@ -109,12 +109,17 @@ class ZarrSource:
         layout = self.metadata.layout
         return tuple(stage.name for stage in layout.stages) if layout is not None and self._direct else ("library",)
 
+    @property
+    def _decoded_chunk(self) -> tuple[int, int]:
+        """What is read by itself: an inner chunk of a shard, which zarr-python is given whole."""
+        rows, columns = (self._direct and self.metadata.inner) or self.metadata.chunks
+        return rows, columns
+
     def _decode_bytes(self, item: int) -> int:
-        """Most bytes that a thread holds beside its panel: zarr-python decodes whole shards at once."""
+        """Most bytes that a thread holds beside its panel."""
         index = self.metadata.index
-        inner = self.metadata.inner if self._direct else None
-        rows, columns = inner or self._chunks
-        return decode_bytes(rows * columns * item) + (2 * index.bytes if index is not None else 0)
+        chunk = self._decoded_chunk[0] * self._decoded_chunk[1] * item
+        return decode_bytes(chunk) + (2 * index.bytes if index is not None else 0)
 
     def _mark_files(self) -> list[str]:
         folder = os.path.join(self.path, self.inside)
@@ -150,6 +155,7 @@ class ZarrSource:
         with self._lock:
             if self._reader is None or self._process != os.getpid():
                 self._require_unchanged()
+                self._library = None
                 self._reader = self._open_reader()
                 self._process = os.getpid()
             return self._reader
@@ -199,7 +205,7 @@ class ZarrSource:
             reader(rows, columns, out)
         except Exception as error:  # codecs come from other packages and raise what they like
             self._require_unchanged()
-            if isinstance(error, BigsvdError):
+            if isinstance(error, (BigsvdError, MemoryError)):
                 raise
             raise self._damage(reader, rows, columns, error) from error
         self._require_unchanged()
@@ -252,7 +258,7 @@ class ZarrSource:
                     [f"{self._key((0, 0))} is wanted; there are {', '.join(others)}"],
                     "check the dimension separator in the metadata first.",
                 )
-        refuse_absent(absent, self.spec, MEANT)
+        refuse_absent(absent, self.spec, self._chunks, MEANT)
         if self.metadata.index is not None:
             self._require_full_shards(absent.shape)
 

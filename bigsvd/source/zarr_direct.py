@@ -70,7 +70,7 @@ class ZarrFiles:
     def _read(self, i: int, j: int, rows: Span, columns: Span, out: np.ndarray, workspace: Workspace) -> None:
         try:
             descriptor = os.open(self._file_of((i, j)), os.O_RDONLY | os.O_CLOEXEC)
-        except FileNotFoundError:
+        except (FileNotFoundError, NotADirectoryError):
             raise ChunkAbsentError((i, j)) from None
         try:
             found = os.fstat(descriptor)
