@@ -11,6 +11,7 @@ from collections.abc import Callable
 from pathlib import Path
 
 import h5py
+import hdf5plugin
 import numpy as np
 import pytest
 import zarr
@@ -267,7 +268,7 @@ def test_a_truncated_zip_is_refused(tmp_path: Path) -> None:
 
 def test_a_filter_that_is_not_installed_is_named(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     with h5py.File(tmp_path / "a.h5", "w") as file:
-        file.create_dataset("x", data=matrix("f4"), chunks=(10, 10), compression=307)
+        file.create_dataset("x", data=matrix("f4"), chunks=(10, 10), **hdf5plugin.BZip2())
     monkeypatch.setattr(h5py.h5z, "filter_avail", lambda code: code != 307)
     with pytest.raises(UnsupportedMatrixError, match=r"filter is not installed: bzip2 \(filter 307\)"):
         open_source(tmp_path / "a.h5", "x")
