@@ -15,9 +15,8 @@ from bigsvd.sweep import Control, Engine, PanelReader, SweepTask
 
 # Below this size a run is over before a probe would say anything.
 LEAST_PROBED = 64 * 2**20
-# Panels that every worker reads at most: one to warm up, and those that are timed, within so many nominal seconds.
-TIMED_PANELS = 2
-PROBE_SECONDS = 0.1
+# Panels that every worker reads: the first warms up, the second is timed.
+PROBE_PANELS = 2
 # A phase that a probe cannot see goes at the pace of one that it can: products for what is in the processor, conversion
 # for what moves bytes about.
 SEEN = ("read", "convert", "products")
@@ -74,7 +73,7 @@ def make_forecast(source: Source, plan: Plan, control: Control, *, probe: bool) 
     pilot = len(plan.pilot_panels) / geometry.panels
     sweeps = 1 if plan.resident else plan.nominal_sweeps
     expected = int(spec.decoded_bytes * (sweeps * geometry.amplification + pilot + NOMINAL_SHARE_OF_SLICES))
-    if not probe or spec.decoded_bytes < LEAST_PROBED or geometry.panels < 2:
+    if not probe or spec.decoded_bytes < LEAST_PROBED or geometry.panels < PROBE_PANELS:
         return Forecast(plan, None, 0, expected)
     before = control.bytes_read
     pace = _measure(source, plan, control)
@@ -96,27 +95,25 @@ class _Readings(Control):
 
 
 def _measure(source: Source, plan: Plan, control: Control) -> dict[str, float]:
-    """Pace of every phase: each worker sweeps a panel to warm up, then some that are timed."""
+    """Pace of every phase: each worker sweeps a panel to warm up, then one that is timed."""
     geometry = plan.geometry
     columns = plan.widths.start + plan.widths.test
     single = plan.may_be_single and plan.request.precision != "double"
-    workers = max(1, min(plan.workers, geometry.panels // 2))
-    nominal = sum(pass_costs(plan, 1 / geometry.panels, columns, single=single).shared.values())
-    timed = int(max(1, min(TIMED_PANELS, geometry.panels // workers - 1, PROBE_SECONDS / nominal - 1)))
+    workers = min(plan.workers, geometry.panels // PROBE_PANELS)
     firsts = [geometry.panels * part // workers for part in range(workers)]
-    control.begin("probe", workers * (1 + timed) * geometry.panel_bytes)
+    size = workers * PROBE_PANELS * geometry.panel_bytes
+    control.begin("probe", size)
     readings = _Readings()
     task = _task(source, plan, readings, columns, single=single)
     engine = Engine(workers)
     try:
-        engine.sweep(task, [[(first, first + 1) for first in firsts]])
-        readings.each.clear()
-        engine.sweep(task, [[(first + 1, first + 1 + timed) for first in firsts]])
+        for part in range(PROBE_PANELS):
+            readings.each.clear()
+            engine.sweep(task, [[(first + part, first + part + 1) for first in firsts]])
     finally:
         engine.close()
-    control.advance(workers * (1 + timed) * geometry.panel_bytes, read=readings.bytes_read)
-    share = timed / geometry.panels
-    expected = pass_costs(replace(plan, workers=workers), share, columns, single=single).shared
+    control.advance(size, read=readings.bytes_read)
+    expected = pass_costs(replace(plan, workers=workers), 1 / geometry.panels, columns, single=single).shared
     seen = {
         phase: statistics.median(each.get(phase, 0.0) for each in readings.each) / expected[phase] for phase in SEEN
     }

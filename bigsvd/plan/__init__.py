@@ -1,11 +1,11 @@
 """Pure arithmetic on specs: axis, panels, route, widths, memory, time. Opens nothing."""
 
 from bigsvd.plan.choose import make_plan
-from bigsvd.plan.geometry import Geometry
-from bigsvd.plan.memory import SLICE_ENTRIES, TALL_LINES, UNIT_LINES, MemoryTerm, fold_lines, tile_columns
+from bigsvd.plan.geometry import UNIT_LINES, Geometry
+from bigsvd.plan.memory import SLICE_ENTRIES, TALL_LINES, MemoryTerm, fold_lines, tile_columns
 from bigsvd.plan.phases import CALLER, SHARED, Costs, pass_costs, predict
 from bigsvd.plan.plan import Plan
-from bigsvd.plan.rates import BASE_BYTES, NOMINAL_SHARE_OF_SLICES
+from bigsvd.plan.rates import BASE_BYTES, NOMINAL, NOMINAL_SHARE_OF_SLICES, Rate, Rates
 from bigsvd.plan.request import DEFAULT_MAX_RANK, DEFAULT_RANK, Request
 from bigsvd.plan.widths import Widths, crowd_reach, krylov_widths
 
@@ -14,6 +14,7 @@ __all__ = [
     "CALLER",
     "DEFAULT_MAX_RANK",
     "DEFAULT_RANK",
+    "NOMINAL",
     "NOMINAL_SHARE_OF_SLICES",
     "SHARED",
     "SLICE_ENTRIES",
@@ -23,6 +24,8 @@ __all__ = [
     "Geometry",
     "MemoryTerm",
     "Plan",
+    "Rate",
+    "Rates",
     "Request",
     "Widths",
     "crowd_reach",

@@ -124,4 +124,5 @@ def waves_of(plan: Plan, rates: Rates = NOMINAL) -> tuple[tuple[tuple[int, int],
         costs = predict(replace(alone, pilot_panels=()), 1, columns=plan.widths.block, single=False, rates=rates)
     else:
         costs = predict(alone, 1, rates=rates)
-    return group(plan.geometry.panels, sum(costs.shared.values()) / plan.geometry.panels, plan.leaves)
+    geometry = plan.geometry
+    return group(geometry.panels, sum(costs.shared.values()) / geometry.panels, geometry.panel_bytes, plan.leaves)

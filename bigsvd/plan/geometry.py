@@ -7,12 +7,17 @@ from dataclasses import dataclass
 
 from bigsvd.source import MatrixSpec
 
-# A wave lasts at most this long on one worker at nominal rates, so that little is lost when a run is cut.
+# A wave lasts at most this long on one worker at nominal rates, so that little is lost when a run is cut; and no more
+# bytes than a slow device, at 20 MB/s, reads in a minute.
 WAVE_SECONDS = 10.0
+MOST_WAVE_BYTES = 1200 * 10**6
 # Panels of whole chunks are made small enough for a pilot of several and a full pipeline, large enough to read well.
-MOST_PANEL_BYTES = 16 * 2**20
+MOST_PANEL_BYTES = 64 * 2**20
 LEAST_PANEL_BYTES = 32 * 2**10
 WANTED_PANELS = 160
+FEWEST_PANELS = 40
+# A panel is converted and multiplied in units: single-precision sums stay within 512 terms (docs/method.md).
+UNIT_LINES = 512
 
 
 @dataclass(frozen=True)
@@ -77,7 +82,11 @@ def cut(spec: MatrixSpec, axis: int, samples_axis: int, room: int, panel_lines: 
     lines, across = spec.shape[axis], spec.shape[1 - axis]
     unit = min(spec.chunks[axis], lines)
     line_bytes = max(1, across * spec.dtype.itemsize)
-    target = max(min(room, MOST_PANEL_BYTES, lines * line_bytes // WANTED_PANELS), LEAST_PANEL_BYTES) // line_bytes
+    # Products are added up once per unit, so panels of whole units are wanted even where that leaves fewer of them.
+    wanted = max(lines * line_bytes // WANTED_PANELS, min(UNIT_LINES * line_bytes, lines * line_bytes // FEWEST_PANELS))
+    target = max(min(room, MOST_PANEL_BYTES, wanted), LEAST_PANEL_BYTES) // line_bytes
+    if target > UNIT_LINES:
+        target = target // UNIT_LINES * UNIT_LINES
     amplification = 1.0
     if panel_lines is not None:
         height = panel_lines
@@ -101,7 +110,9 @@ def _amplification(lines: int, unit: int, height: int) -> float:
     return decoded / lines
 
 
-def group(panels: int, panel_seconds: float, leaves: int) -> tuple[tuple[tuple[int, int], ...], ...]:
+def group(
+    panels: int, panel_seconds: float, panel_bytes: int, leaves: int
+) -> tuple[tuple[tuple[int, int], ...], ...]:
     """Group panels into waves of segments.
 
     Parameters
@@ -109,6 +120,8 @@ def group(panels: int, panel_seconds: float, leaves: int) -> tuple[tuple[tuple[i
     panels : int
     panel_seconds : float
         Nominal time of one panel on one worker.
+    panel_bytes : int
+        Decoded bytes of one panel.
     leaves : int
         Segments per wave, whose partial sums memory must hold.
 
@@ -117,7 +130,8 @@ def group(panels: int, panel_seconds: float, leaves: int) -> tuple[tuple[tuple[i
     tuple of waves, each a tuple of (first panel, one past the last) segments
         Every segment of a full wave has the same number of panels.
     """
-    per_wave = max(leaves, min(panels, int(WAVE_SECONDS / max(panel_seconds, 1e-9))))
+    most = min(WAVE_SECONDS / max(panel_seconds, 1e-9), MOST_WAVE_BYTES / max(panel_bytes, 1))
+    per_wave = max(leaves, min(panels, int(most)))
     waves = math.ceil(panels / per_wave)
     run = max(1, math.ceil(panels / (waves * leaves)))
     segments = [(start, min(start + run, panels)) for start in range(0, panels, run)]

@@ -4,14 +4,12 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from bigsvd.plan.geometry import Geometry
+from bigsvd.plan.geometry import UNIT_LINES, Geometry
 from bigsvd.plan.rates import BASE_BYTES, BLAS_BYTES
 from bigsvd.plan.widths import Widths
 from bigsvd.source import MatrixSpec
 from bigsvd.units import show_bytes, show_count
 
-# A panel is converted and multiplied in units: single-precision sums stay within 512 terms (docs/method.md).
-UNIT_LINES = 512
 # Units wider than this are cut into tiles, and converted once for each of the two products.
 WIDEST_UNIT = 8192
 TILE_COLUMNS = 4096

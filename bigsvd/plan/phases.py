@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
+from bigsvd.plan.geometry import UNIT_LINES
 from bigsvd.plan.memory import SLICE_ENTRIES, tile_columns
 from bigsvd.plan.plan import Plan
 from bigsvd.plan.rates import COMPLEX_FACTOR, NOMINAL, Rate, Rates
@@ -20,8 +21,6 @@ MOST_SLICES = 3
 SLICE_SHARE = 0.01
 # Share of the time of a segment that a worker waits at the end of a wave of one.
 IDLE = 0.05
-# Flops per n³ of all eigenvalues and vectors of a Hermitian matrix, and of a singular value decomposition.
-EIGEN_FLOPS, SVD_FLOPS = 9, 22
 # A triangle is inverted, multiplied and factored, 3·columns² flops a line; Householder takes 2, slowly.
 FOLD_FLOPS = 3
 
@@ -176,10 +175,12 @@ class _Model:
         spec = plan.spec
         size = share * spec.decoded_bytes * plan.geometry.amplification
         self.ledger.work("read", size, rates.fetch[spec.storage])
+        if spec.storage in ("plain", "compressed", "zarr") and spec.chunks[0] > 1:
+            # Chunks at the edge are stored whole.
+            size *= padding(spec)
+            self.ledger.work("read", size / max(1, chunk_bytes(spec)), rates.chunk)
         for codec in spec.codecs:
             self.ledger.work("read", size, rates.decode.get(codec, rates.decode["library"]))
-        if spec.storage in ("plain", "compressed", "zarr") and spec.chunks[0] > 1:
-            self.ledger.work("read", size / max(1, chunk_bytes(spec)), rates.chunk)
 
     def convert(self, share: float, work: str, *, energies: bool, sums: bool, twice: bool = True) -> None:
         """Words summed, entries converted, and in a first sweep squared and summed."""
@@ -201,9 +202,12 @@ class _Model:
             add("convert", entries, rates.learn)
 
     def products(self, share: float, block: float) -> None:
-        """Y = AB and Z = AᴴY."""
+        """Y = AB and Z = AᴴY, which is added up once per unit."""
         self.ledger.work("products", self.complex * 4 * share * self.entries * block, self.rates.products[self.work])
         self.ledger.work("products", self.complex * share * self.entries, self.rates.per_entry[self.work])
+        geometry = self.plan.geometry
+        units = geometry.panels * -(-(geometry.lines // geometry.panels) // UNIT_LINES)
+        self.ledger.work("products", self.complex * share * units * geometry.across * block, self.rates.accumulate)
 
     def _basis(self, flops: float) -> None:
         """Dense steps of the caller on the basis."""
@@ -223,7 +227,7 @@ class _Model:
         for product in range(PILOT_PRODUCTS):
             self.convert(share, self.work, energies=product == PILOT_PRODUCTS - 1, sums=False)
             self.products(share, start)
-        self.ledger.wait("waiting", (PILOT_PRODUCTS + 1) * self.rates.sweep_seconds)
+        self.ledger.wait("dense", (PILOT_PRODUCTS + 1) * self.rates.sweep_seconds)
         # Three rounds of 4·n·L² each, for the Gaussian start and after every product; as much again is moved about.
         self._basis(16.0 * PILOT_PRODUCTS * n * start**2)
 
@@ -237,8 +241,8 @@ class _Model:
             self.ledger.work("products", flops, self.rates.gram)
         else:
             self.ledger.work("fold", 2 * flops, self.rates.qr)
-        square = EIGEN_FLOPS if plan.route == "gram" else SVD_FLOPS
-        self.ledger.wait("dense", self.rates.square.seconds(self.complex * square * n**3))
+        square = self.rates.eigen if plan.route == "gram" else self.rates.svd
+        self.ledger.wait("dense", square.seconds(self.complex * n**3))
         self.ledger.wait("waiting", self.rates.sweep_seconds)
 
     def _basis_sweep(self, share: float, block: float, stored: float, *, first: bool) -> None:
@@ -257,7 +261,7 @@ class _Model:
         add("scratch", share * m * stored * entry, rates.scratch_read)
         full = width + block
         self._basis(share * n * (8 * full**2 + 24 * full * block + 16 * block**2))
-        self.ledger.wait("dense", rates.square.seconds(self.complex * share * SVD_FLOPS * full**3))
+        self.ledger.wait("dense", rates.svd.seconds(self.complex * share * full**3))
         self.ledger.wait("waiting", share * rates.sweep_seconds)
 
     def _slices(self) -> None:
@@ -284,6 +288,14 @@ class _Model:
 def chunk_bytes(spec: MatrixSpec) -> int:
     """Decoded bytes of a chunk."""
     return spec.chunks[0] * spec.chunks[1] * spec.dtype.itemsize
+
+
+def padding(spec: MatrixSpec) -> float:
+    """Entries of all chunks over those of the matrix."""
+    factor = 1.0
+    for side, chunk in zip(spec.shape, spec.chunks, strict=True):
+        factor *= -(-side // chunk) * chunk / side
+    return factor
 
 
 def _blocks(plan: Plan, sweeps: float, columns: float | None) -> Sequence[tuple[float, float]]:

@@ -49,8 +49,12 @@ class Rates:
         Floating-point operations of A·B and AᴴY, by working precision.
     per_entry : mapping of str to Rate
         Entries that products pass once, however few columns there are.
-    gram, fold, qr, square : Rate
-        Floating-point operations of AᴴA, of folds by products, of Householder QR, of eigenvalues and singular values.
+    accumulate : Rate
+        Entries of AᴴY added to their sums in double.
+    gram, fold, qr : Rate
+        Floating-point operations of AᴴA, of folds by products, of Householder QR.
+    eigen, svd : Rate
+        n³ of the eigenvalues and vectors of a Hermitian matrix; of a singular value decomposition.
     basis : Rate
         Floating-point operations on the basis between sweeps.
     scratch_write, scratch_read : Rate
@@ -72,10 +76,12 @@ class Rates:
     learn: Rate
     products: Mapping[str, Rate]
     per_entry: Mapping[str, Rate]
+    accumulate: Rate
     gram: Rate
     fold: Rate
     qr: Rate
-    square: Rate
+    eigen: Rate
+    svd: Rate
     basis: Rate
     scratch_write: Rate
     scratch_read: Rate
@@ -120,10 +126,12 @@ NOMINAL = Rates(
     learn=Rate(0.4e9),
     products={"single": Rate(106e9), "double": Rate(55e9)},
     per_entry={"single": Rate(5e9), "double": Rate(2.2e9)},
+    accumulate=Rate(1.2e9, 0.2),
     gram=Rate(50e9),
     fold=Rate(25e9),
     qr=Rate(15e9),
-    square=Rate(10e9),
+    eigen=Rate(2e9),
+    svd=Rate(0.8e9),
     basis=Rate(40e9),
     scratch_write=Rate(2e9),
     scratch_read=Rate(2e9),

@@ -128,13 +128,13 @@ def test_cut_panels_are_named_among_the_reasons() -> None:
 
 
 def test_segments_of_full_waves_are_equal() -> None:
-    waves = group(1000, 0.1, 8)
+    waves = group(1000, 0.1, 1000, 8)
     sizes = {stop - first for wave in waves[:-1] for first, stop in wave}
     assert len(sizes) == 1
     assert all(len(wave) <= 8 for wave in waves)
     # Ten seconds a wave at most, eight segments or more where there are panels for them.
     assert len(waves) == 10
-    assert group(3, 100.0, 8) == (((0, 1), (1, 2), (2, 3)),)
+    assert group(3, 100.0, 1000, 8) == (((0, 1), (1, 2), (2, 3)),)
 
 
 # ------------------------------------------------------------------------------------------------------------- pilot
