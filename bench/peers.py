@@ -44,12 +44,11 @@ class Family:
     slow: bool = False
 
 
-def families(case: Case) -> list[Family]:
+def families(case: Case, *, centred: bool) -> list[Family]:
     """Functions of which the fewest iterations that reach an error are searched, each at its fastest settings."""
-    plain = case.kind == "hdf5-plain"
     return [
         Family("dask", dask_tuned, in_double=True),
-        Family("randomized", _randomized_tuned(mapped=plain)),
+        Family("randomized", _randomized_tuned(_array_of(case, centred=centred))),
         Family("lobpcg", _lobpcg, least=1, slow=True),
     ]
 
@@ -64,9 +63,13 @@ def dask_tuned(iterations: int, double: bool) -> Candidate:
     return Candidate(name, words + (["--double"] if double else []), one_blas_thread=True)
 
 
-def _randomized_tuned(*, mapped: bool) -> Callable[[int, bool], Candidate]:
+def _array_of(case: Case, *, centred: bool) -> str:
+    """What a function that takes arrays is given: the file where it can be mapped, else a copy in a mapped file."""
+    return "memory map" if case.kind == "hdf5-plain" and not centred else "decoded copy"
+
+
+def _randomized_tuned(on: str) -> Callable[[int, bool], Candidate]:
     """randomized_svd on the mapped file, or on a copy that is decoded once; QR keeps single from overflowing."""
-    on = "memory map" if mapped else "decoded copy"
 
     def make(iterations: int, double: bool) -> Candidate:
         name = f"scikit-learn randomized_svd, {on}, QR, {_count(iterations)}"
@@ -81,7 +84,7 @@ def _lobpcg(iterations: int, double: bool) -> Candidate:
     return Candidate(f"SciPy svds, LOBPCG, {_count(iterations, 'step')}, operator that reads", words)
 
 
-def variants(case: Case, best: Candidate | None, double: bool) -> list[Candidate]:
+def variants(case: Case, best: Candidate | None, *, double: bool, centred: bool) -> list[Candidate]:
     """The same beside the tuned dask setting: what a user writes first, held in memory, through the Rust pipeline."""
     found = [
         Candidate("dask svd_compressed, all defaults", ["dask", "--auto-chunks"], first_written=True),
@@ -110,7 +113,7 @@ def variants(case: Case, best: Candidate | None, double: bool) -> list[Candidate
                     others_pipeline=True,
                 )
             )
-    on = "memory map" if case.kind == "hdf5-plain" else "decoded copy"
+    on = _array_of(case, centred=centred)
     found.append(
         Candidate(f"scikit-learn randomized_svd, {on}, all defaults", ["randomized"], first_written=True),
     )

@@ -12,7 +12,10 @@ from pathlib import Path
 from typing import Any
 
 PARTS = ("compare", "limits", "workers", "growth")
-LIBRARIES = ("bigsvd", "numpy", "scipy", "dask", "h5py", "hdf5plugin", "zarr", "zarrs", "isal", "scikit-learn")
+LIBRARIES = (
+    *("bigsvd", "numpy", "scipy", "dask", "h5py", "imagecodecs", "zarr", "hdf5plugin", "numcodecs", "zarrs"),
+    "scikit-learn",
+)
 # Above this load before the start others were at work.
 BUSY = 0.7
 

@@ -81,8 +81,8 @@ class Setup:
         words = [arguments[0], str(path), str(result), *arguments[1:], "--rank", str(self.rank)]
         words += ["--centred"] if centred else []
         words += ["--limit", f"{self.limit}:{self.ceiling}"] if self.limit != "none" else []
-        if self.cold:
-            drop(path)
+        # The candidate before may have needed the memory in which the file was.
+        (drop if self.cold else warm)(path)
         return run_process(words, timeout=self.timeout, one_blas_thread=one_blas_thread), result
 
     def clear(self) -> None:
@@ -124,7 +124,7 @@ class Side:
             raise CaseFailedError(f"bigsvd failed on {self.case.name}: {own.failures[-1]}")
         target = target_error(own.value_error)
         main, others, chosen = [], [], {}
-        for family in families(self.case):
+        for family in families(self.case, centred=self.setup.centred):
             if family.slow and not self.setup.slow:
                 continue
             near, equal = self._choose(family, TOLERANCE), self._choose(family, target)
@@ -136,7 +136,8 @@ class Side:
                 others += self._nearest(family)
         dask = [each for each in main if each.arguments[0] == "dask"]
         tuned = dask[0] if dask else next((each for each in others if each.arguments[0] == "dask"), None)
-        rest = variants(self.case, tuned, tuned is not None and "--double" in tuned.arguments)
+        double = tuned is not None and "--double" in tuned.arguments
+        rest = variants(self.case, tuned, double=double, centred=self.setup.centred)
         left_out: list[tuple[str, str]] = []
         if self.setup.slow:
             slow, left_out = slow_ones(self.case, self.setup.ceiling, available_bytes)

@@ -154,12 +154,14 @@ def run_randomized(given: argparse.Namespace) -> dict[str, Any]:
 
     matrix = _open(given)
     with tempfile.TemporaryDirectory(dir=given.result.parent) as folder:
-        mapped = _mapped(given.path, matrix)
+        mapped = None if given.centred else _mapped(given.path, matrix)
         copied = mapped is None
         if mapped is None:
+            places = bands(matrix, given.block_bytes)
+            mean = _mean(matrix, places) if given.centred else np.zeros(1)
             mapped = np.lib.format.open_memmap(Path(folder) / "copy.npy", "w+", "f4", matrix.shape)
-            for place in bands(matrix, given.block_bytes):
-                mapped[place] = matrix[place]
+            for place in places:
+                np.subtract(matrix[place], mean, out=mapped[place], casting="same_kind")
         iterations = "auto" if given.iterations is None else given.iterations
         with np.errstate(all="ignore"):
             left, values, right = randomized_svd(
