@@ -114,6 +114,9 @@ def limits_lines(entry: dict[str, Any]) -> list[str]:
     threads = [f"{count} thread{'' if count == '1' else 's'}, s" for count in counts]
     bare = ", ".join(f"{entry['bare_product_seconds'][count]:.2f} s with {count}" for count in counts)
     sweeps = f"{entry['sweeps']} sweep{'s' if entry['sweeps'] > 1 else ''}"
+    # Parts of a sweep can take longer than the sweep only where something else took the processors.
+    busy = min(each["closeness"] for each in found) < 1
+    doubt = " Parts took longer than the sweeps: the machine was busy, and these limits say little." if busy else ""
     return [
         f"### {entry['title']}: limits",
         "",
@@ -123,7 +126,7 @@ def limits_lines(entry: dict[str, Any]) -> list[str]:
         *table(("part alone", *threads, f"processor s in the run, {entry['in_run_workers']} workers"), rows),
         "",
         f"The products AB by BLAS alone, without carrying sums over into double: {bare}. Reading the stored bytes from"
-        f" the device, out of the page cache: {entry['cold_read_seconds']:.1f} s.",
+        f" the device, out of the page cache: {entry['cold_read_seconds']:.1f} s.{doubt}",
         "",
     ]
 
