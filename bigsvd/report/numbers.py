@@ -47,7 +47,7 @@ def show_interval(value: float, lower: float, upper: float) -> tuple[str, str]:
     if half <= 0:
         return show_figures(value, MOST_FIGURES), "± 0"
     figures = max(3, math.floor(math.log10(value)) - math.floor(math.log10(half)) + 2)
-    if figures >= MOST_FIGURES:
+    if figures > MOST_FIGURES:
         return show_figures(value, MOST_FIGURES), f"± {show_up(half)}"
     text = show_figures(value, figures)
     # Measured from the value as printed, so that what is printed holds the whole interval.

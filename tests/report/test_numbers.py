@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 
-from hypothesis import given
+from hypothesis import example, given
 from hypothesis import strategies as st
 
 from bigsvd.report.numbers import show_captured, show_down, show_figures, show_interval, show_share, show_up
@@ -13,6 +13,7 @@ values = st.floats(1e-300, 1e300)
 
 
 @given(values, st.floats(0, 0.9), st.floats(0, 0.9))
+@example(8.282381595e299, 1.192092896e-07, 0.0)
 def test_what_is_printed_holds_the_whole_interval(value: float, below: float, above: float) -> None:
     lower, upper = value * (1 - below), min(value * (1 + above), 1e304)
     text, interval = show_interval(value, lower, upper)
