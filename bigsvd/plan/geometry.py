@@ -110,9 +110,7 @@ def _amplification(lines: int, unit: int, height: int) -> float:
     return decoded / lines
 
 
-def group(
-    panels: int, panel_seconds: float, panel_bytes: int, leaves: int
-) -> tuple[tuple[tuple[int, int], ...], ...]:
+def group(panels: int, panel_seconds: float, panel_bytes: int, leaves: int) -> tuple[tuple[tuple[int, int], ...], ...]:
     """Group panels into waves of segments.
 
     Parameters
