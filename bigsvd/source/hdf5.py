@@ -57,7 +57,7 @@ class Hdf5Source:
 
     def _forget(self) -> None:
         self._lock = threading.Lock()
-        self._handles: tuple[Any, Descriptor, Any, Fill] | None = None
+        self._handles: tuple[Any, Descriptor, Any, Fill, DirectReader | None] | None = None
         self._inherited: object = None
         self._process = 0
 
@@ -85,8 +85,8 @@ class Hdf5Source:
                     file, descriptor = open_hdf5(self.path), Descriptor(self.path)
                     dataset = open_dataset(file, self.dataset, os.path.dirname(self.path))
                     library = library_reader(dataset)
-                    fill = direct_reader(dataset, descriptor.number, library) or library
-                    self._handles = file, descriptor, dataset, fill
+                    direct = direct_reader(dataset, descriptor.number, library)
+                    self._handles = file, descriptor, dataset, direct.fill if direct else library, direct
             return self._handles[2], self._handles[3]
 
     def close(self) -> None:
@@ -112,6 +112,13 @@ class Hdf5Source:
             raise self._damage(fill, rows, columns, error) from error
         # The library answers zeros where a file was cut short after it was opened.
         self._require_unchanged()
+
+    def announce(self, rows: Span, columns: Span) -> None:
+        """Have the system fetch a rectangle that will be read soon; where the library reads, nothing is done."""
+        self._opened()
+        direct = self._handles[4] if self._handles is not None else None
+        if direct is not None:
+            direct.announce(rows, columns)
 
     def _require_unchanged(self) -> None:
         for stamp in self.stamps:

@@ -10,6 +10,7 @@ from __future__ import annotations
 import math
 import os
 from collections.abc import Callable
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -18,14 +19,30 @@ from bigsvd.source.chunk_decoder import ChunkDecoder, ChunkError
 from bigsvd.source.codecs import FramingUnknownError
 from bigsvd.source.hdf5_chunks import MOST_CHUNKS, ChunkTable
 from bigsvd.source.hdf5_filters import filters_of
-from bigsvd.source.positional import fill_from, read_rows
+from bigsvd.source.positional import announce, announce_rows, fill_from, read_rows
 from bigsvd.source.rectangle import Span, clip, grid_shape, overlap, touched
 from bigsvd.source.workspace import Workspace, Workspaces
 
 Fill = Callable[[Span, Span, np.ndarray], None]
 
 
-def direct_reader(dataset: Any, descriptor: int, library: Fill) -> Fill | None:
+@dataclass(frozen=True)
+class DirectReader:
+    """The way past the library.
+
+    Attributes
+    ----------
+    fill : callable
+        Reads a rectangle into a buffer.
+    announce : callable
+        Has the system fetch a rectangle that will be read soon.
+    """
+
+    fill: Fill
+    announce: Callable[[Span, Span], None]
+
+
+def direct_reader(dataset: Any, descriptor: int, library: Fill) -> DirectReader | None:
     """Choose the way past the library; None where type, layout or filters do not allow it.
 
     Parameters
@@ -48,11 +65,17 @@ def direct_reader(dataset: Any, descriptor: int, library: Fill) -> Fill | None:
         if plist.get_layout() != h5py.h5d.CONTIGUOUS or plist.get_external_count() or offset is None:
             return None
         width = dataset.shape[1]
-        return lambda rows, columns, out: read_rows(descriptor, offset, width, stored, rows, columns, out)
+        return DirectReader(
+            lambda rows, columns, out: read_rows(descriptor, offset, width, stored, rows, columns, out),
+            # Parts of rows lie between others that are not wanted.
+            lambda rows, columns: announce_rows(descriptor, offset, width * stored.itemsize, rows)
+            if columns[1] - columns[0] == width
+            else None,
+        )
     if not decodes_directly(dataset) or math.prod(grid_shape(dataset.shape, dataset.chunks)) > MOST_CHUNKS:
         return None
     reader = _ChunkReader(dataset, stored, descriptor, library)
-    return reader.fill if reader.agrees_with(dataset) else None
+    return DirectReader(reader.fill, reader.announce) if reader.agrees_with(dataset) else None
 
 
 def decodes_directly(dataset: Any) -> bool:
@@ -102,6 +125,13 @@ class _ChunkReader:
         _, raw = dataset.id.read_direct_chunk((i * self._chunks[0], j * self._chunks[1]))
         offset, size, _ = self._table.at(i, j)
         return len(raw) == size and os.pread(self._descriptor, size, offset) == raw
+
+    def announce(self, rows: Span, columns: Span) -> None:
+        """Have the system fetch the chunks that a rectangle touches."""
+        for i, j in touched(rows, columns, self._chunks):
+            offset, size, _ = self._table.at(i, j)
+            if offset >= 0:
+                announce(self._descriptor, offset, size)
 
     def fill(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Decode all chunks that a rectangle touches into a buffer."""

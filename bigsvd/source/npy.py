@@ -11,7 +11,7 @@ import numpy as np
 from bigsvd.errors import DamagedSourceError, UnsupportedMatrixError
 from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type, show_type, type_caution
-from bigsvd.source.positional import Descriptor, read_rows, reading_bytes
+from bigsvd.source.positional import Descriptor, announce_rows, read_rows, reading_bytes
 from bigsvd.source.rectangle import Span, require_rectangle
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
@@ -99,6 +99,14 @@ class NpySource:
                 remedy="Copy or download the file again.",
             ) from error
         self.stamps[0].require_unchanged()
+
+    def announce(self, rows: Span, columns: Span) -> None:
+        """Have the system fetch a rectangle that will be read soon, where it is whole rows as they lie."""
+        height, width = self.spec.shape
+        if self.column_order:
+            rows, columns, width = columns, rows, height
+        if columns[1] - columns[0] == width:
+            announce_rows(self._opened(), self.offset, width * self.stored.itemsize, rows)
 
     def require_complete(self) -> None:
         """Refuse a file that changed; its length was compared with its header when it was opened."""

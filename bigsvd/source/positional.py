@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 
 import numpy as np
@@ -62,6 +63,19 @@ def read_rows(
         fill_from(descriptor, start + first * row_bytes, raw.data)
         part = np.ndarray((last - first, count), stored, raw, strides=(row_bytes, item))
         out[first:last] = part
+
+
+def announce(descriptor: int, offset: int, size: int) -> None:
+    """Tell the system that these bytes will be read soon: it fetches them into its cache while the caller goes on."""
+    if hasattr(os, "posix_fadvise"):
+        # A device that cannot seek, or a file system that does not care, is no fault of the reader.
+        with contextlib.suppress(OSError):
+            os.posix_fadvise(descriptor, offset, size, os.POSIX_FADV_WILLNEED)
+
+
+def announce_rows(descriptor: int, offset: int, row_bytes: int, rows: Span) -> None:
+    """Announce whole rows of an array that begins at byte `offset`."""
+    announce(descriptor, offset + rows[0] * row_bytes, (rows[1] - rows[0]) * row_bytes)
 
 
 class Descriptor:

@@ -6,6 +6,7 @@ are known (`zarr_codecs`), a chunk file, or an inner chunk of a shard, is read a
 
 from __future__ import annotations
 
+import contextlib
 import os
 import stat
 from collections.abc import Callable
@@ -14,7 +15,7 @@ import numpy as np
 
 from bigsvd.source.chunk_decoder import ChunkDecoder, ChunkError
 from bigsvd.source.codecs import FramingUnknownError
-from bigsvd.source.positional import fill_from
+from bigsvd.source.positional import announce, fill_from
 from bigsvd.source.rectangle import Span, clip, overlap, touched
 from bigsvd.source.workspace import Workspace, Workspaces
 from bigsvd.source.zarr_metadata import ZarrMetadata
@@ -66,6 +67,19 @@ class ZarrFiles:
                     raise
                 except Exception as error:  # every codec raises what it likes
                     raise ChunkError((i, j), *self._expected(), f"decoding says: {error}") from error
+
+    def announce(self, rows: Span, columns: Span) -> None:
+        """Have the system fetch the files that a rectangle touches; parts of shards are found while they are read."""
+        if self._index is not None:
+            return
+        for chunk in touched(rows, columns, self._chunks):
+            # Whoever reads it says what is wrong with it.
+            with contextlib.suppress(OSError):
+                descriptor = os.open(self._file_of(chunk), os.O_RDONLY | os.O_CLOEXEC | os.O_NONBLOCK)
+                try:
+                    announce(descriptor, 0, os.fstat(descriptor).st_size)
+                finally:
+                    os.close(descriptor)
 
     def _read(self, i: int, j: int, rows: Span, columns: Span, out: np.ndarray, workspace: Workspace) -> None:
         try:
