@@ -14,7 +14,7 @@ from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
 from bigsvd.source.entries import decoded_type, pair_view, type_caution
 from bigsvd.source.hdf5_complete import locate, require_complete
 from bigsvd.source.hdf5_dataset import describe, missing_filters, unapplied_attributes
-from bigsvd.source.hdf5_direct import Fill, decodes_directly, direct_reader, plain_type
+from bigsvd.source.hdf5_direct import DirectReader, Fill, decodes_directly, direct_reader, plain_type
 from bigsvd.source.hdf5_file import library_errors_named, open_hdf5, register_plugins
 from bigsvd.source.hdf5_filters import filters_of
 from bigsvd.source.positional import Descriptor, reading_bytes

@@ -68,9 +68,11 @@ def direct_reader(dataset: Any, descriptor: int, library: Fill) -> DirectReader 
         return DirectReader(
             lambda rows, columns, out: read_rows(descriptor, offset, width, stored, rows, columns, out),
             # Parts of rows lie between others that are not wanted.
-            lambda rows, columns: announce_rows(descriptor, offset, width * stored.itemsize, rows)
-            if columns[1] - columns[0] == width
-            else None,
+            lambda rows, columns: (
+                announce_rows(descriptor, offset, width * stored.itemsize, rows)
+                if columns[1] - columns[0] == width
+                else None
+            ),
         )
     if not decodes_directly(dataset) or math.prod(grid_shape(dataset.shape, dataset.chunks)) > MOST_CHUNKS:
         return None

@@ -51,6 +51,7 @@ class ZarrSource:
         self._lock = threading.Lock()
         self._reader: Reader | None = None
         self._library: Reader | None = None
+        self._files: ZarrFiles | None = None
         self._process = 0
 
     def __getstate__(self) -> dict[str, Any]:
@@ -163,7 +164,8 @@ class ZarrSource:
     def _open_reader(self) -> Reader:
         """Choose the reader: chunk by chunk in the calling thread where all codecs are known, else zarr-python."""
         if self._direct:
-            return ZarrFiles(self._file, self.metadata, self._by_library).fill
+            self._files = ZarrFiles(self._file, self.metadata, self._by_library)
+            return self._files.fill
         self._open_library()
         return self._by_library
 
@@ -209,6 +211,12 @@ class ZarrSource:
                 raise
             raise self._damage(reader, rows, columns, error) from error
         self._require_unchanged()
+
+    def announce(self, rows: Span, columns: Span) -> None:
+        """Have the system fetch a rectangle that will be read soon; where zarr-python reads, nothing is done."""
+        self._opened()
+        if self._files is not None:
+            self._files.announce(rows, columns)
 
     def _require_unchanged(self) -> None:
         for stamp in self.stamps:

@@ -30,6 +30,7 @@ class PanelReader:
         self.control = control
         self.keep = keep
         self._kept: dict[int, np.ndarray] = {}
+        self._announce = getattr(source, "announce", None)
 
     @property
     def dtype(self) -> np.dtype:
@@ -58,6 +59,11 @@ class PanelReader:
             self._kept[panel] = out
         self.control.advance(size, read=self.decoded(panel))
         return out
+
+    def announce(self, panel: int) -> None:
+        """Have the system fetch a panel that will be fetched next, into its own cache, while this one is multiplied."""
+        if self._announce is not None and panel not in self._kept:
+            self._announce(*self.geometry.rectangle(panel))
 
     def pass_over(self, runs: Iterable[tuple[int, int]]) -> None:
         """Count panels first … stop of each run as done, unread: an earlier process summed them."""

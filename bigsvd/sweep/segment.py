@@ -96,7 +96,7 @@ def run_segment(task: SweepTask, first: int, stop: int) -> Partial:
     with np.errstate(all="ignore"):
         segment = _Segment(task)
         for panel in range(first, stop):
-            segment.take(panel)
+            segment.take(panel, last=panel + 1 == stop)
         sums = segment.finish()
     task.reader.control.spend(segment.watch.seconds)
     return sums
@@ -149,11 +149,13 @@ class _Segment:
         self.filled = 0
         self.triangle: np.ndarray | None = None
 
-    def take(self, panel: int) -> None:
+    def take(self, panel: int, *, last: bool) -> None:
         """Read one panel and add it to the sums."""
         task, reader = self.task, self.task.reader
         self.watch.start("read")
         raw = reader.fetch(panel, self.raw)
+        if not last:
+            reader.announce(panel + 1)
         self.watch.start("convert")
         assert self.sums.ledger is not None
         self.sums.ledger.append(_word_sum(raw))
