@@ -36,7 +36,10 @@ OPENING_CALLS = (
     ),
 )
 # What must not be paid for by `bigsvd --help` and `import bigsvd`.
-HEAVY = ("dask", "distributed", "h5py", "hdf5plugin", "zarr", "zarrs", "scipy", "rich", "pandas", "xarray", "sklearn")
+HEAVY = (
+    *("dask", "distributed", "h5py", "hdf5plugin", "imagecodecs", "zarr", "zarrs", "zstandard", "scipy", "rich"),
+    *("pandas", "xarray", "sklearn"),
+)
 
 
 def room_of(file: Path, package: Path) -> str:
