@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 from dataclasses import replace
 
@@ -11,7 +12,7 @@ from bigsvd.plan.phases import predict
 from bigsvd.plan.plan import Plan, mean_is_enough
 from bigsvd.plan.rates import NOMINAL, Rates
 from bigsvd.plan.request import Request
-from bigsvd.plan.widths import PROFILES, Widths, closing_width, krylov_widths
+from bigsvd.plan.widths import NOMINAL_TOLERANCE, PROFILES, SWEEPS_PER_DECADE, Widths, closing_width, krylov_widths
 from bigsvd.randomness import draw_without_repeat
 from bigsvd.source import MatrixSpec
 
@@ -28,7 +29,7 @@ STREAM_PILOT = 1
 _PANEL_SHARES = (8, 16, 32, 64, 128, 256)
 _LEAVES = (8, 4, 2, 1)
 # Below this nominal time exactness decides, not cost: the direct route comes first.
-_NO_MATTER_SECONDS = 2.0
+_NO_MATTER_SECONDS = 1.0
 _ROUTE_ORDER = ("direct", "tsqr", "gram", "krylov")
 
 
@@ -87,6 +88,7 @@ def _all_widths(request: Request, across: int, route: str) -> Iterator[tuple[Wid
         yield replace(widths, start=closing, limit=min(across, closing + widths.grow + 2 * widths.test)), 2.0
         return
     for profile, sweeps in PROFILES.items():
+        sweeps = max(1.0, sweeps - SWEEPS_PER_DECADE * math.log10(request.tolerance / NOMINAL_TOLERANCE))
         for growths, more in RESTART_SWEEPS.items():
             widths = krylov_widths(request.rank, across, growths=growths, profile=profile)
             if request.width_limit is not None:

@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import replace
 
-from bigsvd.errors import MemoryCeilingError, OptionError
-from bigsvd.plan.candidates import LONGEST_SHORT_SIDE, candidates, preference, price, terms_of, waves_of
+from bigsvd.plan.candidates import candidates, preference, price, terms_of, waves_of
+from bigsvd.plan.least import MOST_AMPLIFICATION, cut_remark, too_small
 from bigsvd.plan.memory import total
 from bigsvd.plan.phases import predict
 from bigsvd.plan.plan import Plan
@@ -15,7 +15,6 @@ from bigsvd.plan.rates import NOMINAL, Rates
 from bigsvd.plan.reasons import explain, worker_words
 from bigsvd.plan.request import Request, check_request
 from bigsvd.source import MatrixSpec
-from bigsvd.units import show_bytes, show_count
 
 ResultBytes = Callable[[int], int]
 
@@ -68,21 +67,20 @@ def make_plan(
     assert request.rank is not None
     written = result_bytes(request.rank)
 
-    def drafts(bytes_allowed: int) -> list[Plan]:
-        return [
-            plan
-            for axis in axes
-            for route in routes
-            for plan in candidates(spec, request, axis, samples_axis, route, bytes_allowed, written)
-        ]
+    def drafts(bytes_allowed: int) -> Iterator[Plan]:
+        for axis in axes:
+            for route in routes:
+                yield from candidates(spec, request, axis, samples_axis, route, bytes_allowed, written)
 
     found = [price(plan, rates) for plan in drafts(ceiling) if plan.planned_bytes <= ceiling]
     if not found:
-        raise _too_small(request, ceiling, drafts)
+        raise too_small(request, ceiling, drafts, rates)
     best = min(found, key=preference)
     workers = request.workers or processors or os.cpu_count() or 1
     workers = _fitting_workers(best, min(workers, 2 * best.leaves))
     reasons = (*explain(best, found, request), ("workers", worker_words(workers, request, best)))
+    if best.geometry.amplification > MOST_AMPLIFICATION and request.panel_lines is None:
+        remarks += cut_remark(best, drafts)
     made = replace(
         best, workers=workers, memory=terms_of(best, workers), reasons=reasons, remarks=remarks,
         waves=waves_of(best, rates),
@@ -96,36 +94,3 @@ def _fitting_workers(plan: Plan, wanted: int) -> int:
         if total(terms_of(plan, workers)) <= plan.ceiling:
             return workers
     return 1
-
-
-def _too_small(request: Request, ceiling: int, drafts: Callable[[int], list[Plan]]) -> OptionError:
-    """The error that names the least that would do."""
-    now = drafts(ceiling)
-    if not now:
-        return OptionError(
-            f"--route {request.route} does not suit this matrix: its short side is longer than"
-            f" {show_count(LONGEST_SHORT_SIDE)}, or it does not fit in half the ceiling",
-            remedy="Give --route krylov.",
-        )
-    # Panels follow from the ceiling, so the least is found by planning at others, to a MiB.
-    low, high = ceiling >> 20, min(plan.planned_bytes for plan in now) >> 20
-    while not _fits(drafts, high):
-        low, high = high, high * 2
-    while high - low > 1:
-        middle = (low + high) // 2
-        low, high = (low, middle) if _fits(drafts, middle) else (middle, high)
-    least = min(drafts(high << 20), key=lambda plan: plan.planned_bytes)
-    evidence = [f"{show_bytes(term.size):>9}  {term.what}" for term in least.memory]
-    what = f"rank {request.rank}" if request.variance is None else f"--variance with --max-rank {request.rank}"
-    lower = "--rank" if request.variance is None else "--max-rank"
-    return MemoryCeilingError(
-        f"{what} needs at least {high} MiB, but --memory is {show_bytes(ceiling)}:",
-        evidence=evidence,
-        remedy=f"Raise --memory to {high}MiB, or lower {lower}.",
-    )
-
-
-def _fits(drafts: Callable[[int], list[Plan]], mebibytes: int) -> bool:
-    """Whether any plan fits under so many MiB."""
-    ceiling = mebibytes << 20
-    return any(plan.planned_bytes <= ceiling for plan in drafts(ceiling))

@@ -47,13 +47,10 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
     reasons = [("axis", axis), ("panels", panels), ("route", words)]
     if best.route == "krylov":
         reasons.append(("pilot", _pilot_words(best)))
-        reasons.append(
-            (
-                "width",
-                f"starts with {best.widths.start} + {best.widths.test} test columns, grows by up to "
-                f"{best.widths.grow + 2 * best.widths.test}, restarts at {best.widths.limit}",
-            )
-        )
+        widths = best.widths
+        grows = f"grows by up to {widths.grow + 2 * widths.test}, restarts at {widths.limit}"
+        starts = f"starts with {widths.start} + {widths.test} test columns"
+        reasons.append(("width", f"{starts}, {grows}; {_width_words(best, found)}"))
     if not best.may_be_single:
         why = (
             f"products of {spec.dtype} in double"
@@ -73,6 +70,19 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
     else:
         reasons.append(("precision", f"{request.precision}, as asked"))
     return tuple(reasons)
+
+
+def _width_words(best: Plan, found: list[Plan]) -> str:
+    """Why blocks are wide or narrow."""
+    profile = best.widths.profile
+    other = [plan.nominal_seconds for plan in found if plan.route == best.route and plan.widths.profile != profile]
+    why = {
+        "wide": "wide blocks, for reading costs more than products",
+        "narrow": "narrow blocks, for products cost more than reading",
+    }[profile]
+    if not other:
+        return why
+    return f"{why}: nominally {show_seconds(best.nominal_seconds)} against {show_seconds(min(other))}"
 
 
 def _pilot_words(plan: Plan) -> str:

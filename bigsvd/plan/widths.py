@@ -8,6 +8,10 @@ from dataclasses import dataclass
 # 1/i and 1/√i, 15 spikes over noise, and spikes of 3 to 40 (20 components of 12,000 × 3,000: 1, 2, 3, 5, 2 sweeps of
 # 246 columns in all against 1, 2, 4, 5, 2 of 200).
 PROFILES = {"wide": 2.6, "narrow": 2.8}
+# They are for intervals within a thousandth; each further decade costs so many more (means over the same kinds of
+# spectra, 6,000 × 1,500: 1.8 and 2.2 sweeps for a tenth, 3.8 and 4.0 for 1e-6, 4.8 and 5.2 for 1e-8).
+NOMINAL_TOLERANCE = 1e-3
+SWEEPS_PER_DECADE = 0.4
 # Test vectors of the missed bound. With 24 the chi-square quantile at 1e-10 gains a factor 1.3, with 20 nothing; 10
 # would cost 9.
 TEST_VECTORS = 24

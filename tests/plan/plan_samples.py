@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+from dataclasses import fields, replace
+
 import numpy as np
 from hypothesis import strategies as st
 
-from bigsvd.plan import Plan, Request, make_plan
+from bigsvd.plan import NOMINAL, Plan, Rate, Rates, Request, make_plan
 from bigsvd.source import MatrixSpec
 
 MIB = 2**20
@@ -31,9 +34,29 @@ def spec(
     return MatrixSpec("cells.h5/counts", (rows, columns), np.dtype(dtype), chunks, storage, codecs=codecs, **hints)
 
 
-def plan_of(matrix: MatrixSpec, *, ceiling: int = 2048 * MIB, processors: int = 2, **options: object) -> Plan:
+def plan_of(
+    matrix: MatrixSpec,
+    *,
+    ceiling: int = 2048 * MIB,
+    processors: int = 2,
+    rates: Rates = NOMINAL,
+    **options: object,
+) -> Plan:
     """Plan a matrix with the given options."""
-    return make_plan(matrix, Request(**options), ceiling=ceiling, processors=processors)  # type: ignore[arg-type]
+    request = Request(**options)  # type: ignore[arg-type]
+    return make_plan(matrix, request, ceiling=ceiling, processors=processors, rates=rates)
+
+
+def free_but(**slow: Rate | dict[str, Rate] | float) -> Rates:
+    """Rates of a machine on which nothing takes time but what is given."""
+    free: dict[str, object] = {}
+    for field in fields(Rates):
+        value = getattr(NOMINAL, field.name)
+        if isinstance(value, Mapping):
+            free[field.name] = dict.fromkeys(value, Rate(1e30)) | slow.pop(field.name, {})  # type: ignore[operator]
+        else:
+            free[field.name] = Rate(1e30) if isinstance(value, Rate) else 0.0
+    return replace(NOMINAL, **free | slow)  # type: ignore[arg-type]
 
 
 @st.composite

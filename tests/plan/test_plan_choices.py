@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import replace
 
 import pytest
-from plan_samples import MIB, plan_of, spec
+from plan_samples import MIB, free_but, plan_of, spec
 
 from bigsvd.errors import MemoryCeilingError, OptionError
+from bigsvd.plan import Plan, Rate, krylov_widths
 from bigsvd.plan.geometry import LEAST_PANEL_BYTES, MOST_PANEL_BYTES, cut, group
 
 
@@ -31,6 +33,71 @@ def test_the_gram_route_pays_longer_the_slower_the_file() -> None:
         return next(n for n in sides if plan_of(spec(2_000_000, n, "f8", storage=storage), rank=20).route == "krylov")
 
     assert crossing("compressed") > crossing("plain")
+
+
+def test_the_gram_route_is_left_where_its_products_cost_more_than_the_sweeps_it_saves() -> None:
+    # Krylov reads 2.8 times and a pilot, Gram twice. A worker reads 1 GB a second and makes so many flops of AᴴA, m·n²
+    # in all: equal where n = (0.8 + pilot)·8 bytes·flops / 1e9.
+    gram = 2.5e11
+    rates = free_but(fetch={"plain": Rate(1e9)}, gram=Rate(gram), qr=Rate(1e6))
+
+    def taken(n: int) -> Plan:
+        return plan_of(spec(2_000_000, n, "f8"), rank=20, rates=rates, ceiling=4096 * MIB)
+
+    krylov = plan_of(spec(2_000_000, 1600, "f8"), rank=20, rates=rates, ceiling=4096 * MIB, route="krylov")
+    pilot = len(krylov.pilot_panels) / krylov.geometry.panels
+    crossing = (krylov.expected_sweeps + pilot - 2) * 8 * gram / 1e9
+    assert 1200 < crossing < 2000
+    assert taken(round(crossing * 0.97)).route == "gram"
+    assert taken(round(crossing * 1.03)).route == "krylov"
+
+
+def test_householder_qr_is_taken_where_it_is_the_cheaper_whole_spectrum() -> None:
+    matrix = spec(2_000_000, 500, "f8")
+    for gram, qr, route in ((3e9, 5e9, "gram"), (2e9, 5e9, "tsqr")):
+        # AᴴA takes m·n² flops, Householder QR 2·m·n².
+        rates = free_but(gram=Rate(gram), qr=Rate(qr), products={"double": Rate(1e9)}, fetch={"plain": Rate(1e6)})
+        assert plan_of(matrix, rank=20, rates=rates).route == route
+
+
+def test_a_tighter_tolerance_wants_more_sweeps_and_turns_to_the_whole_spectrum() -> None:
+    rates = free_but(fetch={"plain": Rate(1e9)}, gram=Rate(2.5e11), qr=Rate(1e6))
+    plans = [
+        plan_of(spec(2_000_000, 2500, "f8"), rank=20, rates=rates, ceiling=4096 * MIB, tolerance=tolerance)
+        for tolerance in (1e-3, 1e-8)
+    ]
+    assert [plan.route for plan in plans] == ["krylov", "gram"]
+    loose, default, tight = (
+        plan_of(spec(2_000_000, 8000, "f8"), rank=20, tolerance=tolerance).expected_sweeps
+        for tolerance in (1e-1, 1e-3, 1e-8)
+    )
+    assert 1 <= loose < default < tight
+
+
+def test_blocks_are_wide_where_reading_costs_more_than_products_and_narrow_elsewhere() -> None:
+    matrix = spec(2_000_000, 8000)
+    wide, narrow = (krylov_widths(20, 8000, profile=profile) for profile in ("wide", "narrow"))
+    # Wide blocks save 0.2 reads of 4 bytes an entry, and take so many columns more, 4 flops each.
+    saved = 0.2 * 4
+    columns = [
+        widths.start + widths.test + (sweeps - 1) * (widths.grow + 2 * widths.test)
+        for widths, sweeps in ((wide, 2.6), (narrow, 2.8))
+    ]
+    assert columns == pytest.approx([250.8, 204.4])
+    equal = 4 * (columns[0] - columns[1]) / saved
+    for factor, profile in ((0.8, "narrow"), (1.5, "wide")):
+        rates = free_but(fetch={"plain": Rate(1e9)}, products={"single": Rate(1e9 * equal * factor)})
+        plan = plan_of(matrix, rank=20, route="krylov", rates=rates)
+        assert plan.widths.profile == profile
+        assert dict(plan.reasons)["width"].count(f"; {profile} blocks, for") == 1
+
+
+def test_narrow_blocks_still_hold_the_neighbours_that_show_a_bulk() -> None:
+    for rank in (1, 5, 10, 20, 200):
+        widths = krylov_widths(rank, 10_000, profile="narrow")
+        assert widths.start >= rank + max(10, rank)
+        assert widths.start + widths.test >= 2 * rank + 10
+        assert widths.keep == rank + max(10, rank) + 10
 
 
 def test_more_components_favour_the_whole_spectrum() -> None:
@@ -265,6 +332,38 @@ def test_a_refusal_lists_its_terms_and_they_add_up() -> None:
     assert any("interpreter and libraries" in line for line in refused.value.evidence)
     assert any("basis and its products" in line for line in refused.value.evidence)
     assert refused.value.remedy.endswith("or lower --rank.")
+
+
+def test_a_refusal_names_a_ceiling_that_cuts_no_chunk_if_that_is_not_much_more() -> None:
+    # A panel of whole chunks is 40 MB.
+    matrix = spec(40_000, 20_000, "u2", chunks=(1000, 500), storage="compressed")
+    with pytest.raises(MemoryCeilingError) as refused:
+        plan_of(matrix, ceiling=100 * MIB, rank=20, axis="rows")
+    named = int(refused.value.remedy.split("--memory to ")[1].split("MiB")[0])
+    assert f"needs at least {named} MiB to decode every chunk once, but --memory is 100 MiB" in refused.value.problem
+    least, times = re.search(
+        r"from (\d+) MiB on it would run, but cut chunks and decode them ([\d.]+) times", refused.value.evidence[-1]
+    ).groups()
+    assert int(least) < named <= 2 * int(least)
+    tight, roomy = (plan_of(matrix, ceiling=size * MIB, rank=20, axis="rows") for size in (int(least), named))
+    assert roomy.geometry.amplification == 1.0
+    assert tight.geometry.amplification == pytest.approx(float(times), abs=0.06)
+    assert tight.remarks == (
+        f"panels cut chunks: every sweep decodes {times} × the matrix; --memory {named}MiB avoids it",
+    )
+    assert roomy.remarks == ()
+
+
+def test_a_refusal_says_how_often_chunks_are_decoded_where_no_small_ceiling_avoids_it() -> None:
+    matrix = spec(20_000, 30_000, "f8", chunks=(2000, 2000), storage="compressed")
+    with pytest.raises(MemoryCeilingError) as refused:
+        plan_of(matrix, ceiling=100 * MIB, rank=20)
+    named = int(refused.value.remedy.split("--memory to ")[1].split("MiB")[0])
+    plan = plan_of(matrix, ceiling=named * MIB, rank=20)
+    assert plan.geometry.amplification > 2
+    said = f"panels cut chunks, which are decoded {plan.geometry.amplification:.1f} times in every sweep"
+    assert any(said in line for line in refused.value.evidence)
+    assert any(re.fullmatch(r"from [\d.]+ GiB on they are decoded once", line) for line in refused.value.evidence)
 
 
 def test_a_refusal_of_variance_speaks_of_its_largest_rank() -> None:

@@ -1,0 +1,107 @@
+"""The least ceiling that would do, and the error that names it."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+
+from bigsvd.errors import MemoryCeilingError, OptionError
+from bigsvd.plan.candidates import LONGEST_SHORT_SIDE, preference, price
+from bigsvd.plan.plan import Plan
+from bigsvd.plan.rates import Rates
+from bigsvd.plan.request import Request
+from bigsvd.units import show_bytes, show_count
+
+# All plans that could be made under a ceiling of so many bytes.
+Drafts = Callable[[int], Iterator[Plan]]
+# A plan that decodes more than this many times the matrix in a sweep cuts chunks needlessly.
+MOST_AMPLIFICATION = 1.05
+# A ceiling that spares cut chunks is named in place of the least if it is at most this many times as large.
+WORTH = 2.0
+# A thousand TiB: no machine has more.
+MOST_MEBIBYTES = 2**30
+
+
+def least_mebibytes(drafts: Drafts, low: int, *, whole: bool) -> int | None:
+    """The least ceiling above `low` MiB under which anything fits.
+
+    Parameters
+    ----------
+    drafts : callable
+    low : int
+        MiB under which nothing fits.
+    whole : bool
+        Only plans that decode every chunk once.
+
+    Returns
+    -------
+    int or None
+        MiB; None where no ceiling helps. Panels follow from the ceiling, so it is found by planning at others.
+    """
+
+    def fits(mebibytes: int) -> bool:
+        ceiling = mebibytes << 20
+        return any(plan.planned_bytes <= ceiling for plan in _good(drafts(ceiling), whole))
+
+    high = max(1, 2 * low)
+    while not fits(high):
+        low, high = high, high * 2
+        if high > MOST_MEBIBYTES:
+            return None
+    while high - low > 1:
+        middle = (low + high) // 2
+        low, high = (low, middle) if fits(middle) else (middle, high)
+    return high
+
+
+def too_small(request: Request, ceiling: int, drafts: Drafts, rates: Rates) -> OptionError:
+    """The error that names the least ceiling that would do.
+
+    A slightly larger one under which no chunk is cut is named in its place; where there is none, how often chunks are
+    decoded is said.
+    """
+    if next(drafts(ceiling), None) is None:
+        return OptionError(
+            f"--route {request.route} does not suit this matrix: its short side is longer than"
+            f" {show_count(LONGEST_SHORT_SIDE)}, or it does not fit in half the ceiling",
+            remedy="Give --route krylov.",
+        )
+    least = least_mebibytes(drafts, ceiling >> 20, whole=False)
+    assert least is not None
+    named, notes, once = least, [], ""
+    cut = _chosen(drafts, least, rates).geometry.amplification
+    if cut > MOST_AMPLIFICATION:
+        times = f"{cut:.1f} times in every sweep"
+        whole = least_mebibytes(drafts, least, whole=True) if request.panel_lines is None else None
+        if whole is None or whole > WORTH * least:
+            notes.append(f"under so little, panels cut chunks, which are decoded {times}")
+        else:
+            named, once = whole, " to decode every chunk once"
+            notes.append(f"from {least} MiB on it would run, but cut chunks and decode them {times}")
+        if whole is not None and whole != named:
+            notes.append(f"from {show_bytes(whole << 20)} on they are decoded once")
+    evidence = [f"{show_bytes(term.size):>9}  {term.what}" for term in _chosen(drafts, named, rates).memory]
+    what = f"rank {request.rank}" if request.variance is None else f"--variance with --max-rank {request.rank}"
+    lower = "--rank" if request.variance is None else "--max-rank"
+    return MemoryCeilingError(
+        f"{what} needs at least {named} MiB{once}, but --memory is {show_bytes(ceiling)}:",
+        evidence=[*evidence, *notes],
+        remedy=f"Raise --memory to {named}MiB, or lower {lower}.",
+    )
+
+
+def cut_remark(plan: Plan, drafts: Drafts) -> tuple[str, ...]:
+    """What a plan that cuts chunks costs, and the ceiling that avoids it."""
+    words = f"panels cut chunks: every sweep decodes {plan.geometry.amplification:.1f} × the matrix"
+    whole = least_mebibytes(drafts, plan.ceiling >> 20, whole=True)
+    return (words if whole is None else f"{words}; --memory {whole}MiB avoids it",)
+
+
+def _good(plans: Iterator[Plan], whole: bool) -> Iterator[Plan]:
+    """Those that decode no chunk twice, or all."""
+    return (plan for plan in plans if not whole or plan.geometry.amplification <= MOST_AMPLIFICATION)
+
+
+def _chosen(drafts: Drafts, mebibytes: int, rates: Rates) -> Plan:
+    """The plan that would be made under so many MiB."""
+    ceiling = mebibytes << 20
+    return min((price(plan, rates) for plan in drafts(ceiling) if plan.planned_bytes <= ceiling), key=preference)
