@@ -1,7 +1,18 @@
 """The journal beside a result that is being made: what every wave added up, so that a run that was cut goes on."""
 
+from bigsvd.journal.cost import journal_bytes
 from bigsvd.journal.identity import identity_of
 from bigsvd.journal.journal import Journal
-from bigsvd.journal.run_folder import RunFolder, Standing, discard_finished, read_standing
+from bigsvd.journal.run_folder import RunFolder, discard_finished
+from bigsvd.journal.standing import Standing, is_run_folder, read_standing
 
-__all__ = ["Journal", "RunFolder", "Standing", "discard_finished", "identity_of", "read_standing"]
+__all__ = [
+    "Journal",
+    "RunFolder",
+    "Standing",
+    "discard_finished",
+    "identity_of",
+    "is_run_folder",
+    "journal_bytes",
+    "read_standing",
+]

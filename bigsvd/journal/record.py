@@ -15,7 +15,7 @@ import struct
 import zlib
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal, NamedTuple
 
 import numpy as np
 
@@ -23,6 +23,16 @@ MAGIC = b"bigsvdJ1"
 _LENGTH = struct.Struct("<QI")
 _MOST_HEADER = 2**24
 _KINDS = "biufc"
+
+
+class _Described(NamedTuple):
+    """What the header says of an array."""
+
+    name: str
+    dtype: str
+    shape: list[int]
+    order: Literal["C", "F"]
+    checksum: int
 
 
 class DamagedRecordError(Exception):
@@ -101,18 +111,32 @@ def read_record(path: Path) -> tuple[dict[str, Any], dict[str, np.ndarray]]:
         header = file.read(length)
         if len(header) < length or zlib.crc32(header) != checksum:
             raise DamagedRecordError(f"the header of {path.name} does not match its checksum")
-        said = json.loads(header)
-        needed = len(start) + length + sum(_size(dtype, shape) for _, dtype, shape, _, _ in said["arrays"])
+        try:
+            facts, described = _understand(header)
+        except (ValueError, TypeError, KeyError, RecursionError) as error:
+            raise DamagedRecordError(f"the header of {path.name} is none of ours: {error}") from error
+        needed = len(start) + length + sum(_size(dtype, shape) for _, dtype, shape, _, _ in described)
         if needed != size:
             raise DamagedRecordError(f"{path.name} has {size:,} bytes and should have {needed:,}")
         arrays = {}
-        for name, dtype, shape, order, expected in said["arrays"]:
+        for name, dtype, shape, order, expected in described:
             array = np.empty(shape, dtype, order=order)
             view = _bytes_of(array, order)
             if file.readinto(view) != len(view) or zlib.crc32(view) != expected:
                 raise DamagedRecordError(f"{name} in {path.name} does not match its checksum")
             arrays[name] = array
-    return said["facts"], arrays
+    return facts, arrays
+
+
+def _understand(header: bytes) -> tuple[dict[str, Any], list[_Described]]:
+    """Facts, and what is said of every array; refuses what no record of ours says."""
+    said = json.loads(header)
+    facts, described = dict(said["facts"]), [_Described(*part) for part in said["arrays"]]
+    for part in described:
+        sides_fit = all(isinstance(side, int) and side >= 0 for side in part.shape)
+        if np.dtype(part.dtype).kind not in _KINDS or not sides_fit or part.order not in ("C", "F"):
+            raise ValueError(f"array {part.name} of type {part.dtype}, shape {part.shape}, order {part.order}")
+    return facts, described
 
 
 def _laid_out(array: np.ndarray) -> tuple[np.ndarray, str]:
@@ -121,7 +145,7 @@ def _laid_out(array: np.ndarray) -> tuple[np.ndarray, str]:
         raise TypeError(f"records hold numbers, not {array.dtype}")
     if array.flags.f_contiguous and not array.flags.c_contiguous:
         return array, "F"
-    return np.ascontiguousarray(array), "C"
+    return np.asarray(array, order="C"), "C"
 
 
 def _bytes_of(array: np.ndarray, order: str) -> memoryview:

@@ -2,56 +2,20 @@
 
 from __future__ import annotations
 
-import json
+import hashlib
 import os
 import shutil
 import stat
 import time
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from contextlib import suppress
-from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 from bigsvd.errors import DamagedJournalError, OtherRunError, ResultError
 from bigsvd.factors import OutputLock, Place, is_whole
-from bigsvd.journal.identity import differences
-from bigsvd.journal.journal import PILOT, Saved, saved_in
-from bigsvd.journal.record import DamagedRecordError, read_record
-
-IDENTITY = "identity.json"
-FORMAT = 1
-
-
-@dataclass(frozen=True)
-class Standing:
-    """Where a run that was cut stands.
-
-    Attributes
-    ----------
-    folder : Path
-    identity : dict
-        See `identity_of`.
-    sweep, waves, of : int
-        The last sums kept: after `waves` of `of` waves of a sweep; zeros where none were.
-    bytes_read : int
-    seconds : float
-        Spent so far.
-    saved : float or None
-        When the last sums were kept, seconds since 1970.
-    running : bool
-        Whether a process is at it now.
-    """
-
-    folder: Path
-    identity: dict[str, Any]
-    sweep: int
-    waves: int
-    of: int
-    bytes_read: int
-    seconds: float
-    saved: float | None
-    running: bool
+from bigsvd.journal.identity import IDENTITY, differences, read_identity, write_identity
+from bigsvd.journal.journal import PILOT, saved_in
 
 
 class RunFolder:
@@ -65,6 +29,8 @@ class RunFolder:
         What the run is.
     scratch : Path or None
         Folder for Y that the user chose; None keeps it inside.
+    command : sequence of str
+        The command line, for whoever finds the run unfinished; empty where there was none.
 
     Attributes
     ----------
@@ -76,15 +42,16 @@ class RunFolder:
         Held; the writer of the result takes it over.
     """
 
-    def __init__(self, out: Path, identity: Mapping[str, Any], scratch: Path | None) -> None:
+    def __init__(
+        self, out: Path, identity: Mapping[str, Any], scratch: Path | None, command: Sequence[str] = ()
+    ) -> None:
         self.place = Place.at(out)
         self.path = self.place.run
-        self.identity = dict(identity)
+        self.identity, self.command = dict(identity), list(command)
         self.lock = OutputLock(self.place.lock, self.place.out)
         self._stays = False
         chosen = None if scratch is None else scratch.expanduser().resolve()
-        name = f".{self.place.out.name}.scratch"
-        self.scratch = self.path / "scratch" if chosen is None else chosen / name
+        self.scratch = self.path / "scratch" if chosen is None else chosen / _scratch_name(self.place.out)
 
     def open(self, *, start_over: bool) -> None:
         """Take the lock; make the folder, or go on in the one that is there.
@@ -100,7 +67,9 @@ class RunFolder:
         try:
             if os.path.lexists(self.path):
                 self._require_own()
-                if start_over:
+                # A run that kept nothing is no loss, whatever it was.
+                if start_over or not self.holds_sums():
+                    self._remove_scratch_elsewhere()
                     self._remove()
                 else:
                     self._require_same()
@@ -129,13 +98,9 @@ class RunFolder:
     def _make(self) -> None:
         """Make the folder; it says what it is before anything else is in it."""
         os.mkdir(self.path, mode=0o700)
-        record = {"format": FORMAT, "began": time.time(), "scratch": str(self.scratch), "identity": self.identity}
-        new = self.path / f"{IDENTITY}.new"
-        with open(new, "w") as file:
-            json.dump(record, file, indent=1)
-            file.flush()
-            os.fsync(file.fileno())
-        os.replace(new, self.path / IDENTITY)
+        command = {"words": self.command, "folder": os.getcwd()} if self.command else None
+        record = {"began": time.time(), "scratch": str(self.scratch), "command": command, "identity": self.identity}
+        write_identity(self.path, record)
 
     def _make_scratch(self) -> None:
         """Make the folder of Y; one that is there must be ours."""
@@ -147,7 +112,9 @@ class RunFolder:
     def _require_own(self) -> None:
         """Refuse a folder that no run of ours made."""
         _require_plain(self.path, "where an unfinished run is kept")
-        if not (self.path / IDENTITY).is_file() and any(self.path.iterdir()):
+        # A process that died while it made the folder leaves the file that was to become its identity.
+        known = (IDENTITY, f"{IDENTITY}.new")
+        if not (self.path / IDENTITY).is_file() and any(path.name not in known for path in self.path.iterdir()):
             raise ResultError(
                 f"{self.path} is in the way, where an unfinished run is kept",
                 evidence=[f"it is no folder of such a run: {IDENTITY} is missing"],
@@ -155,11 +122,8 @@ class RunFolder:
             )
 
     def _require_same(self) -> None:
-        """Refuse to go on with another run; one that kept nothing is discarded."""
-        if not self.holds_sums():
-            self._remove()
-            return
-        record = _read_identity(self.path)
+        """Refuse to go on with another run, or without what this one wrote."""
+        record = read_identity(self.path)
         found = list(differences(record["identity"], self.identity))
         if record["scratch"] != str(self.scratch):
             found.append(f"place of scratch: {record['scratch']} when the run began, {self.scratch} now")
@@ -175,6 +139,14 @@ class RunFolder:
                 evidence=[f"missing: {self.scratch}"],
                 remedy="Put them back, or add --start-over.",
             )
+
+    def _remove_scratch_elsewhere(self) -> None:
+        """Remove the scratch of the run to be discarded, where that is another place than this run's."""
+        with suppress(DamagedJournalError, OSError):
+            scratch = Path(read_identity(self.path)["scratch"])
+            # Only what a run of this very result can have made.
+            if scratch.name == _scratch_name(self.place.out) and scratch.lstat().st_uid == os.geteuid():
+                shutil.rmtree(scratch)
 
     def _remove(self) -> None:
         """Remove scratch and the folder; what says whose it is goes last, for a process may die in between."""
@@ -218,69 +190,13 @@ def discard_finished(out: Path) -> None:
 
 def _scratch_of(path: Path) -> Path | None:
     """The folder in which the run's scratch was made; None for its own."""
-    scratch = Path(_read_identity(path)["scratch"])
+    scratch = Path(read_identity(path)["scratch"])
     return None if scratch.parent == path else scratch.parent
 
 
-def read_standing(path: Path) -> Standing:
-    """Say where the run of an OUT.run stands; changes nothing.
-
-    Parameters
-    ----------
-    path : Path
-
-    Returns
-    -------
-    Standing
-
-    Raises
-    ------
-    DamagedJournalError
-        If the folder is not one of an unfinished run, or what it says cannot be read.
-    """
-    record = _read_identity(path)
-    latest: Saved | None = None
-    facts: dict[str, Any] = {}
-    for each in saved_in(path):
-        try:
-            said, _ = read_record(each.path)
-        except (DamagedRecordError, OSError):
-            continue
-        latest, facts = each, said
-    out = path.with_name(path.name.removesuffix(".run"))
-    place = Place.at(out)
-    try:
-        OutputLock(place.lock, place.out).refuse_if_held()
-        running = False
-    except ResultError:
-        running = True
-    run = facts.get("run", {})
-    return Standing(
-        path,
-        record["identity"],
-        latest.sweep if latest else 0,
-        int(facts.get("waves", 0)),
-        int(facts.get("of", 0)),
-        int(run.get("bytes_read", 0)),
-        float(run.get("seconds", 0.0)),
-        run.get("saved"),
-        running,
-    )
-
-
-def _read_identity(path: Path) -> dict[str, Any]:
-    """What the run is, as it was written when it began."""
-    try:
-        record: dict[str, Any] = json.loads((path / IDENTITY).read_text())
-        if record["format"] != FORMAT or not isinstance(record["identity"], dict):
-            raise ValueError(f"format {record['format']}, and {FORMAT} is known here")
-        return record
-    except (OSError, ValueError, KeyError, TypeError) as error:
-        raise DamagedJournalError(
-            f"{path} does not say which run it is of",
-            evidence=[f"{IDENTITY}: {error}"],
-            remedy="Add --start-over to discard it, or choose another --out.",
-        ) from error
+def _scratch_name(out: Path) -> str:
+    """Name of a run's scratch in a folder that others may choose as well; results elsewhere may be called the same."""
+    return f".{out.name[:64]}.{hashlib.blake2b(os.fsencode(out), digest_size=6).hexdigest()}.scratch"
 
 
 def _require_plain(path: Path, what: str) -> None:
