@@ -8,6 +8,7 @@ from typing import Protocol
 import numpy as np
 
 from bigsvd.source.codecs import Stretch
+from bigsvd.source.positional import fill_from, read_rows
 from bigsvd.source.unshuffle import unshuffle
 from bigsvd.source.workspace import Workspace
 
@@ -84,6 +85,23 @@ class ChunkDecoder:
         self.most_stored = most_stored(self.bytes)
         wanted = max((stage.room(self.bytes) for stage in self._stages), default=0)
         self._room = -(-wanted // _ALIGNED) * _ALIGNED
+
+    def read(
+        self, descriptor: int, offset: int, size: int, rows: slice, columns: slice, out: np.ndarray,
+        workspace: Workspace, skipped: int = 0,
+    ) -> None:  # fmt: skip
+        """Read a chunk of so many stored bytes from a file, and decode it; otherwise as `decode`."""
+        every = (1 << len(self._stages)) - 1
+        if skipped & every == every and not self._column_major:
+            # Nothing was done to its bytes: the chunk is a small contiguous array, of which a part is read.
+            if size != self.bytes:
+                raise ValueError(f"{size:,} bytes are stored as they are, a chunk has {self.bytes:,}")
+            spans = (rows.start, rows.stop), (columns.start, columns.stop)
+            read_rows(descriptor, offset, self._chunk[1], self._dtype, *spans, out)
+            return
+        held = self.place_for(size, workspace)
+        fill_from(descriptor, offset, held.bytes.data)
+        self.decode(held, rows, columns, out, workspace, skipped)
 
     def place_for(self, size: int, workspace: Workspace) -> Stretch:
         """Where the stored bytes of a chunk are to be read to."""

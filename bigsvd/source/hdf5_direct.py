@@ -19,7 +19,7 @@ from bigsvd.source.chunk_decoder import ChunkDecoder, ChunkError
 from bigsvd.source.codecs import FramingUnknownError
 from bigsvd.source.hdf5_chunks import MOST_CHUNKS, ChunkTable
 from bigsvd.source.hdf5_filters import filters_of
-from bigsvd.source.positional import announce, announce_rows, fill_from, read_rows
+from bigsvd.source.positional import announce, announce_rows, read_rows
 from bigsvd.source.rectangle import Span, clip, grid_shape, overlap, touched
 from bigsvd.source.workspace import Workspace, Workspaces
 
@@ -42,7 +42,9 @@ class DirectReader:
     announce: Callable[[Span, Span], None]
 
 
-def direct_reader(dataset: Any, descriptor: int, library: Fill) -> DirectReader | None:
+def direct_reader(
+    dataset: Any, descriptor: int, library: Fill, fill: np.generic | None = None
+) -> DirectReader | None:
     """Choose the way past the library; None where type, layout or filters do not allow it.
 
     Parameters
@@ -53,6 +55,8 @@ def direct_reader(dataset: Any, descriptor: int, library: Fill) -> DirectReader 
         The same file, open for reading.
     library : callable
         Reads the chunks whose framing turns out to be another than the usual one.
+    fill : scalar, optional
+        What chunks that were never written are read as; without it they are an error.
     """
     import h5py
 
@@ -76,7 +80,7 @@ def direct_reader(dataset: Any, descriptor: int, library: Fill) -> DirectReader 
         )
     if not decodes_directly(dataset) or math.prod(grid_shape(dataset.shape, dataset.chunks)) > MOST_CHUNKS:
         return None
-    reader = _ChunkReader(dataset, stored, descriptor, library)
+    reader = _ChunkReader(dataset, stored, descriptor, library, fill)
     return DirectReader(reader.fill, reader.announce) if reader.agrees_with(dataset) else None
 
 
@@ -108,7 +112,10 @@ def plain_type(dataset: Any) -> np.dtype | None:
 class _ChunkReader:
     """Reads and decodes whole chunks; threads share the table of their places, and borrow buffers."""
 
-    def __init__(self, dataset: Any, stored: np.dtype, descriptor: int, library: Fill) -> None:
+    def __init__(
+        self, dataset: Any, stored: np.dtype, descriptor: int, library: Fill, fill: np.generic | None
+    ) -> None:
+        self._absent_value = fill
         self._descriptor = descriptor
         self._library = library
         self._filters = filters_of(dataset)
@@ -156,18 +163,11 @@ class _ChunkReader:
     def _decode(self, i: int, j: int, rows: slice, columns: slice, out: np.ndarray, workspace: Workspace) -> None:
         offset, size, skipped = self._table.at(i, j)
         if offset < 0:
-            raise ChunkError((i, j), "it was never written")
-        every = (1 << len(self._filters)) - 1
-        if skipped & every == every:
-            # No filter was applied: the chunk is a small contiguous array.
-            if size != self._decoder.bytes:
-                raise ValueError(f"{size:,} bytes are stored without a filter, a chunk has {self._decoder.bytes:,}")
-            spans = (rows.start, rows.stop), (columns.start, columns.stop)
-            read_rows(self._descriptor, offset, self._chunks[1], self._stored, *spans, out)
+            if self._absent_value is None:
+                raise ChunkError((i, j), "it was never written")
+            out[...] = self._absent_value
             return
-        held = self._decoder.place_for(size, workspace)
-        fill_from(self._descriptor, offset, held.bytes.data)
-        self._decoder.decode(held, rows, columns, out, workspace, skipped)
+        self._decoder.read(self._descriptor, offset, size, rows, columns, out, workspace, skipped)
 
     def _by_library(
         self, i: int, j: int, rows: Span, columns: Span, out: np.ndarray, framing: FramingUnknownError

@@ -15,12 +15,14 @@ import numpy as np
 
 from bigsvd.source.chunk_decoder import ChunkDecoder, ChunkError
 from bigsvd.source.codecs import FramingUnknownError
-from bigsvd.source.positional import announce, fill_from
+from bigsvd.source.positional import announce
 from bigsvd.source.rectangle import Span, clip, overlap, touched
 from bigsvd.source.workspace import Workspace, Workspaces
 from bigsvd.source.zarr_metadata import ZarrMetadata
 
 Fill = Callable[[Span, Span, np.ndarray], None]
+# A pipe in place of a chunk must not keep a reader waiting.
+_READ = os.O_RDONLY | os.O_CLOEXEC | os.O_NONBLOCK
 
 
 class ChunkAbsentError(ChunkError):
@@ -75,7 +77,7 @@ class ZarrFiles:
         for chunk in touched(rows, columns, self._chunks):
             # Whoever reads it says what is wrong with it.
             with contextlib.suppress(OSError):
-                descriptor = os.open(self._file_of(chunk), os.O_RDONLY | os.O_CLOEXEC | os.O_NONBLOCK)
+                descriptor = os.open(self._file_of(chunk), _READ)
                 try:
                     announce(descriptor, 0, os.fstat(descriptor).st_size)
                 finally:
@@ -83,7 +85,7 @@ class ZarrFiles:
 
     def _read(self, i: int, j: int, rows: Span, columns: Span, out: np.ndarray, workspace: Workspace) -> None:
         try:
-            descriptor = os.open(self._file_of((i, j)), os.O_RDONLY | os.O_CLOEXEC)
+            descriptor = os.open(self._file_of((i, j)), _READ)
         except (FileNotFoundError, NotADirectoryError):
             raise ChunkAbsentError((i, j)) from None
         try:
@@ -123,11 +125,9 @@ class ZarrFiles:
         self, descriptor: int, offset: int, size: int, chunk: tuple[int, int], rows: Span, columns: Span,
         out: np.ndarray, workspace: Workspace,
     ) -> None:  # fmt: skip
-        held = self._decoder.place_for(size, workspace)
-        fill_from(descriptor, offset, held.bytes.data)
         inner_rows, _ = overlap(chunk[0], self._inner[0], rows)
         inner_columns, _ = overlap(chunk[1], self._inner[1], columns)
-        self._decoder.decode(held, inner_rows, inner_columns, out, workspace)
+        self._decoder.read(descriptor, offset, size, inner_rows, inner_columns, out, workspace)
 
     def _expected(self) -> tuple[str, ...]:
         return (f"a chunk has {self._decoder.bytes:,} bytes decoded",)
