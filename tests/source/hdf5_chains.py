@@ -53,6 +53,7 @@ CHAINS: dict[str, tuple[Step, ...]] = {
     "bitshuffle": (plugin(hdf5plugin.Bitshuffle(cname="none")),),
     "bitshuffle lz4": (plugin(hdf5plugin.Bitshuffle(cname="lz4")),),
     "bitshuffle lz4 in small blocks": (plugin(hdf5plugin.Bitshuffle(nelems=64, cname="lz4")),),
+    "bitshuffle lz4 in tiny blocks": (plugin(hdf5plugin.Bitshuffle(nelems=8, cname="lz4")),),
     "bitshuffle zstd": (plugin(hdf5plugin.Bitshuffle(cname="zstd")),),
     "bitshuffle gzip": (plugin(hdf5plugin.Bitshuffle(cname="none")), GZIP),
     "bitshuffle lz4 fletcher32": (plugin(hdf5plugin.Bitshuffle(cname="lz4")), FLETCHER),
