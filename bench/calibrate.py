@@ -26,8 +26,9 @@ import numpy as np
 
 import bigsvd
 from bench.data import make_recipe
-from bigsvd.plan import NOMINAL, UNIT_LINES, Geometry, Rate, Rates, fold_lines
+from bigsvd.plan import NOMINAL, SHARED, UNIT_LINES, Geometry, Rate, Rates, fold_lines
 from bigsvd.plan.geometry import cut
+from bigsvd.plan.phases import IDLE
 from bigsvd.prepare import Preparation
 from bigsvd.solve.dense import gram_eigen, orthonormalise, triangle_svd
 from bigsvd.source import Source
@@ -384,32 +385,41 @@ with tempfile.TemporaryDirectory(dir=sys.argv[2]) as folder:
     options = {"rank": int(sys.argv[3]), "center": "none", "route": "krylov", "workers": 2}
     factors = bigsvd.decompose(sys.argv[1], Path(folder) / "out", **options)
 record = factors.attributes
-print(json.dumps({name: one["measured"] for name, one in record["phases"].items()} | {"sweeps": record["sweeps"]}))
+taken = {name: one["measured"] for name, one in record["phases"].items()}
+print(json.dumps(taken | {name: record[name] for name in ("sweeps", "width")}))
 """
 
 
 def whole_runs(bench: Bench, rates: Rates) -> dict[str, Any]:
     """What every run takes for start, slices and result, from small runs, each in a process of its own."""
-    # Slices of the first are of full size.
-    square, long = (36_000, 5_000), (400_000, 40)
+    # Slices of the first are 94 × 256, of the second 1,000 × 300.
+    square, long = (36_000, 5_000), (300_000, 300)
     taken = {}
     for shape in (square, long):
         path = bench.folder / f"{shape[0]}.npy"
         np.save(path, np.random.default_rng(1).integers(0, 200, shape, "u1"))
         runs = [_run(bench, path) for _ in range(bench.runs)]
         taken[shape] = {name: min(run[name] for run in runs) for name in runs[0]}
-    size = 8.0 * (long[0] + long[1]) * RANK
-    # Left vectors are taken from scratch twice, from all columns there can be.
-    tall = 2 * rates.scratch_read.seconds(8.0 * long[0] * long[1])
-    tall += 2 * rates.products["double"].seconds(2.0 * long[0] * (long[1] ** 2 + 2 * long[1] * RANK))
-    with_it = taken[long]["store"] - taken[square]["store"]
+    # What is written, beside taking left vectors from scratch twice.
+    size = {shape: 8.0 * sum(shape) * RANK for shape in taken}
+    left = {shape: run["store"] - _tall_seconds(shape[0], run["width"], rates) for shape, run in taken.items()}
+    store = Rate(figures((size[long] - size[square]) / max(1e-2, left[long] - left[square])))
+    # Beside what workers wait for the last of eight segments.
+    waiting = taken[square]["waiting"] - IDLE / 8 * sum(taken[square][phase] for phase in SHARED)
     return {
-        "store": rate(size, max(0.1 * with_it, with_it - tall), 0.0),
+        "store": store,
         "start_seconds": figures(taken[square]["start"]),
-        "sweep_seconds": figures(taken[square]["waiting"] / taken[square]["sweeps"]),
+        "sweep_seconds": figures(max(0.01, waiting / taken[square]["sweeps"])),
         "slice_seconds": figures(taken[square]["slices"] / 3),
-        "store_seconds": figures(max(0.01, taken[square]["store"] - tall * square[0] / long[0])),
+        "slice": Rate(figures(3 * 1_000 * 300**2 / max(1e-3, taken[long]["slices"] - taken[square]["slices"]))),
+        "store_seconds": figures(max(0.01, left[square] - store.seconds(size[square]))),
     }
+
+
+def _tall_seconds(lines: int, width: float, rates: Rates) -> float:
+    """Seconds of taking left vectors from scratch twice."""
+    flops = 2.0 * lines * (width**2 + 2 * width * RANK)
+    return 2 * (rates.scratch_read.seconds(8.0 * lines * width) + rates.products["double"].seconds(flops))
 
 
 def _run(bench: Bench, path: Path) -> dict[str, float]:

@@ -80,7 +80,7 @@ def make_plan(
     workers = _fitting_workers(best, min(workers, 2 * best.leaves))
     reasons = (*explain(best, found, request), ("workers", worker_words(workers, request, best)))
     if best.geometry.amplification > MOST_AMPLIFICATION and request.panel_lines is None:
-        remarks += cut_remark(best, drafts)
+        remarks += cut_remark(best, drafts, rates)
     made = replace(
         best, workers=workers, memory=terms_of(best, workers), reasons=reasons, remarks=remarks,
         waves=waves_of(best, rates),

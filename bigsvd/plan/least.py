@@ -21,7 +21,7 @@ WORTH = 2.0
 MOST_MEBIBYTES = 2**30
 
 
-def least_mebibytes(drafts: Drafts, low: int, *, whole: bool) -> int | None:
+def least_mebibytes(drafts: Drafts, low: int, whole: Rates | None = None) -> int | None:
     """The least ceiling above `low` MiB under which anything fits.
 
     Parameters
@@ -29,8 +29,8 @@ def least_mebibytes(drafts: Drafts, low: int, *, whole: bool) -> int | None:
     drafts : callable
     low : int
         MiB under which nothing fits.
-    whole : bool
-        Only plans that decode every chunk once.
+    whole : Rates or None
+        Where the plan that is made at these rates must decode every chunk once.
 
     Returns
     -------
@@ -39,8 +39,11 @@ def least_mebibytes(drafts: Drafts, low: int, *, whole: bool) -> int | None:
     """
 
     def fits(mebibytes: int) -> bool:
-        ceiling = mebibytes << 20
-        return any(plan.planned_bytes <= ceiling for plan in _good(drafts(ceiling), whole))
+        fitting = _fitting(drafts, mebibytes)
+        if whole is None:
+            return next(fitting, None) is not None
+        cheapest = _cheapest(fitting, whole)
+        return cheapest is not None and cheapest.geometry.amplification <= MOST_AMPLIFICATION
 
     high = max(1, 2 * low)
     while not fits(high):
@@ -65,13 +68,15 @@ def too_small(request: Request, ceiling: int, drafts: Drafts, rates: Rates) -> O
             f" {show_count(LONGEST_SHORT_SIDE)}, or it does not fit in half the ceiling",
             remedy="Give --route krylov.",
         )
-    least = least_mebibytes(drafts, ceiling >> 20, whole=False)
+    least = least_mebibytes(drafts, ceiling >> 20)
     assert least is not None
     named, notes, once = least, [], ""
-    cut = _chosen(drafts, least, rates).geometry.amplification
+    plan = _cheapest(_fitting(drafts, least), rates)
+    assert plan is not None
+    cut = plan.geometry.amplification
     if cut > MOST_AMPLIFICATION:
         times = f"{cut:.1f} times in every sweep"
-        whole = least_mebibytes(drafts, least, whole=True) if request.panel_lines is None else None
+        whole = least_mebibytes(drafts, least, rates) if request.panel_lines is None else None
         if whole is None or whole > WORTH * least:
             notes.append(f"under so little, panels cut chunks, which are decoded {times}")
         else:
@@ -79,7 +84,9 @@ def too_small(request: Request, ceiling: int, drafts: Drafts, rates: Rates) -> O
             notes.append(f"from {least} MiB on it would run, but cut chunks and decode them {times}")
         if whole is not None and whole != named:
             notes.append(f"from {show_bytes(whole << 20)} on they are decoded once")
-    evidence = [f"{show_bytes(term.size):>9}  {term.what}" for term in _chosen(drafts, named, rates).memory]
+    plan = _cheapest(_fitting(drafts, named), rates)
+    assert plan is not None
+    evidence = [f"{show_bytes(term.size):>9}  {term.what}" for term in plan.memory]
     what = f"rank {request.rank}" if request.variance is None else f"--variance with --max-rank {request.rank}"
     lower = "--rank" if request.variance is None else "--max-rank"
     return MemoryCeilingError(
@@ -89,19 +96,19 @@ def too_small(request: Request, ceiling: int, drafts: Drafts, rates: Rates) -> O
     )
 
 
-def cut_remark(plan: Plan, drafts: Drafts) -> tuple[str, ...]:
+def cut_remark(plan: Plan, drafts: Drafts, rates: Rates) -> tuple[str, ...]:
     """What a plan that cuts chunks costs, and the ceiling that avoids it."""
     words = f"panels cut chunks: every sweep decodes {plan.geometry.amplification:.1f} × the matrix"
-    whole = least_mebibytes(drafts, plan.ceiling >> 20, whole=True)
+    whole = least_mebibytes(drafts, plan.ceiling >> 20, rates)
     return (words if whole is None else f"{words}; --memory {whole}MiB avoids it",)
 
 
-def _good(plans: Iterator[Plan], whole: bool) -> Iterator[Plan]:
-    """Those that decode no chunk twice, or all."""
-    return (plan for plan in plans if not whole or plan.geometry.amplification <= MOST_AMPLIFICATION)
-
-
-def _chosen(drafts: Drafts, mebibytes: int, rates: Rates) -> Plan:
-    """The plan that would be made under so many MiB."""
+def _fitting(drafts: Drafts, mebibytes: int) -> Iterator[Plan]:
+    """Plans that fit under so many MiB."""
     ceiling = mebibytes << 20
-    return min((price(plan, rates) for plan in drafts(ceiling) if plan.planned_bytes <= ceiling), key=preference)
+    return (plan for plan in drafts(ceiling) if plan.planned_bytes <= ceiling)
+
+
+def _cheapest(plans: Iterator[Plan], rates: Rates) -> Plan | None:
+    """The plan that would be made."""
+    return min((price(plan, rates) for plan in plans), key=preference, default=None)

@@ -16,11 +16,15 @@ SHARED = ("read", "convert", "products", "fold", "scratch")
 CALLER = ("start", "waiting", "dense", "slices", "store")
 # Products of the sample before its directions are settled, and the last one.
 PILOT_PRODUCTS = 4
+# Panels of a sweep in single, and of a pilot, whose first unit is multiplied again in double to measure rounding.
+MEASURED_PANELS, MEASURED_IN_PILOT = 8, 4
 # Slices that are checked, at most, and their share of the matrix.
 MOST_SLICES = 3
 SLICE_SHARE = 0.01
-# Share of the time of a segment that a worker waits at the end of a wave of one.
-IDLE = 0.05
+# Columns that a slice may have however few its lines, and longer side times the square of the shorter, at most.
+SLICE_ACROSS, SLICE_FLOPS = 256, 2.5e8
+# At the end of a sweep a worker waits for the other's last segment: so much of its time on average.
+IDLE = 0.6
 # A triangle is inverted, multiplied and factored, 3·columns² flops a line; Householder takes 2, slowly.
 FOLD_FLOPS = 3
 
@@ -69,10 +73,12 @@ class _Ledger:
         """Add seconds of the caller."""
         self.spent[phase] += seconds * self.pace.get(phase, 1.0)
 
-    def close(self, leaves: int) -> Costs:
-        """The sums; fewer segments leave a worker idle longer at the end of each wave."""
+    def close(self, plan: Plan) -> Costs:
+        """The sums; where a sweep has few segments, workers wait longer for the last of them."""
         shared = {name: self.spent[name] for name in SHARED}
-        self.spent["waiting"] += IDLE / leaves * sum(shared.values()) / self.workers
+        if self.workers > 1:
+            segments = sum(map(len, plan.waves)) or plan.leaves
+            self.spent["waiting"] += IDLE / segments * sum(shared.values()) / self.workers
         return Costs(shared, {name: self.spent[name] for name in CALLER}, self.workers)
 
 
@@ -109,7 +115,7 @@ def predict(
         single = plan.may_be_single and plan.request.precision != "double"
     model = _Model(plan, "single" if single else "double", rates, _Ledger(plan.workers, pace or {}))
     model.run(sweeps, columns)
-    return model.ledger.close(plan.leaves)
+    return model.ledger.close(plan)
 
 
 def pass_costs(plan: Plan, share: float, columns: int, *, single: bool, rates: Rates = NOMINAL) -> Costs:
@@ -131,7 +137,7 @@ def pass_costs(plan: Plan, share: float, columns: int, *, single: bool, rates: R
     model.read(share)
     model.convert(share, model.work, energies=True, sums=False)
     model.products(share, columns)
-    return model.ledger.close(plan.leaves)
+    return model.ledger.close(plan)
 
 
 @dataclass(frozen=True)
@@ -209,6 +215,15 @@ class _Model:
         units = geometry.panels * -(-(geometry.lines // geometry.panels) // UNIT_LINES)
         self.ledger.work("products", self.complex * share * units * geometry.across * block, self.rates.accumulate)
 
+    def _measure(self, panels: float, block: float) -> None:
+        """Units multiplied again, both products in double and the second once more in single."""
+        if self.work == "double":
+            return
+        geometry = self.plan.geometry
+        entries = panels * min(UNIT_LINES, geometry.lines / geometry.panels) * geometry.across
+        for work, flops in (("double", 4), ("single", 2)):
+            self.ledger.work("products", self.complex * flops * entries * block, self.rates.products[work])
+
     def _basis(self, flops: float) -> None:
         """Dense steps of the caller on the basis."""
         self.ledger.wait("dense", self.rates.basis.seconds(self.complex * flops))
@@ -227,6 +242,7 @@ class _Model:
         for product in range(PILOT_PRODUCTS):
             self.convert(share, self.work, energies=product == PILOT_PRODUCTS - 1, sums=False)
             self.products(share, start)
+        self._measure(min(MEASURED_IN_PILOT, len(plan.pilot_panels)), start)
         self.ledger.wait("dense", (PILOT_PRODUCTS + 1) * self.rates.sweep_seconds)
         # Three rounds of 4·n·L² each, for the Gaussian start and after every product; as much again is moved about.
         self._basis(16.0 * PILOT_PRODUCTS * n * start**2)
@@ -253,6 +269,7 @@ class _Model:
             self.read(share)
         self.convert(share, self.work, energies=first, sums=first)
         self.products(share, block)
+        self._measure(share * min(MEASURED_PANELS, plan.geometry.panels), block)
         width = min(stored, max(0.0, plan.widths.limit - block))
         add("fold", self.complex * FOLD_FLOPS * share * m * (width + block) ** 2, rates.fold)
         add("fold", self.complex * 2 * share * m * stored * width, rates.products["double"])
@@ -265,13 +282,20 @@ class _Model:
         self.ledger.wait("waiting", share * rates.sweep_seconds)
 
     def _slices(self) -> None:
-        """Small rectangles of the file, decomposed twice."""
-        spec = self.plan.spec
+        """Small rectangles of the file, decomposed twice; they grow by whole chunks."""
+        spec, axis = self.plan.spec, self.plan.geometry.axis
+        chunk = (min(spec.chunks[axis], spec.shape[axis]), min(spec.chunks[1 - axis], spec.shape[1 - axis]))
         allowed = SLICE_SHARE * self.entries
-        count = min(MOST_SLICES, int(allowed * spec.dtype.itemsize // max(1, chunk_bytes(spec))))
-        if count:
-            share = min(1.0, allowed / count / SLICE_ENTRIES)
-            self.ledger.wait("slices", count * share * self.rates.slice_seconds)
+        count = min(MOST_SLICES, int(allowed // (chunk[0] * chunk[1])))
+        if not count:
+            return
+        entries = min(allowed / count, SLICE_ENTRIES)
+        across = min(max(chunk[1], (entries / 3) ** 0.5), self.plan.geometry.across)
+        lines = min(max(chunk[0], entries / across), self.plan.geometry.lines)
+        # Slices are cut down to no wider than long, or than a restart needs, and to these flops.
+        across = min(across, max(lines, SLICE_ACROSS))
+        flops = min(SLICE_FLOPS, max(lines, across) * min(lines, across) ** 2)
+        self.ledger.wait("slices", count * (self.rates.slice_seconds + self.rates.slice.seconds(self.complex * flops)))
 
     def _store(self, stored: float) -> None:
         """Left vectors from scratch, twice; the result written, and read back."""

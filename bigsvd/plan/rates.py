@@ -61,6 +61,8 @@ class Rates:
         Bytes of Y.
     store : Rate
         Bytes of the result written, checked and read back.
+    slice : Rate
+        Longer side times the square of the shorter, of a slice that is decomposed twice.
     start_seconds, sweep_seconds, slice_seconds, store_seconds : float
         What begins every run; every pass over the panels; every slice; every result.
     """
@@ -86,6 +88,7 @@ class Rates:
     scratch_write: Rate
     scratch_read: Rate
     store: Rate
+    slice: Rate
     start_seconds: float
     sweep_seconds: float
     slice_seconds: float
@@ -150,11 +153,12 @@ NOMINAL = Rates(
     basis=Rate(5e10),
     scratch_write=Rate(1.9e09, 0.11),
     scratch_read=Rate(7.6e09, 0.06),
-    store=Rate(2.5e8),
-    start_seconds=0.3,
+    store=Rate(5e08),
+    slice=Rate(2.5e09),
+    start_seconds=0.35,
     sweep_seconds=0.02,
-    slice_seconds=0.12,
-    store_seconds=0.035,
+    slice_seconds=0.055,
+    store_seconds=0.03,
 )
 
 # A complex multiplication and addition are four of each.

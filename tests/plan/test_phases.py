@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import pytest
 from plan_samples import MIB, free_but, plan_of, spec
 
@@ -103,7 +105,7 @@ def test_products_cost_four_flops_an_entry_and_column_and_four_times_so_many_for
     seconds = {}
     for dtype in ("f4", "c8"):
         plan = plan_of(spec(100_000, 5000, dtype), rank=10, route="krylov")
-        costs = predict(plan, 2, columns=150, single=True, rates=free_but(products={"single": Rate(GB)}))
+        costs = predict(plan, 2, columns=150, single=False, rates=free_but(products={"double": Rate(GB)}))
         pilot = pilot_share(plan) * 4 * plan.widths.start
         seconds[dtype] = costs.shared["products"] / (4 * 100_000 * 5000 * (150 + pilot) / GB)
     assert seconds == pytest.approx({"f4": 1.0, "c8": 4.0})
@@ -111,8 +113,11 @@ def test_products_cost_four_flops_an_entry_and_column_and_four_times_so_many_for
 
 def test_the_precision_decides_the_rate() -> None:
     rates = free_but(products={"single": Rate(2 * GB), "double": Rate(GB)})
-    single, double = (predict(krylov(), 2, single=single, rates=rates).shared["products"] for single in (True, False))
+    single, double = (pass_costs(krylov(), 1, 50, single=one, rates=rates).shared["products"] for one in (True, False))
     assert double == pytest.approx(2 * single)
+    single, double = (predict(krylov(), 2, single=one, rates=rates).shared["products"] for one in (True, False))
+    # In single a few units are multiplied again.
+    assert 0.5 * double < single < 0.6 * double
     assert predict(krylov(), 2, rates=rates).shared["products"] == single
     assert predict(krylov(precision="double"), 2, rates=rates).shared["products"] == double
 
@@ -125,6 +130,15 @@ def test_later_sweeps_fold_and_read_back_more_columns() -> None:
 
 
 # -------------------------------------------------------------------------------------------------------------- pace
+def test_workers_wait_longer_for_the_last_of_few_segments() -> None:
+    rates = free_but(products={"single": Rate(GB)})
+    many, few = krylov(), replace(krylov(), waves=(((0, 1), (1, 2)),))
+    assert sum(map(len, many.waves)) >= 8
+    waiting = [predict(plan, rates=rates).caller["waiting"] for plan in (many, few)]
+    assert waiting[1] == pytest.approx(waiting[0] * sum(map(len, many.waves)) / 2)
+    assert predict(krylov(workers=1), rates=rates).caller["waiting"] == 0
+
+
 def test_the_pace_of_a_machine_changes_its_phases_and_no_others() -> None:
     plan = krylov()
     known, slow = predict(plan).wall, predict(plan, pace={"read": 3.0}).wall

@@ -127,10 +127,8 @@ def test_the_ceiling_that_a_refusal_names_is_enough(matrix: MatrixSpec, request:
     assert f"needs at least {named[1]} MiB" in refusal.problem
     plan = make_plan(matrix, request, ceiling=int(named[1]) * MIB, processors=4)
     assert plan.planned_bytes <= int(named[1]) * MIB
-    cuts = plan.geometry.amplification > 1.05
-    assert cuts == any(
-        "times in every sweep" in line for line in refusal.evidence if "cut chunks" in line and "it would" not in line
-    )
+    assert (plan.geometry.amplification > 1.05) == any("under so little" in line for line in refusal.evidence)
+    assert plan.geometry.amplification <= 1.05 or "every chunk once" not in refusal.problem
 
 
 @many
