@@ -3,14 +3,13 @@
 from __future__ import annotations
 
 import importlib
-import shutil
 import sys
 import tempfile
 import threading
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager, suppress
-from dataclasses import dataclass, fields, replace
+from dataclasses import fields, replace
 from pathlib import Path
 from typing import Any, Literal
 
@@ -21,22 +20,25 @@ from bigsvd.certify import SliceCheck
 from bigsvd.drive import (
     Deadline,
     Forecast,
+    KeptRun,
     Outcome,
     Verification,
     check_slice,
     draw_slices,
+    keep_run,
     make_forecast,
     run,
     run_record,
     spectrum_record,
     verify_factors,
 )
-from bigsvd.errors import NonFiniteError, OptionError
+from bigsvd.errors import OptionError
 from bigsvd.factors import Factors, FactorsWriter, check_output, open_factors, store_cost
-from bigsvd.journal import Journal, RunFolder, discard_finished, identity_of
-from bigsvd.plan import Plan, Request, make_plan
+from bigsvd.journal import check_interval, discard_finished
+from bigsvd.plan import Request, make_plan
+from bigsvd.report import Listeners, watch
 from bigsvd.solve import TallVectors, column_phases
-from bigsvd.source import MatrixSpec, Source, check_complete, open_source
+from bigsvd.source import Access, MatrixSpec, Source, check_complete, open_source
 from bigsvd.sweep import Control, Listener, one_blas_thread
 from bigsvd.units import parse_bytes, parse_deadline, show_bytes
 
@@ -45,7 +47,7 @@ Side = Literal["left", "right"]
 __all__ = ["decompose", "forecast", "open_factors", "open_matrix", "verify"]
 
 
-def open_matrix(path: Any, matrix: str | None = None) -> Source:
+def open_matrix(path: Any, matrix: str | None = None, *, absent: str = "refuse", follow_links: bool = False) -> Source:
     """Open a matrix without reading it.
 
     Parameters
@@ -54,13 +56,25 @@ def open_matrix(path: Any, matrix: str | None = None) -> Source:
         An HDF5 file, a Zarr store, a ``.npy`` file, or an array.
     matrix : str, optional
         Path of the array inside the file; needed where the file holds several.
+    absent : {"refuse", "fill"}
+        Whether chunks that were never written stop the run, or are read as the fill value that the file declares.
+    follow_links : bool
+        Follow links in the file to other files outside its own folder.
 
     Returns
     -------
     Source
         Its ``spec`` says what is there; `decompose` takes it as it takes a path.
     """
-    return path if hasattr(path, "spec") and hasattr(path, "read") else open_source(path, matrix)
+    access = Access(absent, follow_links)
+    if not (hasattr(path, "spec") and hasattr(path, "read")):
+        return open_source(path, matrix, access)
+    if access != Access():
+        raise OptionError(
+            "absent and follow_links were given with a matrix that is open already",
+            remedy="Give them to open_matrix instead.",
+        )
+    return path
 
 
 def decompose(
@@ -68,6 +82,8 @@ def decompose(
     out: str | Path | None = None,
     *,
     matrix: str | None = None,
+    absent: str = "refuse",
+    follow_links: bool = False,
     scratch: str | Path | None = None,
     overwrite: bool = False,
     start_over: bool = False,
@@ -75,6 +91,7 @@ def decompose(
     finish_by: str | float | None = None,
     progress: Listener | None = None,
     planned: Callable[[Forecast], None] | None = None,
+    command: Sequence[str] = (),
     **options: Any,
 ) -> Factors:
     """Compute the leading singular factors of a matrix larger than memory, with a certificate.
@@ -90,21 +107,26 @@ def decompose(
         Folder to be made, a Zarr store; None keeps the factors in memory.
     matrix : str, optional
         Path of the array inside the file.
+    absent, follow_links
+        As for `open_matrix`; what is filled is recorded in the result.
     scratch : path, optional
         Folder for the tall products (samples × a few hundred columns); beside `out` by default.
     overwrite : bool
         Replace an earlier result at `out`, once the new one is complete.
     start_over : bool
-        Discard an unfinished run at `out` instead of going on with it.
+        Discard an unfinished run at `out`. Without it the same call goes on where that was cut, with the same bits.
     save_every : float
         Seconds between two savings of what was added up so far; a run that was cut goes on from the last.
     finish_by : str or float, optional
         When the result is to be in place: ``"06:30"``, ``"2026-12-02T06:30"``, a duration such as ``"8h"``, or seconds.
         What the last whole sweep certified is then written, and the journal kept.
     progress : callable, optional
-        Called with a `bigsvd.sweep.Progress` at least once per panel, from any thread.
+        Called with a `bigsvd.sweep.Progress` at least once per panel, from any thread; raises
+        `bigsvd.sweep.StoppedError` to stop the run, which is then kept.
     planned : callable, optional
         Called with the `Forecast` once it is made, before the run begins.
+    command : sequence of str, optional
+        The command line that asks for this, for the log and for whoever finds the run unfinished.
     **options
         rank : int, default 50
             Components, clipped to min(m, n).
@@ -138,7 +160,8 @@ def decompose(
     Raises
     ------
     OptionError, SourceError, NonFiniteError, ResultError
-        See `bigsvd.errors`; nothing is left behind and an earlier result stays as it was.
+        See `bigsvd.errors`; an earlier result stays as it was. Where a run from a file was cut, OUT.run and OUT.log
+        stay beside `out` (docs/overnight.md); nothing else is left behind.
 
     Examples
     --------
@@ -152,25 +175,32 @@ def decompose(
     True
     """
     started = time.perf_counter()
-    opened = open_matrix(source, matrix)
+    opened = open_matrix(source, matrix, absent=absent, follow_links=follow_links)
     own = opened is not source
     target = None if out is None else Path(out)
-    control = Control(progress)
+    listeners = Listeners(progress)
+    control = Control(listeners)
     until = None if finish_by is None else parse_deadline(finish_by, time.time())
+    check_interval(save_every)
     _load_meanwhile()
     try:
         with _environment() as held_before:
             if target is not None:
                 discard_finished(target)
                 check_output(target, overwrite=overwrite, source_path=_path_of(source))
+            check_complete(opened)
             foreseen = _foresee(opened, options, control, probe=True)
             plan = foreseen.plan
             if planned is not None:
                 planned(foreseen)
-            check_complete(opened)
             folder = _scratch_folder(scratch, target)
-            _require_scratch_space(folder, plan)
-            with _journal(target, plan, scratch, control, start_over, save_every) as kept:
+            with (
+                keep_run(
+                    target, plan, folder, control, own_scratch=scratch is not None, start_over=start_over,
+                    save_every=save_every, command=command,
+                ) as kept,
+                watch(listeners, foreseen, kept, control, command) as watching,
+            ):  # fmt: skip
                 outcome = run(
                     opened, plan, control, kept.scratch if kept else folder, kept.journal if kept else None,
                     _deadline(until, foreseen),
@@ -178,6 +208,7 @@ def decompose(
                 try:
                     checks = _check_slices(opened, outcome, kept.folder.path if kept else folder, control)
                     factors = _write(target, outcome, checks, foreseen, control, overwrite, started, held_before, kept)
+                    watching.take(factors.certificate)
                     if kept is not None and outcome.out_of_time:
                         kept.folder.stay()
                     return factors
@@ -188,21 +219,30 @@ def decompose(
             opened.close()
 
 
-def forecast(source: Any, *, matrix: str | None = None, progress: Listener | None = None, **options: Any) -> Forecast:
+def forecast(
+    source: Any,
+    *,
+    matrix: str | None = None,
+    absent: str = "refuse",
+    follow_links: bool = False,
+    progress: Listener | None = None,
+    **options: Any,
+) -> Forecast:
     """Say what `decompose` would do with the same options, and what it would cost; reads no more than a probe.
 
     Parameters
     ----------
-    source, matrix, progress, **options
+    source, matrix, absent, follow_links, progress, **options
         As for `decompose`.
 
     Returns
     -------
     Forecast
     """
-    opened = open_matrix(source, matrix)
+    opened = open_matrix(source, matrix, absent=absent, follow_links=follow_links)
     try:
         with _environment():
+            check_complete(opened)
             return _foresee(opened, options, Control(progress), probe=True)
     finally:
         if opened is not source:
@@ -214,6 +254,8 @@ def verify(
     source: Any = None,
     *,
     matrix: str | None = None,
+    absent: str = "refuse",
+    follow_links: bool = False,
     memory: int | str | None = None,
     workers: int | None = None,
     seed: int | None = None,
@@ -229,7 +271,7 @@ def verify(
         The matrix it was made from.
     matrix : str, optional
         Path of the array inside the file.
-    memory, workers
+    absent, follow_links, memory, workers
         As for `decompose`.
     seed : int, optional
         Of the fresh slices; another than the run's by default.
@@ -244,9 +286,10 @@ def verify(
     control = Control(progress)
     if source is None:
         return verify_factors(factors, None, None, control, Path(tempfile.gettempdir()), seed, started)
-    opened = open_matrix(source, matrix)
+    opened = open_matrix(source, matrix, absent=absent, follow_links=follow_links)
     try:
         with _environment():
+            check_complete(opened)
             made_with = factors.attributes["request"] | {"rank": factors.rank, "variance": None}
             request = _request({**made_with, "memory": memory, "workers": workers})
             plan = make_plan(
@@ -278,45 +321,6 @@ def _deadline(until: float | None, foreseen: Forecast) -> Deadline | None:
         return None
     wall = foreseen.costs().wall
     return Deadline(until, wall["slices"] + wall["store"])
-
-
-@dataclass(frozen=True)
-class _Kept:
-    """The folder of the run and what it keeps there."""
-
-    folder: RunFolder
-    journal: Journal
-
-    @property
-    def scratch(self) -> Path:
-        """Where the tall products go."""
-        return self.folder.scratch
-
-
-@contextmanager
-def _journal(
-    out: Path | None, plan: Plan, scratch: str | Path | None, control: Control, start_over: bool, save_every: float
-) -> Iterator[_Kept | None]:
-    """The run's folder beside its result, kept when the run is cut; None where it could not be gone on with.
-
-    An array in memory or a graph has no fingerprint: nothing would show that it is still the same.
-    """
-    if out is None or not plan.spec.fingerprint:
-        yield None
-        return
-    folder = RunFolder(out, identity_of(plan), None if scratch is None else Path(scratch))
-    folder.open(start_over=start_over)
-    keep = False
-    try:
-        yield _Kept(folder, Journal(folder.path, control, every=save_every))
-    except (OptionError, NonFiniteError):
-        # The same command would end the same way.
-        raise
-    except BaseException:
-        keep = folder.holds_sums()
-        raise
-    finally:
-        folder.close(keep=keep)
 
 
 @contextmanager
@@ -378,24 +382,6 @@ def _scratch_folder(scratch: str | Path | None, out: Path | None) -> Path:
     return Path(tempfile.gettempdir()) if out is None else out.expanduser().resolve().parent
 
 
-def _require_scratch_space(folder: Path, plan: Plan) -> None:
-    """Refuse before reading when the tall products of the expected sweeps would fill the device."""
-    needed = plan.scratch_bytes
-    try:
-        free = shutil.disk_usage(folder).free
-    except OSError as error:
-        raise OptionError(
-            f"the scratch folder {folder} cannot be used",
-            evidence=[str(error)],
-            remedy="Give --scratch a folder that exists.",
-        ) from error
-    if free < needed:
-        raise OptionError(
-            f"scratch needs about {show_bytes(needed)}, and {folder} has {show_bytes(free)} free",
-            remedy="Give --scratch a folder on a larger device.",
-        )
-
-
 def _check_slices(source: Source, outcome: Outcome, folder: Path, control: Control) -> tuple[SliceCheck, ...]:
     """The exact check on slices of the user's own file."""
     plan = outcome.plan
@@ -417,7 +403,7 @@ def _write(
     overwrite: bool,
     started: float,
     held_before: int,
-    kept: _Kept | None,
+    kept: KeptRun | None,
 ) -> Factors:
     """Write the factors: tall vectors from scratch, the others from memory, then everything that is known of them."""
     plan, certificate = outcome.plan, outcome.certificate

@@ -48,6 +48,18 @@ def matrix_option(command: Command) -> Command:
     return click.option("--matrix", metavar="PATH", help=text)(command)
 
 
+def links_option(command: Command) -> Command:
+    """Add ``--follow-links``."""
+    text = "Follow links in FILE to other files outside its own folder; inspect lists them."
+    return click.option("--follow-links", is_flag=True, default=None, help=text)(command)
+
+
+def reading_options(command: Command) -> Command:
+    """Add ``--absent`` and ``--follow-links``."""
+    text = "What to do with chunks that were never written: stop, or read the fill value.  [default: refuse]"
+    return click.option("--absent", type=click.Choice(["refuse", "fill"]), help=text)(links_option(command))
+
+
 def machine_options(command: Command) -> Command:
     """Add ``--memory`` and ``--workers``."""
     workers = "Threads; they change the time, not the bits.  [default: one per processor, as memory allows]"
@@ -75,6 +87,7 @@ def _number(name: str, kind: type, metavar: str, text: str) -> Callable[[Any], A
 
 _DECOMPOSITION: tuple[Callable[[Any], Any], ...] = (
     matrix_option,
+    reading_options,
     _number("--rank", int, "K", "Components to compute.  [default: 50]"),
     _number("--variance", float, "SHARE", "Instead of a rank: the share of the total variance to reach, such as 0.95."),
     _number("--max-rank", int, "K", "Most components that --variance may lead to.  [default: 500]"),

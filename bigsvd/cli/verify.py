@@ -13,6 +13,7 @@ from bigsvd.cli.options import (
     output_options,
     print_lines,
     progress_stream,
+    reading_options,
     text_width,
 )
 from bigsvd.cli.program import MET, NOT_MET, print_json, report_error
@@ -23,6 +24,7 @@ from bigsvd.errors import DamagedResultError
 @click.argument("store", metavar="OUT.zarr")
 @click.argument("file", required=False)
 @matrix_option
+@reading_options
 @machine_options
 @click.option("--seed", type=int, metavar="N", help="Of the fresh slices.  [default: another than the run's]")
 @output_options

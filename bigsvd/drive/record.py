@@ -68,6 +68,7 @@ def run_record(
             "decoded_bytes": spec.decoded_bytes,
             "stored_bytes": spec.stored_bytes,
             "fingerprint": spec.fingerprint,
+            "absent": None if spec.absent is None else asdict(spec.absent),
         },
         "preparation": {
             "words": plan.orientation_words(),

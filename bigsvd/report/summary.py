@@ -52,6 +52,10 @@ def summary_lines(certificate: Certificate, attributes: Mapping[str, Any], out: 
         ("matrix", f"{source['name']}: {show_shape(tuple(source['shape']))} {source['dtype']}"),
         ("", attributes["preparation"]["words"]),
     ]
+    absent = source.get("absent")
+    if absent:
+        filled = f"{show_count(absent['chunks'])} of {show_count(absent['of'])} chunks were never written"
+        head.append(("", f"{filled} and were read as {absent['read_as']}"))
     constant = attributes["preparation"].get("constant_features") or 0
     if constant:
         head.append(

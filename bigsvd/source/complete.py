@@ -2,15 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
+from dataclasses import replace
 from typing import Protocol, runtime_checkable
 
 import numpy as np
 
 from bigsvd.errors import DamagedSourceError
+from bigsvd.source.access import Access
+from bigsvd.source.fill import FillError
 from bigsvd.source.rectangle import show_chunk
-from bigsvd.source.spec import MatrixSpec, Source
-from bigsvd.units import show_count
+from bigsvd.source.spec import Absent, MatrixSpec, Source, count_absent
+from bigsvd.source.stamp import digest
 
 SHOWN = 3
 
@@ -20,7 +23,7 @@ class Stored(Protocol):
     """A source whose stored parts can be counted without reading them."""
 
     def require_complete(self) -> None:
-        """Refuse a matrix of which parts are absent."""
+        """Refuse a matrix of which parts are absent, or note those that the user accepts in its spec."""
         ...
 
 
@@ -30,13 +33,15 @@ def check_complete(source: Source) -> None:
     Parameters
     ----------
     source : Source
-        Arrays in memory and dask arrays are complete by nature.
+        Arrays in memory and dask arrays are complete by nature. Where it was opened with ``absent="fill"``, chunks
+        that were never written are counted in ``source.spec.absent`` instead; other files must be complete all the
+        same.
 
     Raises
     ------
     DamagedSourceError
         If chunks, shards, chunks inside a shard, external files or sources of a virtual dataset are absent or
-        short; counts them and names the first.
+        short; counts them and names the first. If they are to be filled, and the fill value is no finite entry.
     SourceChangedError
         If the file is not the one that was opened.
 
@@ -49,30 +54,57 @@ def check_complete(source: Source) -> None:
         source.require_complete()
 
 
-def refuse_absent(absent: np.ndarray, spec: MatrixSpec, chunks: tuple[int, int], meant: str) -> None:
-    """Raise if any chunk of a grid is marked as absent; `meant` is the remedy if it holds only the fill value."""
-    if absent.any():
-        raise absent_error(
-            spec,
-            count_absent(int(np.count_nonzero(absent)), f"{show_count(absent.size)} chunks"),
-            [show_chunk(place, spec.shape, chunks) for place in first_places(absent)],
-            meant,
-        )
-
-
-def count_absent(count: int, whole: str) -> str:
-    """Say how many of the whole are absent.
-
-    >>> count_absent(1, "80 chunks")
-    '1 of 80 chunks is absent'
-    """
-    return f"{show_count(count)} of {whole} {'is' if count == 1 else 'are'} absent"
+def first_chunks(absent: np.ndarray, spec: MatrixSpec, chunks: tuple[int, int]) -> list[str]:
+    """Places of the first marked chunks of a grid, in storage order."""
+    return [show_chunk(place, spec.shape, chunks) for place in first_places(absent)]
 
 
 def first_places(marked: np.ndarray) -> list[tuple[int, int]]:
     """Coordinates of the first marked chunks, in storage order."""
     columns = marked.shape[1]
     return [(int(n) // columns, int(n) % columns) for n in np.flatnonzero(marked)[:SHOWN]]
+
+
+def settle_absent(
+    spec: MatrixSpec,
+    count: int,
+    of: int,
+    places: Sequence[str],
+    access: Access,
+    fill: Callable[[], np.generic],
+    meant: str,
+) -> MatrixSpec:
+    """Refuse absent chunks, or note in the spec that they are read as the fill value.
+
+    Parameters
+    ----------
+    spec : MatrixSpec
+    count, of : int
+        Absent chunks, and all there should be; 0 returns the spec as it is.
+    places : sequence of str
+        Where the first of them lie.
+    access : Access
+    fill : callable
+        Returns the fill value; raises `FillError`.
+    meant : str
+        How to write them, if they hold only the fill value.
+    """
+    if not count:
+        return spec
+    if not access.fills:
+        raise absent_error(spec, count_absent(count, of), places, meant)
+    try:
+        value = fill()
+    except FillError as error:
+        raise DamagedSourceError(
+            f"{spec.name} is not complete: {count_absent(count, of)}, and cannot be filled",
+            evidence=[str(error), *(f"absent: {place}" for place in places)],
+            remedy=f"Leave out --absent fill, and {meant}",
+        ) from error
+    absent = Absent(count, of, tuple(places), str(value))
+    # Chunks that turn up later make another matrix.
+    fingerprint = digest(spec.fingerprint, absent)
+    return replace(spec, absent=absent, cautions=(*spec.cautions, absent.words), fingerprint=fingerprint)
 
 
 def absent_error(spec: MatrixSpec, count: str, places: Sequence[str], meant: str) -> DamagedSourceError:
@@ -86,5 +118,6 @@ def absent_error(spec: MatrixSpec, count: str, places: Sequence[str], meant: str
             ),
             "an absent chunk would be read as the fill value; one left out on purpose cannot be told from a lost one",
         ],
-        remedy=f"Copy the data again from its origin. If those chunks are meant to hold only the fill value: {meant}",
+        remedy="Copy the data again from its origin. If those chunks are meant to hold only the fill value: add"
+        f" --absent fill, or {meant}",
     )

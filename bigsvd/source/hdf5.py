@@ -10,8 +10,10 @@ from typing import Any
 import numpy as np
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, UnsupportedMatrixError
+from bigsvd.source.access import STRICT, Access
 from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
 from bigsvd.source.entries import decoded_type, pair_view, type_caution
+from bigsvd.source.fill import FillError, hdf5_fill
 from bigsvd.source.hdf5_complete import locate, require_complete
 from bigsvd.source.hdf5_dataset import describe, missing_filters, unapplied_attributes
 from bigsvd.source.hdf5_direct import DirectReader, Fill, decodes_directly, direct_reader, plain_type
@@ -42,11 +44,14 @@ class Hdf5Source:
         Absolute path of the file.
     dataset : str
         Path of a two-dimensional dataset of numbers inside it.
+    access : Access
+        Whether chunks that were never written are filled, and links followed out of the folder.
     """
 
-    def __init__(self, path: str, dataset: str) -> None:
+    def __init__(self, path: str, dataset: str, access: Access = STRICT) -> None:
         self.path = path
         self.dataset = dataset
+        self.access = access
         self._forget()
         self.stamps: tuple[FileStamp, ...] = (FileStamp.of(path),)
         with library_errors_named(f"{path}:{dataset}"), open_hdf5(path) as file:
@@ -62,7 +67,7 @@ class Hdf5Source:
         self._process = 0
 
     def __getstate__(self) -> dict[str, Any]:
-        return {name: getattr(self, name) for name in ("path", "dataset", "stamps", "spec")}
+        return {name: getattr(self, name) for name in ("path", "dataset", "access", "stamps", "spec")}
 
     def __setstate__(self, state: dict[str, Any]) -> None:
         self.__dict__.update(state)
@@ -85,9 +90,19 @@ class Hdf5Source:
                     file, descriptor = open_hdf5(self.path), Descriptor(self.path)
                     dataset = open_dataset(file, self.dataset, os.path.dirname(self.path))
                     library = library_reader(dataset)
-                    direct = direct_reader(dataset, descriptor.number, library)
+                    direct = direct_reader(dataset, descriptor.number, library, self._fill_value(dataset))
                     self._handles = file, descriptor, dataset, direct.fill if direct else library, direct
             return self._handles[2], self._handles[3]
+
+    def _fill_value(self, dataset: Any) -> np.generic | None:
+        """What chunks that were never written are read as, if they may be."""
+        if not self.access.fills:
+            return None
+        try:
+            return hdf5_fill(dataset, self.spec.dtype)
+        except FillError:
+            # It matters only where a chunk is absent, and then `require_complete` says so.
+            return None
 
     def close(self) -> None:
         """Release the file. Reading again opens it again."""
@@ -128,8 +143,10 @@ class Hdf5Source:
         """Look for parts that are absent; see `check_complete`."""
         self._require_unchanged()
         dataset, _ = self._opened()
+        if self.spec.absent is not None:
+            return
         with library_errors_named(self.spec.name):
-            require_complete(dataset, self.spec, os.path.dirname(self.path))
+            self.spec = require_complete(dataset, self.spec, os.path.dirname(self.path), self.access)
 
     def _damage(self, fill: Fill, rows: Span, columns: Span, error: Exception) -> DamagedSourceError:
         """Name the first chunk of the rectangle that does not decode, and say what is wrong with it."""

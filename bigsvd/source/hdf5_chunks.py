@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from bigsvd.source.rectangle import grid_shape
+from bigsvd.source.rectangle import grid_shape, require_countable
 
 # Beyond this the table would take more than 40 MB beside the panels, and the library keeps the places.
 MOST_CHUNKS = 2_000_000
@@ -54,9 +54,16 @@ class ChunkTable:
         return int(self.offset[i, j]), int(self.size[i, j]), int(self.skipped[i, j])
 
 
-def absent_chunks(dataset: Any) -> np.ndarray:
-    """Mark the chunks that were never written; shape (chunk rows, chunk columns), a byte a chunk."""
+def absent_chunks(dataset: Any, name: str) -> np.ndarray:
+    """Mark the chunks that were never written; shape (chunk rows, chunk columns), a byte a chunk.
+
+    Raises
+    ------
+    UnsupportedMatrixError
+        If there are too many to be looked at one by one.
+    """
     chunks = dataset.chunks
+    require_countable(grid_shape(dataset.shape, chunks), name)
     absent = np.ones(grid_shape(dataset.shape, chunks), np.bool_)
 
     def note(chunk: Any) -> None:

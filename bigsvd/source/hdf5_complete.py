@@ -7,7 +7,9 @@ import os
 from typing import Any
 
 from bigsvd.errors import DamagedSourceError, SourceError, UnsupportedMatrixError
-from bigsvd.source.complete import SHOWN, absent_error, refuse_absent
+from bigsvd.source.access import Access
+from bigsvd.source.complete import SHOWN, first_chunks, settle_absent
+from bigsvd.source.fill import hdf5_fill
 from bigsvd.source.hdf5_chunks import absent_chunks
 from bigsvd.source.hdf5_file import open_hdf5
 from bigsvd.source.rectangle import grid_shape
@@ -17,7 +19,7 @@ from bigsvd.units import show_count, show_shape
 MEANT = "write the dataset again in full, zeros included."
 
 
-def require_complete(dataset: Any, spec: MatrixSpec, folder: str) -> None:
+def require_complete(dataset: Any, spec: MatrixSpec, folder: str, access: Access) -> MatrixSpec:
     """Refuse a dataset of which parts are absent, without reading entries.
 
     Parameters
@@ -25,20 +27,36 @@ def require_complete(dataset: Any, spec: MatrixSpec, folder: str) -> None:
     dataset : h5py.Dataset
         Two-dimensional.
     spec : MatrixSpec
-        For the names in messages.
+        What is known of it.
     folder : str
         Where the file lies: other files are named relative to it.
+    access : Access
+
+    Returns
+    -------
+    MatrixSpec
+        With the absent chunks that are to be filled.
     """
     if dataset.is_virtual:
         _require_sources(dataset, spec, folder)
-    elif dataset.external:
+        return spec
+    if dataset.external:
         _require_external(dataset, spec, folder)
-    elif dataset.chunks is not None:
-        grid = math.prod(grid_shape(dataset.shape, dataset.chunks))
-        if dataset.id.get_num_chunks() < grid:
-            refuse_absent(absent_chunks(dataset), spec, dataset.chunks, MEANT)
-    elif dataset.id.get_storage_size() == 0:
-        raise absent_error(spec, "its space in the file was set aside but never written", [], MEANT)
+        return spec
+    count, grid, places = count_never_written(dataset, spec)
+    return settle_absent(spec, count, grid, places, access, lambda: hdf5_fill(dataset, spec.dtype), MEANT)
+
+
+def count_never_written(dataset: Any, spec: MatrixSpec) -> tuple[int, int, list[str]]:
+    """How many chunks were never written, of how many, and where the first of them lie."""
+    if dataset.chunks is None:
+        # Space is set aside at the first writing: none of it, or all.
+        return int(dataset.id.get_storage_size() == 0), 1, ["all of it: its space in the file was never written"]
+    grid = math.prod(grid_shape(dataset.shape, dataset.chunks))
+    if dataset.id.get_num_chunks() >= grid:
+        return 0, grid, []
+    absent = absent_chunks(dataset, spec.name)
+    return int(absent.sum()), grid, first_chunks(absent, spec, dataset.chunks)
 
 
 def locate(name: str, folder: str) -> str:
@@ -92,11 +110,11 @@ def _require_sources(dataset: Any, spec: MatrixSpec, folder: str) -> None:
         )
     # Mappings written by one program do not overlap; fewer entries than the matrix has means a hole.
     if covered < math.prod(dataset.shape):
-        raise absent_error(
-            spec,
-            f"its sources cover {show_count(covered)} of {show_count(math.prod(dataset.shape))} entries",
-            [],
-            MEANT,
+        raise DamagedSourceError(
+            f"{spec.name} is not complete: its sources cover {show_count(covered)} of"
+            f" {show_count(math.prod(dataset.shape))} entries",
+            evidence=["what no source covers would be read as the fill value"],
+            remedy=f"Copy the data again from its origin, or {MEANT}",
         )
 
 

@@ -42,9 +42,7 @@ class DirectReader:
     announce: Callable[[Span, Span], None]
 
 
-def direct_reader(
-    dataset: Any, descriptor: int, library: Fill, fill: np.generic | None = None
-) -> DirectReader | None:
+def direct_reader(dataset: Any, descriptor: int, library: Fill, fill: np.generic | None = None) -> DirectReader | None:
     """Choose the way past the library; None where type, layout or filters do not allow it.
 
     Parameters
@@ -112,9 +110,7 @@ def plain_type(dataset: Any) -> np.dtype | None:
 class _ChunkReader:
     """Reads and decodes whole chunks; threads share the table of their places, and borrow buffers."""
 
-    def __init__(
-        self, dataset: Any, stored: np.dtype, descriptor: int, library: Fill, fill: np.generic | None
-    ) -> None:
+    def __init__(self, dataset: Any, stored: np.dtype, descriptor: int, library: Fill, fill: np.generic | None) -> None:
         self._absent_value = fill
         self._descriptor = descriptor
         self._library = library

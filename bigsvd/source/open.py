@@ -9,12 +9,13 @@ from typing import Any
 import numpy as np
 
 from bigsvd.errors import NoMatrixError, UnsupportedMatrixError
+from bigsvd.source.access import STRICT, Access
 from bigsvd.source.candidate import SPARSE_TYPES, Candidate, choose, listing
 from bigsvd.source.container import container
 from bigsvd.source.spec import Source
 
 
-def open_source(where: Any, matrix: str | None = None) -> Source:
+def open_source(where: Any, matrix: str | None = None, access: Access = STRICT) -> Source:
     """Open a matrix for reading in rectangles.
 
     Parameters
@@ -23,6 +24,8 @@ def open_source(where: Any, matrix: str | None = None) -> Source:
         A file or directory is recognised by its content. Datasets and Zarr arrays are opened again by their address.
     matrix : str, optional
         Path of the array inside the file; needed where the file holds several.
+    access : Access
+        Whether chunks that were never written are filled, and links followed out of the file's own folder.
 
     Returns
     -------
@@ -43,22 +46,24 @@ def open_source(where: Any, matrix: str | None = None) -> Source:
         path = _absolute(where)
         # Below a folder without metadata an array may still lie where it is said to lie.
         kind = "zarr" if matrix is not None and path.is_dir() else container(path)
-        return _OPENERS[kind](str(path), matrix)
+        return _OPENERS[kind](str(path), matrix, access)
     if matrix is not None:
         raise UnsupportedMatrixError(
             f"matrix={matrix!r} names an array inside a file, but what was given is {type(where).__name__}",
             remedy="Leave out matrix=, or give the path of the file.",
         )
-    return _from_object(where)
+    return _from_object(where, access)
 
 
-def survey(where: str | os.PathLike[str]) -> list[Candidate]:
+def survey(where: str | os.PathLike[str], access: Access = STRICT) -> list[Candidate]:
     """List every array in a file, whether it can be decomposed or not.
 
     Parameters
     ----------
     where : path
         File or directory.
+    access : Access
+        Whether links are followed out of the file's own folder.
 
     Returns
     -------
@@ -71,14 +76,14 @@ def survey(where: str | os.PathLike[str]) -> list[Candidate]:
         If the path holds nothing that can be read.
     """
     path = _absolute(where)
-    return _SURVEYORS[container(path)](str(path))
+    return _SURVEYORS[container(path)](str(path), access)
 
 
 def _absolute(where: str | os.PathLike[str]) -> Path:
     return Path(os.path.abspath(os.path.expanduser(os.fspath(where))))
 
 
-def _from_object(thing: Any) -> Source:
+def _from_object(thing: Any, access: Access) -> Source:
     """Tell a type by where its class comes from, so that no library is loaded to ask."""
     origin = type(thing).__module__.split(".")[0]
     if isinstance(thing, np.ndarray):
@@ -94,11 +99,11 @@ def _from_object(thing: Any) -> Source:
             raise NoMatrixError(
                 "the h5py dataset belongs to a file that is closed", remedy="Give the path of the file."
             )
-        return _open_hdf5(os.path.abspath(thing.file.filename), thing.name)
+        return _open_hdf5(os.path.abspath(thing.file.filename), thing.name, access)
     if origin == "zarr" and hasattr(thing, "chunks"):
         root = getattr(thing.store, "root", None) or getattr(thing.store, "path", None)
         if isinstance(root, (str, os.PathLike)) and os.path.exists(root):
-            return _open_zarr(os.path.abspath(root), thing.path or None)
+            return _open_zarr(os.path.abspath(root), thing.path or None, access)
         raise UnsupportedMatrixError(
             f"a Zarr array in a {type(thing.store).__name__} cannot be opened again by its address",
             remedy="Give a store in a local directory or zip file, or the entries themselves: array[:].",
@@ -111,7 +116,7 @@ def _from_object(thing: Any) -> Source:
     )
 
 
-def _open_hdf5(path: str, matrix: str | None) -> Source:
+def _open_hdf5(path: str, matrix: str | None, access: Access) -> Source:
     from bigsvd.source.hdf5 import Hdf5Source
     from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
     from bigsvd.source.hdf5_walk import is_sparse, walk_hdf5
@@ -134,7 +139,7 @@ def _open_hdf5(path: str, matrix: str | None) -> Source:
                 inside = choose(walk_hdf5(file, inside), f"{path}:{inside}").path
             elif not isinstance(thing, h5py.Dataset):
                 raise NoMatrixError(f"{path}:{inside} is a type definition, not an array", remedy="Name an array.")
-    return Hdf5Source(path, inside)
+    return Hdf5Source(path, inside, access)
 
 
 def _object_at(file: Any, inside: str, path: str) -> Any:
@@ -150,7 +155,7 @@ def _object_at(file: Any, inside: str, path: str) -> Any:
         ) from error
 
 
-def _survey_hdf5(path: str) -> list[Candidate]:
+def _survey_hdf5(path: str, access: Access) -> list[Candidate]:
     from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
     from bigsvd.source.hdf5_walk import walk_hdf5
 
@@ -158,7 +163,7 @@ def _survey_hdf5(path: str) -> list[Candidate]:
         return walk_hdf5(file)
 
 
-def _open_zarr(path: str, matrix: str | None) -> Source:
+def _open_zarr(path: str, matrix: str | None, access: Access) -> Source:
     from bigsvd.source.zarr_array import ZarrSource
     from bigsvd.source.zarr_metadata import read_metadata
     from bigsvd.source.zarr_store import open_keys
@@ -167,7 +172,7 @@ def _open_zarr(path: str, matrix: str | None) -> Source:
     keys = open_keys(path)
     start = (matrix or "").strip("/")
     if read_metadata(keys, start) is not None:
-        return ZarrSource(path, start)
+        return ZarrSource(path, start, access)
     if start and next(iter(keys.children(start)), None) is None:
         raise NoMatrixError(
             f"{path} holds nothing under {start}",
@@ -179,17 +184,17 @@ def _open_zarr(path: str, matrix: str | None) -> Source:
             f"{path}:{start} is a sparse group; sparse groups are not read yet",
             remedy="Name a dense matrix, or store this one dense.",
         )
-    return ZarrSource(path, choose(walk_zarr(keys, start), f"{path}:{start}" if start else path).path)
+    return ZarrSource(path, choose(walk_zarr(keys, start), f"{path}:{start}" if start else path).path, access)
 
 
-def _survey_zarr(path: str) -> list[Candidate]:
+def _survey_zarr(path: str, access: Access) -> list[Candidate]:
     from bigsvd.source.zarr_store import open_keys
     from bigsvd.source.zarr_walk import walk_zarr
 
     return walk_zarr(open_keys(path))
 
 
-def _open_npy(path: str, matrix: str | None) -> Source:
+def _open_npy(path: str, matrix: str | None, access: Access) -> Source:
     from bigsvd.source.npy import NpySource
 
     if matrix is not None:
@@ -200,7 +205,7 @@ def _open_npy(path: str, matrix: str | None) -> Source:
     return NpySource(path)
 
 
-def _survey_npy(path: str) -> list[Candidate]:
+def _survey_npy(path: str, access: Access) -> list[Candidate]:
     from bigsvd.source.npy import describe_npy
 
     return [describe_npy(path)]

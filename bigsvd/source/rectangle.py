@@ -6,11 +6,14 @@ from collections.abc import Callable, Iterator
 
 import numpy as np
 
+from bigsvd.errors import UnsupportedMatrixError
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.units import show_count
 
 Span = tuple[int, int]
 BAND_BYTES = 4 * 2**20
+# Marks of chunks that are there take a byte each; beyond this, more than 100 MB.
+MOST_MARKED = 100_000_000
 
 
 def require_rectangle(spec: MatrixSpec, rows: Span, columns: Span, out: np.ndarray) -> None:
@@ -46,6 +49,15 @@ def clip(position: int, chunk: int, span: Span) -> Span:
 def grid_shape(shape: tuple[int, int], chunks: tuple[int, int]) -> tuple[int, int]:
     """Number of chunks along each axis."""
     return -(-shape[0] // chunks[0]), -(-shape[1] // chunks[1])
+
+
+def require_countable(grid: tuple[int, int], name: str) -> None:
+    """Refuse a grid of more chunks than can be marked in memory, whatever the metadata say."""
+    if grid[0] * grid[1] > MOST_MARKED:
+        raise UnsupportedMatrixError(
+            f"{name} has {show_count(grid[0] * grid[1])} chunks, more than the {show_count(MOST_MARKED)} handled here",
+            remedy="Write it again in chunks of about a megabyte.",
+        )
 
 
 def fill_by_bands(

@@ -7,6 +7,42 @@ from typing import Protocol
 
 import numpy as np
 
+from bigsvd.units import show_count
+
+
+@dataclass(frozen=True)
+class Absent:
+    """Chunks that were never written and are read as the fill value, because the user accepts them.
+
+    Attributes
+    ----------
+    chunks, of : int
+        How many, and how many there should be; of sharded arrays the chunks inside shards.
+    first : tuple of str
+        Places of the first of them.
+    read_as : str
+        The fill value.
+    """
+
+    chunks: int
+    of: int
+    first: tuple[str, ...]
+    read_as: str
+
+    @property
+    def words(self) -> str:
+        """All of it in one line."""
+        return f"{count_absent(self.chunks, self.of)} and read as {self.read_as}; first {self.first[0]}"
+
+
+def count_absent(count: int, of: int) -> str:
+    """Say how many of all chunks are absent.
+
+    >>> count_absent(1, 80)
+    '1 of 80 chunks is absent'
+    """
+    return f"{show_count(count)} of {show_count(of)} chunks {'is' if count == 1 else 'are'} absent"
+
 
 @dataclass(frozen=True)
 class MatrixSpec:
@@ -42,6 +78,8 @@ class MatrixSpec:
         What a reader of the plan should know about how entries are read, such as attributes that are not applied.
     decode_bytes : int
         Most bytes that a thread holds beside its panel once it has read: buffers are kept for its next read.
+    absent : Absent or None
+        Chunks that `check_complete` found absent and the user accepts.
     """
 
     name: str
@@ -57,6 +95,7 @@ class MatrixSpec:
     cautions: tuple[str, ...] = ()
     codecs: tuple[str, ...] = ()
     decode_bytes: int = 0
+    absent: Absent | None = None
 
     @property
     def decoded_bytes(self) -> int:

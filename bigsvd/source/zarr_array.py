@@ -10,14 +10,16 @@ from typing import Any
 import numpy as np
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, UnsupportedMatrixError
+from bigsvd.source.access import STRICT, Access
 from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
-from bigsvd.source.complete import SHOWN, absent_error, count_absent, refuse_absent
+from bigsvd.source.complete import absent_error, settle_absent
 from bigsvd.source.entries import decoded_type, type_caution
+from bigsvd.source.fill import zarr_fill
 from bigsvd.source.hdf5_dataset import unapplied_attributes
 from bigsvd.source.rectangle import Span, clip, require_rectangle, show_chunk, show_place, touched
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
-from bigsvd.source.zarr_complete import absent_inside, absent_keys, other_names
+from bigsvd.source.zarr_complete import AbsentChunks, absent_keys, count_absent_chunks, other_names
 from bigsvd.source.zarr_direct import ChunkAbsentError, ZarrFiles
 from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
 from bigsvd.source.zarr_read import Reader, open_zarr, python_reader
@@ -26,6 +28,7 @@ from bigsvd.source.zarr_walk import describe_zarr, group_attributes, stored_byte
 from bigsvd.units import show_shape
 
 MEANT = "write the array again with write_empty_chunks=True."
+_STATE = ("path", "inside", "access", "spec", "stamps", "metadata", "_absent")
 
 
 class ZarrSource:
@@ -37,11 +40,15 @@ class ZarrSource:
         Absolute path of a store: a directory or a zip file.
     inside : str
         Path of a two-dimensional array of numbers inside it; empty where the store is that array.
+    access : Access
+        Whether chunks that were never written are filled, and links followed out of the store.
     """
 
-    def __init__(self, path: str, inside: str) -> None:
+    def __init__(self, path: str, inside: str, access: Access = STRICT) -> None:
         self.path = path
         self.inside = inside
+        self.access = access
+        self._absent: AbsentChunks | None = None
         self._forget()
         self.keys: KeyStore = open_keys(path)
         self.spec = self._describe()
@@ -55,7 +62,7 @@ class ZarrSource:
         self._process = 0
 
     def __getstate__(self) -> dict[str, Any]:
-        return {name: getattr(self, name) for name in ("path", "inside", "spec", "stamps", "metadata")}
+        return {name: getattr(self, name) for name in _STATE}
 
     def __setstate__(self, state: dict[str, Any]) -> None:
         self.__dict__.update(state)
@@ -164,7 +171,7 @@ class ZarrSource:
     def _open_reader(self) -> Reader:
         """Choose the reader: chunk by chunk in the calling thread where all codecs are known, else zarr-python."""
         if self._direct:
-            self._files = ZarrFiles(self._file, self.metadata, self._by_library)
+            self._files = ZarrFiles(self._file, self.metadata, self._by_library, self._accepted)
             return self._files.fill
         self._open_library()
         return self._by_library
@@ -183,10 +190,17 @@ class ZarrSource:
         self._library = python_reader(array)
         return self._library
 
+    def _accepted(self, chunk: tuple[int, int], inner: tuple[int, int] | None = None) -> np.generic | None:
+        """Fill value of a chunk, or of one inside a shard, that was absent when the run began and may be; else None."""
+        absent = self._absent
+        if absent is None or not (chunk in absent if inner is None else absent.lacks(chunk, inner)):
+            return None
+        return self._fill_value()
+
     def _by_library(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Read through zarr-python, which would answer an absent chunk with the fill value."""
         for coordinates in touched(rows, columns, self._chunks):
-            if not self.keys.size(self._key(coordinates)):
+            if not self.keys.size(self._key(coordinates)) and self._accepted(coordinates) is None:
                 raise ChunkAbsentError(coordinates)
         (self._library or self._open_library())(rows, columns, out)
 
@@ -256,28 +270,29 @@ class ZarrSource:
     def require_complete(self) -> None:
         """Compare the stored keys with the grid; see `check_complete`."""
         self._require_unchanged()
-        absent = absent_keys(self.keys, self.inside, self.metadata)
-        if absent.all():
-            others = other_names(self.keys, self.inside)
-            if others:
-                raise absent_error(
-                    self.spec,
-                    f"none of {absent.size:,} chunks is stored under the key that the metadata gives",
-                    [f"{self._key((0, 0))} is wanted; there are {', '.join(others)}"],
-                    "check the dimension separator in the metadata first.",
-                )
-        refuse_absent(absent, self.spec, self._chunks, MEANT)
-        if self.metadata.index is not None:
-            self._require_full_shards(absent.shape)
+        if self.spec.absent is not None:
+            return
+        absent = AbsentChunks(absent_keys(self.keys, self.inside, self.metadata))
+        others = other_names(self.keys, self.inside) if absent.keys.all() else []
+        if others:
+            raise DamagedSourceError(
+                f"{self.spec.name} is not complete: none of {absent.keys.size:,} chunks is stored under the key that"
+                " the metadata give",
+                evidence=[f"{self._key((0, 0))} is wanted; there are {', '.join(others)}"],
+                remedy="Correct the dimension separator in the metadata, or copy the store again.",
+            )
+        if self.metadata.inner is not None and self.metadata.index is None and not self.access.fills:
+            raise UnsupportedMatrixError(
+                f"{self.spec.name} keeps its chunks in shards of a kind that does not show which of them are absent",
+                evidence=[self.spec.encoding],
+                remedy="Write the array again with plain shards, or add --absent fill to take the fill value for any.",
+            )
+        count, total, places = count_absent_chunks(absent, self.keys, self._key, self.metadata)
+        first = [f"{words}{show_chunk(place, self.spec.shape, self._chunks)}" for words, place in places]
+        self.spec = settle_absent(self.spec, count, total, first, self.access, self._fill_value, MEANT)
+        if count:
+            self._absent = absent
 
-    def _require_full_shards(self, grid: tuple[int, ...]) -> None:
-        inside = 0
-        places: list[str] = []
-        for place in np.ndindex(grid):
-            shard = (place[0], place[1])
-            missing = absent_inside(self.keys, self._key(shard), shard, self.metadata)
-            if missing and len(places) < SHOWN:
-                places.append(f"{missing:,} inside the shard of {show_chunk(shard, self.spec.shape, self._chunks)}")
-            inside += missing
-        if inside:
-            raise absent_error(self.spec, count_absent(inside, "the chunks inside its shards"), places, MEANT)
+    def _fill_value(self) -> np.generic:
+        assert self.metadata.dtype is not None
+        return zarr_fill(self.metadata.fill, self.metadata.dtype, self.spec.dtype)

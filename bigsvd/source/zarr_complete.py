@@ -2,16 +2,16 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
 
-from bigsvd.errors import UnsupportedMatrixError
-from bigsvd.source.rectangle import grid_shape
+from bigsvd.source.complete import SHOWN, first_places
+from bigsvd.source.rectangle import grid_shape, require_countable
 from bigsvd.source.zarr_metadata import ZarrMetadata
 from bigsvd.source.zarr_store import KeyStore
-
-MOST_CHUNKS = 100_000_000
+from bigsvd.units import show_count
 
 
 def absent_keys(keys: KeyStore, at: str, metadata: ZarrMetadata) -> np.ndarray:
@@ -24,12 +24,7 @@ def absent_keys(keys: KeyStore, at: str, metadata: ZarrMetadata) -> np.ndarray:
     """
     rows, columns = metadata.shape
     grid = grid_shape((rows, columns), (metadata.chunks[0], metadata.chunks[1]))
-    if grid[0] * grid[1] > MOST_CHUNKS:
-        raise UnsupportedMatrixError(
-            f"{keys.path}/{at} has {grid[0] * grid[1]:,} chunks, and more than {MOST_CHUNKS:,} are not handled",
-            evidence=[f"{rows:,} × {columns:,} in {metadata.encoding}"],
-            remedy="Write the array again in chunks of about a megabyte, or in shards.",
-        )
+    require_countable(grid, f"{keys.path}/{at}".rstrip("/"))
     absent = np.ones(grid, np.bool_)
     folder = "/".join(part for part in (at, metadata.prefix.rstrip("/") if "/" in metadata.prefix else "") if part)
     if metadata.separator == "/":
@@ -57,16 +52,81 @@ def other_names(keys: KeyStore, at: str) -> list[str]:
     return sorted(names)[:4]
 
 
-def absent_inside(keys: KeyStore, key: str, place: tuple[int, int], metadata: ZarrMetadata) -> int:
-    """Count the inner chunks that the index of a shard marks as never written; it is checked when the shard is read."""
-    index, inner = metadata.index, metadata.inner
-    if index is None or inner is None:
-        return 0
+class AbsentChunks:
+    """Which chunks of an array are absent, and which inside its shards; a byte each.
+
+    Attributes
+    ----------
+    keys : ndarray of bool, shape (chunk rows, chunk columns)
+        Of chunks or, of sharded arrays, of whole shards.
+    inside : dict
+        By coordinates of a shard, which of its inner chunks are; of those shards only that lack any.
+    """
+
+    def __init__(self, keys: np.ndarray) -> None:
+        self.keys = keys
+        self.inside: dict[tuple[int, int], np.ndarray] = {}
+
+    def __contains__(self, place: tuple[int, int]) -> bool:
+        return bool(self.keys[place])
+
+    def lacks(self, shard: tuple[int, int], inner: tuple[int, int]) -> bool:
+        """Whether a chunk inside a shard was found absent."""
+        marked = self.inside.get(shard)
+        return self.keys[shard] or (marked is not None and bool(marked[inner]))
+
+
+def count_absent_chunks(
+    absent: AbsentChunks, keys: KeyStore, key_of: Callable[[tuple[int, int]], str], metadata: ZarrMetadata
+) -> tuple[int, int, list[tuple[str, tuple[int, int]]]]:
+    """Count the chunks that are absent, those inside shards too, which are marked.
+
+    Returns
+    -------
+    count, of : int
+        Absent ones, and all there should be.
+    places : list of (str, (int, int))
+        Of the first: what lacks, in words, and the chunk or shard where it does.
+    """
+    places: list[tuple[str, tuple[int, int]]]
+    if metadata.inner is None:
+        places = [("", place) for place in first_places(absent.keys)]
+        return int(absent.keys.sum()), absent.keys.size, places
+    count, of, places = 0, 0, []
+    for row, column in np.ndindex(absent.keys.shape):
+        shard, (rows, columns) = (row, column), inner_grid(metadata, (row, column))
+        missing, words = rows * columns, "the shard of "
+        of += missing
+        if not absent.keys[shard]:
+            marked = absent_inside(keys, key_of(shard), shard, metadata)
+            missing = int(marked.sum())
+            words = f"{show_count(missing)} inside the shard of "
+            if missing:
+                absent.inside[shard] = marked
+        count += missing
+        if missing and len(places) < SHOWN:
+            places.append((words, shard))
+    return count, of, places
+
+
+def absent_inside(keys: KeyStore, key: str, place: tuple[int, int], metadata: ZarrMetadata) -> np.ndarray:
+    """Mark the inner chunks that the index of a shard names as never written; it is checked when the shard is read."""
+    index = metadata.index
+    used = inner_grid(metadata, place)
+    if index is None:
+        return np.zeros(used, np.bool_)
     raw = keys.part(key, -index.bytes if index.at_end else 0, index.bytes)
     if len(raw) < index.bytes:
-        return 0
+        return np.zeros(used, np.bool_)
+    return index.absent(index.table(np.frombuffer(raw, np.uint8)))[: used[0], : used[1]]
+
+
+def inner_grid(metadata: ZarrMetadata, place: tuple[int, int]) -> tuple[int, int]:
+    """How many of a shard's inner chunks lie in the matrix, along each axis."""
     rows, columns = (
         -(-min(outer, side - position * outer) // part)
-        for outer, part, side, position in zip(metadata.chunks, inner, metadata.shape, place, strict=True)
+        for outer, part, side, position in zip(
+            metadata.chunks, metadata.inner or metadata.chunks, metadata.shape, place, strict=True
+        )
     )
-    return index.absent(index.table(np.frombuffer(raw, np.uint8)), (rows, columns))
+    return rows, columns

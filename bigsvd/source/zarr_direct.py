@@ -10,6 +10,7 @@ import contextlib
 import os
 import stat
 from collections.abc import Callable
+from typing import Protocol
 
 import numpy as np
 
@@ -29,6 +30,18 @@ class ChunkAbsentError(ChunkError):
     """A chunk that was never written, or is gone."""
 
 
+class Accepted(Protocol):
+    """Which chunks may be absent."""
+
+    def __call__(self, chunk: tuple[int, int], inner: tuple[int, int] | None = None) -> np.generic | None:
+        """Value of an absent chunk, or of one inside a shard by its place there; None where it must be there."""
+        ...
+
+
+def _none_accepted(chunk: tuple[int, int], inner: tuple[int, int] | None = None) -> np.generic | None:
+    return None
+
+
 class ZarrFiles:
     """Reads rectangles of an array whose chunks are files in a directory.
 
@@ -40,13 +53,22 @@ class ZarrFiles:
         With a known `layout`.
     library : callable
         Reads the chunks whose framing turns out to be another than the usual one.
+    accepted : Accepted
+        Tells which chunks may be absent, and what they are read as.
     """
 
-    def __init__(self, file_of: Callable[[tuple[int, int]], str], metadata: ZarrMetadata, library: Fill) -> None:
+    def __init__(
+        self,
+        file_of: Callable[[tuple[int, int]], str],
+        metadata: ZarrMetadata,
+        library: Fill,
+        accepted: Accepted = _none_accepted,
+    ) -> None:
         layout = metadata.layout
         if layout is None:
             raise ValueError("codecs that are not known here")
         self._file_of = file_of
+        self._accepted = accepted
         self._library = library
         self._chunks = metadata.chunks[0], metadata.chunks[1]
         self._index = metadata.index
@@ -87,11 +109,18 @@ class ZarrFiles:
         try:
             descriptor = os.open(self._file_of((i, j)), _READ)
         except (FileNotFoundError, NotADirectoryError):
-            raise ChunkAbsentError((i, j)) from None
+            value = self._accepted((i, j))
+            if value is None:
+                raise ChunkAbsentError((i, j)) from None
+            out[...] = value
+            return
         try:
             found = os.fstat(descriptor)
-            if not stat.S_ISREG(found.st_mode) or not found.st_size:
-                raise ChunkAbsentError((i, j))
+            # What stands there in its place was not left out on purpose.
+            if not stat.S_ISREG(found.st_mode):
+                raise ChunkAbsentError((i, j), "what stands in its place is no file")
+            if not found.st_size:
+                raise ChunkError((i, j), *self._expected(), "its file is empty: a copy that was never finished")
             if self._index is None:
                 self._decode(descriptor, 0, found.st_size, (i, j), rows, columns, out, workspace)
             else:
@@ -108,17 +137,22 @@ class ZarrFiles:
         table = self._index.read(descriptor, size)
         first = shard[0] * self._chunks[0] // self._inner[0], shard[1] * self._chunks[1] // self._inner[1]
         for i, j in touched(rows, columns, self._inner):
-            place = self._index.place(table, (i - first[0], j - first[1]), size)
-            if place is None:
-                raise ChunkAbsentError(shard, f"the inner chunk {i - first[0]}, {j - first[1]} of its shard")
+            inner = i - first[0], j - first[1]
+            place = self._index.place(table, inner, size)
             part_rows, part_columns = clip(i, self._inner[0], rows), clip(j, self._inner[1], columns)
             part = out[_from(rows, part_rows), _from(columns, part_columns)]
+            if place is None:
+                value = self._accepted(shard, inner)
+                if value is None:
+                    raise ChunkAbsentError(shard, f"the inner chunk {inner[0]}, {inner[1]} of its shard")
+                part[...] = value
+                continue
             try:
                 self._decode(descriptor, *place, (i, j), part_rows, part_columns, part, workspace)
             except (FramingUnknownError, MemoryError):
                 raise
             except Exception as error:  # every codec raises what it likes
-                where = f"inner chunk ({i - first[0]}, {j - first[1]}), {place[1]:,} bytes at byte {place[0]:,}"
+                where = f"inner chunk ({inner[0]}, {inner[1]}), {place[1]:,} bytes at byte {place[0]:,}"
                 raise ChunkError(shard, where, *self._expected(), f"decoding says: {error}") from error
 
     def _decode(

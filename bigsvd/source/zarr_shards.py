@@ -81,6 +81,6 @@ class ShardIndex:
             )
         return offset, length
 
-    def absent(self, table: np.ndarray, used: tuple[int, int]) -> int:
-        """Count the inner chunks that were never written, among the first so many along each axis."""
-        return int(np.count_nonzero(np.all(table[: used[0], : used[1]] == np.uint64(_ABSENT), axis=2)))
+    def absent(self, table: np.ndarray) -> np.ndarray:
+        """Mark the inner chunks that were never written; shape (rows, columns) of inner chunks."""
+        return np.asarray(np.all(table == np.uint64(_ABSENT), axis=2))

@@ -259,7 +259,7 @@ def test_damage_to_the_index_of_a_shard_is_named(tmp_path: Path) -> None:
     at.write_bytes(whole[:50])
     assert "the shard has 50 bytes, its index alone 100" in refusal(path)
     at.write_bytes(b"")
-    assert "a chunk is absent" in refusal(path)
+    assert "its file is empty" in refusal(path)
 
 
 def test_an_index_that_points_outside_its_shard_is_refused(tmp_path: Path) -> None:
