@@ -15,6 +15,7 @@
         ├── ResultExistsError
         ├── IncompleteResultError
         ├── DamagedResultError
+        ├── DiskFullError              a device has not the room, or takes no more
         ├── OtherRunError              an unfinished run of something else stands there
         └── DamagedJournalError        an unfinished run that cannot be gone on with
 
@@ -103,6 +104,10 @@ class IncompleteResultError(ResultError):
 
 class DamagedResultError(ResultError):
     """A part of the store is missing or does not match its checksum."""
+
+
+class DiskFullError(ResultError):
+    """A device has not the room that the run needs, or took no more while it was at work."""
 
 
 class OtherRunError(ResultError):

@@ -34,9 +34,12 @@ def main() -> None:
     \b
     Exit status:
       0    done; decompose: tolerance met; verify: agrees
-      2    wrong usage or input
-      3    decompose: finished, tolerance not met; verify: does not agree
-      1    anything else;  130, 143: interrupted, terminated
+      3    decompose: finished, tolerance not met or time over; verify: does
+           not agree
+      2    wrong usage or input; the message says what to mend
+      1    anything else
+      130, 143    Ctrl-C, SIGTERM
+    After 1, 130 and 143 the same decompose line goes on where it was.
     """
 
 

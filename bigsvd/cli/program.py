@@ -15,12 +15,13 @@ from typing import Any
 
 import click
 
-from bigsvd.errors import BigsvdError, DamagedResultError, SourceChangedError
+from bigsvd.errors import BigsvdError, DamagedResultError, DeadlineError, SourceChangedError
 
 MET, FAILED, REFUSED, NOT_MET = 0, 1, 2, 3
 INTERRUPTED, TERMINATED = 130, 143
 TRACEBACK = "BIGSVD_TRACEBACK"
-# Errors of the machine, which no other command line would mend.
+# Errors that no other command line would mend: of what happened to the input, the result or the time, of the machine.
+_NOT_THE_COMMAND = (SourceChangedError, DamagedResultError, DeadlineError)
 _MACHINE = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EIO, errno.ENOMEM)
 
 
@@ -39,6 +40,8 @@ class Program(click.Group):
             if hasattr(stream, "reconfigure"):
                 stream.reconfigure(errors="backslashreplace")
         extra["standalone_mode"] = False
+        # The line as it was typed, for whoever has to say how to go on.
+        extra["obj"] = ["bigsvd", *words]
         with _terminated_as_interrupted():
             try:
                 status = super().main(words, prog_name, **extra)
@@ -58,10 +61,8 @@ class Program(click.Group):
             return super().invoke(ctx)
         except KeyboardInterrupt as stop:
             terminated = isinstance(stop, Terminated)
-            click.echo(
-                f"{'Terminated' if terminated else 'Interrupted'}: stopped, and nothing half done was kept.",
-                err=True,
-            )
+            said = stop.args[0] if stop.args else "stopped, and nothing half done was kept."
+            click.echo(f"{'Terminated' if terminated else 'Interrupted'}: {said}", err=True)
             return TERMINATED if terminated else INTERRUPTED
 
 
@@ -70,7 +71,7 @@ def status_of(error: Exception) -> int:
     cause = error.__cause__
     if isinstance(cause, OSError) and not isinstance(cause, BigsvdError) and cause.errno in _MACHINE:
         return FAILED
-    if isinstance(error, SourceChangedError | DamagedResultError) or not isinstance(error, BigsvdError):
+    if isinstance(error, _NOT_THE_COMMAND) or not isinstance(error, BigsvdError):
         return FAILED
     return REFUSED
 
@@ -84,6 +85,8 @@ def report_error(error: Exception, *, as_json: bool) -> int:
         problem, remedy = _unexpected(error)
         facts = {"problem": problem, "evidence": [], "remedy": remedy}
         click.echo(f"{problem} {remedy}", err=True)
+    for note in getattr(error, "__notes__", ()):
+        click.echo(note, err=True)
     if os.environ.get(TRACEBACK):
         import traceback
 

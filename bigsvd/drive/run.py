@@ -199,6 +199,7 @@ class _Run:
         request = self.plan.request
         certificate = certify(evidence, rank, crowd_reach(rank), request.tolerance, strict=request.strict)
         self.answer = _Answer(ritz, evidence, certificate, self.sweeps.made, self._precision())
+        self.sweeps.control.tell(f"after sweep {self.sweeps.made}: {certificate.verdict}")
         return reached
 
     def _precision(self) -> str:

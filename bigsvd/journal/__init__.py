@@ -2,7 +2,7 @@
 
 from bigsvd.journal.cost import journal_bytes
 from bigsvd.journal.identity import identity_of
-from bigsvd.journal.journal import Journal
+from bigsvd.journal.journal import Journal, check_interval
 from bigsvd.journal.run_folder import RunFolder, discard_finished
 from bigsvd.journal.standing import Standing, is_run_folder, read_standing
 
@@ -10,6 +10,7 @@ __all__ = [
     "Journal",
     "RunFolder",
     "Standing",
+    "check_interval",
     "discard_finished",
     "identity_of",
     "is_run_folder",

@@ -15,11 +15,13 @@ from __future__ import annotations
 import re
 import time
 from collections.abc import Callable
+from contextlib import suppress
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from bigsvd.journal.record import DamagedRecordError, read_record, write_record
+from bigsvd.errors import OptionError
+from bigsvd.journal.record import DamagedRecordError, read_facts, read_record, write_record
 from bigsvd.journal.sums import from_partial, from_pilot, to_partial, to_pilot
 from bigsvd.prepare import Preparation
 from bigsvd.solve import Pilot
@@ -73,6 +75,8 @@ class Journal:
         Records that could not be used, and why.
     saved_seconds : float
         Time spent on saving.
+    saved_at : float or None
+        When something was kept last, by an earlier process or this one, seconds since 1970.
     """
 
     def __init__(
@@ -85,6 +89,7 @@ class Journal:
         self._last, self._took = clock(), 0.0
         self._began = clock()
         self._earlier = self._facts_of_earlier()
+        self.saved_at: float | None = self._earlier.get("saved")
         control.bytes_read += int(self._earlier.get("bytes_read", 0))
         self._calls = 0
 
@@ -136,7 +141,7 @@ class Journal:
             return read_record(path)
         except FileNotFoundError:
             return None
-        except (DamagedRecordError, OSError, ValueError, KeyError, TypeError) as error:
+        except (DamagedRecordError, OSError) as error:
             self.damaged.append(str(error))
             return None
 
@@ -145,7 +150,9 @@ class Journal:
         start = self._clock()
         counts = {"bytes_read": self._control.bytes_read, "seconds": self.earlier_seconds + start - self._began}
         counts["resumed"] = self.resumed
-        write_record(path, facts | {"run": counts | {"saved": time.time()}}, arrays)
+        saved = time.time()
+        write_record(path, facts | {"run": counts | {"saved": saved}}, arrays)
+        self.saved_at = saved
         self._last = self._clock()
         self._took = self._last - start
         self.saved_seconds += self._took
@@ -154,10 +161,10 @@ class Journal:
         """Bytes and seconds at the last saving of an earlier process."""
         latest: dict[str, Any] = {}
         for path in [self.folder / PILOT, *(each.path for each in self.saved())]:
-            read = self._read(path)
-            if read is not None and read[0]["run"]["saved"] >= latest.get("saved", 0.0):
-                latest = read[0]["run"]
-        self.damaged.clear()
+            with suppress(DamagedRecordError, OSError, KeyError, TypeError):
+                run = read_facts(path)["run"]
+                if run["saved"] >= latest.get("saved", 0.0):
+                    latest = run
         return latest
 
 
@@ -202,6 +209,19 @@ class SweepJournal:
         own = [each for each in self._journal.saved() if each.sweep == self._sweep and each.waves <= waves]
         for each in own[:-2]:
             each.path.unlink(missing_ok=True)
+
+
+def check_interval(seconds: float) -> None:
+    """Refuse a time between two savings that is none.
+
+    Raises
+    ------
+    OptionError
+    """
+    if not seconds >= 0:
+        raise OptionError(
+            f"--save-every must be a number of seconds, 0 or more, not {seconds!r}", remedy="Try --save-every 5."
+        )
 
 
 def saved_in(folder: Path) -> list[Saved]:

@@ -15,7 +15,7 @@ import struct
 import zlib
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Any, Literal, NamedTuple
+from typing import Any, BinaryIO, Literal, NamedTuple
 
 import numpy as np
 
@@ -100,24 +100,8 @@ def read_record(path: Path) -> tuple[dict[str, Any], dict[str, np.ndarray]]:
     OSError
         If the file cannot be read.
     """
-    size = path.stat().st_size
     with open(path, "rb") as file:
-        start = file.read(len(MAGIC) + _LENGTH.size)
-        if len(start) < len(MAGIC) + _LENGTH.size or start[: len(MAGIC)] != MAGIC:
-            raise DamagedRecordError(f"{path.name} does not begin like a record")
-        length, checksum = _LENGTH.unpack(start[len(MAGIC) :])
-        if length > min(_MOST_HEADER, size):
-            raise DamagedRecordError(f"{path.name} says that its header has {length:,} bytes")
-        header = file.read(length)
-        if len(header) < length or zlib.crc32(header) != checksum:
-            raise DamagedRecordError(f"the header of {path.name} does not match its checksum")
-        try:
-            facts, described = _understand(header)
-        except (ValueError, TypeError, KeyError, RecursionError) as error:
-            raise DamagedRecordError(f"the header of {path.name} is none of ours: {error}") from error
-        needed = len(start) + length + sum(_size(dtype, shape) for _, dtype, shape, _, _ in described)
-        if needed != size:
-            raise DamagedRecordError(f"{path.name} has {size:,} bytes and should have {needed:,}")
+        facts, described = _begin(file, path)
         arrays = {}
         for name, dtype, shape, order, expected in described:
             array = np.empty(shape, dtype, order=order)
@@ -126,6 +110,40 @@ def read_record(path: Path) -> tuple[dict[str, Any], dict[str, np.ndarray]]:
                 raise DamagedRecordError(f"{name} in {path.name} does not match its checksum")
             arrays[name] = array
     return facts, arrays
+
+
+def read_facts(path: Path) -> dict[str, Any]:
+    """Read the facts of a record, and check its header and size but not its arrays.
+
+    Raises
+    ------
+    DamagedRecordError, OSError
+        As `read_record`.
+    """
+    with open(path, "rb") as file:
+        return _begin(file, path)[0]
+
+
+def _begin(file: BinaryIO, path: Path) -> tuple[dict[str, Any], list[_Described]]:
+    """Read and check all that comes before the arrays, and that these have room in the file."""
+    size = os.fstat(file.fileno()).st_size
+    start = file.read(len(MAGIC) + _LENGTH.size)
+    if len(start) < len(MAGIC) + _LENGTH.size or start[: len(MAGIC)] != MAGIC:
+        raise DamagedRecordError(f"{path.name} does not begin like a record")
+    length, checksum = _LENGTH.unpack(start[len(MAGIC) :])
+    if length > min(_MOST_HEADER, size):
+        raise DamagedRecordError(f"{path.name} says that its header has {length:,} bytes")
+    header = file.read(length)
+    if len(header) < length or zlib.crc32(header) != checksum:
+        raise DamagedRecordError(f"the header of {path.name} does not match its checksum")
+    try:
+        facts, described = _understand(header)
+    except (ValueError, TypeError, KeyError, RecursionError) as error:
+        raise DamagedRecordError(f"the header of {path.name} is none of ours: {error}") from error
+    needed = len(start) + length + sum(_size(dtype, shape) for _, dtype, shape, _, _ in described)
+    if needed != size:
+        raise DamagedRecordError(f"{path.name} has {size:,} bytes and should have {needed:,}")
+    return facts, described
 
 
 def _understand(header: bytes) -> tuple[dict[str, Any], list[_Described]]:

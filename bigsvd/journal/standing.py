@@ -14,7 +14,7 @@ from bigsvd.errors import ResultError
 from bigsvd.factors import OutputLock, Place
 from bigsvd.journal.identity import IDENTITY, read_identity
 from bigsvd.journal.journal import PILOT, Saved, saved_in
-from bigsvd.journal.record import DamagedRecordError, read_record
+from bigsvd.journal.record import DamagedRecordError, read_facts, read_record
 
 
 @dataclass(frozen=True)
@@ -76,12 +76,14 @@ def is_run_folder(path: Path) -> bool:
     return path.name.endswith(".run") and (path / IDENTITY).is_file()
 
 
-def read_standing(path: Path) -> Standing:
+def read_standing(path: Path, *, contents: bool = True) -> Standing:
     """Say where the run of an OUT.run stands; changes nothing.
 
     Parameters
     ----------
     path : Path
+    contents : bool
+        Read every record whole; otherwise damage inside the arrays goes unnoticed.
 
     Returns
     -------
@@ -96,8 +98,9 @@ def read_standing(path: Path) -> Standing:
     place = Place.at(path.with_name(path.name.removesuffix(".run")))
     command = record.get("command") or {}
     damaged: list[str] = []
-    pilot = _facts(path / PILOT, damaged)
-    sums = [(each, facts) for each in saved_in(path) if (facts := _facts(each.path, damaged)) is not None]
+    pilot = _facts(path / PILOT, damaged, contents=contents)
+    found = [(each, _facts(each.path, damaged, contents=contents)) for each in saved_in(path)]
+    sums = [(each, facts) for each, facts in found if facts is not None]
     last: tuple[Saved, dict[str, Any]] | None = sums[-1] if sums else None
     facts = last[1] if last else pilot or {}
     counts = facts.get("run", {})
@@ -121,10 +124,10 @@ def read_standing(path: Path) -> Standing:
     )
 
 
-def _facts(path: Path, damaged: list[str]) -> dict[str, Any] | None:
+def _facts(path: Path, damaged: list[str], *, contents: bool) -> dict[str, Any] | None:
     """Facts of a record; a damaged one is named, and counts as none."""
     try:
-        return read_record(path)[0]
+        return read_record(path)[0] if contents else read_facts(path)
     except FileNotFoundError:
         return None
     except (DamagedRecordError, OSError) as error:

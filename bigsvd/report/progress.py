@@ -8,6 +8,7 @@ from collections.abc import Callable, Iterable, Iterator
 from contextlib import contextmanager
 from typing import TYPE_CHECKING, TextIO
 
+from bigsvd.machine import resident_bytes
 from bigsvd.units import show_bytes, show_seconds
 
 if TYPE_CHECKING:
@@ -26,8 +27,11 @@ _TITLES = {
 }
 # Stages whose amount is a number of things, not of bytes.
 _COUNTED = ("slices",)
+# What is said once, as a line of its own: where a run goes on, and what a sweep has certified.
+SAID = ("journal", "certificate")
 # Below this much of a stage, a rate says nothing yet.
 _LEAST_SECONDS = 0.5
+_LEAST_TOLD = 0.05
 
 
 class Stage:
@@ -43,11 +47,15 @@ class Stage:
 
     def __init__(self, event: Progress, now: float) -> None:
         self.event, self.note, self.began = event, event.note, now
+        # What was there with the first bytes may have been summed by an earlier process: no rate follows from it.
+        self._first = (event.bytes_done, now)
 
-    def take(self, event: Progress) -> None:
+    def take(self, event: Progress, now: float) -> None:
         """Keep the latest event, of two threads' the one further on; notes stay until there is another."""
         if event.bytes_done >= self.event.bytes_done:
             self.event = event
+        if not self._first[0]:
+            self._first = (event.bytes_done, now)
         self.note = event.note or self.note
 
     def continues(self, event: Progress) -> bool:
@@ -56,30 +64,43 @@ class Stage:
             event.bytes_total == self.event.bytes_total
         )
 
+    def rate(self, now: float) -> float | None:
+        """Amount a second; None while it says nothing yet."""
+        (first, since), done = self._first, self.done()
+        if done > first and now - since >= _LEAST_SECONDS:
+            return (done - first) / (now - since)
+        return done / (now - self.began) if done and now - self.began >= _LEAST_SECONDS else None
+
+    def seconds_left(self, now: float) -> float | None:
+        """Seconds to the end of the stage at this rate; None where that is not known."""
+        rate, left = self.rate(now), self.event.bytes_total - self.done()
+        return left / rate if rate else None
+
     def words(self, now: float, resident: int) -> str:
         """Stage, amount, rate, time left and resident size, on one line."""
-        event, seconds = self.event, now - self.began
-        done, total = self._done(), event.bytes_total
+        event, rate, left = self.event, self.rate(now), self.seconds_left(now)
+        done, total = self.done(), event.bytes_total
         if event.stage in _COUNTED:
             return f"{self._title()}: {done} of {total}, {show_bytes(resident)} resident"
         parts = [f"{show_bytes(done)} of {show_bytes(total)}" + (f" ({done / total:.0%})" if total else "")]
-        if seconds >= _LEAST_SECONDS and done:
-            parts.append(f"{show_bytes(done / seconds)}/s")
-            if done < total:
-                parts.append(f"{show_seconds(seconds / done * (total - done))} left")
+        if rate:
+            parts.append(f"{show_bytes(rate)}/s")
+            if left:
+                parts.append(f"{show_seconds(left)} left")
         return f"{self._title()}: {', '.join(parts)}, {show_bytes(resident)} resident"
 
     def closing_words(self, now: float, resident: int) -> str:
         """How the stage ended, on one line."""
-        seconds, done = now - self.began, self._done()
+        seconds, done = now - self.began, self.done()
         counted = self.event.stage in _COUNTED
         parts = [f"{done if counted else show_bytes(done)} in {show_seconds(seconds)}"]
-        if seconds > 0 and not counted:
-            parts.append(f"{show_bytes(done / seconds)}/s")
+        # At once is what an earlier process had summed.
+        if seconds >= _LEAST_TOLD and not counted:
+            parts.append(f"{show_bytes(self.rate(now) or done / seconds)}/s")
         parts += [f"{show_bytes(resident)} resident", *([self.note] if self.note else [])]
         return f"{self._title()}: {', '.join(parts)}"
 
-    def _done(self) -> int:
+    def done(self) -> int:
         """Amount done; a stage that goes over its bytes several times is done when it went over them once."""
         return min(self.event.bytes_done, self.event.bytes_total or self.event.bytes_done)
 
@@ -119,13 +140,15 @@ class Reporter:
         line = ""
         with self._lock:
             now = self._clock()
-            if self._stage is None or not self._stage.continues(event):
+            if event.stage in SAID:
+                line, self._stage = "\n".join(filter(None, (self._end(now), event.note))), None
+            elif self._stage is None or not self._stage.continues(event):
                 line = self._end(now)
                 self._stage, self._printed = Stage(event, now), now
             else:
-                self._stage.take(event)
+                self._stage.take(event, now)
                 if self._every is not None and now - self._printed >= self._every:
-                    line, self._printed = self._stage.words(now, _resident()), now
+                    line, self._printed = self._stage.words(now, resident_bytes()), now
         # Written without the lock: whoever draws the live line holds the terminal and waits for `line`.
         if line:
             self._write(line)
@@ -137,7 +160,7 @@ class Reporter:
     def line(self) -> str:
         """The present state; empty before anything happened."""
         with self._lock:
-            return "" if self._stage is None else self._stage.words(self._clock(), _resident())
+            return "" if self._stage is None else self._stage.words(self._clock(), resident_bytes())
 
     def close(self) -> None:
         """Say how the last stage ended."""
@@ -148,7 +171,7 @@ class Reporter:
 
     def _end(self, now: float) -> str:
         """The closing line of a stage in which anything was done."""
-        return self._stage.closing_words(now, _resident()) if self._stage and self._stage.event.bytes_done else ""
+        return self._stage.closing_words(now, resident_bytes()) if self._stage and self._stage.event.bytes_done else ""
 
 
 @contextmanager
@@ -199,10 +222,3 @@ def _live(stream: TextIO) -> Iterator[Reporter]:
             yield reporter
         finally:
             reporter.close()
-
-
-def _resident() -> int:
-    """Resident size of this process, bytes."""
-    import psutil
-
-    return int(psutil.Process().memory_info().rss)

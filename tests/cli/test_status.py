@@ -15,6 +15,7 @@ from cli_samples import finish, run
 
 from bigsvd import api, errors
 from bigsvd.cli.program import status_of
+from bigsvd.cli.stops import Stops
 
 PROBLEM = {"evidence": ["rank 5000"], "remedy": "Try --rank 20."}
 
@@ -48,6 +49,10 @@ def ending(monkeypatch: pytest.MonkeyPatch, error: BaseException) -> None:
         (errors.ResultError, 2),
         (errors.ResultExistsError, 2),
         (errors.IncompleteResultError, 2),
+        (errors.DiskFullError, 2),
+        (errors.OtherRunError, 2),
+        (errors.DamagedJournalError, 2),
+        (errors.DeadlineError, 1),
         (errors.SourceChangedError, 1),
         (errors.DamagedResultError, 1),
     ],
@@ -171,15 +176,18 @@ def test_options_reach_the_api_under_their_names(monkeypatch: pytest.MonkeyPatch
     line = (
         "--matrix /a --rank 7 --samples columns --center none --scale unit --tolerance 1e-4 --strict --max-sweeps 3"
         " --memory 2GiB --workers 3 --precision double --route tsqr --axis columns --seed 9 --overwrite --max-rank 9"
+        " --start-over --save-every 2.5 --finish-by 8h"
     )
     run("decompose", "f.h5", "--out", "o.zarr", "--quiet", *line.split(), "--variance", "0.5")
     for options in asked:
+        assert options.pop("command")[:2] == ["bigsvd", "decompose"]
+        assert isinstance(options.pop("progress"), Stops)
         del options["planned"]
     bare, full = asked
-    assert bare == {"overwrite": False, "progress": None}
+    assert bare == {"overwrite": False, "start_over": False}
     assert full == {
-        "overwrite": True, "progress": None, "matrix": "/a", "rank": 7, "samples": "columns", "center": "none",
-        "scale": "unit",
+        "overwrite": True, "start_over": True, "save_every": 2.5, "finish_by": "8h", "matrix": "/a", "rank": 7,
+        "samples": "columns", "center": "none", "scale": "unit",
         "tolerance": 1e-4, "strict": True, "max_sweeps": 3, "memory": "2GiB", "workers": 3, "precision": "double",
         "route": "tsqr", "axis": "columns", "seed": 9, "max_rank": 9, "variance": 0.5,
     }  # fmt: skip
