@@ -8,6 +8,7 @@
     │   ├── SeveralMatricesError           the choice must be made by the user
     │   ├── UnsupportedMatrixError         1-D, empty, text, object type, unknown codec
     │   ├── DamagedSourceError             bytes that do not decode, absent chunks
+    │   ├── UnreadableSourceError          a device, a network or a permission keeps bytes back
     │   └── SourceChangedError             the file is not the one the run began with
     ├── DeadlineError        (TimeoutError) --finish-by came before anything was certified
     ├── NonFiniteError       (ValueError)  NaN or infinity in the matrix
@@ -24,7 +25,27 @@ A run that ends short of its tolerance is a verdict in the certificate, not an e
 
 from __future__ import annotations
 
+import unicodedata
 from collections.abc import Iterable
+
+
+def printable(text: str) -> str:
+    r"""Show what a terminal would not print, or would obey, by its number: controls, marks of direction, broken bytes.
+
+    >>> printable("tide\x1b[31m"), printable("a\u202eb"), printable("Gezeiten 潮")
+    ('tide\\x1b[31m', 'a\\u202eb', 'Gezeiten 潮')
+    """
+    if text.isprintable():
+        return text
+    return "".join(map(_shown, text))
+
+
+def _shown(letter: str) -> str:
+    """One letter, or its number; blanks of every width stay."""
+    if letter.isprintable() or unicodedata.category(letter) == "Zs":
+        return letter
+    number = ord(letter)
+    return f"\\x{number:02x}" if number < 256 else f"\\u{number:04x}" if number < 65536 else f"\\U{number:08x}"
 
 
 class BigsvdError(Exception):
@@ -41,12 +62,13 @@ class BigsvdError(Exception):
     """
 
     def __init__(self, problem: str, *, evidence: Iterable[str] = (), remedy: str = "") -> None:
-        self.problem = problem
-        self.evidence = tuple(evidence)
-        self.remedy = remedy
-        lines = [problem, *(f"    {line}" for line in self.evidence)]
+        # Names from a file may hold whatever its writer liked, such as what a terminal takes for orders.
+        self.problem = printable(problem)
+        self.evidence = tuple(map(printable, evidence))
+        self.remedy = printable(remedy)
+        lines = [self.problem, *(f"    {line}" for line in self.evidence)]
         if remedy:
-            lines.append(remedy)
+            lines.append(self.remedy)
         super().__init__("\n".join(lines))
 
 
@@ -76,6 +98,10 @@ class UnsupportedMatrixError(SourceError):
 
 class DamagedSourceError(SourceError):
     """Stored bytes are absent or do not decode."""
+
+
+class UnreadableSourceError(SourceError):
+    """The system does not give the bytes: a device, a network or a permission is at fault, not what is stored."""
 
 
 class SourceChangedError(SourceError):

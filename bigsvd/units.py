@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 import re
+import shlex
 from contextlib import suppress
 from datetime import datetime, timedelta
 
-from bigsvd.errors import OptionError
+from bigsvd.errors import OptionError, printable
 
 _BYTE_UNITS = {
     "": 1,
@@ -163,3 +164,23 @@ def show_shape(shape: tuple[int, ...]) -> str:
     '100,000 × 5,000'
     """
     return " × ".join(show_count(side) for side in shape)
+
+
+def shell_word(text: str) -> str:
+    r"""Quote a word for a shell, so that it can be typed whatever is in it.
+
+    >>> shell_word("/night/frames"), shell_word("night watch"), shell_word("a\x1bb")
+    ('/night/frames', "'night watch'", "$'a\\x1bb'")
+    """
+    if printable(text) == text:
+        return shlex.quote(text)
+    letters = [
+        f"\\{letter}" if letter in "\\'" else letter if printable(letter) == letter else _bytes_of(letter)
+        for letter in text
+    ]
+    return f"$'{''.join(letters)}'"
+
+
+def _bytes_of(letter: str) -> str:
+    """The bytes of a letter, as bash, ksh and zsh read them between $' and '."""
+    return "".join(f"\\x{byte:02x}" for byte in letter.encode("utf-8", "surrogateescape"))

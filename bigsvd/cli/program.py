@@ -15,13 +15,13 @@ from typing import Any
 
 import click
 
-from bigsvd.errors import BigsvdError, DamagedResultError, DeadlineError, SourceChangedError
+from bigsvd.errors import BigsvdError, DamagedResultError, DeadlineError, SourceChangedError, UnreadableSourceError
 
 MET, FAILED, REFUSED, NOT_MET = 0, 1, 2, 3
 INTERRUPTED, TERMINATED = 130, 143
 TRACEBACK = "BIGSVD_TRACEBACK"
 # Errors that no other command line would mend: of what happened to the input, the result or the time, of the machine.
-_NOT_THE_COMMAND = (SourceChangedError, DamagedResultError, DeadlineError)
+_NOT_THE_COMMAND = (SourceChangedError, UnreadableSourceError, DamagedResultError, DeadlineError)
 _MACHINE = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EIO, errno.ENOMEM)
 
 
@@ -98,7 +98,8 @@ def report_error(error: Exception, *, as_json: bool) -> int:
 
 def print_json(facts: dict[str, Any]) -> None:
     """Print one object on one line; letters beyond ASCII are escaped, so that any terminal and any pipe will do."""
-    click.echo(json.dumps(facts, allow_nan=False))
+    # The one control character that JSON leaves as it is.
+    click.echo(json.dumps(facts, allow_nan=False).replace("\x7f", "\\u007f"))
 
 
 def _refuse_usage(error: click.ClickException, *, as_json: bool) -> int:

@@ -6,6 +6,8 @@ import textwrap
 import unicodedata
 from collections.abc import Iterable, Sequence
 
+from bigsvd.errors import printable
+
 GAP = "  "
 
 
@@ -40,7 +42,7 @@ def table(header: Sequence[str], rows: Iterable[Sequence[str]], sides: str) -> l
     >>> table(["rank", "state"], [["1", "resolved"], ["10", "open"]], "rl")
     ['rank  state', '   1  resolved', '  10  open']
     """
-    lines = [list(header), *(list(row) for row in rows)]
+    lines = [list(header), *([printable(cell) for cell in row] for row in rows)]
     full = [line for line in lines if len(line) == len(sides)]
     widths = [max(cells(line[column]) for line in full) for column in range(len(sides))]
     laid = []
@@ -72,7 +74,7 @@ def wrap(text: str, width: int, first: str = "", rest: str | None = None) -> lis
     """Break a paragraph at blanks; words longer than the width, such as paths, stay whole."""
     rest = first if rest is None else rest
     return textwrap.wrap(
-        text,
+        printable(text),
         max(width, 40),
         initial_indent=first,
         subsequent_indent=rest,

@@ -3,14 +3,13 @@
 from __future__ import annotations
 
 import re
-import shlex
 from collections.abc import Sequence
 from pathlib import PurePath
 
 from bigsvd.report.layout import cells, table, wrap
 from bigsvd.report.plain import Json, plain
 from bigsvd.source import Candidate
-from bigsvd.units import show_bytes, show_count, show_shape
+from bigsvd.units import shell_word, show_bytes, show_count, show_shape
 
 # Lines to type are given for so many matrices; for more, one to fill in.
 MOST_LINES_TO_TYPE = 8
@@ -47,7 +46,8 @@ def survey_lines(where: str, found: Sequence[Candidate], width: int) -> list[str
             for one in usable
             if one.samples_hint
         ]
-        lines += [line for hint in hints for line in ["", *wrap(hint, width)]]
+        notes = [note for one in usable for note in _notes(one)]
+        lines += [line for words in (*hints, *notes) for line in ["", *wrap(words, width)]]
         lines += ["", "To decompose, type:", *_to_type(where, usable)]
     if others:
         rows = [[_name(one), _what(one), one.reason] for one in others[:MOST_UNUSABLE]]
@@ -81,7 +81,29 @@ def command_line(where: str, candidate: Candidate, *, named: bool) -> str:
         words += ["--matrix", candidate.path]
     if candidate.samples_hint == "columns":
         words += ["--samples", "columns"]
-    return shlex.join(words)
+    if candidate.outside:
+        words.append("--follow-links")
+    return " ".join(map(shell_word, words))
+
+
+def _notes(candidate: Candidate) -> list[str]:
+    """What is to be known of a matrix before it is decomposed: parts that are absent, or lie elsewhere."""
+    notes = []
+    if candidate.absent_chunks:
+        count, several = show_count(candidate.absent_chunks), candidate.absent_chunks > 1
+        notes.append(
+            f"{_name(candidate)}: {count} {'chunks were' if several else 'chunk was'} never written; decompose stops at"
+            " that, or reads the fill value with --absent fill"
+        )
+    if candidate.outside:
+        notes.append(f"{_name(candidate)}: lies partly in {_listed(candidate.outside)}; decompose needs --follow-links")
+    return notes
+
+
+def _listed(files: Sequence[str]) -> str:
+    """A few files by name, the others counted."""
+    more = f" and {show_count(len(files) - 3)} more files" if len(files) > 3 else ""
+    return ", ".join(files[:3]) + more
 
 
 def _name(candidate: Candidate) -> str:

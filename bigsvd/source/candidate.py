@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-import shlex
+import json
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 from bigsvd.errors import NoMatrixError, SeveralMatricesError, UnsupportedMatrixError
-from bigsvd.units import show_count, show_shape
+from bigsvd.units import shell_word, show_count, show_shape
 
 LISTED = 12
 
@@ -36,6 +36,10 @@ class Candidate:
         If not, why not.
     samples_hint, hint_reason : str or None, str
         As in `MatrixSpec`.
+    absent_chunks : int or None
+        Chunks that were never written; None where they were not counted.
+    outside : tuple of str
+        Other files that hold its entries, or to which a link leads, outside the folder of the file.
     """
 
     path: str
@@ -49,6 +53,8 @@ class Candidate:
     reason: str = ""
     samples_hint: str | None = None
     hint_reason: str = ""
+    absent_chunks: int | None = None
+    outside: tuple[str, ...] = ()
 
     @property
     def line(self) -> str:
@@ -96,7 +102,7 @@ def choose(candidates: Sequence[Candidate], where: str) -> Candidate:
         raise SeveralMatricesError(
             problem,
             evidence=listing([*choice, *sparse]),
-            remedy=f'Name one: --matrix {shlex.quote(example)} (in Python: matrix="{example}")',
+            remedy=f"Name one: --matrix {shell_word(example)} (in Python: matrix={json.dumps(example)})",
         )
     if not candidates:
         raise NoMatrixError(
@@ -105,7 +111,7 @@ def choose(candidates: Sequence[Candidate], where: str) -> Candidate:
     raise UnsupportedMatrixError(
         f"{where} holds no matrix that can be read: a two-dimensional array of numbers is needed",
         evidence=listing(candidates),
-        remedy=f"See all of it with: bigsvd inspect {shlex.quote(where)}",
+        remedy=f"See all of it with: bigsvd inspect {shell_word(where)}",
     )
 
 

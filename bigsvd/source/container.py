@@ -6,6 +6,7 @@ import os
 from pathlib import Path
 
 from bigsvd.errors import NoMatrixError, SourceError, UnsupportedMatrixError
+from bigsvd.source.persist import PersistentError, persist, unreadable
 from bigsvd.units import show_bytes
 
 HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
@@ -46,8 +47,13 @@ def container(path: Path) -> str:
     """
     if path.is_dir():
         return _directory(path)
+    if path.exists() and not path.is_file():
+        raise UnsupportedMatrixError(
+            f"{path} is neither a file nor a folder but a pipe, a socket or a device",
+            remedy="Copy what comes out of it to a file first: bigsvd reads by position, and more than once.",
+        )
     try:
-        with path.open("rb") as file:
+        with persist(lambda: path.open("rb")) as file:
             head = file.read(4096)
             size = os.fstat(file.fileno()).st_size
             # The superblock stands at 0, 512 and further doublings, behind a block the user may fill.
@@ -59,6 +65,8 @@ def container(path: Path) -> str:
                 start = start * 2 or 512
     except FileNotFoundError:
         raise NoMatrixError(f"{path} does not exist", remedy="Check the path.") from None
+    except PersistentError as error:
+        raise unreadable(str(path), [], error) from error
     except OSError as error:
         raise SourceError(f"{path} cannot be read", evidence=[str(error)], remedy="Check its permissions.") from error
     if head.startswith(b"\x93NUMPY"):

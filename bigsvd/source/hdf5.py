@@ -2,23 +2,26 @@
 
 from __future__ import annotations
 
+import errno
 import os
-import shlex
 import threading
 from typing import Any
 
 import numpy as np
 
-from bigsvd.errors import BigsvdError, DamagedSourceError, UnsupportedMatrixError
+from bigsvd.errors import BigsvdError, DamagedSourceError, SourceError, UnsupportedMatrixError
 from bigsvd.source.access import STRICT, Access
 from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
 from bigsvd.source.entries import decoded_type, pair_view, type_caution
 from bigsvd.source.fill import FillError, hdf5_fill
-from bigsvd.source.hdf5_complete import locate, require_complete
+from bigsvd.source.hdf5_complete import require_complete
 from bigsvd.source.hdf5_dataset import describe, missing_filters, unapplied_attributes
 from bigsvd.source.hdf5_direct import DirectReader, Fill, decodes_directly, direct_reader, plain_type
 from bigsvd.source.hdf5_file import library_errors_named, open_hdf5, register_plugins
 from bigsvd.source.hdf5_filters import filters_of
+from bigsvd.source.hdf5_links import other_files, require_inside
+from bigsvd.source.home import Home
+from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.positional import Descriptor, reading_bytes
 from bigsvd.source.rectangle import (
     BAND_BYTES,
@@ -32,7 +35,7 @@ from bigsvd.source.rectangle import (
 )
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
-from bigsvd.units import show_shape
+from bigsvd.units import shell_word, show_shape
 
 
 class Hdf5Source:
@@ -55,8 +58,9 @@ class Hdf5Source:
         self._forget()
         self.stamps: tuple[FileStamp, ...] = (FileStamp.of(path),)
         with library_errors_named(f"{path}:{dataset}"), open_hdf5(path) as file:
-            others = other_files(file[dataset], path)
-            self.stamps += tuple(FileStamp.of(name) for name in others if os.path.exists(name))
+            require_inside(file, dataset, Home(path, follow=access.follow_links))
+            others = [os.path.abspath(file[dataset].file.filename), *other_files(file[dataset])]
+            self.stamps += tuple(FileStamp.of(name) for name in others if name != path and os.path.exists(name))
             self.spec = _spec(file[dataset], path, dataset, self.stamps)
         self._opened()
 
@@ -64,6 +68,7 @@ class Hdf5Source:
         self._lock = threading.Lock()
         self._handles: tuple[Any, Descriptor, Any, Fill, DirectReader | None] | None = None
         self._inherited: object = None
+        self._retired: list[tuple[Any, Descriptor, Any, Fill, DirectReader | None]] = []
         self._process = 0
 
     def __getstate__(self) -> dict[str, Any]:
@@ -87,8 +92,10 @@ class Hdf5Source:
                 self._inherited = self._handles
                 self._process = os.getpid()
                 with library_errors_named(f"{self.path}:{self.dataset}"):
-                    file, descriptor = open_hdf5(self.path), Descriptor(self.path)
-                    dataset = open_dataset(file, self.dataset, os.path.dirname(self.path))
+                    file = open_hdf5(self.path)
+                    dataset = open_dataset(file, self.dataset)
+                    # Behind an external link it lies in another file.
+                    descriptor = Descriptor(dataset.file.filename)
                     library = library_reader(dataset)
                     direct = direct_reader(dataset, descriptor.number, library, self._fill_value(dataset))
                     self._handles = file, descriptor, dataset, direct.fill if direct else library, direct
@@ -108,23 +115,24 @@ class Hdf5Source:
         """Release the file. Reading again opens it again."""
         with self._lock:
             if self._handles is not None and self._process == os.getpid():
-                self._handles[0].close()
-                self._handles[1].close()
+                for handles in (self._handles, *self._retired):
+                    handles[0].close()
+                    handles[1].close()
                 self._handles = None
+                self._retired.clear()
 
     def read(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Read the half-open rectangle rows × columns into `out`; see `Source.read`."""
         require_rectangle(self.spec, rows, columns, out)
         if out.size == 0:
             return
-        _, fill = self._opened()
         try:
-            fill(rows, columns, out)
+            persist(lambda: self._opened()[1](rows, columns, out), self._open_anew)
         except Exception as error:  # filters come from other packages and raise what they like
             self._require_unchanged()
             if isinstance(error, (BigsvdError, MemoryError)):
                 raise
-            raise self._damage(fill, rows, columns, error) from error
+            raise self._damage(rows, columns, error) from error
         # The library answers zeros where a file was cut short after it was opened.
         self._require_unchanged()
 
@@ -146,23 +154,35 @@ class Hdf5Source:
         if self.spec.absent is not None:
             return
         with library_errors_named(self.spec.name):
-            self.spec = require_complete(dataset, self.spec, os.path.dirname(self.path), self.access)
+            self.spec = require_complete(
+                dataset, self.spec, Home(self.path, follow=self.access.follow_links), self.access
+            )
 
-    def _damage(self, fill: Fill, rows: Span, columns: Span, error: Exception) -> DamagedSourceError:
+    def _open_anew(self, error: OSError) -> None:
+        """Leave a handle that the server forgot; it stays open, since other threads may be reading by its number."""
+        if error.errno == errno.ESTALE:
+            with self._lock:
+                if self._handles is not None:
+                    self._retired.append(self._handles)
+                self._handles = None
+
+    def _damage(self, rows: Span, columns: Span, error: Exception) -> SourceError:
         """Name the first chunk of the rectangle that does not decode, and say what is wrong with it."""
+        place, kept_back = [show_place(rows, columns)], refusal(error)
         if isinstance(error, ChunkError):
-            evidence = [show_chunk(error.coordinates, self.spec.shape, self.spec.chunks), *error.evidence]
-        else:
-            evidence = self._search(fill, rows, columns, error)
+            place = [show_chunk(error.coordinates, self.spec.shape, self.spec.chunks), *error.evidence]
+        if kept_back is not None:
+            return unreadable(self.spec.name, place, kept_back)
+        evidence = place if isinstance(error, ChunkError) else self._search(rows, columns, error)
         return DamagedSourceError(
             f"{self.spec.name} holds stored bytes that do not decode",
             evidence=evidence,
             remedy="Copy or download the file again, or write it again from its origin.",
         )
 
-    def _search(self, fill: Fill, rows: Span, columns: Span, error: Exception) -> list[str]:
+    def _search(self, rows: Span, columns: Span, error: Exception) -> list[str]:
         """Read chunk by chunk, since the library does not tell which one it failed at."""
-        chunks = self.spec.chunks
+        chunks, (_, fill) = self.spec.chunks, self._opened()
         for i, j in touched(rows, columns, chunks) if chunks[0] > 1 else ():
             part_rows, part_columns = clip(i, chunks[0], rows), clip(j, chunks[1], columns)
             part = np.empty((part_rows[1] - part_rows[0], part_columns[1] - part_columns[0]), self.spec.dtype)
@@ -203,11 +223,12 @@ def library_reader(dataset: Any) -> Fill:
     return fill
 
 
-def open_dataset(file: Any, inside: str, folder: str) -> Any:
+def open_dataset(file: Any, inside: str) -> Any:
     """Open a dataset; external raw files that lie beside the HDF5 file are found there."""
     import h5py
 
     dataset = file[inside]
+    folder = os.path.dirname(os.path.abspath(dataset.file.filename))
     names = [os.fsdecode(name) for name, _, _ in dataset.external or ()]
     if any(not os.path.isabs(name) and os.path.exists(os.path.join(folder, name)) for name in names):
         # The library refuses another search path as long as the dataset is open by any handle.
@@ -216,14 +237,6 @@ def open_dataset(file: Any, inside: str, folder: str) -> Any:
         access.set_efile_prefix(os.fsencode(folder))
         return h5py.Dataset(h5py.h5d.open(file.id, os.fsencode(inside), access))
     return dataset
-
-
-def other_files(dataset: Any, path: str) -> list[str]:
-    """Paths of the other files that hold entries of a dataset: external raw files and virtual sources."""
-    names = [os.fsdecode(name) for name, _, _ in dataset.external or ()]
-    if dataset.is_virtual:
-        names += [source.file_name for source in dataset.virtual_sources() if source.file_name != "."]
-    return sorted({locate(name, os.path.dirname(path)) for name in names})
 
 
 def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -> MatrixSpec:
@@ -270,4 +283,4 @@ def _remedy(dataset: Any, path: str) -> str:
     missing = missing_filters(dataset)
     if missing:
         return f"Install the filter plugin for {', '.join(missing)}, or write the file again with gzip."
-    return f"See what else the file holds with: bigsvd inspect {shlex.quote(path)}"
+    return f"See what else the file holds with: bigsvd inspect {shell_word(path)}"

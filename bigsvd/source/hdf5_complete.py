@@ -12,6 +12,8 @@ from bigsvd.source.complete import SHOWN, first_chunks, settle_absent
 from bigsvd.source.fill import hdf5_fill
 from bigsvd.source.hdf5_chunks import absent_chunks
 from bigsvd.source.hdf5_file import open_hdf5
+from bigsvd.source.hdf5_links import require_path_inside
+from bigsvd.source.home import Home, OutsideError, locate
 from bigsvd.source.rectangle import grid_shape
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.units import show_count, show_shape
@@ -19,7 +21,7 @@ from bigsvd.units import show_count, show_shape
 MEANT = "write the dataset again in full, zeros included."
 
 
-def require_complete(dataset: Any, spec: MatrixSpec, folder: str, access: Access) -> MatrixSpec:
+def require_complete(dataset: Any, spec: MatrixSpec, home: Home, access: Access) -> MatrixSpec:
     """Refuse a dataset of which parts are absent, without reading entries.
 
     Parameters
@@ -28,8 +30,8 @@ def require_complete(dataset: Any, spec: MatrixSpec, folder: str, access: Access
         Two-dimensional.
     spec : MatrixSpec
         What is known of it.
-    folder : str
-        Where the file lies: other files are named relative to it.
+    home : Home
+        Where the file lies.
     access : Access
 
     Returns
@@ -38,10 +40,10 @@ def require_complete(dataset: Any, spec: MatrixSpec, folder: str, access: Access
         With the absent chunks that are to be filled.
     """
     if dataset.is_virtual:
-        _require_sources(dataset, spec, folder)
+        _require_sources(dataset, spec, home)
         return spec
     if dataset.external:
-        _require_external(dataset, spec, folder)
+        _require_external(dataset, spec)
         return spec
     count, grid, places = count_never_written(dataset, spec)
     return settle_absent(spec, count, grid, places, access, lambda: hdf5_fill(dataset, spec.dtype), MEANT)
@@ -59,13 +61,13 @@ def count_never_written(dataset: Any, spec: MatrixSpec) -> tuple[int, int, list[
     return int(absent.sum()), grid, first_chunks(absent, spec, dataset.chunks)
 
 
-def locate(name: str, folder: str) -> str:
-    """Path of another file that an HDF5 file names: beside it, else as seen from the working directory."""
-    beside = os.path.join(folder, name)
-    return beside if os.path.exists(beside) or not os.path.exists(name) else os.path.abspath(name)
+def _folder(dataset: Any) -> str:
+    """Where the file lies that holds a dataset: other files are named relative to it."""
+    return os.path.dirname(os.path.abspath(dataset.file.filename))
 
 
-def _require_external(dataset: Any, spec: MatrixSpec, folder: str) -> None:
+def _require_external(dataset: Any, spec: MatrixSpec) -> None:
+    folder = _folder(dataset)
     needed, faults = entry_bytes(dataset), []
     for name, offset, size in dataset.external:
         path = locate(os.fsdecode(name), folder)
@@ -89,7 +91,7 @@ def entry_bytes(dataset: Any) -> int:
     return int(math.prod(dataset.shape) * dataset.dtype.itemsize)
 
 
-def _require_sources(dataset: Any, spec: MatrixSpec, folder: str) -> None:
+def _require_sources(dataset: Any, spec: MatrixSpec, home: Home) -> None:
     faults, covered = [], 0
     sources = dataset.virtual_sources()
     for source in sources:
@@ -99,7 +101,7 @@ def _require_sources(dataset: Any, spec: MatrixSpec, folder: str) -> None:
                 remedy="Copy it into one dataset first, or name its files one by one.",
             )
         covered += source.vspace.get_select_npoints()
-        fault = _source_fault(dataset, source, folder)
+        fault = _source_fault(dataset, source, home)
         if fault:
             faults.append(f"{source.file_name}:{source.dset_name}: {fault}")
     if faults:
@@ -118,16 +120,18 @@ def _require_sources(dataset: Any, spec: MatrixSpec, folder: str) -> None:
         )
 
 
-def _source_fault(dataset: Any, source: Any, folder: str) -> str:
+def _source_fault(dataset: Any, source: Any, home: Home) -> str:
     """What is wrong with one source of a virtual dataset; empty if nothing."""
     if source.file_name == ".":
-        return _dataset_fault(dataset.file, source)
-    path = locate(source.file_name, folder)
+        return _dataset_fault(dataset.file, source, home)
+    path = locate(source.file_name, _folder(dataset))
     if not os.path.isfile(path):
         return "file not found"
     try:
         with open_hdf5(path) as file:
-            return _dataset_fault(file, source)
+            return _dataset_fault(file, source, home)
+    except OutsideError:
+        raise
     except SourceError as error:
         return error.problem
 
@@ -147,7 +151,8 @@ def _extent_fault(shape: tuple[int, ...], source: Any) -> str:
     return ""
 
 
-def _dataset_fault(file: Any, source: Any) -> str:
+def _dataset_fault(file: Any, source: Any, home: Home) -> str:
+    require_path_inside(file, source.dset_name, home)
     found = file.get(source.dset_name)
     if found is None or not hasattr(found, "chunks"):
         return "no such dataset in it"
@@ -158,6 +163,9 @@ def _dataset_fault(file: Any, source: Any) -> str:
         grid = math.prod(-(-side // chunk) for side, chunk in zip(found.shape, found.chunks, strict=True))
         if found.id.get_num_chunks() < grid:
             return f"{show_count(grid - found.id.get_num_chunks())} of {show_count(grid)} chunks were never written"
-    elif not found.is_virtual and not found.external and found.id.get_storage_size() == 0:
+    elif found.is_virtual or found.external:
+        # Whether it is complete itself, and where that would lead, is not followed further.
+        return "it is put together from other files itself"
+    elif found.id.get_storage_size() == 0:
         return "it was never written"
     return ""

@@ -10,6 +10,7 @@ from contextlib import contextmanager, suppress
 from typing import Any
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, SourceError
+from bigsvd.source.persist import PersistentError, persist, unreadable
 from bigsvd.units import show_count
 
 _TRUNCATED = re.compile(r"eof = (\d+).*stored_eof = (\d+)")
@@ -22,8 +23,19 @@ def open_hdf5(path: str) -> Any:
     """
     import h5py
 
+    def opened() -> Any:
+        try:
+            return h5py.File(path, "r", locking="best-effort", rdcc_nbytes=0)
+        except BlockingIOError as error:
+            # A writer's lock does not pass in seconds.
+            raise _why_not_opened(path, error) from error
+
     try:
-        file = h5py.File(path, "r", locking="best-effort", rdcc_nbytes=0)
+        file = persist(opened)
+    except BigsvdError:
+        raise
+    except PersistentError as error:
+        raise unreadable(path, [], error) from error
     except OSError as error:
         raise _why_not_opened(path, error) from error
     if file.mode != "r":

@@ -2,34 +2,61 @@
 
 from __future__ import annotations
 
+import math
+from dataclasses import replace
+from itertools import islice
 from typing import Any
 
+from bigsvd.errors import SourceError
 from bigsvd.source.candidate import SPARSE, SPARSE_TYPES, Candidate
 from bigsvd.source.hdf5_dataset import describe
+from bigsvd.source.hdf5_links import outside_files, require_path_inside
+from bigsvd.source.home import Home, OutsideError
+from bigsvd.source.rectangle import grid_shape
 from bigsvd.units import show_count
 
 MOST_OBJECTS = 20_000
+# A path of so many groups takes the library as many steps for each object below.
+DEEPEST = 64
 _SPARSE_CHILDREN = ({"data", "indices", "indptr"}, {"data", "ir", "jc"}, {"row", "col", "data"})
 _INTERNAL = ("#refs#", "#subsystem#")
 
 
-def walk_hdf5(file: Any, start: str = "/", most_objects: int = MOST_OBJECTS) -> list[Candidate]:
-    """List all datasets below a group, each object once; what hard links reach comes before what soft links name."""
+def walk_hdf5(file: Any, home: Home, start: str = "/", most_objects: int = MOST_OBJECTS) -> list[Candidate]:
+    """List all datasets below a group, each object once; what hard links reach comes before what soft links name.
+
+    Parameters
+    ----------
+    file : h5py.File
+    home : Home
+        Links out of it are listed, and followed if it says so.
+    start : str
+        Group to begin at.
+    most_objects : int
+        Where the walk stops; deeper than `DEEPEST` groups it does not go.
+    """
     import h5py
 
     found: list[Candidate] = []
     visited = {_identity(file[start])}
     waiting = [start.rstrip("/")]
     aliases: list[tuple[str, str]] = []
+    looked = 0
     while waiting or aliases:
-        if len(visited) > most_objects:
-            found.append(Candidate("…", reason=f"more than {show_count(most_objects)} objects; the rest is not listed"))
-            break
         if waiting:
             group, queue = waiting.pop(0), []
-            for name in file[group or "/"]:
+            if group.count("/") > DEEPEST:
+                found.append(Candidate(group, reason=f"groups below {DEEPEST} others are not looked into"))
+                continue
+            # Listed one by one: a group may hold more names than memory.
+            for name in islice(file[group or "/"], most_objects - looked + 1):
+                looked += 1
                 path = f"{group}/{name}"
-                link = file[group or "/"].get(name, getlink=True)
+                try:
+                    link = file[group or "/"].get(name, getlink=True)
+                except (TypeError, KeyError, OSError, RuntimeError, ValueError) as error:
+                    found.append(Candidate(path, reason=f"a link that h5py does not know ({error})"))
+                    continue
                 if isinstance(link, h5py.HardLink):
                     queue.append((path, ""))
                 else:
@@ -38,18 +65,32 @@ def walk_hdf5(file: Any, start: str = "/", most_objects: int = MOST_OBJECTS) -> 
             queue = [aliases.pop(0)]
         for path, target in queue:
             if path.strip("/") not in _INTERNAL:
-                _visit(file, path, target, visited, waiting, found)
+                _visit(file, home, path, target, visited, waiting, found)
+        if looked > most_objects:
+            found.append(Candidate("…", reason=f"more than {show_count(most_objects)} objects; the rest is not listed"))
+            break
     return found
 
 
-def _visit(file: Any, path: str, target: str, visited: set[Any], waiting: list[str], found: list[Candidate]) -> None:
+def _visit(
+    file: Any, home: Home, path: str, target: str, visited: set[Any], waiting: list[str], found: list[Candidate]
+) -> None:
     """Open one object by its path: list a dataset, keep a group for later, name what cannot be opened."""
     import h5py
 
     try:
+        if target:
+            require_path_inside(file, path, home)
         thing = file[path]
         identity = _identity(thing)
-    except (KeyError, OSError, RuntimeError) as error:
+    except OutsideError as error:
+        reason = f"a link to {target}, outside the folder of this file: add --follow-links to look into it"
+        found.append(Candidate(path, reason=reason, outside=error.files))
+        return
+    except SourceError as error:
+        found.append(Candidate(path, reason=error.problem))
+        return
+    except (KeyError, OSError, RuntimeError, ValueError) as error:
         reason = f"a broken link to {target}" if target else f"it cannot be opened ({error})"
         found.append(Candidate(path, reason=reason))
         return
@@ -58,7 +99,13 @@ def _visit(file: Any, path: str, target: str, visited: set[Any], waiting: list[s
     visited.add(identity)
     if isinstance(thing, h5py.Dataset):
         try:
-            found.append(describe(thing, path))
+            said = describe(thing, path)
+            outside = outside_files(file, path, home)
+            if said.usable and outside and not home.follow:
+                said = replace(
+                    said, usable=False, reason=f"it lies partly in {outside[0]}: add --follow-links to read it"
+                )
+            found.append(replace(said, outside=outside, absent_chunks=_absent(thing, said)))
         except (OSError, RuntimeError, KeyError, ValueError, TypeError) as error:
             found.append(Candidate(path, reason=f"it cannot be described ({error})"))
     elif isinstance(thing, h5py.Group):
@@ -66,6 +113,17 @@ def _visit(file: Any, path: str, target: str, visited: set[Any], waiting: list[s
             found.append(Candidate(path, reason=SPARSE))
         else:
             waiting.append(path)
+
+
+def _absent(dataset: Any, said: Candidate) -> int | None:
+    """How many chunks of a matrix were never written; None where that is no question of chunks."""
+    if not said.usable or dataset.is_virtual or dataset.external:
+        return None
+    if dataset.chunks is None:
+        return int(dataset.id.get_storage_size() == 0)
+    grid = math.prod(grid_shape(dataset.shape, dataset.chunks))
+    # Chunks that a dataset kept beyond its edge are counted by the library too.
+    return max(0, grid - dataset.id.get_num_chunks())
 
 
 def _identity(thing: Any) -> tuple[int, Any]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import errno
 import os
 import threading
 from typing import Any
@@ -11,8 +12,9 @@ import numpy as np
 from bigsvd.errors import DamagedSourceError, UnsupportedMatrixError
 from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type, show_type, type_caution
+from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.positional import Descriptor, announce_rows, read_rows, reading_bytes
-from bigsvd.source.rectangle import Span, require_rectangle
+from bigsvd.source.rectangle import Span, require_rectangle, show_place
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
 
@@ -56,9 +58,12 @@ class NpySource:
     def _forget(self) -> None:
         self._lock = threading.Lock()
         self._descriptor: Descriptor | None = None
+        self._retired: list[Descriptor] = []
 
     def __getstate__(self) -> dict[str, Any]:
-        return {name: value for name, value in self.__dict__.items() if name not in ("_lock", "_descriptor")}
+        return {
+            name: value for name, value in self.__dict__.items() if name not in ("_lock", "_descriptor", "_retired")
+        }
 
     def __setstate__(self, state: dict[str, Any]) -> None:
         self.__dict__.update(state)
@@ -73,6 +78,7 @@ class NpySource:
             if self._descriptor is not None:
                 self._descriptor.close()
             self._descriptor = None
+            self._retired.clear()
 
     def _opened(self) -> int:
         # A descriptor inherited through a fork stays valid: reads give their position themselves.
@@ -82,17 +88,29 @@ class NpySource:
                 self._descriptor = Descriptor(self.path)
             return self._descriptor.number
 
+    def _open_anew(self, error: OSError) -> None:
+        """Leave a descriptor that the server forgot; it stays open, since other threads may be reading by it."""
+        if error.errno == errno.ESTALE:
+            with self._lock:
+                if self._descriptor is not None:
+                    self._retired.append(self._descriptor)
+                self._descriptor = None
+
     def read(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Read the half-open rectangle rows × columns into `out`; see `Source.read`."""
         require_rectangle(self.spec, rows, columns, out)
         height, width = self.spec.shape
         if self.column_order:
             rows, columns, out, width = columns, rows, out.T, height
-        descriptor = self._opened()
         try:
-            read_rows(descriptor, self.offset, width, self.stored, rows, columns, out)
+            persist(
+                lambda: read_rows(self._opened(), self.offset, width, self.stored, rows, columns, out), self._open_anew
+            )
         except (OSError, EOFError) as error:
             self.stamps[0].require_unchanged()
+            kept_back = refusal(error)
+            if kept_back is not None:
+                raise unreadable(self.path, [show_place(rows, columns)], kept_back) from error
             raise DamagedSourceError(
                 f"{self.path} cannot be read to its end",
                 evidence=[str(error)],

@@ -12,6 +12,7 @@ from bigsvd.errors import NoMatrixError, UnsupportedMatrixError
 from bigsvd.source.access import STRICT, Access
 from bigsvd.source.candidate import SPARSE_TYPES, Candidate, choose, listing
 from bigsvd.source.container import container
+from bigsvd.source.home import Home
 from bigsvd.source.spec import Source
 
 
@@ -121,14 +122,15 @@ def _open_hdf5(path: str, matrix: str | None, access: Access) -> Source:
     from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
     from bigsvd.source.hdf5_walk import is_sparse, walk_hdf5
 
+    home = Home(path, follow=access.follow_links)
     with library_errors_named(path), open_hdf5(path) as file:
         import h5py
 
         if matrix is None:
-            inside = choose(walk_hdf5(file), path).path
+            inside = choose(walk_hdf5(file, home), path).path
         else:
             inside = "/" + matrix.strip("/")
-            thing = _object_at(file, inside, path)
+            thing = _object_at(file, inside, home)
             if isinstance(thing, h5py.Group):
                 if is_sparse(thing):
                     raise UnsupportedMatrixError(
@@ -136,21 +138,23 @@ def _open_hdf5(path: str, matrix: str | None, access: Access) -> Source:
                         evidence=[f"it holds: {', '.join(list(thing)[:8])}"],
                         remedy="Name a dense matrix, or store this one dense.",
                     )
-                inside = choose(walk_hdf5(file, inside), f"{path}:{inside}").path
+                inside = choose(walk_hdf5(file, home, inside), f"{path}:{inside}").path
             elif not isinstance(thing, h5py.Dataset):
                 raise NoMatrixError(f"{path}:{inside} is a type definition, not an array", remedy="Name an array.")
     return Hdf5Source(path, inside, access)
 
 
-def _object_at(file: Any, inside: str, path: str) -> Any:
+def _object_at(file: Any, inside: str, home: Home) -> Any:
+    from bigsvd.source.hdf5_links import require_path_inside
     from bigsvd.source.hdf5_walk import walk_hdf5
 
+    require_path_inside(file, inside, home)
     try:
         return file[inside]
     except (KeyError, OSError, RuntimeError, ValueError) as error:
         raise NoMatrixError(
-            f"{path} holds nothing under {inside}",
-            evidence=listing(found for found in walk_hdf5(file) if found.usable or found.path == inside),
+            f"{home.path} holds nothing under {inside}",
+            evidence=listing(found for found in walk_hdf5(file, home) if found.usable or found.path == inside),
             remedy="Name one of its matrices with --matrix.",
         ) from error
 
@@ -160,7 +164,7 @@ def _survey_hdf5(path: str, access: Access) -> list[Candidate]:
     from bigsvd.source.hdf5_walk import walk_hdf5
 
     with library_errors_named(path), open_hdf5(path) as file:
-        return walk_hdf5(file)
+        return walk_hdf5(file, Home(path, follow=access.follow_links))
 
 
 def _open_zarr(path: str, matrix: str | None, access: Access) -> Source:
@@ -169,7 +173,7 @@ def _open_zarr(path: str, matrix: str | None, access: Access) -> Source:
     from bigsvd.source.zarr_store import open_keys
     from bigsvd.source.zarr_walk import group_attributes, walk_zarr
 
-    keys = open_keys(path)
+    keys = open_keys(path, follow=access.follow_links)
     start = (matrix or "").strip("/")
     if read_metadata(keys, start) is not None:
         return ZarrSource(path, start, access)
@@ -191,7 +195,7 @@ def _survey_zarr(path: str, access: Access) -> list[Candidate]:
     from bigsvd.source.zarr_store import open_keys
     from bigsvd.source.zarr_walk import walk_zarr
 
-    return walk_zarr(open_keys(path))
+    return walk_zarr(open_keys(path, follow=access.follow_links))
 
 
 def _open_npy(path: str, matrix: str | None, access: Access) -> Source:

@@ -7,6 +7,7 @@ import os
 
 import numpy as np
 
+from bigsvd.source.persist import persist
 from bigsvd.source.rectangle import Span
 
 # Rows of at least this size are read to where they belong: 7 GB/s a core with 8 kB, and 3.6 with 2 kB, for which the
@@ -102,7 +103,7 @@ class Descriptor:
     """An open file that threads read by position; closed with its last owner."""
 
     def __init__(self, path: str) -> None:
-        self.number = os.open(path, os.O_RDONLY | os.O_CLOEXEC)
+        self.number = persist(lambda: os.open(path, os.O_RDONLY | os.O_CLOEXEC))
 
     def close(self) -> None:
         """Close the file; once is enough."""

@@ -8,6 +8,7 @@ from collections.abc import Iterable
 from dataclasses import dataclass
 
 from bigsvd.errors import SourceChangedError
+from bigsvd.source.persist import PersistentError, persist, unreadable
 from bigsvd.units import show_count
 
 
@@ -23,13 +24,15 @@ class FileStamp:
     @classmethod
     def of(cls, path: str) -> FileStamp:
         """Take the stamp of a file as it is now."""
-        found = os.stat(path)
+        found = persist(lambda: os.stat(path))
         return cls(path, found.st_size, found.st_mtime_ns, found.st_ino)
 
     def require_unchanged(self) -> None:
         """Refuse a file that was written to, replaced or removed since; one system call."""
         try:
             now = FileStamp.of(self.path)
+        except PersistentError as error:
+            raise unreadable(self.path, [], error) from error
         except OSError as error:
             raise SourceChangedError(
                 f"{self.path} could be opened before and cannot be found now",

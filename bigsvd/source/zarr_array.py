@@ -3,19 +3,19 @@
 from __future__ import annotations
 
 import os
-import shlex
 import threading
 from typing import Any
 
 import numpy as np
 
-from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, UnsupportedMatrixError
+from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, SourceError, UnsupportedMatrixError
 from bigsvd.source.access import STRICT, Access
 from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
 from bigsvd.source.complete import absent_error, settle_absent
 from bigsvd.source.entries import decoded_type, type_caution
 from bigsvd.source.fill import zarr_fill
 from bigsvd.source.hdf5_dataset import unapplied_attributes
+from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.rectangle import Span, clip, require_rectangle, show_chunk, show_place, touched
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
@@ -25,7 +25,7 @@ from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
 from bigsvd.source.zarr_read import Reader, open_zarr, python_reader
 from bigsvd.source.zarr_store import DirectoryKeys, KeyStore, open_keys
 from bigsvd.source.zarr_walk import describe_zarr, group_attributes, stored_bytes
-from bigsvd.units import show_shape
+from bigsvd.units import shell_word, show_shape
 
 MEANT = "write the array again with write_empty_chunks=True."
 _STATE = ("path", "inside", "access", "spec", "stamps", "metadata", "_absent")
@@ -50,7 +50,7 @@ class ZarrSource:
         self.access = access
         self._absent: AbsentChunks | None = None
         self._forget()
-        self.keys: KeyStore = open_keys(path)
+        self.keys: KeyStore = open_keys(path, follow=access.follow_links)
         self.spec = self._describe()
         self._opened()
 
@@ -67,7 +67,7 @@ class ZarrSource:
     def __setstate__(self, state: dict[str, Any]) -> None:
         self.__dict__.update(state)
         self._forget()
-        self.keys = open_keys(self.path)
+        self.keys = open_keys(self.path, follow=self.access.follow_links)
 
     def __repr__(self) -> str:
         return f"ZarrSource({self.path!r}, {self.inside!r})"
@@ -85,7 +85,7 @@ class ZarrSource:
             raise UnsupportedMatrixError(
                 f"{name} is no matrix that can be decomposed: {said.reason}",
                 evidence=[f"shape {show_shape(said.shape)}, {said.dtype}, {said.encoding}"],
-                remedy=f"See what else the store holds with: bigsvd inspect {shlex.quote(self.path)}",
+                remedy=f"See what else the store holds with: bigsvd inspect {shell_word(self.path)}",
             )
         self.metadata: ZarrMetadata = metadata
         marks = [self.path] if os.path.isfile(self.path) else self._mark_files()
@@ -171,13 +171,14 @@ class ZarrSource:
     def _open_reader(self) -> Reader:
         """Choose the reader: chunk by chunk in the calling thread where all codecs are known, else zarr-python."""
         if self._direct:
-            self._files = ZarrFiles(self._file, self.metadata, self._by_library, self._accepted)
+            assert isinstance(self.keys, DirectoryKeys)
+            keys = self.keys
+            self._files = ZarrFiles(
+                lambda chunk: keys.open(self._key(chunk)), self.metadata, self._by_library, self._accepted
+            )
             return self._files.fill
         self._open_library()
         return self._by_library
-
-    def _file(self, coordinates: tuple[int, int]) -> str:
-        return os.path.join(self.path, self._key(coordinates))
 
     def _open_library(self) -> Reader:
         try:
@@ -218,11 +219,14 @@ class ZarrSource:
             return
         reader = self._opened()
         try:
-            reader(rows, columns, out)
+            persist(lambda: reader(rows, columns, out))
         except Exception as error:  # codecs come from other packages and raise what they like
             self._require_unchanged()
             if isinstance(error, (BigsvdError, MemoryError)):
                 raise
+            kept_back = refusal(error)
+            if kept_back is not None:
+                raise self._unreadable(rows, columns, error, kept_back) from error
             raise self._damage(reader, rows, columns, error) from error
         self._require_unchanged()
 
@@ -235,6 +239,13 @@ class ZarrSource:
     def _require_unchanged(self) -> None:
         for stamp in self.stamps:
             stamp.require_unchanged()
+
+    def _unreadable(self, rows: Span, columns: Span, error: Exception, why: OSError) -> SourceError:
+        place = [show_place(rows, columns)]
+        if isinstance(error, ChunkError):
+            chunk = show_chunk(error.coordinates, self.spec.shape, self._chunks)
+            place = [f"{chunk}; key {self._key(error.coordinates)}", *error.evidence]
+        return unreadable(self.spec.name, place, why)
 
     def _damage(self, reader: Reader, rows: Span, columns: Span, error: Exception) -> DamagedSourceError:
         """Name the first chunk of the rectangle that is absent or does not decode, and say what is wrong with it."""

@@ -10,20 +10,21 @@ import contextlib
 import os
 import stat
 from collections.abc import Callable
+from functools import partial
 from typing import Protocol
 
 import numpy as np
 
+from bigsvd.errors import BigsvdError
 from bigsvd.source.chunk_decoder import ChunkDecoder, ChunkError
 from bigsvd.source.codecs import FramingUnknownError
+from bigsvd.source.persist import persist
 from bigsvd.source.positional import announce
 from bigsvd.source.rectangle import Span, clip, overlap, touched
 from bigsvd.source.workspace import Workspace, Workspaces
 from bigsvd.source.zarr_metadata import ZarrMetadata
 
 Fill = Callable[[Span, Span, np.ndarray], None]
-# A pipe in place of a chunk must not keep a reader waiting.
-_READ = os.O_RDONLY | os.O_CLOEXEC | os.O_NONBLOCK
 
 
 class ChunkAbsentError(ChunkError):
@@ -47,8 +48,8 @@ class ZarrFiles:
 
     Parameters
     ----------
-    file_of : callable
-        Path of the file of a chunk, by its coordinates.
+    opened : callable
+        Opens the file of a chunk, by its coordinates, and returns its descriptor.
     metadata : ZarrMetadata
         With a known `layout`.
     library : callable
@@ -59,7 +60,7 @@ class ZarrFiles:
 
     def __init__(
         self,
-        file_of: Callable[[tuple[int, int]], str],
+        opened: Callable[[tuple[int, int]], int],
         metadata: ZarrMetadata,
         library: Fill,
         accepted: Accepted = _none_accepted,
@@ -67,7 +68,7 @@ class ZarrFiles:
         layout = metadata.layout
         if layout is None:
             raise ValueError("codecs that are not known here")
-        self._file_of = file_of
+        self._open = opened
         self._accepted = accepted
         self._library = library
         self._chunks = metadata.chunks[0], metadata.chunks[1]
@@ -84,10 +85,11 @@ class ZarrFiles:
                 part_rows, part_columns = clip(i, self._chunks[0], rows), clip(j, self._chunks[1], columns)
                 part = out[_from(rows, part_rows), _from(columns, part_columns)]
                 try:
-                    self._read(i, j, part_rows, part_columns, part, workspace)
+                    # A handle that a server forgot is opened anew with the chunk.
+                    persist(partial(self._read, i, j, part_rows, part_columns, part, workspace))
                 except FramingUnknownError:
                     self._library(part_rows, part_columns, part)
-                except (ChunkError, MemoryError):
+                except (ChunkError, BigsvdError, MemoryError):
                     raise
                 except Exception as error:  # every codec raises what it likes
                     raise ChunkError((i, j), *self._expected(), f"decoding says: {error}") from error
@@ -99,7 +101,7 @@ class ZarrFiles:
         for chunk in touched(rows, columns, self._chunks):
             # Whoever reads it says what is wrong with it.
             with contextlib.suppress(OSError):
-                descriptor = os.open(self._file_of(chunk), _READ)
+                descriptor = self._open(chunk)
                 try:
                     announce(descriptor, 0, os.fstat(descriptor).st_size)
                 finally:
@@ -107,7 +109,7 @@ class ZarrFiles:
 
     def _read(self, i: int, j: int, rows: Span, columns: Span, out: np.ndarray, workspace: Workspace) -> None:
         try:
-            descriptor = os.open(self._file_of((i, j)), _READ)
+            descriptor = self._open((i, j))
         except (FileNotFoundError, NotADirectoryError):
             value = self._accepted((i, j))
             if value is None:

@@ -2,16 +2,20 @@
 
 from __future__ import annotations
 
+import errno
 import json
 import os
 import stat
 import zipfile
 from collections.abc import Iterator
-from pathlib import Path
 from typing import Any, Protocol
 
 from bigsvd.errors import DamagedSourceError
+from bigsvd.source.home import Home
+from bigsvd.source.persist import persist
 
+# Consolidated metadata of a hundred thousand arrays have about as much.
+MOST_METADATA = 64 * 2**20
 METADATA = ("zarr.json", ".zarray", ".zgroup")
 
 
@@ -24,7 +28,7 @@ class KeyStore(Protocol):
         """Value of a key, None where there is none."""
         ...
 
-    def children(self, key: str) -> Iterator[tuple[str, bool]]:
+    def children(self, key: str, links: list[str] | None = None) -> Iterator[tuple[str, bool]]:
         """Names directly below a key, and whether each is a file."""
         ...
 
@@ -38,26 +42,78 @@ class KeyStore(Protocol):
 
 
 class DirectoryKeys:
-    """Keys of a store that is a directory."""
+    """Keys of a store that is a directory.
 
-    def __init__(self, path: str) -> None:
+    Parameters
+    ----------
+    path : str
+    follow : bool
+        Whether symbolic links out of the store are followed.
+    """
+
+    def __init__(self, path: str, *, follow: bool = False) -> None:
         self.path = path
+        self._home = Home(path, follow=follow)
+        self._inside: set[str] = set()
 
     def _at(self, key: str) -> str:
         return os.path.join(self.path, key) if key else self.path
 
+    def _require_inside(self, path: str) -> None:
+        self._home.require(self.path, [path], f"the symbolic link {path}")
+
+    def open(self, key: str) -> int:
+        """Open a value for reading and return its descriptor; a link out of the store is refused.
+
+        Raises
+        ------
+        FileNotFoundError, NotADirectoryError
+            If there is no such key.
+        OutsideError
+            If it, or a folder on the way, is a symbolic link out of the store, and links are not followed.
+        """
+        path = self._at(key)
+        folder = os.path.dirname(path)
+        if folder not in self._inside:
+            self._require_inside(folder)
+            self._inside.add(folder)
+        # A pipe would be waited for.
+        flags = os.O_RDONLY | os.O_CLOEXEC | os.O_NONBLOCK
+        try:
+            return persist(lambda: os.open(path, flags | os.O_NOFOLLOW))
+        except OSError as error:
+            if error.errno != errno.ELOOP:
+                raise
+        self._require_inside(path)
+        return persist(lambda: os.open(path, flags))
+
     def get(self, key: str) -> bytes | None:
         """Read a small value whole."""
         try:
-            return Path(self._at(key)).read_bytes()
-        except (FileNotFoundError, IsADirectoryError, NotADirectoryError):
+            descriptor = self.open(key)
+        except (FileNotFoundError, NotADirectoryError):
             return None
+        with open(descriptor, "rb") as file:
+            found = os.fstat(descriptor)
+            if not stat.S_ISREG(found.st_mode):
+                return None
+            require_small(self.path, key, found.st_size)
+            return persist(lambda: file.read(MOST_METADATA + 1))
 
-    def children(self, key: str) -> Iterator[tuple[str, bool]]:
-        """List a directory without holding it; nothing where there is none."""
+    def children(self, key: str, links: list[str] | None = None) -> Iterator[tuple[str, bool]]:
+        """List a directory without holding it; nothing where there is none.
+
+        A symbolic link out of the store is refused, or noted in `links` where that is given.
+        """
         try:
-            with os.scandir(self._at(key)) as entries:
+            with persist(lambda: os.scandir(self._at(key))) as entries:
                 for entry in entries:
+                    if entry.is_symlink() and links is not None and not self._home.follow:
+                        if not self._home.holds(entry.path):
+                            links.append(entry.path)
+                            continue
+                    elif entry.is_symlink():
+                        self._require_inside(entry.path)
                     yield entry.name, entry.is_file()
         except (FileNotFoundError, NotADirectoryError):
             return
@@ -65,16 +121,24 @@ class DirectoryKeys:
     def size(self, key: str) -> int | None:
         """Ask the file system; a directory in place of a file counts as absent."""
         try:
-            found = os.stat(self._at(key))
+            descriptor = self.open(key)
         except (FileNotFoundError, NotADirectoryError):
             return None
+        try:
+            found = os.fstat(descriptor)
+        finally:
+            os.close(descriptor)
         return found.st_size if stat.S_ISREG(found.st_mode) else None
 
     def part(self, key: str, start: int, size: int) -> bytes:
         """Read a few bytes of a file."""
-        with open(self._at(key), "rb") as file:
-            file.seek(start, os.SEEK_END if start < 0 else os.SEEK_SET)
-            return file.read(size)
+        descriptor = self.open(key)
+        try:
+            if start < 0:
+                start = max(0, os.fstat(descriptor).st_size + start)
+            return persist(lambda: os.pread(descriptor, size, start))
+        finally:
+            os.close(descriptor)
 
 
 class ZipKeys:
@@ -103,10 +167,11 @@ class ZipKeys:
         """Read a small value whole."""
         if key not in self._sizes:
             return None
+        require_small(self.path, key, self._sizes[key])
         with zipfile.ZipFile(self.path) as file:
             return file.read(self.root + key)
 
-    def children(self, key: str) -> Iterator[tuple[str, bool]]:
+    def children(self, key: str, links: list[str] | None = None) -> Iterator[tuple[str, bool]]:
         """List from the directory of the zip file."""
         yield from self._below.get(key, {}).items()
 
@@ -127,9 +192,18 @@ def _root_folder(names: dict[str, int]) -> str:
     return min(folders, key=lambda folder: (folder.count("/"), folder), default="")
 
 
-def open_keys(path: str) -> KeyStore:
-    """List a store by its path."""
-    return DirectoryKeys(path) if os.path.isdir(path) else ZipKeys(path)
+def require_small(path: str, key: str, size: int) -> None:
+    """Refuse metadata of a size that nobody writes, before they are read."""
+    if size > MOST_METADATA:
+        raise DamagedSourceError(
+            f"the Zarr metadata at {path}/{key} have {size:,} bytes, more than the {MOST_METADATA:,} read here",
+            remedy="Open the array below it by --matrix, or write the metadata again without consolidating them.",
+        )
+
+
+def open_keys(path: str, *, follow: bool = False) -> KeyStore:
+    """List a store by its path; links out of it are followed only if told so."""
+    return DirectoryKeys(path, follow=follow) if os.path.isdir(path) else ZipKeys(path)
 
 
 def read_document(keys: KeyStore, key: str) -> dict[str, Any] | None:
@@ -145,7 +219,7 @@ def read_document(keys: KeyStore, key: str) -> dict[str, Any] | None:
         return None
     try:
         document = json.loads(text)
-    except ValueError as error:
+    except (ValueError, RecursionError) as error:
         raise _unreadable(keys, key, f"{len(text)} bytes; {error}") from error
     if not isinstance(document, dict):
         raise _unreadable(keys, key, f"a JSON object is expected, not {type(document).__name__}")

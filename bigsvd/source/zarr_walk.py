@@ -3,12 +3,18 @@
 from __future__ import annotations
 
 import math
+import os
+from dataclasses import replace
+from itertools import islice
 from typing import Any
 
-from bigsvd.errors import DamagedSourceError
+from bigsvd.errors import SourceError
 from bigsvd.source.candidate import SPARSE, SPARSE_TYPES, Candidate, why_unusable
 from bigsvd.source.entries import decoded_type
 from bigsvd.source.hints import NO_HINT, Hint, annotated_hint, hint_from_names
+from bigsvd.source.home import OutsideError
+from bigsvd.source.rectangle import grid_shape
+from bigsvd.source.zarr_complete import AbsentChunks, absent_keys, count_absent_chunks
 from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
 from bigsvd.source.zarr_store import KeyStore, read_document
 from bigsvd.units import show_count
@@ -28,20 +34,46 @@ def walk_zarr(keys: KeyStore, start: str = "", most_nodes: int = MOST_NODES) -> 
         if seen > most_nodes:
             found.append(Candidate("…", reason=f"more than {show_count(most_nodes)} nodes; the rest is not listed"))
             break
+        links: list[str] = []
         try:
             array = read_metadata(keys, path)
             attributes = group_attributes(keys, path) if array is None else {}
-        except DamagedSourceError as error:
+            if array is not None:
+                stored = stored_bytes(keys, path)
+                said = describe_zarr(array, path, root, stored)
+                # Where files are too many to be added up, they are too many to be looked for.
+                counted = said.usable and stored is not None
+                found.append(replace(said, absent_chunks=_absent(keys, path, array) if counted else None))
+            elif attributes.get("encoding-type") in SPARSE_TYPES:
+                found.append(Candidate(path, reason=SPARSE))
+            elif path.count("/") < DEEPEST:
+                below = islice(keys.children(path, links), most_nodes)
+                names = sorted(name for name, is_file in below if not is_file and not name.startswith("."))
+                waiting += [f"{path}/{name}" if path else name for name in names]
+            else:
+                found.append(Candidate(path, reason=f"groups below {DEEPEST} others are not looked into"))
+        except OutsideError as error:
+            found.append(Candidate(path, reason=error.problem, outside=error.files))
+        except SourceError as error:
             found.append(Candidate(path, reason=f"{error.problem} ({'; '.join(error.evidence)})"))
-            continue
-        if array is not None:
-            found.append(describe_zarr(array, path, root, stored_bytes(keys, path)))
-        elif attributes.get("encoding-type") in SPARSE_TYPES:
-            found.append(Candidate(path, reason=SPARSE))
-        elif path.count("/") < DEEPEST:
-            names = sorted(name for name, is_file in keys.children(path) if not is_file and not name.startswith("."))
-            waiting += [f"{path}/{name}" if path else name for name in names]
+        found += [_linked(keys, link) for link in links]
     return found
+
+
+def _linked(keys: KeyStore, link: str) -> Candidate:
+    """A symbolic link out of the store, which is not looked into."""
+    target = os.path.realpath(link)
+    reason = f"a symbolic link to {target}, outside the store: add --follow-links to look into it"
+    return Candidate(os.path.relpath(link, keys.path), reason=reason, outside=(target,))
+
+
+def _absent(keys: KeyStore, path: str, array: ZarrMetadata) -> int | None:
+    """How many chunks were never written; None where there are too many to be looked for."""
+    if math.prod(grid_shape((array.shape[0], array.shape[1]), (array.chunks[0], array.chunks[1]))) > 10_000:
+        return None
+    at = f"{path}/" if path else ""
+    absent = AbsentChunks(absent_keys(keys, path, array))
+    return count_absent_chunks(absent, keys, lambda place: at + array.key(place), array)[0]
 
 
 def group_attributes(keys: KeyStore, path: str) -> dict[str, Any]:
