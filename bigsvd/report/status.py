@@ -21,8 +21,8 @@ if TYPE_CHECKING:
 
 NAME = "status.json"
 FORMAT = 1
-# Seconds between two writings.
-EVERY = 3.0
+# Seconds between two writings, and before a new stage is told.
+EVERY, SOONEST = 3.0, 0.5
 
 
 class StatusFile:
@@ -62,11 +62,12 @@ class StatusFile:
                 self._verdict = event.note
             if event.stage in SAID:
                 return
-            if self._stage is None or not self._stage.continues(event):
+            new = self._stage is None or not self._stage.continues(event)
+            if self._stage is None or new:
                 self._stage = Stage(event, now)
             else:
                 self._stage.take(event, now)
-            if now - self._written >= EVERY:
+            if now - self._written >= (SOONEST if new else EVERY):
                 self._write("running", now)
 
     def close(self, state: str, problem: str | None = None) -> None:

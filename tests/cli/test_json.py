@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 import pytest
 from cli_samples import finish, run
+from slow_runs import OPTIONS, kept, start, wait_for, write_slope
 
 PAGE = Path(__file__).parents[2] / "docs" / "json.md"
 
@@ -52,6 +53,27 @@ def test_plan(finished: tuple[Path, Path]) -> None:
     found = printed("plan", finished[0], "--rank", 4)
     assert set(found) == documented("plan")
     assert sum(term["size"] for term in found["memory"]) == found["planned_bytes"] <= found["memory_bytes"]
+
+
+def keys_of(title: str) -> set[str]:
+    """Keys in the first column of the table of a section."""
+    section = PAGE.read_text().split(f"## `{title}`", 1)[1].split("\n## ", 1)[0]
+    return {key for row in re.findall(r"^\| (`[a-z].*?) \|", section, re.M) for key in re.findall(r"`(\w+)`", row)}
+
+
+def test_a_stopped_run_and_its_status_file(tmp_path: Path) -> None:
+    out = tmp_path / "out.zarr"
+    process = start("decompose", write_slope(tmp_path / "slope.npy"), "--out", out, "--save-every", 0, *OPTIONS)
+    wait_for(process, kept(out, 2))
+    process.terminate()
+    process.communicate(timeout=30)
+    found = printed("plan", tmp_path / "out.zarr.run")
+    assert set(found) == keys_of("bigsvd plan OUT.zarr.run --json")
+    assert set(found["status"]) == keys_of("OUT.zarr.run/status.json")
+    assert found["status"] == json.loads((tmp_path / "out.zarr.run" / "status.json").read_text())
+    assert (found["running"], found["pilot"], found["sweep"]) == (False, True, 2)
+    assert found["status"]["state"] == "stopped"
+    assert found["command"].startswith("bigsvd decompose ")
 
 
 def test_decompose(finished: tuple[Path, Path], tmp_path: Path) -> None:

@@ -146,6 +146,48 @@ def test_while_it_plans_it_stops_at_once(tmp_path: Path, monkeypatch: pytest.Mon
     assert [path.name for path in tmp_path.iterdir()] == ["slope.npy"]
 
 
+def test_plan_of_the_folder_tells_where_a_run_stands_and_changes_nothing(tmp_path: Path) -> None:
+    matrix, out, folder = write_slope(tmp_path / "slope.npy"), tmp_path / "out.zarr", tmp_path / "out.zarr.run"
+    process = start("decompose", matrix, "--out", out, "--save-every", 0, *OPTIONS, pause=0.02)
+    wait_for(process, kept(out, 1))
+    told = run("plan", folder)
+    assert told.exit_code == 0
+    assert "a process is at it now" in " ".join(told.stdout.split())
+    process.terminate()
+    process.communicate(timeout=30)
+    before = {path: path.lstat().st_mtime_ns for path in tmp_path.rglob("*")}
+    told = run("plan", folder)
+    assert {path: path.lstat().st_mtime_ns for path in tmp_path.rglob("*")} == before
+    standing = read_standing(folder)
+    assert f"wave {standing.waves} of {standing.of} of sweep {standing.sweep}" in " ".join(told.stdout.split())
+    assert told.stdout.rstrip().splitlines()[-1].strip().startswith("bigsvd decompose ")
+    refused = run("plan", folder, "--rank", 3)
+    assert refused.exit_code == 2
+    assert "--rank has no meaning" in refused.stderr
+    (folder / "identity.json").write_text("tide")
+    assert run("plan", folder).exit_code == 2
+
+
+def test_the_log_tells_the_night(tmp_path: Path) -> None:
+    matrix, out = write_slope(tmp_path / "slope.npy"), tmp_path / "out.zarr"
+    words = ("decompose", matrix, "--out", out, "--save-every", 0, *OPTIONS)
+    process = start(*words)
+    wait_for(process, kept(out, 2))
+    process.terminate()
+    process.communicate(timeout=30)
+    start(*words, pause=0).communicate(timeout=60)
+    lines = [line[27:] for line in (tmp_path / "out.zarr.log").read_text().splitlines()]
+    titles = [line.split(":")[0].split("  ")[0] for line in lines]
+    stopped = titles.index("stopped")
+    assert titles[0] == "began"
+    assert "after sweep 1" in titles[:stopped]
+    assert titles[stopped + 1 : stopped + 3] == ["kept", "began"]
+    assert any(line.startswith("going on from ") for line in lines[stopped:])
+    assert titles[-2:] == ["finished", "in place"]
+    assert lines[-1] == f"in place: {out}"
+    assert shlex.join(["bigsvd", *map(str, words)]) in lines[0]
+
+
 def test_the_line_to_go_on_does_not_start_over(tmp_path: Path) -> None:
     matrix, out = write_slope(tmp_path / "slope.npy"), tmp_path / "out.zarr"
     process = start("decompose", matrix, "--out", out, "--start-over", "--save-every", 0, *OPTIONS)
