@@ -15,9 +15,9 @@ import json
 import subprocess
 import sys
 import tempfile
-import threading
 import time
 from collections.abc import Callable, Mapping
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import fields, replace
 from pathlib import Path
 from typing import Any
@@ -95,15 +95,11 @@ def figures(value: float) -> float:
     return float(f"{value:.{FIGURES - 1}e}")
 
 
-def together(workers: int, work: Callable[[int], None]) -> float:
-    """Wall seconds until all have done their share."""
-    running = [threading.Thread(target=work, args=(index,)) for index in range(workers)]
-    start = time.perf_counter()
-    for thread in running:
-        thread.start()
-    for thread in running:
-        thread.join()
-    return time.perf_counter() - start
+def together(workers: int, work: Callable[[int], None]) -> None:
+    """Let all do their share at once; the first error of any is raised."""
+    with ThreadPoolExecutor(workers) as pool:
+        for share in [pool.submit(work, index) for index in range(workers)]:
+            share.result()
 
 
 def swept(source: Source, geometry: Geometry, workers: int, scratch: Scratch | None, **task: Any) -> Spent:
@@ -227,12 +223,11 @@ def read_twice(bench: Bench, source: Source) -> Spent:
     return bench.seconds(lambda workers: read_seconds(source, workers), "read")
 
 
-def sample(kind: str) -> np.ndarray:
+def sample(kind: str, rows: int = ROWS, columns: int = COLUMNS, spectrum: str = "exponential") -> np.ndarray:
     """A benchmark matrix, whose entries compress as those of the benchmark do."""
-    recipe = make_recipe(kind, ROWS, COLUMNS)
-    return np.concatenate(
-        [recipe.block((slice(first, first + 1000), slice(0, COLUMNS))) for first in range(0, ROWS, 1000)]
-    )
+    recipe = make_recipe(kind, rows, columns, spectrum=spectrum)
+    bands = [slice(first, first + 1_000) for first in range(0, rows, 1_000)]
+    return np.concatenate([recipe.block((band, slice(0, columns))) for band in bands])
 
 
 # ---------------------------------------------------------------------------------------------------------- computing
@@ -392,12 +387,12 @@ print(json.dumps(taken | {name: record[name] for name in ("sweeps", "width")}))
 
 def whole_runs(bench: Bench, rates: Rates) -> dict[str, Any]:
     """What every run takes for start, slices and result, from small runs, each in a process of its own."""
-    # Slices of the first are 94 × 256, of the second 1,000 × 300.
-    square, long = (36_000, 5_000), (300_000, 300)
+    # Slices of the first are 66 × 256, of the second 1,000 × 300.
+    square, long = (20_000, 5_000), (300_000, 300)
     taken = {}
     for shape in (square, long):
         path = bench.folder / f"{shape[0]}.npy"
-        np.save(path, np.random.default_rng(1).integers(0, 200, shape, "u1"))
+        np.save(path, sample("hdf5-gzip", *shape, spectrum="inverse"))
         runs = [_run(bench, path) for _ in range(bench.runs)]
         taken[shape] = {name: min(run[name] for run in runs) for name in runs[0]}
     # What is written, beside taking left vectors from scratch twice.

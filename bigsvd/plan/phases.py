@@ -221,6 +221,8 @@ class _Model:
             return
         geometry = self.plan.geometry
         entries = panels * min(UNIT_LINES, geometry.lines / geometry.panels) * geometry.across
+        # Two wide copies, in memory that is new each time, take as long as six conversions.
+        self.ledger.work("products", 6 * entries, self.rates.convert["double"])
         for work, flops in (("double", 4), ("single", 2)):
             self.ledger.work("products", self.complex * flops * entries * block, self.rates.products[work])
 
