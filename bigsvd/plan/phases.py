@@ -220,7 +220,8 @@ class _Model:
         if self.work == "double":
             return
         geometry = self.plan.geometry
-        entries = panels * min(UNIT_LINES, geometry.lines / geometry.panels) * geometry.across
+        # Counted as whole units, lest plans of low panels be preferred for measuring less.
+        entries = panels * min(UNIT_LINES, geometry.lines) * geometry.across
         # Two wide copies, in memory that is new each time, take as long as six conversions.
         self.ledger.work("products", 6 * entries, self.rates.convert["double"])
         for work, flops in (("double", 4), ("single", 2)):
