@@ -73,6 +73,33 @@ def test_without_a_prediction_none_is_made_up() -> None:
     assert "predicted" not in text(record=attributes(predicted_seconds=None))
 
 
+def test_a_prediction_for_other_sweeps_says_for_how_many() -> None:
+    assert "(predicted 1 min 10 s for 3 sweeps)" in text(record=attributes(predicted_sweeps=3))
+    assert "(predicted 1 min 10 s)" in text(record=attributes(predicted_sweeps=4))
+
+
+def phase(predicted: float, measured: float, worker_seconds: float | None = None) -> dict[str, float | None]:
+    return {"predicted": predicted, "measured": measured, "worker_seconds": worker_seconds}
+
+
+def test_phases_are_told_beside_what_was_predicted_and_add_up() -> None:
+    phases = {"read": phase(10.0, 12.0, 24.0), "products": phase(20.0, 19.0, 38.0), "slices": phase(0.01, 0.02)}
+    lines = summary_lines(certificate(3), attributes(phases=phases), OUT, 100)
+    at = lines.index("Seconds by phase, predicted for 4 sweeps like these; work of 2 workers counted once:")
+    told = [line.split() for line in lines[at + 1 : at + 5]]
+    assert told == [
+        ["predicted", "taken"],
+        ["read", "and", "decode", "10.00", "12.00"],
+        ["products", "20.00", "19.00"],
+        ["in", "all", "30.01", "31.02"],
+    ]
+    assert decomposition_facts(certificate(3), attributes(phases=phases), OUT)["phases"] == phases
+
+
+def test_a_record_without_phases_has_no_table_of_them() -> None:
+    assert "Seconds by phase" not in text()
+
+
 def test_an_uncentred_matrix_has_energy_not_variance() -> None:
     record = attributes(preparation={"words": "not centred", "center": "none", "constant_features": 2})
     said = text(record=record)
