@@ -60,7 +60,8 @@ def require_room(needs: Sequence[Need]) -> None:
     """
     for need in needs:
         if not os.access(need.folder, os.W_OK | os.X_OK) or not need.folder.is_dir():
-            why = "is not writable" if need.folder.is_dir() else "does not exist"
+            found = "is not a folder" if need.folder.exists() else "does not exist"
+            why = "is not writable" if need.folder.is_dir() else found
             raise OptionError(
                 f"the folder for {need.what} {why}",
                 evidence=[f"folder: {need.folder}"],
