@@ -14,6 +14,7 @@ import numpy as np
 import pytest
 from click.testing import CliRunner, Result
 
+from bigsvd import api
 from bigsvd.cli import main
 from bigsvd.sweep import PanelReader
 
@@ -128,6 +129,12 @@ def meanwhile(monkeypatch: pytest.MonkeyPatch, action: Callable[[], None], *, af
 
     monkeypatch.setattr(PanelReader, "fetch", watched)
     return happened
+
+
+def fetches(night: Night, sweep: int, share: float) -> int:
+    """Panels fetched before that share of a sweep; the pilot fetches its own up to six times."""
+    plan = api.forecast(night.file, **night.options).plan
+    return 6 * len(plan.pilot_panels) + int((sweep - 1 + share) * plan.geometry.panels)
 
 
 def whole_bits(night: Night) -> dict[str, bytes]:

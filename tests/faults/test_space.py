@@ -12,7 +12,7 @@ from pathlib import Path
 from typing import Any
 
 import pytest
-from fault_samples import Night, meanwhile, whole_bits
+from fault_samples import Night, fetches, meanwhile, whole_bits
 
 from bigsvd.journal import read_standing
 from bigsvd.sweep import Scratch
@@ -30,14 +30,6 @@ def fill(place: Path) -> None:
         except OSError as error:
             if error.errno != errno.ENOSPC:
                 raise
-
-
-def fetches(night: Night, sweep: int, share: float) -> int:
-    """Panels fetched before that share of a sweep; the pilot fetches its own several times."""
-    from bigsvd import api
-
-    plan = api.forecast(night.file, **night.options).plan
-    return 8 * len(plan.pilot_panels) + int((sweep - 1 + share) * plan.geometry.panels)
 
 
 # ------------------------------------------------------------------------------------------------- before it reads
