@@ -88,6 +88,9 @@ def _all_widths(request: Request, across: int, route: str) -> Iterator[tuple[Wid
         yield replace(widths, start=closing, limit=min(across, closing + widths.grow + 2 * widths.test)), 2.0
         return
     for profile, sweeps in PROFILES.items():
+        if request.variance is not None and profile != "wide":
+            # How many components the share needs shows while sweeping, and a narrow basis gets there a sweep later.
+            continue
         sweeps = max(1.0, sweeps - SWEEPS_PER_DECADE * math.log10(request.tolerance / NOMINAL_TOLERANCE))
         for growths, more in RESTART_SWEEPS.items():
             widths = krylov_widths(request.rank, across, growths=growths, profile=profile)

@@ -75,6 +75,8 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
 def _width_words(best: Plan, found: list[Plan]) -> str:
     """Why blocks are wide or narrow."""
     profile = best.widths.profile
+    if best.request.variance is not None:
+        return "wide blocks, for the rank is found while they grow"
     other = [plan.nominal_seconds for plan in found if plan.route == best.route and plan.widths.profile != profile]
     why = {
         "wide": "wide blocks, for reading costs more than products",

@@ -92,6 +92,14 @@ def test_blocks_are_wide_where_reading_costs_more_than_products_and_narrow_elsew
         assert dict(plan.reasons)["width"].count(f"; {profile} blocks, for") == 1
 
 
+def test_a_rank_that_is_still_to_be_found_wants_wide_blocks() -> None:
+    matrix = spec(2_000_000, 8000)
+    assert plan_of(matrix, rank=20).widths.profile == "narrow"
+    plan = plan_of(matrix, variance=0.9, max_rank=20)
+    assert plan.widths.profile == "wide"
+    assert dict(plan.reasons)["width"].endswith("wide blocks, for the rank is found while they grow")
+
+
 def test_narrow_blocks_still_hold_the_neighbours_that_show_a_bulk() -> None:
     for rank in (1, 5, 10, 20, 200):
         widths = krylov_widths(rank, 10_000, profile="narrow")
