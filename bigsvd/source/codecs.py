@@ -14,6 +14,7 @@ import numpy as np
 _BLOSC_HEADER = struct.Struct("<4B3I")
 # Number of the codec inside Blosc, bits 5 to 7 of its flags.
 _BLOSC_SNAPPY = 2
+_ZSTD_FRAME, _ZSTD_SKIPPED = 0xFD2FB528, 0x184D2A50
 
 
 class FramingUnknownError(Exception):
@@ -74,7 +75,33 @@ def zstd(stored: np.ndarray, out: np.ndarray) -> int:
         # Reading on also compares the checksum, where the buffer was full before the end of the frame.
         if frames.read(1):
             raise ValueError(f"it decodes to more than {out.size:,} bytes")
+    # The stream takes bytes that end before the checksum for the end.
+    _require_whole_frames(stored.data)
     return size
+
+
+def _require_whole_frames(stored: memoryview) -> None:
+    """Refuse Zstandard that is cut short: walk over the headers of its frames and blocks (RFC 8878, section 3.1)."""
+    place, size = 0, len(stored)
+    while place < size:
+        magic, descriptor = int.from_bytes(stored[place : place + 4], "little"), stored[min(place + 4, size - 1)]
+        if magic & 0xFFFFFFF0 == _ZSTD_SKIPPED:
+            place += 8 + int.from_bytes(stored[place + 4 : place + 8], "little")
+            continue
+        if magic != _ZSTD_FRAME:
+            raise ValueError(f"{size - place:,} bytes behind the last frame are no frame")
+        single, checked = descriptor >> 5 & 1, descriptor >> 2 & 1
+        # Window, dictionary and decoded size, each of as many bytes as the descriptor says.
+        place += 5 + (not single) + (0, 1, 2, 4)[descriptor & 3] + (single, 2, 4, 8)[descriptor >> 6]
+        last = 0
+        while not last and place < size:
+            block = int.from_bytes(stored[place : place + 3], "little")
+            last = block & 1
+            # A block that repeats one byte holds that byte only.
+            place += 3 + (1 if block >> 1 & 3 == 1 else block >> 3)
+        place += 4 * checked
+        if not last or place > size:
+            raise ValueError(f"the last frame ends before its {'checksum' if last else 'last block'} does")
 
 
 def lz4(stored: np.ndarray, out: np.ndarray) -> int:

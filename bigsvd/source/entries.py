@@ -59,6 +59,8 @@ def show_type(stored: np.dtype) -> str:
 
 def type_caution(stored: np.dtype) -> tuple[str, ...]:
     """What a user should know about reading this type."""
+    if stored.kind in "iu" and stored.itemsize == 8:
+        return ("whole numbers beyond 2⁵³ in magnitude are rounded: everything is computed in double precision",)
     parts = [stored[name] for name in stored.names] if stored.names else [stored]
     limit = {"f": 8, "c": 16}
     if any(part.itemsize > limit.get(part.kind, 16) for part in parts):

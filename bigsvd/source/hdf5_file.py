@@ -13,20 +13,28 @@ from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, Source
 from bigsvd.source.persist import PersistentError, persist, unreadable
 from bigsvd.units import show_count
 
+# No locks on this file system, or none on a device that may only be read: ENOLCK, ENOSYS, EOPNOTSUPP, ENOTSUPP of NFS,
+# EROFS.
+_NO_LOCKS = (errno.ENOLCK, errno.ENOSYS, errno.EOPNOTSUPP, 524, errno.EROFS)
 _TRUNCATED = re.compile(r"eof = (\d+).*stored_eof = (\d+)")
 
 
 def open_hdf5(path: str) -> Any:
     """Open an HDF5 file read-only.
 
-    Locks are taken where the file system knows them. The chunk cache is off: chunks are read whole and once.
+    Locks are taken where the file system knows them; where it has none, the file is read without, and a change is
+    noticed by its size and time. The chunk cache is off: chunks are read whole and once.
     """
     import h5py
 
     def opened() -> Any:
         try:
             return h5py.File(path, "r", locking="best-effort", rdcc_nbytes=0)
-        except BlockingIOError as error:
+        except OSError as error:
+            if "unable to lock file" not in str(error):
+                raise
+            if _lock_errno(error) in _NO_LOCKS:
+                return h5py.File(path, "r", locking=False, rdcc_nbytes=0)
             # A writer's lock does not pass in seconds.
             raise _why_not_opened(path, error) from error
 
@@ -70,6 +78,12 @@ def library_errors_named(name: str) -> Iterator[None]:
         ) from error
 
 
+def _lock_errno(error: OSError) -> int:
+    """Why a lock was refused, which some versions of h5py tell in the text only."""
+    found = re.search(r"errno = (\d+)", str(error))
+    return int(found[1]) if found else error.errno or 0
+
+
 def _why_not_opened(path: str, error: OSError) -> SourceError:
     text = str(error)
     truncated = _TRUNCATED.search(text)
@@ -92,7 +106,8 @@ def _why_not_opened(path: str, error: OSError) -> SourceError:
         return SourceError(
             f"{path} is locked: another program has it open for writing",
             evidence=[text],
-            remedy="Close it there, or work on a copy of the file.",
+            remedy="Close it there, or work on a copy of the file. If the lock is left over from a program that is"
+            " gone, put HDF5_USE_FILE_LOCKING=FALSE before the command.",
         )
     if "already open for" in text:
         return DamagedSourceError(

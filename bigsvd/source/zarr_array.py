@@ -16,7 +16,16 @@ from bigsvd.source.entries import decoded_type, type_caution
 from bigsvd.source.fill import zarr_fill
 from bigsvd.source.hdf5_dataset import unapplied_attributes
 from bigsvd.source.persist import persist, refusal, unreadable
-from bigsvd.source.rectangle import Span, clip, require_rectangle, show_chunk, show_place, touched
+from bigsvd.source.rectangle import (
+    Span,
+    clip,
+    grid_shape,
+    require_countable,
+    require_rectangle,
+    show_chunk,
+    show_place,
+    touched,
+)
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
 from bigsvd.source.zarr_complete import AbsentChunks, absent_keys, count_absent_chunks, other_names
@@ -87,10 +96,11 @@ class ZarrSource:
                 evidence=[f"shape {show_shape(said.shape)}, {said.dtype}, {said.encoding}"],
                 remedy=f"See what else the store holds with: bigsvd inspect {shell_word(self.path)}",
             )
+        rows, columns = metadata.shape
+        require_countable(grid_shape((rows, columns), (metadata.chunks[0], metadata.chunks[1])), name)
         self.metadata: ZarrMetadata = metadata
         marks = [self.path] if os.path.isfile(self.path) else self._mark_files()
         self.stamps = tuple(FileStamp.of(mark) for mark in marks)
-        rows, columns = metadata.shape
         return MatrixSpec(
             name=name,
             shape=(rows, columns),

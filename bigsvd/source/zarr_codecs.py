@@ -17,6 +17,8 @@ from bigsvd.source.codecs import Stretch
 
 Undo = Callable[[Stretch, Stretch], Stretch]
 _SHUFFLE = "shuffle"
+# They make objects, some by running what stands in the chunk. Numbers need none of them.
+_OBJECTS = ("pickle", "msgpack", "msgpack2", "json", "json2", "categorize", "vlen-utf8", "vlen-bytes", "vlen-array")
 # Names in metadata, and the codec that they mean here.
 _FORMAT_2 = {name: name for name in ("blosc", "gzip", "lz4", _SHUFFLE, "zlib", "zstd")}
 _FORMAT_3 = {
@@ -50,6 +52,11 @@ UNDO: dict[str, Undo] = {
     "zlib": _bare(codecs.inflate),
     "zstd": _bare(codecs.zstd),
 }
+
+
+def object_codec(names: Sequence[str]) -> str:
+    """The first codec that makes objects, under its name in either format; empty where there is none."""
+    return next((name for name in names if str(name).removeprefix("numcodecs.") in _OBJECTS), "")
 
 
 @dataclass(frozen=True)

@@ -9,11 +9,13 @@ import numpy as np
 
 from bigsvd.errors import DamagedSourceError
 from bigsvd.source.entries import show_type
-from bigsvd.source.zarr_codecs import ChunkLayout, layout_2, layout_3
+from bigsvd.source.zarr_codecs import ChunkLayout, layout_2, layout_3, object_codec
 from bigsvd.source.zarr_shards import ShardIndex
 from bigsvd.source.zarr_store import KeyStore, read_document
 from bigsvd.units import show_shape
 
+# As many as NumPy has.
+MOST_AXES = 64
 _KEYS_3 = {
     *("zarr_format", "node_type", "shape", "data_type", "chunk_grid", "chunk_key_encoding", "fill_value", "codecs"),
     *("attributes", "dimension_names", "storage_transformers"),
@@ -49,6 +51,8 @@ class ZarrMetadata:
         How the entries of a chunk, or of an inner chunk, became bytes; None where not all of it is known here.
     note : str
         What is odd about it.
+    forbidden : str
+        A codec in it that makes objects and is never decoded.
     """
 
     zarr_format: int
@@ -68,6 +72,7 @@ class ZarrMetadata:
     dimension_names: tuple[str | None, ...] = ()
     layout: ChunkLayout | None = None
     note: str = ""
+    forbidden: str = ""
 
     def key(self, coordinates: tuple[int, int]) -> str:
         """Key of a chunk, below the array."""
@@ -123,10 +128,29 @@ def read_metadata(keys: KeyStore, path: str) -> ZarrMetadata | None:
     return found
 
 
+def _sides(numbers: Any) -> tuple[int, ...]:
+    """Shape or chunks as whole numbers; nothing else is taken for one."""
+    if not isinstance(numbers, list) or any(not isinstance(side, int) or isinstance(side, bool) for side in numbers):
+        raise ValueError(f"{show_value(numbers)} is no list of whole numbers")
+    if len(numbers) > MOST_AXES or any(abs(side) >= 2**63 for side in numbers):
+        raise ValueError(f"{show_value(numbers)}: no array has such a shape")
+    return tuple(numbers)
+
+
+def show_value(value: Any) -> str:
+    """A value from a document, cut to a line."""
+    text = repr(value)
+    return text if len(text) <= 80 else f"{text[:77]}…"
+
+
 def _require_sound(array: ZarrMetadata) -> None:
+    if array.separator not in (".", "/"):
+        raise ValueError(f"{show_value(array.separator)} between the numbers of a chunk")
+    if not isinstance(array.attributes, dict) or not all(isinstance(name, str) for name in array.codecs):
+        raise ValueError("attributes or codecs of another form")
     if len(array.chunks) != len(array.shape):
         raise ValueError(f"shape {array.shape} with chunks {array.chunks}")
-    if any(side < 0 for side in array.shape) or any(side < 1 for side in array.chunks):
+    if any(side < 0 for side in array.shape) or any(side < 1 for side in (*array.chunks, *(array.inner or ()))):
         raise ValueError(f"shape {array.shape} with chunks {array.chunks}")
 
 
@@ -134,11 +158,11 @@ def _version_2(document: dict[str, Any], attributes: dict[str, Any], note: str) 
     dtype, words = _type_2(document["dtype"])
     chain = [*(document.get("filters") or ()), *([document["compressor"]] if document["compressor"] else ())]
     names = attributes.get("_ARRAY_DIMENSIONS")
-    shape = tuple(map(int, document["shape"]))
+    shape = _sides(document["shape"])
     return ZarrMetadata(
         zarr_format=2,
         shape=shape,
-        chunks=tuple(map(int, document["chunks"])),
+        chunks=_sides(document["chunks"]),
         dtype=dtype,
         type_words=words,
         fill=document.get("fill_value"),
@@ -151,6 +175,7 @@ def _version_2(document: dict[str, Any], attributes: dict[str, Any], note: str) 
         dimension_names=tuple(names) if isinstance(names, list) else (),
         layout=layout_2(document, dtype),
         note=note,
+        forbidden=object_codec([step["id"] for step in chain]),
     )
 
 
@@ -159,15 +184,15 @@ def _version_3(document: dict[str, Any], attributes: dict[str, Any], note: str) 
     grid, encoding = document["chunk_grid"], document["chunk_key_encoding"]
     if grid["name"] != "regular":
         dtype, words = None, f"numbers on a chunk grid that is {grid['name']}"
-        chunks = tuple(map(int, document["shape"]))
+        chunks = _sides(document["shape"])
     else:
-        chunks = tuple(map(int, grid["configuration"]["chunk_shape"]))
+        chunks = _sides(grid["configuration"]["chunk_shape"])
     default = encoding["name"] == "default"
     separator = (encoding.get("configuration") or {}).get("separator") or ("/" if default else ".")
     codecs = document["codecs"]
     shards = [step["configuration"] for step in codecs if step["name"] == "sharding_indexed"]
     steps = [*(shards[0]["codecs"] if shards else ()), *codecs]
-    inner = tuple(map(int, shards[0]["chunk_shape"])) if shards else ()
+    inner = _sides(shards[0]["chunk_shape"]) if shards else ()
     index = ShardIndex.of(shards[0], chunks, inner) if shards and len(codecs) == 1 else None
     # What a reader must understand is told by zarr-python, which refuses what it does not.
     known = (
@@ -179,7 +204,7 @@ def _version_3(document: dict[str, Any], attributes: dict[str, Any], note: str) 
     )
     return ZarrMetadata(
         zarr_format=3,
-        shape=tuple(map(int, document["shape"])),
+        shape=_sides(document["shape"]),
         chunks=tuple(max(1, side) for side in chunks),
         dtype=dtype,
         type_words=words,
@@ -199,6 +224,7 @@ def _version_3(document: dict[str, Any], attributes: dict[str, Any], note: str) 
         dimension_names=tuple(document.get("dimension_names") or ()),
         layout=layout_3(shards[0]["codecs"] if shards else codecs, dtype) if known else None,
         note=note,
+        forbidden=object_codec([step["name"] for step in steps]),
     )
 
 

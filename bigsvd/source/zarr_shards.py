@@ -38,7 +38,9 @@ class ShardIndex:
         """Tell it from the configuration of the codec; None where it is written in a way not known here."""
         steps = [(step["name"], (step.get("configuration") or {})) for step in shard.get("index_codecs", ())]
         names = [name for name, _ in steps]
-        whole = len(outer) == len(inner) == 2 and all(side % part == 0 for side, part in zip(outer, inner, strict=True))
+        whole = len(outer) == len(inner) == 2 and all(
+            part > 0 and side % part == 0 for side, part in zip(outer, inner, strict=True)
+        )
         location = shard.get("index_location", "end")
         if names not in (["bytes"], ["bytes", "crc32c"]) or not whole or location not in ("start", "end"):
             return None

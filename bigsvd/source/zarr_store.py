@@ -134,8 +134,10 @@ class DirectoryKeys:
         """Read a few bytes of a file."""
         descriptor = self.open(key)
         try:
-            if start < 0:
-                start = max(0, os.fstat(descriptor).st_size + start)
+            whole = os.fstat(descriptor).st_size
+            start = max(0, whole + start) if start < 0 else start
+            # A damaged size must not be allocated.
+            size = min(size, whole)
             return persist(lambda: os.pread(descriptor, size, start))
         finally:
             os.close(descriptor)

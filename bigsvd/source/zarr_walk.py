@@ -88,6 +88,8 @@ def describe_zarr(array: ZarrMetadata, path: str, root: dict[str, Any], stored: 
     """Say all that is known of an array without opening it."""
     numeric = array.dtype is not None and decoded_type(array.dtype) is not None
     reason = why_unusable(array.shape, numeric, array.type_words)
+    if array.forbidden:
+        reason = f"its codec {array.forbidden} makes objects, which can run what the writer liked: it is never decoded"
     hint, hint_reason = zarr_hint(array, path, root) if not reason else NO_HINT
     return Candidate(
         path=path,

@@ -104,3 +104,22 @@ def test_crc32c_is_that_of_its_definition() -> None:
     assert codecs.require_crc32c(stored) == 9
     with pytest.raises(ValueError, match="839206e3, 00000000 was written"):
         codecs.require_crc32c(np.frombuffer(b"123456789" + bytes(4), np.uint8))
+
+
+@pytest.mark.parametrize(
+    "options", [{"write_checksum": True}, {"write_checksum": False}, {"write_content_size": False}]
+)
+@pytest.mark.parametrize("size", [0, 1, 200, 300_000])
+def test_zstandard_cut_short_anywhere_is_refused(options: dict[str, bool], size: int) -> None:
+    data = np.random.default_rng(3).integers(0, 9, size, np.uint8).tobytes()
+    frame = zstandard.ZstdCompressor(**options).compress(data)
+    skipped = b"\x50\x2a\x4d\x18\x03\x00\x00\x00abc"
+    for stored in (frame, frame + skipped, skipped + frame, frame + frame):
+        out = np.zeros(2 * size, np.uint8)
+        assert out[: codecs.zstd(np.frombuffer(stored, np.uint8), out)].tobytes() in (data, data + data)
+    for cut in [*range(1, 12), len(frame) // 2]:
+        if cut < len(frame):
+            with pytest.raises(Exception, match=r"."):
+                codecs.zstd(np.frombuffer(frame[:-cut], np.uint8), np.zeros(size, np.uint8))
+    with pytest.raises(Exception, match=r"."):
+        codecs.zstd(np.frombuffer(frame + b"tide", np.uint8), np.zeros(size, np.uint8))
