@@ -24,6 +24,8 @@ ROUNDING_PANELS = 8
 STREAM_ROUNDING = 3
 # Ratio of the largest to the smallest change of scale above which a first sweep is made again.
 MOST_SCALE_SPREAD = 1e4
+# Entries of the fold below this, where the energy is zero, are those of a matrix whose squares vanished.
+VANISHING = 1e-150
 
 
 class OverflowInSingleError(Exception):
@@ -182,7 +184,7 @@ class Sweeps:
         if sums.overflow:
             self._give_up_single(block is not None)
         learnt = self._take_statistics(sums) if fresh else self._known_statistics()
-        self._refuse_range()
+        self._refuse_range(sums)
         if learnt is not None and learnt.column_scale is not None and _spread(learnt.column_scale) > MOST_SCALE_SPREAD:
             # Re-expressing what was multiplied in such coordinates would lose figures; the statistics are exact now.
             self.remarks.append("one more sweep: the pilot's scales were far from those of the whole matrix")
@@ -191,12 +193,15 @@ class Sweeps:
             return self.sweep(kind, block)
         return sums, learnt
 
-    def _refuse_range(self) -> None:
+    def _refuse_range(self, sums: Partial) -> None:
         """Refuse a matrix whose energy squared leaves the range of double precision."""
-        if not in_range(self.energy):
+        # Squares below 1e-323 vanish, as in a matrix of zeros; the fold squares nothing. Rounding of it is larger.
+        folded = np.zeros(1) if sums.triangle is None else np.abs(sums.triangle[self.ones :, self.ones :])
+        largest = float(folded.max(initial=0.0))
+        if not in_range(self.energy) or (self.energy == 0 and 0 < largest < VANISHING):
             raise OptionError(
                 f"{self.plan.spec.name}: entries are so large or small that double precision cannot hold their powers",
-                evidence=[f"‖A‖_F = {np.sqrt(self.energy):.3g}; handled are 1e-50 to 1e50"],
+                evidence=[f"‖A‖_F = {np.sqrt(self.energy) or largest:.3g}; handled are 1e-50 to 1e50"],
                 remedy="Multiply the matrix by a power of two, which changes no figure, then run again.",
             )
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import shutil
 import subprocess
 import sys
 from collections.abc import Callable, Iterator
@@ -19,14 +20,22 @@ def short_waves(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr("bigsvd.journal.journal.SHARE_OF_TIME", 1e9)
 
 
-@pytest.fixture
-def night(tmp_path: Path, short_waves: None) -> Night:
-    """A file, and an earlier result of two components where the new one is to go."""
-    file = write_hdf5(tmp_path / "heights.h5")
-    ended = run("decompose", file, "--out", tmp_path / "out.zarr", "--rank", 2, "--quiet")
+@pytest.fixture(scope="session")
+def earlier(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A folder with a file and a result of two components; not to be changed."""
+    folder = tmp_path_factory.mktemp("earlier")
+    file = write_hdf5(folder / "heights.h5")
+    ended = run("decompose", file, "--out", folder / "out.zarr", "--rank", 2, "--quiet")
     assert ended.exit_code == 0, ended.output
-    (tmp_path / "out.zarr.log").unlink()
-    return Night(tmp_path, file, tmp_path / "out.zarr")
+    return folder
+
+
+@pytest.fixture
+def night(tmp_path: Path, earlier: Path, short_waves: None) -> Night:
+    """A file, and an earlier result of two components where the new one is to go."""
+    shutil.copy(earlier / "heights.h5", tmp_path)
+    shutil.copytree(earlier / "out.zarr", tmp_path / "out.zarr")
+    return Night(tmp_path, tmp_path / "heights.h5", tmp_path / "out.zarr")
 
 
 @pytest.fixture
