@@ -306,10 +306,18 @@ class _Segment:
         task = self.task
         assert task.block is not None
         assert self.sums.rounding is not None
-        exact = np.zeros_like(tall)
+        self.sums.rounding[0] += 1
+        if self.across <= self.tile:
+            # One tile: the product that was just added up still lies in its buffer.
+            wide_tile = next(iter(self._tiles(unit, statistics, task.wide)))[1]
+            exact = wide_tile @ task.block.astype(task.wide)
+            self.sums.rounding[1] += _column_squares((tall - exact).T)
+            product = self.product[: exact.shape[1] * self.across].reshape(exact.shape[1], self.across)
+            self.sums.rounding[2] += _column_squares(product - exact.conj().T @ wide_tile)
+            return
+        exact = np.zeros(tall.shape, task.wide)
         for columns, tile in self._tiles(unit, statistics, task.wide):
             exact += tile @ task.block[columns].astype(task.wide)
-        self.sums.rounding[0] += 1
         self.sums.rounding[1] += _column_squares((tall - exact).T)
         single = np.ascontiguousarray(tall.conj().T, dtype=task.dtype)
         narrow = self._tiles(unit, statistics, task.dtype)
