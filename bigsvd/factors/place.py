@@ -56,7 +56,13 @@ class Place:
             raise ResultError(
                 f"{str(out)!r} is no name for a result", remedy="Name the folder to be made: --out factors.zarr"
             )
-        path = path.parent.resolve() / path.name
+        try:
+            path = path.parent.resolve() / path.name
+        except (OSError, RuntimeError) as error:
+            # Python tells a loop of links in an error of its own.
+            raise ResultError(
+                f"the folder of --out cannot be found: {error}", remedy="Choose an --out in a folder that exists."
+            ) from error
         return cls(path, *(path.with_name(path.name + suffix) for suffix in _SUFFIXES))
 
 

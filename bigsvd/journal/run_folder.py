@@ -87,7 +87,7 @@ class RunFolder:
     def stay(self) -> None:
         """Keep the folder although a result is in place, the one that a deadline left time for; the run may go on."""
         self._stays = True
-        (self.path / "stopped").touch()
+        write_identity(self.path, read_identity(self.path) | {"beside": _stamp(self.place.out)})
 
     def close(self, *, keep: bool) -> None:
         """Let go of the lock; remove everything unless the run is to be gone on with."""
@@ -99,7 +99,13 @@ class RunFolder:
         """Make the folder; it says what it is before anything else is in it."""
         os.mkdir(self.path, mode=0o700)
         command = {"words": self.command, "folder": os.getcwd()} if self.command else None
-        record = {"began": time.time(), "scratch": str(self.scratch), "command": command, "identity": self.identity}
+        record = {
+            "began": time.time(),
+            "scratch": str(self.scratch),
+            "command": command,
+            "beside": _stamp(self.place.out),
+            "identity": self.identity,
+        }
         write_identity(self.path, record)
 
     def _make_scratch(self) -> None:
@@ -166,26 +172,36 @@ class RunFolder:
 def discard_finished(out: Path) -> None:
     """Remove the folder of a run whose result is in place: its process died between the two.
 
+    The result is that of the run if another one, or none, stood there when the run began; times of files would tell
+    something else after a clock was set.
+
     Parameters
     ----------
     out : Path
     """
     place = Place.at(out)
-    if place.run.is_symlink() or not is_whole(place.out):
-        return
-    files = [path for path in place.run.rglob("*") if path.is_file()]
-    if any(path.lstat().st_mtime_ns > (place.out / "zarr.json").stat().st_mtime_ns for path in files):
+    if not os.path.lexists(place.run) or place.run.is_symlink() or not is_whole(place.out):
         return
     lock = OutputLock(place.lock, place.out)
     with suppress(ResultError):
         lock.acquire()
         try:
             if (place.run / IDENTITY).is_file():
-                RunFolder(out, {}, _scratch_of(place.run)).close(keep=False)
-            elif place.run.is_dir() and not files:
+                if read_identity(place.run).get("beside") != _stamp(place.out):
+                    RunFolder(out, {}, _scratch_of(place.run)).close(keep=False)
+            elif place.run.is_dir() and not any(place.run.iterdir()):
                 place.run.rmdir()
         finally:
             lock.release()
+
+
+def _stamp(out: Path) -> list[int] | None:
+    """What tells a result from the one before; None where there is none."""
+    try:
+        found = (out / "zarr.json").stat()
+    except OSError:
+        return None
+    return [found.st_ino, found.st_size, found.st_mtime_ns]
 
 
 def _scratch_of(path: Path) -> Path | None:

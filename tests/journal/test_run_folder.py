@@ -9,6 +9,7 @@ import socket
 import stat
 import subprocess
 import sys
+import time
 from pathlib import Path
 from typing import Any
 
@@ -267,10 +268,15 @@ def test_a_folder_left_by_a_process_that_died_after_the_last_step_is_removed(out
     assert left_in(out.parent) == ["out.zarr"]
 
 
-def test_a_folder_newer_than_the_result_is_a_run_that_goes_on(out: Path, run: Path) -> None:
+@pytest.mark.parametrize("clock", ["as it was", "set back", "set ahead"])
+def test_a_folder_begun_beside_the_result_is_a_run_that_goes_on(clock: str, out: Path, run: Path) -> None:
     decompose(out, rank=3)
     with pytest.raises(Cut):
         decompose(out, overwrite=True, progress=cut_at(2, 0.5))
+    if clock != "as it was":
+        moment = time.time() + (-1e6 if clock == "set back" else 1e6)
+        for path in run.rglob("*"):
+            os.utime(path, (moment, moment))
     discard_finished(out)
     assert run.is_dir()
     lock = OutputLock(Place.at(out).lock, out)
