@@ -2,6 +2,7 @@
 
     scripts/kill-storm 200            so many kills (SIGKILL), over as many runs as that takes
     scripts/kill-storm 20 --term      ended by SIGTERM instead, which must leave by itself within seconds
+    scripts/kill-storm --soak 3600    for so many seconds in one process (tests/faults/soak.py)
 
 Prints a line per finished run, and at the end what was lost and found; exits with 1 if any bit differs.
 """
@@ -19,27 +20,33 @@ import tempfile
 import time
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import Any
 
 import h5py
 import numpy as np
 
+import bigsvd
 from bigsvd import journal
 
 LINES, ACROSS, RANK = 24_000, 400, 12
-# A run in a process of its own, with waves and savings so short that any moment of it can be hit.
-WORKER = """
-import sys
-import bigsvd
+# Waves and savings so short that any moment of a run can be hit.
+SHORT = """
 import bigsvd.journal.journal as journal
 import bigsvd.plan.geometry as geometry
 geometry.WAVE_SECONDS = 0.02
 journal.WORTH_KEEPING, journal.SHARE_OF_TIME = 0.0, 1e9
-factors = bigsvd.decompose(
-    sys.argv[1], sys.argv[2], rank=int(sys.argv[3]), route="krylov", axis="rows", panel_lines=200, save_every=0.0,
-    memory="1GiB", tolerance=1e-5, scale="unit",
-)
-print(factors.attributes["sweeps"], factors.attributes["resumed"])
 """
+# The command line in a process of its own.
+WORKER = f"""
+import sys
+{SHORT}
+from bigsvd.cli import main
+main(sys.argv[1:])
+"""
+OPTIONS: dict[str, Any] = {
+    "rank": RANK, "route": "krylov", "axis": "rows", "save_every": 0.0, "memory": "1GiB", "tolerance": 1e-5,
+    "scale": "unit", "overwrite": True,
+}  # fmt: skip
 
 
 @dataclass
@@ -76,16 +83,20 @@ def digest(store: Path) -> str:
 
 def start(matrix: Path, out: Path) -> subprocess.Popen[str]:
     """Begin, or go on with, the run."""
-    words = [sys.executable, "-c", WORKER, str(matrix), str(out), str(RANK)]
-    return subprocess.Popen(words, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True)
+    words = ["decompose", str(matrix), "--out", str(out), "--quiet"]
+    for name, value in OPTIONS.items():
+        option = f"--{name.replace('_', '-')}"
+        words += [option] if value is True else [option, str(value)]
+    line = [sys.executable, "-c", WORKER, *words]
+    return subprocess.Popen(line, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True)
 
 
-def finish(process: subprocess.Popen[str]) -> int:
+def finish(process: subprocess.Popen[str], out: Path) -> int:
     """Wait for a run to end by itself; return how often it was gone on with."""
-    said, complaints = process.communicate()
+    _, complaints = process.communicate()
     if process.returncode:
         raise SystemExit(f"a run failed by itself with {process.returncode}:\n{complaints}")
-    return int(said.split()[1])
+    return int(bigsvd.open_factors(out).attributes["resumed"])
 
 
 def storm(kills: int, folder: Path, *, number: int = signal.SIGKILL, seed: int = 0, verbose: bool = False) -> Tally:
@@ -111,7 +122,7 @@ def storm(kills: int, folder: Path, *, number: int = signal.SIGKILL, seed: int =
     matrix, out = folder / "storm.h5", folder / "storm.zarr"
     write_matrix(matrix)
     began = time.perf_counter()
-    finish(start(matrix, out))
+    finish(start(matrix, out), out)
     whole = time.perf_counter() - began
     wanted = digest(out)
     tally = Tally()
@@ -122,15 +133,18 @@ def storm(kills: int, folder: Path, *, number: int = signal.SIGKILL, seed: int =
         while not (out / "zarr.json").exists():
             process = start(matrix, out)
             if tally.kills == kills:
-                tally.resumed += finish(process) > 0
+                tally.resumed += finish(process, out) > 0
                 break
             try:
                 process.wait(draw.uniform(0.1, 1.1) * whole)
-                tally.resumed += finish(process) > 0
+                tally.resumed += finish(process, out) > 0
             except subprocess.TimeoutExpired:
                 process.send_signal(number)
                 sent = time.perf_counter()
                 process.communicate()
+                # Too early for its own way to stop, in time for it, or just ended.
+                if process.returncode not in (-number, 128 + number, 0):
+                    raise SystemExit(f"a run that was hit ended with {process.returncode}") from None
                 tally.leaving.append(time.perf_counter() - sent)
                 tally.kills += 1
                 hits += 1
@@ -151,17 +165,22 @@ def storm(kills: int, folder: Path, *, number: int = signal.SIGKILL, seed: int =
 
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
-    parser.add_argument("kills", type=int, help="how many kills")
+    parser.add_argument("kills", type=int, nargs="?", default=20, help="how many kills (default 20)")
+    parser.add_argument("--soak", type=float, metavar="SECONDS", help="one process for so long, instead")
     parser.add_argument("--term", action="store_true", help="SIGTERM instead of SIGKILL")
     parser.add_argument("--seed", type=int, default=0, help="of the moments (default 0)")
     given = parser.parse_args()
+    if given.soak is not None:
+        from soak import show_soak
+
+        sys.exit(show_soak(given.soak, seed=given.seed))
     with tempfile.TemporaryDirectory(prefix="storm-") as folder:
         number = signal.SIGTERM if given.term else signal.SIGKILL
         tally = storm(given.kills, Path(folder), number=number, seed=given.seed, verbose=True)
     print(
         f"{tally.kills} kills over {tally.runs} runs: {tally.runs - tally.differ} of {tally.runs} with the same bits,"
         f" {tally.resumed} of them went on from a journal; gone {max(tally.leaving, default=0):.1f} s after the signal"
-        " at the latest"
+        f" at the latest; {sum(tally.seconds):.0f} s in all"
     )
     sys.exit(1 if tally.differ else 0)
 
