@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import stat
 from pathlib import Path
 
 from bigsvd.errors import NoMatrixError, SourceError, UnsupportedMatrixError
@@ -45,9 +46,17 @@ def container(path: Path) -> str:
     UnsupportedMatrixError
         If the file begins like something else; says what it looks like.
     """
-    if path.is_dir():
+    try:
+        kind = persist(lambda: os.stat(path)).st_mode
+    except FileNotFoundError:
+        raise NoMatrixError(f"{path} does not exist", remedy="Check the path.") from None
+    except PersistentError as error:
+        raise unreadable(str(path), [], error) from error
+    except (OSError, ValueError) as error:
+        raise SourceError(f"{path} cannot be found", evidence=[str(error)], remedy="Check the path.") from error
+    if stat.S_ISDIR(kind):
         return _directory(path)
-    if path.exists() and not path.is_file():
+    if not stat.S_ISREG(kind):
         raise UnsupportedMatrixError(
             f"{path} is neither a file nor a folder but a pipe, a socket or a device",
             remedy="Copy what comes out of it to a file first: bigsvd reads by position, and more than once.",
@@ -63,8 +72,6 @@ def container(path: Path) -> str:
                 if file.read(8) == HDF5_SIGNATURE:
                     return "hdf5"
                 start = start * 2 or 512
-    except FileNotFoundError:
-        raise NoMatrixError(f"{path} does not exist", remedy="Check the path.") from None
     except PersistentError as error:
         raise unreadable(str(path), [], error) from error
     except OSError as error:

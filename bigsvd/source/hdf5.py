@@ -28,9 +28,8 @@ from bigsvd.source.rectangle import (
     Span,
     clip,
     fill_by_bands,
-    grid_shape,
-    require_countable,
     require_rectangle,
+    require_sizes,
     show_chunk,
     show_place,
     touched,
@@ -251,8 +250,7 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -
             evidence=[f"shape {show_shape(said.shape)}, {said.dtype}, {said.encoding}"],
             remedy=_remedy(dataset, path),
         )
-    if dataset.chunks:
-        require_countable(grid_shape(dataset.shape, dataset.chunks), f"{path}:{inside}")
+    require_sizes(dataset.shape, dataset.chunks, stored.itemsize, f"{path}:{inside}")
     filters = filters_of(dataset)
     codecs = tuple(step.name for step in filters) if decodes_directly(dataset) else ("library",) * bool(filters)
     rows, columns = dataset.shape

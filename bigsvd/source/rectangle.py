@@ -8,12 +8,14 @@ import numpy as np
 
 from bigsvd.errors import UnsupportedMatrixError
 from bigsvd.source.spec import MatrixSpec
-from bigsvd.units import show_count
+from bigsvd.units import show_bytes, show_count, show_shape
 
 Span = tuple[int, int]
 BAND_BYTES = 4 * 2**20
 # Marks of chunks that are there take a byte each; beyond this, more than 100 MB.
 MOST_MARKED = 100_000_000
+# No machine reads more in a week, nor holds a larger chunk.
+MOST_MATRIX, MOST_CHUNK = 2**50, 2**36
 
 
 def require_rectangle(spec: MatrixSpec, rows: Span, columns: Span, out: np.ndarray) -> None:
@@ -58,6 +60,20 @@ def require_countable(grid: tuple[int, int], name: str) -> None:
             f"{name} has {show_count(grid[0] * grid[1])} chunks, more than the {show_count(MOST_MARKED)} handled here",
             remedy="Write it again in chunks of about a megabyte.",
         )
+
+
+def require_sizes(shape: tuple[int, int], chunks: tuple[int, int] | None, item: int, name: str) -> None:
+    """Refuse sizes that nothing stored can have, before anything is allocated or counted by them."""
+    if chunks is not None:
+        require_countable(grid_shape(shape, chunks), name)
+    for what, sides, most in (("a matrix", shape, MOST_MATRIX), ("chunks", chunks or (0, 0), MOST_CHUNK)):
+        size = sides[0] * sides[1] * item
+        if size > most:
+            raise UnsupportedMatrixError(
+                f"{name} declares {what} of {show_bytes(size)}, more than the {show_bytes(most)} handled here",
+                evidence=[f"{show_shape(sides)} entries of {item} bytes"],
+                remedy="Copy the file again if it is smaller than that: what it says of itself is damaged.",
+            )
 
 
 def fill_by_bands(

@@ -19,9 +19,8 @@ from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.rectangle import (
     Span,
     clip,
-    grid_shape,
-    require_countable,
     require_rectangle,
+    require_sizes,
     show_chunk,
     show_place,
     touched,
@@ -97,7 +96,8 @@ class ZarrSource:
                 remedy=f"See what else the store holds with: bigsvd inspect {shell_word(self.path)}",
             )
         rows, columns = metadata.shape
-        require_countable(grid_shape((rows, columns), (metadata.chunks[0], metadata.chunks[1])), name)
+        chunks = metadata.chunks[0], metadata.chunks[1]
+        require_sizes((rows, columns), chunks, metadata.dtype.itemsize, name)
         self.metadata: ZarrMetadata = metadata
         marks = [self.path] if os.path.isfile(self.path) else self._mark_files()
         self.stamps = tuple(FileStamp.of(mark) for mark in marks)

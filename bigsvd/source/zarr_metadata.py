@@ -184,7 +184,7 @@ def _version_3(document: dict[str, Any], attributes: dict[str, Any], note: str) 
     grid, encoding = document["chunk_grid"], document["chunk_key_encoding"]
     if grid["name"] != "regular":
         dtype, words = None, f"numbers on a chunk grid that is {grid['name']}"
-        chunks = _sides(document["shape"])
+        chunks = tuple(max(1, side) for side in _sides(document["shape"]))
     else:
         chunks = _sides(grid["configuration"]["chunk_shape"])
     default = encoding["name"] == "default"
@@ -205,7 +205,7 @@ def _version_3(document: dict[str, Any], attributes: dict[str, Any], note: str) 
     return ZarrMetadata(
         zarr_format=3,
         shape=_sides(document["shape"]),
-        chunks=tuple(max(1, side) for side in chunks),
+        chunks=chunks,
         dtype=dtype,
         type_words=words,
         fill=document.get("fill_value"),

@@ -62,6 +62,15 @@ class DirectoryKeys:
     def _require_inside(self, path: str) -> None:
         self._home.require(self.path, [path], f"the symbolic link {path}")
 
+    def _checked(self, key: str) -> str:
+        """Path of a key whose folder lies in the store."""
+        path = self._at(key)
+        folder = os.path.dirname(path)
+        if folder not in self._inside:
+            self._require_inside(folder)
+            self._inside.add(folder)
+        return path
+
     def open(self, key: str) -> int:
         """Open a value for reading and return its descriptor; a link out of the store is refused.
 
@@ -72,11 +81,7 @@ class DirectoryKeys:
         OutsideError
             If it, or a folder on the way, is a symbolic link out of the store, and links are not followed.
         """
-        path = self._at(key)
-        folder = os.path.dirname(path)
-        if folder not in self._inside:
-            self._require_inside(folder)
-            self._inside.add(folder)
+        path = self._checked(key)
         # A pipe would be waited for.
         flags = os.O_RDONLY | os.O_CLOEXEC | os.O_NONBLOCK
         try:
@@ -120,14 +125,14 @@ class DirectoryKeys:
 
     def size(self, key: str) -> int | None:
         """Ask the file system; a directory in place of a file counts as absent."""
+        path = self._checked(key)
         try:
-            descriptor = self.open(key)
+            found = persist(lambda: os.lstat(path))
+            if stat.S_ISLNK(found.st_mode):
+                self._require_inside(path)
+                found = os.stat(path)
         except (FileNotFoundError, NotADirectoryError):
             return None
-        try:
-            found = os.fstat(descriptor)
-        finally:
-            os.close(descriptor)
         return found.st_size if stat.S_ISREG(found.st_mode) else None
 
     def part(self, key: str, start: int, size: int) -> bytes:

@@ -53,7 +53,8 @@ def walk_zarr(keys: KeyStore, start: str = "", most_nodes: int = MOST_NODES) -> 
             else:
                 found.append(Candidate(path, reason=f"groups below {DEEPEST} others are not looked into"))
         except OutsideError as error:
-            found.append(Candidate(path, reason=error.problem, outside=error.files))
+            reason = f"it lies partly in {error.files[0]}, outside the store: add --follow-links to read it"
+            found.append(Candidate(path, reason=reason, outside=error.files))
         except SourceError as error:
             found.append(Candidate(path, reason=f"{error.problem} ({'; '.join(error.evidence)})"))
         found += [_linked(keys, link) for link in links]
