@@ -39,23 +39,23 @@ def scene(earlier: Path, tmp_path: Path) -> Scene:
     return stage(earlier, tmp_path / "own")
 
 
-def external_link(file: h5py.File) -> None:
-    file["frames"] = h5py.ExternalLink("../far.h5", "/frames")
+def external_link(file: h5py.File, to: str = "..") -> None:
+    file["frames"] = h5py.ExternalLink(f"{to}/far.h5", "/frames")
 
 
-def soft_through_external(file: h5py.File) -> None:
-    file["all"] = h5py.ExternalLink("../far.h5", "/")
+def soft_through_external(file: h5py.File, to: str = "..") -> None:
+    file["all"] = h5py.ExternalLink(f"{to}/far.h5", "/")
     file["frames"] = h5py.SoftLink("/all/frames")
 
 
-def virtual(file: h5py.File) -> None:
+def virtual(file: h5py.File, to: str = "..") -> None:
     layout = h5py.VirtualLayout(SHAPE, "f8")
-    layout[:] = h5py.VirtualSource("../far.h5", "frames", SHAPE)
+    layout[:] = h5py.VirtualSource(f"{to}/far.h5", "frames", SHAPE)
     file.create_virtual_dataset("frames", layout)
 
 
-def external_storage(file: h5py.File) -> None:
-    file.create_dataset("frames", SHAPE, "f8", external=[("../far.bin", 0, matrix().nbytes)])
+def external_storage(file: h5py.File, to: str = "..") -> None:
+    file.create_dataset("frames", SHAPE, "f8", external=[(f"{to}/far.bin", 0, matrix().nbytes)])
 
 
 AWAY = {one.__name__: one for one in (external_link, soft_through_external, virtual, external_storage)}
@@ -89,27 +89,18 @@ def test_a_way_out_of_the_folder_is_listed_and_followed_only_when_told_so(scene:
 
 
 @pytest.mark.parametrize("way", AWAY)
-def test_files_in_the_folder_are_read_without_being_told_so(scene: Scene, way: str) -> None:
+def test_files_in_the_folder_and_below_are_read_without_being_told_so(scene: Scene, way: str) -> None:
     (scene.folder / "below").mkdir()
-    with h5py.File(scene.folder / "below" / "a.h5", "w") as opened:
-        AWAY[way](opened)
-    # Named from below, its folder is the one below; named by a link beside its data, that one counts too.
-    assert "--follow-links" in scene.refused(scene.folder / "below" / "a.h5", "--matrix", "frames")
-    beside = scene.folder.parent / "own.h5"
-    with h5py.File(beside, "w") as opened:
-        AWAY[way](opened)
-    os.symlink(scene.folder.parent / "far.h5", scene.folder / "to.h5")
-    names = {"../far.h5": "far.h5", "../far.bin": "far.bin"}
-    with h5py.File(scene.folder.parent / "near.h5", "w") as opened:
-        if way == "virtual":
-            layout = h5py.VirtualLayout(SHAPE, "f8")
-            layout[:] = h5py.VirtualSource(names["../far.h5"], "frames", SHAPE)
-            opened.create_virtual_dataset("frames", layout)
-        elif way == "external_storage":
-            opened.create_dataset("frames", SHAPE, "f8", external=[("far.bin", 0, matrix().nbytes)])
-        else:
-            opened["frames"] = h5py.ExternalLink("far.h5", "/frames")
-    assert scene.done(scene.folder.parent / "near.h5", "--matrix", "frames")["source"]["shape"] == list(SHAPE)
+    for name in ("far.h5", "far.bin"):
+        (scene.folder / "below" / name).write_bytes((scene.folder.parent / name).read_bytes())
+    with h5py.File(scene.folder / "a.h5", "w") as opened:
+        AWAY[way](opened, "below")
+    assert scene.done(scene.folder / "a.h5", "--matrix", "frames")["source"]["shape"] == list(SHAPE)
+    # A link in the folder that leads out of it is no file of the folder.
+    for name in ("far.h5", "far.bin"):
+        (scene.folder / "below" / name).unlink()
+        (scene.folder / "below" / name).symlink_to(scene.folder.parent / name)
+    assert str(scene.folder.parent / "far") in scene.refused(scene.folder / "a.h5", "--matrix", "frames")
 
 
 def test_contiguous_data_behind_an_external_link_are_read_from_their_own_file(scene: Scene) -> None:
