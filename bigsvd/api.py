@@ -23,8 +23,7 @@ from bigsvd.drive import (
     KeptRun,
     Outcome,
     Verification,
-    check_slice,
-    draw_slices,
+    check_slices,
     keep_run,
     make_forecast,
     run,
@@ -207,10 +206,10 @@ def decompose(
                 )  # fmt: skip
                 try:
                     checks = _check_slices(opened, outcome, kept.folder.path if kept else folder, control)
-                    factors = _write(target, outcome, checks, foreseen, control, overwrite, started, held_before, kept)
-                    watching.take(factors.certificate)
                     if kept is not None and outcome.out_of_time:
                         kept.folder.stay()
+                    factors = _write(target, outcome, checks, foreseen, control, overwrite, started, held_before, kept)
+                    watching.take(factors.certificate)
                     return factors
                 finally:
                     outcome.scratch.close()
@@ -385,13 +384,7 @@ def _scratch_folder(scratch: str | Path | None, out: Path | None) -> Path:
 def _check_slices(source: Source, outcome: Outcome, folder: Path, control: Control) -> tuple[SliceCheck, ...]:
     """The exact check on slices of the user's own file."""
     plan = outcome.plan
-    rectangles = draw_slices(plan.spec, plan.geometry.axis, plan.request.seed)
-    control.begin("slices", len(rectangles))
-    checks = []
-    for rectangle in rectangles:
-        checks.append(check_slice(source, rectangle, plan, outcome.precision, folder, control))
-        control.advance(1, read=0)
-    return tuple(checks)
+    return check_slices(source, plan, outcome.precision, folder, control, seed=plan.request.seed)
 
 
 def _write(

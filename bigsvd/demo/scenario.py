@@ -81,7 +81,7 @@ class Flavour:
     peaks : int
         Compounds around which its blend gathers.
     tides : float
-        Swellings along the sampled shore and night; the rest of its course is chance.
+        Swellings along the sampled shore and night; how it goes on is chance.
     """
 
     source: str

@@ -5,7 +5,7 @@ from bigsvd.drive.keeping import KeptRun, keep_run
 from bigsvd.drive.probe import Forecast, make_forecast
 from bigsvd.drive.record import run_record, spectrum_record
 from bigsvd.drive.run import Outcome, run
-from bigsvd.drive.slices import check_slice, draw_slices
+from bigsvd.drive.slices import check_slices
 from bigsvd.drive.verify import Check, Verification, verify_factors
 
 __all__ = [
@@ -15,8 +15,7 @@ __all__ = [
     "KeptRun",
     "Outcome",
     "Verification",
-    "check_slice",
-    "draw_slices",
+    "check_slices",
     "keep_run",
     "make_forecast",
     "run",

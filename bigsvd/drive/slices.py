@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from contextlib import suppress
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -9,6 +10,7 @@ import numpy as np
 
 from bigsvd.certify import STATES, SliceCheck
 from bigsvd.drive.run import Outcome, run
+from bigsvd.errors import OptionError
 from bigsvd.plan import SLICE_ENTRIES, Plan, make_plan
 from bigsvd.prepare import Preparation, line_statistics, prepare_unit
 from bigsvd.randomness import draw_without_repeat
@@ -135,6 +137,39 @@ def _clip(size: list[int], axis: int) -> tuple[int, int]:
         else:
             across = across * 9 // 10
     return (lines, across) if axis == 0 else (across, lines)
+
+
+def check_slices(
+    source: Source, plan: Plan, precision: str, scratch_folder: Path, control: Control, *, seed: int
+) -> tuple[SliceCheck, ...]:
+    """The exact check on slices of the user's own file.
+
+    Parameters
+    ----------
+    source : Source
+        The whole matrix.
+    plan : Plan
+        Of the whole run.
+    precision : str
+        ``single`` or ``double``, as the run settled it.
+    scratch_folder : Path
+    control : Control
+    seed : int
+        Of their places.
+
+    Returns
+    -------
+    tuple of SliceCheck
+        Without those whose own entries are too small to be decomposed alone, though the whole matrix is not.
+    """
+    rectangles = draw_slices(plan.spec, plan.geometry.axis, seed)
+    control.begin("slices", len(rectangles))
+    checks = []
+    for rectangle in rectangles:
+        with suppress(OptionError):
+            checks.append(check_slice(source, rectangle, plan, precision, scratch_folder, control))
+        control.advance(1, read=0)
+    return tuple(checks)
 
 
 def check_slice(

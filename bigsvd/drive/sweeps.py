@@ -172,12 +172,12 @@ class Sweeps:
         )  # fmt: skip
         keeper = None
         if self.journal is not None:
-            keeper = self.journal.next_sweep(self.scratch.flush, known=block is None or self.scratch.found_last)
+            keeper = self.journal.next_sweep(self.scratch.flush, self.scratch.last_mark if block is not None else "")
         sums = self.engine.sweep(task, plan.waves, keeper)
         # What follows until the next stage is small and dense, and runs in the caller alone.
         self.control.account("certificate")
-        self._refuse_bad(sums)
         self._refuse_change(sums)
+        self._refuse_bad(sums)
         if not fresh:
             self._known_energies(sums)
         sums.level_rounding()
@@ -278,8 +278,8 @@ class Sweeps:
         if self.across_features:
             learnt = learn(sums, self.preparation)
             self.energy = learnt.energy
-            if first:
-                self.learnt = learnt
+            # A mean summed again, in double, is the better one; deviations define the matrix and stay.
+            self.learnt = learnt if first or self.learnt is None else replace(self.learnt, mean=learnt.mean)
             if self.plan.centred or self.plan.scaled:
                 self.preparation = self.preparation.learnt(learnt.mean, learnt.inverse_scale, self.work)
             return learnt

@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 
 from bigsvd.certify import SliceCheck
-from bigsvd.drive.slices import check_slice, draw_slices
+from bigsvd.drive.slices import check_slices
 from bigsvd.factors import Factors
 from bigsvd.plan import Plan
 from bigsvd.prepare import Preparation
@@ -93,10 +93,7 @@ def verify_factors(
     if source is not None and plan is not None:
         checks += _outer_checks(factors, source, plan, control, folder)
         fresh = seed if seed is not None else int(factors.attributes["seed"]) + 1
-        rectangles = draw_slices(plan.spec, plan.geometry.axis, fresh)
-        control.begin("slices", len(rectangles))
-        precision = str(factors.attributes["precision"])
-        slices = tuple(check_slice(source, rectangle, plan, precision, folder, control) for rectangle in rectangles)
+        slices = check_slices(source, plan, str(factors.attributes["precision"]), folder, control, seed=fresh)
     agrees = all(check.ok for check in checks) and all(check.within_bounds for check in slices)
     return Verification(agrees, tuple(checks), slices, control.bytes_read, time.perf_counter() - started)
 

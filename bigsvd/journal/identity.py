@@ -119,7 +119,8 @@ def _kernels() -> str:
     """The kernels that BLAS chose for this processor; other ones round otherwise."""
     from threadpoolctl import threadpool_info
 
-    return ", ".join(sorted({str(pool.get("architecture", pool["internal_api"])) for pool in threadpool_info()}))
+    pools = [pool for pool in threadpool_info() if pool["user_api"] == "blas"]
+    return ", ".join(sorted({str(pool.get("architecture", pool["internal_api"])) for pool in pools}))
 
 
 def _version(name: str) -> str:

@@ -117,18 +117,18 @@ class Journal:
         if self.due(whole=True):
             self._write(self.folder / PILOT, *from_pilot(pilot))
 
-    def next_sweep(self, flush: Flush, *, known: bool) -> SweepJournal:
+    def next_sweep(self, flush: Flush, mark: str) -> SweepJournal:
         """The journal of the next sweep of this process.
 
         Parameters
         ----------
         flush : callable
             Brings its scratch to the device.
-        known : bool
-            Whether the scratch that an earlier process wrote for it is there; otherwise all of it is read again.
+        mark : str
+            Of the scratch that it writes; sums that an earlier process kept beside another are read again.
         """
         self._calls += 1
-        return SweepJournal(self, self._calls, flush, known=known)
+        return SweepJournal(self, self._calls, flush, mark)
 
     def due(self, *, whole: bool) -> bool:
         """Whether it is time to save; what a whole sweep or pilot found is kept sooner."""
@@ -145,9 +145,11 @@ class Journal:
             self.damaged.append(str(error))
             return None
 
-    def _write(self, path: Path, facts: dict[str, Any], arrays: dict[str, Any]) -> None:
-        """Write a record, and note how long it took."""
+    def _write(self, path: Path, facts: dict[str, Any], arrays: dict[str, Any], flush: Flush | None = None) -> None:
+        """Bring to the device what a record rests on, then the record, and note how long that took."""
         start = self._clock()
+        if flush is not None:
+            flush()
         counts = {"bytes_read": self._control.bytes_read, "seconds": self.earlier_seconds + start - self._began}
         counts["resumed"] = self.resumed
         saved = time.time()
@@ -178,20 +180,22 @@ class SweepJournal:
         Which sweep of the run, from 1; sweeps that are made again count.
     flush : callable
         Brings scratch to the device: sums are worth nothing without the Y that belongs to them.
-    known : bool
-        Whether that Y is there.
+    mark : str
+        Of that Y.
     """
 
-    def __init__(self, journal: Journal, sweep: int, flush: Flush, *, known: bool) -> None:
-        self._journal, self._sweep, self._flush, self._known = journal, sweep, flush, known
+    def __init__(self, journal: Journal, sweep: int, flush: Flush, mark: str) -> None:
+        self._journal, self._sweep, self._flush, self._mark = journal, sweep, flush, mark
 
     def begin(self) -> tuple[int, Partial | None]:
         """Waves that need not be read again, and their sums."""
-        for each in reversed(self._journal.saved() if self._known else []):
+        for each in reversed(self._journal.saved()):
             if each.sweep == self._sweep:
                 read = self._journal._read(each.path)
-                if read is not None:
+                if read is not None and read[0].get("mark") == self._mark:
                     return each.waves, to_partial(*read)
+                # Of no more use: without its Y, or not whole.
+                each.path.unlink(missing_ok=True)
         return 0, None
 
     def keep(self, waves: int, of: int, total: Partial, *, stopping: bool = False) -> None:
@@ -199,9 +203,8 @@ class SweepJournal:
         if not self._journal.due(whole=stopping or waves == of):
             return
         facts, arrays = from_partial(total)
-        self._flush()
         path = self._journal.folder / f"sums-{self._sweep:02d}-{waves:05d}"
-        self._journal._write(path, facts | {"waves": waves, "of": of}, arrays)
+        self._journal._write(path, facts | {"waves": waves, "of": of, "mark": self._mark}, arrays, self._flush)
         self._forget_older(waves)
 
     def _forget_older(self, waves: int) -> None:

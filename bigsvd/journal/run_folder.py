@@ -8,7 +8,7 @@ import shutil
 import stat
 import time
 from collections.abc import Mapping, Sequence
-from contextlib import suppress
+from contextlib import ExitStack, suppress
 from pathlib import Path
 from typing import Any
 
@@ -73,6 +73,8 @@ class RunFolder:
                     self._remove()
                 else:
                     self._require_same()
+                    # The result that stands there now, of a deadline perhaps, is not the one this run will end with.
+                    self._note(stays=False)
             if not self.path.exists():
                 self._make()
             self._make_scratch()
@@ -85,14 +87,26 @@ class RunFolder:
         return bool(saved_in(self.path)) or (self.path / PILOT).exists()
 
     def stay(self) -> None:
-        """Keep the folder although a result is in place, the one that a deadline left time for; the run may go on."""
+        """Keep the folder although a result will be in place, the one that a deadline left time for.
+
+        To be said before that result is installed, lest a process that dies then loses what the run may go on from.
+        """
         self._stays = True
-        write_identity(self.path, read_identity(self.path) | {"beside": _stamp(self.place.out)})
+        self._note(stays=True)
+
+    def _note(self, *, stays: bool) -> None:
+        """Write down what stands at OUT, and whether the run stays whatever comes to stand there."""
+        now = {"beside": _stamp(self.place.out), "stays": stays}
+        write_identity(self.path, read_identity(self.path) | now)
 
     def close(self, *, keep: bool) -> None:
         """Let go of the lock; remove everything unless the run is to be gone on with."""
         if not (keep or self._stays):
-            self._remove()
+            with ExitStack() as last:
+                # The result is in place: what cannot be removed now is no reason to keep the lock.
+                last.callback(self.lock.release)
+                self._remove()
+            return
         self.lock.release()
 
     def _make(self) -> None:
@@ -187,7 +201,8 @@ def discard_finished(out: Path) -> None:
         lock.acquire()
         try:
             if (place.run / IDENTITY).is_file():
-                if read_identity(place.run).get("beside") != _stamp(place.out):
+                record = read_identity(place.run)
+                if not record.get("stays") and record.get("beside") != _stamp(place.out):
                     RunFolder(out, {}, _scratch_of(place.run)).close(keep=False)
             elif place.run.is_dir() and not any(place.run.iterdir()):
                 place.run.rmdir()

@@ -145,6 +145,10 @@ class Control:
             stage, sweep, total = self._stage
             self._listener(Progress(stage, sweep, self._done, total, note))
 
+    def go_on(self) -> None:
+        """Take back the wish to stop, once the workers have followed it."""
+        self._stop.clear()
+
     def stop(self) -> None:
         """Ask the workers to stop after their present panel."""
         self._stop.set()

@@ -10,6 +10,9 @@ from pathlib import Path
 
 import numpy as np
 
+# Random bytes behind the lines of every block.
+MARK_BYTES = 16
+
 
 class Scratch:
     """Columns of Y, one file per block, read and written by ranges of lines from several threads.
@@ -30,8 +33,6 @@ class Scratch:
     map : ndarray, shape (stored columns, width)
         Y of the present basis is (stored columns) · map, up to a constant row that centring removes. Restarts and
         re-expressions change the map, never the files.
-    found_last : bool
-        Whether the block made last was there already, written by an earlier process.
     """
 
     def __init__(self, folder: Path, lines: int, dtype: np.dtype, *, own: bool = False) -> None:
@@ -42,7 +43,7 @@ class Scratch:
         self.map = np.zeros((0, 0), self.dtype)
         self._files: list[tuple[int, int]] = []
         self._made = 0
-        self.found_last = False
+        self._marks: list[bytes] = []
 
     @property
     def stored(self) -> int:
@@ -61,20 +62,33 @@ class Scratch:
         handle = os.open(self._path(self._made), flags, 0o600)
         self._made += 1
         size = self.lines * columns * self.dtype.itemsize
-        self.found_last = os.fstat(handle).st_size == size
-        os.ftruncate(handle, size)
+        if os.fstat(handle).st_size == size + MARK_BYTES:
+            mark = os.pread(handle, MARK_BYTES, size)
+        else:
+            mark = os.urandom(MARK_BYTES)
+            _empty(handle, size, mark)
+        self._marks.append(mark)
         self._files.append((handle, columns))
         return len(self._files) - 1
 
+    @property
+    def last_mark(self) -> str:
+        """What tells the block made last from others that had its name; sums kept elsewhere belong to one of them."""
+        return self._marks[-1].hex() if self._marks else ""
+
     def drop_last_block(self) -> None:
-        """Forget a block whose sweep is to be made again."""
-        handle, _ = self._files.pop()
+        """Forget a block whose sweep is to be made again, and free its disk.
+
+        Its name and mark stay, so that a run that goes on need not read that sweep again to drop it.
+        """
+        handle, columns = self._files.pop()
+        _empty(handle, self.lines * columns * self.dtype.itemsize, self._marks.pop())
         os.close(handle)
-        self._path(self._made - 1).unlink()
 
     def leave_last_block(self) -> None:
         """Forget a block whose sweep was cut, but keep its file for the run that goes on."""
         handle, _ = self._files.pop()
+        self._marks.pop()
         os.close(handle)
 
     def flush(self) -> None:
@@ -124,3 +138,9 @@ class Scratch:
         self._files = []
         if not self._own:
             shutil.rmtree(self.folder, ignore_errors=True)
+
+
+def _empty(handle: int, size: int, mark: bytes) -> None:
+    """Make a block of zeros, which take no room on most devices; its mark comes last."""
+    os.ftruncate(handle, 0)
+    os.pwrite(handle, mark, size)

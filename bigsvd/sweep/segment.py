@@ -164,7 +164,7 @@ class _Segment:
         if task.only_count.is_set():
             self._count_bad(lines, start)
             return
-        if raw.dtype.kind in "iu" and raw.dtype.itemsize == 8:
+        if task.add_energy and raw.dtype.kind in "iu" and raw.dtype.itemsize == 8:
             self.sums.beyond |= bool(raw.max(initial=0) > EXACT_INTEGERS or raw.min(initial=0) < -EXACT_INTEGERS)
         if task.learn:
             self._extremes(lines)

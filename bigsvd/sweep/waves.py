@@ -7,7 +7,7 @@ from concurrent.futures import Future, ThreadPoolExecutor
 from contextlib import contextmanager
 from typing import Any, Protocol
 
-from bigsvd.sweep.events import StoppedError
+from bigsvd.sweep.events import OutOfTimeError, StoppedError
 from bigsvd.sweep.partial import Partial, combine
 from bigsvd.sweep.segment import SweepTask, run_segment
 
@@ -74,6 +74,9 @@ class Engine:
             for future in pending:
                 future.exception()
             self._pool.shutdown(cancel_futures=True)
+            if isinstance(error, OutOfTimeError):
+                # Only reading is over: what was certified is still to be checked and written.
+                task.reader.control.go_on()
             if isinstance(error, StoppedError) and keeper is not None and total is not None:
                 keeper.keep(done, len(waves), total, stopping=True)
             raise

@@ -47,7 +47,7 @@ elif moment == "while the folder is made":
     journal_folder = __import__("bigsvd.journal.run_folder", fromlist=["x"])
     journal_folder.write_identity = die
 elif moment == "on slices":
-    __import__("bigsvd.api").api.check_slice = die
+    __import__("bigsvd.api").api.check_slices = die
 elif moment == "while the result is written":
     from bigsvd.factors import FactorsWriter
     FactorsWriter.write_vectors = after(1, FactorsWriter.write_vectors)
