@@ -8,6 +8,7 @@
     │   ├── SeveralMatricesError           the choice must be made by the user
     │   ├── UnsupportedMatrixError         1-D, empty, text, object type, unknown codec
     │   ├── DamagedSourceError             bytes that do not decode, absent chunks
+    │   ├── OutsideError                   a link leads out of the folder of the file, and links are not followed
     │   ├── UnreadableSourceError          a device, a network or a permission keeps bytes back
     │   └── SourceChangedError             the file is not the one the run began with
     ├── DeadlineError        (TimeoutError) --finish-by came before anything was certified
@@ -94,6 +95,18 @@ class SeveralMatricesError(SourceError):
 
 class UnsupportedMatrixError(SourceError):
     """The dataset is not a numeric matrix, or its encoding is not known here."""
+
+
+class OutsideError(SourceError):
+    """A link leads out of the folder of the file, and links are not followed.
+
+    Attributes
+    ----------
+    files : tuple of str
+        Where it leads.
+    """
+
+    files: tuple[str, ...] = ()
 
 
 class DamagedSourceError(SourceError):

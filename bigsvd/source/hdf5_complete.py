@@ -6,14 +6,14 @@ import math
 import os
 from typing import Any
 
-from bigsvd.errors import DamagedSourceError, SourceError, UnsupportedMatrixError
+from bigsvd.errors import DamagedSourceError, OutsideError, SourceError, UnsupportedMatrixError
 from bigsvd.source.access import Access
 from bigsvd.source.complete import SHOWN, first_chunks, settle_absent
 from bigsvd.source.fill import hdf5_fill
 from bigsvd.source.hdf5_chunks import absent_chunks
 from bigsvd.source.hdf5_file import open_hdf5
 from bigsvd.source.hdf5_links import require_path_inside
-from bigsvd.source.home import Home, OutsideError, locate
+from bigsvd.source.home import Home, locate
 from bigsvd.source.rectangle import grid_shape
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.units import show_count, show_shape

@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 from collections.abc import Sequence
 
-from bigsvd.errors import SourceError
+from bigsvd.errors import OutsideError
 
 REMEDY = "Add --follow-links if you trust whoever made the file; the other file is then read as this user may read it."
 # Links to links: beyond this there is a circle, or somebody plays.
@@ -52,20 +52,19 @@ class Home:
         """
         found = [] if self.follow else self.outside(others)
         if found:
-            raise OutsideError(name, found, how)
+            raise _refusal(name, found, how)
 
 
-class OutsideError(SourceError):
-    """A link leads out of the folder of the file, and links are not followed."""
-
-    def __init__(self, name: str, files: Sequence[str], how: str) -> None:
-        more = [f"… and {len(files) - 8:,} more"] if len(files) > 8 else []
-        super().__init__(
-            f"{name} lies partly in other files, outside the folder of the one that was named: {how}",
-            evidence=[*files[:8], *more],
-            remedy=REMEDY,
-        )
-        self.files = tuple(files)
+def _refusal(name: str, files: Sequence[str], how: str) -> OutsideError:
+    """The error that names files outside the folder."""
+    more = [f"… and {len(files) - 8:,} more"] if len(files) > 8 else []
+    error = OutsideError(
+        f"{name} lies partly in other files, outside the folder of the one that was named: {how}",
+        evidence=[*files[:8], *more],
+        remedy=REMEDY,
+    )
+    error.files = tuple(files)
+    return error
 
 
 def locate(name: str, folder: str) -> str:

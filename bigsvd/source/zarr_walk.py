@@ -8,11 +8,10 @@ from dataclasses import replace
 from itertools import islice
 from typing import Any
 
-from bigsvd.errors import SourceError
+from bigsvd.errors import OutsideError, SourceError
 from bigsvd.source.candidate import SPARSE, SPARSE_TYPES, Candidate, why_unusable
 from bigsvd.source.entries import decoded_type
 from bigsvd.source.hints import NO_HINT, Hint, annotated_hint, hint_from_names
-from bigsvd.source.home import OutsideError
 from bigsvd.source.rectangle import grid_shape
 from bigsvd.source.zarr_complete import AbsentChunks, absent_keys, count_absent_chunks
 from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
