@@ -6,9 +6,9 @@ import os
 from contextlib import ExitStack
 from typing import Any
 
-from bigsvd.errors import DamagedSourceError, SourceError
+from bigsvd.errors import DamagedSourceError, OutsideError, SourceError
 from bigsvd.source.hdf5_file import open_hdf5
-from bigsvd.source.home import MOST_LINKS, Home, OutsideError, locate
+from bigsvd.source.home import MOST_LINKS, Home, locate
 
 
 def require_path_inside(file: Any, inside: str, home: Home) -> None:

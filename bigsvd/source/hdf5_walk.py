@@ -7,11 +7,11 @@ from dataclasses import replace
 from itertools import islice
 from typing import Any
 
-from bigsvd.errors import SourceError
+from bigsvd.errors import OutsideError, SourceError
 from bigsvd.source.candidate import SPARSE, SPARSE_TYPES, Candidate
 from bigsvd.source.hdf5_dataset import describe
 from bigsvd.source.hdf5_links import outside_files, require_path_inside
-from bigsvd.source.home import Home, OutsideError
+from bigsvd.source.home import Home
 from bigsvd.source.rectangle import grid_shape
 from bigsvd.units import show_count
 
