@@ -1,14 +1,11 @@
-"""The file under the run: cut short, replaced, appended to, left by a writer that crashed, or locked."""
+"""The file under the run: cut short, replaced, appended to, changed without a trace, or on a read-only device."""
 
 from __future__ import annotations
 
-import fcntl
 import os
 import re
 import shutil
-import signal
 import subprocess
-import sys
 from collections.abc import Callable
 from pathlib import Path
 
@@ -120,57 +117,6 @@ def test_22_a_change_that_no_time_or_size_shows_is_found_in_the_next_sweep(
     first, last = re.search(r"1 of 50 panels differ, the first at rows ([0-9,]+)–([0-9,]+),", text).groups()
     assert int(first.replace(",", "")) <= row <= int(last.replace(",", ""))
     assert read_standing(streamed.journal).sweep >= 1
-
-
-CRASH = """
-import os, signal, sys
-import h5py, numpy as np
-file = h5py.File(sys.argv[1], "w", libver=sys.argv[2])
-heights = file.create_dataset("heights", (1000, 60), "f8", chunks=(50, 60))
-heights[:500] = np.random.default_rng(1).standard_normal((500, 60))
-file.flush()
-os.kill(os.getpid(), signal.SIGKILL)
-"""
-
-
-@pytest.mark.parametrize(("row", "version", "words"), [(23, "earliest", "is not complete"), (24, "latest", "h5clear")])
-def test_23_and_24_what_a_crashed_writer_left_is_not_taken_for_the_whole(
-    row: int, version: str, words: str, night: Night
-) -> None:
-    crashed = subprocess.run([sys.executable, "-c", CRASH, str(night.file), version], check=False)
-    assert crashed.returncode == -signal.SIGKILL
-    text = night.refused(2)
-    assert words in text
-    assert str(night.file) in text
-    if row == 23:
-        assert "10 of 20 chunks are absent" in text
-        assert "first absent: " in text
-
-
-def test_25_a_file_that_its_writer_holds_is_refused_and_explained(night: Night) -> None:
-    with open(night.file, "rb") as writer:
-        fcntl.flock(writer, fcntl.LOCK_EX)
-        text = night.refused(2)
-    assert f"{night.file} is locked: another program has it open for writing" in text
-    assert "Close it there, or work on a copy" in text
-    night.done()
-
-
-def test_26_a_file_system_without_locks_is_read_without(night: Night, monkeypatch: pytest.MonkeyPatch) -> None:
-    """Best effort is the library's word for it: where the system answers that it has no locks, none is taken."""
-    asked: list[object] = []
-    opened = h5py.File.__init__
-
-    def watched(self: h5py.File, *words: object, **options: object) -> None:
-        # A dataset's own file comes by its number.
-        if words and isinstance(words[0], str):
-            asked.append(options.get("locking"))
-        opened(self, *words, **options)
-
-    monkeypatch.setattr(h5py.File, "__init__", watched)
-    night.done()
-    assert asked
-    assert set(asked) == {"best-effort"}
 
 
 def test_26_a_read_only_file_system_is_read(night: Night, mount: Callable[[str, str], Path]) -> None:

@@ -8,13 +8,12 @@ import resource
 import subprocess
 import sys
 from pathlib import Path
-from typing import Any
 
 import h5py
 import numpy as np
 import pytest
 import zarr
-from fault_samples import Night, heights, run
+from fault_samples import Night, run
 
 import bigsvd
 from bigsvd import machine
@@ -100,32 +99,6 @@ def test_48_the_least_limit_of_all_groups_counts(tmp_path: Path) -> None:
 
 
 # ------------------------------------------------------------------------------------------------------------ 50: files
-def many_chunks(folder: Path, chunks: tuple[int, int], **options: Any) -> Path:
-    zarr.create_array(str(folder), data=np.array(heights()), chunks=chunks, **options)
-    return folder
-
-
-@pytest.mark.parametrize("kind", ["zarr", "hdf5"])
-def test_50_few_open_files_are_enough_for_many_chunks(kind: str, night: Night) -> None:
-    if kind == "zarr":
-        night.file = many_chunks(night.folder / "many.zarr", (16, 32))
-        assert len(list(night.file.rglob("*"))) > 1000
-    words = ("decompose", night.file, "--out", night.folder / "new.zarr", "--rank", 3, "--quiet")
-    ended = limited("RLIMIT_NOFILE", 48, *words)
-    assert ended.returncode == 0, ended.stderr
-    assert bigsvd.open_factors(night.folder / "new.zarr").rank == 3
-
-
-def test_50_too_few_open_files_for_anything_are_said(night: Night) -> None:
-    words = ("decompose", night.file, "--out", night.out, "--overwrite", "--rank", 3, "--quiet")
-    ended = limited("RLIMIT_NOFILE", 24, *words)
-    assert ended.returncode in (0, 1, 2)
-    if ended.returncode:
-        assert "Too many open files" in ended.stderr
-        assert "Traceback" not in ended.stderr
-        assert bigsvd.open_factors(night.out).rank == 2
-
-
 def test_50_a_hundred_thousand_chunks_are_listed_in_little_memory(night: Night, tmp_path: Path) -> None:
     """Files are not made for them: metadata that promises as many is looked through, and all are absent."""
     folder = tmp_path / "promised.zarr"

@@ -1,4 +1,4 @@
-"""What is in the matrix, and what is asked of it: shapes, types, NaN, constants, offsets, extremes, ranks, layouts."""
+"""What is in the matrix, and what is asked of it: NaN, constants, offsets, extremes, ranks, layouts."""
 
 from __future__ import annotations
 
@@ -29,75 +29,7 @@ def exact(matrix: np.ndarray, *, center: bool = True) -> np.ndarray:
     return np.linalg.svd(wide - wide.mean(axis=0) if center else wide, compute_uv=False)
 
 
-# ------------------------------------------------------------------------------------------------ 32 to 34: what it is
-def test_32_several_candidates_are_listed_with_their_shapes(night: Night) -> None:
-    with h5py.File(night.file, "w") as file:
-        file["dusk/heights"], file["dawn/heights"] = np.ones((50, 7)), np.ones((60, 8))
-    text = night.refused(2)
-    for part in ("dusk/heights", "50 × 7", "dawn/heights", "60 × 8", "--matrix"):
-        assert part in text
-
-
-def test_32_a_group_in_place_of_a_matrix_lists_what_it_holds(night: Night) -> None:
-    with h5py.File(night.file, "w") as file:
-        file["dusk/heights"], file["dusk/depths"], file["dawn"] = np.ones((50, 7)), np.ones((60, 8)), np.ones((3, 4))
-    text = night.refused(2, matrix="dusk")
-    assert "dusk/heights" in text
-    assert "dusk/depths" in text
-    assert "dawn" not in text
-
-
-@pytest.mark.parametrize(
-    ("values", "word"),
-    [
-        (np.arange(9.0), "1-D"),
-        (np.float64(3.0), "a single value"),
-        (h5py.Empty("f8"), ""),
-        (np.zeros((0, 5)), "0 × 5"),
-        (np.zeros((5, 0)), "5 × 0"),
-        (np.zeros((2, 3, 4)), "3-D"),
-    ],
-    ids=["1-D", "0-D", "null", "no rows", "no columns", "3-D"],
-)
-def test_33_what_has_no_two_sides_is_refused_by_name(values: Any, word: str, night: Night) -> None:
-    stored(night, values)
-    text = night.refused(2, matrix="heights")
-    assert f"{night.file}:/heights" in text
-    assert word in text
-
-
-@pytest.mark.parametrize("shape", [(1, 40), (40, 1), (1, 1), (2, 2)])
-def test_33_one_row_or_one_column_works(shape: tuple[int, int], night: Night) -> None:
-    matrix = np.random.default_rng(3).standard_normal(shape) + 2
-    stored(night, matrix)
-    night.options = {"rank": 1, "center": "none", "memory": "1GiB"}
-    night.done()
-    assert bigsvd.open_factors(night.out).singular_values[0] == pytest.approx(exact(matrix, center=False)[0])
-
-
-@pytest.mark.parametrize(
-    ("values", "dtype"),
-    [
-        ([["tide", "pool"]], h5py.string_dtype()),
-        (np.array([[b"tide", b"pool"]]), None),
-        (np.zeros((4, 4), [("depth", "f4"), ("time", "i8")]), None),
-        ([[np.arange(3.0), np.arange(2.0)]], h5py.vlen_dtype("f8")),
-    ],
-    ids=["text", "bytes", "records", "lists"],
-)
-def test_34_entries_that_are_no_numbers_are_refused_by_name(values: Any, dtype: Any, night: Night) -> None:
-    with h5py.File(night.file, "w") as file:
-        if dtype is not None and h5py.check_vlen_dtype(dtype):
-            made = file.create_dataset("heights", (1, 2), dtype)
-            for column, entry in enumerate(values[0]):
-                made[0, column] = entry
-        else:
-            file.create_dataset("heights", data=values, dtype=dtype)
-    text = night.refused(2, matrix="heights")
-    assert f"{night.file}:/heights" in text
-    assert "UnsupportedMatrixError" in text
-
-
+# ------------------------------------------------------------------------------------------------------- 34: what it is
 def test_34_objects_in_a_zarr_array_are_never_decoded(night: Night, tmp_path: Path) -> None:
     import json
 
