@@ -10,7 +10,7 @@ import numpy as np
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, SourceError, UnsupportedMatrixError
 from bigsvd.source.access import STRICT, Access
-from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
+from bigsvd.source.chunk_decoder import ChunkError, decode_bytes, most_stored
 from bigsvd.source.complete import absent_error, settle_absent
 from bigsvd.source.entries import decoded_type, type_caution
 from bigsvd.source.fill import zarr_fill
@@ -210,9 +210,15 @@ class ZarrSource:
 
     def _by_library(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Read through zarr-python, which would answer an absent chunk with the fill value."""
+        assert self.metadata.dtype is not None
+        # It reads a value whole, however long; shards hold an index beside their chunks.
+        most = 2 * most_stored(self._chunks[0] * self._chunks[1] * self.metadata.dtype.itemsize) + 2**24
         for coordinates in touched(rows, columns, self._chunks):
-            if not self.keys.size(self._key(coordinates)) and self._accepted(coordinates) is None:
+            size = self.keys.size(self._key(coordinates))
+            if not size and self._accepted(coordinates) is None:
                 raise ChunkAbsentError(coordinates)
+            if size and size > most:
+                raise ChunkError(coordinates, f"no codec makes so many of a chunk; {most:,} are the most that is read")
         (self._library or self._open_library())(rows, columns, out)
 
     def _unknown(self, error: Exception) -> UnsupportedMatrixError:

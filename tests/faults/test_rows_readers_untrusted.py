@@ -249,10 +249,24 @@ def test_a_chunk_that_decodes_to_more_than_declared_is_an_error_and_no_allocatio
     assert "chunk (2, 1)" in text if form != "hdf5 gzip" else "chunk (1, 0)" in text
 
 
+def test_a_zip_file_that_unpacks_to_more_than_declared_is_refused(scene: Scene) -> None:
+    import zipfile
+
+    file = write_zarr(scene.folder / "a.zarr", compressors=None)
+    with zipfile.ZipFile(scene.folder / "a.zip", "w", zipfile.ZIP_DEFLATED) as packed:
+        for path in sorted(path for path in file.rglob("*") if path.is_file()):
+            name = path.relative_to(file).as_posix()
+            packed.writestr(name, bytes(2**26) if name == "c/2/1" else path.read_bytes())
+    text = scene.refused(scene.folder / "a.zip")
+    assert "chunk (2, 1): rows 20 to 29" in text
+    assert "key c/2/1, 67,108,864 bytes stored" in text
+    assert "no codec makes so many of a chunk" in text
+
+
 def test_metadata_of_a_size_that_nobody_writes_are_not_read(scene: Scene) -> None:
     file = write_zarr(scene.folder / "a.zarr")
-    os.truncate(file / "zarr.json", 2**32)
-    assert "4,294,967,296 bytes, more than the 67,108,864 read here" in scene.refused(file)
+    os.truncate(file / "zarr.json", 2**26 + 1)
+    assert "67,108,865 bytes, more than the 67,108,864 read here" in scene.refused(file)
 
 
 def test_deep_and_wide_stores_end(scene: Scene) -> None:
