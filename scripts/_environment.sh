@@ -1,4 +1,4 @@
-# Sourced by the five commands: goes to the checkout and makes its .venv fit, with Python 3.11 or newer and pip alone.
+# Sourced by the commands: goes to the checkout and makes its .venv fit, with Python 3.11 or newer and pip alone.
 
 CDPATH='' cd -- "$(dirname -- "${BASH_SOURCE[0]}")/.."
 export PIP_DISABLE_PIP_VERSION_CHECK=1
