@@ -148,7 +148,7 @@ def _require_sound(array: ZarrMetadata) -> None:
         raise ValueError(f"{show_value(array.separator)} between the numbers of a chunk")
     if not isinstance(array.attributes, dict) or not all(isinstance(name, str) for name in array.codecs):
         raise ValueError("attributes or codecs of another form")
-    if len(array.chunks) != len(array.shape):
+    if any(len(sides) != len(array.shape) for sides in (array.chunks, array.inner or array.chunks)):
         raise ValueError(f"shape {array.shape} with chunks {array.chunks}")
     if any(side < 0 for side in array.shape) or any(side < 1 for side in (*array.chunks, *(array.inner or ()))):
         raise ValueError(f"shape {array.shape} with chunks {array.chunks}")
