@@ -447,5 +447,8 @@ def _write(
             spectrum=spectrum_record(outcome, certificate),
             certificate=certificate,
             attributes=run_record(outcome, foreseen, control, started, held_before)
-            | {"resumed": kept.journal.resumed if kept else 0},
+            | {
+                "resumed": kept.journal.resumed if kept else 0,
+                "earlier_seconds": kept.journal.earlier_seconds if kept else 0.0,
+            },
         )

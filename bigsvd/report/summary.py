@@ -145,7 +145,8 @@ def cost_words(attributes: Mapping[str, Any]) -> list[tuple[str, str]]:
         ("read", f"{show_bytes(read)}{times} in {sweep_words}, all checks included"),
         (
             "time",
-            f"{show_seconds(attributes['seconds'])}{guess} with {workers} {'worker' if workers == 1 else 'workers'}",
+            f"{show_seconds(attributes['seconds'])}{guess} with {workers} {'worker' if workers == 1 else 'workers'}"
+            f"{_earlier_words(attributes)}",
         ),
     ]
     sizes = [("planned", attributes.get("planned_bytes")), ("ceiling", attributes.get("memory_bytes"))]
@@ -153,6 +154,15 @@ def cost_words(attributes: Mapping[str, Any]) -> list[tuple[str, str]]:
     pairs.append(("memory", "; ".join([f"{show_bytes(attributes['peak_resident_bytes'])} at its peak", *parts])))
     pairs += [("remarks", remark) for remark in attributes.get("remarks", ())]
     return pairs
+
+
+def _earlier_words(attributes: Mapping[str, Any]) -> str:
+    """What earlier processes spent on a run that was cut."""
+    times = attributes.get("resumed") or 0
+    if not times:
+        return ""
+    spent = show_seconds(attributes.get("earlier_seconds") or 0.0)
+    return f", after {spent} of processes that were cut ({'once' if times == 1 else f'{times} times'})"
 
 
 def phase_lines(attributes: Mapping[str, Any]) -> list[str]:
@@ -169,7 +179,9 @@ def phase_lines(attributes: Mapping[str, Any]) -> list[str]:
     rows.append(["in all", f"{sums['predicted']:.2f}", f"{sums['measured']:.2f}"])
     workers, sweeps = attributes["workers"], attributes["sweeps"]
     shared = "" if workers == 1 else f"; work of {workers} workers counted once"
-    head = f"Seconds by phase, predicted for {'one sweep' if sweeps == 1 else f'{sweeps} sweeps'} like these{shared}:"
+    last = "; taken by the last process" if attributes.get("resumed") else ""
+    made = "one sweep" if sweeps == 1 else f"{sweeps} sweeps"
+    head = f"Seconds by phase, predicted for {made} like these{shared}{last}:"
     return ["", head, *("  " + line for line in table(["", "predicted", "taken"], rows, "lrr"))]
 
 
@@ -193,6 +205,8 @@ def decomposition_facts(certificate: Certificate, attributes: Mapping[str, Any],
         "seconds",
         "predicted_seconds",
         "predicted_sweeps",
+        "resumed",
+        "earlier_seconds",
         "peak_resident_bytes",
         "memory_bytes",
     )

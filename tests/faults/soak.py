@@ -34,7 +34,7 @@ MIB = 2**20
 WARM_UP = 5
 # Resident size may be so much larger in the last quarter of the rounds than in the second. The allocator keeps up to
 # 16 MiB free for each of its arenas, so a few rounds say nothing: sizes go up and down by 100 MiB.
-MOST_GROWTH = 16 * MIB
+MOST_GROWTH = 32 * MIB
 LEAST_ROUNDS = 100
 
 

@@ -50,6 +50,7 @@ def go_on_and_compare(
     gone_on, second = decompose(matrix, folder / "out.zarr", **options)
     assert_same_bits(folder / "out.zarr", folder / "whole.zarr")
     assert gone_on.attributes["resumed"] == 1
+    assert gone_on.attributes["earlier_seconds"] == standing.seconds > 0
     assert left_in(folder) == ["out.zarr", "whole.zarr"]
     # Both processes are counted, the first up to its last saving; what was kept is not read again.
     assert gone_on.attributes["bytes_read"] == standing.bytes_read + second.bytes

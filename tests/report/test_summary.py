@@ -100,6 +100,15 @@ def test_a_record_without_phases_has_no_table_of_them() -> None:
     assert "Seconds by phase" not in text()
 
 
+@pytest.mark.parametrize(("times", "words"), [(1, "once"), (3, "3 times")])
+def test_a_run_that_was_cut_says_what_came_before(times: int, words: str) -> None:
+    cut = {"resumed": times, "earlier_seconds": 125.0, "phases": {"read": phase(1.0, 2.0)}}
+    found = text(record=attributes() | cut)
+    assert f"after 2 min 5 s of processes that were cut ({words})" in found
+    assert "taken by the last process:" in found
+    assert "cut" not in text(record=attributes() | {"resumed": 0, "earlier_seconds": 0.0})
+
+
 def test_an_uncentred_matrix_has_energy_not_variance() -> None:
     record = attributes(preparation={"words": "not centred", "center": "none", "constant_features": 2})
     said = text(record=record)
