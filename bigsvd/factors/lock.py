@@ -99,16 +99,20 @@ class OutputLock:
             # A file system without locks: believe the record, unless it names a dead process of this host.
             record = _record(handle)
             if record and not (record["host"] == socket.gethostname() and _ended(int(record["pid"]))):
-                raise self._held_by(record) from error
+                raise self._held_by(record, certain=False) from error
 
-    def _held_by(self, record: dict[str, str]) -> ResultError:
-        """Say who writes the result."""
+    def _held_by(self, record: dict[str, str], *, certain: bool = True) -> ResultError:
+        """Say who writes the result; where the system keeps no locks, the file may have outlived its process."""
         holder = "process {pid} on {host}, since {since}".format(**record) if record else "process unknown"
-        return ResultError(
-            f"another run is writing {self.out}",
-            evidence=[holder, f"lock file: {self.path}"],
-            remedy="Wait for it to end, or choose another --out.",
-        )
+        evidence = [holder, f"lock file: {self.path}"]
+        if certain:
+            remedy = "Wait for it to end, or choose another --out."
+        else:
+            evidence.append("this file system keeps no locks, so nothing tells whether that process is still there")
+            remedy = (
+                f'If it is not, remove the file: rm "{self.path}". Else wait for it to end, or choose another --out.'
+            )
+        return ResultError(f"another run is writing {self.out}", evidence=evidence, remedy=remedy)
 
 
 def _record(handle: int) -> dict[str, str]:

@@ -258,7 +258,10 @@ def test_where_locks_do_not_work_the_record_decides(tmp_path, out, monkeypatch, 
         Sample().write(out)
         assert [path.name for path in tmp_path.iterdir()] == ["out.zarr"]
     else:
-        assert f"process {pid} on {host}" in refused(tmp_path, out)
+        text = refused(tmp_path, out)
+        assert f"process {pid} on {host}" in text
+        assert "keeps no locks" in text
+        assert f'rm "{tmp_path / "out.zarr.lock"}"' in text
         with pytest.raises(ResultError, match="another run is writing"):
             Sample().write(out)
 

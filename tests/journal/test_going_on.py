@@ -209,6 +209,14 @@ def test_a_wish_to_stop_keeps_what_was_summed_though_it_was_not_time(
     assert 0.3 * standing.of <= standing.waves < standing.of
 
 
+@pytest.mark.parametrize("seconds", [-1.0, float("nan")])
+def test_a_time_between_savings_that_is_none_is_refused(seconds: float, tmp_path: Path) -> None:
+    source = Kept(slow_decay())
+    with pytest.raises(bigsvd.errors.OptionError, match="--save-every"):
+        bigsvd.decompose(source, tmp_path / "out.zarr", **(OPTIONS | {"save_every": seconds}))
+    assert source.bytes == 0
+
+
 def test_savings_are_apart_as_asked_and_as_the_device_takes(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
     from bigsvd.journal import Journal
     from bigsvd.sweep import Control
