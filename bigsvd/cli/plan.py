@@ -9,6 +9,7 @@ import click
 
 from bigsvd.cli.options import decomposition_options, given, output_options, print_lines, progress_stream, text_width
 from bigsvd.cli.program import print_json
+from bigsvd.errors import ResultError
 
 
 @click.command(short_help="Say what decompose would do and cost, or where a stopped run stands.")
@@ -48,6 +49,12 @@ def _tell_standing(path: Path, *, as_json: bool, options: dict[str, Any]) -> boo
     from bigsvd.journal import is_run_folder, read_standing
     from bigsvd.report import read_status, standing_facts, standing_lines
 
+    if path.name.endswith(".run") and not path.exists():
+        out = path.with_name(path.name.removesuffix(".run"))
+        there = f"{out} is in place" if out.exists() else f"{out} is not there either"
+        raise ResultError(
+            f"no unfinished run stands at {path}", evidence=[there], remedy="Give the command that is to make it."
+        )
     if not is_run_folder(path):
         return False
     if options:

@@ -3,14 +3,14 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 
 from bigsvd.drive.space import Need, full_device_named, require_room
-from bigsvd.errors import NonFiniteError, OptionError
+from bigsvd.errors import DamagedJournalError, NonFiniteError, OptionError
 from bigsvd.factors import store_cost
 from bigsvd.journal import Journal, RunFolder, Standing, identity_of, journal_bytes, read_standing
 from bigsvd.plan import Plan
@@ -43,9 +43,12 @@ class KeptRun:
 
     def standing(self, error: BaseException | None = None) -> Standing | None:
         """Where it stands now, or after an error; None where nothing is kept."""
-        if isinstance(error, _HOPELESS):
+        if isinstance(error, _HOPELESS) or not self.folder.holds_sums():
             return None
-        return read_standing(self.folder.path, contents=False) if self.folder.holds_sums() else None
+        # Somebody may have taken the folder apart; that must not hide what ended the run.
+        with suppress(DamagedJournalError):
+            return read_standing(self.folder.path, contents=False)
+        return None
 
 
 @contextmanager

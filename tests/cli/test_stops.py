@@ -166,6 +166,9 @@ def test_plan_of_the_folder_tells_where_a_run_stands_and_changes_nothing(tmp_pat
     assert "--rank has no meaning" in refused.stderr
     (folder / "identity.json").write_text("tide")
     assert run("plan", folder).exit_code == 2
+    gone = run("plan", tmp_path / "other.zarr.run")
+    assert gone.exit_code == 2
+    assert f"no unfinished run stands at {tmp_path / 'other.zarr.run'}" in gone.stderr
 
 
 def test_the_log_tells_the_night(tmp_path: Path) -> None:

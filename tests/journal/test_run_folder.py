@@ -104,6 +104,20 @@ def test_the_journal_takes_no_more_than_was_foreseen(out: Path, run: Path) -> No
         assert journal_bytes(plan) / 8 < most <= journal_bytes(plan), options
 
 
+def test_a_folder_taken_apart_under_the_run_does_not_hide_what_ended_it(out: Path, run: Path) -> None:
+    class Broken(Exception):
+        pass
+
+    def take_apart(event: Any) -> None:
+        if event.sweep == 2 and event.bytes_done:
+            (run / "identity.json").unlink(missing_ok=True)
+            raise Broken
+
+    with pytest.raises(Broken):
+        decompose(out, progress=take_apart)
+    assert "kept: nothing" in out.with_name("out.zarr.log").read_text()
+
+
 # ------------------------------------------------------------------------------------------------- what is in the way
 @pytest.mark.parametrize("kind", ["link", "file", "strangers"])
 def test_what_is_no_folder_of_a_run_is_refused_and_kept(kind: str, out: Path, run: Path) -> None:
