@@ -15,6 +15,7 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import shutil
 import stat
 from dataclasses import dataclass
@@ -30,6 +31,8 @@ from bigsvd.units import show_bytes
 _SUFFIXES = (".partial", ".replaced", ".lock", ".run", ".log")
 # Left by file managers and network file systems; nobody's work.
 _LITTER = (".DS_Store", "._", ".nfs")
+# Where zarr-python writes metadata before they get their name; a process that is killed in between leaves it.
+_HALF_WRITTEN = re.compile(r"zarr\.[0-9a-f]{32}\.partial")
 
 
 @dataclass(frozen=True)
@@ -275,7 +278,8 @@ def _check_partial(place: Place) -> None:
             remedy="Remove it, or choose another --out.",
         )
     _check_owner(partial)
-    if strangers := _strangers(partial) or (["zarr.json"] if _claims(partial) is False else []):
+    strangers = [name for name in _strangers(partial) if not _HALF_WRITTEN.fullmatch(name)]
+    if strangers := strangers or (["zarr.json"] if _claims(partial) is False else []):
         raise ResultError(
             f"{partial} is in the way and holds more than the leftover of a run",
             evidence=[f"Not of a result: {', '.join(strangers[:5])}"],

@@ -229,6 +229,16 @@ def test_a_stale_partial_is_removed_first(tmp_path, old):
     assert seed_of(old) == 8
 
 
+def test_what_zarr_had_half_written_when_its_process_was_killed_is_no_hindrance(tmp_path, out):
+    """Found by scripts/kill-storm: one kill in some hundreds falls between the writing and the renaming of metadata."""
+    partial = tmp_path / "out.zarr.partial"
+    (partial / "left_vectors").mkdir(parents=True)
+    (partial / "zarr.e453be16f3ec44aa8268d0093bfaefa3.partial").write_text('{"shap')
+    (partial / "left_vectors" / "zarr.0f53be16f3ec44aa8268d0093bfaefa3.partial").write_text("")
+    Sample().write(out)
+    assert [path.name for path in tmp_path.iterdir()] == ["out.zarr"]
+
+
 def test_a_second_writer_is_refused_and_told_who_writes(tmp_path, out):
     with Sample().writer(out) as first:
         Sample().fill(first)
