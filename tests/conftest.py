@@ -10,6 +10,8 @@ from pathlib import Path
 import pytest
 
 HERE = Path(__file__).parent
+# Searched for doctests, those of two rooms would clash: modules of one name.
+collect_ignore_glob = ["*/conftest.py"]
 if str(HERE) not in sys.path:
     sys.path.insert(0, str(HERE))  # `from table import …` in every room, whatever pytest's import mode
 
