@@ -50,7 +50,7 @@ PHASES: tuple[tuple[str, str, str], ...] = (
     ("basis: defect", "bigsvd.solve.state", "State.basis_defect"),
     ("certificate", "bigsvd.drive.run", "certify"),
     ("solve the pilot", "bigsvd.drive.sweeps", "take_pilot"),
-    ("compare a slice with LAPACK", "bigsvd.api", "check_slice"),
+    ("compare a slice with LAPACK", "bigsvd.drive.slices", "check_slice"),
     ("tall vectors", "bigsvd.solve.tall", "TallVectors.__init__"),
     ("tall vectors", "bigsvd.solve.tall", "TallVectors.rows"),
     ("store and verify", "bigsvd.factors.writer", "FactorsWriter.write_vectors"),
