@@ -11,37 +11,30 @@ from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager, suppress
 from dataclasses import fields, replace
 from pathlib import Path
-from typing import Any, Literal
+from typing import Any
 
 import numpy as np
 
 from bigsvd import machine
-from bigsvd.certify import SliceCheck
 from bigsvd.drive import (
     Deadline,
     Forecast,
-    KeptRun,
-    Outcome,
     Verification,
     check_slices,
     keep_run,
     make_forecast,
     run,
-    run_record,
-    spectrum_record,
     verify_factors,
+    write_result,
 )
 from bigsvd.errors import OptionError
-from bigsvd.factors import Factors, FactorsWriter, check_output, open_factors, store_cost
+from bigsvd.factors import Factors, check_output, open_factors, store_cost
 from bigsvd.journal import check_interval, discard_finished
 from bigsvd.plan import Request, make_plan
 from bigsvd.report import Listeners, watch
-from bigsvd.solve import TallVectors, column_phases
 from bigsvd.source import Access, MatrixSpec, Source, check_complete, open_source
 from bigsvd.sweep import Control, Listener, one_blas_thread
 from bigsvd.units import parse_bytes, parse_deadline, show_bytes
-
-Side = Literal["left", "right"]
 
 __all__ = ["decompose", "forecast", "open_factors", "open_matrix", "verify"]
 
@@ -205,10 +198,16 @@ def decompose(
                     _deadline(until, foreseen),
                 )  # fmt: skip
                 try:
-                    checks = _check_slices(opened, outcome, kept.folder.path if kept else folder, control)
+                    checks = check_slices(
+                        opened, plan, outcome.precision, kept.folder.path if kept else folder, control,
+                        seed=plan.request.seed,
+                    )  # fmt: skip
                     if kept is not None and outcome.out_of_time:
                         kept.folder.stay()
-                    factors = _write(target, outcome, checks, foreseen, control, overwrite, started, held_before, kept)
+                    factors = write_result(
+                        target, outcome, checks, foreseen, control, kept, overwrite=overwrite, started=started,
+                        held_before=held_before,
+                    )  # fmt: skip
                     watching.take(factors.certificate)
                     return factors
                 finally:
@@ -379,76 +378,3 @@ def _scratch_folder(scratch: str | Path | None, out: Path | None) -> Path:
     if scratch is not None:
         return Path(scratch).expanduser()
     return Path(tempfile.gettempdir()) if out is None else out.expanduser().resolve().parent
-
-
-def _check_slices(source: Source, outcome: Outcome, folder: Path, control: Control) -> tuple[SliceCheck, ...]:
-    """The exact check on slices of the user's own file."""
-    plan = outcome.plan
-    return check_slices(source, plan, outcome.precision, folder, control, seed=plan.request.seed)
-
-
-def _write(
-    out: Path | None,
-    outcome: Outcome,
-    checks: tuple[SliceCheck, ...],
-    foreseen: Forecast,
-    control: Control,
-    overwrite: bool,
-    started: float,
-    held_before: int,
-    kept: KeptRun | None,
-) -> Factors:
-    """Write the factors: tall vectors from scratch, the others from memory, then everything that is known of them."""
-    plan, certificate = outcome.plan, outcome.certificate
-    rank = certificate.rank
-    tall_side: Side = "left" if plan.geometry.lines_are_samples else "right"
-    basis_side: Side = "right" if plan.geometry.lines_are_samples else "left"
-    tall = TallVectors(outcome.scratch, outcome.state, outcome.ritz, certificate.null, plan.request.seed)
-    basis = outcome.state.used @ outcome.ritz.rotation[:, :rank]
-    if tall_side == "right":
-        # The swept matrix is Aᵀ = U Σ Vᴴ, so A = conj(V) Σ Uᵀ: the right vectors of A are conj(U).
-        tall.fix_phase()
-        phase = tall.phase
-    else:
-        phase = column_phases(basis)
-        tall.phase = phase
-    basis = basis * phase
-    with FactorsWriter(
-        out,
-        shape=(plan.samples, plan.features),
-        rank=rank,
-        dtype=outcome.scratch.dtype,
-        overwrite=overwrite,
-        lock=kept.folder.lock if kept else None,
-    ) as writer:
-        control.begin("write", (plan.samples + plan.features) * rank * outcome.scratch.dtype.itemsize)
-        conjugate = tall_side == "right"
-        gram = np.zeros((rank, rank), outcome.scratch.dtype)
-        for start, block in tall.blocks():
-            gram += block.conj().T @ block
-            writer.write_vectors(tall_side, start, block.conj() if conjugate else block)
-            control.advance(block.nbytes, read=0)
-        writer.write_vectors(basis_side, 0, basis.conj() if conjugate else basis)
-        control.advance(basis.nbytes, read=0)
-        defects = {
-            tall_side: float(np.linalg.norm(gram - np.eye(rank))),
-            basis_side: float(np.linalg.norm(basis.conj().T @ basis - np.eye(rank))),
-        }
-        sound = all(check.within_bounds for check in checks)
-        certificate = replace(
-            certificate, left_defect=defects["left"], right_defect=defects["right"], slices=checks,
-            tolerance_met=certificate.tolerance_met and sound,
-            verdict=certificate.verdict if sound else f"{certificate.verdict}; bounds broken on slices of the file",
-        )  # fmt: skip
-        return writer.finish(
-            singular_values=certificate.value,
-            column_mean=outcome.mean,
-            column_scale=1.0 / outcome.inverse_scale,
-            spectrum=spectrum_record(outcome, certificate),
-            certificate=certificate,
-            attributes=run_record(outcome, foreseen, control, started, held_before)
-            | {
-                "resumed": kept.journal.resumed if kept else 0,
-                "earlier_seconds": kept.journal.earlier_seconds if kept else 0.0,
-            },
-        )

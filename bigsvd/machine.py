@@ -3,11 +3,20 @@
 from __future__ import annotations
 
 import contextlib
+import importlib.metadata
 import os
 from pathlib import Path
 
 _STEP = 256 * 2**20
 _MALLOC_TRIM, _MALLOC_MMAP = -1, -3
+
+
+def package_version(name: str) -> str:
+    """Version of an installed package; ``unknown`` where there is none."""
+    try:
+        return importlib.metadata.version(name)
+    except importlib.metadata.PackageNotFoundError:
+        return "unknown"
 
 
 def default_ceiling() -> int:

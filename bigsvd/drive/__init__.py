@@ -2,11 +2,12 @@
 
 from bigsvd.drive.deadline import Deadline
 from bigsvd.drive.keeping import KeptRun, keep_run
+from bigsvd.drive.outcome import Outcome
 from bigsvd.drive.probe import Forecast, make_forecast
-from bigsvd.drive.record import run_record, spectrum_record
-from bigsvd.drive.run import Outcome, run
+from bigsvd.drive.run import run
 from bigsvd.drive.slices import check_slices
 from bigsvd.drive.verify import Check, Verification, verify_factors
+from bigsvd.drive.writing import write_result
 
 __all__ = [
     "Check",
@@ -19,7 +20,6 @@ __all__ = [
     "keep_run",
     "make_forecast",
     "run",
-    "run_record",
-    "spectrum_record",
     "verify_factors",
+    "write_result",
 ]

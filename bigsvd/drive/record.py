@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import importlib.metadata
 import platform
 import time
 from dataclasses import asdict
@@ -12,7 +11,7 @@ import numpy as np
 
 from bigsvd import machine
 from bigsvd.certify import Certificate, spectrum_intervals
-from bigsvd.drive.run import Outcome
+from bigsvd.drive.outcome import Outcome
 from bigsvd.plan import BASE_BYTES, CALLER, SHARED
 from bigsvd.sweep import Control
 
@@ -107,7 +106,7 @@ def run_record(
         "seed": plan.request.seed,
         "remarks": [*plan.remarks, *outcome.remarks],
         "timings": control.timings(),
-        "versions": {name: _version(name) for name in _VERSIONS} | {"python": platform.python_version()},
+        "versions": {name: machine.package_version(name) for name in _VERSIONS} | {"python": platform.python_version()},
     }
 
 
@@ -154,11 +153,3 @@ def phase_record(
     return shared | {
         name: {"predicted": made[name], "measured": caller[name], "worker_seconds": None} for name in CALLER
     }
-
-
-def _version(name: str) -> str:
-    """Version of an installed package."""
-    try:
-        return importlib.metadata.version(name)
-    except importlib.metadata.PackageNotFoundError:
-        return "unknown"

@@ -9,16 +9,14 @@ from pathlib import Path
 import numpy as np
 
 from bigsvd.certify import (
-    BULK_WIDTH,
-    STATES,
     Certificate,
     Evidence,
     certify,
-    crowded,
-    measured_rounding,
     rounding_limited,
 )
 from bigsvd.drive.deadline import Deadline
+from bigsvd.drive.outcome import Answer, Outcome
+from bigsvd.drive.precision import rounding_too_large, single_is_enough
 from bigsvd.drive.proof import Proof
 from bigsvd.drive.sweeps import OverflowInSingleError, Sweeps
 from bigsvd.drive.whole import gram_is_enough, sweep_fold, sweep_gram
@@ -27,7 +25,6 @@ from bigsvd.journal import Journal
 from bigsvd.plan import Plan, Widths, crowd_reach, krylov_widths
 from bigsvd.solve import (
     Aside,
-    Pilot,
     Ritz,
     State,
     carry_chains,
@@ -37,65 +34,11 @@ from bigsvd.solve import (
     start_block,
 )
 from bigsvd.source import Source
-from bigsvd.sweep import Control, OutOfTimeError, Scratch
+from bigsvd.sweep import Control, OutOfTimeError
 from bigsvd.units import show_bytes, show_seconds
 
-# Rounding above this share of the tolerance: double.
-ROUNDING_SHARE = 0.25
-# An interval this many times as wide as its rounding is not wide by rounding.
-ROUNDING_PART = 4
 # Rank that --variance starts with, before it is known how many are needed.
 FIRST_GUESS = 50
-
-
-@dataclass(frozen=True, eq=False)
-class Outcome:
-    """What a run leaves in memory and scratch when it stops.
-
-    Attributes
-    ----------
-    plan : Plan
-    state : State
-    ritz : Ritz
-    evidence : Evidence
-    certificate : Certificate
-    scratch : Scratch
-        To be closed by the caller.
-    mean, inverse_scale : ndarray, shape (features,)
-        Statistics of the features, in units of the file.
-    constant : int
-        Constant features.
-    sweeps : int
-    precision : str
-    remarks : tuple of str
-    out_of_time : bool
-        The deadline came first: this is what the last whole sweep certified.
-    """
-
-    plan: Plan
-    state: State
-    ritz: Ritz
-    evidence: Evidence
-    certificate: Certificate
-    scratch: Scratch
-    mean: np.ndarray
-    inverse_scale: np.ndarray
-    constant: int
-    sweeps: int
-    precision: str
-    remarks: tuple[str, ...]
-    out_of_time: bool = False
-
-
-@dataclass(frozen=True, eq=False)
-class _Answer:
-    """What a whole sweep certified, and what the run knew then."""
-
-    ritz: Ritz
-    evidence: Evidence
-    certificate: Certificate
-    sweeps: int
-    precision: str
 
 
 def run(
@@ -154,7 +97,7 @@ class _Run:
     sweeps: Sweeps
     deadline: Deadline | None = None
     remarks: list[str] = field(default_factory=list)
-    answer: _Answer | None = None
+    answer: Answer | None = None
     aside: Aside | None = None
 
     def __post_init__(self) -> None:
@@ -198,7 +141,7 @@ class _Run:
         rank = min(self.rank, len(evidence.theta))
         request = self.plan.request
         certificate = certify(evidence, rank, crowd_reach(rank), request.tolerance, strict=request.strict)
-        self.answer = _Answer(ritz, evidence, certificate, self.sweeps.made, self._precision())
+        self.answer = Answer(ritz, evidence, certificate, self.sweeps.made, self._precision())
         self.sweeps.control.tell(f"after sweep {self.sweeps.made}: {certificate.verdict}")
         return reached
 
@@ -274,27 +217,13 @@ class _Run:
         pilot = self.sweeps.take_pilot(self._widths().start, may_be_single=allowed)
         if allowed and not pilot.single_fits and pilot.directions is not None:
             self.remarks.append("double precision: squares of the entries would overflow or vanish in single")
-        elif allowed and pilot.directions is not None and (asked == "single" or self._single_is_enough(pilot)):
-            self.sweeps.work = self.sweeps.single
+        elif allowed and pilot.directions is not None:
+            request, units = self.plan.request, self.sweeps.units
+            if asked == "single" or single_is_enough(
+                pilot, self.rank, units, request.tolerance, strict=request.strict
+            ):  # fmt: skip
+                self.sweeps.work = self.sweeps.single
         return pilot.directions
-
-    def _single_is_enough(self, pilot: Pilot) -> bool:
-        """Whether rounding measured on the pilot stays below a quarter of the tolerance for every wanted component."""
-        if pilot.rounding is None:
-            return False
-        tall, product = measured_rounding(pilot.rounding, self.sweeps.units)
-        wanted = pilot.theta[: self.rank]
-        # Values in the rounding of the sample say nothing; those above it decide.
-        wanted = wanted[wanted > np.sqrt(pilot.energy) * 1e-7]
-        if not len(wanted):
-            return False
-        width = 2 * (product[: len(wanted)] / wanted / np.sqrt(2) + tall) / wanted
-        request = self.plan.request
-        allowed = np.full(len(wanted), request.tolerance)
-        if not request.strict:
-            # Neighbours in a bulk of noise need not be told apart, only bounded.
-            allowed[crowded(pilot.theta, len(wanted), crowd_reach(self.rank))] = BULK_WIDTH
-        return bool(np.all(width <= ROUNDING_SHARE * allowed))
 
     def _sweep_basis(self) -> None:
         """Multiply the next block, and add it to the basis with everything that follows from it."""
@@ -395,7 +324,8 @@ class _Run:
     def _next_block(self, ritz: Ritz, evidence: Evidence, certificate: Certificate) -> np.ndarray:
         """The columns of the next sweep; restarts or goes over to double where needed."""
         widths, state = self._widths(), self.state
-        if self.sweeps.in_single and self._rounding_too_large(evidence, certificate):
+        asked = self.plan.request.precision
+        if self.sweeps.in_single and asked != "single" and rounding_too_large(evidence, certificate):
             return self._go_over_to_double(ritz, widths)
         tests = 0 if np.all(certificate.index_proved) else widths.test
         room = min(widths.limit, state.across)
@@ -413,20 +343,6 @@ class _Run:
         )  # fmt: skip
         self.proof.chains_made += 1 if tests else 0
         return block
-
-    def _rounding_too_large(self, evidence: Evidence, certificate: Certificate) -> bool:
-        """Whether single precision spends more than its share of the tolerance on a component that is still open."""
-        if self.plan.request.precision == "single":
-            return False
-        theta = np.maximum(evidence.theta[: certificate.rank], 1e-150)
-        rounding = evidence.product_rounding[: certificate.rank] / theta / np.sqrt(2) + evidence.value_rounding
-        width = certificate.upper - certificate.lower
-        waiting = certificate.state == STATES.index("open")
-        if self.plan.request.strict:
-            waiting |= certificate.state == STATES.index("bulk")
-        spent = 2 * rounding > ROUNDING_SHARE * self.plan.request.tolerance * theta
-        # While convergence is what is missing, single goes on.
-        return bool(np.any(waiting & spent & (width < ROUNDING_PART * 2 * rounding)))
 
     def _go_over_to_double(self, ritz: Ritz, widths: Widths) -> np.ndarray:
         """Begin again in double from the present Ritz vectors and their residuals."""

@@ -9,7 +9,8 @@ from pathlib import Path
 import numpy as np
 
 from bigsvd.certify import STATES, SliceCheck
-from bigsvd.drive.run import Outcome, run
+from bigsvd.drive.outcome import Outcome
+from bigsvd.drive.run import run
 from bigsvd.errors import OptionError
 from bigsvd.plan import SLICE_ENTRIES, Plan, make_plan
 from bigsvd.prepare import Preparation, line_statistics, prepare_unit

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import hashlib
-import importlib.metadata
 import json
 import os
 from collections.abc import Iterator, Mapping
@@ -11,6 +10,7 @@ from dataclasses import asdict
 from pathlib import Path
 from typing import Any
 
+from bigsvd import machine
 from bigsvd.errors import DamagedJournalError
 from bigsvd.plan import Plan
 
@@ -60,7 +60,7 @@ def identity_of(plan: Plan) -> dict[str, Any]:
             "columns": list(asdict(plan.widths).values()),
             "matrix held in memory": plan.resident,
         },
-        "versions": {name: _version(name) for name in _PACKAGES},
+        "versions": {name: machine.package_version(name) for name in _PACKAGES},
         "processor": {"matrix kernels": _kernels()},
     }
 
@@ -121,14 +121,6 @@ def _kernels() -> str:
 
     pools = [pool for pool in threadpool_info() if pool["user_api"] == "blas"]
     return ", ".join(sorted({str(pool.get("architecture", pool["internal_api"])) for pool in pools}))
-
-
-def _version(name: str) -> str:
-    """Version of an installed package."""
-    try:
-        return importlib.metadata.version(name)
-    except importlib.metadata.PackageNotFoundError:
-        return "unknown"
 
 
 def _show(value: Any) -> str:

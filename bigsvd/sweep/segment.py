@@ -8,10 +8,11 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from bigsvd.plan import UNIT_LINES, fold_lines, tile_columns
+from bigsvd.plan import UNIT_LINES, tile_columns
 from bigsvd.prepare import LineStatistics, Preparation, line_statistics, prepare_unit
 from bigsvd.sweep.events import Stopwatch
-from bigsvd.sweep.folding import add_gram, fold, fold_upon
+from bigsvd.sweep.folding import add_gram
+from bigsvd.sweep.gathering import Gatherer
 from bigsvd.sweep.panels import PanelReader
 from bigsvd.sweep.partial import Partial
 from bigsvd.sweep.scratch import Scratch
@@ -131,23 +132,20 @@ class _Segment:
             if task.sampled:
                 self.sums.rounding = np.zeros((3, task.block.shape[1]))
                 self.sums.unit_energies = np.zeros(4) if task.add_energy else None
-        self._start_fold()
+        self.gatherer = self._make_gatherer()
 
-    def _start_fold(self) -> None:
-        """Allocate the block that gathers lines for the next Householder fold."""
+    def _make_gatherer(self) -> Gatherer | None:
+        """What folds the lines, or their products with earlier ones; None where nothing is folded."""
         task = self.task
-        self.folded = 0
         if task.kind == "fold":
-            columns = self.across
-        elif task.scratch is not None and task.block is not None:
-            self.earlier = task.scratch.map
-            columns = self.earlier.shape[1] + task.block.shape[1]
-        else:
-            return
-        self.folded = columns + int(task.ones)
-        self.gathered = np.empty((self.folded + fold_lines(self.folded), self.folded), task.wide)
-        self.filled = 0
-        self.triangle: np.ndarray | None = None
+            # Of the matrix itself the small values are wanted: reflections alone.
+            return Gatherer(self.across, task.wide, self.watch, ones=task.ones)
+        if task.scratch is None or task.block is None:
+            return None
+        return Gatherer(
+            task.block.shape[1], task.wide, self.watch, ones=task.ones, scratch=task.scratch, blocks=task.target,
+            by_products=True,
+        )  # fmt: skip
 
     def take(self, panel: int, *, last: bool) -> None:
         """Read one panel and add it to the sums."""
@@ -202,7 +200,8 @@ class _Segment:
         if sums.unit_energies is not None:
             sums.unit_energies += (1.0, energy**2, energy * measure, energy**2 * measure)
         if task.kind == "fold":
-            self._gather(start, self._whole(unit, statistics))
+            assert self.gatherer is not None
+            self.gatherer.add(start, self._whole(unit, statistics))
         elif task.kind == "gram":
             self.watch.start("products")
             assert sums.gram is not None
@@ -216,7 +215,8 @@ class _Segment:
             if task.scratch is not None:
                 self.watch.start("scratch")
                 task.scratch.write(task.target, start, tall)
-                self._gather(start, tall)
+                assert self.gatherer is not None
+                self.gatherer.add(start, tall)
 
     def _statistics(self, unit: np.ndarray) -> LineStatistics | None:
         """Statistics of lines that are whole features."""
@@ -324,44 +324,6 @@ class _Segment:
         for (_, tile), (_, wide_tile) in zip(narrow, self._tiles(unit, statistics, task.wide), strict=True):
             self.sums.rounding[2] += _column_squares(single @ tile - exact.conj().T @ wide_tile)
 
-    def _gather(self, start: int, values: np.ndarray) -> None:
-        """Add lines to the block that is folded next, with earlier columns and the column of ones."""
-        if not self.folded:
-            return
-        task = self.task
-        done = 0
-        while done < len(values):
-            room = len(self.gathered) - self.filled
-            count = min(room, len(values) - done)
-            rows = self.gathered[self.filled : self.filled + count]
-            column = 0
-            if task.ones:
-                rows[:, 0] = 1.0
-                column = 1
-            if task.kind == "basis" and self.earlier.shape[1]:
-                assert task.scratch is not None
-                stored = task.scratch.read(start + done, start + done + count, task.target)
-                self.watch.start("fold")
-                np.matmul(stored, self.earlier, out=rows[:, column : column + self.earlier.shape[1]])
-                column += self.earlier.shape[1]
-            rows[:, column:] = values[done : done + count]
-            self.filled += count
-            done += count
-            if self.filled == len(self.gathered):
-                self._fold()
-
-    def _fold(self) -> None:
-        """Replace the gathered lines by their triangular factor."""
-        self.watch.start("fold")
-        rows = self.gathered[: self.filled]
-        if self.triangle is None or self.task.kind == "fold":
-            self.triangle = fold([rows])
-        else:
-            self.triangle = fold_upon(self.triangle, rows[self.folded :])
-        self.gathered[: self.folded] = self.triangle
-        self.filled = self.folded
-        self.watch.start("scratch")
-
     def _extremes(self, lines: np.ndarray) -> None:
         """Smallest and largest stored entries per column."""
         if lines.dtype.kind == "c":
@@ -400,14 +362,8 @@ class _Segment:
 
     def finish(self) -> Partial:
         """Fold what is left and hand over the sums."""
-        if self.folded:
-            if self.filled > (0 if self.triangle is None else self.folded):
-                self._fold()
-                self.watch.stop()
-            if self.filled:
-                self.sums.triangle = self.gathered[: self.folded].copy()
-            else:
-                self.sums.triangle = np.zeros((self.folded, self.folded), self.task.wide)
+        if self.gatherer is not None:
+            self.sums.triangle = self.gatherer.triangle()
         return self.sums
 
 

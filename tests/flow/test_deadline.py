@@ -103,8 +103,8 @@ def test_the_answer_in_single_outlives_a_sweep_in_double_that_was_cut(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch, limit: int | None
 ) -> None:
     # Made to begin in single, the run goes over to double for its second sweep, which begins a basis of its own.
-    run = importlib.import_module("bigsvd.drive.run")._Run
-    monkeypatch.setattr(run, "_single_is_enough", lambda self, pilot: True)
+    run = importlib.import_module("bigsvd.drive.run")
+    monkeypatch.setattr(run, "single_is_enough", lambda *pilot, strict: True)
     path = hilly(tmp_path, code="f4", offset=4000.0)
     stopped = stop_in(2, path, tmp_path / "stopped.zarr", monkeypatch, tolerance=1e-9, width_limit=limit)
     assert stopped.attributes["sweeps"] == 1

@@ -36,8 +36,8 @@ def test_stored_deviations_are_exact(drift: float, center: str) -> None:
 def test_a_run_that_goes_over_to_double_states_nothing_of_other_deviations(monkeypatch: pytest.MonkeyPatch) -> None:
     # The pilot is made to choose single, which cannot reach 1e-8; the sweeps in double that follow rest on deviations
     # learnt before, and prove intervals a thousand times narrower than the roundoff of single.
-    run = importlib.import_module("bigsvd.drive.run")._Run
-    monkeypatch.setattr(run, "_single_is_enough", lambda self, pilot: True)
+    run = importlib.import_module("bigsvd.drive.run")
+    monkeypatch.setattr(run, "single_is_enough", lambda *pilot, strict: True)
     matrix = counts(drift=4000.0)
     factors = bigsvd.decompose(
         matrix, rank=4, scale="unit", center="none", route="krylov", axis="rows", tolerance=1e-8, panel_lines=128,
