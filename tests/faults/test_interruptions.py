@@ -152,7 +152,7 @@ def test_47_a_journal_of_another_version_or_input_is_refused_with_the_difference
 ) -> None:
     stop(night, monkeypatch)
     with monkeypatch.context() as patch:
-        patch.setattr("bigsvd.journal.identity._version", lambda name: "9.9")
+        patch.setattr("bigsvd.machine.package_version", lambda name: "9.9")
         assert "version of numpy: " in night.refused(2)
     os.utime(night.file)
     assert "the input fingerprint: " in night.refused(2)
