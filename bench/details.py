@@ -149,9 +149,13 @@ def growth_lines(merged: Merged) -> list[str]:
                     f"{told['bytes_read'] / told['matrix_bytes']:.2f}",
                     show_bytes(max(run["peak_bytes"])),
                     f"{entry['cached_share']:.0%}",
+                    peer_words(entry),
                 ]
             )
-        headings = ("plain HDF5, f4", "× ceiling", "seconds", "s per GiB", "value error", "reads", "peak", "in cache")
+        headings = (
+            *("plain HDF5, f4", "× ceiling", "seconds", "s per GiB", "value error", "reads", "peak", "in cache"),
+            "dask svd_compressed of equal error",
+        )
         lines += [*table(headings, rows), ""]
     if merged.workers:
         rows = []
@@ -174,23 +178,39 @@ def growth_lines(merged: Merged) -> list[str]:
     return lines
 
 
+def peer_words(entry: dict[str, Any]) -> str:
+    """The peer of a size of the growth, with its ratio."""
+    peer = entry["peer"]
+    if peer is None:
+        return "did not end"
+    seconds = peer["median_seconds"]
+    return f"{seconds:.1f} s, {seconds / entry['run']['median_seconds']:.2f} ×"
+
+
 def prediction_lines(found: Sequence[View]) -> list[str]:
     """Time predicted from the probe beside the time taken, whole and by phase."""
     rows, phases = [], []
     for view in found:
-        predicted, measured, told = view.predicted_seconds, view.inside_seconds, view.told
-        off = "" if predicted is None else f"{predicted / measured - 1:+.0%}"
-        sweeps = f"{told['predicted_sweeps']} → {told['sweeps']}"
-        rows.append([view.label, "none" if predicted is None else f"{predicted:.1f}", f"{measured:.1f}", off, sweeps])
+        first, later, measured, told = (
+            view.predicted_seconds, view.pilot_predicted_seconds, view.inside_seconds, view.told,
+        )  # fmt: skip
+        guesses = [
+            words
+            for guess, sweeps in ((first, told["predicted_sweeps"]), (later, told.get("pilot_predicted_sweeps")))
+            for words in (
+                ("none", "") if guess is None else (f"{guess:.1f} for {sweeps}", f"{guess / measured - 1:+.0%}")
+            )
+        ]
+        rows.append([view.label, *guesses, f"{measured:.1f} for {told['sweeps']}"])
         phases += [
             [view.label if not number else "", phase, f"{guess:.2f}", f"{seconds:.2f}"]
             for number, (phase, guess, seconds) in enumerate(view.phases())
         ]
     return [
-        "Seconds of the decomposition, without the start of the interpreter: predicted from a probe before the run, for"
-        " the sweeps that were expected, and taken.",
+        "Seconds and sweeps of the decomposition, without the start of the interpreter: predicted from a probe before"
+        " anything is known of the spectrum, predicted once the pilot has shown it, and taken.",
         "",
-        *table(("case", "predicted, s", "taken, s", "off", "sweeps, expected → made"), rows),
+        *table(("case", "before the run", "off", "after the pilot", "off", "taken"), rows),
         "",
         "By phase, on the clock, predicted for the sweeps, columns and precision that the run came to:",
         "",

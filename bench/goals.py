@@ -91,11 +91,12 @@ def _reads(view: View) -> list[str]:
 
 
 def _prediction(view: View) -> list[str]:
-    predicted, measured = view.predicted_seconds, view.inside_seconds
+    later = view.pilot_predicted_seconds
+    predicted, measured = view.predicted_seconds if later is None else later, view.inside_seconds
     if predicted is None or abs(predicted - measured) <= PREDICTION * measured:
         return []
     words = f"{predicted:.1f} s were predicted and {measured:.1f} s taken, {predicted / measured - 1:+.0%}"
-    assumed, made = view.told["predicted_sweeps"], view.told["sweeps"]
+    assumed, made = view.told["predicted_sweeps" if later is None else "pilot_predicted_sweeps"], view.told["sweeps"]
     if assumed != made:
         words += f"; {assumed} sweeps were predicted and {made} made"
     known = [(abs(guess - seconds), phase, guess, seconds) for phase, guess, seconds in view.phases()]

@@ -11,7 +11,8 @@ from bench.cache import cached_share, drop, warm
 from bench.cases import KINDS, Case
 from bench.data import make_recipe, write_benchmark
 from bench.exact import exact_factors
-from bench.measure import Candidate, errors_of
+from bench.measure import Candidate, errors_of, target_error
+from bench.peers import MOST_ITERATIONS, dask_tuned
 from bench.side import CaseFailedError, Setup, add
 from bigsvd.units import show_bytes, show_seconds
 
@@ -36,6 +37,7 @@ def measure_growth(setup: Setup, unit_bytes: int, columns: int) -> list[dict[str
             truth = recipe.values[: setup.rank], recipe.right_vectors[:, : setup.rank]
             own = Candidate(f"{show_bytes(recipe.decoded_bytes)}", ["bigsvd", "--memory", str(setup.ceiling)])
             cached = _run_all(setup, path, [own], truth)
+            peer = _peer(setup, path, own, truth)
         finally:
             path.unlink(missing_ok=True)
             path.with_name(f"{path.name}.truth.npz").unlink(missing_ok=True)
@@ -46,9 +48,28 @@ def measure_growth(setup: Setup, unit_bytes: int, columns: int) -> list[dict[str
                 "over_ceiling": recipe.decoded_bytes / setup.ceiling,
                 "cached_share": cached,
                 "run": own.as_json(),
+                "peer": None if peer is None else peer.as_json(),
             }
         )
     return found
+
+
+def _peer(setup: Setup, path: Path, own: Candidate, truth: tuple[np.ndarray, np.ndarray]) -> Candidate | None:
+    """Tuned dask with the fewest iterations that come as near to the truth, run once; None where it does not end."""
+    for iterations in range(1, MOST_ITERATIONS):
+        peer = dask_tuned(iterations, double=False)
+        ended, result = setup.run(
+            path, peer.arguments, one_blas_thread=peer.one_blas_thread, centred=setup.centred
+        )  # fmt: skip
+        if ended.told is None:
+            print(f"  {peer.name}: failed, {ended.failure}", flush=True)
+            return None
+        with np.load(result) as factors:
+            add(peer, ended, errors_of(factors["singular_values"], factors["right_vectors"], *truth))
+        print(f"  {peer.name}: {ended.seconds:.1f} s, {show_bytes(ended.peak_bytes)}", flush=True)
+        if peer.value_error <= target_error(own.value_error):
+            return peer
+    return None
 
 
 def measure_workers(setup: Setup, case: Case, workers: list[int]) -> list[dict[str, Any]]:

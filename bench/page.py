@@ -41,7 +41,7 @@ def page_lines(merged: Merged, stem: str = "performance") -> list[str]:
     def shown(name: str) -> list[str]:
         return [f"![{drawn[name].title}]({stem}-{name}.svg)", ""] if name in drawn else []
 
-    lines = ["# Performance", "", _machine(merged), ""]
+    lines = ["# Performance", "", _circumstances(merged), "", _machine(merged), ""]
     if merged.compare:
         lines += [*_summary(merged), "", *shown("times")]
     lines += [
@@ -66,6 +66,22 @@ def page_lines(merged: Merged, stem: str = "performance") -> list[str]:
     if merged.compare:
         lines += ["## Predicted and measured", "", *prediction_lines(views(merged))]
     return lines
+
+
+def _circumstances(merged: Merged) -> str:
+    """What this page is about, and where the other one is."""
+    settings = merged.newest["settings"]
+    if settings["limit"] == "group":
+        ceiling = show_bytes(settings["memory_bytes"])
+        return (
+            f"Files larger than memory: the system holds every process to {ceiling}, pages of the files that it reads"
+            " included. With the same files in the page cache of a large machine: [performance-cached.md]"
+            "(performance-cached.md)."
+        )
+    return (
+        "Files that the page cache holds as a whole, on a machine that is larger than they are, with nothing held to a"
+        " limit. With files larger than memory, the case that bigsvd is for: [performance.md](performance.md)."
+    )
 
 
 def _machine(merged: Merged) -> str:
@@ -148,6 +164,8 @@ def _method(merged: Merged) -> list[str]:
     )
     cache = "out of the page cache before every run" if settings["cold"] else "in the page cache before every run"
     limit = {
+        "group": "The system held every process to the ceiling, pages of the files that it reads and writes included (a"
+        " memory control group): the files are larger than the memory there is for them. Who holds more is killed.",
         "none": "No limit of the system was set: each peak is held against the ceiling.",
         "data": "The system held every process to the ceiling (RLIMIT_DATA: all memory it may write to).",
         "as": "The system held every process to the ceiling (RLIMIT_AS: all its addresses).",
@@ -175,7 +193,7 @@ def _method(merged: Merged) -> list[str]:
         " given the mapped file where that is plain, else a copy that is decoded into a mapped float32 file within its"
         " time.",
         "",
-        "*Limits*: the inner functions of a sweep are caught in a run and made again alone, on the same data at the"
+        "*Limits*, with files in the page cache: the inner functions of a sweep are caught in a run and made again alone, on the same data at the"
         " same shapes and precision, in one thread and in as many as there are workers (`bench/limits.py`). The floor"
         " of a sweep is the larger of the raw read of the stored bytes and the sum of the parts, each as fast as it was"
         " in the fastest round; sweeps are medians.",

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import signal
 import subprocess
 import sys
 import threading
@@ -82,7 +83,9 @@ def run_process(
     if timed_out:
         failure = f"stopped after {timeout:.0f} s"
     elif told is None:
-        failure = (err.strip().splitlines() or [f"exit status {process.returncode}"])[-1]
+        killed = process.returncode == -signal.SIGKILL
+        words = "killed by the system, which held it to its limit of memory" if killed else ""
+        failure = words or (err.strip().splitlines() or [f"exit status {process.returncode}"])[-1]
     peak = max(looker.peak, int(told["peak_bytes"]) if told and "peak_bytes" in told else 0)
     spent = after.children_user - before.children_user + after.children_system - before.children_system
     return Ended(seconds, spent, peak, looker.own_peak, told, failure, timed_out)

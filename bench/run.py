@@ -8,9 +8,13 @@
     scripts/bench --gigabytes 0.02 …    a trial of small files, kept apart from real results
     scripts/bench --page-only           write the page anew from the results that are there
 
-Every part writes a JSON under bench/results/; the newest of each case are put together on docs/performance.md with its
-pictures. Files are made where they are missing, with their true factors, and stay in --data. They are in the page cache
-before every run, or with --cold out of it.
+Every process is held to the ceiling by a control group, pages of the files it reads included, and begins with its file
+out of the page cache: files larger than memory, on any machine. That wants root; with --limit none nothing is held, and
+files are in the page cache.
+
+Every part writes a JSON under bench/results/held or bench/results/cached; the newest of each case are put together on
+docs/performance.md or docs/performance-cached.md with their pictures. Files are made where they are missing, with their
+true factors, and stay in --data.
 """
 
 from __future__ import annotations
@@ -25,6 +29,7 @@ from pathlib import Path
 from typing import Any
 
 from bench.cases import KINDS, SHAPES, SPECTRA, Case, choose_cases
+from bench.group import can_group
 from bench.growth import COLUMNS, SIZES, compressed_cases, measure_growth, measure_workers
 from bench.page import write_page
 from bench.process import run_process
@@ -42,8 +47,10 @@ Job = tuple[str, Callable[[], list[dict[str, Any]]]]
 
 def main(arguments: list[str] | None = None) -> None:
     given = _arguments(arguments)
-    results = given.results or HERE / ("results/trial" if given.gigabytes else "results")
-    page = given.page or (results / "performance.md" if given.gigabytes else HERE.parent / "docs/performance.md")
+    name = "performance.md" if given.limit == "group" else "performance-cached.md"
+    results = HERE / "results" / ("held" if given.limit == "group" else "cached")
+    results = given.results or (HERE / "results/trial" if given.gigabytes else results)
+    page = given.page or (results if given.gigabytes else HERE.parent / "docs") / name
     failed = [] if given.page_only else _measure(given, results)
     merged = merge(results)
     if merged is not None:
@@ -134,7 +141,6 @@ def _limits(case: Case, setup: Setup, route: str) -> list[dict[str, Any]]:
     path = case.file(setup.folder)
     words = [str(path), "--rank", str(setup.rank), "--memory", str(setup.ceiling), "--runs", str(setup.runs)]
     words += ["--center", "features" if setup.centred else "none", "--route", route]
-    words += ["--cold"] if setup.cold else []
     ended = run_process(words, timeout=10 * setup.timeout, script="limits")
     if ended.told is None:
         raise CaseFailedError(f"limits of {case.name} failed: {ended.failure}")
@@ -169,12 +175,15 @@ def _arguments(arguments: list[str] | None) -> argparse.Namespace:
     how.add_argument("--memory", default="768MiB", help="ceiling: given to bigsvd, held against the others")
     how.add_argument(
         "--limit",
-        choices=("none", "data", "as"),
-        default="none",
-        help="have the system hold every process to the ceiling: its writable memory, or all its addresses",
+        choices=("group", "data", "as", "none"),
+        default="group",
+        help="what the system holds every process to: a control group with file pages (default), writable memory, all"
+        " addresses, nothing",
     )
     how.add_argument("--centred", action="store_true", help="subtract column means, all candidates")
-    how.add_argument("--cold", action="store_true", help="drop each file from the page cache before every run")
+    how.add_argument(
+        "--cold", action="store_true", help="drop files from the page cache before every run also outside of a group"
+    )
     how.add_argument("--slow", action="store_true", help="also svds, IncrementalPCA, dask svd, NumPy in memory")
     how.add_argument("--timeout", type=float, default=300, help="seconds after which a process is ended (default 300)")
     how.add_argument("--results", type=Path, help="folder of the JSONs (default: bench/results)")
@@ -184,6 +193,9 @@ def _arguments(arguments: list[str] | None) -> argparse.Namespace:
         parser.error("--runs and --rank are at least 1")
     if given.gigabytes is not None and given.gigabytes <= 0:
         parser.error("--gigabytes is above 0")
+    if given.limit == "group" and not (given.page_only or can_group()):
+        parser.error("control groups of memory cannot be made here, which wants root: use --limit none")
+    given.cold |= given.limit == "group"
     given.compare |= given.all or not (given.limits or given.growth)
     given.limits |= given.all
     given.growth |= given.all

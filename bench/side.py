@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import shutil
+from contextlib import nullcontext
 from dataclasses import dataclass, field
 from functools import partial
 from pathlib import Path
@@ -14,6 +15,7 @@ import numpy as np
 from bench.cache import cached_share, drop, warm
 from bench.cases import Case
 from bench.exact import exact_factors
+from bench.group import memory_group
 from bench.measure import (
     Candidate,
     Errors,
@@ -53,7 +55,7 @@ class Setup:
     ceiling : int
         Bytes: given to bigsvd, held against the others.
     limit : str
-        ``none``, or what the system holds every process to: ``data`` or ``as``.
+        ``none``, or what the system holds every process to: ``group``, ``data`` or ``as``.
     cold : bool
         Drop the file from the page cache before every process, instead of having it there.
     timeout : float
@@ -80,10 +82,11 @@ class Setup:
         result = work / "factors.npz"
         words = [arguments[0], str(path), str(result), *arguments[1:], "--rank", str(self.rank)]
         words += ["--centred"] if centred else []
-        words += ["--limit", f"{self.limit}:{self.ceiling}"] if self.limit != "none" else []
         # The candidate before may have needed the memory in which the file was.
         (drop if self.cold else warm)(path)
-        return run_process(words, timeout=self.timeout, one_blas_thread=one_blas_thread), result
+        with memory_group(self.ceiling) if self.limit == "group" else nullcontext() as group:
+            words += ["--limit", f"{self.limit}:{group or self.ceiling}"] if self.limit != "none" else []
+            return run_process(words, timeout=self.timeout, one_blas_thread=one_blas_thread), result
 
     def clear(self) -> None:
         """Remove what the last candidate left."""

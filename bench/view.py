@@ -110,8 +110,16 @@ class View:
 
     @property
     def predicted_seconds(self) -> float | None:
-        """Median over the runs; None where nothing was probed."""
-        found = [told["predicted_seconds"] for told in self.own["told"] if told.get("predicted_seconds") is not None]
+        """Before the run, median over the runs; None where nothing was probed."""
+        return self._median("predicted_seconds")
+
+    @property
+    def pilot_predicted_seconds(self) -> float | None:
+        """Once the pilot had shown the spectrum, median over the runs; None where it did not tell."""
+        return self._median("pilot_predicted_seconds")
+
+    def _median(self, name: str) -> float | None:
+        found = [told[name] for told in self.own["told"] if told.get(name) is not None]
         return statistics.median(found) if found else None
 
     def stages(self) -> dict[str, float]:

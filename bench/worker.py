@@ -18,6 +18,7 @@ from typing import Any
 import numpy as np
 
 from bench.exact import open_stored
+from bench.group import join
 from bench.peers import DIRECT_ASPECT
 
 # Bands of the general-purpose libraries. Of 16, 64 and 128 MB the smallest was the fastest (3.4, 8.7, 11.5 s on 1 GB of
@@ -28,7 +29,7 @@ MOST_BAND_BYTES = 64_000_000
 # What is told of a run of bigsvd, beside every time.
 TOLD = (
     *("sweeps", "predicted_sweeps", "bytes_read", "matrix_bytes", "precision", "width", "workers", "planned_bytes"),
-    *("timings", "phases"),
+    *("pilot_predicted_seconds", "pilot_predicted_sweeps", "timings", "phases"),
 )
 
 
@@ -40,7 +41,7 @@ def main(arguments: list[str] | None = None) -> None:
     parser.add_argument("--rank", type=int, default=20)
     parser.add_argument("--centred", action="store_true", help="subtract the mean of every column")
     parser.add_argument("--memory", default="768MiB", help="ceiling, for the candidate that takes one")
-    parser.add_argument("--limit", help="RLIMIT_DATA or RLIMIT_AS, and bytes, such as data:805306368")
+    parser.add_argument("--limit", help="data:BYTES, as:BYTES or group:FOLDER")
     parser.add_argument("--workers", type=int, help="threads of bigsvd")
     parser.add_argument("--iterator", choices=("QR", "power"), default="power", help="of svd_compressed")
     parser.add_argument(
@@ -62,10 +63,17 @@ def main(arguments: list[str] | None = None) -> None:
 
 
 def set_limit(words: str) -> None:
-    """Have the system refuse this process more memory: ``data`` is what it may write to, ``as`` every address."""
+    """Have the system refuse this process more memory.
+
+    ``data`` counts what it may write to (RLIMIT_DATA), ``as`` every address (RLIMIT_AS), ``group`` also the pages of
+    files that it reads and writes (a control group).
+    """
     import resource
 
     which, _, size = words.partition(":")
+    if which == "group":
+        join(Path(size))
+        return
     resource.setrlimit({"data": resource.RLIMIT_DATA, "as": resource.RLIMIT_AS}[which], (int(size), int(size)))
 
 

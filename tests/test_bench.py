@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 import sys
 import xml.etree.ElementTree as ET
 from collections.abc import Callable
@@ -17,7 +18,22 @@ ROOT = Path(__file__).parents[1]
 if str(ROOT) not in sys.path:
     sys.path.insert(0, str(ROOT))
 
-from bench import cache, capture, exact, goals, limits, measure, page, peers, phases, plot, process, records, worker  # noqa: E402
+from bench import (  # noqa: E402
+    cache,
+    capture,
+    exact,
+    goals,
+    group,
+    limits,
+    measure,
+    page,
+    peers,
+    phases,
+    plot,
+    process,
+    records,
+    worker,
+)
 from bench import run as benchmark  # noqa: E402
 from bench.cases import KINDS, SHAPES, Case, choose_cases  # noqa: E402
 from bench.view import View  # noqa: E402
@@ -235,6 +251,25 @@ def test_peaks_are_seen_from_outside_and_a_limit_of_the_system_holds(tmp_path: P
     assert "emory" in held.failure
 
 
+@pytest.mark.skipif(not group.can_group(), reason="control groups of memory cannot be made here")
+def test_a_group_holds_what_is_written_to_and_lets_pages_of_files_come_and_go(tmp_path: Path) -> None:
+    path = tmp_path / "large.h5"
+    with h5py.File(path, "w") as file:
+        file["matrix"] = np.random.default_rng(1).standard_normal((60_000, 800)).astype("f4")
+    words = [str(path), str(tmp_path / "out.npz"), "--rank", "3"]
+    with group.memory_group(160 * MIB) as folder:
+        whole = process.run_process(["numpy", *words, "--limit", f"group:{folder}"], timeout=60)
+        streamed = process.run_process(
+            ["dask", *words, "--iterator", "QR", "--iterations", "1", "--compute", "--limit", f"group:{folder}"],
+            timeout=60,
+            one_blas_thread=True,
+        )
+    assert whole.failure == "killed by the system, which held it to its limit of memory"
+    # The file itself, 192 MB, passed through the group.
+    assert streamed.told is not None, streamed.failure
+    assert not folder.exists()
+
+
 # -------------------------------------------------------------------------------------------------------------- limits
 def test_every_phase_names_something_that_is_there(monkeypatch: pytest.MonkeyPatch) -> None:
     wrapped: list[str] = []
@@ -380,6 +415,7 @@ def grown(seconds: list[float]) -> list[dict[str, Any]]:
             "decoded_bytes": size,
             "over_ceiling": size / 2**29,
             "cached_share": 1.0,
+            "peer": candidate("dask, QR", [3.0 * each], 1e-7).as_json() if size > 2**30 else None,
             "run": own_run(each),
         }
         for size, each in zip(sizes, seconds, strict=True)
@@ -488,6 +524,9 @@ def test_page_begins_with_one_table_and_shows_no_time_without_its_error(tmp_path
         words = {child.tag.rpartition("}")[2]: child.text for child in drawing[:2]}
         assert words["title"]
         assert words["desc"]
+    # No peer ended at the smaller size.
+    assert re.search(r"\| +did not end \|", text)
+    assert re.search(r"\| +96.0 s, 3.00 × \|", text)
     assert "error 1e-08" in (tmp_path / "performance-growth.svg").read_text()
 
 

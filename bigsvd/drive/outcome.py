@@ -45,6 +45,8 @@ class Outcome:
     remarks : tuple of str
     out_of_time : bool
         The deadline came first: this is what the last whole sweep certified.
+    expected_sweeps : int or None
+        Sweeps that the pilot let expect; None where it did not tell.
     """
 
     plan: Plan
@@ -60,3 +62,4 @@ class Outcome:
     precision: str
     remarks: tuple[str, ...]
     out_of_time: bool = False
+    expected_sweeps: int | None = None

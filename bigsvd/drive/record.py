@@ -97,6 +97,8 @@ def run_record(
         "seconds": seconds,
         "predicted_seconds": foreseen.seconds,
         "predicted_sweeps": plan.nominal_sweeps,
+        "pilot_predicted_seconds": _after_pilot(outcome, foreseen),
+        "pilot_predicted_sweeps": outcome.expected_sweeps,
         "phases": phase_record(outcome, foreseen, control, seconds),
         "peak_resident_bytes": counted,
         "memory_bytes": plan.ceiling,
@@ -108,6 +110,13 @@ def run_record(
         "timings": control.timings(),
         "versions": {name: machine.package_version(name) for name in _VERSIONS} | {"python": platform.python_version()},
     }
+
+
+def _after_pilot(outcome: Outcome, foreseen: Forecast) -> float | None:
+    """Seconds of the whole run that the pilot let expect; None where it did not tell, or nothing was probed."""
+    if outcome.expected_sweeps is None or foreseen.seconds is None:
+        return None
+    return foreseen.costs(outcome.expected_sweeps, single=outcome.precision == "single").seconds
 
 
 def phase_record(

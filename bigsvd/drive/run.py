@@ -12,6 +12,7 @@ from bigsvd.certify import (
     Certificate,
     Evidence,
     certify,
+    crowded,
     rounding_limited,
 )
 from bigsvd.drive.deadline import Deadline
@@ -25,10 +26,12 @@ from bigsvd.journal import Journal
 from bigsvd.plan import Plan, Widths, crowd_reach, krylov_widths
 from bigsvd.solve import (
     Aside,
+    Pilot,
     Ritz,
     State,
     carry_chains,
     correct_products,
+    expected_sweeps,
     gaussian_directions,
     grow_block,
     start_block,
@@ -99,6 +102,7 @@ class _Run:
     remarks: list[str] = field(default_factory=list)
     answer: Answer | None = None
     aside: Aside | None = None
+    expected_sweeps: int | None = None
 
     def __post_init__(self) -> None:
         plan = self.plan
@@ -157,6 +161,7 @@ class _Run:
         return Outcome(
             self.plan, self.state, answer.ritz, answer.evidence, certificate, self.sweeps.scratch, mean, inverse,
             constant, answer.sweeps, answer.precision, (*self.sweeps.remarks, *self.remarks), out_of_time,
+            self.expected_sweeps,
         )  # fmt: skip
 
     def _out_of_time(self) -> Outcome:
@@ -223,7 +228,20 @@ class _Run:
                 pilot, self.rank, units, request.tolerance, strict=request.strict
             ):  # fmt: skip
                 self.sweeps.work = self.sweeps.single
+        if self.plan.route == "krylov" and pilot.directions is not None:
+            self._expect(pilot)
         return pilot.directions
+
+    def _expect(self, pilot: Pilot) -> None:
+        """Say how many sweeps the sample lets expect."""
+        request, rank = self.plan.request, min(self.rank, len(pilot.theta))
+        # Neighbours in a bulk are bounded, not told apart.
+        apart = rank if request.strict else rank - int(np.sum(crowded(pilot.theta, rank, crowd_reach(rank))))
+        found = None if request.variance is not None else expected_sweeps(pilot, apart, request.tolerance)
+        if found is not None and found <= request.max_sweeps:
+            self.expected_sweeps = max(found, request.least_sweeps)
+            count = "1 sweep" if self.expected_sweeps == 1 else f"{self.expected_sweeps} sweeps"
+            self.sweeps.control.tell(f"after the pilot: {count} expected")
 
     def _sweep_basis(self) -> None:
         """Multiply the next block, and add it to the basis with everything that follows from it."""

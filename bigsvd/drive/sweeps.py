@@ -296,7 +296,7 @@ class Sweeps:
         runs = [edges[first : stop + 1] for wave in plan.waves for first, stop in wave]
         longest = max(run[-1] - run[0] for run in runs)
         units = max(sum(-(-(stop - start) // UNIT_LINES) for start, stop in pairwise(run)) for run in runs)
-        levels = int(np.ceil(np.log2(max(2, plan.leaves)))) + len(plan.waves)
+        levels = int(np.ceil(np.log2(max(2, *map(len, plan.waves))))) + len(plan.waves)
         return SumDepth(
             across=plan.geometry.across, unit_lines=UNIT_LINES, additions=units + levels, fold_rows=longest,
             fold_columns=columns, folds_within=-(-longest // fold_lines(columns)), folds=levels,

@@ -18,6 +18,11 @@ WANTED_PANELS = 160
 FEWEST_PANELS = 40
 # A panel is converted and multiplied in units: single-precision sums stay within 512 terms (docs/method.md).
 UNIT_LINES = 512
+# The last segments of a sweep shrink, so that no worker waits long for another's: each takes at most this share of the
+# panels left, and no less than this share of a whole segment.
+TAPER_SHARE, LEAST_TAPERED = 0.25, 0.2
+# That makes so many segments more, whose sums take memory: waves of fewer segments than this do not shrink.
+TAPERED_LEAVES, TAPERED_MORE = 8, 8
 
 
 @dataclass(frozen=True)
@@ -121,16 +126,40 @@ def group(panels: int, panel_seconds: float, panel_bytes: int, leaves: int) -> t
     panel_bytes : int
         Decoded bytes of one panel.
     leaves : int
-        Segments per wave, whose partial sums memory must hold.
+        Segments per wave; see `most_segments` for the last.
 
     Returns
     -------
     tuple of waves, each a tuple of (first panel, one past the last) segments
-        Every segment of a full wave has the same number of panels.
+        Every segment has the same number of panels, but in the last wave they shrink towards the end.
     """
     most = min(WAVE_SECONDS / max(panel_seconds, 1e-9), MOST_WAVE_BYTES / max(panel_bytes, 1))
     per_wave = max(leaves, min(panels, int(most)))
     waves = math.ceil(panels / per_wave)
     run = max(1, math.ceil(panels / (waves * leaves)))
-    segments = [(start, min(start + run, panels)) for start in range(0, panels, run)]
-    return tuple(tuple(segments[first : first + leaves]) for first in range(0, len(segments), leaves))
+    last = max(0, math.ceil(panels / run / leaves) - 1) * leaves * run
+    segments = _equal(0, last, run)
+    whole = tuple(segments[first : first + leaves] for first in range(0, len(segments), leaves))
+    end = _tapered(last, panels, run) if leaves >= TAPERED_LEAVES else _equal(last, panels, run)
+    return (*whole, end) if end else whole
+
+
+def most_segments(leaves: int) -> int:
+    """Segments that a wave of so many leaves may have, whose partial sums memory must hold."""
+    return leaves + (TAPERED_MORE if leaves >= TAPERED_LEAVES else 0)
+
+
+def _equal(first: int, stop: int, run: int) -> tuple[tuple[int, int], ...]:
+    """Segments of `run` panels; what is left is the last."""
+    return tuple((start, min(start + run, stop)) for start in range(first, stop, run))
+
+
+def _tapered(first: int, stop: int, run: int) -> tuple[tuple[int, int], ...]:
+    """Segments of at most `run` panels, which shrink towards the end."""
+    least = max(1, round(LEAST_TAPERED * run))
+    segments = []
+    while first < stop:
+        taken = min(run, max(least, int(TAPER_SHARE * (stop - first))), stop - first)
+        segments.append((first, first + taken))
+        first += taken
+    return tuple(segments)

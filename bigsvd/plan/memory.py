@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from bigsvd.plan.geometry import UNIT_LINES, Geometry
+from bigsvd.plan.geometry import UNIT_LINES, Geometry, most_segments
 from bigsvd.plan.rates import BASE_BYTES, BLAS_BYTES
 from bigsvd.plan.widths import Widths
 from bigsvd.source import MatrixSpec
@@ -94,7 +94,8 @@ def memory_terms(
     # Two waves of leaves exist, but a sum waits only for a neighbour that is still running: every worker holds one of
     # its own and leaves at most one waiting on each level of the tree; the root of the earlier wave waits to be folded.
     # Beside them the caller holds the total of all earlier waves.
-    live = min(2 * leaves, workers * leaves.bit_length() + 1) + 1
+    segments = most_segments(leaves)
+    live = min(2 * segments, workers * segments.bit_length() + 1) + 1
     held = [MemoryTerm(BASE_BYTES, "interpreter and libraries")]
     if spec.decode_bytes:
         # Kept from one read to the next, hence in every phase.

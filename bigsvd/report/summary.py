@@ -135,7 +135,8 @@ def cost_words(attributes: Mapping[str, Any]) -> list[tuple[str, str]]:
     predicted = attributes.get("predicted_seconds")
     assumed = attributes.get("predicted_sweeps")
     for_sweeps = "" if assumed in (None, sweeps) else f" for {assumed} sweeps"
-    guess = f" (predicted {show_seconds(predicted)}{for_sweeps})" if predicted is not None else ""
+    later = _later_words(attributes)
+    guess = f" (predicted {show_seconds(predicted)}{for_sweeps}{later})" if predicted is not None else ""
     plan = attributes["plan"]
     sweep_words = f"{sweeps} {'sweep' if sweeps == 1 else 'sweeps'}"
     if plan.get("resident") and sweeps > 1:
@@ -154,6 +155,14 @@ def cost_words(attributes: Mapping[str, Any]) -> list[tuple[str, str]]:
     pairs.append(("memory", "; ".join([f"{show_bytes(attributes['peak_resident_bytes'])} at its peak", *parts])))
     pairs += [("remarks", remark) for remark in attributes.get("remarks", ())]
     return pairs
+
+
+def _later_words(attributes: Mapping[str, Any]) -> str:
+    """What the pilot made of the prediction."""
+    seconds, sweeps = attributes.get("pilot_predicted_seconds"), attributes.get("pilot_predicted_sweeps")
+    if seconds is None or sweeps == attributes.get("predicted_sweeps"):
+        return ""
+    return f", after the pilot {show_seconds(seconds)} for {sweeps}"
 
 
 def _earlier_words(attributes: Mapping[str, Any]) -> str:
@@ -205,6 +214,8 @@ def decomposition_facts(certificate: Certificate, attributes: Mapping[str, Any],
         "seconds",
         "predicted_seconds",
         "predicted_sweeps",
+        "pilot_predicted_seconds",
+        "pilot_predicted_sweeps",
         "resumed",
         "earlier_seconds",
         "peak_resident_bytes",

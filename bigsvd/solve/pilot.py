@@ -18,6 +18,8 @@ PILOT_ITERATIONS = 4
 SETTLED_GROWTH = 0.01
 # Panels of the sample whose first unit is recomputed in double, to decide the precision.
 MEASURED_PANELS = 4
+# A sample whose values fall by less than this behind those wanted does not tell how fast they separate.
+LEAST_GAP = 0.01
 # Entries whose root mean square lies outside these would over- or underflow when squared in single.
 SINGLE_RANGE = (1e-12, 1e12)
 
@@ -130,6 +132,37 @@ def take_pilot(
     value, vector = np.linalg.eigh((small + small.conj().T) / 2)
     theta = np.sqrt(np.clip(value[::-1], 0.0, None) * raise_scale)
     return Pilot(preparation, basis @ vector[:, ::-1], theta, last.energy * raise_scale, last.rounding, fits)
+
+
+def expected_sweeps(pilot: Pilot, wanted: int, tolerance: float) -> int | None:
+    """Sweeps that block Krylov will need by the spectrum of the sample.
+
+    Parameters
+    ----------
+    pilot : Pilot
+    wanted : int
+        Leading components that are to be told apart.
+    tolerance : float
+        Relative, of their values.
+
+    Returns
+    -------
+    int or None
+        None where the sample shows no gap behind them.
+
+    Notes
+    -----
+    A guess for the clock, not a bound. After t sweeps from a block that ends at σ_b the share of what lies beyond has
+    shrunk by T_t(2σ_k²/σ_b² − 1), a Chebyshev polynomial, and the error of a value with its square (Saad, SIAM J.
+    Numer. Anal. 17 (1980)).
+    """
+    theta = pilot.theta
+    if not 0 < wanted < len(theta) or theta[wanted - 1] <= theta[-1] * (1 + LEAST_GAP):
+        return None
+    if theta[-1] <= theta[wanted - 1] * 1e-6:
+        return 1
+    growth = np.arccosh(2 * (theta[wanted - 1] / theta[-1]) ** 2 - 1)
+    return max(1, int(np.ceil(np.arccosh(tolerance**-0.5) / growth)))
 
 
 def _normal_product(

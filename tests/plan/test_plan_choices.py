@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import re
 from dataclasses import replace
+from itertools import pairwise
 
 import pytest
 from plan_samples import MIB, free_but, plan_of, spec
 
 from bigsvd.errors import MemoryCeilingError, OptionError
 from bigsvd.plan import Plan, Rate, krylov_widths
-from bigsvd.plan.geometry import LEAST_PANEL_BYTES, MOST_PANEL_BYTES, cut, group
+from bigsvd.plan.geometry import LEAST_PANEL_BYTES, MOST_PANEL_BYTES, cut, group, most_segments
 
 
 # ------------------------------------------------------------------------------------------------------------ routes
@@ -206,10 +207,25 @@ def test_segments_of_full_waves_are_equal() -> None:
     waves = group(1000, 0.1, 1000, 8)
     sizes = {stop - first for wave in waves[:-1] for first, stop in wave}
     assert len(sizes) == 1
-    assert all(len(wave) <= 8 for wave in waves)
+    assert all(len(wave) <= 8 for wave in waves[:-1])
     # Ten seconds a wave at most, eight segments or more where there are panels for them.
     assert len(waves) == 10
     assert group(3, 100.0, 1000, 8) == (((0, 1), (1, 2), (2, 3)),)
+
+
+@pytest.mark.parametrize("leaves", [1, 2, 4, 8])
+def test_the_last_segments_shrink_and_never_exceed_what_memory_is_planned_for(leaves: int) -> None:
+    for panels in range(1, 3000, 7):
+        waves = group(panels, 0.05, 10**6, leaves)
+        segments = [segment for wave in waves for segment in wave]
+        assert segments[0][0] == 0
+        assert segments[-1][1] == panels
+        assert all(before[1] == after[0] for before, after in pairwise(segments))
+        assert max(map(len, waves)) <= most_segments(leaves)
+        sizes = [stop - first for first, stop in segments]
+        if leaves == 8 and panels > 100:
+            # Whoever takes the last keeps the others waiting for a fraction of a whole segment.
+            assert sizes[-1] <= max(1, 0.25 * sizes[0])
 
 
 # ------------------------------------------------------------------------------------------------------------- pilot
