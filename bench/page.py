@@ -193,8 +193,9 @@ def _method(merged: Merged) -> list[str]:
         " given the mapped file where that is plain, else a copy that is decoded into a mapped float32 file within its"
         " time.",
         "",
-        "*Limits*, with files in the page cache: the inner functions of a sweep are caught in a run and made again alone, on the same data at the"
-        " same shapes and precision, in one thread and in as many as there are workers (`bench/limits.py`). The floor"
+        "*Limits*, with files in the page cache: the inner functions of a sweep are caught in a run and made again"
+        " alone, on the same data at the same shapes and precision, in one thread and in as many as there are workers"
+        " (`bench/limits.py`). The floor"
         " of a sweep is the larger of the raw read of the stored bytes and the sum of the parts, each as fast as it was"
         " in the fastest round; sweeps are medians.",
         "",
