@@ -16,6 +16,7 @@ from typing import Any
 import numpy as np
 
 from bigsvd import machine
+from bigsvd.adapt import Reading, open_adapted
 from bigsvd.drive import (
     Deadline,
     Forecast,
@@ -32,14 +33,14 @@ from bigsvd.factors import Factors, check_output, open_factors, store_cost
 from bigsvd.journal import check_interval, discard_finished
 from bigsvd.plan import Request, make_plan
 from bigsvd.report import Listeners, watch
-from bigsvd.source import Access, MatrixSpec, Source, check_complete, open_source
+from bigsvd.source import MatrixSpec, Source, check_complete
 from bigsvd.sweep import Control, Listener, one_blas_thread
 from bigsvd.units import parse_bytes, parse_deadline, show_bytes
 
 __all__ = ["decompose", "forecast", "open_factors", "open_matrix", "verify"]
 
 
-def open_matrix(path: Any, matrix: str | None = None, *, absent: str = "refuse", follow_links: bool = False) -> Source:
+def open_matrix(path: Any, matrix: str | None = None, **reading: Any) -> Source:
     """Open a matrix without reading it.
 
     Parameters
@@ -48,22 +49,24 @@ def open_matrix(path: Any, matrix: str | None = None, *, absent: str = "refuse",
         An HDF5 file, a Zarr store, a ``.npy`` file, or an array.
     matrix : str, optional
         Path of the array inside the file; needed where the file holds several.
-    absent : {"refuse", "fill"}
-        Whether chunks that were never written stop the run, or are read as the fill value that the file declares.
-    follow_links : bool
-        Follow links in the file to other files outside its own folder.
+    **reading
+        absent : {"refuse", "fill"}
+            Whether chunks that were never written stop the run, or are read as the fill value that the file declares.
+        follow_links : bool
+            Follow links in the file to other files outside its own folder.
 
     Returns
     -------
     Source
         Its ``spec`` says what is there; `decompose` takes it as it takes a path.
     """
-    access = Access(absent, follow_links)
+    _refuse_unknown({name: value for name, value in reading.items() if name not in Reading.names()}, frozenset())
     if not (hasattr(path, "spec") and hasattr(path, "read")):
-        return open_source(path, matrix, access)
-    if access != Access():
+        return open_adapted(path, matrix, Reading(**reading))
+    if reading:
         raise OptionError(
-            "absent and follow_links were given with a matrix that is open already",
+            f"{', '.join(sorted(reading))} {'was' if len(reading) == 1 else 'were'} given with a matrix that is open"
+            " already",
             remedy="Give them to open_matrix instead.",
         )
     return path
@@ -74,8 +77,6 @@ def decompose(
     out: str | Path | None = None,
     *,
     matrix: str | None = None,
-    absent: str = "refuse",
-    follow_links: bool = False,
     scratch: str | Path | None = None,
     overwrite: bool = False,
     start_over: bool = False,
@@ -99,8 +100,6 @@ def decompose(
         Folder to be made, a Zarr store; None keeps the factors in memory.
     matrix : str, optional
         Path of the array inside the file.
-    absent, follow_links
-        As for `open_matrix`; what is filled is recorded in the result.
     scratch : path, optional
         Folder for the tall products (samples × a few hundred columns); beside `out` by default.
     overwrite : bool
@@ -120,6 +119,8 @@ def decompose(
     command : sequence of str, optional
         The command line that asks for this, for the log and for whoever finds the run unfinished.
     **options
+        What `open_matrix` takes, and is recorded in the result; and:
+
         rank : int, default 50
             Components, clipped to min(m, n).
         variance : float
@@ -167,7 +168,8 @@ def decompose(
     True
     """
     started = time.perf_counter()
-    opened = open_matrix(source, matrix, absent=absent, follow_links=follow_links)
+    reading, options = _split(options)
+    opened = open_matrix(source, matrix, **reading)
     own = opened is not source
     target = None if out is None else Path(out)
     listeners = Listeners(progress)
@@ -221,8 +223,6 @@ def forecast(
     source: Any,
     *,
     matrix: str | None = None,
-    absent: str = "refuse",
-    follow_links: bool = False,
     progress: Listener | None = None,
     **options: Any,
 ) -> Forecast:
@@ -230,14 +230,15 @@ def forecast(
 
     Parameters
     ----------
-    source, matrix, absent, follow_links, progress, **options
+    source, matrix, progress, **options
         As for `decompose`.
 
     Returns
     -------
     Forecast
     """
-    opened = open_matrix(source, matrix, absent=absent, follow_links=follow_links)
+    reading, options = _split(options)
+    opened = open_matrix(source, matrix, **reading)
     try:
         with _environment():
             check_complete(opened)
@@ -252,12 +253,11 @@ def verify(
     source: Any = None,
     *,
     matrix: str | None = None,
-    absent: str = "refuse",
-    follow_links: bool = False,
     memory: int | str | None = None,
     workers: int | None = None,
     seed: int | None = None,
     progress: Listener | None = None,
+    **reading: Any,
 ) -> Verification:
     """Check a result against itself, and with `source` against the matrix in one independent sweep and fresh slices.
 
@@ -269,11 +269,13 @@ def verify(
         The matrix it was made from.
     matrix : str, optional
         Path of the array inside the file.
-    absent, follow_links, memory, workers
+    memory, workers
         As for `decompose`.
     seed : int, optional
         Of the fresh slices; another than the run's by default.
     progress : callable, optional
+    **reading
+        What `open_matrix` takes; the same as for the run.
 
     Returns
     -------
@@ -284,7 +286,7 @@ def verify(
     control = Control(progress)
     if source is None:
         return verify_factors(factors, None, None, control, Path(tempfile.gettempdir()), seed, started)
-    opened = open_matrix(source, matrix, absent=absent, follow_links=follow_links)
+    opened = open_matrix(source, matrix, **reading)
     try:
         with _environment():
             check_complete(opened)
@@ -331,12 +333,25 @@ def _environment() -> Iterator[int]:
         yield held
 
 
-def _request(options: dict[str, Any]) -> Request:
-    """The user's options as a request."""
-    known = {field.name for field in fields(Request)}
+def _split(options: dict[str, Any]) -> tuple[dict[str, Any], dict[str, Any]]:
+    """Options of reading, and those of the decomposition."""
+    return (
+        {name: value for name, value in options.items() if name in Reading.names()},
+        {name: value for name, value in options.items() if name not in Reading.names()},
+    )
+
+
+def _refuse_unknown(options: dict[str, Any], known: frozenset[str]) -> None:
+    """Refuse options that nobody knows."""
     for name in options:
         if name not in known:
-            raise OptionError(f"{name!r} is not an option", remedy=f"Choose from: {', '.join(sorted(known))}.")
+            choices = ", ".join(sorted(known | Reading.names()))
+            raise OptionError(f"{name!r} is not an option", remedy=f"Choose from: {choices}.")
+
+
+def _request(options: dict[str, Any]) -> Request:
+    """The user's options as a request."""
+    _refuse_unknown(options, frozenset(field.name for field in fields(Request)))
     memory = options.get("memory")
     return Request(**{**options, "memory": None if memory is None else parse_bytes(memory)})
 

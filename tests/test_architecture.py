@@ -12,7 +12,7 @@ import pytest
 
 PACKAGE = Path(__file__).parents[1] / "bigsvd"
 ROOMS = (
-    *("errors", "units", "randomness", "machine", "source", "prepare", "plan", "sweep", "solve", "certify"),
+    *("errors", "units", "randomness", "machine", "source", "adapt", "prepare", "plan", "sweep", "solve", "certify"),
     *("factors", "journal", "drive", "rank", "use", "report", "demo", "api", "cli"),
 )
 # The package's own door stands after all rooms, since it hands out what the api offers; nothing inside may use it.

@@ -1,0 +1,32 @@
+"""How the user wants a matrix to be read: everything that decides what its entries are."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, fields
+
+from bigsvd.source import Access
+
+
+@dataclass(frozen=True)
+class Reading:
+    """Options of reading, as the user gave them. A source made with them has them in its fingerprint.
+
+    Attributes
+    ----------
+    absent, follow_links
+        See `Access`.
+    """
+
+    absent: str = "refuse"
+    follow_links: bool = False
+
+    @property
+    def access(self) -> Access:
+        """What is allowed while a file is opened."""
+        return Access(self.absent, self.follow_links)
+
+    @classmethod
+    def names(cls) -> frozenset[str]:
+        """Names of the options."""
+        return frozenset(field.name for field in fields(cls))
+
