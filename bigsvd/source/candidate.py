@@ -106,6 +106,9 @@ def choose(candidates: Sequence[Candidate], where: str) -> Candidate:
             evidence=listing([*choice, *sparse]),
             remedy=f"Name one: --matrix {shell_word(example)} (in Python: matrix={json.dumps(example)})",
         )
+    if len(sparse) == 1:
+        # Whoever opens it says what it lacks, and what to do.
+        return sparse[0]
     if not candidates:
         raise NoMatrixError(
             f"{where} holds no arrays at all", remedy="Give a file that holds a two-dimensional array of numbers."

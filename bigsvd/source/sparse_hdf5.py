@@ -13,10 +13,10 @@ from bigsvd.source.entries import decoded_type, show_type
 from bigsvd.source.hdf5 import Hdf5Source
 from bigsvd.source.hdf5_dataset import missing_filters, show_encoding
 from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
-from bigsvd.source.hdf5_links import outside_files, require_path_inside
+from bigsvd.source.hdf5_links import other_files, outside_files, require_path_inside
 from bigsvd.source.home import Home
 from bigsvd.source.sparse_describe import describe_sparse, opened_layout
-from bigsvd.source.sparse_layout import ArrayFacts, SparseLayout
+from bigsvd.source.sparse_layout import MOST_NUMBERS, ArrayFacts, SparseLayout
 from bigsvd.source.sparse_source import SparseSource, new_spec
 
 
@@ -34,9 +34,16 @@ class Hdf5Group:
     def __init__(self, file: Any, path: str, home: Home) -> None:
         self.path = path or "/"
         self._file, self._home = file, home
-        self._group = file[self.path]
-        self.names = frozenset(self._group)
-        self.root_names = frozenset(file["/"])
+        # Held open: links are asked by the number of an open group.
+        self._group, self._root = file[self.path], file["/"]
+
+    def has(self, name: str) -> bool:
+        """Whether something of this name lies in the group; links are not followed."""
+        return bool(self._group.id.links.exists(name.encode()))
+
+    def root_has(self, name: str) -> bool:
+        """Whether something of this name lies at the root of the file."""
+        return bool(self._root.id.links.exists(name.encode()))
 
     def attribute(self, name: str) -> Any:
         """An attribute of the group, text as str; None where there is none that can be read."""
@@ -44,7 +51,7 @@ class Hdf5Group:
 
     def root_attribute(self, name: str) -> Any:
         """An attribute of the root of the file."""
-        return _attribute(self._file["/"], name)
+        return _attribute(self._root, name)
 
     def facts(self, name: str) -> ArrayFacts | None:
         """What is known of an array in the group; None where the name is no array."""
@@ -62,13 +69,15 @@ class Hdf5Group:
             _absent(dataset),
         )
 
-    def numbers(self, name: str) -> list[int]:
-        """A list of few whole numbers, read."""
+    def numbers(self, name: str) -> list[float]:
+        """A list of few numbers, read; empty where it is none."""
         dataset = self._dataset(name)
         # A shape of many axes is none; nothing long is read to find that out.
-        if dataset is None or dataset.shape is None or math.prod(dataset.shape) > 16:
+        if dataset is None or math.prod(dataset.shape) > MOST_NUMBERS or dataset.dtype.kind not in "iuf":
             return []
-        return [int(number) for number in np.ravel(dataset[()]).tolist()] if dataset.dtype.kind in "iuf" else []
+        self._home.require(self.at(name), other_files(dataset), "virtual sources or external storage")
+        found: list[float] = np.ravel(dataset[()]).tolist()
+        return found
 
     def outside(self, layout: SparseLayout | None) -> tuple[str, ...]:
         """Files outside the folder that hold parts of the matrix."""
@@ -83,7 +92,7 @@ class Hdf5Group:
     def _dataset(self, name: str) -> Any:
         import h5py
 
-        if name not in self.names:
+        if not name or not self.has(name):
             return None
         require_path_inside(self._file, self.at(name), self._home)
         try:

@@ -7,6 +7,7 @@ Of a bare group what is missing is asked for and never guessed.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from typing import Any, Protocol
@@ -21,6 +22,8 @@ SPARSE_TYPES = {"csr_matrix": "csr", "csc_matrix": "csc"}
 _PARTS = ("data", "indices", "indptr")
 # Members of a group whose layout is not known.
 SPARSE_MEMBERS = (*_PARTS, "shape", "ir", "jc", "row", "col")
+# A list that tells a shape has two numbers; longer ones are not read to find out that they tell none.
+MOST_NUMBERS = 16
 _AXES = ("row", "column")
 
 
@@ -57,8 +60,14 @@ class SparseGroup(Protocol):
     """A group of a file that may hold the parts of a sparse matrix."""
 
     path: str
-    names: frozenset[str]
-    root_names: frozenset[str]
+
+    def has(self, name: str) -> bool:
+        """Whether something of this name lies in the group; nothing is opened."""
+        ...
+
+    def root_has(self, name: str) -> bool:
+        """Whether something of this name lies at the root of the file."""
+        ...
 
     def attribute(self, name: str) -> Any:
         """An attribute of the group, text as str; None where there is none that can be read."""
@@ -72,8 +81,8 @@ class SparseGroup(Protocol):
         """What is known of an array in the group; None where the name is no array."""
         ...
 
-    def numbers(self, name: str) -> list[int]:
-        """A list of few whole numbers, read."""
+    def numbers(self, name: str) -> list[float]:
+        """A list of few numbers, read; empty where it is none."""
         ...
 
 
@@ -166,7 +175,7 @@ def _told(group: SparseGroup, asked: str | None) -> SparseLayout | None:
         )
     if not _lists(group, _PARTS):
         return None
-    if {"shape", "barcodes"} <= group.names and group.names & {"features", "genes", "gene_names"}:
+    if group.has("shape") and group.has("barcodes") and any(map(group.has, ("features", "genes", "gene_names"))):
         return _agreed("csc", asked, _feature_barcode(group))
     return _biom(group, asked) or _bare(group, asked)
 
@@ -181,7 +190,7 @@ def _agreed(said: str, asked: str | None, layout: SparseLayout) -> SparseLayout:
 
 def _lists(group: SparseGroup, names: Sequence[str]) -> bool:
     """Whether a group holds lists of these names; a matrix beside its row and column labels is none."""
-    if not set(names) <= group.names:
+    if not all(map(group.has, names)):
         return False
     found = [group.facts(name) for name in names]
     return all(facts is not None and len(facts.shape) == 1 for facts in found)
@@ -190,7 +199,7 @@ def _lists(group: SparseGroup, names: Sequence[str]) -> bool:
 def _sides(numbers: Any, where: str) -> tuple[int, int]:
     """Rows and columns, if they are two whole numbers."""
     sides = [] if numbers is None else np.asarray(numbers).ravel().tolist()
-    if len(sides) != 2 or any(not isinstance(side, int | float) or side != int(side) or side < 0 for side in sides):
+    if len(sides) != 2 or not all(map(_whole, sides)):
         found = "is missing" if numbers is None else f"is {sides}, and two whole numbers are needed: rows and columns"
         raise LayoutError(
             f"a sparse group whose shape is not known: {where} {found}",
@@ -200,11 +209,16 @@ def _sides(numbers: Any, where: str) -> tuple[int, int]:
     return int(sides[0]), int(sides[1])
 
 
+def _whole(side: Any) -> bool:
+    """Whether something is a whole number, as integers or as floats hold them."""
+    return isinstance(side, int | float) and math.isfinite(side) and side == int(side) and side >= 0
+
+
 def _annotated(group: SparseGroup) -> Hint:
     """Matrices of the AnnData layout; files from before 0.8 have no mark at their root, but its tables."""
     inside = group.path.strip("/")
     hint = annotated_hint(inside, group.root_attribute("encoding-type"))
-    if not hint[0] and {"obs", "var"} <= group.root_names and (
+    if not hint[0] and group.root_has("obs") and group.root_has("var") and (
         inside in ("X", "raw.X", "raw/X") or inside.startswith("layers/")
     ):  # fmt: skip
         return "rows", f"AnnData layout: the rows of {inside} are observations"
@@ -218,7 +232,7 @@ def _matlab(group: SparseGroup) -> SparseLayout:
         raise LayoutError("a sparse matrix of MATLAB without jc, its list of pointers", "Save it again.", damaged=True)
     logical = str(group.attribute("MATLAB_class")) == "logical"
     return SparseLayout(
-        _sides([np.asarray(group.attribute("MATLAB_sparse")).item(), pointers.shape[0] - 1], "MATLAB_sparse"),
+        _sides([*np.ravel(group.attribute("MATLAB_sparse")).tolist(), pointers.shape[0] - 1], "MATLAB_sparse"),
         1,
         indices="ir",
         pointers="jc",
@@ -266,7 +280,7 @@ def _bare(group: SparseGroup, asked: str | None) -> SparseLayout:
     shape = group.attribute("shape")
     if shape is None:
         shape = group.attribute("h5sparse_shape")
-    if shape is None and "shape" in group.names:
+    if shape is None and group.has("shape"):
         shape = group.numbers("shape")
     if shape is None:
         raise LayoutError(

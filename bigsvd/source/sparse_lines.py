@@ -6,10 +6,11 @@ from typing import Any
 
 import numpy as np
 
+from bigsvd import machine
 from bigsvd.errors import DamagedSourceError, UnsupportedMatrixError
 from bigsvd.source.sparse_layout import SparseLayout
 from bigsvd.source.sparse_runs import BATCH_ENTRIES, Runs
-from bigsvd.units import show_count
+from bigsvd.units import show_bytes, show_count
 
 _REMEDY = "Copy or download the file again, or write the group again from its origin."
 _LARGEST = 2**31 - 1
@@ -34,7 +35,16 @@ def read_pointers(runs: Runs, layout: SparseLayout, name: str) -> np.ndarray:
     ------
     DamagedSourceError
         If one does not hold; names the first line where it does not.
+    UnsupportedMatrixError
+        If they take more memory than is free.
     """
+    size, free = 8 * (layout.lines + 1), machine.available_bytes()
+    if size > free:
+        raise UnsupportedMatrixError(
+            f"{name} cannot be opened: {show_bytes(size)} are needed for its pointers, which are held in memory",
+            evidence=[f"{show_count(layout.lines)} {layout.line}s, 8 bytes each; {show_bytes(free)} are free"],
+            remedy="Give back memory of other programs, or write the matrix in parts of fewer lines.",
+        )
     pointers = np.empty(layout.lines + 1, np.int64)
     runs.read(0, layout.lines + 1, pointers)
     # Unsigned ones beyond 2⁶³ are negative here, and so fall.
@@ -61,6 +71,12 @@ def read_pointers(runs: Runs, layout: SparseLayout, name: str) -> np.ndarray:
             remedy=_REMEDY,
         )
     return pointers
+
+
+def longest_line(pointers: np.ndarray) -> int:
+    """Most entries of a line, found without a list of all lengths."""
+    parts = (pointers[start : start + BATCH_ENTRIES + 1] for start in range(0, len(pointers) - 1, BATCH_ENTRIES))
+    return max((int(np.diff(part).max()) for part in parts), default=0)
 
 
 def index_type(across: int, nonzeros: int) -> np.dtype:
@@ -143,7 +159,7 @@ def _summed_integers(lines: Any, name: str) -> Any:
     copies = dtype.itemsize == 8
     sums = csr_array((lines.data.astype(wide), lines.indices, lines.indptr), shape=lines.shape, copy=copies)
     sums.sum_duplicates()
-    beyond = (sums.data < limits.min) | (sums.data > limits.max)
+    beyond = (sums.data < float(limits.min)) | (sums.data >= float(int(limits.max) + 1))
     if beyond.any():
         raise UnsupportedMatrixError(
             f"{name} holds several entries of one place, whose sum does not fit into their type, {dtype}",

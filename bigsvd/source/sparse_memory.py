@@ -8,7 +8,7 @@ import numpy as np
 
 from bigsvd.errors import DamagedSourceError, UnsupportedMatrixError
 from bigsvd.source.candidate import why_unusable
-from bigsvd.source.entries import show_type, type_caution
+from bigsvd.source.entries import show_type
 from bigsvd.source.memory import MemorySource
 from bigsvd.source.sparse_describe import sparse_type, sparse_words
 from bigsvd.source.sparse_layout import SparseLayout
@@ -38,11 +38,12 @@ def sparse_in_memory(matrix: Any) -> SparseSource:
             evidence=[reason, f"shape {matrix.shape}, type {show_type(matrix.dtype)}"],
             remedy="Give a two-dimensional sparse matrix of numbers.",
         )
-    cautions, held = type_caution(matrix.dtype), 0
+    cautions: tuple[str, ...] = ()
+    held = 0
     if given not in ("csr", "csc"):
         matrix = _converted(matrix)
         held = sum(part.nbytes for part in (matrix.data, matrix.indices, matrix.indptr))
-        cautions += (f"converted from {given} to csr in memory, which holds {show_bytes(held)} beside the original",)
+        cautions = (f"converted from {given} to csr in memory, which holds {show_bytes(held)} beside the original",)
     try:
         matrix.check_format(full_check=False)
     except ValueError as error:

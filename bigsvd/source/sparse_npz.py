@@ -18,12 +18,12 @@ import numpy as np
 from bigsvd.errors import BigsvdError, DamagedSourceError, UnsupportedMatrixError
 from bigsvd.source.access import Access
 from bigsvd.source.candidate import Candidate
-from bigsvd.source.entries import decoded_type, show_type
+from bigsvd.source.entries import decoded_type, show_type, type_caution
 from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.positional import Descriptor, announce, read_rows, reading_bytes
 from bigsvd.source.rectangle import Span, require_rectangle, show_place
 from bigsvd.source.sparse_describe import describe_sparse, opened_layout
-from bigsvd.source.sparse_layout import SPARSE_TYPES, ArrayFacts
+from bigsvd.source.sparse_layout import MOST_NUMBERS, SPARSE_TYPES, ArrayFacts
 from bigsvd.source.sparse_source import SparseSource, new_spec
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
@@ -50,7 +50,7 @@ def read_members(path: str) -> dict[str, Member]:
             return {info.filename[:-4]: _member(file, path, info) for info in file.infolist()}
     except BigsvdError:
         raise
-    except (zipfile.BadZipFile, OSError, ValueError, EOFError, zlib.error, NotImplementedError, struct.error) as error:
+    except (zipfile.BadZipFile, OSError, ValueError, EOFError, zlib.error, RuntimeError, struct.error) as error:
         raise DamagedSourceError(
             f"{path} is an .npz file that cannot be read", evidence=[str(error)], remedy=_AGAIN
         ) from error
@@ -99,13 +99,18 @@ class NpzGroup:
     """
 
     path = ""
-    root_names: frozenset[str] = frozenset()
 
     def __init__(self, path: str) -> None:
         self._path = path
         self.members = read_members(path)
-        # Of this layout the format is told by an array.
-        self.names = frozenset(self.members)
+
+    def has(self, name: str) -> bool:
+        """Whether there is an array of this name."""
+        return name in self.members
+
+    def root_has(self, name: str) -> bool:
+        """There is nothing above the arrays."""
+        return False
 
     @property
     def format(self) -> str:
@@ -137,12 +142,13 @@ class NpzGroup:
             member.shape, member.dtype if numeric else None, show_type(member.dtype), encoding, member.stored_bytes, 0
         )
 
-    def numbers(self, name: str) -> list[int]:
-        """A list of few whole numbers, read."""
+    def numbers(self, name: str) -> list[float]:
+        """A list of few numbers, read; empty where it is none."""
         member = self.members.get(name)
-        if member is None or member.dtype.kind not in "iu" or np.prod(member.shape, dtype=object) > 16:
+        if member is None or member.dtype.kind not in "iuf" or np.prod(member.shape, dtype=object) > MOST_NUMBERS:
             return []
-        return [int(number) for number in _read(self._path, lambda: _inflated(self._path, member)).ravel()]
+        found: list[float] = _read(self._path, lambda: _inflated(self._path, member)).ravel().tolist()
+        return found
 
 
 def _read(path: str, action: Callable[[], np.ndarray]) -> np.ndarray:
@@ -182,6 +188,7 @@ class NpzRow:
             stored_bytes=member.stored_bytes,
             fingerprint=digest(self.stamp, *member),
             decode_bytes=reading_bytes(0),
+            cautions=type_caution(member.dtype),
             held_bytes=0 if member.offset is not None else member.shape[0] * dtype.itemsize,
         )
         self._forget()

@@ -13,7 +13,7 @@ from bigsvd.source.complete import check_complete
 from bigsvd.source.rectangle import Span, require_rectangle, require_sizes
 from bigsvd.source.sparse_describe import sparse_type
 from bigsvd.source.sparse_layout import SparseLayout
-from bigsvd.source.sparse_lines import IndexCheck, densify, index_type, read_pointers, summed
+from bigsvd.source.sparse_lines import IndexCheck, densify, index_type, longest_line, read_pointers, summed
 from bigsvd.source.sparse_runs import BATCH_ENTRIES, Runs
 from bigsvd.source.spec import Absent, MatrixSpec, Source
 from bigsvd.source.stamp import digest
@@ -46,7 +46,7 @@ class SparseSource:
         # What is missing of the pointers must be said before they are read.
         check_complete(self._pointer_source)
         pointers = self._pointers()
-        longest = int(np.diff(pointers).max(initial=0))
+        longest = longest_line(pointers)
         # A sum in place needs a wider copy of the values and one that goes back.
         batch = min(BATCH_ENTRIES, layout.nonzeros)
         held = max(longest, batch) * (2 * item + 16) + batch * _DENSE_BYTES
@@ -61,6 +61,7 @@ class SparseSource:
             else "",
             samples_hint=layout.hint[0],
             hint_reason=layout.hint[1],
+            cautions=(*spec.cautions, *known[0].cautions),
             codecs=known[0].codecs,
             decode_bytes=held + sum(runs.held_bytes for runs in self._runs.values()),
             held_bytes=spec.held_bytes + pointers.nbytes,

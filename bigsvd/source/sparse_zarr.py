@@ -7,15 +7,16 @@ from typing import Any
 
 import numpy as np
 
+from bigsvd.errors import OutsideError
 from bigsvd.source.access import Access
 from bigsvd.source.candidate import Candidate
 from bigsvd.source.entries import decoded_type
 from bigsvd.source.sparse_describe import describe_sparse, opened_layout
-from bigsvd.source.sparse_layout import SPARSE_MEMBERS, ArrayFacts
+from bigsvd.source.sparse_layout import MOST_NUMBERS, SPARSE_MEMBERS, ArrayFacts
 from bigsvd.source.sparse_source import SparseSource, new_spec
 from bigsvd.source.zarr_array import ZarrSource
 from bigsvd.source.zarr_metadata import read_metadata
-from bigsvd.source.zarr_store import KeyStore, open_keys
+from bigsvd.source.zarr_store import METADATA, KeyStore, open_keys
 from bigsvd.source.zarr_walk import count_absent, group_attributes, stored_bytes
 
 
@@ -34,9 +35,20 @@ class ZarrGroup:
         self._keys = keys
         self._attributes = group_attributes(keys, path)
         self._root = group_attributes(keys, "")
-        links: list[str] = []
-        self.names = frozenset(name for name, is_file in keys.children(path, links) if not is_file)
-        self.root_names = frozenset(name for name, is_file in keys.children("", links) if not is_file)
+
+    def has(self, name: str) -> bool:
+        """Whether a node of this name lies in the group, and not behind a link out of the store."""
+        return self._is_node(self.at(name))
+
+    def root_has(self, name: str) -> bool:
+        """Whether a node of this name lies at the root of the store."""
+        return self._is_node(name)
+
+    def _is_node(self, path: str) -> bool:
+        try:
+            return any(self._keys.size(f"{path}/{mark}") is not None for mark in METADATA)
+        except OutsideError:
+            return False
 
     def attribute(self, name: str) -> Any:
         """An attribute of the group; None where there is none."""
@@ -48,7 +60,7 @@ class ZarrGroup:
 
     def facts(self, name: str) -> ArrayFacts | None:
         """What is known of an array in the group; None where the name is no array."""
-        if name not in self.names:
+        if not name or not self.has(name):
             return None
         array = read_metadata(self._keys, self.at(name))
         if array is None:
@@ -65,16 +77,18 @@ class ZarrGroup:
             count_absent(self._keys, self.at(name), array.as_row()) if counted else None if stored is None else 0,
         )
 
-    def numbers(self, name: str) -> list[int]:
-        """A list of few whole numbers, read."""
+    def numbers(self, name: str) -> list[float]:
+        """A list of few numbers, read; empty where it is none."""
         facts = self.facts(name)
-        if facts is None or facts.dtype is None or len(facts.shape) != 1 or not 0 < math.prod(facts.shape) <= 16:
+        size = math.prod(facts.shape) if facts is not None and len(facts.shape) == 1 else 0
+        if facts is None or facts.dtype is None or facts.dtype.kind not in "iuf" or not 0 < size <= MOST_NUMBERS:
             return []
         source = ZarrSource(self._keys.path, self.at(name), one_row=True)
         out = np.empty(source.spec.shape, source.spec.dtype)
         source.read((0, 1), (0, out.shape[1]), out)
         source.close()
-        return [int(number) for number in out[0].tolist()]
+        found: list[float] = out[0].tolist()
+        return found
 
     def at(self, name: str) -> str:
         """Path of a member of the group."""
