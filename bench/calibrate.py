@@ -164,8 +164,8 @@ def zarr_store(path: Path, values: np.ndarray, compressors: Any, zarr_format: An
     return bigsvd.open_matrix(path)
 
 
-def reading(bench: Bench) -> dict[str, dict[str, Rate]]:
-    """Rates of fetching by storage class, and of decoding by codec beyond that."""
+def reading(bench: Bench) -> dict[str, Any]:
+    """Rates of fetching by storage class, of decoding by codec beyond that, and of entries of sparse matrices."""
     import hdf5plugin
     import numcodecs
     from zarr.codecs import Crc32cCodec, ZstdCodec
@@ -215,7 +215,26 @@ def reading(bench: Bench) -> dict[str, dict[str, Rate]]:
     size = small.spec.decoded_bytes
     left = [max(1e-9, spent[str(w)] - fetch["compressed"].seconds(size, w)) for w in (1, 2)]
     chunk = rate(size / (SMALL_CHUNK[0] * SMALL_CHUNK[1] * floats.itemsize), *left)
-    return {"fetch": {**fetch, "graph": NOMINAL.fetch["graph"]}, "decode": decode, "chunk": chunk}
+    few, many = (sparse_file(folder / f"{each}.h5", each) for each in (1, COLUMNS // 10))
+    bare, filled = read_twice(bench, few), read_twice(bench, many)
+    fetch["sparse"] = rate(few.spec.decoded_bytes, bare["1"], bare["2"])
+    entries = rate(float(ROWS * (COLUMNS // 10)), *(max(1e-9, filled[w] - bare[w]) for w in ("1", "2")))
+    fetch["graph"] = NOMINAL.fetch["graph"]
+    return {"fetch": fetch, "decode": decode, "chunk": chunk, "entries": entries}
+
+
+def sparse_file(path: Path, each: int) -> Source:
+    """Write a matrix compressed by rows, with so many entries in each, and open it."""
+    import h5py
+
+    random, stride = np.random.default_rng(1), COLUMNS // each
+    places = np.arange(each) * stride + random.integers(0, stride, (ROWS, each))
+    with h5py.File(path, "w") as file:
+        group = file.create_group("x")
+        group.attrs.update({"encoding-type": "csr_matrix", "shape": (ROWS, COLUMNS)})
+        group["data"] = random.poisson(1.5, places.size).astype("f4") + 1
+        group["indices"], group["indptr"] = places.astype("i4").ravel(), np.arange(ROWS + 1) * each
+    return bigsvd.open_matrix(path)
 
 
 def read_twice(bench: Bench, source: Source) -> Spent:

@@ -45,8 +45,8 @@ def open_matrix(path: Any, matrix: str | None = None, **reading: Any) -> Source:
 
     Parameters
     ----------
-    path : path, ndarray, h5py.Dataset, zarr.Array or dask array
-        An HDF5 file, a Zarr store, a ``.npy`` file, or an array.
+    path : path, ndarray, h5py.Dataset, zarr.Array, dask array or sparse matrix of SciPy
+        An HDF5 file, a Zarr store, a ``.npy`` file, a sparse matrix in an ``.npz`` file, or an array.
     matrix : str, optional
         Path of the array inside the file; needed where the file holds several.
     **reading
@@ -54,6 +54,8 @@ def open_matrix(path: Any, matrix: str | None = None, **reading: Any) -> Source:
             Whether chunks that were never written stop the run, or are read as the fill value that the file declares.
         follow_links : bool
             Follow links in the file to other files outside its own folder.
+        sparse_format : {"csr", "csc"}
+            Whether a sparse group that does not say it is compressed by rows or by columns.
 
     Returns
     -------

@@ -13,20 +13,20 @@ class Reading:
 
     Attributes
     ----------
-    absent, follow_links
+    absent, follow_links, sparse_format
         See `Access`.
     """
 
     absent: str = "refuse"
     follow_links: bool = False
+    sparse_format: str | None = None
 
     @property
     def access(self) -> Access:
         """What is allowed while a file is opened."""
-        return Access(self.absent, self.follow_links)
+        return Access(self.absent, self.follow_links, self.sparse_format)
 
     @classmethod
     def names(cls) -> frozenset[str]:
         """Names of the options."""
         return frozenset(field.name for field in fields(cls))
-

@@ -54,8 +54,15 @@ def links_option(command: Command) -> Command:
     return click.option("--follow-links", is_flag=True, default=None, help=text)(command)
 
 
+def sparse_option(command: Command) -> Command:
+    """Add ``--sparse-format``."""
+    text = "Whether a sparse group that does not say it is compressed by rows (csr) or by columns (csc)."
+    return click.option("--sparse-format", type=click.Choice(["csr", "csc"]), help=text)(command)
+
+
 def reading_options(command: Command) -> Command:
-    """Add ``--absent`` and ``--follow-links``."""
+    """Add ``--absent``, ``--follow-links`` and ``--sparse-format``."""
+    command = sparse_option(command)
     text = "What to do with chunks that were never written: stop, or read the fill value.  [default: refuse]"
     return click.option("--absent", type=click.Choice(["refuse", "fill"]), help=text)(links_option(command))
 

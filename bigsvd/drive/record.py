@@ -66,6 +66,7 @@ def run_record(
             "storage": spec.storage,
             "decoded_bytes": spec.decoded_bytes,
             "stored_bytes": spec.stored_bytes,
+            "nonzeros": spec.nonzeros,
             "fingerprint": spec.fingerprint,
             "absent": None if spec.absent is None else asdict(spec.absent),
         },

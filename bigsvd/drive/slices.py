@@ -57,6 +57,8 @@ class SliceSource:
         self._spec = replace(
             parent.spec, name=f"{parent.spec.name}[{rows[0]}:{rows[1]}, {columns[0]}:{columns[1]}]", shape=shape,
             chunks=(1, 1), stored_bytes=None, samples_hint=None, fingerprint="",
+            # What is left of a sparse matrix is read as a dense rectangle.
+            nonzeros=None, compressed_axis=None,
         )  # fmt: skip
 
     @property

@@ -185,6 +185,11 @@ class _Model:
             # Chunks at the edge are stored whole.
             size *= padding(spec)
             self.ledger.work("read", size / max(1, chunk_bytes(spec)), rates.chunk)
+        if spec.nonzeros is not None:
+            # Beside the buffer that is cleared, what is stored is read; what is decoded are values and 32-bit indices.
+            stored = share * spec.nonzeros * plan.geometry.amplification
+            self.ledger.work("read", stored, rates.entries)
+            size = stored * (spec.dtype.itemsize + 4)
         for codec in spec.codecs:
             self.ledger.work("read", size, rates.decode.get(codec, rates.decode["library"]))
 

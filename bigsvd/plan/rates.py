@@ -37,6 +37,8 @@ class Rates:
         Decoded bytes, by storage class, with nothing to be decoded.
     decode : mapping of str to Rate
         Decoded bytes, by codec, beyond that. ``library`` also stands for codecs that are not listed.
+    entries : Rate
+        Stored entries of a sparse matrix read, checked and put in their places.
     chunk : Rate
         Chunks found and taken apart.
     ledger : Rate
@@ -69,6 +71,7 @@ class Rates:
 
     fetch: Mapping[str, Rate]
     decode: Mapping[str, Rate]
+    entries: Rate
     chunk: Rate
     ledger: Rate
     convert: Mapping[str, Rate]
@@ -103,8 +106,10 @@ NOMINAL = Rates(
         "plain": Rate(9.9e09, 0.14),
         "compressed": Rate(6.8e09),
         "zarr": Rate(7e09),
+        "sparse": Rate(5e09),
         "graph": Rate(5e08, 1),
     },
+    entries=Rate(1e08),
     decode={
         "shuffle": Rate(7.3e09, 0.36),
         "fletcher32": Rate(4e09, 0.09),

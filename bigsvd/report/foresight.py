@@ -61,7 +61,7 @@ def plan_lines(forecast: Foresight, width: int) -> list[str]:
     stored = f", {show_bytes(spec.stored_bytes)} stored" if spec.stored_bytes is not None else ""
     head = [
         ("matrix", f"{spec.name}: {show_shape(spec.shape)} {spec.dtype}"),
-        ("", f"{show_bytes(spec.decoded_bytes)} decoded{stored}{f'; {spec.encoding}' if spec.encoding else ''}"),
+        ("", f"{_size_words(plan)}{stored}{f'; {spec.encoding}' if spec.encoding else ''}"),
         ("", plan.orientation_words()),
         *(("caution", caution) for caution in spec.cautions),
     ]
@@ -91,7 +91,7 @@ def announcement(forecast: Foresight, width: int) -> list[str]:
     )
     memory = f"{show_bytes(plan.planned_bytes)} planned, ceiling {show_bytes(plan.ceiling)}"
     spec = plan.spec
-    matrix = f"{spec.name}: {show_shape(spec.shape)} {spec.dtype}, {show_bytes(spec.decoded_bytes)} decoded"
+    matrix = f"{spec.name}: {show_shape(spec.shape)} {spec.dtype}, {_size_words(plan)}"
     pairs = [
         ("matrix", matrix),
         ("", plan.orientation_words()),
@@ -148,6 +148,11 @@ def plan_facts(forecast: Foresight) -> Json:
     }
     result: Json = plain(facts)
     return result
+
+
+def _size_words(plan: Plan) -> str:
+    """Size of a matrix, and of what: a sparse one is made dense panel by panel, never as a whole."""
+    return f"{show_bytes(plan.spec.decoded_bytes)} {'decoded' if plan.spec.nonzeros is None else 'if made dense'}"
 
 
 def _memory_lines(plan: Plan) -> list[str]:

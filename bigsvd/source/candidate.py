@@ -40,6 +40,10 @@ class Candidate:
         Chunks that were never written; None where they were not counted.
     outside : tuple of str
         Other files that hold its entries, or to which a link leads, outside the folder of the file.
+    nonzeros : int or None
+        Entries stored, of a sparse matrix.
+    sparse : bool
+        Whether it is a group that holds a sparse matrix; its sizes are those of the matrix made dense.
     """
 
     path: str
@@ -55,6 +59,8 @@ class Candidate:
     hint_reason: str = ""
     absent_chunks: int | None = None
     outside: tuple[str, ...] = ()
+    nonzeros: int | None = None
+    sparse: bool = False
 
     @property
     def line(self) -> str:
@@ -62,10 +68,6 @@ class Candidate:
         size = show_shape(self.shape) if self.shape else ""
         words = [part for part in (f"{size} {self.dtype}".strip(), self.reason) if part]
         return f"{self.path or '(the array)'}  " + ": ".join(words)
-
-
-SPARSE_TYPES = ("csr_matrix", "csc_matrix")
-SPARSE = "a sparse group; sparse groups are not read yet"
 
 
 def why_unusable(shape: tuple[int, ...] | None, numeric: bool, type_words: str) -> str:
@@ -85,7 +87,7 @@ def choose(candidates: Sequence[Candidate], where: str) -> Candidate:
     """Take the one matrix that a file holds; refuse to guess between several, and say what is there if none is."""
     usable = [candidate for candidate in candidates if candidate.usable]
     matrices = [candidate for candidate in usable if min(candidate.shape) > 1]
-    sparse = [candidate for candidate in candidates if candidate.reason == SPARSE]
+    sparse = [candidate for candidate in candidates if candidate.sparse and not candidate.usable]
     # Files of some programs keep scalars and vectors as 1 × n matrices: they are taken only if there is nothing else.
     choice = matrices or usable
     if len(choice) == 1 and not sparse:
@@ -97,13 +99,16 @@ def choose(candidates: Sequence[Candidate], where: str) -> Candidate:
         problem = (
             f"{where} holds {show_count(len(choice))} matrices and none was named"
             if len(choice) > 1
-            else f"{where} holds one dense matrix beside sparse groups, and none was named"
+            else f"{where} holds one matrix beside sparse groups that cannot be read, and none was named"
         )
         raise SeveralMatricesError(
             problem,
             evidence=listing([*choice, *sparse]),
             remedy=f"Name one: --matrix {shell_word(example)} (in Python: matrix={json.dumps(example)})",
         )
+    if len(sparse) == 1:
+        # Whoever opens it says what it lacks, and what to do.
+        return sparse[0]
     if not candidates:
         raise NoMatrixError(
             f"{where} holds no arrays at all", remedy="Give a file that holds a two-dimensional array of numbers."

@@ -21,6 +21,7 @@ from bigsvd.source.hdf5_file import library_errors_named, open_hdf5, register_pl
 from bigsvd.source.hdf5_filters import filters_of
 from bigsvd.source.hdf5_links import other_files, require_inside
 from bigsvd.source.home import Home
+from bigsvd.source.one_row import OneRow
 from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.positional import Descriptor, reading_bytes
 from bigsvd.source.rectangle import (
@@ -50,19 +51,22 @@ class Hdf5Source:
         Path of a two-dimensional dataset of numbers inside it.
     access : Access
         Whether chunks that were never written are filled, and links followed out of the folder.
+    one_row : bool
+        Whether the dataset has one axis and is read as a matrix of one row: a part of a sparse matrix.
     """
 
-    def __init__(self, path: str, dataset: str, access: Access = STRICT) -> None:
+    def __init__(self, path: str, dataset: str, access: Access = STRICT, *, one_row: bool = False) -> None:
         self.path = path
         self.dataset = dataset
         self.access = access
+        self.one_row = one_row
         self._forget()
         self.stamps: tuple[FileStamp, ...] = (FileStamp.of(path),)
         with library_errors_named(f"{path}:{dataset}"), open_hdf5(path) as file:
             require_inside(file, dataset, Home(path, follow=access.follow_links))
             others = [os.path.abspath(file[dataset].file.filename), *other_files(file[dataset])]
             self.stamps += tuple(FileStamp.of(name) for name in others if name != path and os.path.exists(name))
-            self.spec = _spec(file[dataset], path, dataset, self.stamps)
+            self.spec = _spec(self._shown(file[dataset]), path, dataset, self.stamps)
         self._opened()
 
     def _forget(self) -> None:
@@ -73,7 +77,7 @@ class Hdf5Source:
         self._process = 0
 
     def __getstate__(self) -> dict[str, Any]:
-        return {name: getattr(self, name) for name in ("path", "dataset", "access", "stamps", "spec")}
+        return {name: getattr(self, name) for name in ("path", "dataset", "access", "one_row", "stamps", "spec")}
 
     def __setstate__(self, state: dict[str, Any]) -> None:
         self.__dict__.update(state)
@@ -81,6 +85,10 @@ class Hdf5Source:
 
     def __repr__(self) -> str:
         return f"Hdf5Source({self.path!r}, {self.dataset!r})"
+
+    def _shown(self, dataset: Any) -> Any:
+        """The dataset as the matrix that is read."""
+        return OneRow(dataset) if self.one_row else dataset
 
     def _opened(self) -> tuple[Any, Fill]:
         """Return the open dataset and the way to read it.
@@ -94,7 +102,7 @@ class Hdf5Source:
                 self._process = os.getpid()
                 with library_errors_named(f"{self.path}:{self.dataset}"):
                     file = open_hdf5(self.path)
-                    dataset = open_dataset(file, self.dataset)
+                    dataset = self._shown(open_dataset(file, self.dataset))
                     # Behind an external link it lies in another file.
                     descriptor = Descriptor(dataset.file.filename)
                     library = library_reader(dataset)
@@ -254,7 +262,8 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -
     filters = filters_of(dataset)
     codecs = tuple(step.name for step in filters) if decodes_directly(dataset) else ("library",) * bool(filters)
     rows, columns = dataset.shape
-    chunks = dataset.chunks or (1, columns)
+    # Any range of a list that lies in one piece will do.
+    chunks = dataset.chunks or (1, 1 if isinstance(dataset, OneRow) else columns)
     return MatrixSpec(
         name=f"{path}:{inside}",
         shape=(rows, columns),

@@ -11,6 +11,7 @@ import math
 import os
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -69,17 +70,21 @@ def direct_reader(dataset: Any, descriptor: int, library: Fill, fill: np.generic
         width = dataset.shape[1]
         return DirectReader(
             lambda rows, columns, out: read_rows(descriptor, offset, width, stored, rows, columns, out),
-            # Parts of rows lie between others that are not wanted.
-            lambda rows, columns: (
-                announce_rows(descriptor, offset, width * stored.itemsize, rows)
-                if columns[1] - columns[0] == width
-                else None
-            ),
+            partial(_announce_rows, descriptor, offset, width, stored.itemsize),
         )
     if not decodes_directly(dataset) or math.prod(grid_shape(dataset.shape, dataset.chunks)) > MOST_CHUNKS:
         return None
     reader = _ChunkReader(dataset, stored, descriptor, library, fill)
     return DirectReader(reader.fill, reader.announce) if reader.agrees_with(dataset) else None
+
+
+def _announce_rows(descriptor: int, offset: int, width: int, item: int, rows: Span, columns: Span) -> None:
+    """Announce whole rows, or a part of one; parts of several lie between others that are not wanted."""
+    if columns[1] - columns[0] == width:
+        announce_rows(descriptor, offset, width * item, rows)
+    elif rows[1] - rows[0] == 1:
+        start = rows[0] * width + columns[0]
+        announce(descriptor, offset + start * item, (columns[1] - columns[0]) * item)
 
 
 def decodes_directly(dataset: Any) -> bool:

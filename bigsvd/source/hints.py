@@ -50,7 +50,7 @@ def hdf5_hint(dataset: Any, path: str) -> Hint:
         if "MATLAB_class" in dataset.attrs:
             return "columns", "written by MATLAB, which stores a matrix transposed: its rows are the columns here"
         return hint_from_names([_axis_name(dataset, axis) for axis in (0, 1)], "the dimension scale")
-    except (OSError, KeyError, ValueError, TypeError, RuntimeError):
+    except (OSError, LookupError, ValueError, TypeError, RuntimeError):
         # A marker that cannot be read is no marker; the matrix itself may be fine.
         return NO_HINT
 

@@ -60,8 +60,8 @@ class MatrixSpec:
         The smallest rectangle that can be read without reading anything twice: a chunk, or one inside a shard.
         (1, 1) where any rectangle will do; (1, columns) for a row-contiguous file.
     storage : str
-        Storage class, the key of the nominal rates: ``memory``, ``plain``, ``compressed``, ``zarr``, ``npy`` or
-        ``graph``.
+        Storage class, the key of the nominal rates: ``memory``, ``plain``, ``compressed``, ``zarr``, ``npy``,
+        ``sparse`` or ``graph``.
     encoding : str
         Chunking and filters in words, for people.
     codecs : tuple of str
@@ -80,6 +80,12 @@ class MatrixSpec:
         Most bytes that a thread holds beside its panel once it has read: buffers are kept for its next read.
     absent : Absent or None
         Chunks that `check_complete` found absent and the user accepts.
+    nonzeros : int or None
+        Entries stored, of a sparse matrix; None of a dense one.
+    compressed_axis : int or None
+        Of a sparse matrix, 0 where it is compressed by rows and 1 by columns.
+    held_bytes : int
+        What the source holds once from its opening on, however many threads read, such as pointers to lines.
     """
 
     name: str
@@ -96,10 +102,13 @@ class MatrixSpec:
     codecs: tuple[str, ...] = ()
     decode_bytes: int = 0
     absent: Absent | None = None
+    nonzeros: int | None = None
+    compressed_axis: int | None = None
+    held_bytes: int = 0
 
     @property
     def decoded_bytes(self) -> int:
-        """Bytes of the whole matrix in its stored type."""
+        """Bytes of the whole matrix in its stored type; of a sparse one made dense."""
         return self.shape[0] * self.shape[1] * self.dtype.itemsize
 
 

@@ -36,7 +36,7 @@ from bigsvd.source.zarr_walk import describe_zarr, group_attributes, stored_byte
 from bigsvd.units import shell_word, show_shape
 
 MEANT = "write the array again with write_empty_chunks=True."
-_STATE = ("path", "inside", "access", "spec", "stamps", "metadata", "_absent")
+_STATE = ("path", "inside", "access", "one_row", "spec", "stamps", "metadata", "_absent")
 
 
 class ZarrSource:
@@ -50,12 +50,15 @@ class ZarrSource:
         Path of a two-dimensional array of numbers inside it; empty where the store is that array.
     access : Access
         Whether chunks that were never written are filled, and links followed out of the store.
+    one_row : bool
+        Whether the array has one axis and is read as a matrix of one row: a part of a sparse matrix.
     """
 
-    def __init__(self, path: str, inside: str, access: Access = STRICT) -> None:
+    def __init__(self, path: str, inside: str, access: Access = STRICT, *, one_row: bool = False) -> None:
         self.path = path
         self.inside = inside
         self.access = access
+        self.one_row = one_row
         self._absent: AbsentChunks | None = None
         self._forget()
         self.keys: KeyStore = open_keys(path, follow=access.follow_links)
@@ -84,6 +87,8 @@ class ZarrSource:
         metadata = read_metadata(self.keys, self.inside)
         if metadata is None:
             raise NoMatrixError(f"{self.path} holds no array under {self.inside!r}", remedy="Check the path.")
+        if self.one_row:
+            metadata = metadata.as_row()
         said = describe_zarr(
             metadata, self.inside, group_attributes(self.keys, ""), stored_bytes(self.keys, self.inside)
         )

@@ -27,7 +27,11 @@ def absent_keys(keys: KeyStore, at: str, metadata: ZarrMetadata) -> np.ndarray:
     require_countable(grid, f"{keys.path}/{at}".rstrip("/"))
     absent = np.ones(grid, np.bool_)
     folder = "/".join(part for part in (at, metadata.prefix.rstrip("/") if "/" in metadata.prefix else "") if part)
-    if metadata.separator == "/":
+    if metadata.one_row:
+        start = "" if "/" in metadata.prefix else metadata.prefix
+        found = (pair for pair in keys.children(folder) if pair[0].startswith(start))
+        _note(absent[0], ((name.removeprefix(start), is_file) for name, is_file in found))
+    elif metadata.separator == "/":
         for row, is_file in keys.children(folder):
             if not is_file and row.isdecimal() and int(row) < absent.shape[0]:
                 _note(absent[int(row)], keys.children(f"{folder}/{row}" if folder else row))

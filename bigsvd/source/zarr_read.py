@@ -34,7 +34,9 @@ def python_reader(array: Any) -> Reader:
     pair = array.dtype.names
 
     def read(rows: Span, columns: Span, out: np.ndarray) -> None:
-        selection = (slice(*rows), slice(*columns))
+        selection: tuple[slice, ...] = (slice(*rows), slice(*columns))
+        if len(array.shape) == 1:
+            selection, out = selection[1:], out[0]
         if pair:
             values = array[selection]
             out.real, out.imag = values[pair[0]], values[pair[1]]

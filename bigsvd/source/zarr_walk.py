@@ -9,7 +9,7 @@ from itertools import islice
 from typing import Any
 
 from bigsvd.errors import OutsideError, SourceError
-from bigsvd.source.candidate import SPARSE, SPARSE_TYPES, Candidate, why_unusable
+from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type
 from bigsvd.source.hints import NO_HINT, Hint, annotated_hint, hint_from_names
 from bigsvd.source.rectangle import grid_shape
@@ -22,8 +22,16 @@ MOST_NODES = 20_000
 DEEPEST = 32
 
 
-def walk_zarr(keys: KeyStore, start: str = "", most_nodes: int = MOST_NODES) -> list[Candidate]:
-    """List all arrays below a node; what another program left beside them (``._zarr.json``) is not looked at."""
+def walk_zarr(
+    keys: KeyStore, start: str = "", most_nodes: int = MOST_NODES, sparse_format: str | None = None
+) -> list[Candidate]:
+    """List all arrays below a node; what another program left beside them (``._zarr.json``) is not looked at.
+
+    `sparse_format` is as in `Access`.
+    """
+    # It reads short lists by a source, which describes itself by this file.
+    from bigsvd.source.sparse_zarr import sparse_members
+
     found: list[Candidate] = []
     root = group_attributes(keys, "")
     waiting, seen = [start], 0
@@ -36,18 +44,17 @@ def walk_zarr(keys: KeyStore, start: str = "", most_nodes: int = MOST_NODES) -> 
         links: list[str] = []
         try:
             array = read_metadata(keys, path)
-            attributes = group_attributes(keys, path) if array is None else {}
             if array is not None:
                 stored = stored_bytes(keys, path)
                 said = describe_zarr(array, path, root, stored)
                 # Where files are too many to be added up, they are too many to be looked for.
                 counted = said.usable and stored is not None
-                found.append(replace(said, absent_chunks=_absent(keys, path, array) if counted else None))
-            elif attributes.get("encoding-type") in SPARSE_TYPES:
-                found.append(Candidate(path, reason=SPARSE))
+                found.append(replace(said, absent_chunks=count_absent(keys, path, array) if counted else None))
             elif path.count("/") < DEEPEST:
+                members = sparse_members(keys, path, sparse_format, found)
                 below = islice(keys.children(path, links), most_nodes)
                 names = sorted(name for name, is_file in below if not is_file and not name.startswith("."))
+                names = [name for name in names if name not in members]
                 waiting += [f"{path}/{name}" if path else name for name in names]
             else:
                 found.append(Candidate(path, reason=f"groups below {DEEPEST} others are not looked into"))
@@ -67,7 +74,7 @@ def _linked(keys: KeyStore, link: str) -> Candidate:
     return Candidate(os.path.relpath(link, keys.path), reason=reason, outside=(target,))
 
 
-def _absent(keys: KeyStore, path: str, array: ZarrMetadata) -> int | None:
+def count_absent(keys: KeyStore, path: str, array: ZarrMetadata) -> int | None:
     """How many chunks were never written; None where there are too many to be looked for."""
     if math.prod(grid_shape((array.shape[0], array.shape[1]), (array.chunks[0], array.chunks[1]))) > 10_000:
         return None
