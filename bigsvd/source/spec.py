@@ -2,12 +2,19 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Protocol
+from typing import TYPE_CHECKING, Protocol, runtime_checkable
 
 import numpy as np
 
 from bigsvd.units import show_count
+
+if TYPE_CHECKING:
+    from scipy.sparse import csr_array
+
+# Stored entries in lines first … stop along the compressed axis.
+LineNonzeros = Callable[[int, int], int]
 
 
 @dataclass(frozen=True)
@@ -60,8 +67,8 @@ class MatrixSpec:
         The smallest rectangle that can be read without reading anything twice: a chunk, or one inside a shard.
         (1, 1) where any rectangle will do; (1, columns) for a row-contiguous file.
     storage : str
-        Storage class, the key of the nominal rates: ``memory``, ``plain``, ``compressed``, ``zarr``, ``npy`` or
-        ``graph``.
+        Storage class, the key of the nominal rates: ``memory``, ``plain``, ``compressed``, ``zarr``, ``npy``,
+        ``sparse`` or ``graph``.
     encoding : str
         Chunking and filters in words, for people.
     codecs : tuple of str
@@ -80,6 +87,12 @@ class MatrixSpec:
         Most bytes that a thread holds beside its panel once it has read: buffers are kept for its next read.
     absent : Absent or None
         Chunks that `check_complete` found absent and the user accepts.
+    nonzeros : int or None
+        Entries stored, of a sparse matrix; None of a dense one.
+    compressed_axis : int or None
+        Of a sparse matrix, 0 where it is compressed by rows and 1 by columns.
+    held_bytes : int
+        What the source holds once from its opening on, however many threads read, such as pointers to lines.
     """
 
     name: str
@@ -96,10 +109,13 @@ class MatrixSpec:
     codecs: tuple[str, ...] = ()
     decode_bytes: int = 0
     absent: Absent | None = None
+    nonzeros: int | None = None
+    compressed_axis: int | None = None
+    held_bytes: int = 0
 
     @property
     def decoded_bytes(self) -> int:
-        """Bytes of the whole matrix in its stored type."""
+        """Bytes of the whole matrix in its stored type; of a sparse one made dense."""
         return self.shape[0] * self.shape[1] * self.dtype.itemsize
 
 
@@ -134,3 +150,34 @@ class Source(Protocol):
     def close(self) -> None:
         """Release the file. Reading again opens it again."""
         ...
+
+
+@runtime_checkable
+class LineSource(Source, Protocol):
+    """A source of a sparse matrix, which gives its lines without their zeros as well."""
+
+    def read_lines(self, first: int, stop: int) -> csr_array:
+        """Read lines first … stop along `MatrixSpec.compressed_axis`.
+
+        Returns
+        -------
+        scipy.sparse.csr_array, shape (stop − first, across), dtype ``spec.dtype``
+            Indices of a line ascend, none comes twice; the arrays are the caller's.
+
+        Raises
+        ------
+        DamagedSourceError
+            As `Source.read`.
+        """
+        ...
+
+    def lines_nonzeros(self, first: int, stop: int) -> int:
+        """How many entries of lines first … stop are stored; known without reading them."""
+        ...
+
+
+def line_counter(source: Source) -> LineNonzeros | None:
+    """What tells how full lines are, of a source that gives its lines without their zeros; None for others."""
+    if source.spec.storage == "sparse" and isinstance(source, LineSource):
+        return source.lines_nonzeros
+    return None
