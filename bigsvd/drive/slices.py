@@ -60,7 +60,9 @@ class SliceSource:
         shape = (rows[1] - rows[0], columns[1] - columns[0])
         self._spec = replace(
             parent.spec, name=f"{parent.spec.name}[{rows[0]}:{rows[1]}, {columns[0]}:{columns[1]}]", shape=shape,
-            chunks=(1, 1), stored_bytes=None, samples_hint=None, fingerprint="", nonzeros=None, held_bytes=0,
+            chunks=(1, 1), stored_bytes=None, samples_hint=None, fingerprint="",
+            # What is left of a sparse matrix is read as a dense rectangle.
+            nonzeros=None, compressed_axis=None,
         )  # fmt: skip
 
     @property
@@ -211,7 +213,11 @@ def check_slice(
     kept = np.empty(shape, part.spec.dtype)
     part.read((0, shape[0]), (0, shape[1]), kept)
     control.bytes_read += _decoded(source.spec, rectangle)
-    held = _Kept(replace(part.spec, nonzeros=int(np.count_nonzero(kept))) if plan.geometry.sparse else part.spec, kept)
+    # Whatever the whole matrix keeps open is there already.
+    spec = replace(part.spec, held_bytes=0)
+    if plan.geometry.sparse:
+        spec = replace(spec, nonzeros=int(np.count_nonzero(kept)), compressed_axis=source.spec.compressed_axis)
+    held = _Kept(spec, kept)
     # A slice of nothing but zeros has none to leave out.
     request = replace(request, products=plan.products if held.spec.nonzeros else "auto")
     small = make_plan(

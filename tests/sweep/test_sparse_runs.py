@@ -14,8 +14,8 @@ from typing import Any
 import numpy as np
 import pytest
 import table
+from line_samples import SparseInMemory, sparse_lines
 from scipy.sparse import csr_array
-from sparse_samples import SparseInMemory, sparse_lines
 
 import bigsvd
 from bigsvd.errors import MemoryCeilingError, NonFiniteError, OptionError

@@ -8,8 +8,8 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from line_samples import SparseInMemory, sparse_lines
 from scipy.sparse import csr_array
-from sparse_samples import SparseInMemory, sparse_lines
 from sweep_samples import Swept, assert_close, assert_same_gram, prepared, sweep, wide_type
 
 from bigsvd.plan import Geometry, sparse_bytes
