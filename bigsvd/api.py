@@ -33,7 +33,7 @@ from bigsvd.factors import Factors, check_output, open_factors, store_cost
 from bigsvd.journal import check_interval, discard_finished
 from bigsvd.plan import Request, make_plan
 from bigsvd.report import Listeners, watch
-from bigsvd.source import MatrixSpec, Source, check_complete
+from bigsvd.source import MatrixSpec, Source, check_complete, line_counter
 from bigsvd.sweep import Control, Listener, one_blas_thread
 from bigsvd.units import parse_bytes, parse_deadline, show_bytes
 
@@ -145,6 +145,8 @@ def decompose(
         route : {"auto", "direct", "gram", "tsqr", "krylov"}
         axis : {"auto", "rows", "columns"}
             Axis the panels run along.
+        products : {"auto", "sparse", "dense"}
+            Whether panels of a sparse matrix are multiplied without their zeros.
         seed : int, default 0
 
     Returns
@@ -297,6 +299,7 @@ def verify(
             plan = make_plan(
                 opened.spec, replace(request, route="krylov", precision="double",
                 axis=factors.attributes["plan"]["axis"]), ceiling=_ceiling(request), processors=machine.processors(),
+                line_nonzeros=line_counter(opened),
             )  # fmt: skip
             return verify_factors(factors, opened, plan, control, _scratch_folder(None, None), seed, started)
     finally:
@@ -368,7 +371,7 @@ def _foresee(source: Source, options: dict[str, Any], control: Control, *, probe
     request = _request(options)
     plan = make_plan(
         source.spec, request, ceiling=_ceiling(request), processors=machine.processors(),
-        result_bytes=lambda rank: _result_bytes(source.spec, rank),
+        result_bytes=lambda rank: _result_bytes(source.spec, rank), line_nonzeros=line_counter(source),
     )  # fmt: skip
     free = machine.available_bytes()
     if free < plan.planned_bytes:

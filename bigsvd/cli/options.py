@@ -110,5 +110,6 @@ _DECOMPOSITION: tuple[Callable[[Any], Any], ...] = (
     _choice("--precision", "auto single double", "Of the products; auto: single where it is safe.  [default: auto]"),
     _choice("--route", "auto direct gram tsqr krylov", "Method.  [default: auto]"),
     _choice("--axis", "auto rows columns", "Axis along which the file is cut into panels.  [default: auto]"),
+    _choice("--products", "auto sparse dense", "Leave the zeros of a sparse matrix out of products?  [default: auto]"),
     _number("--seed", int, "N", "Of every random number.  [default: 0]"),
 )

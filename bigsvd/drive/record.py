@@ -80,6 +80,7 @@ def run_record(
         "plan": {
             "route": plan.route,
             "axis": ("rows", "columns")[geometry.axis],
+            "products": plan.products,
             "panels": geometry.panels,
             "panel_bytes": geometry.panel_bytes,
             "width": outcome.state.width,

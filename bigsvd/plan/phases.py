@@ -5,10 +5,10 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
-from bigsvd.plan.geometry import UNIT_LINES
 from bigsvd.plan.memory import SLICE_ENTRIES, tile_columns
 from bigsvd.plan.plan import Plan
 from bigsvd.plan.rates import COMPLEX_FACTOR, NOMINAL, Rate, Rates
+from bigsvd.plan.sparse import nonzero_costs, stored_share
 from bigsvd.source import MatrixSpec
 
 # Phases that the workers share, and those of the caller, in the order in which they are told.
@@ -180,7 +180,8 @@ class _Model:
         plan, rates = self.plan, self.rates
         spec = plan.spec
         size = share * spec.decoded_bytes * plan.geometry.amplification
-        self.ledger.work("read", size, rates.fetch[spec.storage])
+        if plan.products == "dense":
+            self.ledger.work("read", size, rates.fetch[spec.storage])
         if spec.storage in ("plain", "compressed", "zarr") and spec.chunks[0] > 1:
             # Chunks at the edge are stored whole.
             size *= padding(spec)
@@ -196,6 +197,10 @@ class _Model:
     def convert(self, share: float, work: str, *, energies: bool, sums: bool, twice: bool = True) -> None:
         """Words summed, entries converted, and in a first sweep squared and summed."""
         plan, rates, add = self.plan, self.rates, self.ledger.work
+        if plan.products == "sparse":
+            for amount, rate in nonzero_costs(plan, share, energies=energies, sums=sums, rates=rates):
+                add("convert", amount, rate)
+            return
         entries = share * self.entries * (2 if plan.spec.dtype.kind == "c" else 1)
         add("convert", share * plan.spec.decoded_bytes, rates.ledger)
         across_features = plan.geometry.lines_are_samples
@@ -214,10 +219,14 @@ class _Model:
 
     def products(self, share: float, block: float) -> None:
         """Y = AB and Z = AᴴY, which is added up once per unit."""
-        self.ledger.work("products", self.complex * 4 * share * self.entries * block, self.rates.products[self.work])
-        self.ledger.work("products", self.complex * share * self.entries, self.rates.per_entry[self.work])
-        geometry = self.plan.geometry
-        units = geometry.panels * -(-(geometry.lines // geometry.panels) // UNIT_LINES)
+        geometry, add = self.plan.geometry, self.ledger.work
+        if geometry.sparse:
+            nonzeros = share * self.entries * stored_share(self.plan.spec)
+            add("products", self.complex * 4 * nonzeros * block, self.rates.spmm[self.work])
+        else:
+            add("products", self.complex * 4 * share * self.entries * block, self.rates.products[self.work])
+            add("products", self.complex * share * self.entries, self.rates.per_entry[self.work])
+        units = geometry.panels * -(-(geometry.lines // geometry.panels) // geometry.unit_lines)
         self.ledger.work("products", self.complex * share * units * geometry.across * block, self.rates.accumulate)
 
     def _measure(self, panels: float, block: float) -> None:
@@ -226,7 +235,13 @@ class _Model:
             return
         geometry = self.plan.geometry
         # Counted as whole units, lest plans of low panels be preferred for measuring less.
-        entries = panels * min(UNIT_LINES, geometry.lines) * geometry.across
+        entries = panels * min(geometry.unit_lines, geometry.lines) * geometry.across
+        if geometry.sparse:
+            # Values turned once more, both products in double.
+            nonzeros = entries * stored_share(self.plan.spec)
+            self.ledger.work("products", nonzeros, self.rates.turn)
+            self.ledger.work("products", self.complex * 4 * nonzeros * block, self.rates.spmm["double"])
+            return
         # Two wide copies, in memory that is new each time, take as long as six conversions.
         self.ledger.work("products", 6 * entries, self.rates.convert["double"])
         for work, flops in (("double", 4), ("single", 2)):

@@ -99,6 +99,11 @@ class Plan:
         return self.geometry.lines * columns * entry
 
     @property
+    def products(self) -> str:
+        """``sparse`` where panels are multiplied without their zeros, otherwise ``dense``."""
+        return "sparse" if self.geometry.sparse else "dense"
+
+    @property
     def mean_only(self) -> bool:
         """Whether the pilot gives a first mean only, and its panel is held for the first sweep."""
         return mean_is_enough(self.route, self.geometry)

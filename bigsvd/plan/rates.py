@@ -53,6 +53,10 @@ class Rates:
         Entries that products pass once, however few columns there are.
     accumulate : Rate
         Entries of AᴴY added to their sums in double.
+    spmm : mapping of str to Rate
+        Floating-point operations of products without zeros, by working precision.
+    turn, nonzero_sums : Rate
+        Nonzeros converted and turned for AᴴY; squared and summed.
     gram, fold, qr : Rate
         Floating-point operations of AᴴA, of folds by products, of Householder QR.
     eigen, svd : Rate
@@ -82,6 +86,9 @@ class Rates:
     products: Mapping[str, Rate]
     per_entry: Mapping[str, Rate]
     accumulate: Rate
+    spmm: Mapping[str, Rate]
+    turn: Rate
+    nonzero_sums: Rate
     gram: Rate
     fold: Rate
     qr: Rate
@@ -150,6 +157,12 @@ NOMINAL = Rates(
         "double": Rate(1.4e09, 0.01),
     },
     accumulate=Rate(1.1e09),
+    spmm={
+        "single": Rate(8.5e09, 0.01),
+        "double": Rate(3.8e09, 0.04),
+    },
+    turn=Rate(8.5e07, 0.39),
+    nonzero_sums=Rate(1.2e08, 0.16),
     gram=Rate(8.7e10),
     fold=Rate(2.8e10),
     qr=Rate(3.1e10),

@@ -23,6 +23,7 @@ _CHOICES = {
     "precision": ("auto", "single", "double"),
     "route": ROUTES,
     "axis": ("auto", "rows", "columns"),
+    "products": ("auto", "sparse", "dense"),
 }
 
 
@@ -54,6 +55,8 @@ class Request:
         Threads; None stands for one per processor.
     precision, route, axis : str
         ``auto`` or a choice forced by the user.
+    products : str
+        ``auto``, or forced: ``sparse`` multiplies panels of a sparse matrix without their zeros, ``dense`` with them.
     panel_lines : int or None
         Lines per panel, forced (tests, slices); None lets the planner decide.
     least_sweeps : int
@@ -78,6 +81,7 @@ class Request:
     precision: str = "auto"
     route: str = "auto"
     axis: str = "auto"
+    products: str = "auto"
     panel_lines: int | None = None
     width_limit: int | None = None
     least_sweeps: int = 1

@@ -4,6 +4,17 @@ from bigsvd.source.access import Access
 from bigsvd.source.candidate import Candidate
 from bigsvd.source.complete import check_complete
 from bigsvd.source.open import open_source, survey
-from bigsvd.source.spec import MatrixSpec, Source
+from bigsvd.source.spec import LineNonzeros, LineSource, MatrixSpec, Source, line_counter
 
-__all__ = ["Access", "Candidate", "MatrixSpec", "Source", "check_complete", "open_source", "survey"]
+__all__ = [
+    "Access",
+    "Candidate",
+    "LineNonzeros",
+    "LineSource",
+    "MatrixSpec",
+    "Source",
+    "check_complete",
+    "line_counter",
+    "open_source",
+    "survey",
+]

@@ -2,12 +2,19 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Protocol
+from typing import TYPE_CHECKING, Protocol, runtime_checkable
 
 import numpy as np
 
 from bigsvd.units import show_count
+
+if TYPE_CHECKING:
+    from scipy.sparse import csr_array
+
+# Stored entries in lines first … stop along the compressed axis.
+LineNonzeros = Callable[[int, int], int]
 
 
 @dataclass(frozen=True)
@@ -143,3 +150,34 @@ class Source(Protocol):
     def close(self) -> None:
         """Release the file. Reading again opens it again."""
         ...
+
+
+@runtime_checkable
+class LineSource(Source, Protocol):
+    """A source of a sparse matrix, which gives its lines without their zeros as well."""
+
+    def read_lines(self, first: int, stop: int) -> csr_array:
+        """Read lines first … stop along `MatrixSpec.compressed_axis`.
+
+        Returns
+        -------
+        scipy.sparse.csr_array, shape (stop − first, across), dtype ``spec.dtype``
+            Indices of a line ascend, none comes twice; the arrays are the caller's.
+
+        Raises
+        ------
+        DamagedSourceError
+            As `Source.read`.
+        """
+        ...
+
+    def lines_nonzeros(self, first: int, stop: int) -> int:
+        """How many entries of lines first … stop are stored; known without reading them."""
+        ...
+
+
+def line_counter(source: Source) -> LineNonzeros | None:
+    """What tells how full lines are, of a source that gives its lines without their zeros; None for others."""
+    if source.spec.storage == "sparse" and isinstance(source, LineSource):
+        return source.lines_nonzeros
+    return None

@@ -19,6 +19,8 @@ class Partial:
         Lines summed over.
     energy : float
         ‖A_p‖²_F of the shifted panels.
+    cancelled : float
+        ‖1μᵀD‖²_F of what implicit centring subtracts from products of sparse panels; they round as if it were there.
     line_sum : ndarray, shape (across,), or None
         Sum of the lines: what is left of the mean.
     square_sum : ndarray, shape (across,), or None
@@ -38,7 +40,8 @@ class Partial:
     rounding : ndarray, shape (3, width), or None
         Units recomputed in double, Σ‖ΔY_u‖² and Σ‖ΔZ_u‖² per column.
     unit_energies : ndarray, shape (4,), or None
-        Beside `rounding`: all units, Σ‖A_u‖⁴ over them, Σ‖A_u‖² and Σ‖A_u‖⁴ over the units recomputed.
+        Beside `rounding`: all units, Σe² over them, Σe and Σe² over the units recomputed, with e of a unit its energy
+        and four times what cancels in it.
     bad : int
         NaN and infinities met.
     first_bad : (int, int) or None
@@ -51,6 +54,7 @@ class Partial:
 
     lines: int = 0
     energy: float = 0.0
+    cancelled: float = 0.0
     line_sum: np.ndarray | None = None
     square_sum: np.ndarray | None = None
     lowest: np.ndarray | None = None
@@ -79,7 +83,8 @@ class Partial:
             return
         units, squares, sampled, sampled_squares = self.unit_energies
         count = float(self.rounding[0].max(initial=0.0))
-        for row, every, recomputed in ((1, self.energy, sampled), (2, squares, sampled_squares)):
+        whole = self.energy + 4 * self.cancelled
+        for row, every, recomputed in ((1, whole, sampled), (2, squares, sampled_squares)):
             typical = every / units * count if count else 0.0
             if recomputed > 0:
                 self.rounding[row] *= max(1.0, typical / recomputed)
@@ -95,6 +100,7 @@ def combine(first: Partial, second: Partial) -> Partial:
     """
     first.lines += second.lines
     first.energy += second.energy
+    first.cancelled += second.cancelled
     first.bad += second.bad
     first.overflow |= second.overflow
     first.beyond |= second.beyond
