@@ -54,6 +54,8 @@ def open_matrix(path: Any, matrix: str | None = None, **reading: Any) -> Source:
             Whether chunks that were never written stop the run, or are read as the fill value that the file declares.
         follow_links : bool
             Follow links in the file to other files outside its own folder.
+        raw : bool
+            Take packed entries as they are stored, whatever attributes say of scale, offset and missing values.
 
     Returns
     -------

@@ -15,10 +15,13 @@ class Reading:
     ----------
     absent, follow_links
         See `Access`.
+    raw : bool
+        Take packed entries as they are stored.
     """
 
     absent: str = "refuse"
     follow_links: bool = False
+    raw: bool = False
 
     @property
     def access(self) -> Access:
@@ -29,4 +32,3 @@ class Reading:
     def names(cls) -> frozenset[str]:
         """Names of the options."""
         return frozenset(field.name for field in fields(cls))
-

@@ -55,7 +55,9 @@ def links_option(command: Command) -> Command:
 
 
 def reading_options(command: Command) -> Command:
-    """Add ``--absent`` and ``--follow-links``."""
+    """Add ``--absent``, ``--follow-links`` and ``--raw``."""
+    raw = "Take packed entries as stored: apply no scale_factor, add_offset, _FillValue or other such attribute."
+    command = click.option("--raw", is_flag=True, default=None, help=raw)(command)
     text = "What to do with chunks that were never written: stop, or read the fill value.  [default: refuse]"
     return click.option("--absent", type=click.Choice(["refuse", "fill"]), help=text)(links_option(command))
 

@@ -68,6 +68,8 @@ def run_record(
             "stored_bytes": spec.stored_bytes,
             "fingerprint": spec.fingerprint,
             "absent": None if spec.absent is None else asdict(spec.absent),
+            "decoded": spec.decoded,
+            "missing": None if spec.missing is None else asdict(spec.missing),
         },
         "preparation": {
             "words": plan.orientation_words(),

@@ -100,6 +100,8 @@ def memory_terms(
     if spec.decode_bytes:
         # Kept from one read to the next, hence in every phase.
         held.append(MemoryTerm(workers * spec.decode_bytes, f"buffers in which {workers} workers decode"))
+    if spec.held_bytes:
+        held.append(MemoryTerm(spec.held_bytes, "means of features, or places of rows and columns, held for reading"))
     if resident:
         held.append(MemoryTerm(spec.decoded_bytes, "the whole matrix, held in its stored type"))
     held.append(

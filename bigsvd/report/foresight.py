@@ -7,6 +7,7 @@ from typing import Protocol
 from bigsvd.plan import Costs, Plan
 from bigsvd.report.layout import labelled, table
 from bigsvd.report.plain import Json, plain
+from bigsvd.source import MatrixSpec
 from bigsvd.units import show_bytes, show_seconds, show_shape
 
 AXES = ("rows", "columns")
@@ -63,6 +64,7 @@ def plan_lines(forecast: Foresight, width: int) -> list[str]:
         ("matrix", f"{spec.name}: {show_shape(spec.shape)} {spec.dtype}"),
         ("", f"{show_bytes(spec.decoded_bytes)} decoded{stored}{f'; {spec.encoding}' if spec.encoding else ''}"),
         ("", plan.orientation_words()),
+        *reading_words(spec),
         *(("caution", caution) for caution in spec.cautions),
     ]
     goal = f"rank {plan.rank}" if plan.request.variance is None else f"{plan.request.variance:g} of the variance"
@@ -95,6 +97,7 @@ def announcement(forecast: Foresight, width: int) -> list[str]:
     pairs = [
         ("matrix", matrix),
         ("", plan.orientation_words()),
+        *reading_words(spec),
         ("route", f"{plan.route}, {panels}, {plan.workers} {'worker' if plan.workers == 1 else 'workers'}"),
         ("memory", memory),
         ("time", _time_words(forecast)),
@@ -148,6 +151,12 @@ def plan_facts(forecast: Foresight) -> Json:
     }
     result: Json = plain(facts)
     return result
+
+
+def reading_words(spec: MatrixSpec) -> list[tuple[str, str]]:
+    """What is made of entries as they are read, each with its label."""
+    pairs = [("decoded", spec.decoded)] if spec.decoded else []
+    return pairs + ([("missing", spec.missing.words)] if spec.missing is not None else [])
 
 
 def _memory_lines(plan: Plan) -> list[str]:

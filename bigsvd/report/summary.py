@@ -56,6 +56,8 @@ def summary_lines(certificate: Certificate, attributes: Mapping[str, Any], out: 
     if absent:
         filled = f"{show_count(absent['chunks'])} of {show_count(absent['of'])} chunks were never written"
         head.append(("", f"{filled} and were read as {absent['read_as']}"))
+    if source.get("decoded"):
+        head.append(("decoded", source["decoded"]))
     constant = attributes["preparation"].get("constant_features") or 0
     if constant:
         head.append(

@@ -4,6 +4,23 @@ from bigsvd.source.access import Access
 from bigsvd.source.candidate import Candidate
 from bigsvd.source.complete import check_complete
 from bigsvd.source.open import open_source, survey
-from bigsvd.source.spec import MatrixSpec, Source
+from bigsvd.source.packing import Packing
+from bigsvd.source.rectangle import fill_by_bands, require_rectangle, tiles
+from bigsvd.source.spec import MatrixSpec, Missing, Source
+from bigsvd.source.stamp import digest
 
-__all__ = ["Access", "Candidate", "MatrixSpec", "Source", "check_complete", "open_source", "survey"]
+__all__ = [
+    "Access",
+    "Candidate",
+    "MatrixSpec",
+    "Missing",
+    "Packing",
+    "Source",
+    "check_complete",
+    "digest",
+    "fill_by_bands",
+    "open_source",
+    "require_rectangle",
+    "survey",
+    "tiles",
+]

@@ -7,6 +7,7 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 from bigsvd.errors import NoMatrixError, SeveralMatricesError, UnsupportedMatrixError
+from bigsvd.source.packing import Packing
 from bigsvd.units import shell_word, show_count, show_shape
 
 LISTED = 12
@@ -40,6 +41,8 @@ class Candidate:
         Chunks that were never written; None where they were not counted.
     outside : tuple of str
         Other files that hold its entries, or to which a link leads, outside the folder of the file.
+    packing : Packing or None
+        How its entries are packed; None where they are not.
     """
 
     path: str
@@ -55,6 +58,7 @@ class Candidate:
     hint_reason: str = ""
     absent_chunks: int | None = None
     outside: tuple[str, ...] = ()
+    packing: Packing | None = None
 
     @property
     def line(self) -> str:

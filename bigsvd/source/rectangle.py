@@ -89,6 +89,25 @@ def fill_by_bands(
         out[start - rows[0] : stop - rows[0]] = part
 
 
+def tiles(spec: MatrixSpec, rows: Span, columns: Span, most_bytes: int = BAND_BYTES) -> Iterator[tuple[Span, Span]]:
+    """Cut a rectangle into tiles of whole chunks, in storage order; whole along the rows where that is small enough.
+
+    Parameters
+    ----------
+    spec : MatrixSpec
+    rows, columns : (int, int)
+    most_bytes : int
+        Of a tile; a single chunk may be more, unless parts of it can be read alone.
+    """
+    # Entries that lie in rows as they are can be read in parts of a row.
+    unit = (1, 1) if spec.storage in ("plain", "memory") and spec.chunks[0] == 1 else spec.chunks
+    most = max(1, most_bytes // spec.dtype.itemsize)
+    wide = unit[1] * max(1, min(-(-(columns[1] - columns[0]) // unit[1]) + 1, most // (unit[0] * unit[1])))
+    high = unit[0] * max(1, most // (unit[0] * min(wide, columns[1] - columns[0] or 1)))
+    for i, j in touched(rows, columns, (high, wide)):
+        yield clip(i, high, rows), clip(j, wide, columns)
+
+
 def show_place(rows: Span, columns: Span) -> str:
     """Name a rectangle for people, counting from 0."""
     return (
