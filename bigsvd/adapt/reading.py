@@ -17,11 +17,14 @@ class Reading:
         See `Access`.
     raw : bool
         Take packed entries as they are stored.
+    missing : str
+        What becomes of missing entries, a word of `POLICIES`.
     """
 
     absent: str = "refuse"
     follow_links: bool = False
     raw: bool = False
+    missing: str = "refuse"
 
     @property
     def access(self) -> Access:

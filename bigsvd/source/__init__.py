@@ -5,7 +5,7 @@ from bigsvd.source.candidate import Candidate
 from bigsvd.source.complete import check_complete
 from bigsvd.source.open import open_source, survey
 from bigsvd.source.packing import Packing
-from bigsvd.source.rectangle import fill_by_bands, require_rectangle, tiles
+from bigsvd.source.rectangle import fill_by_bands, require_rectangle, tile_bytes, tiles
 from bigsvd.source.spec import MatrixSpec, Missing, Source
 from bigsvd.source.stamp import digest
 
@@ -22,5 +22,6 @@ __all__ = [
     "open_source",
     "require_rectangle",
     "survey",
+    "tile_bytes",
     "tiles",
 ]

@@ -8,7 +8,7 @@ from typing import Protocol
 import numpy as np
 
 from bigsvd.source.packing import Packing
-from bigsvd.units import show_count
+from bigsvd.units import show_bytes, show_count
 
 
 @dataclass(frozen=True)
@@ -69,24 +69,25 @@ class Missing:
     def words(self) -> str:
         """All of it in one line."""
         if not self.found:
-            return f"{_POLICIES[self.policy]}; they are found in one read before the sweeps"
+            then = ", and the plan is made of what remains" if self.policy.startswith("drop") else ""
+            return f"{_PLANNED[self.policy]}; one read of {show_bytes(self.bytes)} before the sweeps counts them{then}"
         if not self.entries:
             return "none found"
         share = self.entries / (self.shape[0] * self.shape[1])
         where = f"in {_of(self.rows, self.shape[0], 'row')} and {_of(self.columns, self.shape[1], 'column')}"
         found = f"{show_count(self.entries)} {'entry' if self.entries == 1 else 'entries'} ({share:.2g} of all) {where}"
         if not self.policy.startswith("drop"):
-            return f"{found}; {_POLICIES[self.policy]}"
+            return f"{found}; each takes the mean of its feature"
         gone = sum(stop - first for first, stop in self.left_out)
         axis = 0 if self.policy == "drop-rows" else 1
         name = ("rows", "columns")[axis]
         return f"{found}; {show_count(gone)} {name} left out, {show_count(self.shape[axis] - gone)} remain"
 
 
-_POLICIES = {
-    "mean": "missing entries take the mean of their feature",
-    "drop-columns": "columns with a missing entry are left out",
-    "drop-rows": "rows with a missing entry are left out",
+_PLANNED = {
+    "mean": "entries take the mean of their feature",
+    "drop-columns": "columns that have any are left out",
+    "drop-rows": "rows that have any are left out",
 }
 
 

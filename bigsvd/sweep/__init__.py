@@ -3,7 +3,7 @@
 from bigsvd.sweep.events import Control, Listener, OutOfTimeError, Progress, StoppedError
 from bigsvd.sweep.folding import fold, mirror
 from bigsvd.sweep.panels import PanelReader
-from bigsvd.sweep.partial import Partial
+from bigsvd.sweep.partial import Partial, worst
 from bigsvd.sweep.scratch import Scratch
 from bigsvd.sweep.segment import SweepTask
 from bigsvd.sweep.waves import Engine, WaveKeeper, one_blas_thread
@@ -23,4 +23,5 @@ __all__ = [
     "fold",
     "mirror",
     "one_blas_thread",
+    "worst",
 ]

@@ -357,7 +357,8 @@ class _Segment:
             order = np.lexsort((places[:, 1], places[:, 0]))[0]
             place = (int(places[order, 0]), int(places[order, 1]))
             self.sums.first_bad = min(self.sums.first_bad or place, place)
-            self.sums.bad += count
+            self.sums.infinite += int(np.count_nonzero(np.isinf(unit)))
+            self.sums.count_bad(bad, start)
         return count
 
     def finish(self) -> Partial:
