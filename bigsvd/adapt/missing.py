@@ -233,10 +233,10 @@ def _refuse_empty(spec: MatrixSpec, census: Census) -> None:
 def _refuse_little(spec: MatrixSpec, axis: int, kept: np.ndarray, counted: Missing) -> None:
     """Refuse to decompose what hardly anything is left of."""
     name, lines = ("rows", "columns")[axis], spec.shape[axis]
-    if len(kept) >= max(LEAST_LINES, LEAST_SHARE * lines):
+    if _enough(len(kept), lines):
         return
     other, touched = ("columns", counted.columns) if axis == 0 else ("rows", counted.rows)
-    some_whole = touched < spec.shape[1 - axis]
+    would_do = _enough(spec.shape[1 - axis] - touched, spec.shape[1 - axis])
     raise NonFiniteError(
         f"{spec.name}: {show_count(len(kept))} of {show_count(lines)} {name} have no missing entry, too few to"
         f" decompose with --missing {counted.policy}",
@@ -244,8 +244,13 @@ def _refuse_little(spec: MatrixSpec, axis: int, kept: np.ndarray, counted: Missi
             f"{show_count(counted.entries)} entries of {show_shape(spec.shape)} are missing, in"
             f" {show_count(counted.rows)} rows and {show_count(counted.columns)} columns"
         ],
-        remedy=f"Try --missing drop-{other}, or fill with --missing mean." if some_whole else "Try --missing mean.",
+        remedy=f"Try --missing drop-{other}, or fill with --missing mean." if would_do else "Try --missing mean.",
     )
+
+
+def _enough(left: int, lines: int) -> bool:
+    """Whether so many lines that are left are still the matrix."""
+    return left >= max(LEAST_LINES, LEAST_SHARE * lines)
 
 
 def _first(numbers: np.ndarray) -> str:

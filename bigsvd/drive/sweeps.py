@@ -216,6 +216,7 @@ class Sweeps:
             evidence=[
                 f"first at row {show_count(row)}, column {show_count(column)} (counted from 0)",
                 *_bad_lines(sums, self.plan),
+                *_decoded_words(self.plan),
             ],
             remedy="Replace the infinite values in the file: they do not count as missing."
             if sums.infinite
@@ -344,6 +345,12 @@ def _bad_lines(sums: Partial, plan: Plan) -> list[str]:
     if sums.infinite:
         said.append(f"{show_count(sums.bad - sums.infinite)} are NaN, {show_count(sums.infinite)} infinite")
     return said
+
+
+def _decoded_words(plan: Plan) -> list[str]:
+    """Where NaN may come from, if not from the file."""
+    decoded = plan.spec.decoded
+    return [f"NaN also stands for what is missing by attributes of the file: {decoded}"] if decoded else []
 
 
 def _spread(scale: np.ndarray) -> float:

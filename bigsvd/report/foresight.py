@@ -172,6 +172,8 @@ def _cost_words(forecast: Foresight) -> list[tuple[str, str]]:
     plan = forecast.plan
     matrix = plan.spec.decoded_bytes
     times = f" ({forecast.bytes_to_read / matrix:.2f} × the matrix)" if matrix else ""
+    missing = plan.spec.missing
+    counted = " and one that counts missing entries" if missing is not None and missing.bytes else ""
     sweeps = f"{plan.nominal_sweeps} {'sweep' if plan.nominal_sweeps == 1 else 'sweeps'}"
     probe = (
         f"{show_bytes(forecast.probe_bytes)} were read for this plan"
@@ -179,7 +181,7 @@ def _cost_words(forecast: Foresight) -> list[tuple[str, str]]:
         else f"nothing was read for this plan: a probe is made from {PROBE_FROM} on"
     )
     return [
-        ("reads", f"{show_bytes(forecast.bytes_to_read)}{times}, expected in {sweeps}; the spectrum decides"),
+        ("reads", f"{show_bytes(forecast.bytes_to_read)}{times}, expected in {sweeps}{counted}; the spectrum decides"),
         ("time", _time_words(forecast)),
         ("probe", probe),
     ]

@@ -224,6 +224,13 @@ def test_where_nothing_or_nearly_nothing_is_left_the_run_ends(policy: str) -> No
     assert "--missing mean" in caught.value.remedy
 
 
+def test_entries_missing_by_attributes_are_refused_with_what_decoded_them(tmp_path: Path) -> None:
+    path, values = write(tmp_path, "packed i2", gappy())
+    with pytest.raises(NonFiniteError, match=f"{np.isnan(values).sum():,} values") as caught:
+        bigsvd.decompose(path, rank=2)
+    assert caught.value.evidence[-1].endswith("scale_factor 0.01, add_offset 50, _FillValue -32768; as float64")
+
+
 def test_another_word_is_refused_with_those_that_are_known() -> None:
     with pytest.raises(OptionError, match="--missing guess is not a choice"):
         bigsvd.open_matrix(gappy(), missing="guess")
@@ -340,6 +347,7 @@ def test_the_commands_say_what_is_missing_and_what_becomes_of_it(tmp_path: Path,
     planned = said("plan", path, "--rank", 3, "--missing", "drop-rows")
     words = "rows that have any are left out; one read of 91.4 KiB before the sweeps counts them"
     assert f"missing {words}, and the plan is made of what remains" in planned
+    assert "expected in 2 sweeps and one that counts missing entries" in planned
     made = said("decompose", path, "--rank", 3, "--missing", "drop-rows", "--out", tmp_path / "o.zarr")
     found = "missing 6 entries (0.00026 of all) in 5 of 260 rows and 4 of 90 columns; 5 rows left out, 255 remain"
     assert made.count(found) == 2, "before the run, and in the summary"
