@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 
 from bigsvd import machine
-from bigsvd.adapt import Reading, open_adapted
+from bigsvd.adapt import MissingSource, Reading, open_adapted
 from bigsvd.drive import (
     Deadline,
     Forecast,
@@ -25,6 +25,7 @@ from bigsvd.drive import (
     keep_run,
     make_forecast,
     run,
+    settle_missing,
     verify_factors,
     write_result,
 )
@@ -56,6 +57,11 @@ def open_matrix(path: Any, matrix: str | None = None, **reading: Any) -> Source:
             Follow links in the file to other files outside its own folder.
         sparse_format : {"csr", "csc"}
             Whether a sparse group that does not say it is compressed by rows or by columns.
+        raw : bool
+            Take packed entries as they are stored, whatever attributes say of scale, offset and missing values.
+        missing : {"refuse", "mean", "drop-columns", "drop-rows"}
+            What becomes of missing entries (NaN). One more read before the sweeps counts them; they then take the mean
+            of their feature, or stored columns or rows that have any are left out. Infinity is always refused.
 
     Returns
     -------
@@ -187,6 +193,7 @@ def decompose(
                 discard_finished(target)
                 check_output(target, overwrite=overwrite, source_path=_path_of(source))
             check_complete(opened)
+            opened = _settle_missing(opened, options, control)
             foreseen = _foresee(opened, options, control, probe=True)
             plan = foreseen.plan
             if planned is not None:
@@ -246,7 +253,8 @@ def forecast(
     try:
         with _environment():
             check_complete(opened)
-            return _foresee(opened, options, Control(progress), probe=True)
+            seen = opened.provisional() if isinstance(opened, MissingSource) else opened
+            return _foresee(seen, options, Control(progress), probe=True)
     finally:
         if opened is not source:
             opened.close()
@@ -295,7 +303,10 @@ def verify(
         with _environment():
             check_complete(opened)
             made_with = factors.attributes["request"] | {"rank": factors.rank, "variance": None}
-            request = _request({**made_with, "memory": memory, "workers": workers})
+            asked = {**made_with, "memory": memory, "workers": workers}
+            request = _request(asked)
+            _require_same_reading(factors, opened.spec)
+            opened = _settle_missing(opened, asked, control)
             plan = make_plan(
                 opened.spec, replace(request, route="krylov", precision="double",
                 axis=factors.attributes["plan"]["axis"]), ceiling=_ceiling(request), processors=machine.processors(),
@@ -379,6 +390,32 @@ def _foresee(source: Source, options: dict[str, Any], control: Control, *, probe
         note = f"only {show_bytes(free)} of memory are free now, less than the {planned} planned: expect swapping"
         plan = replace(plan, remarks=(*plan.remarks, note))
     return make_forecast(source, plan, control, probe=probe)
+
+
+def _settle_missing(source: Source, options: dict[str, Any], control: Control) -> Source:
+    """Count missing entries where they are to be filled or left out, once it is known that the options can be met."""
+    if not isinstance(source, MissingSource):
+        return source
+    return settle_missing(source, _foresee(source, options, control, probe=False).plan, control)
+
+
+def _require_same_reading(factors: Factors, spec: MatrixSpec) -> None:
+    """Refuse to compare a result with a matrix whose entries were made otherwise."""
+    made, name = factors.attributes["source"], factors.path or "the result"
+    policy = (made.get("missing") or {}).get("policy", "refuse")
+    now = "refuse" if spec.missing is None else spec.missing.policy
+    if policy != now:
+        raise OptionError(
+            f"{name} was made with --missing {policy}, and the matrix is now read with --missing {now}",
+            remedy=f"Add --missing {policy}.",
+        )
+    decoded = made.get("decoded") or ""
+    if decoded != spec.decoded:
+        raise OptionError(
+            f"{name} was made of entries that were decoded otherwise",
+            evidence=[f"then: {decoded or 'as stored'}", f"now: {spec.decoded or 'as stored'}"],
+            remedy="Leave out --raw." if decoded else "Add --raw.",
+        )
 
 
 def _result_bytes(spec: MatrixSpec, rank: int) -> int:

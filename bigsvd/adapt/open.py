@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import Any
 
+from bigsvd.adapt.missing import MissingSource, check_policy
+from bigsvd.adapt.packed import decode_packed
 from bigsvd.adapt.reading import Reading
 from bigsvd.source import Source, open_source
 
@@ -24,4 +26,7 @@ def open_adapted(where: Any, matrix: str | None = None, reading: Reading | None 
         rows and columns chosen, missing entries filled, entries mapped.
     """
     reading = reading or Reading()
-    return open_source(where, matrix, reading.access)
+    check_policy(reading.missing)
+    source = open_source(where, matrix, reading.access)
+    source = decode_packed(source, raw=reading.raw)
+    return source if reading.missing == "refuse" else MissingSource(source, reading.missing)

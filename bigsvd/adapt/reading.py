@@ -15,11 +15,17 @@ class Reading:
     ----------
     absent, follow_links, sparse_format
         See `Access`.
+    raw : bool
+        Take packed entries as they are stored.
+    missing : str
+        What becomes of missing entries, a word of `POLICIES`.
     """
 
     absent: str = "refuse"
     follow_links: bool = False
     sparse_format: str | None = None
+    raw: bool = False
+    missing: str = "refuse"
 
     @property
     def access(self) -> Access:

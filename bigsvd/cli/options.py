@@ -61,8 +61,16 @@ def sparse_option(command: Command) -> Command:
 
 
 def reading_options(command: Command) -> Command:
-    """Add ``--absent``, ``--follow-links`` and ``--sparse-format``."""
+    """Add the options that decide what the entries of FILE are; see `bigsvd.adapt.Reading`."""
     command = sparse_option(command)
+    raw = "Take packed entries as stored: apply no scale_factor, add_offset, _FillValue or other such attribute."
+    command = click.option("--raw", is_flag=True, default=None, help=raw)(command)
+    gaps = (
+        "What becomes of missing entries (NaN): stop; take the mean of their feature; leave out the stored columns, or"
+        " rows, that have any. Counted in one more read.  [default: refuse]"
+    )
+    choices = click.Choice(["refuse", "mean", "drop-columns", "drop-rows"])
+    command = click.option("--missing", type=choices, help=gaps)(command)
     text = "What to do with chunks that were never written: stop, or read the fill value.  [default: refuse]"
     return click.option("--absent", type=click.Choice(["refuse", "fill"]), help=text)(links_option(command))
 

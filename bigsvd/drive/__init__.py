@@ -2,6 +2,7 @@
 
 from bigsvd.drive.deadline import Deadline
 from bigsvd.drive.keeping import KeptRun, keep_run
+from bigsvd.drive.missing import settle_missing
 from bigsvd.drive.outcome import Outcome
 from bigsvd.drive.probe import Forecast, make_forecast
 from bigsvd.drive.run import run
@@ -20,6 +21,7 @@ __all__ = [
     "keep_run",
     "make_forecast",
     "run",
+    "settle_missing",
     "verify_factors",
     "write_result",
 ]

@@ -73,6 +73,8 @@ def make_forecast(source: Source, plan: Plan, control: Control, *, probe: bool) 
     pilot = len(plan.pilot_panels) / geometry.panels
     sweeps = 1 if plan.resident else plan.nominal_sweeps
     expected = int(spec.decoded_bytes * (sweeps * geometry.amplification + pilot + NOMINAL_SHARE_OF_SLICES))
+    if spec.missing is not None:
+        expected += spec.missing.bytes
     if not probe or spec.decoded_bytes < LEAST_PROBED or geometry.panels < PROBE_PANELS:
         return Forecast(plan, None, 0, expected)
     before = control.bytes_read

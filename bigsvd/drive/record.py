@@ -69,6 +69,8 @@ def run_record(
             "nonzeros": spec.nonzeros,
             "fingerprint": spec.fingerprint,
             "absent": None if spec.absent is None else asdict(spec.absent),
+            "decoded": spec.decoded,
+            "missing": None if spec.missing is None else asdict(spec.missing),
         },
         "preparation": {
             "words": plan.orientation_words(),

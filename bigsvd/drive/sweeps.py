@@ -16,7 +16,7 @@ from bigsvd.prepare import Preparation
 from bigsvd.randomness import draw_without_repeat
 from bigsvd.solve import Learnt, Pilot, first_statistics, in_range, learn, take_pilot
 from bigsvd.source import Source
-from bigsvd.sweep import Control, Engine, PanelReader, Partial, Scratch, SweepTask
+from bigsvd.sweep import Control, Engine, PanelReader, Partial, Scratch, SweepTask, worst
 from bigsvd.units import show_count
 
 # Panels whose first unit is recomputed in double, to measure rounding in single.
@@ -218,8 +218,15 @@ class Sweeps:
         what = "value is" if sums.bad == 1 else "values are"
         raise NonFiniteError(
             f"{self.plan.spec.name}: {show_count(sums.bad)} {what} NaN or infinite, and a decomposition needs numbers",
-            evidence=[f"first at row {show_count(row)}, column {show_count(column)} (counted from 0)"],
-            remedy="Replace or drop them in the file, then run again.",
+            evidence=[
+                f"first at row {show_count(row)}, column {show_count(column)} (counted from 0)",
+                *_bad_lines(sums, self.plan),
+                *_decoded_words(self.plan),
+            ],
+            remedy="Replace the infinite values in the file: they do not count as missing."
+            if sums.infinite
+            else "Add --missing mean, which fills in the mean of each feature, or --missing drop-rows or drop-columns,"
+            " which leave out the rows or columns that have any.",
         )
 
     def _refuse_change(self, sums: Partial) -> None:
@@ -330,6 +337,32 @@ class Sweeps:
     def close(self) -> None:
         """End the workers."""
         self.engine.close()
+
+
+def _bad_lines(sums: Partial, plan: Plan) -> list[str]:
+    """How many rows and columns hold NaN or infinity, and which hold most."""
+    assert sums.worst_lines is not None
+    assert sums.bad_across is not None
+    columns = np.flatnonzero(sums.bad_across)
+    across = worst(None, np.stack([columns, sums.bad_across[columns]], axis=1))
+    assert across is not None
+    found = [(sums.bad_lines, sums.worst_lines), (len(columns), across)]
+    if plan.geometry.axis == 1:
+        found.reverse()
+    said = []
+    for axis, (count, lines) in enumerate(found):
+        name = ("row", "column")[axis]
+        most = ", ".join(f"{show_count(int(line))} ({show_count(int(held))})" for line, held in lines)
+        said.append(f"in {show_count(count)} of {show_count(plan.spec.shape[axis])} {name}s; most in {name} {most}")
+    if sums.infinite:
+        said.append(f"{show_count(sums.bad - sums.infinite)} are NaN, {show_count(sums.infinite)} infinite")
+    return said
+
+
+def _decoded_words(plan: Plan) -> list[str]:
+    """Where NaN may come from, if not from the file."""
+    decoded = plan.spec.decoded
+    return [f"NaN also stands for what is missing by attributes of the file: {decoded}"] if decoded else []
 
 
 def _spread(scale: np.ndarray) -> float:

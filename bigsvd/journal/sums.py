@@ -11,7 +11,7 @@ from bigsvd.prepare import Preparation
 from bigsvd.solve import Pilot
 from bigsvd.sweep import Partial
 
-_SCALARS = ("lines", "energy", "cancelled", "bad", "first_bad", "overflow", "beyond")
+_SCALARS = ("lines", "energy", "cancelled", "bad", "infinite", "first_bad", "bad_lines", "overflow", "beyond")
 _LISTS = ("line_mean", "line_inverse_scale", "line_constant")
 _PREPARED = ("shift", "inverse_scale", "about")
 

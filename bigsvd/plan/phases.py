@@ -162,6 +162,8 @@ class _Model:
         """Everything in turn."""
         plan, rates = self.plan, self.rates
         self.ledger.wait("start", rates.start_seconds)
+        if plan.spec.missing is not None:
+            self._count_missing(plan.spec.missing.bytes)
         if plan.route == "krylov":
             self._pilot()
             blocks = _blocks(plan, sweeps, columns)
@@ -269,6 +271,16 @@ class _Model:
         self.ledger.wait("dense", (PILOT_PRODUCTS + 1) * self.rates.sweep_seconds)
         # Three rounds of 4·n·L² each, for the Gaussian start and after every product; as much again is moved about.
         self._basis(16.0 * PILOT_PRODUCTS * n * start**2)
+
+    def _count_missing(self, size: int) -> None:
+        """Read the whole matrix once before the run."""
+        before = dict(self.ledger.spent)
+        share = size / self.plan.spec.decoded_bytes
+        self.read(share)
+        self.ledger.work("convert", share * self.entries, self.rates.statistics)
+        for phase in ("read", "convert"):
+            self.ledger.spent["start"] += (self.ledger.spent[phase] - before[phase]) / self.plan.workers
+            self.ledger.spent[phase] = before[phase]
 
     def _whole_spectrum(self) -> None:
         """One sweep for AᴴA or R, and its decomposition."""

@@ -7,6 +7,7 @@ from typing import Protocol
 from bigsvd.plan import Costs, Plan
 from bigsvd.report.layout import labelled, table
 from bigsvd.report.plain import Json, plain
+from bigsvd.source import MatrixSpec
 from bigsvd.units import show_bytes, show_seconds, show_shape
 
 AXES = ("rows", "columns")
@@ -63,6 +64,7 @@ def plan_lines(forecast: Foresight, width: int) -> list[str]:
         ("matrix", f"{spec.name}: {show_shape(spec.shape)} {spec.dtype}"),
         ("", f"{_size_words(plan)}{stored}{f'; {spec.encoding}' if spec.encoding else ''}"),
         ("", plan.orientation_words()),
+        *reading_words(spec),
         *(("caution", caution) for caution in spec.cautions),
     ]
     goal = f"rank {plan.rank}" if plan.request.variance is None else f"{plan.request.variance:g} of the variance"
@@ -95,6 +97,7 @@ def announcement(forecast: Foresight, width: int) -> list[str]:
     pairs = [
         ("matrix", matrix),
         ("", plan.orientation_words()),
+        *reading_words(spec),
         ("route", f"{plan.route}, {panels}, {plan.workers} {'worker' if plan.workers == 1 else 'workers'}"),
         ("memory", memory),
         ("time", _time_words(forecast)),
@@ -157,6 +160,12 @@ def _size_words(plan: Plan) -> str:
     return f"{show_bytes(plan.spec.decoded_bytes)} {'decoded' if plan.spec.nonzeros is None else 'if made dense'}"
 
 
+def reading_words(spec: MatrixSpec) -> list[tuple[str, str]]:
+    """What is made of entries as they are read, each with its label."""
+    pairs = [("decoded", spec.decoded)] if spec.decoded else []
+    return pairs + ([("missing", spec.missing.words)] if spec.missing is not None else [])
+
+
 def _memory_lines(plan: Plan) -> list[str]:
     """Terms of the memory plan with their sum against the ceiling."""
     rows = [[show_bytes(term.size), term.what] for term in plan.memory if term.size]
@@ -170,6 +179,8 @@ def _cost_words(forecast: Foresight) -> list[tuple[str, str]]:
     plan = forecast.plan
     matrix = plan.spec.decoded_bytes
     times = f" ({forecast.bytes_to_read / matrix:.2f} × the matrix)" if matrix else ""
+    missing = plan.spec.missing
+    counted = " and one that counts missing entries" if missing is not None and missing.bytes else ""
     sweeps = f"{plan.nominal_sweeps} {'sweep' if plan.nominal_sweeps == 1 else 'sweeps'}"
     probe = (
         f"{show_bytes(forecast.probe_bytes)} were read for this plan"
@@ -177,7 +188,7 @@ def _cost_words(forecast: Foresight) -> list[tuple[str, str]]:
         else f"nothing was read for this plan: a probe is made from {PROBE_FROM} on"
     )
     return [
-        ("reads", f"{show_bytes(forecast.bytes_to_read)}{times}, expected in {sweeps}; the spectrum decides"),
+        ("reads", f"{show_bytes(forecast.bytes_to_read)}{times}, expected in {sweeps}{counted}; the spectrum decides"),
         ("time", _time_words(forecast)),
         ("probe", probe),
     ]

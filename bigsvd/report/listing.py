@@ -81,13 +81,15 @@ def command_line(where: str, candidate: Candidate, *, named: bool) -> str:
         words += ["--matrix", candidate.path]
     if candidate.samples_hint == "columns":
         words += ["--samples", "columns"]
+    if candidate.packing is not None and candidate.packing.problem:
+        words.append("--raw")
     if candidate.outside:
         words.append("--follow-links")
     return " ".join(map(shell_word, words))
 
 
 def _notes(candidate: Candidate) -> list[str]:
-    """What is to be known of a matrix before it is decomposed: parts that are absent, or lie elsewhere."""
+    """What is to be known of a matrix before it is decomposed: absent parts, how entries are decoded, other files."""
     notes = []
     if candidate.absent_chunks:
         count, several = show_count(candidate.absent_chunks), candidate.absent_chunks > 1
@@ -95,6 +97,14 @@ def _notes(candidate: Candidate) -> list[str]:
             f"{_name(candidate)}: {count} {'chunks were' if several else 'chunk was'} never written; decompose stops at"
             " that, or reads the fill value with --absent fill"
         )
+    packing = candidate.packing
+    if packing is not None and packing.problem:
+        notes.append(
+            f"{_name(candidate)}: packed, but {packing.problem}; decompose needs --raw, which takes it as stored"
+        )
+    elif packing is not None and packing.words:
+        notes.append(f"{_name(candidate)}: decoded by {packing.words}; --raw takes entries as stored")
+    notes += [f"{_name(candidate)}: {caution}" for caution in (packing.cautions if packing is not None else ())]
     if candidate.outside:
         notes.append(f"{_name(candidate)}: lies partly in {_listed(candidate.outside)}; decompose needs --follow-links")
     return notes

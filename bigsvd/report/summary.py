@@ -14,6 +14,7 @@ from bigsvd.report.components import component_lines, shares
 from bigsvd.report.layout import labelled, table, wrap
 from bigsvd.report.numbers import show_angle, show_captured, show_probability, show_up
 from bigsvd.report.plain import Json, plain
+from bigsvd.source import Missing
 from bigsvd.units import show_bytes, show_count, show_seconds, show_shape
 
 # Phases as people read them; others go by their own names.
@@ -56,6 +57,10 @@ def summary_lines(certificate: Certificate, attributes: Mapping[str, Any], out: 
     if absent:
         filled = f"{show_count(absent['chunks'])} of {show_count(absent['of'])} chunks were never written"
         head.append(("", f"{filled} and were read as {absent['read_as']}"))
+    if source.get("decoded"):
+        head.append(("decoded", source["decoded"]))
+    if source.get("missing"):
+        head.append(("missing", Missing(**source["missing"]).words))
     constant = attributes["preparation"].get("constant_features") or 0
     if constant:
         head.append(

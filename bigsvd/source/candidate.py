@@ -7,6 +7,7 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 from bigsvd.errors import NoMatrixError, SeveralMatricesError, UnsupportedMatrixError
+from bigsvd.source.packing import Packing
 from bigsvd.units import shell_word, show_count, show_shape
 
 LISTED = 12
@@ -44,6 +45,8 @@ class Candidate:
         Entries stored, of a sparse matrix.
     sparse : bool
         Whether it is a group that holds a sparse matrix; its sizes are those of the matrix made dense.
+    packing : Packing or None
+        How its entries are packed; None where they are not.
     """
 
     path: str
@@ -61,6 +64,7 @@ class Candidate:
     outside: tuple[str, ...] = ()
     nonzeros: int | None = None
     sparse: bool = False
+    packing: Packing | None = None
 
     @property
     def line(self) -> str:

@@ -15,13 +15,14 @@ from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
 from bigsvd.source.entries import decoded_type, pair_view, type_caution
 from bigsvd.source.fill import FillError, hdf5_fill
 from bigsvd.source.hdf5_complete import require_complete
-from bigsvd.source.hdf5_dataset import describe, missing_filters, unapplied_attributes
+from bigsvd.source.hdf5_dataset import describe, missing_filters
 from bigsvd.source.hdf5_direct import DirectReader, Fill, decodes_directly, direct_reader, plain_type
 from bigsvd.source.hdf5_file import library_errors_named, open_hdf5, register_plugins
 from bigsvd.source.hdf5_filters import filters_of
 from bigsvd.source.hdf5_links import other_files, require_inside
 from bigsvd.source.home import Home
 from bigsvd.source.one_row import OneRow
+from bigsvd.source.packing import packing_cautions
 from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.positional import Descriptor, reading_bytes
 from bigsvd.source.rectangle import (
@@ -276,8 +277,9 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -
         samples_hint=said.samples_hint,
         hint_reason=said.hint_reason,
         fingerprint=digest(stamps, inside, dataset.shape, stored, said.encoding),
-        cautions=type_caution(stored) + unapplied_attributes(set(dataset.attrs)),
+        cautions=type_caution(stored) + packing_cautions(said.packing),
         codecs=codecs,
+        packing=said.packing,
     )
 
 

@@ -12,10 +12,8 @@ from bigsvd.source.hdf5_direct import decodes_directly
 from bigsvd.source.hdf5_file import register_plugins
 from bigsvd.source.hdf5_filters import filters_of
 from bigsvd.source.hints import hdf5_hint
+from bigsvd.source.packing import NAMES, Packing, find_packing
 from bigsvd.units import show_count, show_shape
-
-_NOT_APPLIED = ("scale_factor", "add_offset", "_FillValue", "missing_value")
-_BOTH = {"scale_factor", "add_offset"}
 
 
 def missing_filters(dataset: Any) -> list[str]:
@@ -82,6 +80,7 @@ def describe(dataset: Any, path: str) -> Candidate:
         reason=reason,
         samples_hint=hint,
         hint_reason=hint_reason,
+        packing=None if reason else dataset_packing(dataset, decoded_type(stored)),
     )
 
 
@@ -108,10 +107,16 @@ def _text_attribute(thing: Any, name: str) -> str:
     return value.decode("utf-8", "replace") if isinstance(value, bytes) else str(value)
 
 
-def unapplied_attributes(names: set[str]) -> tuple[str, ...]:
-    """Caution about attributes by which a reader is expected to decode entries."""
-    found = [name for name in _NOT_APPLIED if name in names]
-    if not _BOTH & set(found):
-        # A fill value alone is written beside most arrays, packed or not.
-        found = [name for name in found if name == "missing_value"]
-    return (f"attributes {', '.join(found)} are not applied: entries are taken as stored",) if found else ()
+def dataset_packing(dataset: Any, decoded: np.dtype | None) -> Packing | None:
+    """What the attributes of a dataset say of decoding its entries."""
+    if decoded is None:
+        return None
+    found = {}
+    for name in NAMES:
+        # An attribute that cannot be read decodes nothing; what it was is said.
+        try:
+            if name in dataset.attrs:
+                found[name] = dataset.attrs[name]
+        except (OSError, TypeError, ValueError, KeyError, RuntimeError) as error:
+            found[name] = f"unreadable ({error})"
+    return find_packing(found, decoded)

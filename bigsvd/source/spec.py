@@ -8,7 +8,8 @@ from typing import TYPE_CHECKING, Protocol, runtime_checkable
 
 import numpy as np
 
-from bigsvd.units import show_count
+from bigsvd.source.packing import Packing
+from bigsvd.units import show_bytes, show_count
 
 if TYPE_CHECKING:
     from scipy.sparse import csr_array
@@ -40,6 +41,65 @@ class Absent:
     def words(self) -> str:
         """All of it in one line."""
         return f"{count_absent(self.chunks, self.of)} and read as {self.read_as}; first {self.first[0]}"
+
+
+@dataclass(frozen=True)
+class Missing:
+    """Missing entries (NaN) of a matrix, and what becomes of them.
+
+    Attributes
+    ----------
+    policy : str
+        ``mean``, ``drop-columns`` or ``drop-rows``.
+    shape : (int, int)
+        Of the matrix as it is read, nothing left out.
+    bytes : int
+        Decoded bytes of it, which one sweep reads to find them.
+    found : bool
+        Whether that was done; what follows is not known before.
+    entries, rows, columns : int
+        Missing entries, and the rows and columns in which there are any.
+    left_out : tuple of (int, int)
+        Runs of rows or columns that are left out, each the first and one past the last, in stored order.
+    """
+
+    policy: str
+    shape: tuple[int, int]
+    bytes: int
+    found: bool = False
+    entries: int = 0
+    rows: int = 0
+    columns: int = 0
+    left_out: tuple[tuple[int, int], ...] = ()
+
+    @property
+    def words(self) -> str:
+        """All of it in one line."""
+        if not self.found:
+            then = ", and the plan is made of what remains" if self.policy.startswith("drop") else ""
+            return f"{_PLANNED[self.policy]}; one read of {show_bytes(self.bytes)} before the sweeps counts them{then}"
+        if not self.entries:
+            return "none found"
+        share = self.entries / (self.shape[0] * self.shape[1])
+        where = f"in {_of(self.rows, self.shape[0], 'row')} and {_of(self.columns, self.shape[1], 'column')}"
+        found = f"{show_count(self.entries)} {'entry' if self.entries == 1 else 'entries'} ({share:.2g} of all) {where}"
+        if not self.policy.startswith("drop"):
+            return f"{found}; each takes the mean of its feature"
+        gone = sum(stop - first for first, stop in self.left_out)
+        axis = 0 if self.policy == "drop-rows" else 1
+        name = ("rows", "columns")[axis]
+        return f"{found}; {show_count(gone)} {name} left out, {show_count(self.shape[axis] - gone)} remain"
+
+
+_PLANNED = {
+    "mean": "entries take the mean of their feature",
+    "drop-columns": "columns that have any are left out",
+    "drop-rows": "rows that have any are left out",
+}
+
+
+def _of(count: int, of: int, name: str) -> str:
+    return f"{show_count(count)} of {show_count(of)} {name}s"
 
 
 def count_absent(count: int, of: int) -> str:
@@ -91,8 +151,15 @@ class MatrixSpec:
         Entries stored, of a sparse matrix; None of a dense one.
     compressed_axis : int or None
         Of a sparse matrix, 0 where it is compressed by rows and 1 by columns.
+    packing : Packing or None
+        How entries are packed; None where they are not, or were decoded.
+    decoded : str
+        Attributes by which entries were decoded, for people; empty for none.
+    missing : Missing or None
+        What becomes of missing entries, where the user says so.
     held_bytes : int
-        What the source holds once from its opening on, however many threads read, such as pointers to lines.
+        What the source itself holds once, from its opening or first read on, however many threads read: pointers to
+        lines, places of rows and columns, means.
     """
 
     name: str
@@ -111,6 +178,9 @@ class MatrixSpec:
     absent: Absent | None = None
     nonzeros: int | None = None
     compressed_axis: int | None = None
+    packing: Packing | None = None
+    decoded: str = ""
+    missing: Missing | None = None
     held_bytes: int = 0
 
     @property

@@ -14,7 +14,7 @@ from bigsvd.source.chunk_decoder import ChunkError, decode_bytes, most_stored
 from bigsvd.source.complete import absent_error, settle_absent
 from bigsvd.source.entries import decoded_type, type_caution
 from bigsvd.source.fill import zarr_fill
-from bigsvd.source.hdf5_dataset import unapplied_attributes
+from bigsvd.source.packing import packing_cautions
 from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.rectangle import (
     Span,
@@ -118,8 +118,9 @@ class ZarrSource:
             samples_hint=said.samples_hint,
             hint_reason=said.hint_reason,
             fingerprint=digest(self.stamps, metadata, said.stored_bytes, self._sampled_chunks()),
-            cautions=type_caution(metadata.dtype) + unapplied_attributes(set(metadata.attributes)),
+            cautions=type_caution(metadata.dtype) + packing_cautions(said.packing),
             codecs=self._codecs(),
+            packing=said.packing,
         )
 
     @property

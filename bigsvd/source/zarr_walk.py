@@ -12,6 +12,7 @@ from bigsvd.errors import OutsideError, SourceError
 from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type
 from bigsvd.source.hints import NO_HINT, Hint, annotated_hint, hint_from_names
+from bigsvd.source.packing import Packing, find_packing
 from bigsvd.source.rectangle import grid_shape
 from bigsvd.source.zarr_complete import AbsentChunks, absent_keys, count_absent_chunks
 from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
@@ -110,7 +111,25 @@ def describe_zarr(array: ZarrMetadata, path: str, root: dict[str, Any], stored: 
         reason=reason,
         samples_hint=hint,
         hint_reason=hint_reason,
+        packing=None if reason else zarr_packing(array),
     )
+
+
+def zarr_packing(array: ZarrMetadata) -> Packing | None:
+    """What the attributes of an array say of decoding its entries.
+
+    xarray keeps ``_FillValue`` of format 2 as the fill value of the array. That of others is 0 for want of another, so
+    it counts only where xarray named the dimensions and it is not 0, or where entries are scaled.
+    """
+    stored = decoded_type(array.dtype) if array.dtype is not None else None
+    attributes = array.attributes
+    if stored is None:
+        return None
+    ours = array.zarr_format == 2 and "_FillValue" not in attributes and "_ARRAY_DIMENSIONS" in attributes
+    scaled = "scale_factor" in attributes or "add_offset" in attributes
+    if ours and array.fill is not None and (array.fill != 0 or scaled):
+        attributes = {**attributes, "_FillValue": array.fill}
+    return find_packing(attributes, stored)
 
 
 def zarr_hint(array: ZarrMetadata, path: str, root: dict[str, Any]) -> Hint:

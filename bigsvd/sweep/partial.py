@@ -8,6 +8,9 @@ import numpy as np
 
 from bigsvd.sweep.folding import fold
 
+# Lines and columns with most bad entries that are named.
+MOST_NAMED = 3
+
 
 @dataclass(eq=False)
 class Partial:
@@ -44,8 +47,16 @@ class Partial:
         and four times what cancels in it.
     bad : int
         NaN and infinities met.
+    infinite : int
+        The infinities among them.
     first_bad : (int, int) or None
         Stored row and column of the first.
+    bad_lines : int
+        Lines that hold any.
+    worst_lines : ndarray, shape (at most 3, 2), or None
+        The lines that hold most, and how many.
+    bad_across : ndarray, shape (across,), or None
+        How many each column holds.
     overflow : bool
         Finite entries whose squares overflow the working precision.
     beyond : bool
@@ -69,7 +80,11 @@ class Partial:
     rounding: np.ndarray | None = None
     unit_energies: np.ndarray | None = None
     bad: int = 0
+    infinite: int = 0
     first_bad: tuple[int, int] | None = None
+    bad_lines: int = 0
+    worst_lines: np.ndarray | None = None
+    bad_across: np.ndarray | None = None
     overflow: bool = False
     beyond: bool = False
 
@@ -92,6 +107,32 @@ class Partial:
                 # Units of zeros show no rounding: one roundoff of what is typical stands for it.
                 self.rounding[row] = 2.0**-48 * typical
 
+    def count_bad(self, places: np.ndarray, across: int) -> None:
+        """Count entries that are no finite numbers.
+
+        Parameters
+        ----------
+        places : ndarray of int, shape (entries, 2)
+            Line of the sweep and place across it of each.
+        across : int
+            Entries of a line.
+        """
+        lines, per_line = np.unique(places[:, 0], return_counts=True)
+        counts = np.bincount(places[:, 1], minlength=across)
+        self.bad += len(places)
+        self.bad_lines += len(lines)
+        self.worst_lines = worst(self.worst_lines, np.stack([lines, per_line], axis=1))
+        self.bad_across = counts if self.bad_across is None else self.bad_across + counts
+
+
+def worst(first: np.ndarray | None, second: np.ndarray | None) -> np.ndarray | None:
+    """Of two lists of lines and counts the lines with most, of equal ones the earlier."""
+    given = [one for one in (first, second) if one is not None]
+    if not given:
+        return None
+    both = np.concatenate(given)
+    return both[np.lexsort((both[:, 0], -both[:, 1]))[:MOST_NAMED]]
+
 
 def combine(first: Partial, second: Partial) -> Partial:
     """Add the sums of two neighbouring runs of panels into the first.
@@ -102,6 +143,13 @@ def combine(first: Partial, second: Partial) -> Partial:
     first.energy += second.energy
     first.cancelled += second.cancelled
     first.bad += second.bad
+    first.infinite += second.infinite
+    first.bad_lines += second.bad_lines
+    first.worst_lines = worst(first.worst_lines, second.worst_lines)
+    if first.bad_across is None or second.bad_across is None:
+        first.bad_across = second.bad_across if first.bad_across is None else first.bad_across
+    else:
+        first.bad_across += second.bad_across
     first.overflow |= second.overflow
     first.beyond |= second.beyond
     if second.first_bad is not None:

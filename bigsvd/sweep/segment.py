@@ -317,13 +317,18 @@ class Segment:
         count = len(places)
         if count:
             places[:, 0] += start
+            self.sums.count_bad(places, self.across)
+            self.sums.infinite += int(np.count_nonzero(np.isinf(self._values(unit))))
             if self.task.reader.geometry.axis == 1:
                 places = places[:, ::-1]
             order = np.lexsort((places[:, 1], places[:, 0]))[0]
             place = (int(places[order, 0]), int(places[order, 1]))
             self.sums.first_bad = min(self.sums.first_bad or place, place)
-            self.sums.bad += count
         return count
+
+    def _values(self, unit: Any) -> np.ndarray:
+        """What is stored of a unit."""
+        return np.asarray(unit)
 
     def _bad_places(self, unit: Any) -> np.ndarray:
         """Line and place across of every entry that is not finite, shape (entries, 2)."""

@@ -228,6 +228,10 @@ class SparseSegment(Segment):
         found = [_extremes_of(part, lines.indices, absent) for part in parts]
         return np.concatenate([low for low, _ in found]), np.concatenate([high for _, high in found])
 
+    def _values(self, unit: Any) -> np.ndarray:
+        """What is stored of a unit."""
+        return np.asarray(unit.data)
+
     def _bad_places(self, unit: Any) -> np.ndarray:
         """Line and place across of every entry that is not finite, shape (entries, 2)."""
         bad = np.flatnonzero(~np.isfinite(unit.data))
