@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import Any
 
+from bigsvd.adapt.levels import choose_level
+from bigsvd.adapt.names import name_axes
 from bigsvd.adapt.reading import Reading
 from bigsvd.source import Source, open_source
 
@@ -21,7 +23,10 @@ def open_adapted(where: Any, matrix: str | None = None, reading: Reading | None 
     -------
     Source
         In this order, each only where it is asked for or the file calls for it: files joined, packed entries decoded,
-        rows and columns chosen, missing entries filled, entries mapped.
+        rows and columns chosen, missing entries filled, entries mapped,
+        axes named.
     """
     reading = reading or Reading()
-    return open_source(where, matrix, reading.access)
+    matrix = choose_level(where, matrix, reading.level, reading.access)
+    source = open_source(where, matrix, reading.access)
+    return name_axes(source, reading.row_names, reading.column_names, reading.access)

@@ -15,10 +15,18 @@ class Reading:
     ----------
     absent, follow_links
         See `Access`.
+    level : int or None
+        Of an image in several resolutions, which; 0, the full one, by default.
+    row_names, column_names : str or None
+        Where the names of rows and columns stand: a path inside the file of the matrix, ``FILE:PATH``, a text file
+        with a name a line, or an .npy file of text. By default where the layout of the file keeps them.
     """
 
     absent: str = "refuse"
     follow_links: bool = False
+    level: int | None = None
+    row_names: str | None = None
+    column_names: str | None = None
 
     @property
     def access(self) -> Access:
@@ -29,4 +37,3 @@ class Reading:
     def names(cls) -> frozenset[str]:
         """Names of the options."""
         return frozenset(field.name for field in fields(cls))
-

@@ -11,14 +11,20 @@ VECTORS = {"left_vectors": ("row", "component"), "right_vectors": ("column", "co
 VALUES = {"singular_values": ("component",), "column_mean": ("column",), "column_scale": ("column",)}
 SPECTRUM = ("value", "lower", "upper", "variance", "variance_share", "cumulative_share")
 GROUPS = ("spectrum", "certificate")
-MEMBERS = frozenset({"zarr.json", *VECTORS, *VALUES, *GROUPS, "row_name", "column_name"})
+NAMES = {"row_name": ("row",), "column_name": ("column",)}
+MEMBERS = frozenset({"zarr.json", *VECTORS, *VALUES, *GROUPS, *NAMES})
 
 _CHUNK_BYTES = 32 * 2**20
 _LARGEST_CHUNK_BYTES = 64 * 2**20
-# 2 × 400 files of vectors, 2 × 20 of column_mean and column_scale, about 60 others: under 1,000 at any size.
+# 2 × 400 files of vectors, 2 × 20 of column_mean and column_scale, as many of names, about 60 others: under 1,000.
 _VECTOR_FILES = 400
 _VALUE_FILES = 20
 _OTHER_FILES = 64
+
+
+# Names of a chunk, and the text that they may have together: 256 bytes each, or 4 MiB for few. The text is held as
+# single strings, packed, encoded and compressed.
+_CHUNK_NAMES, _NAME_BYTES, _LEAST_TEXT, _TEXT_COPIES = 16_384, 256, 4 * 2**20, 4
 
 
 @dataclass(frozen=True)
@@ -92,6 +98,44 @@ def plan_grid(rows: int, rank: int, itemsize: int) -> VectorGrid:
 def plan_chunk(length: int, itemsize: int) -> int:
     """Entries per chunk of a one-dimensional array: 32 MiB, or more where that would make over 20 files."""
     return max(min(length, _CHUNK_BYTES // itemsize), -(-length // _VALUE_FILES), 1)
+
+
+@dataclass(frozen=True)
+class NamesCost:
+    """How the names of one side are cut, and what writing them holds.
+
+    Attributes
+    ----------
+    chunk : int
+        Names of a chunk.
+    text_bytes : int
+        Most text of a chunk.
+    memory_bytes : int
+        Upper bound of what is held: text in its copies, and a number for each name of the side.
+    """
+
+    chunk: int
+    text_bytes: int
+    memory_bytes: int
+
+
+def plan_names(count: int, decoded_together: int = 0) -> NamesCost:
+    """Cut names into at most 20 chunks.
+
+    Parameters
+    ----------
+    count : int
+    decoded_together : int
+        Names that their source decodes at a time.
+
+    Examples
+    --------
+    >>> plan_names(1_000_000)
+    NamesCost(chunk=50000, text_bytes=12800000, memory_bytes=75200000)
+    """
+    chunk = max(_CHUNK_NAMES, -(-count // _VALUE_FILES))
+    text = max(_LEAST_TEXT, min(chunk, count) * _NAME_BYTES)
+    return NamesCost(min(chunk, max(count, 1)), text, _TEXT_COPIES * text + 24 * count + _NAME_BYTES * decoded_together)
 
 
 def store_cost(shape: tuple[int, int], rank: int, dtype: np.dtype) -> StoreCost:

@@ -68,6 +68,8 @@ class Factors:
         Source, preparation, plan, seed, versions and so on, as the run recorded them.
     path : Path or None
         The store; None in memory.
+    sample_names, feature_names : zarr.Array or None
+        Names of the rows of either side as text, read from disk when sliced; None where the file has none.
 
     Examples
     --------
@@ -113,6 +115,8 @@ class Factors:
     certificate: Certificate
     attributes: dict[str, Any]
     path: Path | None
+    sample_names: zarr.Array[Any] | None = None
+    feature_names: zarr.Array[Any] | None = None
     _root: tuple[int, ...] = field(default=())
 
     def scores(self, components: int | Sequence[int] | np.ndarray | None = None) -> np.ndarray:

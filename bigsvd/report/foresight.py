@@ -63,6 +63,7 @@ def plan_lines(forecast: Foresight, width: int) -> list[str]:
         ("matrix", f"{spec.name}: {show_shape(spec.shape)} {spec.dtype}"),
         ("", f"{show_bytes(spec.decoded_bytes)} decoded{stored}{f'; {spec.encoding}' if spec.encoding else ''}"),
         ("", plan.orientation_words()),
+        *(("", words) for words in plan.reading_words()),
         *(("caution", caution) for caution in spec.cautions),
     ]
     goal = f"rank {plan.rank}" if plan.request.variance is None else f"{plan.request.variance:g} of the variance"
@@ -95,6 +96,7 @@ def announcement(forecast: Foresight, width: int) -> list[str]:
     pairs = [
         ("matrix", matrix),
         ("", plan.orientation_words()),
+        *(("", words) for words in plan.reading_words()),
         ("route", f"{plan.route}, {panels}, {plan.workers} {'worker' if plan.workers == 1 else 'workers'}"),
         ("memory", memory),
         ("time", _time_words(forecast)),
@@ -112,6 +114,7 @@ def plan_facts(forecast: Foresight) -> Json:
         "source": plan.spec,
         "request": plan.request,
         "orientation": plan.orientation_words(),
+        "understood": plan.reading_words(),
         "samples": plan.samples,
         "features": plan.features,
         "rank": plan.rank,

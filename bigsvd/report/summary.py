@@ -51,6 +51,7 @@ def summary_lines(certificate: Certificate, attributes: Mapping[str, Any], out: 
     head = [
         ("matrix", f"{source['name']}: {show_shape(tuple(source['shape']))} {source['dtype']}"),
         ("", attributes["preparation"]["words"]),
+        *(("", words) for words in attributes["preparation"].get("understood", ())),
     ]
     absent = source.get("absent")
     if absent:

@@ -1,9 +1,29 @@
 """Where a matrix comes from: files and arrays behind one interface."""
 
 from bigsvd.source.access import Access
+from bigsvd.source.axes import CONTRADICTORY
 from bigsvd.source.candidate import Candidate
 from bigsvd.source.complete import check_complete
-from bigsvd.source.open import open_source, survey
+from bigsvd.source.names import Names, repeated, showable
+from bigsvd.source.names import to_text as names_to_text
+from bigsvd.source.open import find_names, open_source, survey
 from bigsvd.source.spec import MatrixSpec, Source
+from bigsvd.source.stamp import FileStamp, digest
 
-__all__ = ["Access", "Candidate", "MatrixSpec", "Source", "check_complete", "open_source", "survey"]
+__all__ = [
+    "CONTRADICTORY",
+    "Access",
+    "Candidate",
+    "FileStamp",
+    "MatrixSpec",
+    "Names",
+    "Source",
+    "check_complete",
+    "digest",
+    "find_names",
+    "names_to_text",
+    "open_source",
+    "repeated",
+    "showable",
+    "survey",
+]

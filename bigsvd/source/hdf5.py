@@ -62,7 +62,7 @@ class Hdf5Source:
             require_inside(file, dataset, Home(path, follow=access.follow_links))
             others = [os.path.abspath(file[dataset].file.filename), *other_files(file[dataset])]
             self.stamps += tuple(FileStamp.of(name) for name in others if name != path and os.path.exists(name))
-            self.spec = _spec(file[dataset], path, dataset, self.stamps)
+            self.spec = _spec(file[dataset], path, dataset, self.stamps, access)
         self._opened()
 
     def _forget(self) -> None:
@@ -240,8 +240,8 @@ def open_dataset(file: Any, inside: str) -> Any:
     return dataset
 
 
-def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -> MatrixSpec:
-    said = describe(dataset, inside)
+def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...], access: Access) -> MatrixSpec:
+    said = describe(dataset, inside, follow=access.follow_links)
     stored = dataset.dtype
     dtype = decoded_type(stored)
     if dtype is None or not said.usable:
@@ -267,8 +267,12 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -
         samples_hint=said.samples_hint,
         hint_reason=said.hint_reason,
         fingerprint=digest(stamps, inside, dataset.shape, stored, said.encoding),
-        cautions=type_caution(stored) + unapplied_attributes(set(dataset.attrs)),
+        cautions=type_caution(stored) + unapplied_attributes(set(dataset.attrs)) + said.remarks,
         codecs=codecs,
+        layout=said.layout,
+        marker=said.marker,
+        row_names=said.row_names,
+        column_names=said.column_names,
     )
 
 

@@ -10,6 +10,7 @@ from typing import Any
 from bigsvd.errors import OutsideError, SourceError
 from bigsvd.source.candidate import SPARSE, SPARSE_TYPES, Candidate
 from bigsvd.source.hdf5_dataset import describe
+from bigsvd.source.hdf5_layout import hdf5_axes
 from bigsvd.source.hdf5_links import outside_files, require_path_inside
 from bigsvd.source.home import Home
 from bigsvd.source.rectangle import grid_shape
@@ -99,7 +100,7 @@ def _visit(
     visited.add(identity)
     if isinstance(thing, h5py.Dataset):
         try:
-            said = describe(thing, path)
+            said = describe(thing, path, follow=home.follow)
             outside = outside_files(file, path, home)
             if said.usable and outside and not home.follow:
                 said = replace(
@@ -110,7 +111,7 @@ def _visit(
             found.append(Candidate(path, reason=f"it cannot be described ({error})"))
     elif isinstance(thing, h5py.Group):
         if is_sparse(thing):
-            found.append(Candidate(path, reason=SPARSE))
+            found.append(Candidate(path, reason=SPARSE).with_axes(hdf5_axes(file, path, (), home)))
         else:
             waiting.append(path)
 

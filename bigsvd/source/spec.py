@@ -7,6 +7,7 @@ from typing import Protocol
 
 import numpy as np
 
+from bigsvd.source.names import Names
 from bigsvd.units import show_count
 
 
@@ -69,7 +70,8 @@ class MatrixSpec:
     stored_bytes : int or None
         Bytes on disk, where the format tells.
     samples_hint : str or None
-        ``rows`` or ``columns`` where labels or markers in the file say which axis holds the samples.
+        ``rows`` or ``columns`` where labels or markers in the file say which axis holds the samples;
+        ``contradictory`` where they disagree.
     hint_reason : str
         The marker that says so, for people.
     fingerprint : str
@@ -80,6 +82,10 @@ class MatrixSpec:
         Most bytes that a thread holds beside its panel once it has read: buffers are kept for its next read.
     absent : Absent or None
         Chunks that `check_complete` found absent and the user accepts.
+    layout, marker : str
+        The layout that the file was taken for, and what in it says so; empty for arrays in memory.
+    row_names, column_names : Names or None
+        Names along either axis, not read yet.
     """
 
     name: str
@@ -96,6 +102,10 @@ class MatrixSpec:
     codecs: tuple[str, ...] = ()
     decode_bytes: int = 0
     absent: Absent | None = None
+    layout: str = ""
+    marker: str = ""
+    row_names: Names | None = None
+    column_names: Names | None = None
 
     @property
     def decoded_bytes(self) -> int:
