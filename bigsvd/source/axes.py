@@ -13,6 +13,8 @@ from bigsvd.units import show_count
 CONTRADICTORY = "contradictory"
 # Lists of names beside a matrix without a layout: how many neighbours are looked at.
 MOST_NEIGHBOURS = 200
+# What is quoted of a word and of a marker.
+LONGEST_WORD, LONGEST_MARKER = 40, 160
 _SAMPLE_LISTS = {"sample", "cell", "barcode", "ob", "observation", "subject"}
 _FEATURE_LISTS = {"gene", "feature", "var", "variable", "protein", "probe", "variant", "snp"}
 _ROW_LISTS, _COLUMN_LISTS = {"row"}, {"column", "col"}
@@ -58,6 +60,7 @@ class Axes:
         remarks: Sequence[str] = (),
     ) -> Axes:
         """Settle what markers say; names whose number is not that of their axis are left out, and that is said."""
+        marker = marker if len(marker) <= LONGEST_MARKER else f"{marker[:LONGEST_MARKER]}…"
         if len(shape) != 2:
             return cls(layout, marker)
         said, kept = list(remarks), []

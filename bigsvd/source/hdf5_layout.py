@@ -7,7 +7,7 @@ from itertools import islice
 from typing import Any
 
 from bigsvd.errors import SourceError
-from bigsvd.source.axes import MOST_NEIGHBOURS, Axes, Vote, list_kind, neighbours, votes_of_dimensions
+from bigsvd.source.axes import LONGEST_WORD, MOST_NEIGHBOURS, Axes, Vote, list_kind, neighbours, votes_of_dimensions
 from bigsvd.source.hdf5_names import Hdf5Names, attribute_text, hdf5_names
 from bigsvd.source.home import Home
 from bigsvd.source.names import Names
@@ -79,14 +79,14 @@ def _annotated(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> 
         base = base.rpartition("/")[0]
         group = file[base or "/"]
         kind = attribute_text(group, "encoding-type")
-        before = not kind and {"X", "obs", "var"} <= set(islice(group, 64)) and _is_table(group["obs"])
+        before = "" if kind or not {"obs", "var"} <= set(islice(group, 64)) else _table_kind(group["obs"])
         if kind == "anndata" or before:
             break
     else:
         return None
     at = inside[len(base) :].strip("/")
     version = f" {attribute_text(group, 'encoding-version')}".rstrip()
-    marker = "obs is a table of records, as before 0.7" if before else f"encoding-type anndata{version}"
+    marker = f"obs is {before}" if before else f"encoding-type anndata{version}"
     tables = annotated_tables(at)
     if tables is None:
         return Axes.of("AnnData", marker, shape=shape)
@@ -114,9 +114,12 @@ def annotated_tables(at: str) -> tuple[str, str] | None:
     }.get(first if "/" in at else "")
 
 
-def _is_table(thing: Any) -> bool:
-    """Whether it is a dataset of records with an index."""
-    return bool({"index", "_index"} & set(getattr(getattr(thing, "dtype", None), "names", None) or ()))
+def _table_kind(thing: Any) -> str:
+    """How tables were kept before the layout had a marker of its own; empty where it is none of them."""
+    if {"index", "_index"} & set(getattr(getattr(thing, "dtype", None), "names", None) or ()):
+        return "a table of records, as before 0.7"
+    framed = attribute_text(thing, "encoding-type") == "dataframe" and attribute_text(thing, "_index")
+    return "a table of columns, as before 0.8" if framed else ""
 
 
 def _barcodes(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> Axes | None:
@@ -153,7 +156,8 @@ def _loom(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> Axes 
     if not version and "attrs/LOOM_SPEC_VERSION" in file:
         said = file["attrs/LOOM_SPEC_VERSION"][()]
         version = said.decode("utf-8", "replace") if isinstance(said, bytes) else str(said)
-    marker = f"row_attrs and col_attrs beside matrix{f', LOOM_SPEC_VERSION {version[:20]}' if version else ''}"
+    words = f", LOOM_SPEC_VERSION {version[:LONGEST_WORD]}" if version else ""
+    marker = f"row_attrs and col_attrs beside matrix{words}"
     names = []
     for group, usual in (("row_attrs", _LOOM_ROWS), ("col_attrs", _LOOM_COLUMNS)):
         name = next((name for name in usual if name in file[group]), None)
@@ -230,7 +234,9 @@ def _dimensions(file: Any, thing: Any, inside: str, shape: Shape, home: Home) ->
 
 
 def hdf5_names_of(file: Any, dataset: Any, home: Home) -> Names | None:
-    """Names that a dataset holds, if it lies in this file."""
+    """Names that a dataset holds, if it lies in this file and its numbers mean what they are."""
+    if {"scale_factor", "add_offset"} & set(dataset.attrs):
+        return None
     return _names(file, dataset.name, home) if dataset.name and dataset.file.filename == file.filename else None
 
 
@@ -240,7 +246,9 @@ def _scale(thing: Any, axis: int) -> tuple[str, Any]:
     scale = dimension[0] if len(dimension) else None
     name = dimension.label or (str(scale.name).rsplit("/", 1)[-1] if scale is not None else "")
     empty = scale is not None and attribute_text(scale, "NAME").startswith(_NO_VARIABLE)
-    return str(name).removeprefix("_nc4_non_coord_"), None if empty else scale
+    # h5py hands out bytes where a label is no UTF-8.
+    text = name.decode("utf-8", "surrogateescape") if isinstance(name, bytes) else str(name)
+    return text.removeprefix("_nc4_non_coord_")[:LONGEST_WORD], None if empty else scale
 
 
 def _pytables(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> Axes | None:

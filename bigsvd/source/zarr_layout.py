@@ -8,7 +8,7 @@ from itertools import islice
 from typing import Any
 
 from bigsvd.errors import SourceError
-from bigsvd.source.axes import MOST_NEIGHBOURS, Axes, list_kind, neighbours, votes_of_dimensions
+from bigsvd.source.axes import LONGEST_WORD, MOST_NEIGHBOURS, Axes, list_kind, neighbours, votes_of_dimensions
 from bigsvd.source.hdf5_layout import annotated_tables
 from bigsvd.source.names import Names
 from bigsvd.source.zarr_metadata import read_metadata
@@ -58,17 +58,26 @@ def _annotated(keys: KeyStore, inside: str, shape: tuple[int, ...], follow: bool
     for depth in range(len(parts) - 1, -1, -1):
         base, at = "/".join(parts[:depth]), "/".join(parts[depth:])
         attributes = group_attributes(keys, base)
-        if attributes.get("encoding-type") == "anndata":
+        before = "" if attributes.get("encoding-type") else _table_kind(keys, f"{base}/obs".strip("/"))
+        if attributes.get("encoding-type") == "anndata" or before:
             break
     else:
         return None
     marker = f"encoding-type anndata {attributes.get('encoding-version', '')}".rstrip()
+    marker = f"obs is {before}" if before else marker
     tables = annotated_tables(at)
     if tables is None:
         return Axes.of("AnnData", marker, shape=shape)
     names = [_names(keys, f"{base}/{table}", follow) if table else None for table in tables]
     votes = [(0, f"AnnData layout: the rows of {at} are observations")] if tables[0] == "obs" else []
     return Axes.of("AnnData", marker, votes, names, shape=shape)
+
+
+def _table_kind(keys: KeyStore, obs: str) -> str:
+    """How tables were kept before the layout had a marker of its own; empty where it is none of them."""
+    table = group_attributes(keys, obs)
+    framed = table.get("encoding-type") == "dataframe" and isinstance(table.get("_index"), str)
+    return "a table of columns, as before 0.8" if framed else ""
 
 
 def _pyramid(keys: KeyStore, inside: str, shape: tuple[int, ...]) -> Axes | None:
@@ -141,8 +150,9 @@ def _dimensions(keys: KeyStore, inside: str, shape: tuple[int, ...], follow: boo
         # A name such as "a/b" would lead elsewhere; the matrix is no list of its own rows.
         taken = name is not None and "/" not in name and coordinate != inside
         names.append(_names(keys, coordinate, follow) if taken else None)
-    votes = votes_of_dimensions(called, marker) if len(shape) == 2 else []
-    words = f"{marker} {' × '.join(name or '?' for name in called)}"
+    said = [name and name[:LONGEST_WORD] for name in called]
+    votes = votes_of_dimensions(said, marker) if len(shape) == 2 else []
+    words = f"{marker} {' × '.join(name or '?' for name in said)}"
     return Axes.of("Zarr with named dimensions (xarray)", words, votes, names, shape=shape)
 
 
