@@ -12,6 +12,7 @@ import numpy as np
 
 from bigsvd.certify import Certificate
 from bigsvd.errors import OptionError, ResultError
+from bigsvd.factors.strongest import strongest_features
 from bigsvd.units import show_count
 
 if TYPE_CHECKING:
@@ -177,6 +178,26 @@ class Factors:
         loadings = self._take(self.right_vectors, range(self.shape[1]), chosen)
         loadings *= deviations
         return loadings
+
+    def strongest_features(self, count: int = 5) -> list[list[tuple[str, float]]] | None:
+        """Names and entries of the features that weigh most in each right vector, the strongest first.
+
+        Parameters
+        ----------
+        count : int
+            Features of each component.
+
+        Returns
+        -------
+        list of list of (str, float), or None
+            By component; of complex vectors the moduli. None where the features have no names.
+
+        Notes
+        -----
+        Cost: one read of V, one chunk of it held.
+        """
+        self._refuse_if_replaced()
+        return strongest_features(self.right_vectors, self.feature_names, count)
 
     def rebuild(
         self,

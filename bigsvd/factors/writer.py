@@ -91,7 +91,8 @@ class FactorsWriter:
                 remedy="Lower --rank.",
             )
         self._shape, self._rank, self._overwrite = shape, rank, overwrite
-        self._cost = store_cost(shape, rank, self._dtype)
+        named = sum(names.count for names in (sample_names, feature_names) if names is not None)
+        self._cost = store_cost(shape, rank, self._dtype, named)
         self._place = None if out is None else Place.at(out)
         self._held = lock is not None
         self._lock = lock or (None if self._place is None else OutputLock(self._place.lock, self._place.out))

@@ -11,6 +11,7 @@ from bigsvd.source.names import Names
 from bigsvd.units import show_count
 
 CONTRADICTORY = "contradictory"
+LABELS = "OME-Zarr labels"
 # Lists of names beside a matrix without a layout: how many neighbours are looked at.
 MOST_NEIGHBOURS = 200
 # What is quoted of a word and of a marker.

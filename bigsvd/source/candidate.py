@@ -7,7 +7,7 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 
 from bigsvd.errors import NoMatrixError, SeveralMatricesError, UnsupportedMatrixError
-from bigsvd.source.axes import Axes
+from bigsvd.source.axes import LABELS, Axes
 from bigsvd.source.names import Names
 from bigsvd.units import shell_word, show_count, show_shape
 
@@ -106,6 +106,8 @@ def choose(candidates: Sequence[Candidate], where: str) -> Candidate:
     """Take the one matrix that a file holds; refuse to guess between several, and say what is there if none is."""
     # Smaller copies of an image compete with nothing: they are taken only by their own name.
     usable = [candidate for candidate in candidates if candidate.usable and not candidate.level]
+    # Numbers of regions stand beside the image that is meant.
+    usable = [candidate for candidate in usable if candidate.layout != LABELS] or usable
     matrices = [candidate for candidate in usable if min(candidate.shape) > 1]
     sparse = [candidate for candidate in candidates if candidate.reason == SPARSE]
     # Files of some programs keep scalars and vectors as 1 × n matrices: they are taken only if there is nothing else.

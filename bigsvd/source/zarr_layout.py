@@ -8,7 +8,7 @@ from itertools import islice
 from typing import Any
 
 from bigsvd.errors import SourceError
-from bigsvd.source.axes import LONGEST_WORD, MOST_NEIGHBOURS, Axes, list_kind, neighbours, votes_of_dimensions
+from bigsvd.source.axes import LABELS, LONGEST_WORD, MOST_NEIGHBOURS, Axes, list_kind, neighbours, votes_of_dimensions
 from bigsvd.source.hdf5_layout import annotated_tables
 from bigsvd.source.names import Names
 from bigsvd.source.zarr_metadata import read_metadata
@@ -84,14 +84,22 @@ def _pyramid(keys: KeyStore, inside: str, shape: tuple[int, ...]) -> Axes | None
     parts = inside.split("/")
     for depth in range(len(parts) - 1, -1, -1):
         base = "/".join(parts[:depth])
-        found = levels_of(group_attributes(keys, base))
+        attributes = group_attributes(keys, base)
+        found = levels_of(attributes)
         at = inside[len(base) :].strip("/")
         if at in found.paths:
             level = found.paths.index(at)
             said = f"level {level} of {len(found.paths)} of the image at {'/' + base}, {found.marker}"
             axes = f"; axes {' '.join(found.axes)}" if found.axes else ""
-            return Axes.of("OME-Zarr", said + axes, shape=shape)
+            return Axes.of(LABELS if _labels(attributes, base) else "OME-Zarr", said + axes, shape=shape)
     return None
+
+
+def _labels(attributes: dict[str, Any], base: str) -> bool:
+    """Whether an image holds numbers of regions of another, which lie below its group ``labels``."""
+    newer = attributes.get("ome")
+    said = "image-label" in attributes or (isinstance(newer, dict) and "image-label" in newer)
+    return said or "labels" in base.split("/")[:-1]
 
 
 @dataclass(frozen=True)
