@@ -34,7 +34,7 @@ def outcome(path: Path) -> str:
     try:
         found = survey(path)
     except BigsvdError as error:
-        why = re.search(r"looks like (.*)|(it is empty \(0 bytes\))", "; ".join(error.evidence))
+        why = re.search(r"looks like ([^;:]*)|(it is empty \(0 bytes\))", "; ".join(error.evidence))
         return f"refused as {type(error).__name__}: {why[1] or why[2] if why else _without(error.problem, path)}"
     usable = [one for one in found if one.usable]
     if usable:
