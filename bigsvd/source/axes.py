@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 
 from bigsvd.source.hints import Hint, word_of
 from bigsvd.source.names import Names
@@ -131,6 +132,7 @@ def neighbours(lists: Iterable[tuple[str, Names]], shape: tuple[int, ...]) -> tu
     return votes, taken
 
 
+@lru_cache(maxsize=4096)
 def list_kind(name: str) -> str:
     """What a list is of, by its name: ``samples``, ``features``, ``rows``, ``columns``; empty where it does not say.
 

@@ -8,6 +8,7 @@ from typing import Any
 
 from bigsvd.errors import SourceError
 from bigsvd.source.axes import LONGEST_WORD, MOST_NEIGHBOURS, Axes, Vote, list_kind, neighbours, votes_of_dimensions
+from bigsvd.source.hdf5_links import require_path_inside
 from bigsvd.source.hdf5_names import Hdf5Names, attribute_text, hdf5_names
 from bigsvd.source.home import Home
 from bigsvd.source.names import Names
@@ -64,6 +65,20 @@ def hdf5_axes(file: Any, inside: str, shape: Shape, home: Home) -> Axes:
         return Axes("plain HDF5", "markers around it cannot be read")
 
 
+def _holds(group: Any, *names: str) -> bool:
+    """Whether a group has all of these names; no link is followed for it."""
+    return all(group.id.links.exists(name.encode()) for name in names)
+
+
+def _object(file: Any, inside: str, home: Home) -> Any:
+    """What lies under a path of the file; None where nothing does, or where the path leads out of the folder."""
+    try:
+        require_path_inside(file, inside, home)
+    except SourceError:
+        return None
+    return file.get(inside)
+
+
 def _names(file: Any, inside: str, home: Home) -> Names | None:
     """Names under a path, None where there are none that can be taken."""
     try:
@@ -79,7 +94,7 @@ def _annotated(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> 
         base = base.rpartition("/")[0]
         group = file[base or "/"]
         kind = attribute_text(group, "encoding-type")
-        before = "" if kind or not {"obs", "var"} <= set(islice(group, 64)) else _table_kind(group["obs"])
+        before = "" if kind or not _holds(group, "obs", "var") else _table_kind(_object(file, f"{base}/obs", home))
         if kind == "anndata" or before:
             break
     else:
@@ -124,18 +139,21 @@ def _table_kind(thing: Any) -> str:
 
 def _barcodes(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> Axes | None:
     """Feature-barcode matrices: a sparse group with its names inside."""
-    if hasattr(thing, "dtype") or "barcodes" not in thing:
+    if hasattr(thing, "dtype") or not _holds(thing, "barcodes"):
         return None
-    third = "features" in thing and "id" in thing["features"]
-    if not third and "genes" not in thing:
+    third = _object(file, f"{inside}/features/id", home) is not None
+    if not third and not _holds(thing, "genes"):
         return None
     marker = "barcodes and features beside data" if third else "barcodes and genes beside data, the older form"
     shown, identifiers = ("features/name", "features/id") if third else ("gene_names", "genes")
     cells = _names(file, f"{inside}/barcodes", home)
-    features = _names(file, f"{inside}/{shown if shown in thing else identifiers}", home)
-    if features is not None and shown in thing and thing[identifiers].shape == thing[shown].shape:
+    called = _names(file, f"{inside}/{shown}", home)
+    features = _names(file, f"{inside}/{identifiers}", home)
+    if called is not None and (features is None or called.count != features.count):
+        features = called
+    elif called is not None and features is not None:
         store = Hdf5Names(home.path, f"{inside}/{shown}", also=f"{inside}/{identifiers}", follow=home.follow)
-        features = Names(features.count, features.words, store)
+        features = Names(called.count, called.words, store)
     if cells is None or features is None:
         return Axes.of("feature-barcode", marker, shape=shape)
     # Features × barcodes stored by columns is barcodes × features stored by rows; a reader may show it either way.
@@ -147,21 +165,22 @@ def _barcodes(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> A
 
 def _loom(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> Axes | None:
     """Loom: genes × cells."""
-    if not {"row_attrs", "col_attrs", "matrix"} <= set(islice(file, 64)):
+    if not _holds(file, "row_attrs", "col_attrs", "matrix"):
         return None
     at = inside.strip("/")
     if at != "matrix" and not at.startswith("layers/"):
         return None
     version = attribute_text(file, "LOOM_SPEC_VERSION")
-    if not version and "attrs/LOOM_SPEC_VERSION" in file:
-        said = file["attrs/LOOM_SPEC_VERSION"][()]
+    kept = _object(file, "/attrs/LOOM_SPEC_VERSION", home) if not version else None
+    if kept is not None and getattr(kept, "shape", None) == ():
+        said = kept[()]
         version = said.decode("utf-8", "replace") if isinstance(said, bytes) else str(said)
     words = f", LOOM_SPEC_VERSION {version[:LONGEST_WORD]}" if version else ""
     marker = f"row_attrs and col_attrs beside matrix{words}"
     names = []
     for group, usual in (("row_attrs", _LOOM_ROWS), ("col_attrs", _LOOM_COLUMNS)):
-        name = next((name for name in usual if name in file[group]), None)
-        names.append(_names(file, f"/{group}/{name}", home) if name else None)
+        tries = (_names(file, f"/{group}/{name}", home) for name in usual)
+        names.append(next((found for found in tries if found is not None), None))
     return Axes.of("Loom", marker, [(1, "Loom layout: the columns of the matrix are samples")], names, shape=shape)
 
 
@@ -181,7 +200,7 @@ def _nwb(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> Axes |
         return None
     series = thing.parent
     kind = attribute_text(series, "neurodata_type")
-    timed = inside.endswith("/data") and bool({"timestamps", "starting_time"} & set(islice(series, 64)))
+    timed = inside.endswith("/data") and (_holds(series, "timestamps") or _holds(series, "starting_time"))
     votes: list[Vote] = [(0, f"NWB layout: time comes first in a {kind or 'series'}")] if timed else []
     return Axes.of("NWB", f"nwb_version {version}{f', {kind}' if kind else ''}", votes, shape=shape)
 
@@ -208,7 +227,7 @@ def _pandas(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> Axe
 
 def _labels(file: Any, inside: str, home: Home) -> Names | None:
     """Labels of a pandas axis; those that were pickled are never read."""
-    found = _names(file, inside, home) if inside in file else None
+    found = _names(file, inside, home)
     kind = attribute_text(file[inside], "kind") if found is not None else ""
     if found is None or not kind.startswith("datetime64"):
         return found

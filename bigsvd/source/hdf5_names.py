@@ -13,8 +13,8 @@ from bigsvd.errors import NoMatrixError, UnsupportedMatrixError
 from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
 from bigsvd.source.hdf5_links import require_path_inside
 from bigsvd.source.home import Home
-from bigsvd.source.names import MOST_CATEGORIES, Names, Read, repeated, to_text
-from bigsvd.units import shell_word, show_count
+from bigsvd.source.names import MOST_CATEGORIES, MOST_CATEGORY_LETTERS, Names, Read, repeated, to_text
+from bigsvd.units import shell_word, show_bytes, show_count
 
 INDEX_FIELDS = ("index", "_index")
 
@@ -66,13 +66,24 @@ class Hdf5Names:
                 return to_text(values, padded=padded or dataset.ndim == 2, dates=self.dates)
 
             if self.categories:
-                words = to_text(file[self.categories][...], padded=_padded(file[self.categories]))
+                words = self._held(len(file[self.categories]))
                 yield lambda start, stop: _by_code(words, dataset[start:stop])
             elif self.also:
                 alone = Names(len(dataset), self.inside, replace(self, also=""))
                 yield _told_apart(plain, file[self.also], repeated(alone))
             else:
                 yield plain
+
+    def _held(self, count: int) -> list[str]:
+        """All distinct values of a categorical column, if they can be held."""
+        words: list[str] = []
+        letters = 0
+        for block in Names(count, self.categories, Hdf5Names(self.path, self.categories, follow=self.follow)).blocks():
+            letters += sum(map(len, block))
+            if letters > MOST_CATEGORY_LETTERS:
+                raise _refusal(self.path, self.categories, f"more than {show_bytes(letters)} of categories")
+            words += block
+        return words
 
 
 def hdf5_names(file: Any, inside: str, home: Home) -> Names:

@@ -15,7 +15,7 @@ from bigsvd.units import show_count
 # Names of a block: few at first, since their length is not known, then as many as make about so many letters.
 FIRST_BLOCK, MOST_BLOCK, BLOCK_LETTERS = 64, 16_384, 2**20
 # Distinct values of a categorical column, which are held while its codes are read.
-MOST_CATEGORIES = 100_000
+MOST_CATEGORIES, MOST_CATEGORY_LETTERS = 100_000, 2**24
 
 Read = Callable[[int, int], list[str]]
 

@@ -15,6 +15,8 @@ from bigsvd.source.zarr_metadata import read_metadata
 from bigsvd.source.zarr_names import zarr_names
 from bigsvd.source.zarr_store import KeyStore, group_attributes
 
+Above = list[tuple[str, dict[str, Any]]]
+
 
 def zarr_axes(keys: KeyStore, inside: str, shape: tuple[int, ...], *, follow: bool = False) -> Axes:
     """Recognise the layout around a matrix; metadata only are read.
@@ -34,9 +36,10 @@ def zarr_axes(keys: KeyStore, inside: str, shape: tuple[int, ...], *, follow: bo
     Axes
     """
     try:
+        above = _groups_above(keys, inside)
         return (
-            _annotated(keys, inside, shape, follow)
-            or _pyramid(keys, inside, shape)
+            _annotated(keys, inside, shape, follow, above)
+            or _pyramid(inside, shape, above)
             or _dimensions(keys, inside, shape, follow)
             or _plain(keys, inside, shape, follow)
         )
@@ -53,11 +56,16 @@ def _names(keys: KeyStore, inside: str, follow: bool) -> Names | None:
         return None
 
 
-def _annotated(keys: KeyStore, inside: str, shape: tuple[int, ...], follow: bool) -> Axes | None:
+def _groups_above(keys: KeyStore, inside: str) -> Above:
+    """Path and attributes of the groups around an array, the nearest first."""
     parts = inside.split("/")
-    for depth in range(len(parts) - 1, -1, -1):
-        base, at = "/".join(parts[:depth]), "/".join(parts[depth:])
-        attributes = group_attributes(keys, base)
+    bases = ["/".join(parts[:depth]) for depth in range(len(parts) - 1, -1, -1)]
+    return [(base, group_attributes(keys, base)) for base in bases]
+
+
+def _annotated(keys: KeyStore, inside: str, shape: tuple[int, ...], follow: bool, above: Above) -> Axes | None:
+    for base, attributes in above:
+        at = inside[len(base) :].strip("/")
         before = "" if attributes.get("encoding-type") else _table_kind(keys, f"{base}/obs".strip("/"))
         if attributes.get("encoding-type") == "anndata" or before:
             break
@@ -80,11 +88,8 @@ def _table_kind(keys: KeyStore, obs: str) -> str:
     return "a table of columns, as before 0.8" if framed else ""
 
 
-def _pyramid(keys: KeyStore, inside: str, shape: tuple[int, ...]) -> Axes | None:
-    parts = inside.split("/")
-    for depth in range(len(parts) - 1, -1, -1):
-        base = "/".join(parts[:depth])
-        attributes = group_attributes(keys, base)
+def _pyramid(inside: str, shape: tuple[int, ...], above: Above) -> Axes | None:
+    for base, attributes in above:
         found = levels_of(attributes)
         at = inside[len(base) :].strip("/")
         if at in found.paths:

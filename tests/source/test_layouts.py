@@ -15,7 +15,7 @@ from layout_samples import CELLS, COLUMNS, GENES, ROWS, numbers, versions
 from source_samples import read_whole
 
 from bigsvd.report import survey_facts, survey_lines
-from bigsvd.source import Candidate, Names, open_source, survey
+from bigsvd.source import Access, Candidate, Names, open_source, survey
 from bigsvd.source.axes import Axes, list_kind
 from bigsvd.source.hdf5_layout import hdf5_axes
 from bigsvd.source.home import Home
@@ -221,6 +221,19 @@ def test_markers_that_cannot_be_read_leave_the_matrix_as_it_is(tmp_path: Path) -
         file["var"] = h5py.ExternalLink("/etc/hostname", "/x")
     spec = open_source(tmp_path / "a.h5").spec
     assert (spec.layout, spec.row_names, spec.column_names) == ("AnnData", None, None)
+
+
+def test_no_link_out_of_the_folder_is_followed_to_recognise_a_layout(tmp_path: Path) -> None:
+    (tmp_path / "here").mkdir()
+    made.write_records(tmp_path / "far.h5")
+    with h5py.File(tmp_path / "here" / "a.h5", "w") as file:
+        file["X"] = numbers()
+        for table in ("obs", "var"):
+            file[table] = h5py.ExternalLink("../far.h5", f"/{table}")
+    assert open_source(tmp_path / "here" / "a.h5", "X").spec.layout == "plain HDF5"
+    followed = open_source(tmp_path / "here" / "a.h5", "X", Access(follow_links=True)).spec
+    assert followed.layout == "AnnData"
+    assert all_of(followed.row_names) == CELLS
 
 
 @pytest.mark.parametrize(("name", "kind"), [("Barcodes", "samples"), ("var_names", "features"), ("notes", "")])
