@@ -43,7 +43,8 @@ def survey_lines(where: str, found: Sequence[Candidate], width: int) -> list[str
     if usable:
         lines += ["", *_matrix_table(usable, width)]
     lines += [line for words in _layouts(found) for line in ["", *wrap(words, width)]]
-    lines += [line for one in usable for words in _notes(one) for line in ["", *wrap(words, width)]]
+    notes = [*_axes_notes(usable), *(words for one in usable for words in _notes(one))]
+    lines += [line for words in notes for line in ["", *wrap(words, width)]]
     if usable:
         lines += ["", "To decompose, type:", *_to_type(where, usable)]
     if copies:
@@ -101,20 +102,39 @@ def _layouts(found: Sequence[Candidate]) -> list[str]:
     ]
 
 
-def _notes(candidate: Candidate) -> list[str]:
-    """What is to be known of a matrix before it is decomposed: its axes, and parts that are absent or lie elsewhere."""
-    notes = []
+def _axes_notes(usable: Sequence[Candidate]) -> list[str]:
+    """What the file says of samples and names; matrices of which the same is said together."""
+    together: dict[tuple[str, ...], list[str]] = {}
+    for one in usable:
+        for words in _said_of_axes(one):
+            together.setdefault(words, []).append(_name(one))
+    return [
+        f"{_listed(names, 'matrices')}: {before}{'its' if len(names) == 1 else 'their'}{after}"
+        if after
+        else f"{_listed(names, 'matrices')}: {before}"
+        for (before, after), names in together.items()
+    ]
+
+
+def _said_of_axes(candidate: Candidate) -> list[tuple[str, str]]:
+    """Sentences about the axes of a matrix, cut where one says its or their."""
+    said = []
     hint, reason = candidate.samples_hint, candidate.hint_reason
     if hint == CONTRADICTORY:
-        words = f"markers contradict each other about its samples ({reason})"
-        notes.append(f"{_name(candidate)}: {words}; say --samples rows or --samples columns")
+        words = f"markers contradict each other about the samples ({reason})"
+        said.append((f"{words}; say --samples rows or --samples columns", ""))
     elif hint:
-        notes.append(f"{_name(candidate)}: samples are its {hint} ({reason})")
+        said.append(("samples are ", f" {hint} ({reason})"))
     named = (("rows", candidate.row_names), ("columns", candidate.column_names))
     places = [f"of {which} in {names.words}" for which, names in named if names is not None]
     if places:
-        notes.append(f"{_name(candidate)}: names {', '.join(places)}")
-    notes += [f"{_name(candidate)}: {remark}" for remark in candidate.remarks]
+        said.append((f"names {', '.join(places)}", ""))
+    return [*said, *((remark, "") for remark in candidate.remarks)]
+
+
+def _notes(candidate: Candidate) -> list[str]:
+    """What is to be known of a matrix before it is decomposed: parts that are absent, or lie elsewhere."""
+    notes = []
     if candidate.absent_chunks:
         count, several = show_count(candidate.absent_chunks), candidate.absent_chunks > 1
         notes.append(
@@ -128,8 +148,8 @@ def _notes(candidate: Candidate) -> list[str]:
 
 def _listed(files: Sequence[str], what: str = "files") -> str:
     """A few files by name, the others counted."""
-    more = f" and {show_count(len(files) - 3)} more {what}" if len(files) > 3 else ""
-    return ", ".join(files[:3]) + more
+    more = f" and {show_count(len(files) - 3)} more {what}" if len(files) > 4 else ""
+    return ", ".join(files if len(files) <= 4 else files[:3]) + more
 
 
 def _name(candidate: Candidate) -> str:

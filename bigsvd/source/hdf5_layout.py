@@ -106,7 +106,7 @@ def _annotated(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> 
     if tables is None:
         return Axes.of("AnnData", marker, shape=shape)
     names = [_names(file, f"{base}/{table}", home) if table else None for table in tables]
-    votes = [(0, f"AnnData layout: the rows of {at} are observations")] if tables[0] == "obs" else []
+    votes = [(0, "AnnData layout: rows are observations")] if tables[0] == "obs" else []
     return Axes.of("AnnData", marker, votes, names, shape=shape)
 
 

@@ -77,7 +77,7 @@ def _annotated(keys: KeyStore, inside: str, shape: tuple[int, ...], follow: bool
     if tables is None:
         return Axes.of("AnnData", marker, shape=shape)
     names = [_names(keys, f"{base}/{table}", follow) if table else None for table in tables]
-    votes = [(0, f"AnnData layout: the rows of {at} are observations")] if tables[0] == "obs" else []
+    votes = [(0, "AnnData layout: rows are observations")] if tables[0] == "obs" else []
     return Axes.of("AnnData", marker, votes, names, shape=shape)
 
 
