@@ -30,7 +30,7 @@ from bigsvd.drive import (
     write_result,
 )
 from bigsvd.errors import OptionError
-from bigsvd.factors import Factors, check_output, open_factors, store_cost
+from bigsvd.factors import Factors, check_output, open_factors, plan_names, store_cost
 from bigsvd.journal import check_interval, discard_finished
 from bigsvd.plan import Request, make_plan
 from bigsvd.report import Listeners, watch
@@ -62,6 +62,11 @@ def open_matrix(path: Any, matrix: str | None = None, **reading: Any) -> Source:
         missing : {"refuse", "mean", "drop-columns", "drop-rows"}
             What becomes of missing entries (NaN). One more read before the sweeps counts them; they then take the mean
             of their feature, or stored columns or rows that have any are left out. Infinity is always refused.
+        level : int
+            Of an image kept in several resolutions (OME-Zarr), which; 0, the full one, by default.
+        row_names, column_names : str
+            Names of the stored rows and columns, where the file's own are missing or others are wanted: a path inside
+            the file, ``FILE:PATH``, a text file with a name a line, or an .npy file of text.
 
     Returns
     -------
@@ -134,7 +139,7 @@ def decompose(
         variance : float
             Instead of a rank: the share of the total variance to reach, with at most `max_rank` (500) components.
         samples : {"rows", "columns"}
-            Stored axis that holds the samples; rows unless labels in the file say otherwise.
+            Stored axis that holds the samples; by default as markers in the file say, else rows.
         center : {"features", "none"}
         scale : {"none", "unit"}
             Unit variance with n − 1; constant features stay zero.
@@ -422,7 +427,8 @@ def _result_bytes(spec: MatrixSpec, rank: int) -> int:
     """What writing the result holds in memory."""
     wide = np.dtype(np.complex128 if spec.dtype.kind == "c" else np.float64)
     # Which axis holds the samples does not change the sum over both sides.
-    return store_cost(spec.shape, rank, wide).memory_bytes
+    named = [plan_names(names.count, names.held) for names in (spec.row_names, spec.column_names) if names is not None]
+    return store_cost(spec.shape, rank, wide).memory_bytes + sum(cost.memory_bytes for cost in named)
 
 
 def _path_of(source: Any) -> Path | None:

@@ -19,6 +19,11 @@ class Reading:
         Take packed entries as they are stored.
     missing : str
         What becomes of missing entries, a word of `POLICIES`.
+    level : int or None
+        Of an image in several resolutions, which; 0, the full one, by default.
+    row_names, column_names : str or None
+        Where the names of rows and columns stand: a path inside the file of the matrix, ``FILE:PATH``, a text file
+        with a name a line, or an .npy file of text. By default where the layout of the file keeps them.
     """
 
     absent: str = "refuse"
@@ -26,6 +31,9 @@ class Reading:
     sparse_format: str | None = None
     raw: bool = False
     missing: str = "refuse"
+    level: int | None = None
+    row_names: str | None = None
+    column_names: str | None = None
 
     @property
     def access(self) -> Access:

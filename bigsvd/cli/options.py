@@ -60,6 +60,23 @@ def sparse_option(command: Command) -> Command:
     return click.option("--sparse-format", type=click.Choice(["csr", "csc"]), help=text)(command)
 
 
+def level_option(command: Command) -> Command:
+    """Add ``--level``."""
+    text = "Of an image kept in several resolutions (OME-Zarr), which one.  [default: 0, the full one]"
+    return click.option("--level", type=int, metavar="N", help=text)(command)
+
+
+def names_options(command: Command) -> Command:
+    """Add ``--row-names`` and ``--column-names``."""
+    text = "Names of the stored columns, likewise."
+    command = click.option("--column-names", metavar="PLACE", help=text)(command)
+    text = (
+        "Names of the stored rows: a path inside FILE, OTHER:PATH, a text file with a name a line, or an .npy file."
+        "  [default: where the layout of FILE keeps them]"
+    )
+    return click.option("--row-names", metavar="PLACE", help=text)(command)
+
+
 def reading_options(command: Command) -> Command:
     """Add the options that decide what the entries of FILE are; see `bigsvd.adapt.Reading`."""
     command = sparse_option(command)
@@ -72,7 +89,9 @@ def reading_options(command: Command) -> Command:
     choices = click.Choice(["refuse", "mean", "drop-columns", "drop-rows"])
     command = click.option("--missing", type=choices, help=gaps)(command)
     text = "What to do with chunks that were never written: stop, or read the fill value.  [default: refuse]"
-    return click.option("--absent", type=click.Choice(["refuse", "fill"]), help=text)(links_option(command))
+    return click.option("--absent", type=click.Choice(["refuse", "fill"]), help=text)(
+        links_option(level_option(command))
+    )
 
 
 def machine_options(command: Command) -> Command:
@@ -103,12 +122,11 @@ def _number(name: str, kind: type, metavar: str, text: str) -> Callable[[Any], A
 _DECOMPOSITION: tuple[Callable[[Any], Any], ...] = (
     matrix_option,
     reading_options,
+    names_options,
     _number("--rank", int, "K", "Components to compute.  [default: 50]"),
     _number("--variance", float, "SHARE", "Instead of a rank: the share of the total variance to reach, such as 0.95."),
     _number("--max-rank", int, "K", "Most components that --variance may lead to.  [default: 500]"),
-    _choice(
-        "--samples", "rows columns", "Stored axis that holds the samples.  [default: rows, unless the file objects]"
-    ),
+    _choice("--samples", "rows columns", "Stored axis that holds the samples.  [default: as the file says, else rows]"),
     _choice("--center", "features none", "Subtract the mean of every feature, as PCA does.  [default: features]"),
     _choice("--scale", "unit none", "Divide every feature by its standard deviation (n − 1).  [default: none]"),
     _number("--tolerance", float, "T", "Wanted width of the intervals relative to their values.  [default: 1e-3]"),

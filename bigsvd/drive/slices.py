@@ -60,7 +60,7 @@ class SliceSource:
         shape = (rows[1] - rows[0], columns[1] - columns[0])
         self._spec = replace(
             parent.spec, name=f"{parent.spec.name}[{rows[0]}:{rows[1]}, {columns[0]}:{columns[1]}]", shape=shape,
-            chunks=(1, 1), stored_bytes=None, samples_hint=None, fingerprint="",
+            chunks=(1, 1), stored_bytes=None, samples_hint=None, fingerprint="", row_names=None, column_names=None,
             # What is left of a sparse matrix is read as a dense rectangle.
             nonzeros=None, compressed_axis=None,
         )  # fmt: skip

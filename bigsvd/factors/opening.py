@@ -88,6 +88,9 @@ def load_factors(files: StoreFiles, record: dict[str, Any], path: Path | None, i
         assert isinstance(part, zarr.Group)
         return {key: np.asarray(array[...]) for key, array in part.arrays()}
 
+    def names(name: str) -> zarr.Array[Any] | None:
+        return vectors(name) if name in group else None
+
     left, right = vectors("left_vectors"), vectors("right_vectors")
     return Factors(
         shape=(left.shape[0], right.shape[0]),
@@ -99,6 +102,8 @@ def load_factors(files: StoreFiles, record: dict[str, Any], path: Path | None, i
         certificate=Certificate.restore(members("certificate"), from_plain(dict(group["certificate"].attrs))),
         attributes={key: from_plain(entry) for key, entry in record.items() if key not in RESERVED or key == "created"},
         path=path,
+        sample_names=names("row_name"),
+        feature_names=names("column_name"),
         _root=identity,
     )
 

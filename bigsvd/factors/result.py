@@ -12,6 +12,7 @@ import numpy as np
 
 from bigsvd.certify import Certificate
 from bigsvd.errors import OptionError, ResultError
+from bigsvd.factors.strongest import strongest_features
 from bigsvd.units import show_count
 
 if TYPE_CHECKING:
@@ -68,6 +69,8 @@ class Factors:
         Source, preparation, plan, seed, versions and so on, as the run recorded them.
     path : Path or None
         The store; None in memory.
+    sample_names, feature_names : zarr.Array or None
+        Names of the rows of either side as text, read from disk when sliced; None where the file has none.
 
     Examples
     --------
@@ -113,6 +116,8 @@ class Factors:
     certificate: Certificate
     attributes: dict[str, Any]
     path: Path | None
+    sample_names: zarr.Array[Any] | None = None
+    feature_names: zarr.Array[Any] | None = None
     _root: tuple[int, ...] = field(default=())
 
     def scores(self, components: int | Sequence[int] | np.ndarray | None = None) -> np.ndarray:
@@ -173,6 +178,26 @@ class Factors:
         loadings = self._take(self.right_vectors, range(self.shape[1]), chosen)
         loadings *= deviations
         return loadings
+
+    def strongest_features(self, count: int = 5) -> list[list[tuple[str, float]]] | None:
+        """Names and entries of the features that weigh most in each right vector, the strongest first.
+
+        Parameters
+        ----------
+        count : int
+            Features of each component.
+
+        Returns
+        -------
+        list of list of (str, float), or None
+            By component; of complex vectors the moduli. None where the features have no names.
+
+        Notes
+        -----
+        Cost: one read of V, one chunk of it held.
+        """
+        self._refuse_if_replaced()
+        return strongest_features(self.right_vectors, self.feature_names, count)
 
     def rebuild(
         self,

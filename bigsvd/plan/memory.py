@@ -111,9 +111,7 @@ def memory_terms(
         # Kept from one read to the next, hence in every phase.
         held.append(MemoryTerm(workers * spec.decode_bytes, f"buffers in which {workers} workers decode"))
     if spec.held_bytes:
-        held.append(
-            MemoryTerm(spec.held_bytes, "held for reading: pointers, places, means")
-        )
+        held.append(MemoryTerm(spec.held_bytes, "held for reading: pointers, places, means"))
     if resident:
         held.append(_resident(spec, geometry))
     held.append(

@@ -65,6 +65,7 @@ def plan_lines(forecast: Foresight, width: int) -> list[str]:
         ("", f"{_size_words(plan)}{stored}{f'; {spec.encoding}' if spec.encoding else ''}"),
         ("", plan.orientation_words()),
         *reading_words(spec),
+        *(("", words) for words in plan.reading_words()),
         *(("caution", caution) for caution in spec.cautions),
     ]
     goal = f"rank {plan.rank}" if plan.request.variance is None else f"{plan.request.variance:g} of the variance"
@@ -98,6 +99,7 @@ def announcement(forecast: Foresight, width: int) -> list[str]:
         ("matrix", matrix),
         ("", plan.orientation_words()),
         *reading_words(spec),
+        *(("", words) for words in plan.reading_words()),
         ("route", f"{plan.route}, {panels}, {plan.workers} {'worker' if plan.workers == 1 else 'workers'}"),
         ("memory", memory),
         ("time", _time_words(forecast)),
@@ -115,6 +117,7 @@ def plan_facts(forecast: Foresight) -> Json:
         "source": plan.spec,
         "request": plan.request,
         "orientation": plan.orientation_words(),
+        "understood": plan.reading_words(),
         "samples": plan.samples,
         "features": plan.features,
         "rank": plan.rank,

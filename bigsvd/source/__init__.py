@@ -1,29 +1,39 @@
 """Where a matrix comes from: files and arrays behind one interface."""
 
 from bigsvd.source.access import Access
+from bigsvd.source.axes import CONTRADICTORY
 from bigsvd.source.candidate import Candidate
 from bigsvd.source.complete import check_complete
-from bigsvd.source.open import open_source, survey
+from bigsvd.source.names import Names, repeated, showable
+from bigsvd.source.names import to_text as names_to_text
+from bigsvd.source.open import find_names, open_source, survey
 from bigsvd.source.packing import Packing
 from bigsvd.source.rectangle import fill_by_bands, require_rectangle, tile_bytes, tiles
 from bigsvd.source.spec import LineNonzeros, LineSource, MatrixSpec, Missing, Source, line_counter
-from bigsvd.source.stamp import digest
+from bigsvd.source.stamp import FileStamp, digest
 
 __all__ = [
+    "CONTRADICTORY",
     "Access",
     "Candidate",
+    "FileStamp",
     "LineNonzeros",
     "LineSource",
     "MatrixSpec",
     "Missing",
+    "Names",
     "Packing",
     "Source",
     "check_complete",
     "digest",
     "fill_by_bands",
+    "find_names",
     "line_counter",
+    "names_to_text",
     "open_source",
+    "repeated",
     "require_rectangle",
+    "showable",
     "survey",
     "tile_bytes",
     "tiles",

@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import json
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from bigsvd.errors import NoMatrixError, SeveralMatricesError, UnsupportedMatrixError
+from bigsvd.source.axes import LABELS, Axes
+from bigsvd.source.names import Names
 from bigsvd.source.packing import Packing
 from bigsvd.units import shell_word, show_count, show_shape
 
@@ -47,6 +49,12 @@ class Candidate:
         Whether it is a group that holds a sparse matrix; its sizes are those of the matrix made dense.
     packing : Packing or None
         How its entries are packed; None where they are not.
+    layout, marker, row_names, column_names
+        As in `MatrixSpec`.
+    remarks : tuple of str
+        Weaker signs around it, and why names were not taken.
+    level : int or None
+        Of an array in an image of several resolutions, which: 0 is the full one, and the others are its copies.
     """
 
     path: str
@@ -65,6 +73,19 @@ class Candidate:
     nonzeros: int | None = None
     sparse: bool = False
     packing: Packing | None = None
+    layout: str = ""
+    marker: str = ""
+    row_names: Names | None = None
+    column_names: Names | None = None
+    remarks: tuple[str, ...] = ()
+    level: int | None = None
+
+    def with_axes(self, axes: Axes) -> Candidate:
+        """The same array with what was recognised around it."""
+        return replace(
+            self, layout=axes.layout, marker=axes.marker, samples_hint=axes.samples_hint, hint_reason=axes.hint_reason,
+            row_names=axes.row_names, column_names=axes.column_names, remarks=axes.remarks,
+        )  # fmt: skip
 
     @property
     def line(self) -> str:
@@ -89,7 +110,10 @@ def why_unusable(shape: tuple[int, ...] | None, numeric: bool, type_words: str) 
 
 def choose(candidates: Sequence[Candidate], where: str) -> Candidate:
     """Take the one matrix that a file holds; refuse to guess between several, and say what is there if none is."""
-    usable = [candidate for candidate in candidates if candidate.usable]
+    # Smaller copies of an image compete with nothing: they are taken only by their own name.
+    usable = [candidate for candidate in candidates if candidate.usable and not candidate.level]
+    # Numbers of regions stand beside the image that is meant.
+    usable = [candidate for candidate in usable if candidate.layout != LABELS] or usable
     matrices = [candidate for candidate in usable if min(candidate.shape) > 1]
     sparse = [candidate for candidate in candidates if candidate.sparse and not candidate.usable]
     # Files of some programs keep scalars and vectors as 1 × n matrices: they are taken only if there is nothing else.

@@ -67,7 +67,7 @@ class Hdf5Source:
             require_inside(file, dataset, Home(path, follow=access.follow_links))
             others = [os.path.abspath(file[dataset].file.filename), *other_files(file[dataset])]
             self.stamps += tuple(FileStamp.of(name) for name in others if name != path and os.path.exists(name))
-            self.spec = _spec(self._shown(file[dataset]), path, dataset, self.stamps)
+            self.spec = _spec(self._shown(file[dataset]), path, dataset, self.stamps, access)
         self._opened()
 
     def _forget(self) -> None:
@@ -249,8 +249,8 @@ def open_dataset(file: Any, inside: str) -> Any:
     return dataset
 
 
-def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -> MatrixSpec:
-    said = describe(dataset, inside)
+def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...], access: Access) -> MatrixSpec:
+    said = describe(dataset, inside, follow=access.follow_links)
     stored = dataset.dtype
     dtype = decoded_type(stored)
     if dtype is None or not said.usable:
@@ -277,9 +277,13 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -
         samples_hint=said.samples_hint,
         hint_reason=said.hint_reason,
         fingerprint=digest(stamps, inside, dataset.shape, stored, said.encoding),
-        cautions=type_caution(stored) + packing_cautions(said.packing),
+        cautions=type_caution(stored) + packing_cautions(said.packing) + said.remarks,
         codecs=codecs,
         packing=said.packing,
+        layout=said.layout,
+        marker=said.marker,
+        row_names=said.row_names,
+        column_names=said.column_names,
     )
 
 

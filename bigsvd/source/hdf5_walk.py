@@ -10,10 +10,11 @@ from typing import Any
 from bigsvd.errors import OutsideError, SourceError
 from bigsvd.source.candidate import Candidate
 from bigsvd.source.hdf5_dataset import describe
+from bigsvd.source.hdf5_layout import hdf5_axes
 from bigsvd.source.hdf5_links import outside_files, require_path_inside
 from bigsvd.source.home import Home
 from bigsvd.source.rectangle import grid_shape
-from bigsvd.source.sparse_describe import describe_sparse
+from bigsvd.source.sparse_describe import describe_sparse, with_surroundings
 from bigsvd.source.sparse_hdf5 import Hdf5Group
 from bigsvd.source.sparse_layout import SPARSE_MEMBERS
 from bigsvd.units import show_count
@@ -108,7 +109,7 @@ def _visit(
     visited.add(identity)
     if isinstance(thing, h5py.Dataset):
         try:
-            said = describe(thing, path)
+            said = describe(thing, path, follow=home.follow)
             outside = outside_files(file, path, home)
             if said.usable and outside and not home.follow:
                 said = replace(
@@ -142,6 +143,7 @@ def _sparse_members(
         return ()
     if said.usable and outside and not home.follow:
         said = replace(said, usable=False, reason=f"it lies partly in {outside[0]}: add --follow-links to read it")
+    said = with_surroundings(said, hdf5_axes(file, path, said.shape, home))
     found.append(replace(said, outside=outside))
     return layout.members if layout is not None else SPARSE_MEMBERS
 

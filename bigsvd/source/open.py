@@ -13,6 +13,7 @@ from bigsvd.source.access import STRICT, Access
 from bigsvd.source.candidate import Candidate, choose, listing
 from bigsvd.source.container import container
 from bigsvd.source.home import Home
+from bigsvd.source.names import Names
 from bigsvd.source.spec import Source
 
 
@@ -92,6 +93,44 @@ def survey(where: str | os.PathLike[str], access: Access = STRICT) -> list[Candi
     """
     path = _absolute(where)
     return _SURVEYORS[container(path)](str(path), access)
+
+
+def find_names(where: str | os.PathLike[str], inside: str, access: Access = STRICT) -> Names:
+    """Say where a list of names in a file is; it is not read.
+
+    Parameters
+    ----------
+    where : path
+        HDF5 file or Zarr store.
+    inside : str
+        Path of a list of text or numbers, a categorical column, or a table of the AnnData layout.
+    access : Access
+
+    Returns
+    -------
+    Names
+
+    Raises
+    ------
+    NoMatrixError
+        If nothing is there.
+    SourceError
+        If it is no list of names.
+    """
+    path = _absolute(where)
+    kind = container(path)
+    if kind == "npy":
+        raise NoMatrixError(f"{path} is an .npy file, and holds nothing under {inside}", remedy="Name the file alone.")
+    if kind == "hdf5":
+        from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
+        from bigsvd.source.hdf5_names import hdf5_names
+
+        with library_errors_named(str(path)), open_hdf5(str(path)) as file:
+            return hdf5_names(file, "/" + inside.strip("/"), Home(str(path), follow=access.follow_links))
+    from bigsvd.source.zarr_names import zarr_names
+    from bigsvd.source.zarr_store import open_keys
+
+    return zarr_names(open_keys(str(path), follow=access.follow_links), inside, follow=access.follow_links)
 
 
 def _absolute(where: str | os.PathLike[str]) -> Path:

@@ -4,10 +4,13 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from dataclasses import replace
+from typing import Any
 
 import numpy as np
 
 from bigsvd.errors import DamagedSourceError, UnsupportedMatrixError
+from bigsvd.source.axes import Axes
 from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type
 from bigsvd.source.sparse_layout import LayoutError, SparseGroup, SparseLayout, recognise
@@ -75,6 +78,25 @@ def describe_layout(group: SparseGroup, layout: SparseLayout) -> Candidate:
         nonzeros=layout.nonzeros,
         sparse=True,
     )
+
+
+def with_surroundings(said: Candidate, axes: Axes) -> Candidate:
+    """Add what was recognised around a sparse matrix; which axis holds the samples, its own layout knows better."""
+    found = said.with_axes(axes)
+    return replace(found, samples_hint=said.samples_hint, hint_reason=said.hint_reason) if said.samples_hint else found
+
+
+def surroundings(said: Candidate) -> dict[str, Any]:
+    """The same for the spec of an open matrix."""
+    return {
+        "layout": said.layout,
+        "marker": said.marker,
+        "samples_hint": said.samples_hint,
+        "hint_reason": said.hint_reason,
+        "row_names": said.row_names,
+        "column_names": said.column_names,
+        "cautions": said.remarks,
+    }
 
 
 def _total(counts: Sequence[int | None]) -> int | None:

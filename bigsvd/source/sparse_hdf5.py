@@ -13,9 +13,10 @@ from bigsvd.source.entries import decoded_type, show_type
 from bigsvd.source.hdf5 import Hdf5Source
 from bigsvd.source.hdf5_dataset import missing_filters, show_encoding
 from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
+from bigsvd.source.hdf5_layout import hdf5_axes
 from bigsvd.source.hdf5_links import other_files, outside_files, require_path_inside
 from bigsvd.source.home import Home
-from bigsvd.source.sparse_describe import describe_sparse, opened_layout
+from bigsvd.source.sparse_describe import describe_sparse, opened_layout, surroundings, with_surroundings
 from bigsvd.source.sparse_layout import MOST_NUMBERS, ArrayFacts, SparseLayout
 from bigsvd.source.sparse_source import SparseSource, new_spec
 
@@ -143,6 +144,7 @@ def open_sparse_hdf5(path: str, inside: str, access: Access) -> SparseSource:
         if found is None:
             raise NoMatrixError(f"{name} is a group that holds no sparse matrix", remedy="Name an array.")
         said, layout = found
+        said = with_surroundings(said, hdf5_axes(file, inside, said.shape, home))
         values = group.facts(layout.values)
         value_type = values.dtype if values is not None else layout.value_type
         at = {part: group.at(part) for part in (layout.values, layout.indices, layout.pointers) if part}
@@ -162,5 +164,6 @@ def open_sparse_hdf5(path: str, inside: str, access: Access) -> SparseSource:
             encoding=said.encoding,
             stored_bytes=said.stored_bytes,
             fingerprint=inside,
+            **surroundings(said),
         ),
     )

@@ -15,7 +15,7 @@ from typing import Any, Protocol
 import numpy as np
 
 from bigsvd.source.access import SPARSE_FORMATS as FORMATS
-from bigsvd.source.hints import NO_HINT, Hint, annotated_hint
+from bigsvd.source.hints import Hint
 from bigsvd.units import show_count, show_shape
 
 SPARSE_TYPES = {"csr_matrix": "csr", "csc_matrix": "csc"}
@@ -115,7 +115,7 @@ class SparseLayout:
     indices: str = "indices"
     pointers: str = "indptr"
     members: tuple[str, ...] = (*_PARTS, "shape")
-    hint: Hint = NO_HINT
+    hint: Hint = (None, "")
     value_type: np.dtype | None = None
 
     @property
@@ -162,7 +162,7 @@ def _told(group: SparseGroup, asked: str | None) -> SparseLayout | None:
         said = formats.get(str(group.attribute(mark)))
         if said is not None:
             sides = _sides(group.attribute(shape), f"the attribute {shape}")
-            return _agreed(said, asked, SparseLayout(sides, FORMATS.index(said), hint=_annotated(group)))
+            return _agreed(said, asked, SparseLayout(sides, FORMATS.index(said)))
     if group.attribute("h5sparse_format") is not None:
         raise LayoutError(
             f"a sparse group of the format {group.attribute('h5sparse_format')}, and csr and csc are read",
@@ -212,17 +212,6 @@ def _sides(numbers: Any, where: str) -> tuple[int, int]:
 def _whole(side: Any) -> bool:
     """Whether something is a whole number, as integers or as floats hold them."""
     return isinstance(side, int | float) and math.isfinite(side) and side == int(side) and side >= 0
-
-
-def _annotated(group: SparseGroup) -> Hint:
-    """Matrices of the AnnData layout; files from before 0.8 have no mark at their root, but its tables."""
-    inside = group.path.strip("/")
-    hint = annotated_hint(inside, group.root_attribute("encoding-type"))
-    if not hint[0] and group.root_has("obs") and group.root_has("var") and (
-        inside in ("X", "raw.X", "raw/X") or inside.startswith("layers/")
-    ):  # fmt: skip
-        return "rows", f"AnnData layout: the rows of {inside} are observations"
-    return hint
 
 
 def _matlab(group: SparseGroup) -> SparseLayout:

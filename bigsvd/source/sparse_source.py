@@ -59,8 +59,8 @@ class SparseSource:
             fingerprint=digest(spec.fingerprint, layout, *(part.fingerprint for part in known))
             if all(part.fingerprint for part in known)
             else "",
-            samples_hint=layout.hint[0],
-            hint_reason=layout.hint[1],
+            samples_hint=layout.hint[0] or spec.samples_hint,
+            hint_reason=layout.hint[1] if layout.hint[0] else spec.hint_reason,
             cautions=(*spec.cautions, *known[0].cautions),
             codecs=known[0].codecs,
             decode_bytes=held + sum(runs.held_bytes for runs in self._runs.values()),
@@ -199,7 +199,7 @@ class SparseSource:
         )
 
 
-def new_spec(layout: SparseLayout, name: str, value_type: np.dtype, **known: Any) -> MatrixSpec:
+def new_spec(layout: SparseLayout, name: str, value_type: np.dtype, /, **known: Any) -> MatrixSpec:
     """What is known of a sparse matrix before its pointers are read."""
     dtype = sparse_type(value_type)
     assert dtype is not None, "the layout was checked"

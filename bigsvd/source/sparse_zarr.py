@@ -11,13 +11,14 @@ from bigsvd.errors import OutsideError
 from bigsvd.source.access import Access
 from bigsvd.source.candidate import Candidate
 from bigsvd.source.entries import decoded_type
-from bigsvd.source.sparse_describe import describe_sparse, opened_layout
+from bigsvd.source.sparse_describe import describe_sparse, opened_layout, surroundings, with_surroundings
 from bigsvd.source.sparse_layout import MOST_NUMBERS, SPARSE_MEMBERS, ArrayFacts
 from bigsvd.source.sparse_source import SparseSource, new_spec
 from bigsvd.source.zarr_array import ZarrSource
+from bigsvd.source.zarr_layout import zarr_axes
 from bigsvd.source.zarr_metadata import read_metadata
-from bigsvd.source.zarr_store import METADATA, KeyStore, open_keys
-from bigsvd.source.zarr_walk import count_absent, group_attributes, stored_bytes
+from bigsvd.source.zarr_store import METADATA, KeyStore, group_attributes, open_keys
+from bigsvd.source.zarr_walk import count_absent, stored_bytes
 
 
 class ZarrGroup:
@@ -101,7 +102,7 @@ def sparse_members(keys: KeyStore, path: str, sparse_format: str | None, found: 
     if described is None:
         return ()
     said, layout = described
-    found.append(said)
+    found.append(with_surroundings(said, zarr_axes(keys, path, said.shape)))
     return layout.members if layout is not None else SPARSE_MEMBERS
 
 
@@ -113,12 +114,14 @@ def open_sparse_zarr(path: str, inside: str, access: Access) -> SparseSource | N
     UnsupportedMatrixError, DamagedSourceError
         If it holds one that cannot be read.
     """
-    group = ZarrGroup(open_keys(path, follow=access.follow_links), inside)
+    keys = open_keys(path, follow=access.follow_links)
+    group = ZarrGroup(keys, inside)
     name = f"{path}:{inside}" if inside else path
     found = opened_layout(group, name, path, access.sparse_format)
     if found is None:
         return None
     said, layout = found
+    said = with_surroundings(said, zarr_axes(keys, inside, said.shape, follow=access.follow_links))
     values = group.facts(layout.values)
     value_type = values.dtype if values is not None else layout.value_type
 
@@ -131,6 +134,12 @@ def open_sparse_zarr(path: str, inside: str, access: Access) -> SparseSource | N
         layout,
         (part(layout.values) if stored else None, part(layout.indices) if stored else None, part(layout.pointers)),
         new_spec(
-            layout, name, value_type, encoding=said.encoding, stored_bytes=said.stored_bytes, fingerprint=inside or "/"
+            layout,
+            name,
+            value_type,
+            encoding=said.encoding,
+            stored_bytes=said.stored_bytes,
+            fingerprint=inside or "/",
+            **surroundings(said),
         ),
     )

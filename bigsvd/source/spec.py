@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Protocol, runtime_checkable
 
 import numpy as np
 
+from bigsvd.source.names import Names
 from bigsvd.source.packing import Packing
 from bigsvd.units import show_bytes, show_count
 
@@ -136,7 +137,8 @@ class MatrixSpec:
     stored_bytes : int or None
         Bytes on disk, where the format tells.
     samples_hint : str or None
-        ``rows`` or ``columns`` where labels or markers in the file say which axis holds the samples.
+        ``rows`` or ``columns`` where labels or markers in the file say which axis holds the samples;
+        ``contradictory`` where they disagree.
     hint_reason : str
         The marker that says so, for people.
     fingerprint : str
@@ -160,6 +162,10 @@ class MatrixSpec:
     held_bytes : int
         What the source itself holds once, from its opening or first read on, however many threads read: pointers to
         lines, places of rows and columns, means.
+    layout, marker : str
+        The layout that the file was taken for, and what in it says so; empty for arrays in memory.
+    row_names, column_names : Names or None
+        Names along either axis, not read yet.
     """
 
     name: str
@@ -182,6 +188,10 @@ class MatrixSpec:
     decoded: str = ""
     missing: Missing | None = None
     held_bytes: int = 0
+    layout: str = ""
+    marker: str = ""
+    row_names: Names | None = None
+    column_names: Names | None = None
 
     @property
     def decoded_bytes(self) -> int:

@@ -32,7 +32,7 @@ from bigsvd.source.zarr_direct import ChunkAbsentError, ZarrFiles
 from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
 from bigsvd.source.zarr_read import Reader, open_zarr, python_reader
 from bigsvd.source.zarr_store import DirectoryKeys, KeyStore, open_keys
-from bigsvd.source.zarr_walk import describe_zarr, group_attributes, stored_bytes
+from bigsvd.source.zarr_walk import describe_zarr, stored_bytes
 from bigsvd.units import shell_word, show_shape
 
 MEANT = "write the array again with write_empty_chunks=True."
@@ -89,9 +89,8 @@ class ZarrSource:
             raise NoMatrixError(f"{self.path} holds no array under {self.inside!r}", remedy="Check the path.")
         if self.one_row:
             metadata = metadata.as_row()
-        said = describe_zarr(
-            metadata, self.inside, group_attributes(self.keys, ""), stored_bytes(self.keys, self.inside)
-        )
+        follow = self.access.follow_links
+        said = describe_zarr(metadata, self.inside, self.keys, stored_bytes(self.keys, self.inside), follow=follow)
         dtype = decoded_type(metadata.dtype) if metadata.dtype is not None else None
         name = f"{self.path}:{self.inside}" if self.inside else self.path
         if dtype is None or metadata.dtype is None or not said.usable:
@@ -118,9 +117,13 @@ class ZarrSource:
             samples_hint=said.samples_hint,
             hint_reason=said.hint_reason,
             fingerprint=digest(self.stamps, metadata, said.stored_bytes, self._sampled_chunks()),
-            cautions=type_caution(metadata.dtype) + packing_cautions(said.packing),
+            cautions=type_caution(metadata.dtype) + packing_cautions(said.packing) + said.remarks,
             codecs=self._codecs(),
             packing=said.packing,
+            layout=said.layout,
+            marker=said.marker,
+            row_names=said.row_names,
+            column_names=said.column_names,
         )
 
     @property

@@ -6,17 +6,17 @@ import math
 import os
 from dataclasses import replace
 from itertools import islice
-from typing import Any
 
 from bigsvd.errors import OutsideError, SourceError
 from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type
-from bigsvd.source.hints import NO_HINT, Hint, annotated_hint, hint_from_names
 from bigsvd.source.packing import Packing, find_packing
 from bigsvd.source.rectangle import grid_shape
 from bigsvd.source.zarr_complete import AbsentChunks, absent_keys, count_absent_chunks
+from bigsvd.source.zarr_layout import levels_of, zarr_axes
 from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
-from bigsvd.source.zarr_store import KeyStore, read_document
+from bigsvd.source.zarr_names import TEXT_CODEC
+from bigsvd.source.zarr_store import KeyStore, group_attributes
 from bigsvd.units import show_count
 
 MOST_NODES = 20_000
@@ -34,7 +34,7 @@ def walk_zarr(
     from bigsvd.source.sparse_zarr import sparse_members
 
     found: list[Candidate] = []
-    root = group_attributes(keys, "")
+    levels: dict[str, int] = {}
     waiting, seen = [start], 0
     while waiting:
         path = waiting.pop(0)
@@ -45,9 +45,12 @@ def walk_zarr(
         links: list[str] = []
         try:
             array = read_metadata(keys, path)
+            attributes = group_attributes(keys, path) if array is None else {}
+            for level, name in enumerate(levels_of(attributes).paths):
+                levels.setdefault(f"{path}/{name}".strip("/"), level)
             if array is not None:
                 stored = stored_bytes(keys, path)
-                said = describe_zarr(array, path, root, stored)
+                said = replace(describe_zarr(array, path, keys, stored), level=levels.get(path))
                 # Where files are too many to be added up, they are too many to be looked for.
                 counted = said.usable and stored is not None
                 found.append(replace(said, absent_chunks=count_absent(keys, path, array) if counted else None))
@@ -84,22 +87,17 @@ def count_absent(keys: KeyStore, path: str, array: ZarrMetadata) -> int | None:
     return count_absent_chunks(absent, keys, lambda place: at + array.key(place), array)[0]
 
 
-def group_attributes(keys: KeyStore, path: str) -> dict[str, Any]:
-    """Attributes of a group in either format; empty where there are none."""
-    at = f"{path}/" if path else ""
-    third = read_document(keys, f"{at}zarr.json")
-    attributes = third.get("attributes") if third is not None else read_document(keys, f"{at}.zattrs")
-    return attributes if isinstance(attributes, dict) else {}
-
-
-def describe_zarr(array: ZarrMetadata, path: str, root: dict[str, Any], stored: int | None) -> Candidate:
+def describe_zarr(
+    array: ZarrMetadata, path: str, keys: KeyStore, stored: int | None, *, follow: bool = False
+) -> Candidate:
     """Say all that is known of an array without opening it."""
     numeric = array.dtype is not None and decoded_type(array.dtype) is not None
     reason = why_unusable(array.shape, numeric, array.type_words)
-    if array.forbidden:
+    if array.forbidden == TEXT_CODEC and array.dtype is not None and array.dtype.kind == "O":
+        reason = "not numbers but text"
+    elif array.forbidden:
         reason = f"its codec {array.forbidden} makes objects, which can run what the writer liked: it is never decoded"
-    hint, hint_reason = zarr_hint(array, path, root) if not reason else NO_HINT
-    return Candidate(
+    said = Candidate(
         path=path,
         shape=array.shape,
         dtype=array.type_words,
@@ -109,10 +107,11 @@ def describe_zarr(array: ZarrMetadata, path: str, root: dict[str, Any], stored: 
         decoded_bytes=math.prod(array.shape) * array.dtype.itemsize if array.dtype is not None else None,
         usable=not reason,
         reason=reason,
-        samples_hint=hint,
-        hint_reason=hint_reason,
         packing=None if reason else zarr_packing(array),
     )
+    # Lists and texts are no matrices in any layout.
+    layout = numeric and len(array.shape) > 1 and 0 not in array.shape
+    return said.with_axes(zarr_axes(keys, path, array.shape, follow=follow)) if layout else said
 
 
 def zarr_packing(array: ZarrMetadata) -> Packing | None:
@@ -130,15 +129,6 @@ def zarr_packing(array: ZarrMetadata) -> Packing | None:
     if ours and array.fill is not None and (array.fill != 0 or scaled):
         attributes = {**attributes, "_FillValue": array.fill}
     return find_packing(attributes, stored)
-
-
-def zarr_hint(array: ZarrMetadata, path: str, root: dict[str, Any]) -> Hint:
-    """Look for markers of the AnnData layout, then at the names of the dimensions."""
-    hint = annotated_hint(path, root.get("encoding-type"))
-    if hint[0]:
-        return hint
-    names = [name if isinstance(name, str) else None for name in array.dimension_names]
-    return hint_from_names(names, "dimension_names" if array.zarr_format == 3 else "_ARRAY_DIMENSIONS")
 
 
 def stored_bytes(keys: KeyStore, path: str, most_files: int = 10_000) -> int | None:
