@@ -38,7 +38,7 @@ class Rates:
     decode : mapping of str to Rate
         Decoded bytes, by codec, beyond that. ``library`` also stands for codecs that are not listed.
     entries : Rate
-        Stored entries of a sparse matrix read, checked and put in their places.
+        Stored entries of a sparse matrix read, checked and put in their places; ``sparse`` above clears the buffer.
     chunk : Rate
         Chunks found and taken apart.
     ledger : Rate
@@ -113,10 +113,10 @@ NOMINAL = Rates(
         "plain": Rate(9.9e09, 0.14),
         "compressed": Rate(6.8e09),
         "zarr": Rate(7e09),
-        "sparse": Rate(5e09),
+        "sparse": Rate(1.6e10, 0.03),
         "graph": Rate(5e08, 1),
     },
-    entries=Rate(1e08),
+    entries=Rate(2.4e08),
     decode={
         "shuffle": Rate(7.3e09, 0.36),
         "fletcher32": Rate(4e09, 0.09),
