@@ -6,6 +6,7 @@ from bigsvd.source.candidate import Candidate
 from bigsvd.source.complete import check_complete
 from bigsvd.source.names import Names, repeated, showable
 from bigsvd.source.names import to_text as names_to_text
+from bigsvd.source.names_derived import join_names, take_names
 from bigsvd.source.open import find_names, open_source, survey
 from bigsvd.source.spec import MatrixSpec, Source
 from bigsvd.source.stamp import FileStamp, digest
@@ -21,9 +22,11 @@ __all__ = [
     "check_complete",
     "digest",
     "find_names",
+    "join_names",
     "names_to_text",
     "open_source",
     "repeated",
     "showable",
     "survey",
+    "take_names",
 ]
