@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from bigsvd.source import MatrixSpec, Source, require_rectangle, tile_bytes, tiles
+from bigsvd.source import MatrixSpec, Source, require_rectangle, take_names, tile_bytes, tiles
 
 Span = tuple[int, int]
 
@@ -46,8 +46,10 @@ class LeftOutSource:
         shape[axis] = len(kept)
         # Where lines are missing, a chunk holds fewer; one at the edge of two panels is decoded for both.
         chunks[axis] = min(chunks[axis], shape[axis])
+        names = [spec.row_names, spec.column_names]
+        names[axis] = take_names(names[axis], kept)
         self.spec = replace(
-            spec, shape=(shape[0], shape[1]), chunks=(chunks[0], chunks[1]),
+            spec, row_names=names[0], column_names=names[1], shape=(shape[0], shape[1]), chunks=(chunks[0], chunks[1]),
             decode_bytes=spec.decode_bytes + tile_bytes(inner.spec), held_bytes=spec.held_bytes + kept.nbytes,
         )  # fmt: skip
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from typing import Any
 
 from bigsvd.errors import NoMatrixError, OptionError, SeveralMatricesError
@@ -36,6 +37,11 @@ def choose_level(where: Any, matrix: str | None, level: int | None, access: Acce
     """
     if level is None:
         return matrix
+    if not isinstance(where, (str, os.PathLike)):
+        raise OptionError(
+            f"level={level} was given with {type(where).__name__}, which is one array",
+            remedy="Give the path of the store, or leave level out.",
+        )
     if level < 0:
         raise OptionError(f"--level {level} is not a level", remedy="Give 0 for the full resolution, 1 for the next.")
     inside = (matrix or "").strip("/")

@@ -6,6 +6,7 @@ from bigsvd.source.candidate import Candidate
 from bigsvd.source.complete import check_complete
 from bigsvd.source.names import Names, repeated, showable
 from bigsvd.source.names import to_text as names_to_text
+from bigsvd.source.names_derived import join_names, take_names
 from bigsvd.source.open import find_names, open_source, survey
 from bigsvd.source.packing import Packing
 from bigsvd.source.rectangle import fill_by_bands, require_rectangle, tile_bytes, tiles
@@ -28,6 +29,7 @@ __all__ = [
     "digest",
     "fill_by_bands",
     "find_names",
+    "join_names",
     "line_counter",
     "names_to_text",
     "open_source",
@@ -35,6 +37,7 @@ __all__ = [
     "require_rectangle",
     "showable",
     "survey",
+    "take_names",
     "tile_bytes",
     "tiles",
 ]

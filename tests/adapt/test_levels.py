@@ -112,6 +112,11 @@ def test_levels_that_are_not_there_are_refused(
     assert refused.value.remedy == remedy  # type: ignore[attr-defined]
 
 
+def test_an_array_in_memory_has_no_levels() -> None:
+    with pytest.raises(OptionError, match="level=1 was given with ndarray, which is one array"):
+        bigsvd.open_matrix(FULL, level=1)
+
+
 def test_what_is_no_image_has_no_levels(tmp_path: Path) -> None:
     zarr.create_array(tmp_path / "a", data=FULL)
     with pytest.raises(NoMatrixError, match="is no image of several resolutions"):

@@ -43,6 +43,36 @@ def test_names_follow_their_axis_into_the_result(tmp_path: Path, turned: bool, a
         assert one == [(genes[row], right[row, component]) for row in order]
 
 
+def test_no_name_is_read_before_the_factors_are_there(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    from bigsvd.source.hdf5_names import Hdf5Names
+
+    seen: list[str] = []
+    opened = Hdf5Names.opened
+    monkeypatch.setattr(Hdf5Names, "opened", lambda self: (seen.append(self.inside), opened(self))[1])
+    with h5py.File(tmp_path / "a.h5", "w") as file:
+        file["x"] = planted(60, 9)
+        file["genes"] = np.array([f"gene {number}" for number in range(9)], object)
+    assert bigsvd.forecast(tmp_path / "a.h5", matrix="x", rank=2).plan.feature_names is not None
+    bigsvd.decompose(
+        tmp_path / "a.h5", matrix="x", rank=2, progress=lambda event: seen.append(event.stage), planned=lambda _: None
+    )
+    assert seen.index("/genes") > max(place for place, what in enumerate(seen) if what in ("sweep", "slices"))
+    assert seen.count("/genes") == 1
+
+
+def test_the_plan_counts_what_writing_names_holds(tmp_path: Path) -> None:
+    with h5py.File(tmp_path / "a.h5", "w") as file:
+        file.create_dataset("x", (2_000_000, 4), "f4", chunks=(50_000, 4), fillvalue=1)
+        file.create_dataset("cells", (2_000_000,), "S8", chunks=(50_000,))
+    named = bigsvd.forecast(tmp_path / "a.h5", matrix="x", rank=2, absent="fill").plan
+    with h5py.File(tmp_path / "a.h5", "r+") as file:
+        del file["cells"]
+    bare = bigsvd.forecast(tmp_path / "a.h5", matrix="x", rank=2, absent="fill").plan
+    assert (named.sample_names is not None, bare.sample_names) == (True, None)
+    # 100,000 names a chunk: text of 256 bytes each in four copies, and 24 bytes for each of all names.
+    assert named.result_bytes - bare.result_bytes == 4 * 256 * 100_000 + 24 * 2_000_000
+
+
 def test_the_user_overrules_the_file_and_names_stay_with_their_axis(tmp_path: Path) -> None:
     with h5py.File(tmp_path / "a.h5", "w") as file:
         file["x"] = planted(60, 9)

@@ -16,7 +16,7 @@ from layout_samples import CELLS, ROWS
 
 from bigsvd.errors import NoMatrixError, OutsideError, SourceError, UnsupportedMatrixError
 from bigsvd.report import survey_lines
-from bigsvd.source import find_names, repeated, showable, survey
+from bigsvd.source import find_names, join_names, repeated, showable, survey, take_names
 from bigsvd.source.names import BLOCK_LETTERS, MOST_BLOCK, Names
 
 
@@ -175,6 +175,24 @@ def test_names_are_found_without_being_read_and_travel_as_an_address(tmp_path: P
     sent = pickle.dumps(found)
     assert len(sent) < 1000
     assert sizes(pickle.loads(sent)) == sizes(found)
+
+
+def test_names_of_some_lines_and_of_several_files_come_in_their_order(tmp_path: Path) -> None:
+    with h5py.File(tmp_path / "a.h5", "w") as file:
+        file["a"] = np.array([f"a{number}" for number in range(1000)], object)
+        file["b"] = np.arange(5)
+    a, b = find_names(tmp_path / "a.h5", "a"), find_names(tmp_path / "a.h5", "b")
+    chosen = np.flatnonzero(np.random.default_rng(2).random(1000) < 0.3)
+    taken = take_names(a, chosen)
+    assert taken is not None
+    assert [name for block in pickle.loads(pickle.dumps(taken)).blocks() for name in block] == [f"a{n}" for n in chosen]
+    joined = join_names([a, b])
+    assert joined is not None
+    assert (joined.count, joined.words) == (1005, "a and b")
+    everything = [name for block in joined.blocks() for name in block]
+    assert everything == [*(f"a{number}" for number in range(1000)), *"01234"]
+    assert take_names(None, chosen) is None
+    assert join_names([a, None]) is None
 
 
 def test_names_that_repeat_are_found_by_their_hashes(tmp_path: Path) -> None:
