@@ -137,9 +137,9 @@ def test_a_sum_that_does_not_fit_its_type_is_refused_and_not_wrapped(tmp_path: P
 @pytest.mark.parametrize(
     ("layout", "hint", "words"),
     [
-        ("anndata csr gzip", "rows", "AnnData layout: the rows of X are observations"),
-        ("anndata before 0.7", "rows", "AnnData layout: the rows of X are observations"),
-        ("zarr 3 csr", "rows", "AnnData layout: the rows of X are observations"),
+        ("anndata csr gzip", "rows", "AnnData layout: rows are observations"),
+        ("anndata before 0.7", "rows", "AnnData layout: rows are observations"),
+        ("zarr 3 csr", "rows", "AnnData layout: rows are observations"),
         ("feature barcode 3", "rows", "read as cells × features by rows"),
         ("feature barcode 2", "rows", "read as cells × features by rows"),
         ("matlab", "rows", "its rows are the rows here"),

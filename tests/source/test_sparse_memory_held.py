@@ -11,6 +11,8 @@ import pytest
 import scipy.sparse
 from test_decode_bytes import held_and_planned
 
+pytestmark = pytest.mark.alone
+
 
 def write(path: Path, shape: tuple[int, int], form: str, chunk: int, *, shuffled: bool) -> str:
     """A tenth of the places filled; unsorted, with every place twice, if asked for."""

@@ -46,7 +46,7 @@ def by_scipy(path: Path, inside: str, kind: Any, shape: tuple[int, int]) -> np.n
         (f"{ANNDATA}/v0.7.0/adata.h5ad", "/X", "csr", (30, 20), "rows"),
         (f"{ANNDATA}/v0.7.0/adata.h5ad", "/raw/X", "csr", (30, 40), "rows"),
         (f"{ANNDATA}/v0.7.8/adata.h5ad", "/layers/sparse", "csr", (30, 20), "rows"),
-        (f"{ANNDATA}/v0.7.8/adata.h5ad", "/obsm/sparse", "csr", (30, 100), None),
+        (f"{ANNDATA}/v0.7.8/adata.h5ad", "/obsm/sparse", "csr", (30, 100), "rows"),
         (f"{BIOM}/examples/rich_sparse_otu_table_hdf5.biom", "/observation/matrix", "csr", (5, 6), "columns"),
         (f"{BIOM}/examples/rich_sparse_otu_table_hdf5.biom", "/sample/matrix", "csr", (6, 5), "rows"),
         (f"{BIOM}/biom/tests/test_data/edgecase_issue_952.biom", "/sample/matrix", "csr", (148, 10), "rows"),
