@@ -47,7 +47,7 @@ def reader_of(lines: csr_array, axis: int, panel_lines: int = PANEL, *, zeros: b
     densest = max(int(lines.indptr[stop] - lines.indptr[first]) for first, stop in pairwise(edges))
     source = SparseInMemory(lines, axis)
     held = sparse_bytes(source.spec, min(panel_lines, count), densest)
-    geometry = Geometry(axis, count, across, True, edges, 1.0, held, None if zeros else densest)
+    geometry = Geometry(axis, count, across, True, edges, 1.0, held, None if zeros else densest, densest)
     return PanelReader(source, geometry, Control())
 
 
