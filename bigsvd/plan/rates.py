@@ -113,10 +113,10 @@ NOMINAL = Rates(
         "plain": Rate(9.9e09, 0.14),
         "compressed": Rate(6.8e09),
         "zarr": Rate(7e09),
-        "sparse": Rate(5e09),
+        "sparse": Rate(1.6e10, 0.03),
         "graph": Rate(5e08, 1),
     },
-    entries=Rate(1e08),
+    entries=Rate(2.4e08),
     decode={
         "shuffle": Rate(7.3e09, 0.36),
         "fletcher32": Rate(4e09, 0.09),
