@@ -133,8 +133,9 @@ def read_counts(path: Path) -> csr_array:
 # --------------------------------------------------------------------------------------------------------- the methods
 def centred_operator(lines: csr_array) -> LinearOperator:
     """A − 1μᵀ without filling in zeros."""
-    mean = np.asarray(lines.mean(axis=0))
     wide = lines.astype(np.float64)
+    # SciPy sums single precision in single, whatever the type asked for.
+    mean = np.asarray(wide.mean(axis=0))
     turned = wide.T.tocsr()
     return LinearOperator(
         lines.shape,
@@ -158,7 +159,7 @@ def by_dask(path: Path, rank: int, iterations: int) -> np.ndarray:
     import dask.array as da
 
     lines = read_counts(path)
-    mean = np.asarray(lines.mean(axis=0))
+    mean = np.asarray(lines.astype(np.float64).mean(axis=0))
     heights = tuple(min(BLOCK, lines.shape[0] - first) for first in range(0, lines.shape[0], BLOCK))
 
     def dense(block_info: Any = None) -> np.ndarray:
@@ -166,7 +167,8 @@ def by_dask(path: Path, rank: int, iterations: int) -> np.ndarray:
         return np.asarray(lines[first:stop].toarray() - mean, np.float64)
 
     blocks = da.map_blocks(dense, chunks=(heights, (lines.shape[1],)), dtype=np.float64)
-    values = da.linalg.svd_compressed(blocks, rank, n_power_iter=iterations, n_oversamples=rank + 10, seed=1)[1]
+    # Without QR between the products, more iterations lose the smaller values.
+    _, values, _ = da.linalg.svd_compressed(blocks, rank, "QR", iterations, n_oversamples=rank + 10, seed=1)
     return np.asarray(values.compute())
 
 

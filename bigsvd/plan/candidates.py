@@ -163,7 +163,8 @@ def terms_of(plan: Plan, workers: int) -> tuple[MemoryTerm, ...]:
     return memory_terms(
         plan.spec, plan.geometry, plan.route, plan.widths,
         workers=workers, leaves=plan.leaves, pilot_bytes=pilot_bytes, hold_pilot=held, resident=plan.resident,
-        scaled=plan.scaled, result_bytes=plan.result_bytes,
+        scaled=plan.scaled, measured=plan.may_be_single and plan.request.precision != "double",
+        result_bytes=plan.result_bytes,
     )  # fmt: skip
 
 

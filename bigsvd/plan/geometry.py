@@ -46,7 +46,9 @@ class Geometry:
     panel_bytes : int
         Largest panel in the stored type, in the form in which it is multiplied.
     nonzeros : int or None
-        Of panels that are multiplied without their zeros, the nonzeros of the densest; None where zeros are multiplied.
+        Of panels that are multiplied without their zeros, the nonzeros of the fullest; None where zeros are multiplied.
+    unit_nonzeros : int
+        Those of the fullest lines that are multiplied at a time.
     """
 
     axis: int
@@ -57,6 +59,7 @@ class Geometry:
     amplification: float
     panel_bytes: int
     nonzeros: int | None = None
+    unit_nonzeros: int = 0
 
     @property
     def sparse(self) -> bool:
@@ -134,9 +137,14 @@ def cut(
     tallest = min(height, lines)
     if line_nonzeros is None:
         return Geometry(axis, lines, across, axis == samples_axis, edges, amplification, tallest * line_bytes)
-    densest = int(max(line_nonzeros(start, stop) for start, stop in pairwise(edges)))
-    held = sparse_bytes(spec, tallest, densest)
-    return Geometry(axis, lines, across, axis == samples_axis, edges, amplification, held, densest)
+    fullest = int(max(line_nonzeros(start, stop) for start, stop in pairwise(edges)))
+    units = (
+        line_nonzeros(first, min(first + SPARSE_UNIT_LINES, stop))
+        for start, stop in pairwise(edges)
+        for first in range(start, stop, SPARSE_UNIT_LINES)
+    )
+    held = sparse_bytes(spec, tallest, fullest)
+    return Geometry(axis, lines, across, axis == samples_axis, edges, amplification, held, fullest, int(max(units)))
 
 
 def _amplification(lines: int, unit: int, height: int) -> float:

@@ -55,6 +55,7 @@ def memory_terms(
     hold_pilot: bool,
     resident: bool,
     scaled: bool,
+    measured: bool,
     result_bytes: int,
 ) -> tuple[MemoryTerm, ...]:
     """Terms of the phase that needs most.
@@ -75,6 +76,8 @@ def memory_terms(
         Whether the whole matrix is held in its stored type.
     scaled : bool
         Whether features are scaled.
+    measured : bool
+        Whether rounding of single precision may be measured.
     result_bytes : int
         What writing the result holds.
 
@@ -94,7 +97,7 @@ def memory_terms(
     if geometry.nonzeros is None:
         unit += (geometry.unit_lines + widths.block) * tile_columns(n) * entry
     else:
-        unit += sparse_work_bytes(spec, n, geometry.nonzeros, widths.block)
+        unit += sparse_work_bytes(spec, n, geometry.unit_nonzeros, widths.block, measured=measured)
     fold = 3 * (fold_lines(folded) + folded) * folded * entry
     leaf = widths.block * column + (widths.limit + 1) ** 2 * entry + 4 * column
     if route == "gram":

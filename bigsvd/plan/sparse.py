@@ -37,17 +37,19 @@ def matrix_bytes(spec: MatrixSpec, products: str) -> int:
     return sparse_bytes(spec, spec.shape[spec.compressed_axis], spec.nonzeros)
 
 
-def sparse_work_bytes(spec: MatrixSpec, across: int, nonzeros: int, block: int) -> int:
-    """What a worker holds beside a sparse panel of so many nonzeros and the lines of Y.
+def sparse_work_bytes(spec: MatrixSpec, across: int, nonzeros: int, block: int, *, measured: bool) -> int:
+    """What a worker holds beside a sparse panel and the lines of Y.
 
     Parameters
     ----------
     spec : MatrixSpec
     across : int
     nonzeros : int
-        Of the densest panel.
+        Of the lines that are multiplied at a time.
     block : int
         Columns multiplied.
+    measured : bool
+        Whether rounding of single precision is measured.
 
     Returns
     -------
@@ -56,10 +58,11 @@ def sparse_work_bytes(spec: MatrixSpec, across: int, nonzeros: int, block: int) 
         rounding is measured; the product AᴴY; vectors across for sums; pieces for squares and sums.
     """
     entry, index = 16 if spec.dtype.kind == "c" else 8, index_bytes(spec)
-    turned = nonzeros * (2 * (entry + index) + 2 * entry) + 2 * (across + 1) * index
-    measured = 5 * MEASURED_COLUMNS * across * entry
+    # In double and turned; in single, turned, and both again in double.
+    turned = nonzeros * (3 * entry + 2 * index if measured else 2 * entry + index) + 2 * (across + 1) * index
     pieces = max(PIECE_NONZEROS, across) * (4 * entry + 2 * _LONG)
-    return turned + measured + pieces + 12 * across * entry + block * across * entry
+    again = 5 * MEASURED_COLUMNS * across * entry if measured else 0
+    return turned + again + pieces + (12 + block) * across * entry
 
 
 def stored_share(spec: MatrixSpec) -> float:

@@ -7,6 +7,8 @@ from bigsvd.prepare.implicit import (
     add_up,
     implicit_block,
     pieces,
+    sparse_mean,
+    sparse_squares,
     sparse_statistics,
 )
 from bigsvd.prepare.preparation import LineStatistics, Preparation, line_statistics, prepare_unit
@@ -22,5 +24,7 @@ __all__ = [
     "line_statistics",
     "pieces",
     "prepare_unit",
+    "sparse_mean",
+    "sparse_squares",
     "sparse_statistics",
 ]

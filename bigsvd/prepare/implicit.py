@@ -93,9 +93,32 @@ def absent_per_column(lines: csr_array) -> np.ndarray:
     """How many lines store nothing, by place across; shape (across,)."""
     count, across = lines.shape
     stored = np.zeros(across, np.int64)
-    for first in range(0, lines.nnz, PIECE_NONZEROS):
-        stored += np.bincount(lines.indices[first : first + PIECE_NONZEROS], minlength=across)
+    for some in _stored(lines):
+        stored += np.bincount(lines.indices[some], minlength=across)
     return count - stored
+
+
+def sparse_mean(lines: csr_array) -> np.ndarray:
+    """Mean of every place across, zeros counted, in double; shape (across,)."""
+    total = np.zeros(lines.shape[1], np.complex128 if lines.dtype.kind == "c" else np.float64)
+    for stored in _stored(lines):
+        total += add_up(lines.indices[stored], lines.data[stored].astype(total.dtype), len(total))
+    return total / lines.shape[0]
+
+
+def sparse_squares(lines: csr_array, mean: np.ndarray) -> np.ndarray:
+    """Sum of |entries − mean|² at every place across, zeros counted; shape (across,)."""
+    total = absent_per_column(lines) * np.abs(mean) ** 2
+    for stored in _stored(lines):
+        places = lines.indices[stored]
+        total += add_up(places, np.abs(lines.data[stored] - mean[places]) ** 2, len(total))
+    return total
+
+
+def _stored(lines: csr_array) -> Iterator[slice]:
+    """Runs of stored entries that stay in the cache."""
+    for first in range(0, lines.nnz, PIECE_NONZEROS):
+        yield slice(first, first + PIECE_NONZEROS)
 
 
 def sparse_statistics(lines: csr_array, *, scale: bool) -> LineStatistics:

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from bigsvd.prepare import Preparation, absent_per_column, add_up, pieces
+from bigsvd.prepare import Preparation, sparse_mean, sparse_squares
 from bigsvd.sweep import Partial
 
 if TYPE_CHECKING:
@@ -71,7 +71,7 @@ def first_statistics(lines: np.ndarray | csr_array, preparation: Preparation, wo
     """
     wide = np.dtype(np.complex128 if lines.dtype.kind == "c" else np.float64)
     with np.errstate(all="ignore"):
-        mean = np.asarray(lines.mean(axis=0, dtype=wide))
+        mean = lines.mean(axis=0, dtype=wide) if isinstance(lines, np.ndarray) else sparse_mean(lines)
         if not np.all(np.isfinite(mean)):
             return preparation
         squares = np.zeros(len(mean))
@@ -79,11 +79,7 @@ def first_statistics(lines: np.ndarray | csr_array, preparation: Preparation, wo
             for line in lines:
                 squares += np.abs(line - mean) ** 2
         elif preparation.scale and not isinstance(lines, np.ndarray):
-            for first, stop in pieces(lines.indptr):
-                stored = slice(int(lines.indptr[first]), int(lines.indptr[stop]))
-                places = lines.indices[stored]
-                squares += add_up(places, np.abs(lines.data[stored] - mean[places]) ** 2, len(mean))
-            squares += absent_per_column(lines) * np.abs(mean) ** 2
+            squares = sparse_squares(lines, mean)
     return shift_and_scale(mean, squares / lines.shape[0], preparation, work)
 
 

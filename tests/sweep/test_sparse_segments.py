@@ -13,7 +13,15 @@ from scipy.sparse import csr_array
 from sweep_samples import Swept, assert_close, assert_same_gram, prepared, sweep, wide_type
 
 from bigsvd.plan import Geometry, sparse_bytes
-from bigsvd.prepare import Preparation, implicit, line_statistics, pieces, sparse_statistics
+from bigsvd.prepare import (
+    Preparation,
+    implicit,
+    line_statistics,
+    pieces,
+    sparse_mean,
+    sparse_squares,
+    sparse_statistics,
+)
 from bigsvd.sweep import Control, PanelReader, Scratch, SweepTask, sparse_segment
 
 EPS, SINGLE = 2.0**-52, 2.0**-23
@@ -39,7 +47,7 @@ def reader_of(lines: csr_array, axis: int, panel_lines: int = PANEL, *, zeros: b
     densest = max(int(lines.indptr[stop] - lines.indptr[first]) for first, stop in pairwise(edges))
     source = SparseInMemory(lines, axis)
     held = sparse_bytes(source.spec, min(panel_lines, count), densest)
-    geometry = Geometry(axis, count, across, True, edges, 1.0, held, None if zeros else densest)
+    geometry = Geometry(axis, count, across, True, edges, 1.0, held, None if zeros else densest, densest)
     return PanelReader(source, geometry, Control())
 
 
@@ -185,6 +193,15 @@ def test_statistics_of_lines_count_their_zeros(
         np.testing.assert_array_equal(found.constant, wanted.constant)
         if share:
             assert found.mean[6] == lines.toarray()[6, 0]
+
+
+@pytest.mark.parametrize("code", CODES)
+def test_means_and_squares_across_are_in_double_and_count_zeros(code: str) -> None:
+    lines = sparse_lines(code, (3000, 12), 0.4)
+    dense = lines.toarray().astype(wide_type(code))
+    mean = sparse_mean(lines)
+    assert_close(mean, dense.mean(axis=0), 3000, EPS)
+    assert_close(sparse_squares(lines, mean), (np.abs(dense - mean) ** 2).sum(axis=0), 3000, EPS)
 
 
 def test_pieces_cover_every_line_once_within_their_size() -> None:
