@@ -103,7 +103,7 @@ def test_19_a_file_cut_short_says_how_much_is_there(scene: Scene, kept: float) -
 def test_20_what_is_no_hdf5_file_is_named_for_what_it_looks_like(scene: Scene, content: bytes, words: str) -> None:
     (scene.folder / "a.h5").write_bytes(content)
     text = scene.refused(scene.folder / "a.h5")
-    assert "is neither an HDF5 file, a Zarr store nor an .npy file" in text
+    assert "is neither an HDF5 file, a Zarr store, an .npy nor an .npz file" in text
     assert words in text
 
 
