@@ -54,6 +54,14 @@ def open_matrix(path: Any, matrix: str | None = None, **reading: Any) -> Source:
             Whether chunks that were never written stop the run, or are read as the fill value that the file declares.
         follow_links : bool
             Follow links in the file to other files outside its own folder.
+        sample_axes : str, int or sequence of them
+            Axes of an array of more than two, by number or name, that become the samples; all others become the
+            features. By default the axis that the file names time, frame, sample, cell or the like.
+        region : str, mapping or sequence of slices
+            Part of an array: ``"time=0:5000:2,y=100:200"``, ``"0:5000:2,100:200,:"``, or slices.
+        mask : path or ndarray
+            Features to take: an array of bool, or of 0 and 1, over their axes; ``FILE.npy``, ``FILE:PATH``, or its path
+            in the same file.
 
     Returns
     -------

@@ -20,8 +20,8 @@ def open_adapted(where: Any, matrix: str | None = None, reading: Reading | None 
     Returns
     -------
     Source
-        In this order, each only where it is asked for or the file calls for it: files joined, packed entries decoded,
-        rows and columns chosen, missing entries filled, entries mapped.
+        In this order, each only where it is asked for or the file calls for it: axes unfolded, files joined, packed
+        entries decoded, rows and columns chosen, missing entries filled, entries mapped.
     """
     reading = reading or Reading()
-    return open_source(where, matrix, reading.access)
+    return open_source(where, matrix, reading.access, reading.axes)

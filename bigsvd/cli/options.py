@@ -55,7 +55,9 @@ def links_option(command: Command) -> Command:
 
 
 def reading_options(command: Command) -> Command:
-    """Add ``--absent`` and ``--follow-links``."""
+    """Add everything that decides what the entries of the matrix are."""
+    for option in reversed(_AXES):
+        command = option(command)
     text = "What to do with chunks that were never written: stop, or read the fill value.  [default: refuse]"
     return click.option("--absent", type=click.Choice(["refuse", "fill"]), help=text)(links_option(command))
 
@@ -85,6 +87,19 @@ def _number(name: str, kind: type, metavar: str, text: str) -> Callable[[Any], A
     return click.option(name, type=kind, metavar=metavar, help=text)
 
 
+def _text(name: str, metavar: str, text: str) -> Callable[[Any], Any]:
+    """An option that takes text."""
+    return click.option(name, metavar=metavar, help=text)
+
+
+_AXES = (
+    _text(
+        "--sample-axes", "AXES", "Axes of a stack that become the samples, by number or name: 0 or time or time,z.  "
+        "[default: the one the file names so]"
+    ),
+    _text("--region", "PART", "Part of a stack: time=0:5000:2,y=100:200, or by position 0:5000:2,100:200,:"),
+    _text("--mask", "PATH", "Features to take, true or 1: FILE.npy, FILE:PATH, or an array in the same file."),
+)  # fmt: skip
 _DECOMPOSITION: tuple[Callable[[Any], Any], ...] = (
     matrix_option,
     reading_options,

@@ -211,9 +211,12 @@ class Sweeps:
             return
         row, column = sums.first_bad or (0, 0)
         what = "value is" if sums.bad == 1 else "values are"
+        place = f"row {show_count(row)}, column {show_count(column)}"
+        if self.plan.spec.unfolding is not None:
+            place = self.plan.spec.unfolding.place(row, column)
         raise NonFiniteError(
             f"{self.plan.spec.name}: {show_count(sums.bad)} {what} NaN or infinite, and a decomposition needs numbers",
-            evidence=[f"first at row {show_count(row)}, column {show_count(column)} (counted from 0)"],
+            evidence=[f"first at {place} (counted from 0)"],
             remedy="Replace or drop them in the file, then run again.",
         )
 

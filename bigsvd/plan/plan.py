@@ -134,6 +134,10 @@ class Plan:
 
         For example ``samples: rows (100,000); features: columns (5,000); centred per column``.
         """
+        if self.spec.unfolding is not None:
+            done = ["centred per feature" if self.centred else "not centred"]
+            done += ["scaled to unit variance (n − 1) per feature"] * self.scaled
+            return ", ".join([self.spec.unfolding.words(), *done])
         samples, features = ("rows", "columns") if self.request.samples == "rows" else ("columns", "rows")
         one = features[:-1]
         done = [f"centred per {one}"] if self.centred else ["not centred"]

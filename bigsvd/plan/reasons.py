@@ -12,6 +12,8 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
     spec, geometry = best.spec, best.geometry
     other = [plan for plan in found if plan.geometry.axis != geometry.axis]
     along = ("rows", "columns")[geometry.axis]
+    if spec.unfolding is not None:
+        along = "samples" if geometry.lines_are_samples else "features"
     if request.axis != "auto":
         why = "as asked"
     elif not other:
@@ -19,7 +21,13 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
     else:
         rival = min(plan.nominal_seconds for plan in other)
         why = f"nominally {show_seconds(best.nominal_seconds)} against {show_seconds(rival)} along the other axis"
-    axis = f"panels are ranges of {along}; {why}"
+    swept = f"swept along {along}"
+    if spec.unfolding is not None:
+        tiles = spec.unfolding.tile_words(geometry.axis)
+        swept += f" {tiles}" if tiles else ""
+        axis = f"{swept}; {why}"
+    else:
+        axis = f"panels are ranges of {along}; {why}"
     lines = geometry.edges[1] - geometry.edges[0]
     panels = (
         f"{show_count(geometry.panels)} panels of {show_count(lines)} {along}, {show_bytes(geometry.panel_bytes)} each"

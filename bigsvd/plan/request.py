@@ -164,6 +164,15 @@ def _check_numbers(request: Request) -> None:
 
 def _settle_samples(request: Request, spec: MatrixSpec) -> Samples:
     """Rows unless told otherwise; stop where the file's own labels contradict a default nobody confirmed."""
+    if spec.unfolding is not None:
+        settled: Samples = "rows" if spec.unfolding.samples_are_rows else "columns"
+        if request.samples not in (None, settled):
+            raise OptionError(
+                f"--samples {request.samples} was given, and the samples of this array are axes of it",
+                evidence=[spec.unfolding.words()],
+                remedy="Leave out --samples; --sample-axes says which axes become the samples.",
+            )
+        return settled
     if request.samples is not None:
         return request.samples
     if spec.samples_hint == "columns":

@@ -46,6 +46,7 @@ def survey_lines(where: str, found: Sequence[Candidate], width: int) -> list[str
             for one in usable
             if one.samples_hint
         ]
+        hints += [_unfolding(one) for one in usable if one.many_axes]
         notes = [note for one in usable for note in _notes(one)]
         lines += [line for words in (*hints, *notes) for line in ["", *wrap(words, width)]]
         lines += ["", "To decompose, type:", *_to_type(where, usable)]
@@ -79,11 +80,22 @@ def command_line(where: str, candidate: Candidate, *, named: bool) -> str:
     words = ["bigsvd", "decompose", where, "--out", re.sub(r"[^\w.-]+", "_", stem).strip("_") + "_factors.zarr"]
     if named:
         words += ["--matrix", candidate.path]
-    if candidate.samples_hint == "columns":
+    if candidate.many_axes:
+        words += ["--sample-axes", candidate.option]
+    elif candidate.samples_hint == "columns":
         words += ["--samples", "columns"]
     if candidate.outside:
         words.append("--follow-links")
     return " ".join(map(shell_word, words))
+
+
+def _unfolding(candidate: Candidate) -> str:
+    """Which axes of a stack become samples."""
+    names = candidate.axis_names or ("",) * len(candidate.shape)
+    axes = ", ".join(f"{number} {name}".strip() for number, name in enumerate(names))
+    if candidate.sample_axes:
+        return f"{_name(candidate)}: axes {axes}; samples are axis {candidate.option} ({candidate.hint_reason})"
+    return f"{_name(candidate)}: axes {axes}; usable with --sample-axes, which names those that become the samples"
 
 
 def _notes(candidate: Candidate) -> list[str]:

@@ -40,6 +40,10 @@ class Candidate:
         Chunks that were never written; None where they were not counted.
     outside : tuple of str
         Other files that hold its entries, or to which a link leads, outside the folder of the file.
+    axis_names : tuple of str
+        Names of the axes, where the file has any.
+    sample_axes : tuple of int
+        Of an array of more than two axes: those that a marker says hold samples.
     """
 
     path: str
@@ -55,6 +59,19 @@ class Candidate:
     hint_reason: str = ""
     absent_chunks: int | None = None
     outside: tuple[str, ...] = ()
+    axis_names: tuple[str, ...] = ()
+    sample_axes: tuple[int, ...] = ()
+
+    @property
+    def many_axes(self) -> bool:
+        """Whether axes must be run together before it is a matrix."""
+        return len(self.shape) > 2
+
+    @property
+    def option(self) -> str:
+        """What to give ``--sample-axes``: as the file says, else the first axis, which is common practice."""
+        axes = self.sample_axes or (0,)
+        return ",".join((self.axis_names[axis] if self.axis_names else "") or str(axis) for axis in axes)
 
     @property
     def line(self) -> str:
@@ -69,22 +86,27 @@ SPARSE = "a sparse group; sparse groups are not read yet"
 
 
 def why_unusable(shape: tuple[int, ...] | None, numeric: bool, type_words: str) -> str:
-    """Reason for which an array is no matrix; empty where it is one."""
+    """Reason for which an array can be no matrix; empty where it is one, or can be unfolded to one."""
     if shape is None:
         return "it holds no values"
     if not numeric:
         return f"not numbers but {type_words}"
-    if len(shape) != 2:
+    if len(shape) < 2:
         return "a single value" if not shape else f"{len(shape)}-D, and a matrix has 2 axes"
     if 0 in shape:
         return "it is empty"
     return ""
 
 
-def choose(candidates: Sequence[Candidate], where: str) -> Candidate:
-    """Take the one matrix that a file holds; refuse to guess between several, and say what is there if none is."""
+def choose(candidates: Sequence[Candidate], where: str, *, unfold: bool = False) -> Candidate:
+    """Take the one matrix that a file holds; refuse to guess between several, and say what is there if none is.
+
+    With `unfold`, arrays of more than two axes come before matrices.
+    """
     usable = [candidate for candidate in candidates if candidate.usable]
-    matrices = [candidate for candidate in usable if min(candidate.shape) > 1]
+    full = [candidate for candidate in usable if sum(side > 1 for side in candidate.shape) > 1]
+    # Arrays of more axes stand behind matrices, unless they are asked for.
+    matrices = [candidate for candidate in full if candidate.many_axes == unfold] or full
     sparse = [candidate for candidate in candidates if candidate.reason == SPARSE]
     # Files of some programs keep scalars and vectors as 1 × n matrices: they are taken only if there is nothing else.
     choice = matrices or usable

@@ -11,7 +11,7 @@ from bigsvd.source.entries import decoded_type, show_type
 from bigsvd.source.hdf5_direct import decodes_directly
 from bigsvd.source.hdf5_file import register_plugins
 from bigsvd.source.hdf5_filters import filters_of
-from bigsvd.source.hints import hdf5_hint
+from bigsvd.source.hints import axis_names, hdf5_hint, sample_axis_from_names
 from bigsvd.units import show_count, show_shape
 
 _NOT_APPLIED = ("scale_factor", "add_offset", "_FillValue", "missing_value")
@@ -69,6 +69,10 @@ def describe(dataset: Any, path: str) -> Candidate:
     if not reason and missing:
         reason = f"its filter is not installed: {', '.join(missing)}"
     hint, hint_reason = hdf5_hint(dataset, path) if not reason else (None, "")
+    names = axis_names(dataset) if not reason else ()
+    sample_axes: tuple[int, ...] = ()
+    if len(shape or ()) > 2:
+        sample_axes, hint_reason = sample_axis_from_names(names, "the dimension scale")
     sized = shape is not None and not h5py.check_vlen_dtype(stored) and stored.kind != "O"
     return Candidate(
         path=path,
@@ -82,6 +86,8 @@ def describe(dataset: Any, path: str) -> Candidate:
         reason=reason,
         samples_hint=hint,
         hint_reason=hint_reason,
+        axis_names=names,
+        sample_axes=sample_axes,
     )
 
 

@@ -27,6 +27,26 @@ def hint_from_names(names: Sequence[str | None], marker: str) -> Hint:
     return ("rows", "columns")[votes[0][0]], "; ".join(reason for _, reason in votes)
 
 
+def sample_axis_from_names(names: Sequence[str | None], marker: str) -> tuple[tuple[int, ...], str]:
+    """The axis of an array of more than two that is named as samples are; none where several are."""
+    words = [(name or "").strip().lower() for name in names]
+    found = [axis for axis, word in enumerate(words) if word in _SAMPLES or word == "t"]
+    if len(found) != 1:
+        return (), ""
+    return (found[0],), f"{marker} names axis {found[0]} {names[found[0]]!r}"
+
+
+def axis_names(dataset: Any) -> tuple[str, ...]:
+    """Names of the axes of an HDF5 dataset by its dimension scales; empty where none has one."""
+    try:
+        names = tuple(_axis_name(dataset, axis) for axis in range(len(dataset.shape)))
+    except (OSError, KeyError, ValueError, TypeError, RuntimeError):
+        return ()
+    # netCDF-4 without a scale of its own for a dimension calls it so.
+    names = tuple("" if name.startswith("phony_dim_") else name for name in names)
+    return names if any(names) else ()
+
+
 def annotated_hint(path: str, encoding_type: object) -> Hint:
     """Matrices of the AnnData layout hold observations, which are samples, in rows."""
     inside = path.strip("/")

@@ -10,13 +10,17 @@ import numpy as np
 
 from bigsvd.errors import NoMatrixError, UnsupportedMatrixError
 from bigsvd.source.access import STRICT, Access
+from bigsvd.source.axis_choice import NO_CHOICE, AxisChoice
 from bigsvd.source.candidate import SPARSE_TYPES, Candidate, choose, listing
 from bigsvd.source.container import container
 from bigsvd.source.home import Home
-from bigsvd.source.spec import Source
+from bigsvd.source.spec import ArraySource, Source
+from bigsvd.source.unfolded import unfold
 
 
-def open_source(where: Any, matrix: str | None = None, access: Access = STRICT) -> Source:
+def open_source(
+    where: Any, matrix: str | None = None, access: Access = STRICT, choice: AxisChoice = NO_CHOICE
+) -> Source:
     """Open a matrix for reading in rectangles.
 
     Parameters
@@ -27,6 +31,8 @@ def open_source(where: Any, matrix: str | None = None, access: Access = STRICT) 
         Path of the array inside the file; needed where the file holds several.
     access : Access
         Whether chunks that were never written are filled, and links followed out of the file's own folder.
+    choice : AxisChoice
+        Which axes of an array of more than two become samples, and which part of it is taken.
 
     Returns
     -------
@@ -34,12 +40,15 @@ def open_source(where: Any, matrix: str | None = None, access: Access = STRICT) 
 
     Raises
     ------
+    OptionError
+        If axes, region or mask are not those of the array.
     NoMatrixError
         If there is no such file, or nothing under that path.
     SeveralMatricesError
         If the file holds several matrices and none is named; lists them.
     UnsupportedMatrixError
-        If what is there is no two-dimensional array of numbers, or cannot be decoded here.
+        If what is there is no array of numbers of two or more axes, or cannot be decoded here, or
+        nothing says which of more than two axes are the samples.
     DamagedSourceError
         If the file or its metadata cannot be read.
     """
@@ -47,13 +56,13 @@ def open_source(where: Any, matrix: str | None = None, access: Access = STRICT) 
         path = _absolute(where)
         # Below a folder without metadata an array may still lie where it is said to lie.
         kind = "zarr" if matrix is not None and path.is_dir() else container(path)
-        return _OPENERS[kind](str(path), matrix, access)
+        return unfold(_OPENERS[kind](str(path), matrix, access, bool(choice)), choice)
     if matrix is not None:
         raise UnsupportedMatrixError(
             f"matrix={matrix!r} names an array inside a file, but what was given is {type(where).__name__}",
             remedy="Leave out matrix=, or give the path of the file.",
         )
-    return _from_object(where, access)
+    return unfold(_from_object(where, access), choice)
 
 
 def survey(where: str | os.PathLike[str], access: Access = STRICT) -> list[Candidate]:
@@ -84,7 +93,7 @@ def _absolute(where: str | os.PathLike[str]) -> Path:
     return Path(os.path.abspath(os.path.expanduser(os.fspath(where))))
 
 
-def _from_object(thing: Any, access: Access) -> Source:
+def _from_object(thing: Any, access: Access) -> ArraySource:
     """Tell a type by where its class comes from, so that no library is loaded to ask."""
     origin = type(thing).__module__.split(".")[0]
     if isinstance(thing, np.ndarray):
@@ -117,7 +126,7 @@ def _from_object(thing: Any, access: Access) -> Source:
     )
 
 
-def _open_hdf5(path: str, matrix: str | None, access: Access) -> Source:
+def _open_hdf5(path: str, matrix: str | None, access: Access, many: bool = False) -> ArraySource:
     from bigsvd.source.hdf5 import Hdf5Source
     from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
     from bigsvd.source.hdf5_walk import is_sparse, walk_hdf5
@@ -127,7 +136,7 @@ def _open_hdf5(path: str, matrix: str | None, access: Access) -> Source:
         import h5py
 
         if matrix is None:
-            inside = choose(walk_hdf5(file, home), path).path
+            inside = choose(walk_hdf5(file, home), path, unfold=many).path
         else:
             inside = "/" + matrix.strip("/")
             thing = _object_at(file, inside, home)
@@ -138,7 +147,7 @@ def _open_hdf5(path: str, matrix: str | None, access: Access) -> Source:
                         evidence=[f"it holds: {', '.join(list(thing)[:8])}"],
                         remedy="Name a dense matrix, or store this one dense.",
                     )
-                inside = choose(walk_hdf5(file, home, inside), f"{path}:{inside}").path
+                inside = choose(walk_hdf5(file, home, inside), f"{path}:{inside}", unfold=many).path
             elif not isinstance(thing, h5py.Dataset):
                 raise NoMatrixError(f"{path}:{inside} is a type definition, not an array", remedy="Name an array.")
     return Hdf5Source(path, inside, access)
@@ -167,7 +176,7 @@ def _survey_hdf5(path: str, access: Access) -> list[Candidate]:
         return walk_hdf5(file, Home(path, follow=access.follow_links))
 
 
-def _open_zarr(path: str, matrix: str | None, access: Access) -> Source:
+def _open_zarr(path: str, matrix: str | None, access: Access, many: bool = False) -> ArraySource:
     from bigsvd.source.zarr_array import ZarrSource
     from bigsvd.source.zarr_metadata import read_metadata
     from bigsvd.source.zarr_store import open_keys
@@ -188,7 +197,8 @@ def _open_zarr(path: str, matrix: str | None, access: Access) -> Source:
             f"{path}:{start} is a sparse group; sparse groups are not read yet",
             remedy="Name a dense matrix, or store this one dense.",
         )
-    return ZarrSource(path, choose(walk_zarr(keys, start), f"{path}:{start}" if start else path).path, access)
+    where = f"{path}:{start}" if start else path
+    return ZarrSource(path, choose(walk_zarr(keys, start), where, unfold=many).path, access)
 
 
 def _survey_zarr(path: str, access: Access) -> list[Candidate]:
@@ -198,7 +208,7 @@ def _survey_zarr(path: str, access: Access) -> list[Candidate]:
     return walk_zarr(open_keys(path, follow=access.follow_links))
 
 
-def _open_npy(path: str, matrix: str | None, access: Access) -> Source:
+def _open_npy(path: str, matrix: str | None, access: Access, many: bool = False) -> ArraySource:
     from bigsvd.source.npy import NpySource
 
     if matrix is not None:

@@ -11,7 +11,7 @@ from typing import Any
 from bigsvd.errors import OutsideError, SourceError
 from bigsvd.source.candidate import SPARSE, SPARSE_TYPES, Candidate, why_unusable
 from bigsvd.source.entries import decoded_type
-from bigsvd.source.hints import NO_HINT, Hint, annotated_hint, hint_from_names
+from bigsvd.source.hints import NO_HINT, Hint, annotated_hint, hint_from_names, sample_axis_from_names
 from bigsvd.source.rectangle import grid_shape
 from bigsvd.source.zarr_complete import AbsentChunks, absent_keys, count_absent_chunks
 from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
@@ -69,7 +69,7 @@ def _linked(keys: KeyStore, link: str) -> Candidate:
 
 def _absent(keys: KeyStore, path: str, array: ZarrMetadata) -> int | None:
     """How many chunks were never written; None where there are too many to be looked for."""
-    if math.prod(grid_shape((array.shape[0], array.shape[1]), (array.chunks[0], array.chunks[1]))) > 10_000:
+    if math.prod(grid_shape(array.shape, array.chunks)) > 10_000:
         return None
     at = f"{path}/" if path else ""
     absent = AbsentChunks(absent_keys(keys, path, array))
@@ -91,6 +91,10 @@ def describe_zarr(array: ZarrMetadata, path: str, root: dict[str, Any], stored: 
     if array.forbidden:
         reason = f"its codec {array.forbidden} makes objects, which can run what the writer liked: it is never decoded"
     hint, hint_reason = zarr_hint(array, path, root) if not reason else NO_HINT
+    names = zarr_axis_names(array) if not reason else ()
+    sample_axes: tuple[int, ...] = ()
+    if len(array.shape) > 2:
+        sample_axes, hint_reason = sample_axis_from_names(names, _marker(array))
     return Candidate(
         path=path,
         shape=array.shape,
@@ -103,6 +107,8 @@ def describe_zarr(array: ZarrMetadata, path: str, root: dict[str, Any], stored: 
         reason=reason,
         samples_hint=hint,
         hint_reason=hint_reason,
+        axis_names=names,
+        sample_axes=sample_axes,
     )
 
 
@@ -111,8 +117,18 @@ def zarr_hint(array: ZarrMetadata, path: str, root: dict[str, Any]) -> Hint:
     hint = annotated_hint(path, root.get("encoding-type"))
     if hint[0]:
         return hint
-    names = [name if isinstance(name, str) else None for name in array.dimension_names]
-    return hint_from_names(names, "dimension_names" if array.zarr_format == 3 else "_ARRAY_DIMENSIONS")
+    return hint_from_names(zarr_axis_names(array), _marker(array))
+
+
+def _marker(array: ZarrMetadata) -> str:
+    """Where the names of the dimensions stand."""
+    return "dimension_names" if array.zarr_format == 3 else "_ARRAY_DIMENSIONS"
+
+
+def zarr_axis_names(array: ZarrMetadata) -> tuple[str, ...]:
+    """Names of the axes; empty where none has one, or their number is another."""
+    names = tuple(name if isinstance(name, str) else "" for name in array.dimension_names)
+    return names if any(names) and len(names) == len(array.shape) else ()
 
 
 def stored_bytes(keys: KeyStore, path: str, most_files: int = 10_000) -> int | None:

@@ -53,8 +53,8 @@ def agree(path: str) -> None:
     for rows, columns in RECTANGLES:
         shape = (rows[1] - rows[0], columns[1] - columns[0])
         found, wanted = np.zeros(shape, source.spec.dtype), np.ones(shape, source.spec.dtype)
-        fill(rows, columns, found)
-        library(rows, columns, wanted)
+        fill((rows, columns), found)
+        library((rows, columns), wanted)
         assert found.tobytes() == wanted.tobytes(), (rows, columns)
     source.close()
 
@@ -198,7 +198,8 @@ class Decoding:
         held.bytes[:] = np.frombuffer(raw, np.uint8)
         # The margin would show a decoder that writes beyond the chunk.
         guarded = np.full((self.chunk[0] + 2, self.chunk[1]), 77, self.dtype)
-        self.decoder.decode(held, slice(0, self.chunk[0]), slice(0, self.chunk[1]), guarded[1:-1], self.workspace)
+        part = slice(0, self.chunk[0]), slice(0, self.chunk[1])
+        self.decoder.decode(held, part, guarded[1:-1], self.workspace)
         assert (guarded[[0, -1]] == 77).all()
         return guarded[1:-1]
 
