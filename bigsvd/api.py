@@ -24,6 +24,7 @@ from bigsvd.drive import (
     check_slices,
     keep_run,
     make_forecast,
+    order_bytes,
     run,
     verify_factors,
     write_result,
@@ -388,7 +389,7 @@ def _result_bytes(spec: MatrixSpec, rank: int) -> int:
     """What writing the result holds in memory."""
     wide = np.dtype(np.complex128 if spec.dtype.kind == "c" else np.float64)
     # Which axis holds the samples does not change the sum over both sides.
-    return store_cost(spec.shape, rank, wide).memory_bytes
+    return store_cost(spec.shape, rank, wide).memory_bytes + order_bytes(spec)
 
 
 def _path_of(source: Any) -> Path | None:

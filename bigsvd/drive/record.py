@@ -68,6 +68,7 @@ def run_record(
             "stored_bytes": spec.stored_bytes,
             "fingerprint": spec.fingerprint,
             "absent": None if spec.absent is None else asdict(spec.absent),
+            "unfolding": None if spec.unfolding is None else spec.unfolding.facts(),
         },
         "preparation": {
             "words": plan.orientation_words(),

@@ -5,6 +5,17 @@ from bigsvd.factors.lock import OutputLock
 from bigsvd.factors.opening import open_factors
 from bigsvd.factors.place import Place, check_output, is_whole
 from bigsvd.factors.result import Factors
+from bigsvd.factors.stored_axes import StoredAxes
 from bigsvd.factors.writer import FactorsWriter
 
-__all__ = ["Factors", "FactorsWriter", "OutputLock", "Place", "check_output", "is_whole", "open_factors", "store_cost"]
+__all__ = [
+    "Factors",
+    "FactorsWriter",
+    "OutputLock",
+    "Place",
+    "StoredAxes",
+    "check_output",
+    "is_whole",
+    "open_factors",
+    "store_cost",
+]

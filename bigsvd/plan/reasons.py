@@ -11,9 +11,7 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
     """Why this axis, these panels, this route and width."""
     spec, geometry = best.spec, best.geometry
     other = [plan for plan in found if plan.geometry.axis != geometry.axis]
-    along = ("rows", "columns")[geometry.axis]
-    if spec.unfolding is not None:
-        along = "samples" if geometry.lines_are_samples else "features"
+    along = best.along
     if request.axis != "auto":
         why = "as asked"
     elif not other:
@@ -22,12 +20,11 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
         rival = min(plan.nominal_seconds for plan in other)
         why = f"nominally {show_seconds(best.nominal_seconds)} against {show_seconds(rival)} along the other axis"
     swept = f"swept along {along}"
-    if spec.unfolding is not None:
-        tiles = spec.unfolding.tile_words(geometry.axis)
-        swept += f" {tiles}" if tiles else ""
-        axis = f"{swept}; {why}"
+    if spec.unfolding is None:
+        swept = f"panels are ranges of {along}"
     else:
-        axis = f"panels are ranges of {along}; {why}"
+        swept += f" {spec.unfolding.tile_words(geometry.axis)}".rstrip()
+    axis = f"{swept}; {why}"
     lines = geometry.edges[1] - geometry.edges[0]
     panels = (
         f"{show_count(geometry.panels)} panels of {show_count(lines)} {along}, {show_bytes(geometry.panel_bytes)} each"

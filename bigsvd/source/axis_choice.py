@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 
 from bigsvd.errors import OptionError, UnsupportedMatrixError
-from bigsvd.source.axes import ArrayAxes
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.unfolding import Side, Unfolding
 from bigsvd.units import show_count, show_shape
 

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 
 from bigsvd.errors import BigsvdError, SourceError, UnsupportedMatrixError
-from bigsvd.source.axes import ArrayAxes
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.candidate import why_unusable
 from bigsvd.source.entries import decoded_type, show_type, type_caution
 from bigsvd.source.rectangle import Box, Span, require_box, require_rectangle, show_place

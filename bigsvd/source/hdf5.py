@@ -12,7 +12,7 @@ import numpy as np
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, SourceError, UnsupportedMatrixError
 from bigsvd.source.access import STRICT, Access
-from bigsvd.source.axes import ArrayAxes
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
 from bigsvd.source.entries import decoded_type, pair_view, type_caution
 from bigsvd.source.fill import FillError, hdf5_fill

@@ -7,7 +7,7 @@ import math
 import numpy as np
 
 from bigsvd.errors import UnsupportedMatrixError
-from bigsvd.source.axes import ArrayAxes
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.candidate import why_unusable
 from bigsvd.source.entries import decoded_type, show_type, type_caution
 from bigsvd.source.rectangle import Box, Span, require_box, require_rectangle

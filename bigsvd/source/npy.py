@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 
 from bigsvd.errors import DamagedSourceError, UnsupportedMatrixError
-from bigsvd.source.axes import ArrayAxes
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type, show_type, type_caution
 from bigsvd.source.persist import persist, refusal, unreadable

@@ -8,7 +8,7 @@ from typing import Protocol
 
 import numpy as np
 
-from bigsvd.source.axes import ArrayAxes
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.unfolding import Unfolding
 from bigsvd.units import show_count
 

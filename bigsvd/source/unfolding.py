@@ -240,6 +240,19 @@ class Unfolding:
                 at[axis] = self.starts[axis] + int(position) * self.steps[axis]
         return ", ".join(f"{self.names[axis]} {show_count(at[axis])}" for axis in sorted(at))
 
+    def facts(self) -> dict[str, Any]:
+        """Which axes became what, and which part of them, for records."""
+        return {
+            "words": self.words(),
+            "sample_axes": [self.names[axis] for axis in self.sample_axes],
+            "feature_axes": [self.names[axis] for axis in self.feature_axes],
+            "axes": [
+                {"name": name, "start": start, "step": step, "taken": length}
+                for name, start, step, length in zip(self.names, self.starts, self.steps, self.lengths, strict=True)
+            ],
+            "masked": self.features.chosen is not None,
+        }
+
     def words(self) -> str:
         """Which axes became samples, and which features.
 

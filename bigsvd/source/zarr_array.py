@@ -11,7 +11,7 @@ import numpy as np
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, SourceError, UnsupportedMatrixError
 from bigsvd.source.access import STRICT, Access
-from bigsvd.source.axes import ArrayAxes
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.chunk_decoder import ChunkError, decode_bytes, most_stored
 from bigsvd.source.complete import absent_error, settle_absent
 from bigsvd.source.entries import decoded_type, type_caution
