@@ -17,8 +17,11 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
     elif not other:
         why = "the other axis does not fit under the ceiling"
     else:
-        rival = min(plan.nominal_seconds for plan in other)
-        why = f"nominally {show_seconds(best.nominal_seconds)} against {show_seconds(rival)} along the other axis"
+        rival = min(other, key=lambda plan: plan.nominal_seconds)
+        seconds = show_seconds(best.nominal_seconds), show_seconds(rival.nominal_seconds)
+        why = f"nominally {seconds[0]} against {seconds[1]} along the other axis"
+        if spec.unfolding is not None and geometry.amplification < 1.05 < rival.geometry.amplification:
+            why += ", which would decode chunks several times"
     swept = f"swept along {along}"
     if spec.unfolding is None:
         swept = f"panels are ranges of {along}"
