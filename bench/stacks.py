@@ -128,7 +128,10 @@ def write_stack(stack: Stack, path: Path, layout: str, tile: tuple[int, int]) ->
 
 @dataclass(frozen=True)
 class Found:
-    """What a run of one layout came to; `error` is the largest relative difference to the planted values."""
+    """What a run of one layout came to; `error` is the largest relative difference to the planted values.
+
+    `angle` is that of the planted images to the ones found; noise alone turns them by about `noise_angle`.
+    """
 
     layout: str
     swept: str
@@ -139,6 +142,7 @@ class Found:
     ceiling: int
     error: float
     angle: float
+    noise_angle: float
 
 
 def decompose_stack(stack: Stack, path: Path, layout: str, memory: str) -> Found:
@@ -163,6 +167,8 @@ def decompose_stack(stack: Stack, path: Path, layout: str, memory: str) -> Found
         record["memory_bytes"],
         float(np.max(np.abs(factors.singular_values[:strong] / raised - 1))),
         float(np.degrees(np.arccos(min(1.0, overlap[-1])))),
+        # Noise adds a random vector of this length to a right vector of length one, to first order.
+        float(np.degrees(np.arctan(DEVIATION * stack.side / stack.values[strong - 1]))),
     )
 
 
@@ -191,6 +197,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
             f"{layout}: {found.swept}; {show_seconds(found.seconds)} in {found.sweeps} sweeps,"
             f" {found.reads:.3f} × the file a sweep, pilot, probe and checks included; peak {show_bytes(found.peak)}"
             f" of {show_bytes(found.ceiling)}; values within {found.error:.1e}, images within {found.angle:.2f}°"
+            f" (noise alone: {found.noise_angle:.2f}°)"
         )
     return 0
 

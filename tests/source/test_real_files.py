@@ -48,7 +48,7 @@ def test_real_files_open_or_are_refused_in_words(room: str) -> None:
                 refusals.append((path, error))
                 continue
             assert candidate.usable, f"{path}: {candidate.path} was opened although {candidate.reason}"
-            if source.spec.decoded_bytes < 2e7:
+            if source.spec.decoded_bytes < 2e7 and source.spec.unfolding is None:
                 compare_with_h5py(FOLDER / "files" / path, candidate.path, read_whole(source))
             source.close()
     assert not [path for path, error in refusals if not error.remedy]
