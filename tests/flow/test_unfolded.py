@@ -325,3 +325,22 @@ def test_another_region_is_another_run(tmp_path: Path) -> None:
     first, second = (open_source(path, choice=AxisChoice(None, region)) for region in ("y=0:20", "y=0:21"))
     assert first.spec.fingerprint != second.spec.fingerprint
     assert len(pickle.dumps(first)) < 20_000, "it travels as its address"
+
+
+def test_a_run_that_was_cut_goes_on_with_the_same_bits_in_tile_order(tmp_path: Path) -> None:
+    path = hdf5(tmp_path / "a.h5", STACK, "time y x", chunks=(50, 16, 16))
+    options: dict[str, Any] = {"rank": 6, "axis": "columns", "route": "krylov", "tolerance": 1e-9, "max_sweeps": 4}
+    whole = bigsvd.decompose(path, tmp_path / "whole.zarr", **options)
+    assert whole.attributes["sweeps"] > 1
+
+    def stop(event: Any) -> None:
+        if event.stage == "write":
+            raise KeyboardInterrupt
+
+    with pytest.raises(KeyboardInterrupt):
+        bigsvd.decompose(path, tmp_path / "cut.zarr", save_every=0.0, progress=stop, **options)
+    again = bigsvd.decompose(path, tmp_path / "cut.zarr", save_every=0.0, **options)
+    assert again.attributes["resumed"] == 1
+    np.testing.assert_array_equal(again.right_vectors[:], whole.right_vectors[:])
+    np.testing.assert_array_equal(again.left_vectors[:], whole.left_vectors[:])
+    assert sorted(found.name for found in tmp_path.iterdir() if "cut" in found.name) == ["cut.zarr", "cut.zarr.log"]
