@@ -4,8 +4,8 @@
 
 Small matrices are written, read, converted and multiplied by the functions of a run, with one worker and with two at
 once: what two lose against one is the crowding. Processor time is taken, and of several runs the fastest counts, so
-that a busy machine spoils little; calibrate on a quiet one all the same. Takes about a minute, and 500 MB in the folder
-for temporary files.
+that a busy machine spoils little; calibrate on a quiet one all the same. Takes about two minutes, and 500 MB in the
+folder for temporary files.
 """
 
 from __future__ import annotations
@@ -23,16 +23,18 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+from scipy.sparse import csr_array
 
 import bigsvd
 from bench.data import make_recipe
 from bigsvd.plan import NOMINAL, SHARED, UNIT_LINES, Geometry, Rate, Rates, fold_lines
 from bigsvd.plan.geometry import cut
 from bigsvd.plan.phases import IDLE
+from bigsvd.plan.sparse import SPARSE_UNIT_LINES
 from bigsvd.prepare import Preparation
 from bigsvd.solve.dense import gram_eigen, orthonormalise, triangle_svd
-from bigsvd.source import Source
-from bigsvd.sweep import Control, PanelReader, Scratch, SweepTask, one_blas_thread, segment
+from bigsvd.source import MatrixSpec, Source
+from bigsvd.sweep import Control, PanelReader, Scratch, SweepTask, one_blas_thread, one_segment, segment
 from bigsvd.sweep.events import Stopwatch
 
 ROWS, COLUMNS = 8_000, 4_000
@@ -40,6 +42,8 @@ CHUNK, SMALL_CHUNK = (1_000, 2_000), (100, 100)
 # Lines of panels so low that adding products up is seen.
 LOW = 64
 NARROW, WIDE = 24, 104
+# Counts: so many genes, so many of them stored.
+SPARSE_ROWS, SPARSE_COLUMNS, SPARSE_SHARE = 4_096, 20_000, 0.05
 # A matrix this wide for AᴴA and Householder QR, whose cost grows with the square.
 SQUARE = 1_000
 RANK = 20
@@ -109,7 +113,7 @@ def swept(source: Source, geometry: Geometry, workers: int, scratch: Scratch | N
     panels = geometry.panels
 
     def work(index: int) -> None:
-        segment.run_segment(asked, panels * index // workers, panels * (index + 1) // workers)
+        one_segment.run_segment(asked, panels * index // workers, panels * (index + 1) // workers)
 
     together(workers, work)
     spent = control.spent()
@@ -164,8 +168,8 @@ def zarr_store(path: Path, values: np.ndarray, compressors: Any, zarr_format: An
     return bigsvd.open_matrix(path)
 
 
-def reading(bench: Bench) -> dict[str, dict[str, Rate]]:
-    """Rates of fetching by storage class, and of decoding by codec beyond that."""
+def reading(bench: Bench) -> dict[str, Any]:
+    """Rates of fetching by storage class, of decoding by codec beyond that, and of entries of sparse matrices."""
     import hdf5plugin
     import numcodecs
     from zarr.codecs import Crc32cCodec, ZstdCodec
@@ -215,7 +219,26 @@ def reading(bench: Bench) -> dict[str, dict[str, Rate]]:
     size = small.spec.decoded_bytes
     left = [max(1e-9, spent[str(w)] - fetch["compressed"].seconds(size, w)) for w in (1, 2)]
     chunk = rate(size / (SMALL_CHUNK[0] * SMALL_CHUNK[1] * floats.itemsize), *left)
-    return {"fetch": {**fetch, "graph": NOMINAL.fetch["graph"]}, "decode": decode, "chunk": chunk}
+    few, many = (sparse_file(folder / f"{each}.h5", each) for each in (1, COLUMNS // 10))
+    bare, filled = read_twice(bench, few), read_twice(bench, many)
+    fetch["sparse"] = rate(few.spec.decoded_bytes, bare["1"], bare["2"])
+    entries = rate(float(ROWS * (COLUMNS // 10)), *(max(1e-9, filled[w] - bare[w]) for w in ("1", "2")))
+    fetch["graph"] = NOMINAL.fetch["graph"]
+    return {"fetch": fetch, "decode": decode, "chunk": chunk, "entries": entries}
+
+
+def sparse_file(path: Path, each: int) -> Source:
+    """Write a matrix compressed by rows, with so many entries in each, and open it."""
+    import h5py
+
+    random, stride = np.random.default_rng(1), COLUMNS // each
+    places = np.arange(each) * stride + random.integers(0, stride, (ROWS, each))
+    with h5py.File(path, "w") as file:
+        group = file.create_group("x")
+        group.attrs.update({"encoding-type": "csr_matrix", "shape": (ROWS, COLUMNS)})
+        group["data"] = random.poisson(1.5, places.size).astype("f4") + 1
+        group["indices"], group["indptr"] = places.astype("i4").ravel(), np.arange(ROWS + 1) * each
+    return bigsvd.open_matrix(path)
 
 
 def read_twice(bench: Bench, source: Source) -> Spent:
@@ -293,6 +316,71 @@ def multiplying(bench: Bench) -> dict[str, Any]:
         found["products"][name] = rate(4 * entries, *(slope[w] - added[w] / WIDE for w in ("1", "2")))
         found["per_entry"][name] = rate(entries, *(max(few[w] - NARROW * slope[w], 0.02 * few[w]) for w in ("1", "2")))
     return found | _folding(bench) | _whole(bench)
+
+
+class Lines:
+    """Sparse lines in memory, as a source gives them.
+
+    Parameters
+    ----------
+    lines : csr_array
+    """
+
+    def __init__(self, lines: csr_array) -> None:
+        self.lines = lines
+        self.spec = MatrixSpec(
+            "lines in memory", lines.shape, lines.dtype, (1, lines.shape[1]), "sparse", nonzeros=lines.nnz,
+            compressed_axis=0,
+        )  # fmt: skip
+
+    def read(self, rows: tuple[int, int], columns: tuple[int, int], out: np.ndarray) -> None:
+        out[...] = self.lines[rows[0] : rows[1], columns[0] : columns[1]].toarray()
+
+    def read_lines(self, first: int, stop: int) -> csr_array:
+        return self.lines[first:stop]
+
+    def lines_nonzeros(self, first: int, stop: int) -> int:
+        return int(self.lines.indptr[stop] - self.lines.indptr[first])
+
+    def close(self) -> None:
+        """Nothing is open."""
+
+
+def leaving_out_zeros(bench: Bench) -> dict[str, Any]:
+    """Rates of what is done to nonzeros: counts of which a share is stored, as wide as they come.
+
+    What reading them takes, ``fetch["sparse"]`` and ``entries``, depends on the file; it stays as it is.
+    """
+    random = np.random.default_rng(1)
+    stored = random.random((SPARSE_ROWS, SPARSE_COLUMNS), np.float32) < SPARSE_SHARE
+    counts = csr_array(stored.astype(np.float32) * random.poisson(2, stored.shape).astype(np.float32))
+    found: dict[str, Any] = {"spmm": {}}
+    plain = Preparation(across_features=True, center=False, scale=False)
+    shifted = replace(plain, center=True, shift=np.ones(SPARSE_COLUMNS))
+    source = Lines(counts)
+    for name, work in (("double", "f8"), ("single", "f4")):
+        geometry = cut(source.spec, 0, 0, 2**30, SPARSE_UNIT_LINES, source.lines_nonzeros)
+
+        def spent(
+            phase: str,
+            columns: int,
+            made: Preparation = plain,
+            work: str = work,
+            geometry: Geometry = geometry,
+            **flags: Any,
+        ) -> Spent:
+            block = np.full((SPARSE_COLUMNS, columns), 1 / SPARSE_COLUMNS, work) if columns else None
+            task = {"preparation": made, "dtype": np.dtype(work), "kind": "basis", "block": block} | flags
+            return bench.seconds(lambda workers: swept(source, geometry, workers, None, **task), phase)
+
+        few, many = (spent("products", columns, add_energy=False) for columns in (NARROW, WIDE))
+        found["spmm"][name] = rate(4.0 * counts.nnz * (WIDE - NARROW), *(many[w] - few[w] for w in ("1", "2")))
+        if name == "double":
+            bare, turned = spent("convert", 0, add_energy=False), spent("convert", NARROW, add_energy=False)
+            summed = spent("convert", 0, shifted, add_lines=True)
+            found["turn"] = rate(counts.nnz, *(max(turned[w] - bare[w], 1e-9) for w in ("1", "2")))
+            found["nonzero_sums"] = rate(counts.nnz, *(max(summed[w] - bare[w], 1e-9) for w in ("1", "2")))
+    return found
 
 
 def _folding(bench: Bench) -> dict[str, Rate]:
@@ -431,7 +519,7 @@ def calibrate(bench: Bench) -> Rates:
     # The class of the clock is looked up by its name at every segment.
     segment.Stopwatch = ProcessorWatch  # type: ignore[misc]
     with one_blas_thread():
-        for part in (reading, converting, multiplying, dense):
+        for part in (reading, converting, multiplying, leaving_out_zeros, dense):
             print(f"{part.__name__} …", file=sys.stderr, flush=True)
             found |= part(bench)
     rates = replace(NOMINAL, **found)

@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 
 from bigsvd import machine
-from bigsvd.adapt import Reading, open_adapted
+from bigsvd.adapt import MissingSource, Reading, open_adapted
 from bigsvd.drive import (
     Deadline,
     Forecast,
@@ -26,15 +26,16 @@ from bigsvd.drive import (
     make_forecast,
     order_bytes,
     run,
+    settle_missing,
     verify_factors,
     write_result,
 )
 from bigsvd.errors import OptionError
-from bigsvd.factors import Factors, check_output, open_factors, store_cost
+from bigsvd.factors import Factors, check_output, open_factors, plan_names, store_cost
 from bigsvd.journal import check_interval, discard_finished
 from bigsvd.plan import Request, make_plan
 from bigsvd.report import Listeners, watch
-from bigsvd.source import MatrixSpec, Source, check_complete
+from bigsvd.source import MatrixSpec, Source, check_complete, line_counter
 from bigsvd.sweep import Control, Listener, one_blas_thread
 from bigsvd.units import parse_bytes, parse_deadline, show_bytes
 
@@ -46,8 +47,8 @@ def open_matrix(path: Any, matrix: str | None = None, **reading: Any) -> Source:
 
     Parameters
     ----------
-    path : path, ndarray, h5py.Dataset, zarr.Array or dask array
-        An HDF5 file, a Zarr store, a ``.npy`` file, or an array.
+    path : path, ndarray, h5py.Dataset, zarr.Array, dask array or sparse matrix of SciPy
+        An HDF5 file, a Zarr store, a ``.npy`` file, a sparse matrix in an ``.npz`` file, or an array.
     matrix : str, optional
         Path of the array inside the file; needed where the file holds several.
     **reading
@@ -63,6 +64,18 @@ def open_matrix(path: Any, matrix: str | None = None, **reading: Any) -> Source:
         mask : path or ndarray
             Features to take: an array of bool, or of 0 and 1, over their axes; ``FILE.npy``, ``FILE:PATH``, or its path
             in the same file.
+        sparse_format : {"csr", "csc"}
+            Whether a sparse group that does not say it is compressed by rows or by columns.
+        raw : bool
+            Take packed entries as they are stored, whatever attributes say of scale, offset and missing values.
+        missing : {"refuse", "mean", "drop-columns", "drop-rows"}
+            What becomes of missing entries (NaN). One more read before the sweeps counts them; they then take the mean
+            of their feature, or stored columns or rows that have any are left out. Infinity is always refused.
+        level : int
+            Of an image kept in several resolutions (OME-Zarr), which; 0, the full one, by default.
+        row_names, column_names : str
+            Names of the stored rows and columns, where the file's own are missing or others are wanted: a path inside
+            the file, ``FILE:PATH``, a text file with a name a line, or an .npy file of text.
 
     Returns
     -------
@@ -135,7 +148,7 @@ def decompose(
         variance : float
             Instead of a rank: the share of the total variance to reach, with at most `max_rank` (500) components.
         samples : {"rows", "columns"}
-            Stored axis that holds the samples; rows unless labels in the file say otherwise.
+            Stored axis that holds the samples; by default as markers in the file say, else rows.
         center : {"features", "none"}
         scale : {"none", "unit"}
             Unit variance with n − 1; constant features stay zero.
@@ -152,6 +165,8 @@ def decompose(
         route : {"auto", "direct", "gram", "tsqr", "krylov"}
         axis : {"auto", "rows", "columns"}
             Axis the panels run along.
+        products : {"auto", "sparse", "dense"}
+            Whether panels of a sparse matrix are multiplied without their zeros.
         seed : int, default 0
 
     Returns
@@ -192,6 +207,7 @@ def decompose(
                 discard_finished(target)
                 check_output(target, overwrite=overwrite, source_path=_path_of(source))
             check_complete(opened)
+            opened = _settle_missing(opened, options, control)
             foreseen = _foresee(opened, options, control, probe=True)
             plan = foreseen.plan
             if planned is not None:
@@ -251,7 +267,8 @@ def forecast(
     try:
         with _environment():
             check_complete(opened)
-            return _foresee(opened, options, Control(progress), probe=True)
+            seen = opened.provisional() if isinstance(opened, MissingSource) else opened
+            return _foresee(seen, options, Control(progress), probe=True)
     finally:
         if opened is not source:
             opened.close()
@@ -300,10 +317,14 @@ def verify(
         with _environment():
             check_complete(opened)
             made_with = factors.attributes["request"] | {"rank": factors.rank, "variance": None}
-            request = _request({**made_with, "memory": memory, "workers": workers})
+            asked = {**made_with, "memory": memory, "workers": workers}
+            request = _request(asked)
+            _require_same_reading(factors, opened.spec)
+            opened = _settle_missing(opened, asked, control)
             plan = make_plan(
                 opened.spec, replace(request, route="krylov", precision="double",
                 axis=factors.attributes["plan"]["axis"]), ceiling=_ceiling(request), processors=machine.processors(),
+                line_nonzeros=line_counter(opened),
             )  # fmt: skip
             return verify_factors(factors, opened, plan, control, _scratch_folder(None, None), seed, started)
     finally:
@@ -375,7 +396,7 @@ def _foresee(source: Source, options: dict[str, Any], control: Control, *, probe
     request = _request(options)
     plan = make_plan(
         source.spec, request, ceiling=_ceiling(request), processors=machine.processors(),
-        result_bytes=lambda rank: _result_bytes(source.spec, rank),
+        result_bytes=lambda rank: _result_bytes(source.spec, rank), line_nonzeros=line_counter(source),
     )  # fmt: skip
     free = machine.available_bytes()
     if free < plan.planned_bytes:
@@ -385,11 +406,39 @@ def _foresee(source: Source, options: dict[str, Any], control: Control, *, probe
     return make_forecast(source, plan, control, probe=probe)
 
 
+def _settle_missing(source: Source, options: dict[str, Any], control: Control) -> Source:
+    """Count missing entries where they are to be filled or left out, once it is known that the options can be met."""
+    if not isinstance(source, MissingSource):
+        return source
+    return settle_missing(source, _foresee(source, options, control, probe=False).plan, control)
+
+
+def _require_same_reading(factors: Factors, spec: MatrixSpec) -> None:
+    """Refuse to compare a result with a matrix whose entries were made otherwise."""
+    made, name = factors.attributes["source"], factors.path or "the result"
+    policy = (made.get("missing") or {}).get("policy", "refuse")
+    now = "refuse" if spec.missing is None else spec.missing.policy
+    if policy != now:
+        raise OptionError(
+            f"{name} was made with --missing {policy}, and the matrix is now read with --missing {now}",
+            remedy=f"Add --missing {policy}.",
+        )
+    decoded = made.get("decoded") or ""
+    if decoded != spec.decoded:
+        raise OptionError(
+            f"{name} was made of entries that were decoded otherwise",
+            evidence=[f"then: {decoded or 'as stored'}", f"now: {spec.decoded or 'as stored'}"],
+            remedy="Leave out --raw." if decoded else "Add --raw.",
+        )
+
+
 def _result_bytes(spec: MatrixSpec, rank: int) -> int:
     """What writing the result holds in memory."""
     wide = np.dtype(np.complex128 if spec.dtype.kind == "c" else np.float64)
     # Which axis holds the samples does not change the sum over both sides.
-    return store_cost(spec.shape, rank, wide).memory_bytes + order_bytes(spec)
+    named = [plan_names(names.count, names.held) for names in (spec.row_names, spec.column_names) if names is not None]
+    names_bytes = sum(cost.memory_bytes for cost in named)
+    return store_cost(spec.shape, rank, wide).memory_bytes + names_bytes + order_bytes(spec)
 
 
 def _path_of(source: Any) -> Path | None:

@@ -14,10 +14,19 @@ class Reading:
 
     Attributes
     ----------
-    absent, follow_links
+    absent, follow_links, sparse_format
         See `Access`.
     sample_axes, region, mask
         See `AxisChoice`.
+    raw : bool
+        Take packed entries as they are stored.
+    missing : str
+        What becomes of missing entries, a word of `POLICIES`.
+    level : int or None
+        Of an image in several resolutions, which; 0, the full one, by default.
+    row_names, column_names : str or None
+        Where the names of rows and columns stand: a path inside the file of the matrix, ``FILE:PATH``, a text file
+        with a name a line, or an .npy file of text. By default where the layout of the file keeps them.
     """
 
     absent: str = "refuse"
@@ -25,11 +34,17 @@ class Reading:
     sample_axes: Any = None
     region: Any = None
     mask: Any = None
+    sparse_format: str | None = None
+    raw: bool = False
+    missing: str = "refuse"
+    level: int | None = None
+    row_names: str | None = None
+    column_names: str | None = None
 
     @property
     def access(self) -> Access:
         """What is allowed while a file is opened."""
-        return Access(self.absent, self.follow_links)
+        return Access(self.absent, self.follow_links, self.sparse_format)
 
     @property
     def axes(self) -> AxisChoice:

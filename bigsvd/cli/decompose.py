@@ -82,8 +82,9 @@ def decompose(words: list[str], /, file: str, out: str, quiet: bool, as_json: bo
                 reporter.say([*announcement(forecast, text_width()), ""])
 
         factors = api.decompose(file, out, progress=stops, planned=planned, command=words, **given(options))
+    strongest = factors.strongest_features()
     if as_json:
-        print_json(decomposition_facts(factors.certificate, factors.attributes, factors.path))
+        print_json(decomposition_facts(factors.certificate, factors.attributes, factors.path, strongest))
     else:
-        print_lines(summary_lines(factors.certificate, factors.attributes, Path(out), text_width()))
+        print_lines(summary_lines(factors.certificate, factors.attributes, Path(out), text_width(), strongest))
     return MET if factors.certificate.tolerance_met else NOT_MET

@@ -6,13 +6,14 @@ from typing import Any
 
 import click
 
-from bigsvd.cli.options import given, links_option, output_options, print_lines, text_width
+from bigsvd.cli.options import given, links_option, output_options, print_lines, sparse_option, text_width
 from bigsvd.cli.program import print_json
 
 
 @click.command(short_help="List every matrix in a file, and what to type next.")
 @click.argument("file")
 @links_option
+@sparse_option
 @output_options
 def inspect(file: str, quiet: bool, as_json: bool, **options: Any) -> None:
     """List every matrix in FILE, and what to type to decompose it.

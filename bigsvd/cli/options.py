@@ -54,12 +54,46 @@ def links_option(command: Command) -> Command:
     return click.option("--follow-links", is_flag=True, default=None, help=text)(command)
 
 
+def sparse_option(command: Command) -> Command:
+    """Add ``--sparse-format``."""
+    text = "Whether a sparse group that does not say it is compressed by rows (csr) or by columns (csc)."
+    return click.option("--sparse-format", type=click.Choice(["csr", "csc"]), help=text)(command)
+
+
+def level_option(command: Command) -> Command:
+    """Add ``--level``."""
+    text = "Of an image kept in several resolutions (OME-Zarr), which one.  [default: 0, the full one]"
+    return click.option("--level", type=int, metavar="N", help=text)(command)
+
+
+def names_options(command: Command) -> Command:
+    """Add ``--row-names`` and ``--column-names``."""
+    text = "Names of the stored columns, likewise."
+    command = click.option("--column-names", metavar="PLACE", help=text)(command)
+    text = (
+        "Names of the stored rows: a path inside FILE, OTHER:PATH, a text file with a name a line, or an .npy file."
+        "  [default: where the layout of FILE keeps them]"
+    )
+    return click.option("--row-names", metavar="PLACE", help=text)(command)
+
+
 def reading_options(command: Command) -> Command:
-    """Add everything that decides what the entries of the matrix are."""
+    """Add the options that decide what the entries of FILE are; see `bigsvd.adapt.Reading`."""
     for option in reversed(_AXES):
         command = option(command)
+    command = sparse_option(command)
+    raw = "Take packed entries as stored: apply no scale_factor, add_offset, _FillValue or other such attribute."
+    command = click.option("--raw", is_flag=True, default=None, help=raw)(command)
+    gaps = (
+        "What becomes of missing entries (NaN): stop; take the mean of their feature; leave out the stored columns, or"
+        " rows, that have any. Counted in one more read.  [default: refuse]"
+    )
+    choices = click.Choice(["refuse", "mean", "drop-columns", "drop-rows"])
+    command = click.option("--missing", type=choices, help=gaps)(command)
     text = "What to do with chunks that were never written: stop, or read the fill value.  [default: refuse]"
-    return click.option("--absent", type=click.Choice(["refuse", "fill"]), help=text)(links_option(command))
+    return click.option("--absent", type=click.Choice(["refuse", "fill"]), help=text)(
+        links_option(level_option(command))
+    )
 
 
 def machine_options(command: Command) -> Command:
@@ -103,12 +137,11 @@ _AXES = (
 _DECOMPOSITION: tuple[Callable[[Any], Any], ...] = (
     matrix_option,
     reading_options,
+    names_options,
     _number("--rank", int, "K", "Components to compute.  [default: 50]"),
     _number("--variance", float, "SHARE", "Instead of a rank: the share of the total variance to reach, such as 0.95."),
     _number("--max-rank", int, "K", "Most components that --variance may lead to.  [default: 500]"),
-    _choice(
-        "--samples", "rows columns", "Stored axis that holds the samples.  [default: rows, unless the file objects]"
-    ),
+    _choice("--samples", "rows columns", "Stored axis that holds the samples.  [default: as the file says, else rows]"),
     _choice("--center", "features none", "Subtract the mean of every feature, as PCA does.  [default: features]"),
     _choice("--scale", "unit none", "Divide every feature by its standard deviation (n − 1).  [default: none]"),
     _number("--tolerance", float, "T", "Wanted width of the intervals relative to their values.  [default: 1e-3]"),
@@ -118,5 +151,6 @@ _DECOMPOSITION: tuple[Callable[[Any], Any], ...] = (
     _choice("--precision", "auto single double", "Of the products; auto: single where it is safe.  [default: auto]"),
     _choice("--route", "auto direct gram tsqr krylov", "Method.  [default: auto]"),
     _choice("--axis", "auto rows columns", "Axis along which the file is cut into panels.  [default: auto]"),
+    _choice("--products", "auto sparse dense", "Leave the zeros of a sparse matrix out of products?  [default: auto]"),
     _number("--seed", int, "N", "Of every random number.  [default: 0]"),
 )

@@ -3,6 +3,7 @@
 from bigsvd.drive.deadline import Deadline
 from bigsvd.drive.file_order import order_bytes
 from bigsvd.drive.keeping import KeptRun, keep_run
+from bigsvd.drive.missing import settle_missing
 from bigsvd.drive.outcome import Outcome
 from bigsvd.drive.probe import Forecast, make_forecast
 from bigsvd.drive.run import run
@@ -22,6 +23,7 @@ __all__ = [
     "make_forecast",
     "order_bytes",
     "run",
+    "settle_missing",
     "verify_factors",
     "write_result",
 ]

@@ -39,9 +39,9 @@ class FileOrder:
         """Places in file order of lines start … stop, counted among those that are taken; shape (lines,)."""
         if self.same or self.side is None:
             return np.arange(start, stop)
-        places = self.side.file_order(start, stop)
         if self.side.chosen is None:
-            return places
+            return self.side.ranks(start, stop)
+        places = self.side.file_order(start, stop)
         if self._before is None:
             self._before = np.cumsum(self.side.chosen.reshape(-1)) - 1
         return np.asarray(self._before[places])

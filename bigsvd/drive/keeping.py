@@ -96,7 +96,8 @@ def keep_run(
         As `RunFolder.open`.
     """
     wide = np.dtype(np.complex128 if plan.spec.dtype.kind == "c" else np.float64)
-    result = store_cost((plan.samples, plan.features), plan.rank, wide).disk_bytes
+    named = sum(names.count for names in (plan.sample_names, plan.feature_names) if names is not None)
+    result = store_cost((plan.samples, plan.features), plan.rank, wide, named).disk_bytes
     needs = [Need("scratch", scratch, plan.scratch_bytes)]
     if out is None or not plan.spec.fingerprint:
         needs += [] if out is None else [Need("result", _parent(out), result)]

@@ -11,7 +11,7 @@ import numpy as np
 from bigsvd.plan import NOMINAL_SHARE_OF_SLICES, Costs, Geometry, Plan, pass_costs, predict
 from bigsvd.prepare import Preparation
 from bigsvd.source import Source
-from bigsvd.sweep import Control, Engine, PanelReader, SweepTask
+from bigsvd.sweep import Control, Engine, Panel, PanelReader, SweepTask
 
 # Below this size a run is over before a probe would say anything.
 LEAST_PROBED = 64 * 2**20
@@ -73,6 +73,8 @@ def make_forecast(source: Source, plan: Plan, control: Control, *, probe: bool) 
     pilot = len(plan.pilot_panels) / geometry.panels
     sweeps = 1 if plan.resident else plan.nominal_sweeps
     expected = int(spec.decoded_bytes * (sweeps * geometry.amplification + pilot + NOMINAL_SHARE_OF_SLICES))
+    if spec.missing is not None:
+        expected += spec.missing.bytes
     if not probe or spec.decoded_bytes < LEAST_PROBED or geometry.panels < PROBE_PANELS:
         return Forecast(plan, None, 0, expected)
     before = control.bytes_read
@@ -100,7 +102,7 @@ class _WarmReader(PanelReader):
     def __init__(self, source: Source, geometry: Geometry, control: Control) -> None:
         super().__init__(source, geometry, control)
         self._mine = threading.local()
-        self._held: dict[int, np.ndarray] = {}
+        self._held: dict[int, Panel] = {}
 
     def buffer(self) -> np.ndarray:
         """Memory for the largest panel."""
@@ -109,9 +111,12 @@ class _WarmReader(PanelReader):
         buffer: np.ndarray = self._mine.buffer
         return buffer
 
-    def fetch(self, panel: int, buffer: np.ndarray) -> np.ndarray:
+    def fetch(self, panel: int, buffer: np.ndarray) -> Panel:
         """The panel, read into the buffer unless that was done in the sweep before."""
         if panel not in self._held:
+            if self.geometry.sparse:
+                # It has no buffer that is used again.
+                self._held.pop(panel - 1, None)
             self._held[panel] = super().fetch(panel, buffer)
         return self._held[panel]
 

@@ -86,7 +86,7 @@ class Proof:
             tall, error = measured_rounding(sums.rounding, self.sweeps.units)
             return error, tall
         assert sums.triangle is not None
-        frobenius = float(np.sqrt(sums.energy))
+        frobenius = float(np.sqrt(sums.energy)) + self.sweeps.cancelled
         depth = self.sweeps.depth(sums.triangle.shape[0])
         # Norms of the columns as they were swept, means included.
         norms = np.linalg.norm(sums.triangle[:, -used.shape[1] :], axis=0)

@@ -5,6 +5,7 @@ from __future__ import annotations
 from contextlib import suppress
 from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -15,8 +16,11 @@ from bigsvd.errors import OptionError
 from bigsvd.plan import SLICE_ENTRIES, Plan, make_plan
 from bigsvd.prepare import Preparation, line_statistics, prepare_unit
 from bigsvd.randomness import draw_without_repeat
-from bigsvd.source import MatrixSpec, Source
+from bigsvd.source import MatrixSpec, Source, line_counter
 from bigsvd.sweep import Control
+
+if TYPE_CHECKING:
+    from scipy.sparse import csr_array
 
 STREAM_SLICES = 2
 MOST_SLICES = 3
@@ -56,8 +60,10 @@ class SliceSource:
         shape = (rows[1] - rows[0], columns[1] - columns[0])
         self._spec = replace(
             parent.spec, name=f"{parent.spec.name}[{rows[0]}:{rows[1]}, {columns[0]}:{columns[1]}]", shape=shape,
-            chunks=(1, 1), stored_bytes=None, samples_hint=None, fingerprint="",
+            chunks=(1, 1), stored_bytes=None, samples_hint=None, fingerprint="", row_names=None, column_names=None,
             edges=(None, None), unfolding=None,
+            # What is left of a sparse matrix is read as a dense rectangle.
+            nonzeros=None, compressed_axis=None,
         )  # fmt: skip
 
     @property
@@ -205,13 +211,22 @@ def check_slice(
         precision=precision, panel_lines=max(1, lines // (2 * LEAST_PANELS)), width_limit=1, memory=None,
         max_sweeps=max(8, plan.request.max_sweeps), least_sweeps=2,
     )  # fmt: skip
-    small = make_plan(part.spec, request, ceiling=max(plan.ceiling, 2**30), processors=plan.workers)
-    small = replace(small, resident=True)
     kept = np.empty(shape, part.spec.dtype)
     part.read((0, shape[0]), (0, shape[1]), kept)
     control.bytes_read += _decoded(source.spec, rectangle)
+    # Whatever the whole matrix keeps open is there already.
+    spec = replace(part.spec, held_bytes=0)
+    if plan.geometry.sparse:
+        spec = replace(spec, nonzeros=int(np.count_nonzero(kept)), compressed_axis=source.spec.compressed_axis)
+    held = _Kept(spec, kept)
+    # A slice of nothing but zeros has none to leave out.
+    request = replace(request, products=plan.products if held.spec.nonzeros else "auto")
+    small = make_plan(
+        held.spec, request, ceiling=max(plan.ceiling, 2**30), processors=plan.workers, line_nonzeros=line_counter(held)
+    )
+    small = replace(small, resident=True)
     quiet = Control()
-    outcome = run(_Kept(part.spec, kept), small, quiet, scratch_folder)
+    outcome = run(held, small, quiet, scratch_folder)
     try:
         return _compare(outcome, _prepared(kept, plan), rectangle)
     finally:
@@ -226,6 +241,17 @@ class _Kept:
 
     def read(self, rows: tuple[int, int], columns: tuple[int, int], out: np.ndarray) -> None:
         out[...] = self.values[rows[0] : rows[1], columns[0] : columns[1]]
+
+    def read_lines(self, first: int, stop: int) -> csr_array:
+        from scipy.sparse import csr_array
+
+        return csr_array(self._lines(first, stop))
+
+    def lines_nonzeros(self, first: int, stop: int) -> int:
+        return int(np.count_nonzero(self._lines(first, stop)))
+
+    def _lines(self, first: int, stop: int) -> np.ndarray:
+        return (self.values if self.spec.compressed_axis == 0 else self.values.T)[first:stop]
 
     def close(self) -> None:
         """Nothing is open."""

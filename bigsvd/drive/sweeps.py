@@ -11,12 +11,12 @@ import numpy as np
 from bigsvd.certify import SumDepth, gamma
 from bigsvd.errors import NonFiniteError, OptionError, SourceChangedError
 from bigsvd.journal import Journal
-from bigsvd.plan import UNIT_LINES, Plan, fold_lines
+from bigsvd.plan import Plan, fold_lines
 from bigsvd.prepare import Preparation
 from bigsvd.randomness import draw_without_repeat
 from bigsvd.solve import Learnt, Pilot, first_statistics, in_range, learn, take_pilot
 from bigsvd.source import Source
-from bigsvd.sweep import Control, Engine, PanelReader, Partial, Scratch, SweepTask
+from bigsvd.sweep import Control, Engine, PanelReader, Partial, Scratch, SweepTask, worst
 from bigsvd.units import show_count
 
 # Panels whose first unit is recomputed in double, to measure rounding in single.
@@ -48,6 +48,8 @@ class Sweeps:
         Sweeps made so far.
     energy, energy_rounding : float
         ‖A‖²_F of the prepared matrix, and a bound of its rounding.
+    cancelled : float
+        Bound of what products without zeros have beyond ‖A‖_F in their terms, in the present sweep: 2·‖1μᵀD‖_F.
     learnt : Learnt or None
         Statistics of features that lie across the sweep.
     line_mean, line_inverse : ndarray, shape (lines,), or None
@@ -64,6 +66,7 @@ class Sweeps:
     made: int = 0
     energy: float = 0.0
     energy_rounding: float = 0.0
+    cancelled: float = 0.0
     learnt: Learnt | None = None
     line_mean: np.ndarray | None = None
     line_inverse: np.ndarray | None = None
@@ -97,7 +100,8 @@ class Sweeps:
     @property
     def units(self) -> int:
         """Units of a whole sweep."""
-        return sum(-(-(stop - start) // UNIT_LINES) for start, stop in pairwise(self.plan.geometry.edges))
+        geometry = self.plan.geometry
+        return sum(-(-(stop - start) // geometry.unit_lines) for start, stop in pairwise(geometry.edges))
 
     def take_mean(self) -> None:
         """Hold one panel for the first sweep, and take a first mean and scale from it."""
@@ -106,7 +110,7 @@ class Sweeps:
         self.reader.hold(panel)
         held = self.reader.peek(panel)
         if self.across_features:
-            lines = held if self.plan.geometry.axis == 0 else held.T
+            lines = held.T if isinstance(held, np.ndarray) and self.plan.geometry.axis == 1 else held
             self.preparation = first_statistics(lines, self.preparation, self.work)
 
     def take_pilot(self, directions: int, *, may_be_single: bool) -> Pilot:
@@ -181,6 +185,7 @@ class Sweeps:
         if not fresh:
             self._known_energies(sums)
         sums.level_rounding()
+        self.cancelled = 2 * float(np.sqrt(sums.cancelled))
         if sums.overflow:
             self._give_up_single(block is not None)
         learnt = self._take_statistics(sums) if fresh else self._known_statistics()
@@ -216,8 +221,15 @@ class Sweeps:
             place = self.plan.spec.unfolding.place(row, column)
         raise NonFiniteError(
             f"{self.plan.spec.name}: {show_count(sums.bad)} {what} NaN or infinite, and a decomposition needs numbers",
-            evidence=[f"first at {place} (counted from 0)"],
-            remedy="Replace or drop them in the file, then run again.",
+            evidence=[
+                f"first at {place} (counted from 0)",
+                *_bad_lines(sums, self.plan),
+                *_decoded_words(self.plan),
+            ],
+            remedy="Replace the infinite values in the file: they do not count as missing."
+            if sums.infinite
+            else "Add --missing mean, which fills in the mean of each feature, or --missing drop-rows or drop-columns,"
+            " which leave out the rows or columns that have any.",
         )
 
     def _refuse_change(self, sums: Partial) -> None:
@@ -277,6 +289,9 @@ class Sweeps:
             # Summed in double; the entries were rounded to single when they were prepared.
             per_sum += 4 * 2.0**-24
         self.energy_rounding = per_sum * sums.energy
+        if self.cancelled and not self.across_features:
+            # The error of a mean enters the energy squared.
+            self.energy_rounding += (gamma(depth.across, complex_entries=depth.complex_entries) * self.cancelled) ** 2
         self._energies_in, self._unit_energies = self.work, sums.unit_energies
         if self.across_features:
             learnt = learn(sums, self.preparation)
@@ -298,10 +313,14 @@ class Sweeps:
         plan, edges = self.plan, self.plan.geometry.edges
         runs = [edges[first : stop + 1] for wave in plan.waves for first, stop in wave]
         longest = max(run[-1] - run[0] for run in runs)
-        units = max(sum(-(-(stop - start) // UNIT_LINES) for start, stop in pairwise(run)) for run in runs)
+        unit_lines = plan.geometry.unit_lines
+        units = max(sum(-(-(stop - start) // unit_lines) for start, stop in pairwise(run)) for run in runs)
         levels = int(np.ceil(np.log2(max(2, *map(len, plan.waves))))) + len(plan.waves)
+        # Means that are subtracted from products are sums across as well.
+        implicit_means = plan.geometry.sparse and plan.centred and not self.across_features
         return SumDepth(
-            across=plan.geometry.across, unit_lines=UNIT_LINES, additions=units + levels, fold_rows=longest,
+            across=(2 if implicit_means else 1) * plan.geometry.across, unit_lines=unit_lines,
+            additions=units + levels, fold_rows=longest,
             fold_columns=columns, folds_within=-(-longest // fold_lines(columns)), folds=levels,
             complex_entries=self.wide.kind == "c",
         )  # fmt: skip
@@ -321,6 +340,36 @@ class Sweeps:
     def close(self) -> None:
         """End the workers."""
         self.engine.close()
+
+
+def _bad_lines(sums: Partial, plan: Plan) -> list[str]:
+    """How many rows and columns hold NaN or infinity, and which hold most."""
+    assert sums.worst_lines is not None
+    assert sums.bad_across is not None
+    columns = np.flatnonzero(sums.bad_across)
+    across = worst(None, np.stack([columns, sums.bad_across[columns]], axis=1))
+    assert across is not None
+    found = [(sums.bad_lines, sums.worst_lines), (len(columns), across)]
+    if plan.geometry.axis == 1:
+        found.reverse()
+    said = []
+    for axis, (count, lines) in enumerate(found):
+        name = ("row", "column")[axis]
+        if plan.spec.unfolding is not None:
+            most = "; ".join(f"{plan.spec.unfolding.line(axis, int(line))} ({show_count(int(n))})" for line, n in lines)
+            said.append(f"in {show_count(count)} of {show_count(plan.spec.shape[axis])} {name}s; most at {most}")
+            continue
+        most = ", ".join(f"{show_count(int(line))} ({show_count(int(held))})" for line, held in lines)
+        said.append(f"in {show_count(count)} of {show_count(plan.spec.shape[axis])} {name}s; most in {name} {most}")
+    if sums.infinite:
+        said.append(f"{show_count(sums.bad - sums.infinite)} are NaN, {show_count(sums.infinite)} infinite")
+    return said
+
+
+def _decoded_words(plan: Plan) -> list[str]:
+    """Where NaN may come from, if not from the file."""
+    decoded = plan.spec.decoded
+    return [f"NaN also stands for what is missing by attributes of the file: {decoded}"] if decoded else []
 
 
 def _spread(scale: np.ndarray) -> float:

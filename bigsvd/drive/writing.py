@@ -80,6 +80,8 @@ def write_result(
         overwrite=overwrite,
         lock=kept.folder.lock if kept else None,
         axes=None if plan.spec.unfolding is None else StoredAxes.of(plan.spec.unfolding),
+        sample_names=plan.sample_names,
+        feature_names=plan.feature_names,
     ) as writer:
         control.begin("write", (plan.samples + plan.features) * rank * outcome.scratch.dtype.itemsize)
         conjugate = tall_side == "right"
@@ -102,13 +104,15 @@ def write_result(
             tolerance_met=certificate.tolerance_met and sound,
             verdict=certificate.verdict if sound else f"{certificate.verdict}; bounds broken on slices of the file",
         )  # fmt: skip
+        record = run_record(outcome, foreseen, control, started, held_before)
+        record["remarks"] += writer.names_remarks
         return writer.finish(
             singular_values=certificate.value,
             column_mean=features.restore(outcome.mean),
             column_scale=1.0 / features.restore(outcome.inverse_scale),
             spectrum=spectrum_record(outcome, certificate),
             certificate=certificate,
-            attributes=run_record(outcome, foreseen, control, started, held_before)
+            attributes=record
             | {
                 "resumed": kept.journal.resumed if kept else 0,
                 "earlier_seconds": kept.journal.earlier_seconds if kept else 0.0,

@@ -1,6 +1,6 @@
 """The result store: its layout, atomic writing, opening and the check of its own digests."""
 
-from bigsvd.factors.layout import store_cost
+from bigsvd.factors.layout import plan_names, store_cost
 from bigsvd.factors.lock import OutputLock
 from bigsvd.factors.opening import open_factors
 from bigsvd.factors.place import Place, check_output, is_whole
@@ -17,5 +17,6 @@ __all__ = [
     "check_output",
     "is_whole",
     "open_factors",
+    "plan_names",
     "store_cost",
 ]

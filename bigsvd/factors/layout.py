@@ -11,14 +11,21 @@ VECTORS = {"left_vectors": ("row", "component"), "right_vectors": ("column", "co
 VALUES = {"singular_values": ("component",), "column_mean": ("column",), "column_scale": ("column",)}
 SPECTRUM = ("value", "lower", "upper", "variance", "variance_share", "cumulative_share")
 GROUPS = ("spectrum", "certificate")
-MEMBERS = frozenset({"zarr.json", *VECTORS, *VALUES, *GROUPS, "row_name", "column_name"})
+NAMES = {"row_name": ("row",), "column_name": ("column",)}
+MEMBERS = frozenset({"zarr.json", *VECTORS, *VALUES, *GROUPS, *NAMES})
 
 _CHUNK_BYTES = 32 * 2**20
 _LARGEST_CHUNK_BYTES = 64 * 2**20
-# 2 × 400 files of vectors, 2 × 20 of column_mean and column_scale, about 60 others: under 1,000 at any size.
+# 2 × 400 files of vectors, 2 × 20 of column_mean and column_scale, as many of names, about 60 others: under 1,000.
 _VECTOR_FILES = 400
 _VALUE_FILES = 20
 _OTHER_FILES = 64
+
+
+# Names of a chunk, and the text that they may have together: 256 bytes each, or 4 MiB for few. The text is held as
+# single strings, packed, encoded and compressed.
+_CHUNK_NAMES, _NAME_BYTES, _LEAST_TEXT, _TEXT_COPIES = 16_384, 256, 4 * 2**20, 4
+_NAME_DISK = 64
 
 
 @dataclass(frozen=True)
@@ -94,7 +101,45 @@ def plan_chunk(length: int, itemsize: int) -> int:
     return max(min(length, _CHUNK_BYTES // itemsize), -(-length // _VALUE_FILES), 1)
 
 
-def store_cost(shape: tuple[int, int], rank: int, dtype: np.dtype) -> StoreCost:
+@dataclass(frozen=True)
+class NamesCost:
+    """How the names of one side are cut, and what writing them holds.
+
+    Attributes
+    ----------
+    chunk : int
+        Names of a chunk.
+    text_bytes : int
+        Most text of a chunk.
+    memory_bytes : int
+        Upper bound of what is held: text in its copies, and a number for each name of the side.
+    """
+
+    chunk: int
+    text_bytes: int
+    memory_bytes: int
+
+
+def plan_names(count: int, decoded_together: int = 0) -> NamesCost:
+    """Cut names into at most 20 chunks.
+
+    Parameters
+    ----------
+    count : int
+    decoded_together : int
+        Names that their source decodes at a time.
+
+    Examples
+    --------
+    >>> plan_names(1_000_000)
+    NamesCost(chunk=50000, text_bytes=12800000, memory_bytes=75200000)
+    """
+    chunk = max(_CHUNK_NAMES, -(-count // _VALUE_FILES))
+    text = max(_LEAST_TEXT, min(chunk, count) * _NAME_BYTES)
+    return NamesCost(min(chunk, max(count, 1)), text, _TEXT_COPIES * text + 24 * count + _NAME_BYTES * decoded_together)
+
+
+def store_cost(shape: tuple[int, int], rank: int, dtype: np.dtype, names: int = 0) -> StoreCost:
     """Bound the bytes, memory and files of a result before anything is written.
 
     Parameters
@@ -105,6 +150,8 @@ def store_cost(shape: tuple[int, int], rank: int, dtype: np.dtype) -> StoreCost:
         Components k.
     dtype : numpy.dtype
         Type of the stored vectors.
+    names : int
+        Names of samples and features together; counted on disk with 64 bytes each. For memory see `plan_names`.
 
     Returns
     -------
@@ -114,14 +161,14 @@ def store_cost(shape: tuple[int, int], rank: int, dtype: np.dtype) -> StoreCost:
     --------
     >>> cost = store_cost((100_000_000, 5_000), 50, np.dtype("float64"))
     >>> cost.disk_bytes // 10**9, cost.memory_bytes // 2**20, cost.files
-    (40, 323, 404)
+    (40, 323, 444)
     """
     grids = [plan_grid(side, rank, dtype.itemsize) for side in shape]
     vectors = sum(shape) * rank * dtype.itemsize
     chunk = max(grid.chunk_rows * rank * dtype.itemsize for grid in grids)
     # zstd adds at most 1/256 to what it cannot compress; 1 KiB a component is room for the spectrum beyond the rank.
-    disk = vectors + vectors // 256 + 25 * shape[1] + 1024 * rank + 2**20
-    files = sum(grid.files for grid in grids) + 2 * _VALUE_FILES + _OTHER_FILES
+    disk = vectors + vectors // 256 + 25 * shape[1] + 1024 * rank + 2**20 + _NAME_DISK * names
+    files = sum(grid.files for grid in grids) + 4 * _VALUE_FILES + _OTHER_FILES
     # Two buffers and an encoded chunk while streaming; while reading back an encoded and a decoded chunk beside freed
     # buffers that the allocator keeps: 4.0 chunks measured. Mean and scale are read back and opened: 40 bytes a column.
     return StoreCost(disk, 5 * chunk + 40 * shape[1] + 2**22, files)

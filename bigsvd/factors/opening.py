@@ -90,6 +90,10 @@ def load_factors(files: StoreFiles, record: dict[str, Any], path: Path | None, i
         return {key: np.asarray(array[...]) for key, array in part.arrays()}
 
     labels = {name: np.asarray(vectors(name)[...]) for name in names_in(record) if name in group}
+
+    def names(name: str) -> zarr.Array[Any] | None:
+        return vectors(name) if name in group else None
+
     left, right = vectors("left_vectors"), vectors("right_vectors")
     return Factors(
         shape=(left.shape[0], right.shape[0]),
@@ -102,6 +106,8 @@ def load_factors(files: StoreFiles, record: dict[str, Any], path: Path | None, i
         attributes={key: from_plain(entry) for key, entry in record.items() if key not in RESERVED or key == "created"},
         axes=StoredAxes.restore(record["axes"], labels) if "axes" in record else None,
         path=path,
+        sample_names=names("row_name"),
+        feature_names=names("column_name"),
         _root=identity,
     )
 

@@ -13,6 +13,7 @@ import numpy as np
 from bigsvd.certify import Certificate
 from bigsvd.errors import OptionError, ResultError
 from bigsvd.factors.stored_axes import StoredAxes
+from bigsvd.factors.strongest import strongest_features
 from bigsvd.units import show_count
 
 if TYPE_CHECKING:
@@ -71,6 +72,8 @@ class Factors:
         The store; None in memory.
     axes : StoredAxes or None
         Of the array that the matrix was unfolded from: names, labels, mask; None where the file holds a matrix.
+    sample_names, feature_names : zarr.Array or None
+        Names of the rows of either side as text, read from disk when sliced; None where the file has none.
 
     Examples
     --------
@@ -117,6 +120,8 @@ class Factors:
     attributes: dict[str, Any]
     path: Path | None
     axes: StoredAxes | None = None
+    sample_names: zarr.Array[Any] | None = None
+    feature_names: zarr.Array[Any] | None = None
     _root: tuple[int, ...] = field(default=())
 
     def scores(self, components: int | Sequence[int] | np.ndarray | None = None) -> np.ndarray:
@@ -177,6 +182,26 @@ class Factors:
         loadings = self._take(self.right_vectors, range(self.shape[1]), chosen)
         loadings *= deviations
         return loadings
+
+    def strongest_features(self, count: int = 5) -> list[list[tuple[str, float]]] | None:
+        """Names and entries of the features that weigh most in each right vector, the strongest first.
+
+        Parameters
+        ----------
+        count : int
+            Features of each component.
+
+        Returns
+        -------
+        list of list of (str, float), or None
+            By component; of complex vectors the moduli. None where the features have no names.
+
+        Notes
+        -----
+        Cost: one read of V, one chunk of it held.
+        """
+        self._refuse_if_replaced()
+        return strongest_features(self.right_vectors, self.feature_names, count)
 
     def rebuild(
         self,

@@ -14,11 +14,11 @@ from bigsvd.source import Side, Unfolding
 
 # Longest axis of which every label is kept; longer ones are told by start and step.
 MOST_LABELS = 1_000_000
-MASK = "feature_mask"
+MASK, SAMPLE_MASK = "feature_mask", "sample_mask"
 # Names that an array of a result has, or a dimension, or that no folder may have everywhere.
 _TAKEN = {
     *("row", "column", "component", "computed", "left_vectors", "right_vectors", "singular_values", "column_mean"),
-    *("column_scale", "spectrum", "certificate", "row_name", "column_name", MASK),
+    *("column_scale", "spectrum", "certificate", "row_name", "column_name", MASK, SAMPLE_MASK),
 }
 _PLAIN_NAME = re.compile(r"[A-Za-z][A-Za-z0-9_]{0,63}")
 
@@ -73,13 +73,14 @@ class StoredAxes:
     ----------
     samples, features : tuple of StoredAxis
         Axes that rows and columns of the matrix stand for; the last of each runs fastest.
-    mask : ndarray of bool or None
-        Features that are columns, of the shape of their axes; None for all.
+    mask, sample_mask : ndarray of bool or None
+        Features that are columns, and samples that are rows, of the shape of their axes; None for all.
     """
 
     samples: tuple[StoredAxis, ...]
     features: tuple[StoredAxis, ...]
     mask: np.ndarray | None = None
+    sample_mask: np.ndarray | None = None
 
     @classmethod
     def of(cls, unfolding: Unfolding) -> StoredAxes:
@@ -103,6 +104,7 @@ class StoredAxes:
             tuple(stored(axis, unfolding.samples, at) for at, axis in enumerate(unfolding.sample_axes)),
             tuple(stored(axis, unfolding.features, at) for at, axis in enumerate(unfolding.feature_axes)),
             unfolding.features.chosen,
+            unfolding.samples.chosen,
         )
 
     @classmethod
@@ -118,7 +120,7 @@ class StoredAxes:
             )
             for side in ("samples", "features")
         )  # fmt: skip
-        return cls(samples, features, arrays.get(MASK))
+        return cls(samples, features, arrays.get(MASK), arrays.get(SAMPLE_MASK))
 
     def facts(self) -> dict[str, Any]:
         """All but the arrays."""
@@ -126,6 +128,7 @@ class StoredAxes:
             "samples": [axis.facts() for axis in self.samples],
             "features": [axis.facts() for axis in self.features],
             "mask": self.mask is not None,
+            "sample_mask": self.sample_mask is not None,
         }
 
     def arrays(self) -> dict[str, tuple[np.ndarray, tuple[str, ...]]]:
@@ -137,6 +140,8 @@ class StoredAxes:
         }
         if self.mask is not None:
             found[MASK] = (self.mask, tuple(axis.dimension for axis in self.features))
+        if self.sample_mask is not None:
+            found[SAMPLE_MASK] = (self.sample_mask, tuple(axis.dimension for axis in self.samples))
         return found
 
     def shape(self, side: Literal["samples", "features"]) -> tuple[int, ...]:
@@ -154,13 +159,14 @@ class StoredAxes:
         Returns
         -------
         ndarray, shape (k, *axes)
-            NaN where the mask takes no feature.
+            NaN where no feature, or no sample, was taken.
         """
         shape = self.shape(side)
-        if side == "samples" or self.mask is None:
+        mask = self.sample_mask if side == "samples" else self.mask
+        if mask is None:
             return np.ascontiguousarray(vectors.T).reshape(-1, *shape)
         images = np.full((vectors.shape[1], math.prod(shape)), np.nan, vectors.dtype)
-        images[:, self.mask.reshape(-1)] = vectors.T
+        images[:, mask.reshape(-1)] = vectors.T
         return images.reshape(-1, *shape)
 
 
@@ -171,4 +177,4 @@ def names_in(record: Any) -> Sequence[str]:
         names = [str(each["dimension"]) for side in ("samples", "features") for each in axes[side]]
     except (KeyError, TypeError):
         return []
-    return [MASK, *(name for name in names if _PLAIN_NAME.fullmatch(name) and name not in _TAKEN)]
+    return [MASK, SAMPLE_MASK, *(name for name in names if _PLAIN_NAME.fullmatch(name) and name not in _TAKEN)]

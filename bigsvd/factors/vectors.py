@@ -8,7 +8,8 @@ that of the bytes as they were meant to be written, not as they came back.
 from __future__ import annotations
 
 import hashlib
-from typing import TYPE_CHECKING
+from collections.abc import Mapping
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -38,9 +39,19 @@ class VectorStream:
     grid : VectorGrid
     dtype : numpy.dtype
         Stored type: float32, float64, complex64 or complex128.
+    attributes : mapping, optional
+        Of the array.
     """
 
-    def __init__(self, group: zarr.Group, files: StoreFiles, name: str, grid: VectorGrid, dtype: np.dtype) -> None:
+    def __init__(
+        self,
+        group: zarr.Group,
+        files: StoreFiles,
+        name: str,
+        grid: VectorGrid,
+        dtype: np.dtype,
+        attributes: Mapping[str, Any] | None = None,
+    ) -> None:
         from numcodecs.zstd import Zstd  # type: ignore[import-untyped]
         from zarr.codecs import ZstdCodec
 
@@ -54,6 +65,7 @@ class VectorStream:
             compressors=ZstdCodec(level=ZSTD_LEVEL, checksum=True),
             fill_value=empty_value(dtype),
             dimension_names=VECTORS[name],
+            attributes=dict(attributes or {}),
             chunk_key_encoding={"name": "default", "separator": "."},
         )
         self.name, self.grid = name, grid

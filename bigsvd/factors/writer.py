@@ -15,9 +15,10 @@ import numpy as np
 from bigsvd.certify import Certificate
 from bigsvd.errors import DamagedResultError, NonFiniteError, OptionError, ResultError, ResultExistsError
 from bigsvd.factors.files import FolderFiles, MemoryFiles, StoreFiles, digest_file
-from bigsvd.factors.layout import FORMAT, GROUPS, SPECTRUM, VALUES, VECTORS, plan_chunk, plan_grid, store_cost
+from bigsvd.factors.layout import FORMAT, GROUPS, NAMES, SPECTRUM, VALUES, VECTORS, plan_chunk, plan_grid, store_cost
 from bigsvd.factors.lock import OutputLock
 from bigsvd.factors.manifest import RESERVED, ROOT, compare_files, root_document
+from bigsvd.factors.naming import NameBlocks, WrittenNames, names_digest, write_names
 from bigsvd.factors.opening import load_factors
 from bigsvd.factors.place import Place, check_output, claim, install
 from bigsvd.factors.plain import to_plain
@@ -54,6 +55,8 @@ class FactorsWriter:
         Held by the caller, who lets it go; otherwise the writer takes one for itself.
     axes : StoredAxes, optional
         Of the array that the matrix was unfolded from; rows of vectors are written in the order of that array.
+    sample_names, feature_names : NameBlocks, optional
+        Names of either side, written on entering. Those that cannot be had are left out, and `names_remarks` says so.
 
     Raises
     ------
@@ -77,6 +80,8 @@ class FactorsWriter:
         overwrite: bool = False,
         lock: OutputLock | None = None,
         axes: StoredAxes | None = None,
+        sample_names: NameBlocks | None = None,
+        feature_names: NameBlocks | None = None,
     ) -> None:
         self._dtype = np.dtype(dtype)
         if self._dtype.name not in _TYPES:
@@ -90,11 +95,15 @@ class FactorsWriter:
                 remedy="Lower --rank.",
             )
         self._shape, self._rank, self._overwrite, self._axes = shape, rank, overwrite, axes
-        self._cost = store_cost(shape, rank, self._dtype)
+        named = sum(names.count for names in (sample_names, feature_names) if names is not None)
+        self._cost = store_cost(shape, rank, self._dtype, named)
         self._place = None if out is None else Place.at(out)
         self._held = lock is not None
         self._lock = lock or (None if self._place is None else OutputLock(self._place.lock, self._place.out))
         self._streams: dict[str, VectorStream] = {}
+        self._given = {"row_name": sample_names, "column_name": feature_names}
+        self._names: dict[str, WrittenNames] = {}
+        self.names_remarks: tuple[str, ...] = ()
         self._claimed = False
 
     def __enter__(self) -> FactorsWriter:
@@ -207,7 +216,8 @@ class FactorsWriter:
             for name in GROUPS:
                 self._group.create_group(name, attributes=facts if name == "certificate" else {})
             for name, (array, dimensions) in parts.items():
-                _put(self._group, name, array, dimensions)
+                named = "column_name" if dimensions == ("column",) and "column_name" in self._names else None
+                _put(self._group, name, array, dimensions, _coordinates(named))
             self._files.settle()
             record["manifest"] = self._manifest()
             self._read_back({name: array for name, (array, _) in parts.items()})
@@ -226,9 +236,20 @@ class FactorsWriter:
         store = files.store(read_only=False)
         unfinished = {"bigsvd": {"format": FORMAT, "complete": False, **self._axes_facts()}}
         self._group = zarr.create_group(store, zarr_format=3, attributes=unfinished)
-        for name, rows in zip(VECTORS, self._shape, strict=True):
+        for name, names in self._given.items():
+            if names is not None:
+                self._write_names(name, names)
+        for name, rows, named in zip(VECTORS, self._shape, NAMES, strict=True):
             grid = plan_grid(rows, self._rank, self._dtype.itemsize)
-            self._streams[name] = VectorStream(self._group, files, name, grid, self._dtype)
+            coordinates = _coordinates(named if named in self._names else None)
+            self._streams[name] = VectorStream(self._group, files, name, grid, self._dtype, coordinates)
+
+    def _write_names(self, name: str, names: NameBlocks) -> None:
+        """Write the names of one side, or note why they cannot be had."""
+        written, why = write_names(self._group, name, names)
+        if written is not None:
+            self._names[name] = written
+        self.names_remarks += written.remarks if written is not None else (why,)
 
     def _axes_facts(self) -> dict[str, Any]:
         """What the root attribute says of axes; nothing where the matrix was one from the start."""
@@ -315,6 +336,13 @@ class FactorsWriter:
         for name, stream in self._streams.items():
             for row, expected in stream.ends.items():
                 compare(name, slice(row, row + 1), expected)
+        for name, names in self._names.items():
+            try:
+                intact = names_digest(zarr.open_array(store, path=name, mode="r", zarr_format=3)) == names.digest
+            except (ValueError, RuntimeError, OSError) as error:
+                raise self._not_what_was_written(name) from error
+            if not intact:
+                raise self._not_what_was_written(name)
 
     def _manifest(self) -> dict[str, list[int | str]]:
         """Bytes and digest of every file but the root; those of the vectors must be the ones handed over."""
@@ -378,7 +406,14 @@ class FactorsWriter:
         )
 
 
-def _put(group: zarr.Group, name: str, values: np.ndarray, dimensions: tuple[str, ...]) -> None:
+def _coordinates(name: str | None) -> dict[str, str]:
+    """The attribute by which xarray takes names for labels (CF conventions, section 5)."""
+    return {"coordinates": name} if name is not None else {}
+
+
+def _put(
+    group: zarr.Group, name: str, values: np.ndarray, dimensions: tuple[str, ...], attributes: Mapping[str, Any]
+) -> None:
     """Write one array, every chunk of it, so that an absent one is always a loss."""
     from zarr.codecs import ZstdCodec
 
@@ -390,6 +425,7 @@ def _put(group: zarr.Group, name: str, values: np.ndarray, dimensions: tuple[str
         compressors=ZstdCodec(level=ZSTD_LEVEL, checksum=True),
         fill_value=empty_value(values.dtype),
         dimension_names=dimensions,
+        attributes=dict(attributes),
         chunk_key_encoding={"name": "default", "separator": "."},
         config={"write_empty_chunks": True},
     )

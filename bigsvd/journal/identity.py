@@ -59,6 +59,7 @@ def identity_of(plan: Plan) -> dict[str, Any]:
             "pilot": _digest(plan.pilot_panels),
             "columns": list(asdict(plan.widths).values()),
             "matrix held in memory": plan.resident,
+            **({"products": plan.products} if plan.geometry.sparse else {}),
         },
         "versions": {name: machine.package_version(name) for name in _PACKAGES},
         "processor": {"matrix kernels": _kernels()},

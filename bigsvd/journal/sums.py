@@ -11,7 +11,7 @@ from bigsvd.prepare import Preparation
 from bigsvd.solve import Pilot
 from bigsvd.sweep import Partial
 
-_SCALARS = ("lines", "energy", "bad", "first_bad", "overflow", "beyond")
+_SCALARS = ("lines", "energy", "cancelled", "bad", "infinite", "first_bad", "bad_lines", "overflow", "beyond")
 _LISTS = ("line_mean", "line_inverse_scale", "line_constant")
 _PREPARED = ("shift", "inverse_scale", "about")
 
@@ -35,7 +35,7 @@ def from_partial(sums: Partial) -> tuple[dict[str, Any], dict[str, np.ndarray]]:
 
 def to_partial(facts: dict[str, Any], arrays: dict[str, np.ndarray]) -> Partial:
     """The sums that `from_partial` took apart."""
-    sums = Partial(**{name: facts[name] for name in _SCALARS})
+    sums = Partial(**{name: facts[name] for name in _SCALARS if name in facts})
     if sums.first_bad is not None:
         sums.first_bad = (int(sums.first_bad[0]), int(sums.first_bad[1]))
     for name, value in arrays.items():

@@ -7,6 +7,7 @@ from bigsvd.plan.phases import CALLER, SHARED, Costs, pass_costs, predict
 from bigsvd.plan.plan import Plan
 from bigsvd.plan.rates import BASE_BYTES, NOMINAL, NOMINAL_SHARE_OF_SLICES, Rate, Rates
 from bigsvd.plan.request import DEFAULT_MAX_RANK, DEFAULT_RANK, Request
+from bigsvd.plan.sparse import MEASURED_COLUMNS, sparse_bytes
 from bigsvd.plan.widths import Widths, crowd_reach, krylov_widths
 
 __all__ = [
@@ -14,6 +15,7 @@ __all__ = [
     "CALLER",
     "DEFAULT_MAX_RANK",
     "DEFAULT_RANK",
+    "MEASURED_COLUMNS",
     "NOMINAL",
     "NOMINAL_SHARE_OF_SLICES",
     "SHARED",
@@ -34,5 +36,6 @@ __all__ = [
     "make_plan",
     "pass_costs",
     "predict",
+    "sparse_bytes",
     "tile_columns",
 ]

@@ -12,9 +12,10 @@ from bigsvd.plan.phases import predict
 from bigsvd.plan.plan import Plan, mean_is_enough
 from bigsvd.plan.rates import NOMINAL, Rates
 from bigsvd.plan.request import Request
+from bigsvd.plan.sparse import matrix_bytes
 from bigsvd.plan.widths import NOMINAL_TOLERANCE, PROFILES, SWEEPS_PER_DECADE, Widths, closing_width, krylov_widths
 from bigsvd.randomness import draw_without_repeat
-from bigsvd.source import MatrixSpec
+from bigsvd.source import LineNonzeros, MatrixSpec
 
 PILOT_SHARE = 0.05
 # Workers that costs are compared with and memory is sized for; the number that really runs changes neither.
@@ -25,6 +26,8 @@ RESTART_SWEEPS = {3: 0.0, 2: 0.3, 0: 1.5}
 LONGEST_SHORT_SIDE = 6000
 SINGLE_KINDS = ("f2", "f4", "i1", "i2", "u1", "u2", "b1", "c8")
 STREAM_PILOT = 1
+# Panels across the lines of a sparse matrix decode all of it each; more than so many are no plan but for who asks.
+MOST_SPARSE_REREADS = 16
 # Shares of the ceiling that one panel may take, and segments per wave, that are tried.
 _PANEL_SHARES = (8, 16, 32, 64, 128, 256)
 _LEAVES = (8, 4, 2, 1)
@@ -39,17 +42,53 @@ def preference(plan: Plan) -> tuple[float, int]:
 
 
 def candidates(
-    spec: MatrixSpec, request: Request, axis: int, samples_axis: int, route: str, ceiling: int, result_bytes: int
+    spec: MatrixSpec,
+    request: Request,
+    axis: int,
+    samples_axis: int,
+    route: str,
+    ceiling: int,
+    result_bytes: int,
+    line_nonzeros: LineNonzeros | None = None,
 ) -> Iterator[Plan]:
     """Plans for one axis and route with their memory, from roomy to tight; `price` adds their cost."""
+    for products in _products(spec, request, axis, route, line_nonzeros):
+        counter = line_nonzeros if products == "sparse" else None
+        yield from _of_products(spec, request, axis, samples_axis, route, ceiling, result_bytes, counter)
+
+
+def _products(
+    spec: MatrixSpec, request: Request, axis: int, route: str, line_nonzeros: LineNonzeros | None
+) -> tuple[str, ...]:
+    """How panels may be multiplied: without their zeros only along the axis whose lines are stored one by one."""
+    may = line_nonzeros is not None and axis == spec.compressed_axis and route == "krylov" and bool(spec.nonzeros)
+    possible = ("sparse", "dense") if may else ("dense",)
+    return tuple(one for one in possible if request.products in ("auto", one))
+
+
+def _of_products(
+    spec: MatrixSpec,
+    request: Request,
+    axis: int,
+    samples_axis: int,
+    route: str,
+    ceiling: int,
+    result_bytes: int,
+    line_nonzeros: LineNonzeros | None,
+) -> Iterator[Plan]:
+    """Plans for one axis, route and kind of products."""
     across = spec.shape[1 - axis]
     if route != "krylov" and across > LONGEST_SHORT_SIDE:
         return
+    matrix = matrix_bytes(spec, "dense" if line_nonzeros is None else "sparse")
     may_be_single = route == "krylov" and spec.dtype.str[1:] in SINGLE_KINDS
-    holdable = spec.decoded_bytes <= ceiling // 2
+    holdable = matrix <= ceiling // 2
+    in_memory = spec.storage == "memory" or (spec.storage == "sparse" and spec.held_bytes >= matrix)
     seen: set[int] = set()
     for share in _PANEL_SHARES:
-        geometry = cut(spec, axis, samples_axis, ceiling // share, request.panel_lines)
+        geometry = cut(spec, axis, samples_axis, ceiling // share, request.panel_lines, line_nonzeros)
+        if request.axis == "auto" and _rereads_sparse(spec, geometry):
+            continue
         if geometry.panels in seen:
             continue
         seen.add(geometry.panels)
@@ -59,7 +98,7 @@ def candidates(
             for resident in (True, False):
                 if (resident and not holdable) or (not resident and route == "direct"):
                     continue
-                if resident and spec.storage == "memory" and route != "direct":
+                if resident and in_memory and route != "direct":
                     continue
                 for workers in (NOMINAL_WORKERS, 1):
                     for leaves in _LEAVES:
@@ -72,6 +111,12 @@ def candidates(
                         if plan.planned_bytes <= ceiling:
                             # Fewer segments only cost time.
                             break
+
+
+def _rereads_sparse(spec: MatrixSpec, geometry: Geometry) -> bool:
+    """Whether panels run across the lines that a sparse matrix stores, so that each of many would read all of it."""
+    across_lines = spec.compressed_axis is not None and geometry.axis != spec.compressed_axis
+    return across_lines and geometry.amplification > MOST_SPARSE_REREADS
 
 
 def price(plan: Plan, rates: Rates = NOMINAL) -> Plan:
@@ -106,7 +151,7 @@ def _pilot(spec: MatrixSpec, geometry: Geometry, request: Request, route: str, c
         # One panel gives a first mean, which keeps large offsets out of the sums; it is held, not read twice.
         wanted = request.center != "none" or request.scale != "none"
         return tuple(draw_without_repeat(request.seed, STREAM_PILOT, geometry.panels, 1)) if wanted else ()
-    most = min(PILOT_SHARE * spec.decoded_bytes, ceiling / 8)
+    most = min(PILOT_SHARE * matrix_bytes(spec, "sparse" if geometry.sparse else "dense"), ceiling / 8)
     count = max(1, int(most // max(1, geometry.panel_bytes)))
     return tuple(draw_without_repeat(request.seed, STREAM_PILOT, geometry.panels, min(count, geometry.panels)))
 
@@ -118,7 +163,7 @@ def terms_of(plan: Plan, workers: int) -> tuple[MemoryTerm, ...]:
     return memory_terms(
         plan.spec, plan.geometry, plan.route, plan.widths,
         workers=workers, leaves=plan.leaves, pilot_bytes=pilot_bytes, hold_pilot=held, resident=plan.resident,
-        result_bytes=plan.result_bytes,
+        scaled=plan.scaled, result_bytes=plan.result_bytes,
     )  # fmt: skip
 
 

@@ -14,7 +14,7 @@ from bigsvd.plan.plan import Plan
 from bigsvd.plan.rates import NOMINAL, Rates
 from bigsvd.plan.reasons import explain, worker_words
 from bigsvd.plan.request import Request, check_request
-from bigsvd.source import MatrixSpec
+from bigsvd.source import LineNonzeros, MatrixSpec
 
 WORTH_READING_ONCE = 2.0
 ResultBytes = Callable[[int], int]
@@ -33,6 +33,7 @@ def make_plan(
     processors: int | None = None,
     result_bytes: ResultBytes = _nothing,
     rates: Rates = NOMINAL,
+    line_nonzeros: LineNonzeros | None = None,
 ) -> Plan:
     """Decide how a matrix will be decomposed.
 
@@ -48,6 +49,9 @@ def make_plan(
         Bytes that writing a result of so many components holds.
     rates : Rates
         What costs are compared with; others than the nominal ones make other plans.
+    line_nonzeros : callable, optional
+        Of a sparse matrix, how many entries of lines first … stop along its compressed axis are stored. Without it the
+        zeros of panels are multiplied too.
 
     Returns
     -------
@@ -72,11 +76,11 @@ def make_plan(
     def drafts(bytes_allowed: int) -> Iterator[Plan]:
         for axis in axes:
             for route in routes:
-                yield from candidates(spec, request, axis, samples_axis, route, bytes_allowed, written)
+                yield from candidates(spec, request, axis, samples_axis, route, bytes_allowed, written, line_nonzeros)
 
     found = [price(plan, rates) for plan in drafts(ceiling) if plan.planned_bytes <= ceiling]
     if not found:
-        raise too_small(request, ceiling, drafts, rates)
+        raise too_small(spec, request, ceiling, drafts, rates)
     best = _best(found)
     workers = request.workers or processors or os.cpu_count() or 1
     workers = _fitting_workers(best, min(workers, 2 * best.leaves))

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-import itertools
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 
-from bigsvd.source import MatrixSpec
+from bigsvd.plan.sparse import SPARSE_UNIT_LINES, matrix_bytes, sparse_bytes
+from bigsvd.source import LineNonzeros, MatrixSpec
 
 # A wave lasts at most this long on one worker at nominal rates, so that little is lost when a run is cut; and no more
 # bytes than a slow device, at 20 MB/s, reads in a minute.
@@ -43,7 +44,9 @@ class Geometry:
     amplification : float
         Bytes read over bytes of the matrix; above 1 where panels are parts of chunks.
     panel_bytes : int
-        Largest panel in the stored type.
+        Largest panel in the stored type, in the form in which it is multiplied.
+    nonzeros : int or None
+        Of panels that are multiplied without their zeros, the nonzeros of the densest; None where zeros are multiplied.
     """
 
     axis: int
@@ -53,6 +56,17 @@ class Geometry:
     edges: tuple[int, ...]
     amplification: float
     panel_bytes: int
+    nonzeros: int | None = None
+
+    @property
+    def sparse(self) -> bool:
+        """Whether panels are multiplied without their zeros."""
+        return self.nonzeros is not None
+
+    @property
+    def unit_lines(self) -> int:
+        """Lines that are multiplied at a time."""
+        return SPARSE_UNIT_LINES if self.sparse else UNIT_LINES
 
     @property
     def panels(self) -> int:
@@ -65,7 +79,14 @@ class Geometry:
         return (along, (0, self.across)) if self.axis == 0 else ((0, self.across), along)
 
 
-def cut(spec: MatrixSpec, axis: int, samples_axis: int, room: int, panel_lines: int | None = None) -> Geometry:
+def cut(
+    spec: MatrixSpec,
+    axis: int,
+    samples_axis: int,
+    room: int,
+    panel_lines: int | None = None,
+    line_nonzeros: LineNonzeros | None = None,
+) -> Geometry:
     """Cut a matrix into panels of whole chunks along an axis.
 
     Parameters
@@ -79,6 +100,8 @@ def cut(spec: MatrixSpec, axis: int, samples_axis: int, room: int, panel_lines: 
         Bytes one panel may take in its stored type.
     panel_lines : int or None
         Lines per panel where the caller insists.
+    line_nonzeros : callable or None
+        Where panels are to be multiplied without their zeros: how many entries of a range of lines are stored.
 
     Returns
     -------
@@ -87,12 +110,16 @@ def cut(spec: MatrixSpec, axis: int, samples_axis: int, room: int, panel_lines: 
     """
     lines, across = spec.shape[axis], spec.shape[1 - axis]
     unit = min(spec.chunks[axis], lines)
-    line_bytes = max(1, across * spec.dtype.itemsize)
+    if line_nonzeros is None:
+        line_bytes, worth = max(1, across * spec.dtype.itemsize), UNIT_LINES
+    else:
+        # On average: the panels are of equal lines, whatever their nonzeros.
+        line_bytes, worth = -(-matrix_bytes(spec, "sparse") // lines), SPARSE_UNIT_LINES
     # Products are added up once per unit, so panels of whole units are wanted even where that leaves fewer of them.
-    wanted = max(lines * line_bytes // WANTED_PANELS, min(UNIT_LINES * line_bytes, lines * line_bytes // FEWEST_PANELS))
+    wanted = max(lines * line_bytes // WANTED_PANELS, min(worth * line_bytes, lines * line_bytes // FEWEST_PANELS))
     target = max(min(room, MOST_PANEL_BYTES, wanted), LEAST_PANEL_BYTES) // line_bytes
-    if target > UNIT_LINES:
-        target = target // UNIT_LINES * UNIT_LINES
+    if target > worth:
+        target = target // worth * worth
     amplification = 1.0
     edges = spec.edges[axis]
     if edges is not None and panel_lines is None and room // line_bytes >= unit:
@@ -107,13 +134,18 @@ def cut(spec: MatrixSpec, axis: int, samples_axis: int, room: int, panel_lines: 
         height = max(1, room // line_bytes)
         amplification = _amplification(spec, axis, height)
     cuts = (*range(0, lines, height), lines)
-    return Geometry(axis, lines, across, axis == samples_axis, cuts, amplification, min(height, lines) * line_bytes)
+    tallest = min(height, lines)
+    if line_nonzeros is None:
+        return Geometry(axis, lines, across, axis == samples_axis, cuts, amplification, tallest * line_bytes)
+    densest = int(max(line_nonzeros(start, stop) for start, stop in pairwise(cuts)))
+    held = sparse_bytes(spec, tallest, densest)
+    return Geometry(axis, lines, across, axis == samples_axis, cuts, amplification, held, densest)
 
 
 def _together(edges: tuple[int, ...], target: int) -> tuple[int, ...]:
     """Edges of panels of whole chunks of unequal size, each of at most `target` lines or of one chunk."""
     kept = [0]
-    for before, edge in itertools.pairwise(edges):
+    for before, edge in pairwise(edges):
         if edge - kept[-1] > target and before > kept[-1]:
             kept.append(before)
     return (*kept, edges[-1])
@@ -123,7 +155,7 @@ def _uneven(
     axis: int, lines: int, across: int, lines_are_samples: bool, edges: tuple[int, ...], line_bytes: int
 ) -> Geometry:
     """A geometry of panels of unequal height."""
-    highest = max(stop - start for start, stop in itertools.pairwise(edges))
+    highest = max(stop - start for start, stop in pairwise(edges))
     return Geometry(axis, lines, across, lines_are_samples, edges, 1.0, highest * line_bytes)
 
 

@@ -9,6 +9,7 @@ from bigsvd.plan.candidates import LONGEST_SHORT_SIDE, preference, price
 from bigsvd.plan.plan import Plan
 from bigsvd.plan.rates import Rates
 from bigsvd.plan.request import Request
+from bigsvd.source import MatrixSpec
 from bigsvd.units import show_bytes, show_count
 
 # All plans that could be made under a ceiling of so many bytes.
@@ -17,6 +18,7 @@ Drafts = Callable[[int], Iterator[Plan]]
 MOST_AMPLIFICATION = 1.05
 # A ceiling that spares cut chunks is named in place of the least if it is at most this many times as large.
 WORTH = 2.0
+AXES, FORMS = ("rows", "columns"), ("csr", "csc")
 # A thousand TiB: no machine has more.
 MOST_MEBIBYTES = 2**30
 
@@ -56,13 +58,19 @@ def least_mebibytes(drafts: Drafts, low: int, whole: Rates | None = None) -> int
     return high
 
 
-def too_small(request: Request, ceiling: int, drafts: Drafts, rates: Rates) -> OptionError:
+def too_small(spec: MatrixSpec, request: Request, ceiling: int, drafts: Drafts, rates: Rates) -> OptionError:
     """The error that names the least ceiling that would do.
 
     A slightly larger one under which no chunk is cut is named in its place; where there is none, how often chunks are
     decoded is said.
     """
     if next(drafts(ceiling), None) is None:
+        if request.products == "sparse":
+            return OptionError(
+                "--products sparse does not suit: zeros can be left out only of a sparse matrix, along the axis by"
+                " which it is stored, on the route krylov",
+                remedy="Give --products auto.",
+            )
         return OptionError(
             f"--route {request.route} does not suit this matrix: its short side is longer than"
             f" {show_count(LONGEST_SHORT_SIDE)}, or it does not fit in half the ceiling",
@@ -87,12 +95,27 @@ def too_small(request: Request, ceiling: int, drafts: Drafts, rates: Rates) -> O
     plan = _cheapest(_fitting(drafts, named), rates)
     assert plan is not None
     evidence = [f"{show_bytes(term.size):>9}  {term.what}" for term in plan.memory]
+    turn = ""
+    if spec.compressed_axis is not None and spec.shape[1 - spec.compressed_axis] > spec.shape[spec.compressed_axis]:
+        notes.append(_long_lines(spec))
+        turn = f", or store it by {AXES[1 - spec.compressed_axis]}: X.to{FORMS[1 - spec.compressed_axis]}() of SciPy"
     what = f"rank {request.rank}" if request.variance is None else f"--variance with --max-rank {request.rank}"
     lower = "--rank" if request.variance is None else "--max-rank"
     return MemoryCeilingError(
         f"{what} needs at least {named} MiB{once}, but --memory is {show_bytes(ceiling)}:",
         evidence=[*evidence, *notes],
-        remedy=f"Raise --memory to {named}MiB, or lower {lower}.",
+        remedy=f"Raise --memory to {named}MiB, or lower {lower}{turn}.",
+    )
+
+
+def _long_lines(spec: MatrixSpec) -> str:
+    """Why a sparse matrix that is stored along its short side needs so much."""
+    assert spec.compressed_axis is not None
+    stored, other = AXES[spec.compressed_axis], AXES[1 - spec.compressed_axis]
+    length = show_count(spec.shape[1 - spec.compressed_axis])
+    return (
+        f"it is stored by {stored}, so panels are ranges of {stored}, and every vector of the basis has an entry for"
+        f" each of {length} {other}; ranges of {other} would decode all of it for every panel"
     )
 
 

@@ -4,8 +4,9 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from bigsvd.plan.geometry import UNIT_LINES, Geometry, most_segments
+from bigsvd.plan.geometry import Geometry, most_segments
 from bigsvd.plan.rates import BASE_BYTES, BLAS_BYTES
+from bigsvd.plan.sparse import matrix_bytes, sparse_work_bytes
 from bigsvd.plan.widths import Widths
 from bigsvd.source import MatrixSpec
 from bigsvd.units import show_bytes, show_count
@@ -20,6 +21,8 @@ TALL_LINES = 4096
 # Entries of a slice that is checked exactly, and the copies of them that both ways of solving it hold.
 SLICE_ENTRIES = 600_000
 SLICE_COPIES = 8
+# A sparse panel that is kept, beside its arrays.
+SPARSE_PANEL_BYTES = 4096
 
 
 @dataclass(frozen=True)
@@ -51,6 +54,7 @@ def memory_terms(
     pilot_bytes: int,
     hold_pilot: bool,
     resident: bool,
+    scaled: bool,
     result_bytes: int,
 ) -> tuple[MemoryTerm, ...]:
     """Terms of the phase that needs most.
@@ -69,6 +73,8 @@ def memory_terms(
         Whether the sample is held until the first sweep reaches it.
     resident : bool
         Whether the whole matrix is held in its stored type.
+    scaled : bool
+        Whether features are scaled.
     result_bytes : int
         What writing the result holds.
 
@@ -84,7 +90,11 @@ def memory_terms(
     folded = n + 1 if route in ("tsqr", "direct") else widths.limit + 1
     triangle = folded**2 * entry
     panel = 0 if resident else geometry.panel_bytes
-    unit = (UNIT_LINES * (tile_columns(n) + 3 * widths.block + widths.limit) + widths.block * tile_columns(n)) * entry
+    unit = geometry.unit_lines * (3 * widths.block + widths.limit) * entry
+    if geometry.nonzeros is None:
+        unit += (geometry.unit_lines + widths.block) * tile_columns(n) * entry
+    else:
+        unit += sparse_work_bytes(spec, n, geometry.nonzeros, widths.block)
     fold = 3 * (fold_lines(folded) + folded) * folded * entry
     leaf = widths.block * column + (widths.limit + 1) ** 2 * entry + 4 * column
     if route == "gram":
@@ -100,8 +110,10 @@ def memory_terms(
     if spec.decode_bytes:
         # Kept from one read to the next, hence in every phase.
         held.append(MemoryTerm(workers * spec.decode_bytes, f"buffers in which {workers} workers decode"))
+    if spec.held_bytes:
+        held.append(MemoryTerm(spec.held_bytes, "held for reading: pointers, places, means"))
     if resident:
-        held.append(MemoryTerm(spec.decoded_bytes, "the whole matrix, held in its stored type"))
+        held.append(_resident(spec, geometry))
     held.append(
         MemoryTerm(
             2 * widths.limit * column, f"basis and its products, {show_count(widths.limit)} columns of {show_count(n)}"
@@ -112,7 +124,8 @@ def memory_terms(
     pilot = [
         MemoryTerm(pilot_bytes, "pilot sample in its stored type"),
         MemoryTerm(workers * (unit + BLAS_BYTES), f"working buffers of {workers} workers"),
-        MemoryTerm((live + 4) * small, "sums and directions of the sample"),
+        # Products without zeros hold the directions twice more: in the order of their rows, and scaled.
+        MemoryTerm((live + (6 if geometry.sparse else 4)) * small, "sums and directions of the sample"),
     ]
     reading = [
         MemoryTerm(workers * panel, f"{workers} panels in flight, {show_bytes(panel)} each"),
@@ -124,6 +137,8 @@ def memory_terms(
         MemoryTerm(6 * triangle, "folding one wave upon the earlier ones"),
         MemoryTerm(widths.block * column, f"columns being multiplied, {show_count(widths.block)}"),
     ]
+    if geometry.sparse and scaled:
+        reading.append(MemoryTerm(widths.block * column, "the same columns, scaled as the entries would be"))
     if hold_pilot and pilot_bytes:
         reading.append(MemoryTerm(pilot_bytes, "the panel that gave the first mean"))
     dense = n * column if whole_spectrum else 0
@@ -141,6 +156,14 @@ def memory_terms(
     checking = [MemoryTerm(slices, "a slice, decomposed the same way and by LAPACK")]
     phases = [reading, growing, checking, writing, *([pilot] if pilot_bytes else [])]
     return (*held, *max(phases, key=lambda terms: sum(term.size for term in terms)))
+
+
+def _resident(spec: MatrixSpec, geometry: Geometry) -> MemoryTerm:
+    """The whole matrix, held panel by panel."""
+    if not geometry.sparse:
+        return MemoryTerm(spec.decoded_bytes, "the whole matrix, held in its stored type")
+    size = matrix_bytes(spec, "sparse") + geometry.panels * SPARSE_PANEL_BYTES
+    return MemoryTerm(size, "the whole matrix, held without its zeros")
 
 
 def total(terms: tuple[MemoryTerm, ...]) -> int:

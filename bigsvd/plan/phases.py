@@ -5,10 +5,10 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
-from bigsvd.plan.geometry import UNIT_LINES
 from bigsvd.plan.memory import SLICE_ENTRIES, tile_columns
 from bigsvd.plan.plan import Plan
 from bigsvd.plan.rates import COMPLEX_FACTOR, NOMINAL, Rate, Rates
+from bigsvd.plan.sparse import nonzero_costs, stored_share
 from bigsvd.source import MatrixSpec
 
 # Phases that the workers share, and those of the caller, in the order in which they are told.
@@ -162,6 +162,8 @@ class _Model:
         """Everything in turn."""
         plan, rates = self.plan, self.rates
         self.ledger.wait("start", rates.start_seconds)
+        if plan.spec.missing is not None:
+            self._count_missing(plan.spec.missing.bytes)
         if plan.route == "krylov":
             self._pilot()
             blocks = _blocks(plan, sweeps, columns)
@@ -180,17 +182,27 @@ class _Model:
         plan, rates = self.plan, self.rates
         spec = plan.spec
         size = share * spec.decoded_bytes * plan.geometry.amplification
-        self.ledger.work("read", size, rates.fetch[spec.storage])
+        if plan.products == "dense":
+            self.ledger.work("read", size, rates.fetch[spec.storage])
         if spec.storage in ("plain", "compressed", "zarr") and spec.chunks[0] > 1:
             # Chunks at the edge are stored whole.
             size *= padding(spec)
             self.ledger.work("read", size / max(1, chunk_bytes(spec)), rates.chunk)
+        if spec.nonzeros is not None:
+            # Beside the buffer that is cleared, what is stored is read; what is decoded are values and 32-bit indices.
+            stored = share * spec.nonzeros * plan.geometry.amplification
+            self.ledger.work("read", stored, rates.entries)
+            size = stored * (spec.dtype.itemsize + 4)
         for codec in spec.codecs:
             self.ledger.work("read", size, rates.decode.get(codec, rates.decode["library"]))
 
     def convert(self, share: float, work: str, *, energies: bool, sums: bool, twice: bool = True) -> None:
         """Words summed, entries converted, and in a first sweep squared and summed."""
         plan, rates, add = self.plan, self.rates, self.ledger.work
+        if plan.products == "sparse":
+            for amount, rate in nonzero_costs(plan, share, energies=energies, sums=sums, rates=rates):
+                add("convert", amount, rate)
+            return
         entries = share * self.entries * (2 if plan.spec.dtype.kind == "c" else 1)
         add("convert", share * plan.spec.decoded_bytes, rates.ledger)
         across_features = plan.geometry.lines_are_samples
@@ -209,10 +221,14 @@ class _Model:
 
     def products(self, share: float, block: float) -> None:
         """Y = AB and Z = AᴴY, which is added up once per unit."""
-        self.ledger.work("products", self.complex * 4 * share * self.entries * block, self.rates.products[self.work])
-        self.ledger.work("products", self.complex * share * self.entries, self.rates.per_entry[self.work])
-        geometry = self.plan.geometry
-        units = geometry.panels * -(-(geometry.lines // geometry.panels) // UNIT_LINES)
+        geometry, add = self.plan.geometry, self.ledger.work
+        if geometry.sparse:
+            nonzeros = share * self.entries * stored_share(self.plan.spec)
+            add("products", self.complex * 4 * nonzeros * block, self.rates.spmm[self.work])
+        else:
+            add("products", self.complex * 4 * share * self.entries * block, self.rates.products[self.work])
+            add("products", self.complex * share * self.entries, self.rates.per_entry[self.work])
+        units = geometry.panels * -(-(geometry.lines // geometry.panels) // geometry.unit_lines)
         self.ledger.work("products", self.complex * share * units * geometry.across * block, self.rates.accumulate)
 
     def _measure(self, panels: float, block: float) -> None:
@@ -221,7 +237,13 @@ class _Model:
             return
         geometry = self.plan.geometry
         # Counted as whole units, lest plans of low panels be preferred for measuring less.
-        entries = panels * min(UNIT_LINES, geometry.lines) * geometry.across
+        entries = panels * min(geometry.unit_lines, geometry.lines) * geometry.across
+        if geometry.sparse:
+            # Values turned once more, both products in double.
+            nonzeros = entries * stored_share(self.plan.spec)
+            self.ledger.work("products", nonzeros, self.rates.turn)
+            self.ledger.work("products", self.complex * 4 * nonzeros * block, self.rates.spmm["double"])
+            return
         # Two wide copies, in memory that is new each time, take as long as six conversions.
         self.ledger.work("products", 6 * entries, self.rates.convert["double"])
         for work, flops in (("double", 4), ("single", 2)):
@@ -249,6 +271,16 @@ class _Model:
         self.ledger.wait("dense", (PILOT_PRODUCTS + 1) * self.rates.sweep_seconds)
         # Three rounds of 4·n·L² each, for the Gaussian start and after every product; as much again is moved about.
         self._basis(16.0 * PILOT_PRODUCTS * n * start**2)
+
+    def _count_missing(self, size: int) -> None:
+        """Read the whole matrix once before the run."""
+        before = dict(self.ledger.spent)
+        share = size / self.plan.spec.decoded_bytes
+        self.read(share)
+        self.ledger.work("convert", share * self.entries, self.rates.statistics)
+        for phase in ("read", "convert"):
+            self.ledger.spent["start"] += (self.ledger.spent[phase] - before[phase]) / self.plan.workers
+            self.ledger.spent[phase] = before[phase]
 
     def _whole_spectrum(self) -> None:
         """One sweep for AᴴA or R, and its decomposition."""

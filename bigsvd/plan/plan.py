@@ -10,7 +10,7 @@ from bigsvd.plan.geometry import Geometry
 from bigsvd.plan.memory import MemoryTerm, total
 from bigsvd.plan.request import Request
 from bigsvd.plan.widths import Widths
-from bigsvd.source import MatrixSpec
+from bigsvd.source import MatrixSpec, Names
 from bigsvd.units import show_count
 
 FEWEST_PILOT_PANELS = 8
@@ -102,6 +102,11 @@ class Plan:
         return self.geometry.lines * columns * entry
 
     @property
+    def products(self) -> str:
+        """``sparse`` where panels are multiplied without their zeros, otherwise ``dense``."""
+        return "sparse" if self.geometry.sparse else "dense"
+
+    @property
     def mean_only(self) -> bool:
         """Whether the pilot gives a first mean only, and its panel is held for the first sweep."""
         return mean_is_enough(self.route, self.geometry)
@@ -155,6 +160,27 @@ class Plan:
             done.append(f"scaled to unit variance (n − 1) per {one}")
         counts = show_count(self.samples), show_count(self.features)
         return f"samples: {samples} ({counts[0]}); features: {features} ({counts[1]}); {', '.join(done)}"
+
+    @property
+    def sample_names(self) -> Names | None:
+        """Names of the samples, not read yet."""
+        return self.spec.row_names if self.request.samples == "rows" else self.spec.column_names
+
+    @property
+    def feature_names(self) -> Names | None:
+        """Names of the features, not read yet."""
+        return self.spec.column_names if self.request.samples == "rows" else self.spec.row_names
+
+    def reading_words(self) -> list[str]:
+        """How the file was understood: its layout, what settled which axis holds the samples, where names stand."""
+        spec, lines = self.spec, []
+        if spec.layout and not spec.layout.startswith("plain"):
+            lines.append(f"taken for {spec.layout} ({spec.marker})")
+        if spec.samples_hint == self.request.samples:
+            lines.append(f"samples are its {spec.samples_hint} by the file: {spec.hint_reason}")
+        named = (("samples", self.sample_names), ("features", self.feature_names))
+        found = [f"{which} by {names.words}" for which, names in named if names is not None]
+        return [*lines, *([f"names: {', '.join(found)}"] if found else [])]
 
 
 def mean_is_enough(route: str, geometry: Geometry) -> bool:

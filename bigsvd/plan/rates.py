@@ -37,6 +37,8 @@ class Rates:
         Decoded bytes, by storage class, with nothing to be decoded.
     decode : mapping of str to Rate
         Decoded bytes, by codec, beyond that. ``library`` also stands for codecs that are not listed.
+    entries : Rate
+        Stored entries of a sparse matrix read, checked and put in their places; ``sparse`` above clears the buffer.
     chunk : Rate
         Chunks found and taken apart.
     ledger : Rate
@@ -51,6 +53,10 @@ class Rates:
         Entries that products pass once, however few columns there are.
     accumulate : Rate
         Entries of AᴴY added to their sums in double.
+    spmm : mapping of str to Rate
+        Floating-point operations of products without zeros, by working precision.
+    turn, nonzero_sums : Rate
+        Nonzeros converted and turned for AᴴY; squared and summed.
     gram, fold, qr : Rate
         Floating-point operations of AᴴA, of folds by products, of Householder QR.
     eigen, svd : Rate
@@ -69,6 +75,7 @@ class Rates:
 
     fetch: Mapping[str, Rate]
     decode: Mapping[str, Rate]
+    entries: Rate
     chunk: Rate
     ledger: Rate
     convert: Mapping[str, Rate]
@@ -79,6 +86,9 @@ class Rates:
     products: Mapping[str, Rate]
     per_entry: Mapping[str, Rate]
     accumulate: Rate
+    spmm: Mapping[str, Rate]
+    turn: Rate
+    nonzero_sums: Rate
     gram: Rate
     fold: Rate
     qr: Rate
@@ -103,8 +113,10 @@ NOMINAL = Rates(
         "plain": Rate(9.9e09, 0.14),
         "compressed": Rate(6.8e09),
         "zarr": Rate(7e09),
+        "sparse": Rate(1.6e10, 0.03),
         "graph": Rate(5e08, 1),
     },
+    entries=Rate(2.4e08),
     decode={
         "shuffle": Rate(7.3e09, 0.36),
         "fletcher32": Rate(4e09, 0.09),
@@ -145,6 +157,12 @@ NOMINAL = Rates(
         "double": Rate(1.4e09, 0.01),
     },
     accumulate=Rate(1.1e09),
+    spmm={
+        "single": Rate(8.5e09, 0.01),
+        "double": Rate(3.8e09, 0.04),
+    },
+    turn=Rate(8.5e07, 0.39),
+    nonzero_sums=Rate(1.2e08, 0.16),
     gram=Rate(8.7e10),
     fold=Rate(2.8e10),
     qr=Rate(3.1e10),

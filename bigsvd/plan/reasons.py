@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from bigsvd.plan.plan import FEWEST_PILOT_PANELS, Plan
 from bigsvd.plan.request import Request
+from bigsvd.plan.sparse import stored_share
 from bigsvd.units import show_bytes, show_count, show_seconds, show_shape
 
 
@@ -14,6 +15,8 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
     along = best.along
     if request.axis != "auto":
         why = "as asked"
+    elif not other and spec.storage == "sparse":
+        why = "along the other axis nothing fits under the ceiling, or every panel would decode the whole matrix"
     elif not other:
         why = "the other axis does not fit under the ceiling"
     else:
@@ -53,6 +56,8 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
     if best.resident and best.route != "direct":
         words += "; the matrix fits in memory, so only the first sweep reads the file"
     reasons = [("axis", axis), ("panels", panels), ("route", words)]
+    if spec.storage == "sparse":
+        reasons.append(("products", _product_words(best, found)))
     if best.route == "krylov":
         reasons.append(("pilot", _pilot_words(best)))
         widths = best.widths
@@ -78,6 +83,27 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
     else:
         reasons.append(("precision", f"{request.precision}, as asked"))
     return tuple(reasons)
+
+
+def _product_words(best: Plan, found: list[Plan]) -> str:
+    """Why zeros are multiplied or not."""
+    done = {
+        "sparse": "panels are multiplied without their zeros, and means are subtracted from the products",
+        "dense": "panels are multiplied with their zeros",
+    }[best.products]
+    share = f"{100 * stored_share(best.spec):.2g} % of the entries are stored"
+    other = [plan.nominal_seconds for plan in found if plan.products != best.products]
+    if best.request.products != "auto":
+        return f"{done}; {share}; as asked"
+    if not other:
+        only = (
+            "with them nothing fits under the ceiling"
+            if best.products == "sparse"
+            else "the route needs them, or nothing else fits"
+        )
+        return f"{done}; {share}; {only}"
+    least = min(other)
+    return f"{done}: {share}; nominally {show_seconds(best.nominal_seconds)} against {show_seconds(least)}"
 
 
 def _width_words(best: Plan, found: list[Plan]) -> str:

@@ -8,7 +8,7 @@ from dataclasses import dataclass, replace
 from typing import Literal
 
 from bigsvd.errors import OptionError
-from bigsvd.source import MatrixSpec
+from bigsvd.source import CONTRADICTORY, MatrixSpec
 from bigsvd.units import show_count, show_shape
 
 DEFAULT_RANK = 50
@@ -23,6 +23,7 @@ _CHOICES = {
     "precision": ("auto", "single", "double"),
     "route": ROUTES,
     "axis": ("auto", "rows", "columns"),
+    "products": ("auto", "sparse", "dense"),
 }
 
 
@@ -39,7 +40,7 @@ class Request:
     max_rank : int
         Most components `variance` may lead to; memory is planned for them.
     samples : {"rows", "columns"} or None
-        Stored axis that holds the samples; None stands for rows unless the file says otherwise.
+        Stored axis that holds the samples; None stands for what markers in the file say, else rows.
     center, scale : str
         ``features`` or ``none``; ``unit`` (variance one, n − 1) or ``none``.
     tolerance : float
@@ -54,6 +55,8 @@ class Request:
         Threads; None stands for one per processor.
     precision, route, axis : str
         ``auto`` or a choice forced by the user.
+    products : str
+        ``auto``, or forced: ``sparse`` multiplies panels of a sparse matrix without their zeros, ``dense`` with them.
     panel_lines : int or None
         Lines per panel, forced (tests, slices); None lets the planner decide.
     least_sweeps : int
@@ -78,6 +81,7 @@ class Request:
     precision: str = "auto"
     route: str = "auto"
     axis: str = "auto"
+    products: str = "auto"
     panel_lines: int | None = None
     width_limit: int | None = None
     least_sweeps: int = 1
@@ -102,7 +106,7 @@ def check_request(request: Request, spec: MatrixSpec) -> tuple[Request, tuple[st
     Raises
     ------
     OptionError
-        If an option is out of range or contradicts another, or labels in the file contradict the default orientation.
+        If an option is out of range or contradicts another, or markers in the file contradict each other.
     """
     for name, allowed in _CHOICES.items():
         if getattr(request, name) not in allowed:
@@ -123,7 +127,8 @@ def check_request(request: Request, spec: MatrixSpec) -> tuple[Request, tuple[st
                 f" all that a {show_shape(spec.shape)} matrix has"
             )
         rank = least
-    return replace(request, rank=rank, samples=_settle_samples(request, spec)), tuple(remarks)
+    samples, said = _settle_samples(request, spec)
+    return replace(request, rank=rank, samples=samples), (*remarks, *said)
 
 
 def _check_numbers(request: Request) -> None:
@@ -162,23 +167,26 @@ def _check_numbers(request: Request) -> None:
             )
 
 
-def _settle_samples(request: Request, spec: MatrixSpec) -> Samples:
-    """Rows unless told otherwise; stop where the file's own labels contradict a default nobody confirmed."""
+def _settle_samples(request: Request, spec: MatrixSpec) -> tuple[Samples, list[str]]:
+    """What the user says, else what the file says, else rows; with a remark where the user overrules the file."""
+    asked, hint = request.samples, spec.samples_hint
     if spec.unfolding is not None:
         settled: Samples = "rows" if spec.unfolding.samples_are_rows else "columns"
-        if request.samples not in (None, settled):
+        if asked not in (None, settled):
             raise OptionError(
-                f"--samples {request.samples} was given, and the samples of this array are axes of it",
+                f"--samples {asked} was given, and the samples of this array are axes of it",
                 evidence=[spec.unfolding.words()],
                 remedy="Leave out --samples; --sample-axes says which axes become the samples.",
             )
-        return settled
-    if request.samples is not None:
-        return request.samples
-    if spec.samples_hint == "columns":
+        return settled, []
+    if asked is not None:
+        overruled = hint in ("rows", "columns") and hint != asked
+        said = f"--samples {asked} was given; the file says that samples are its {hint} ({spec.hint_reason})"
+        return asked, [said] if overruled else []
+    if hint == CONTRADICTORY:
         raise OptionError(
-            f"{spec.name}: the file says that samples are its columns, and --samples was not given",
+            f"{spec.name}: markers in the file contradict each other about which axis holds the samples",
             evidence=[spec.hint_reason],
-            remedy="Give --samples columns, or --samples rows if the labels are wrong.",
+            remedy="Say it: --samples rows or --samples columns.",
         )
-    return "rows"
+    return "columns" if hint == "columns" else "rows", []

@@ -63,8 +63,10 @@ def plan_lines(forecast: Foresight, width: int) -> list[str]:
     stored = f", {show_bytes(spec.stored_bytes)} stored" if spec.stored_bytes is not None else ""
     head = [
         ("matrix", f"{spec.name}: {show_shape(spec.shape)} {spec.dtype}"),
-        ("", f"{show_bytes(spec.decoded_bytes)} decoded{stored}{f'; {spec.encoding}' if spec.encoding else ''}"),
+        ("", f"{_size_words(plan)}{stored}{f'; {spec.encoding}' if spec.encoding else ''}"),
         ("", plan.orientation_words()),
+        *reading_words(spec),
+        *(("", words) for words in plan.reading_words()),
         *(("caution", caution) for caution in spec.cautions),
     ]
     goal = f"rank {plan.rank}" if plan.request.variance is None else f"{plan.request.variance:g} of the variance"
@@ -91,10 +93,12 @@ def announcement(forecast: Foresight, width: int) -> list[str]:
     panels = f"{plan.geometry.panels:,} {'panel' if plan.geometry.panels == 1 else 'panels'} of {plan.along}"
     memory = f"{show_bytes(plan.planned_bytes)} planned, ceiling {show_bytes(plan.ceiling)}"
     spec = plan.spec
-    matrix = f"{spec.name}: {show_shape(spec.shape)} {spec.dtype}, {show_bytes(spec.decoded_bytes)} decoded"
+    matrix = f"{spec.name}: {show_shape(spec.shape)} {spec.dtype}, {_size_words(plan)}"
     pairs = [
         ("matrix", matrix),
         ("", plan.orientation_words()),
+        *reading_words(spec),
+        *(("", words) for words in plan.reading_words()),
         ("route", f"{plan.route}, {panels}, {plan.workers} {'worker' if plan.workers == 1 else 'workers'}"),
         ("memory", memory),
         ("time", _time_words(forecast)),
@@ -119,14 +123,17 @@ def plan_facts(forecast: Foresight) -> Json:
         "source": _source_facts(plan.spec),
         "request": plan.request,
         "orientation": plan.orientation_words(),
+        "understood": plan.reading_words(),
         "samples": plan.samples,
         "features": plan.features,
         "rank": plan.rank,
         "route": plan.route,
         "axis": AXES[geometry.axis],
+        "products": plan.products,
         "panels": geometry.panels,
         "panel_lines": geometry.edges[1] - geometry.edges[0],
         "panel_bytes": geometry.panel_bytes,
+        "panel_nonzeros": geometry.nonzeros,
         "amplification": geometry.amplification,
         "width": plan.widths,
         "pilot_panels": plan.pilot_panels,
@@ -157,6 +164,17 @@ def plan_facts(forecast: Foresight) -> Json:
     return result
 
 
+def _size_words(plan: Plan) -> str:
+    """Size of a matrix, and of what: a sparse one is made dense panel by panel, never as a whole."""
+    return f"{show_bytes(plan.spec.decoded_bytes)} {'decoded' if plan.spec.nonzeros is None else 'if made dense'}"
+
+
+def reading_words(spec: MatrixSpec) -> list[tuple[str, str]]:
+    """What is made of entries as they are read, each with its label."""
+    pairs = [("decoded", spec.decoded)] if spec.decoded else []
+    return pairs + ([("missing", spec.missing.words)] if spec.missing is not None else [])
+
+
 def _memory_lines(plan: Plan) -> list[str]:
     """Terms of the memory plan with their sum against the ceiling."""
     rows = [[show_bytes(term.size), term.what] for term in plan.memory if term.size]
@@ -170,6 +188,8 @@ def _cost_words(forecast: Foresight) -> list[tuple[str, str]]:
     plan = forecast.plan
     matrix = plan.spec.decoded_bytes
     times = f" ({forecast.bytes_to_read / matrix:.2f} × the matrix)" if matrix else ""
+    missing = plan.spec.missing
+    counted = " and one that counts missing entries" if missing is not None and missing.bytes else ""
     sweeps = f"{plan.nominal_sweeps} {'sweep' if plan.nominal_sweeps == 1 else 'sweeps'}"
     probe = (
         f"{show_bytes(forecast.probe_bytes)} were read for this plan"
@@ -177,7 +197,7 @@ def _cost_words(forecast: Foresight) -> list[tuple[str, str]]:
         else f"nothing was read for this plan: a probe is made from {PROBE_FROM} on"
     )
     return [
-        ("reads", f"{show_bytes(forecast.bytes_to_read)}{times}, expected in {sweeps}; the spectrum decides"),
+        ("reads", f"{show_bytes(forecast.bytes_to_read)}{times}, expected in {sweeps}{counted}; the spectrum decides"),
         ("time", _time_words(forecast)),
         ("probe", probe),
     ]

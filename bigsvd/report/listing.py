@@ -8,7 +8,7 @@ from pathlib import PurePath
 
 from bigsvd.report.layout import cells, table, wrap
 from bigsvd.report.plain import Json, plain
-from bigsvd.source import Candidate
+from bigsvd.source import CONTRADICTORY, Candidate
 from bigsvd.units import shell_word, show_bytes, show_count, show_shape
 
 # Lines to type are given for so many matrices; for more, one to fill in.
@@ -33,7 +33,8 @@ def survey_lines(where: str, found: Sequence[Candidate], width: int) -> list[str
     -------
     list of str
     """
-    usable = [candidate for candidate in found if candidate.usable]
+    usable = [candidate for candidate in found if candidate.usable and not candidate.level]
+    copies = [candidate for candidate in found if candidate.usable and candidate.level]
     others = [candidate for candidate in found if not candidate.usable]
     arrays = "array" if len(found) == 1 else "arrays"
     matrices = "matrix" if len(usable) == 1 else "matrices"
@@ -41,15 +42,16 @@ def survey_lines(where: str, found: Sequence[Candidate], width: int) -> list[str
     lines = wrap(f"{where}: {count}", width)
     if usable:
         lines += ["", *_matrix_table(usable, width)]
-        hints = [
-            f"{_name(one)}: samples are its {one.samples_hint} ({one.hint_reason})"
-            for one in usable
-            if one.samples_hint
-        ]
-        hints += [_unfolding(one) for one in usable if one.many_axes]
-        notes = [note for one in usable for note in _notes(one)]
-        lines += [line for words in (*hints, *notes) for line in ["", *wrap(words, width)]]
+    lines += [line for words in _layouts(found) for line in ["", *wrap(words, width)]]
+    unfoldings = [_unfolding(one) for one in usable if one.many_axes]
+    notes = [*_axes_notes(usable), *unfoldings, *(words for one in usable for words in _notes(one))]
+    lines += [line for words in notes for line in ["", *wrap(words, width)]]
+    if usable:
         lines += ["", "To decompose, type:", *_to_type(where, usable)]
+    if copies:
+        rows = [[f"--level {one.level}", _name(one), show_shape(one.shape)] for one in copies]
+        lines += ["", "Smaller copies of the same image, taken only if asked for:"]
+        lines += ["  " + line for line in table(["", "", ""], rows, "llr")]
     if others:
         rows = [[_name(one), _what(one), one.reason] for one in others[:MOST_UNUSABLE]]
         lines += ["", "Not usable:", *("  " + line for line in table(["array", "what", "why not"], rows, "lll"))]
@@ -84,6 +86,11 @@ def command_line(where: str, candidate: Candidate, *, named: bool) -> str:
         words += ["--sample-axes", candidate.option]
     elif candidate.samples_hint == "columns":
         words += ["--samples", "columns"]
+    elif candidate.samples_hint == CONTRADICTORY:
+        # Somebody has to say it; rows are what is meant most often.
+        words += ["--samples", "rows"]
+    if candidate.packing is not None and candidate.packing.problem:
+        words.append("--raw")
     if candidate.outside:
         words.append("--follow-links")
     return " ".join(map(shell_word, words))
@@ -98,8 +105,49 @@ def _unfolding(candidate: Candidate) -> str:
     return f"{_name(candidate)}: axes {axes}; usable with --sample-axes, which names those that become the samples"
 
 
+def _layouts(found: Sequence[Candidate]) -> list[str]:
+    """What layout each array was taken for, and what in the file says so; arrays of the same layout together."""
+    together: dict[tuple[str, str], list[str]] = {}
+    for one in found:
+        if one.layout:
+            together.setdefault((one.layout, one.marker), []).append(_name(one))
+    return [
+        f"Taken for {layout} ({marker}): {_listed(names, 'arrays')}" for (layout, marker), names in together.items()
+    ]
+
+
+def _axes_notes(usable: Sequence[Candidate]) -> list[str]:
+    """What the file says of samples and names; matrices of which the same is said together."""
+    together: dict[tuple[str, ...], list[str]] = {}
+    for one in usable:
+        for words in _said_of_axes(one):
+            together.setdefault(words, []).append(_name(one))
+    return [
+        f"{_listed(names, 'matrices')}: {before}{'its' if len(names) == 1 else 'their'}{after}"
+        if after
+        else f"{_listed(names, 'matrices')}: {before}"
+        for (before, after), names in together.items()
+    ]
+
+
+def _said_of_axes(candidate: Candidate) -> list[tuple[str, str]]:
+    """Sentences about the axes of a matrix, cut where one says its or their."""
+    said = []
+    hint, reason = candidate.samples_hint, candidate.hint_reason
+    if hint == CONTRADICTORY:
+        words = f"markers contradict each other about the samples ({reason})"
+        said.append((f"{words}; say --samples rows or --samples columns", ""))
+    elif hint:
+        said.append(("samples are ", f" {hint} ({reason})"))
+    named = (("rows", candidate.row_names), ("columns", candidate.column_names))
+    places = [f"of {which} in {names.words}" for which, names in named if names is not None]
+    if places:
+        said.append((f"names {', '.join(places)}", ""))
+    return [*said, *((remark, "") for remark in candidate.remarks)]
+
+
 def _notes(candidate: Candidate) -> list[str]:
-    """What is to be known of a matrix before it is decomposed: parts that are absent, or lie elsewhere."""
+    """What is to be known of a matrix before it is decomposed: absent parts, how entries are decoded, other files."""
     notes = []
     if candidate.absent_chunks:
         count, several = show_count(candidate.absent_chunks), candidate.absent_chunks > 1
@@ -107,15 +155,23 @@ def _notes(candidate: Candidate) -> list[str]:
             f"{_name(candidate)}: {count} {'chunks were' if several else 'chunk was'} never written; decompose stops at"
             " that, or reads the fill value with --absent fill"
         )
+    packing = candidate.packing
+    if packing is not None and packing.problem:
+        notes.append(
+            f"{_name(candidate)}: packed, but {packing.problem}; decompose needs --raw, which takes it as stored"
+        )
+    elif packing is not None and packing.words:
+        notes.append(f"{_name(candidate)}: decoded by {packing.words}; --raw takes entries as stored")
+    notes += [f"{_name(candidate)}: {caution}" for caution in (packing.cautions if packing is not None else ())]
     if candidate.outside:
         notes.append(f"{_name(candidate)}: lies partly in {_listed(candidate.outside)}; decompose needs --follow-links")
     return notes
 
 
-def _listed(files: Sequence[str]) -> str:
+def _listed(files: Sequence[str], what: str = "files") -> str:
     """A few files by name, the others counted."""
-    more = f" and {show_count(len(files) - 3)} more files" if len(files) > 3 else ""
-    return ", ".join(files[:3]) + more
+    more = f" and {show_count(len(files) - 3)} more {what}" if len(files) > 4 else ""
+    return ", ".join(files if len(files) <= 4 else files[:3]) + more
 
 
 def _name(candidate: Candidate) -> str:

@@ -20,6 +20,7 @@ if TYPE_CHECKING:
 PLAIN_EVERY = 10.0
 _TITLES = {
     "probe": "probe",
+    "missing": "counting missing entries",
     "pilot": "pilot",
     "slices": "exact check on slices",
     "write": "writing",

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -14,6 +14,7 @@ from bigsvd.report.components import component_lines, shares
 from bigsvd.report.layout import labelled, table, wrap
 from bigsvd.report.numbers import show_angle, show_captured, show_probability, show_up
 from bigsvd.report.plain import Json, plain
+from bigsvd.source import Missing
 from bigsvd.units import show_bytes, show_count, show_seconds, show_shape
 
 # Phases as people read them; others go by their own names.
@@ -27,9 +28,18 @@ PHASES = {
     "store": "left vectors and store",
 }
 LEAST_SHOWN = 0.01
+# Components whose strongest features are named, and letters of a name.
+MOST_NAMED, LONGEST_NAME = 10, 40
+Strongest = Sequence[Sequence[tuple[str, float]]]
 
 
-def summary_lines(certificate: Certificate, attributes: Mapping[str, Any], out: Path | None, width: int) -> list[str]:
+def summary_lines(
+    certificate: Certificate,
+    attributes: Mapping[str, Any],
+    out: Path | None,
+    width: int,
+    strongest: Strongest | None = None,
+) -> list[str]:
     """Say everything about a finished decomposition.
 
     Parameters
@@ -42,6 +52,8 @@ def summary_lines(certificate: Certificate, attributes: Mapping[str, Any], out: 
         The result store.
     width : int
         Cells of a line.
+    strongest : list of list of (str, float), optional
+        As `Factors.strongest_features` gives them.
 
     Returns
     -------
@@ -51,11 +63,16 @@ def summary_lines(certificate: Certificate, attributes: Mapping[str, Any], out: 
     head = [
         ("matrix", f"{source['name']}: {show_shape(tuple(source['shape']))} {source['dtype']}"),
         ("", attributes["preparation"]["words"]),
+        *(("", words) for words in attributes["preparation"].get("understood", ())),
     ]
     absent = source.get("absent")
     if absent:
         filled = f"{show_count(absent['chunks'])} of {show_count(absent['of'])} chunks were never written"
         head.append(("", f"{filled} and were read as {absent['read_as']}"))
+    if source.get("decoded"):
+        head.append(("decoded", source["decoded"]))
+    if source.get("missing"):
+        head.append(("missing", Missing(**source["missing"]).words))
     constant = attributes["preparation"].get("constant_features") or 0
     if constant:
         head.append(
@@ -65,6 +82,7 @@ def summary_lines(certificate: Certificate, attributes: Mapping[str, Any], out: 
         *labelled(head, width),
         "",
         *component_lines(certificate, width),
+        *strongest_lines(certificate, strongest, width),
         "",
         *wrap(verdict_words(certificate), width),
         "",
@@ -72,6 +90,27 @@ def summary_lines(certificate: Certificate, attributes: Mapping[str, Any], out: 
         *phase_lines(attributes),
         *([] if out is None else ["", f"Open it:  {xarray_line(out)}"]),
     ]
+
+
+def strongest_lines(certificate: Certificate, strongest: Strongest | None, width: int) -> list[str]:
+    """Name the features that weigh most, of components whose vectors may be read singly."""
+    if strongest is None:
+        return []
+    single = np.isfinite(certificate.angle_bound) & (certificate.tied_first == certificate.tied_last)
+    shown = [int(i) for i in np.flatnonzero(single & ~certificate.null)[:MOST_NAMED]]
+    if not shown:
+        return []
+    words = [
+        (str(i + 1), ", ".join(f"{_short(name)} {f'{value:.2f}'.replace('-', '−')}" for name, value in strongest[i]))
+        for i in shown
+    ]
+    head = "Strongest features, with their entries in the right vectors:"
+    return ["", head, *labelled([(number.rjust(3), text) for number, text in words], width)]
+
+
+def _short(name: str) -> str:
+    """A name cut to what a line can hold."""
+    return name if len(name) <= LONGEST_NAME else f"{name[:LONGEST_NAME]}…"
 
 
 def verdict_words(certificate: Certificate) -> str:
@@ -203,7 +242,9 @@ def xarray_line(out: Path) -> str:
     return f"xarray.open_zarr({json.dumps(str(out), ensure_ascii=False)})"
 
 
-def decomposition_facts(certificate: Certificate, attributes: Mapping[str, Any], out: Path | None) -> Json:
+def decomposition_facts(
+    certificate: Certificate, attributes: Mapping[str, Any], out: Path | None, strongest: Strongest | None = None
+) -> Json:
     """All of it as one JSON object; its keys are documented in docs/json.md."""
     share, cumulative = shares(certificate)
     plan = attributes["plan"]
@@ -261,6 +302,9 @@ def decomposition_facts(certificate: Certificate, attributes: Mapping[str, Any],
         "left_defect": certificate.left_defect,
         "right_defect": certificate.right_defect,
         "slices": certificate.slices,
+        "strongest_features": None
+        if strongest is None
+        else [[{"name": name, "value": value} for name, value in one] for one in strongest],
         "remarks": attributes.get("remarks", []),
         "timings": attributes.get("timings", {}),
         "phases": attributes.get("phases", {}),

@@ -20,6 +20,8 @@ SETTLED_GROWTH = 0.01
 MEASURED_PANELS = 4
 # A sample whose values fall by less than this behind those wanted does not tell how fast they separate.
 LEAST_GAP = 0.01
+# Intervals are about so many times as wide as the errors that they bound.
+INTERVAL_OVER_ERROR = 4.0
 # Entries whose root mean square lies outside these would over- or underflow when squared in single.
 SINGLE_RANGE = (1e-12, 1e12)
 
@@ -162,7 +164,7 @@ def expected_sweeps(pilot: Pilot, wanted: int, tolerance: float) -> int | None:
     if theta[-1] <= theta[wanted - 1] * 1e-6:
         return 1
     growth = np.arccosh(2 * (theta[wanted - 1] / theta[-1]) ** 2 - 1)
-    return max(1, int(np.ceil(np.arccosh(tolerance**-0.5) / growth)))
+    return max(1, int(np.ceil(np.arccosh((tolerance / INTERVAL_OVER_ERROR) ** -0.5) / growth)))
 
 
 def _normal_product(

@@ -3,11 +3,15 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 
-from bigsvd.prepare import Preparation
+from bigsvd.prepare import Preparation, absent_per_column, add_up, pieces
 from bigsvd.sweep import Partial
+
+if TYPE_CHECKING:
+    from scipy.sparse import csr_array
 
 # Residuals enter as fourth powers of singular values, and squares of those are summed.
 ENERGY_RANGE = (1e-100, 1e100)
@@ -49,12 +53,12 @@ class Learnt:
     swept_energy: float
 
 
-def first_statistics(lines: np.ndarray, preparation: Preparation, work: np.dtype) -> Preparation:
+def first_statistics(lines: np.ndarray | csr_array, preparation: Preparation, work: np.dtype) -> Preparation:
     """Take a first mean and first scales from some lines.
 
     Parameters
     ----------
-    lines : ndarray, shape (lines, across)
+    lines : ndarray or csr_array, shape (lines, across)
         As stored.
     preparation : Preparation
     work : numpy.dtype
@@ -67,14 +71,20 @@ def first_statistics(lines: np.ndarray, preparation: Preparation, work: np.dtype
     """
     wide = np.dtype(np.complex128 if lines.dtype.kind == "c" else np.float64)
     with np.errstate(all="ignore"):
-        mean = lines.mean(axis=0, dtype=wide)
+        mean = np.asarray(lines.mean(axis=0, dtype=wide))
         if not np.all(np.isfinite(mean)):
             return preparation
         squares = np.zeros(len(mean))
-        if preparation.scale:
+        if preparation.scale and isinstance(lines, np.ndarray):
             for line in lines:
                 squares += np.abs(line - mean) ** 2
-    return shift_and_scale(mean, squares / len(lines), preparation, work)
+        elif preparation.scale and not isinstance(lines, np.ndarray):
+            for first, stop in pieces(lines.indptr):
+                stored = slice(int(lines.indptr[first]), int(lines.indptr[stop]))
+                places = lines.indices[stored]
+                squares += add_up(places, np.abs(lines.data[stored] - mean[places]) ** 2, len(mean))
+            squares += absent_per_column(lines) * np.abs(mean) ** 2
+    return shift_and_scale(mean, squares / lines.shape[0], preparation, work)
 
 
 def shift_and_scale(mean: np.ndarray, variance: np.ndarray, preparation: Preparation, work: np.dtype) -> Preparation:

@@ -6,6 +6,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from bigsvd.source.names import Names
+
 
 @dataclass(frozen=True)
 class ArrayAxes:
@@ -26,6 +28,8 @@ class ArrayAxes:
         Whether entries lie in Fortran order, the last axis slowest.
     borders : tuple of tuple of int
         Where the chunks of every axis begin, and the end; only where they are of unequal size.
+    coordinates : tuple of (Names or None)
+        Labels along every axis, not read yet; empty where no axis has any.
     """
 
     shape: tuple[int, ...]
@@ -35,6 +39,7 @@ class ArrayAxes:
     why: str = ""
     reversed: bool = False
     borders: tuple[tuple[int, ...], ...] = ()
+    coordinates: tuple[Names | None, ...] = ()
 
     def cuts(self, axis: int) -> np.ndarray:
         """Where the chunks along an axis begin, and the end."""
@@ -44,6 +49,11 @@ class ArrayAxes:
         if self.chunks is None:
             return np.array([0, side])
         return np.append(np.arange(0, side, self.chunks[axis]), side)
+
+    def labels(self, axis: int) -> Names | None:
+        """Labels along an axis, one for each of its places; None where the file has none."""
+        found = self.coordinates[axis] if self.coordinates else None
+        return found if found is not None and found.count == self.shape[axis] else None
 
     def name(self, axis: int) -> str:
         """What to call an axis.

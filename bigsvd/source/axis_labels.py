@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 from pathlib import Path
 from typing import Any
@@ -56,39 +57,18 @@ def load_mask(given: Any, parent: ArraySource) -> tuple[np.ndarray, str]:
 def load_coordinates(parent: ArraySource, region: tuple[range, ...]) -> tuple[np.ndarray | None, ...]:
     """One-dimensional labels of every axis, of the part that is taken; None where the file has none that fit.
 
-    They are what HDF5 attaches as dimension scale, or what lies in a Zarr store beside the array under the name of the
-    axis, as xarray has it. Labels are no part of the matrix: those that cannot be read are left out.
+    Where they stand, the layout of the file says. Numbers alone are read; text is kept as names of rows or columns.
+    Labels are no part of the matrix: those that cannot be read are left out.
     """
-    axes = parent.axes
     found: list[np.ndarray | None] = []
     for axis, places in enumerate(region):
-        try:
-            values = _scale(parent, axis) if axes.shape[axis] <= MOST_COORDINATES else None
-        except (SourceError, OSError, KeyError, ValueError, TypeError, RuntimeError, AttributeError):
-            values = None
-        fits = values is not None and values.shape == (axes.shape[axis],) and values.dtype.kind in "biuf"
+        names, values = parent.axes.labels(axis), None
+        if names is not None and names.count <= MOST_COORDINATES:
+            with contextlib.suppress(SourceError, OSError, KeyError, ValueError, TypeError, RuntimeError):
+                values = names.values()
+        fits = values is not None and values.shape == (parent.axes.shape[axis],)
         found.append(values[places.start : places.stop : places.step] if fits and values is not None else None)
     return tuple(found)
-
-
-def _scale(parent: ArraySource, axis: int) -> np.ndarray | None:
-    """Labels of one axis in the file of an array."""
-    path, access = getattr(parent, "path", None), getattr(parent, "access", STRICT)
-    if hasattr(parent, "dataset"):
-        from bigsvd.source.hdf5_file import open_hdf5
-
-        with open_hdf5(str(path)) as file:
-            scales = file[parent.dataset].dims[axis]
-            # A dimension without values of its own is held by an empty scale (netCDF-4 convention, from memory).
-            named = len(scales) and not bytes(scales[0].attrs.get("NAME", b"")).startswith(b"This is a netCDF dim")
-            return np.asarray(scales[0][...]) if named and scales[0].ndim == 1 else None
-    if hasattr(parent, "inside") and parent.axes.names and parent.axes.names[axis]:
-        group = parent.inside.rpartition("/")[0]
-        name = parent.axes.names[axis]
-        if "/" in name or name == parent.inside.rpartition("/")[2]:
-            return None
-        return _load(str(path), f"{group}/{name}".lstrip("/"), access)
-    return None
 
 
 def _load(path: str, inside: str, access: Access) -> np.ndarray:

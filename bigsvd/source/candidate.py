@@ -4,9 +4,13 @@ from __future__ import annotations
 
 import json
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from bigsvd.errors import NoMatrixError, SeveralMatricesError, UnsupportedMatrixError
+from bigsvd.source.array_axes import ArrayAxes
+from bigsvd.source.axes import LABELS, Axes
+from bigsvd.source.names import Names
+from bigsvd.source.packing import Packing
 from bigsvd.units import shell_word, show_count, show_shape
 
 LISTED = 12
@@ -44,6 +48,20 @@ class Candidate:
         Names of the axes, where the file has any.
     sample_axes : tuple of int
         Of an array of more than two axes: those that a marker says hold samples.
+    coordinates : tuple of (Names or None)
+        Of an array of more than two axes: labels along each; empty where no axis has any.
+    nonzeros : int or None
+        Entries stored, of a sparse matrix.
+    sparse : bool
+        Whether it is a group that holds a sparse matrix; its sizes are those of the matrix made dense.
+    packing : Packing or None
+        How its entries are packed; None where they are not.
+    layout, marker, row_names, column_names
+        As in `MatrixSpec`.
+    remarks : tuple of str
+        Weaker signs around it, and why names were not taken.
+    level : int or None
+        Of an array in an image of several resolutions, which: 0 is the full one, and the others are its copies.
     """
 
     path: str
@@ -61,6 +79,33 @@ class Candidate:
     outside: tuple[str, ...] = ()
     axis_names: tuple[str, ...] = ()
     sample_axes: tuple[int, ...] = ()
+    coordinates: tuple[Names | None, ...] = ()
+    nonzeros: int | None = None
+    sparse: bool = False
+    packing: Packing | None = None
+    layout: str = ""
+    marker: str = ""
+    row_names: Names | None = None
+    column_names: Names | None = None
+    remarks: tuple[str, ...] = ()
+    level: int | None = None
+
+    def with_axes(self, axes: Axes) -> Candidate:
+        """The same array with what was recognised around it."""
+        return replace(
+            self, layout=axes.layout, marker=axes.marker, samples_hint=axes.samples_hint, hint_reason=axes.hint_reason,
+            axis_names=axes.axis_names, sample_axes=axes.sample_axes, coordinates=axes.coordinates,
+            row_names=axes.row_names, column_names=axes.column_names, remarks=axes.remarks,
+        )  # fmt: skip
+
+    @property
+    def axes(self) -> ArrayAxes:
+        """What is known of the axes of an array that lies as one row after the other; chunks are left to its source."""
+        samples = self.sample_axes
+        if len(self.shape) == 2 and self.samples_hint in ("rows", "columns"):
+            samples = (("rows", "columns").index(self.samples_hint),)
+        labels = self.coordinates or ((self.row_names, self.column_names) if len(self.shape) == 2 else ())
+        return ArrayAxes(self.shape, None, self.axis_names, samples, self.hint_reason, coordinates=labels)
 
     @property
     def many_axes(self) -> bool:
@@ -81,10 +126,6 @@ class Candidate:
         return f"{self.path or '(the array)'}  " + ": ".join(words)
 
 
-SPARSE_TYPES = ("csr_matrix", "csc_matrix")
-SPARSE = "a sparse group; sparse groups are not read yet"
-
-
 def why_unusable(shape: tuple[int, ...] | None, numeric: bool, type_words: str) -> str:
     """Reason for which an array can be no matrix; empty where it is one, or can be unfolded to one."""
     if shape is None:
@@ -103,11 +144,14 @@ def choose(candidates: Sequence[Candidate], where: str, *, unfold: bool = False)
 
     With `unfold`, arrays of more than two axes come before matrices.
     """
-    usable = [candidate for candidate in candidates if candidate.usable]
+    # Smaller copies of an image compete with nothing: they are taken only by their own name.
+    usable = [candidate for candidate in candidates if candidate.usable and not candidate.level]
+    # Numbers of regions stand beside the image that is meant.
+    usable = [candidate for candidate in usable if candidate.layout != LABELS] or usable
     full = [candidate for candidate in usable if sum(side > 1 for side in candidate.shape) > 1]
     # Arrays of more axes stand behind matrices, unless they are asked for.
     matrices = [candidate for candidate in full if candidate.many_axes == unfold] or full
-    sparse = [candidate for candidate in candidates if candidate.reason == SPARSE]
+    sparse = [candidate for candidate in candidates if candidate.sparse and not candidate.usable]
     # Files of some programs keep scalars and vectors as 1 × n matrices: they are taken only if there is nothing else.
     choice = matrices or usable
     if len(choice) == 1 and not sparse:
@@ -119,13 +163,16 @@ def choose(candidates: Sequence[Candidate], where: str, *, unfold: bool = False)
         problem = (
             f"{where} holds {show_count(len(choice))} matrices and none was named"
             if len(choice) > 1
-            else f"{where} holds one dense matrix beside sparse groups, and none was named"
+            else f"{where} holds one matrix beside sparse groups that cannot be read, and none was named"
         )
         raise SeveralMatricesError(
             problem,
             evidence=listing([*choice, *sparse]),
             remedy=f"Name one: --matrix {shell_word(example)} (in Python: matrix={json.dumps(example)})",
         )
+    if len(sparse) == 1:
+        # Whoever opens it says what it lacks, and what to do.
+        return sparse[0]
     if not candidates:
         raise NoMatrixError(
             f"{where} holds no arrays at all", remedy="Give a file that holds a two-dimensional array of numbers."

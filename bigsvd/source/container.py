@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import stat
+import zipfile
 from pathlib import Path
 
 from bigsvd.errors import NoMatrixError, SourceError, UnsupportedMatrixError
@@ -27,7 +28,7 @@ _KNOWN = (
 
 
 def container(path: Path) -> str:
-    """Tell what lies at a path: ``hdf5``, ``zarr``, ``zip`` or ``npy``.
+    """Tell what lies at a path: ``hdf5``, ``zarr``, ``zip``, ``npy`` or ``npz``.
 
     Parameters
     ----------
@@ -79,14 +80,24 @@ def container(path: Path) -> str:
     if head.startswith(b"\x93NUMPY"):
         return "npy"
     if head.startswith(b"PK\x03\x04") or head.startswith(b"PK\x05\x06"):
-        return "zip"
+        return "npz" if _is_npz(path) else "zip"
     raise UnsupportedMatrixError(
-        f"{path} is neither an HDF5 file, a Zarr store nor an .npy file",
+        f"{path} is neither an HDF5 file, a Zarr store, an .npy nor an .npz file",
         evidence=[f"{show_bytes(size)}; it looks like {looks_like(head)}", f"first bytes: {head[:16]!r}"]
         if head
         else ["it is empty (0 bytes): an interrupted copy or download"],
-        remedy="Give one of those three formats.",
+        remedy="Give one of those four formats.",
     )
+
+
+def _is_npz(path: Path) -> bool:
+    """Whether a zip file holds arrays of NumPy and nothing else."""
+    try:
+        with zipfile.ZipFile(path) as file:
+            names = file.namelist()
+    except (zipfile.BadZipFile, OSError, ValueError, NotImplementedError):
+        return False
+    return bool(names) and all(name.endswith(".npy") and "/" not in name for name in names)
 
 
 def _directory(path: Path) -> str:

@@ -6,6 +6,7 @@ import errno
 import math
 import os
 import threading
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -17,12 +18,14 @@ from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
 from bigsvd.source.entries import decoded_type, pair_view, type_caution
 from bigsvd.source.fill import FillError, hdf5_fill
 from bigsvd.source.hdf5_complete import require_complete
-from bigsvd.source.hdf5_dataset import describe, missing_filters, unapplied_attributes
+from bigsvd.source.hdf5_dataset import describe, missing_filters
 from bigsvd.source.hdf5_direct import DirectReader, Fill, decodes_directly, direct_reader, plain_type
 from bigsvd.source.hdf5_file import library_errors_named, open_hdf5, register_plugins
 from bigsvd.source.hdf5_filters import filters_of
 from bigsvd.source.hdf5_links import other_files, require_inside
 from bigsvd.source.home import Home
+from bigsvd.source.one_row import OneRow
+from bigsvd.source.packing import packing_cautions
 from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.positional import Descriptor, reading_bytes
 from bigsvd.source.rectangle import (
@@ -55,19 +58,22 @@ class Hdf5Source:
         Path of a dataset of numbers inside it, of two or more axes.
     access : Access
         Whether chunks that were never written are filled, and links followed out of the folder.
+    one_row : bool
+        Whether the dataset has one axis and is read as a matrix of one row: a part of a sparse matrix.
     """
 
-    def __init__(self, path: str, dataset: str, access: Access = STRICT) -> None:
+    def __init__(self, path: str, dataset: str, access: Access = STRICT, *, one_row: bool = False) -> None:
         self.path = path
         self.dataset = dataset
         self.access = access
+        self.one_row = one_row
         self._forget()
         self.stamps: tuple[FileStamp, ...] = (FileStamp.of(path),)
         with library_errors_named(f"{path}:{dataset}"), open_hdf5(path) as file:
             require_inside(file, dataset, Home(path, follow=access.follow_links))
             others = [os.path.abspath(file[dataset].file.filename), *other_files(file[dataset])]
             self.stamps += tuple(FileStamp.of(name) for name in others if name != path and os.path.exists(name))
-            self.spec, self.axes = _spec(file[dataset], path, dataset, self.stamps)
+            self.spec, self.axes = _spec(self._shown(file[dataset]), path, dataset, self.stamps, access)
         self._opened()
 
     def _forget(self) -> None:
@@ -78,7 +84,8 @@ class Hdf5Source:
         self._process = 0
 
     def __getstate__(self) -> dict[str, Any]:
-        return {name: getattr(self, name) for name in ("path", "dataset", "access", "stamps", "spec", "axes")}
+        names = ("path", "dataset", "access", "one_row", "stamps", "spec", "axes")
+        return {name: getattr(self, name) for name in names}
 
     def __setstate__(self, state: dict[str, Any]) -> None:
         self.__dict__.update(state)
@@ -86,6 +93,10 @@ class Hdf5Source:
 
     def __repr__(self) -> str:
         return f"Hdf5Source({self.path!r}, {self.dataset!r})"
+
+    def _shown(self, dataset: Any) -> Any:
+        """The dataset as the matrix that is read."""
+        return OneRow(dataset) if self.one_row else dataset
 
     def _opened(self) -> tuple[Any, Fill]:
         """Return the open dataset and the way to read it.
@@ -99,7 +110,7 @@ class Hdf5Source:
                 self._process = os.getpid()
                 with library_errors_named(f"{self.path}:{self.dataset}"):
                     file = open_hdf5(self.path)
-                    dataset = open_dataset(file, self.dataset)
+                    dataset = self._shown(open_dataset(file, self.dataset))
                     # Behind an external link it lies in another file.
                     descriptor = Descriptor(dataset.file.filename)
                     library = library_reader(dataset)
@@ -258,8 +269,10 @@ def open_dataset(file: Any, inside: str) -> Any:
     return dataset
 
 
-def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -> tuple[MatrixSpec, ArrayAxes]:
-    said = describe(dataset, inside)
+def _spec(
+    dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...], access: Access
+) -> tuple[MatrixSpec, ArrayAxes]:
+    said = describe(dataset, inside, follow=access.follow_links)
     stored = dataset.dtype
     dtype = decoded_type(stored)
     if dtype is None or not said.usable:
@@ -272,9 +285,10 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -
     filters = filters_of(dataset)
     codecs = tuple(step.name for step in filters) if decodes_directly(dataset) else ("library",) * bool(filters)
     shape = tuple(dataset.shape)
-    chunks = dataset.chunks or (1, *shape[1:])
+    # Any range of a list that lies in one piece will do.
+    chunks = dataset.chunks or ((1, 1) if isinstance(dataset, OneRow) else (1, *shape[1:]))
     unit = tuple(min(chunk, side) for chunk, side in zip(chunks, shape, strict=True))
-    axes = ArrayAxes(shape, unit if dataset.chunks else None, said.axis_names, said.sample_axes, said.hint_reason)
+    axes = replace(said.axes, chunks=unit if dataset.chunks else None)
     spec = MatrixSpec(
         name=f"{path}:{inside}",
         shape=(shape[0], math.prod(shape[1:])),
@@ -287,8 +301,13 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...]) -
         samples_hint=said.samples_hint,
         hint_reason=said.hint_reason,
         fingerprint=digest(stamps, inside, dataset.shape, stored, said.encoding),
-        cautions=type_caution(stored) + unapplied_attributes(set(dataset.attrs)),
+        cautions=type_caution(stored) + packing_cautions(said.packing) + said.remarks,
         codecs=codecs,
+        packing=said.packing,
+        layout=said.layout,
+        marker=said.marker,
+        row_names=said.row_names,
+        column_names=said.column_names,
     )
     return spec, axes
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from typing import Any
 
 import numpy as np
@@ -11,11 +12,11 @@ from bigsvd.source.entries import decoded_type, show_type
 from bigsvd.source.hdf5_direct import decodes_directly
 from bigsvd.source.hdf5_file import register_plugins
 from bigsvd.source.hdf5_filters import filters_of
-from bigsvd.source.hints import axis_names, hdf5_hint, sample_axis_from_names
+from bigsvd.source.hdf5_layout import hdf5_axes
+from bigsvd.source.hdf5_names import attribute_text
+from bigsvd.source.home import Home
+from bigsvd.source.packing import NAMES, Packing, find_packing
 from bigsvd.units import show_count, show_shape
-
-_NOT_APPLIED = ("scale_factor", "add_offset", "_FillValue", "missing_value")
-_BOTH = {"scale_factor", "add_offset"}
 
 
 def missing_filters(dataset: Any) -> list[str]:
@@ -51,7 +52,7 @@ def show_encoding(dataset: Any) -> str:
     return f"chunks {show_shape(dataset.chunks)}, {' + '.join(words) or 'no filter'}"
 
 
-def describe(dataset: Any, path: str) -> Candidate:
+def describe(dataset: Any, path: str, *, follow: bool = False) -> Candidate:
     """Say all that is known of a dataset without reading its entries."""
     import h5py
 
@@ -61,20 +62,15 @@ def describe(dataset: Any, path: str) -> Candidate:
     except (TypeError, ValueError, KeyError, OSError) as error:
         return Candidate(path, shape or (), reason=f"a type that h5py does not know ({error})")
     words = _type_words(dataset, stored)
-    numeric = decoded_type(stored) is not None and _text_attribute(dataset, "MATLAB_class") != "char"
-    reason = why_unusable(shape, numeric, words)
+    numeric = decoded_type(stored) is not None and attribute_text(dataset, "MATLAB_class") != "char"
+    reason = _why_no_matrix(dataset, stored) or why_unusable(shape, numeric, words)
     if not reason and "MATLAB_empty" in dataset.attrs:
         reason = "it is empty"
     missing = missing_filters(dataset)
     if not reason and missing:
         reason = f"its filter is not installed: {', '.join(missing)}"
-    hint, hint_reason = hdf5_hint(dataset, path) if not reason else (None, "")
-    names = axis_names(dataset) if not reason else ()
-    sample_axes: tuple[int, ...] = ()
-    if len(shape or ()) > 2:
-        sample_axes, hint_reason = sample_axis_from_names(names, "the dimension scale")
     sized = shape is not None and not h5py.check_vlen_dtype(stored) and stored.kind != "O"
-    return Candidate(
+    said = Candidate(
         path=path,
         shape=shape or (),
         dtype=words,
@@ -84,17 +80,19 @@ def describe(dataset: Any, path: str) -> Candidate:
         decoded_bytes=int(np.prod(shape, dtype=object)) * stored.itemsize if sized else None,
         usable=not reason,
         reason=reason,
-        samples_hint=hint,
-        hint_reason=hint_reason,
-        axis_names=names,
-        sample_axes=sample_axes,
+        packing=None if reason else dataset_packing(dataset, decoded_type(stored)),
     )
+    if not numeric or shape is None or len(shape) < 2 or 0 in shape:
+        # Lists and texts are no matrices in any layout.
+        return said
+    home = Home(os.path.abspath(dataset.file.filename), follow=follow)
+    return said.with_axes(hdf5_axes(dataset.file, dataset.name, shape, home))
 
 
 def _type_words(dataset: Any, stored: np.dtype) -> str:
     import h5py
 
-    if h5py.check_string_dtype(stored) is not None or _text_attribute(dataset, "MATLAB_class") == "char":
+    if h5py.check_string_dtype(stored) is not None or attribute_text(dataset, "MATLAB_class") == "char":
         return "text"
     if h5py.check_ref_dtype(stored) is not None:
         return "references to other objects"
@@ -103,21 +101,28 @@ def _type_words(dataset: Any, stored: np.dtype) -> str:
     return show_type(stored)
 
 
-def _text_attribute(thing: Any, name: str) -> str:
-    """An attribute as text; empty where it is missing or does not decode."""
-    try:
-        value = thing.attrs.get(name, "")
-    except (OSError, TypeError, ValueError, KeyError, RuntimeError):
+def _why_no_matrix(dataset: Any, stored: np.dtype) -> str:
+    """Why records are no matrix, and how their numbers would become one."""
+    if attribute_text(dataset, "CLASS") != "TABLE":
         return ""
-    if isinstance(value, np.ndarray) and value.size == 1:
-        value = value.reshape(-1)[0]
-    return value.decode("utf-8", "replace") if isinstance(value, bytes) else str(value)
+    if attribute_text(dataset.parent, "pandas_type") == "frame_table":
+        return "a pandas table, kept as records row by row: write it again with format='fixed', which keeps a matrix"
+    numbers = [name for name in stored.names or () if decoded_type(stored[name]) is not None]
+    listed = ", ".join(numbers[:6]) + (", …" if len(numbers) > 6 else "")
+    columns = f"its columns of numbers are {listed}" if numbers else "none of its columns holds numbers"
+    return f"a PyTables table, kept as records row by row; {columns}: store them side by side as one array"
 
 
-def unapplied_attributes(names: set[str]) -> tuple[str, ...]:
-    """Caution about attributes by which a reader is expected to decode entries."""
-    found = [name for name in _NOT_APPLIED if name in names]
-    if not _BOTH & set(found):
-        # A fill value alone is written beside most arrays, packed or not.
-        found = [name for name in found if name == "missing_value"]
-    return (f"attributes {', '.join(found)} are not applied: entries are taken as stored",) if found else ()
+def dataset_packing(dataset: Any, decoded: np.dtype | None) -> Packing | None:
+    """What the attributes of a dataset say of decoding its entries."""
+    if decoded is None:
+        return None
+    found = {}
+    for name in NAMES:
+        # An attribute that cannot be read decodes nothing; what it was is said.
+        try:
+            if name in dataset.attrs:
+                found[name] = dataset.attrs[name]
+        except (OSError, TypeError, ValueError, KeyError, RuntimeError) as error:
+            found[name] = f"unreadable ({error})"
+    return find_packing(found, decoded)

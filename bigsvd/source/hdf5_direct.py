@@ -11,6 +11,7 @@ import math
 import os
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -19,7 +20,7 @@ from bigsvd.source.chunk_decoder import ChunkDecoder, ChunkError
 from bigsvd.source.codecs import FramingUnknownError
 from bigsvd.source.hdf5_chunks import MOST_CHUNKS, ChunkTable
 from bigsvd.source.hdf5_filters import filters_of
-from bigsvd.source.positional import announce, announce_rows, read_box
+from bigsvd.source.positional import announce, read_box
 from bigsvd.source.rectangle import Box, clip_box, grid_shape, inside, touched
 from bigsvd.source.workspace import Workspace, Workspaces
 
@@ -67,20 +68,23 @@ def direct_reader(dataset: Any, descriptor: int, library: Fill, fill: np.generic
         if plist.get_layout() != h5py.h5d.CONTIGUOUS or plist.get_external_count() or offset is None:
             return None
         shape = tuple(dataset.shape)
-        row_bytes = math.prod(shape[1:]) * stored.itemsize
         return DirectReader(
             lambda box, out: read_box(descriptor, offset, shape, stored, box, out),
-            # Parts of rows lie between others that are not wanted.
-            lambda box: (
-                announce_rows(descriptor, offset, row_bytes, box[0])
-                if all(span == (0, side) for span, side in zip(box[1:], shape[1:], strict=True))
-                else None
-            ),
+            partial(_announce_box, descriptor, offset, shape, stored.itemsize),
         )
     if not decodes_directly(dataset) or math.prod(grid_shape(dataset.shape, dataset.chunks)) > MOST_CHUNKS:
         return None
     reader = _ChunkReader(dataset, stored, descriptor, library, fill)
     return DirectReader(reader.fill, reader.announce) if reader.agrees_with(dataset) else None
+
+
+def _announce_box(descriptor: int, offset: int, shape: tuple[int, ...], item: int, box: Box) -> None:
+    """Announce a box that lies in one piece; parts of others lie between entries that are not wanted."""
+    parted = max((axis for axis, span in enumerate(box) if span != (0, shape[axis])), default=0)
+    if all(stop - start == 1 for start, stop in box[:parted]):
+        start = sum(span[0] * math.prod(shape[axis + 1 :]) for axis, span in enumerate(box))
+        size = (box[parted][1] - box[parted][0]) * math.prod(shape[parted + 1 :])
+        announce(descriptor, offset + start * item, size * item)
 
 
 def decodes_directly(dataset: Any) -> bool:

@@ -8,21 +8,26 @@ from itertools import islice
 from typing import Any
 
 from bigsvd.errors import OutsideError, SourceError
-from bigsvd.source.candidate import SPARSE, SPARSE_TYPES, Candidate
+from bigsvd.source.candidate import Candidate
 from bigsvd.source.hdf5_dataset import describe
+from bigsvd.source.hdf5_layout import hdf5_axes
 from bigsvd.source.hdf5_links import outside_files, require_path_inside
 from bigsvd.source.home import Home
 from bigsvd.source.rectangle import grid_shape
+from bigsvd.source.sparse_describe import describe_sparse, with_surroundings
+from bigsvd.source.sparse_hdf5 import Hdf5Group
+from bigsvd.source.sparse_layout import SPARSE_MEMBERS
 from bigsvd.units import show_count
 
 MOST_OBJECTS = 20_000
 # A path of so many groups takes the library as many steps for each object below.
 DEEPEST = 64
-_SPARSE_CHILDREN = ({"data", "indices", "indptr"}, {"data", "ir", "jc"}, {"row", "col", "data"})
 _INTERNAL = ("#refs#", "#subsystem#")
 
 
-def walk_hdf5(file: Any, home: Home, start: str = "/", most_objects: int = MOST_OBJECTS) -> list[Candidate]:
+def walk_hdf5(
+    file: Any, home: Home, start: str = "/", most_objects: int = MOST_OBJECTS, sparse_format: str | None = None
+) -> list[Candidate]:
     """List all datasets below a group, each object once; what hard links reach comes before what soft links name.
 
     Parameters
@@ -34,6 +39,8 @@ def walk_hdf5(file: Any, home: Home, start: str = "/", most_objects: int = MOST_
         Group to begin at.
     most_objects : int
         Where the walk stops; deeper than `DEEPEST` groups it does not go.
+    sparse_format : {"csr", "csc"}, optional
+        As in `Access`.
     """
     import h5py
 
@@ -48,9 +55,12 @@ def walk_hdf5(file: Any, home: Home, start: str = "/", most_objects: int = MOST_
             if group.count("/") > DEEPEST:
                 found.append(Candidate(group, reason=f"groups below {DEEPEST} others are not looked into"))
                 continue
+            members = _sparse_members(file, group, home, sparse_format, found)
             # Listed one by one: a group may hold more names than memory.
             for name in islice(file[group or "/"], most_objects - looked + 1):
                 looked += 1
+                if name in members:
+                    continue
                 path = f"{group}/{name}"
                 try:
                     link = file[group or "/"].get(name, getlink=True)
@@ -99,7 +109,7 @@ def _visit(
     visited.add(identity)
     if isinstance(thing, h5py.Dataset):
         try:
-            said = describe(thing, path)
+            said = describe(thing, path, follow=home.follow)
             outside = outside_files(file, path, home)
             if said.usable and outside and not home.follow:
                 said = replace(
@@ -109,10 +119,33 @@ def _visit(
         except (OSError, RuntimeError, KeyError, ValueError, TypeError) as error:
             found.append(Candidate(path, reason=f"it cannot be described ({error})"))
     elif isinstance(thing, h5py.Group):
-        if is_sparse(thing):
-            found.append(Candidate(path, reason=SPARSE))
-        else:
-            waiting.append(path)
+        waiting.append(path)
+
+
+def _sparse_members(
+    file: Any, group: str, home: Home, sparse_format: str | None, found: list[Candidate]
+) -> tuple[str, ...]:
+    """List the sparse matrix that a group holds, if it does; return the names of what belongs to it."""
+    path = group or "/"
+    try:
+        parts = Hdf5Group(file, path, home)
+        described = describe_sparse(parts, sparse_format)
+        if described is None:
+            return ()
+        said, layout = described
+        outside = parts.outside(layout)
+    except OutsideError as error:
+        reason = f"a sparse group that lies partly in {error.files[0]}: add --follow-links to read it"
+        found.append(Candidate(path, reason=reason, outside=error.files, sparse=True))
+        return SPARSE_MEMBERS
+    except (OSError, RuntimeError, KeyError, ValueError, TypeError):
+        # What is wrong with its members is said of each of them.
+        return ()
+    if said.usable and outside and not home.follow:
+        said = replace(said, usable=False, reason=f"it lies partly in {outside[0]}: add --follow-links to read it")
+    said = with_surroundings(said, hdf5_axes(file, path, said.shape, home))
+    found.append(replace(said, outside=outside))
+    return layout.members if layout is not None else SPARSE_MEMBERS
 
 
 def _absent(dataset: Any, said: Candidate) -> int | None:
@@ -137,17 +170,3 @@ def _target(link: Any) -> str:
     """Where a soft or external link points."""
     inside = str(link.path)
     return f"{inside} in {link.filename}" if hasattr(link, "filename") else inside
-
-
-def is_sparse(group: Any) -> bool:
-    """Whether a group holds the parts of a sparse matrix."""
-    try:
-        if "MATLAB_sparse" in group.attrs or "h5sparse_format" in group.attrs:
-            return True
-        if str(group.attrs.get("encoding-type", "")) in SPARSE_TYPES:
-            return True
-        children = set(group)
-        # A matrix beside its row and column labels is two-dimensional; the entries of a sparse one are a list.
-        return any(parts <= children for parts in _SPARSE_CHILDREN) and len(group["data"].shape) == 1
-    except (OSError, TypeError, ValueError, RuntimeError, KeyError, AttributeError):
-        return False

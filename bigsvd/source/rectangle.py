@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import bisect
 import itertools
 import math
 from collections.abc import Callable, Iterator, Sequence
@@ -155,6 +156,56 @@ def fill_by_bands(fill: Callable[[Box, np.ndarray], None], box: Box, out: np.nda
         part = np.empty((stop - start, *out.shape[1:]), out.dtype)
         fill(((start, stop), *box[1:]), part)
         out[start - rows[0] : stop - rows[0]] = part
+
+
+def tiles(spec: MatrixSpec, rows: Span, columns: Span, most_bytes: int = BAND_BYTES) -> Iterator[tuple[Span, Span]]:
+    """Cut a rectangle into tiles of whole chunks, in storage order; whole along the rows where that is small enough.
+
+    Parameters
+    ----------
+    spec : MatrixSpec
+    rows, columns : (int, int)
+    most_bytes : int
+        Of a tile; a single chunk may be more, unless parts of it can be read alone.
+    """
+    unit, most = _unit(spec), max(1, most_bytes // spec.dtype.itemsize)
+    # From the edge of a chunk on, so that none is touched twice.
+    width = columns[1] - (spec.whole_chunks(1, *columns)[0] if spec.edges[1] else columns[0] // unit[1] * unit[1])
+    wide = unit[1] * max(1, min(-(-width // unit[1]), most // (unit[0] * unit[1])))
+    if wide < width:
+        # Not the whole width: tiles of one chunk's height follow each other along the row.
+        high = unit[0]
+    else:
+        wide, high = columns[1], unit[0] * max(1, most // (unit[0] * max(1, width)))
+    for span in _pieces(spec.edges[0], rows, high):
+        for across in _pieces(spec.edges[1], columns, wide):
+            yield span, across
+
+
+def _pieces(edges: tuple[int, ...] | None, span: Span, length: int) -> Iterator[Span]:
+    """Cut a range where chunks end, into pieces of at most so many lines, or of one chunk."""
+    if edges is None:
+        for number in range(span[0] // length, -(-span[1] // length)):
+            yield clip(number, length, span)
+        return
+    start = span[0]
+    while start < span[1]:
+        whole = bisect.bisect_right(edges, start)
+        last = max(whole, bisect.bisect_right(edges, edges[whole - 1] + length) - 1)
+        stop = min(edges[last], span[1])
+        yield start, stop
+        start = stop
+
+
+def tile_bytes(spec: MatrixSpec, most_bytes: int = BAND_BYTES) -> int:
+    """Most bytes of a tile of such a matrix."""
+    unit = _unit(spec)
+    return min(max(most_bytes, unit[0] * unit[1] * spec.dtype.itemsize), spec.decoded_bytes)
+
+
+def _unit(spec: MatrixSpec) -> tuple[int, int]:
+    """What a tile is made of: a chunk, but entries that lie in rows as they are can be read in parts of a row."""
+    return (1, 1) if spec.storage == "plain" and spec.chunks[0] == 1 else spec.chunks
 
 
 def show_place(*box: Span) -> str:

@@ -9,9 +9,12 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from bigsvd.errors import OptionError
+from bigsvd.source.axes import CONTRADICTORY
 from bigsvd.source.axis_choice import AxisChoice, check_mask, plan_unfolding, region_of, sample_axes_of
 from bigsvd.source.axis_labels import load_coordinates, load_mask
 from bigsvd.source.complete import check_complete
+from bigsvd.source.names import Names
+from bigsvd.source.names_derived import take_names
 from bigsvd.source.rectangle import BAND_BYTES, Box, Span, require_rectangle, sides_of
 from bigsvd.source.spec import ArraySource, MatrixSpec, Source
 from bigsvd.source.stamp import digest
@@ -56,6 +59,11 @@ class UnfoldedSource:
         self._back = tuple(order.index(axis) for axis in range(len(order)))
         self._order = order
         self.spec = self._spec()
+
+    @property
+    def path(self) -> str | None:
+        """The file of the array, where names are looked for by their path; None in memory."""
+        return getattr(self.parent, "path", None)
 
     def __repr__(self) -> str:
         return f"UnfoldedSource({self.parent!r}, {self.unfolding.words()!r})"
@@ -146,6 +154,19 @@ class UnfoldedSource:
             cautions=spec.cautions + self._cautions(),
             decode_bytes=spec.decode_bytes + self._temporary_bytes(),
             unfolding=unfolding,
+            row_names=self._names(unfolding.row_axes, unfolding.rows),
+            column_names=self._names(unfolding.column_axes, unfolding.columns),
+        )
+
+    def _names(self, axes: tuple[int, ...], side: Side) -> Names | None:
+        """Names of rows or columns that stand for a single axis, unless its labels are kept as numbers."""
+        if len(axes) > 1 or (self.unfolding.coordinates and self.unfolding.coordinates[axes[0]] is not None):
+            return None
+        axis, places = axes[0], np.arange(side.lengths[0])
+        if side.chosen is not None:
+            places = np.flatnonzero(side.chosen)
+        return take_names(
+            self.parent.axes.labels(axis), self.unfolding.starts[axis] + places * self.unfolding.steps[axis]
         )
 
     def _chunks(self) -> tuple[int, int]:
@@ -251,9 +272,13 @@ def unfold(parent: ArraySource, choice: AxisChoice) -> Source:
     axes, spec = parent.axes, parent.spec
     if len(axes.shape) == 2 and not choice:
         return parent
+    if spec.samples_hint == CONTRADICTORY and choice.sample_axes is None:
+        raise OptionError(
+            f"{spec.name}: markers in the file contradict each other about which axis holds the samples",
+            evidence=[spec.hint_reason],
+            remedy="Say it: --sample-axes 0 or --sample-axes 1.",
+        )
     samples = sample_axes_of(axes, choice.sample_axes, spec.name)
-    if len(axes.shape) == 2 and choice.sample_axes is None and spec.samples_hint is not None:
-        samples = (("rows", "columns").index(spec.samples_hint),)
     region = region_of(axes, choice.region, spec.name)
     features = tuple(axis for axis in range(len(axes.shape)) if axis not in samples)
     mask, marks = None, ""
@@ -264,7 +289,9 @@ def unfold(parent: ArraySource, choice: AxisChoice) -> Source:
         _require_some(mask, where)
         marks = digest(mask.shape, np.packbits(mask).tobytes().hex())
     unfolding = plan_unfolding(axes, samples, region, mask, spec.dtype.itemsize)
-    unfolding = replace(unfolding, coordinates=load_coordinates(parent, region))
+    if len(axes.shape) > 2:
+        # Those of a matrix are names of its rows and columns, whatever part of it is taken.
+        unfolding = replace(unfolding, coordinates=load_coordinates(parent, region))
     return UnfoldedSource(parent, unfolding, ("unfolded", samples, region, marks))
 
 

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -171,6 +171,31 @@ class Side:
             found.append(flat.reshape(-1) if pick is None else flat.reshape(-1)[pick])
         return np.concatenate(found) if found else np.zeros(0, np.int64)
 
+    def ranks(self, start: int, stop: int) -> np.ndarray:
+        """Places of entries start … stop in file order, counted among those of the side; int64."""
+        places = self.file_order(start, stop)
+        if self.chosen is None:
+            return places
+        return np.asarray((np.cumsum(self.chosen.reshape(-1)) - 1)[places])
+
+    def only(self, kept: np.ndarray) -> Side:
+        """The same side with some of its entries.
+
+        Parameters
+        ----------
+        kept : ndarray of int
+            Their numbers along the side, ascending; in the new side they follow each other as here.
+
+        Examples
+        --------
+        >>> side = Side((np.array([0, 2, 3]), np.array([0, 2, 4]))).only(np.array([1, 4, 9]))
+        >>> side.edges, side.file_order(0, 3)
+        (array([0, 1, 2, 3]), array([ 1,  2, 11]))
+        """
+        chosen = np.zeros(math.prod(self.lengths), np.bool_)
+        chosen[self.file_order(0, self.size)[kept]] = True
+        return Side(self.cuts, chosen.reshape(self.lengths))
+
 
 @dataclass(frozen=True, eq=False)
 class Unfolding:
@@ -187,7 +212,7 @@ class Unfolding:
     starts, steps : tuple of int
         Which part of the array is taken, with the lengths of the sides: first place and step along every axis.
     coordinates : tuple of (ndarray or None)
-        Labels along every axis, as the file has them, of the part that is taken.
+        Labels along every axis that are numbers, as the file has them, of the part that is taken.
     """
 
     names: tuple[str, ...]
@@ -231,14 +256,29 @@ class Unfolding:
         """Rows (0) or columns (1)."""
         return (self.rows, self.columns)[axis]
 
+    def only(self, axis: int, kept: np.ndarray) -> Unfolding:
+        """The same with some of its rows (axis 0) or columns (1); see `Side.only`."""
+        side = self.side(axis).only(kept)
+        return replace(self, rows=side) if axis == 0 else replace(self, columns=side)
+
     def place(self, row: int, column: int) -> str:
         """Name an entry of the matrix by where it lies in the array, counting from 0."""
-        at: dict[int, int] = {}
-        for axes, side, number in ((self.row_axes, self.rows, row), (self.column_axes, self.columns, column)):
-            flat = int(side.file_order(number, number + 1)[0])
-            for axis, position in zip(axes, np.unravel_index(flat, side.lengths), strict=True):
-                at[axis] = self.starts[axis] + int(position) * self.steps[axis]
+        at = self._at(0, row) | self._at(1, column)
         return ", ".join(f"{self.names[axis]} {show_count(at[axis])}" for axis in sorted(at))
+
+    def line(self, axis: int, number: int) -> str:
+        """Name a row (axis 0) or a column (1) by where it lies in the array, counting from 0."""
+        return ", ".join(f"{self.names[one]} {show_count(at)}" for one, at in sorted(self._at(axis, number).items()))
+
+    def _at(self, axis: int, number: int) -> dict[int, int]:
+        """Places along the axes that a row or a column stands for."""
+        axes, side = (self.row_axes, self.column_axes)[axis], self.side(axis)
+        flat = int(side.file_order(number, number + 1)[0])
+        positions = np.unravel_index(flat, side.lengths)
+        return {
+            one: self.starts[one] + int(position) * self.steps[one]
+            for one, position in zip(axes, positions, strict=True)
+        }
 
     def facts(self) -> dict[str, Any]:
         """Which axes became what, and which part of them, for records."""
@@ -251,6 +291,7 @@ class Unfolding:
                 for name, start, step, length in zip(self.names, self.starts, self.steps, self.lengths, strict=True)
             ],
             "masked": self.features.chosen is not None,
+            "samples_left_out": 0 if self.samples.chosen is None else int((~self.samples.chosen).sum()),
         }
 
     def words(self) -> str:
@@ -263,7 +304,10 @@ class Unfolding:
         count = show_count(self.features.size)
         if self.features.chosen is not None:
             count += f" of {show_count(self.features.chosen.size)}"
-        return f"{show_count(self.samples.size)} samples ({samples}) × {count} features ({features})"
+        rows = show_count(self.samples.size)
+        if self.samples.chosen is not None:
+            rows += f" of {show_count(self.samples.chosen.size)}"
+        return f"{rows} samples ({samples}) × {count} features ({features})"
 
     def tile_words(self, axis: int) -> str:
         """In what the array is read along rows (0) or columns (1): ``in tiles of 32 × 32``; empty for single lines."""

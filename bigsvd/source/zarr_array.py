@@ -5,18 +5,18 @@ from __future__ import annotations
 import math
 import os
 import threading
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, NoMatrixError, SourceError, UnsupportedMatrixError
 from bigsvd.source.access import STRICT, Access
-from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.chunk_decoder import ChunkError, decode_bytes, most_stored
 from bigsvd.source.complete import absent_error, settle_absent
 from bigsvd.source.entries import decoded_type, type_caution
 from bigsvd.source.fill import zarr_fill
-from bigsvd.source.hdf5_dataset import unapplied_attributes
+from bigsvd.source.packing import packing_cautions
 from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.rectangle import (
     Box,
@@ -38,11 +38,11 @@ from bigsvd.source.zarr_direct import ChunkAbsentError, ZarrFiles
 from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
 from bigsvd.source.zarr_read import Reader, open_zarr, python_reader
 from bigsvd.source.zarr_store import DirectoryKeys, KeyStore, open_keys
-from bigsvd.source.zarr_walk import describe_zarr, group_attributes, stored_bytes
+from bigsvd.source.zarr_walk import describe_zarr, stored_bytes
 from bigsvd.units import shell_word, show_shape
 
 MEANT = "write the array again with write_empty_chunks=True."
-_STATE = ("path", "inside", "access", "spec", "axes", "stamps", "metadata", "_absent")
+_STATE = ("path", "inside", "access", "one_row", "spec", "axes", "stamps", "metadata", "_absent")
 
 
 class ZarrSource:
@@ -56,12 +56,15 @@ class ZarrSource:
         Path of an array of numbers inside it, of two or more axes; empty where the store is that array.
     access : Access
         Whether chunks that were never written are filled, and links followed out of the store.
+    one_row : bool
+        Whether the array has one axis and is read as a matrix of one row: a part of a sparse matrix.
     """
 
-    def __init__(self, path: str, inside: str, access: Access = STRICT) -> None:
+    def __init__(self, path: str, inside: str, access: Access = STRICT, *, one_row: bool = False) -> None:
         self.path = path
         self.inside = inside
         self.access = access
+        self.one_row = one_row
         self._absent: AbsentChunks | None = None
         self._forget()
         self.keys: KeyStore = open_keys(path, follow=access.follow_links)
@@ -90,9 +93,10 @@ class ZarrSource:
         metadata = read_metadata(self.keys, self.inside)
         if metadata is None:
             raise NoMatrixError(f"{self.path} holds no array under {self.inside!r}", remedy="Check the path.")
-        said = describe_zarr(
-            metadata, self.inside, group_attributes(self.keys, ""), stored_bytes(self.keys, self.inside)
-        )
+        if self.one_row:
+            metadata = metadata.as_row()
+        follow = self.access.follow_links
+        said = describe_zarr(metadata, self.inside, self.keys, stored_bytes(self.keys, self.inside), follow=follow)
         dtype = decoded_type(metadata.dtype) if metadata.dtype is not None else None
         name = f"{self.path}:{self.inside}" if self.inside else self.path
         if dtype is None or metadata.dtype is None or not said.usable:
@@ -105,7 +109,7 @@ class ZarrSource:
         require_sizes(shape, metadata.chunks, metadata.dtype.itemsize, name)
         self.metadata: ZarrMetadata = metadata
         unit = tuple(min(chunk, side) for chunk, side in zip(self._decoded_chunk, shape, strict=True))
-        self.axes = ArrayAxes(shape, unit, said.axis_names, said.sample_axes, said.hint_reason)
+        self.axes = replace(said.axes, chunks=unit)
         marks = [self.path] if os.path.isfile(self.path) else self._mark_files()
         self.stamps = tuple(FileStamp.of(mark) for mark in marks)
         return MatrixSpec(
@@ -120,8 +124,13 @@ class ZarrSource:
             samples_hint=said.samples_hint,
             hint_reason=said.hint_reason,
             fingerprint=digest(self.stamps, metadata, said.stored_bytes, self._sampled_chunks()),
-            cautions=type_caution(metadata.dtype) + unapplied_attributes(set(metadata.attributes)),
+            cautions=type_caution(metadata.dtype) + packing_cautions(said.packing) + said.remarks,
             codecs=self._codecs(),
+            packing=said.packing,
+            layout=said.layout,
+            marker=said.marker,
+            row_names=said.row_names,
+            column_names=said.column_names,
         )
 
     @property

@@ -26,15 +26,17 @@ def absent_keys(keys: KeyStore, at: str, metadata: ZarrMetadata) -> np.ndarray:
     require_countable(grid, f"{keys.path}/{at}".rstrip("/"))
     absent = np.ones(grid, np.bool_)
     folder = "/".join(part for part in (at, metadata.prefix.rstrip("/") if "/" in metadata.prefix else "") if part)
-    if metadata.separator == "/":
+    if metadata.separator == "/" and not metadata.one_row:
         _note_below(absent, keys, folder)
         return absent
     start = "" if "/" in metadata.prefix else metadata.prefix
+    # The first axis of a list that is shown as one row is in no name.
+    axes = slice(int(metadata.one_row), None)
     for name, is_file in keys.children(folder):
         place = name.removeprefix(start).split(metadata.separator)
-        known = is_file and name.startswith(start) and len(place) == absent.ndim
-        if known and all(_within(at, side) for at, side in zip(place, grid, strict=True)):
-            absent[tuple(map(int, place))] = False
+        known = is_file and name.startswith(start) and len(place) == len(grid[axes])
+        if known and all(_within(at, side) for at, side in zip(place, grid[axes], strict=True)):
+            absent[(*(0,) * metadata.one_row, *map(int, place))] = False
     return absent
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -53,6 +53,8 @@ class ZarrMetadata:
         What is odd about it.
     forbidden : str
         A codec in it that makes objects and is never decoded.
+    one_row : bool
+        Whether the array has one axis and is shown with a first one of length one.
     """
 
     zarr_format: int
@@ -73,10 +75,21 @@ class ZarrMetadata:
     layout: ChunkLayout | None = None
     note: str = ""
     forbidden: str = ""
+    one_row: bool = False
+
+    def as_row(self) -> ZarrMetadata:
+        """Show an array of one axis as a matrix of one row."""
+        return replace(
+            self,
+            shape=(1, *self.shape),
+            chunks=(1, *self.chunks),
+            inner=None if self.inner is None else (1, *self.inner),
+            one_row=True,
+        )
 
     def key(self, coordinates: tuple[int, ...]) -> str:
         """Key of a chunk, below the array."""
-        return self.prefix + self.separator.join(map(str, coordinates))
+        return self.prefix + self.separator.join(map(str, coordinates[int(self.one_row) :]))
 
     @property
     def encoding(self) -> str:

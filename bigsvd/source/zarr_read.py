@@ -35,6 +35,9 @@ def python_reader(array: Any) -> Reader:
 
     def read(box: Box, out: np.ndarray) -> None:
         selection = tuple(slice(*span) for span in box)
+        if len(array.shape) == 1:
+            # A list, shown as a matrix of one row.
+            selection, out = selection[1:], out[0]
         if pair:
             values = array[selection]
             out.real, out.imag = values[pair[0]], values[pair[1]]

@@ -23,7 +23,7 @@ class ShardIndex:
     Attributes
     ----------
     sides : tuple of int
-        Inner chunks along each axis of a shard.
+        Inner chunks along each axis of a shard; of a list of numbers, (1, how many).
     checked : bool
         Whether a CRC-32C stands behind it.
     at_end : bool
@@ -39,6 +39,8 @@ class ShardIndex:
         """Tell it from the configuration of the codec; None where it is written in a way not known here."""
         steps = [(step["name"], (step.get("configuration") or {})) for step in shard.get("index_codecs", ())]
         names = [name for name, _ in steps]
+        if len(outer) == len(inner) == 1:
+            outer, inner = (1, *outer), (1, *inner)
         whole = len(outer) == len(inner) and all(
             part > 0 and side % part == 0 for side, part in zip(outer, inner, strict=True)
         )

@@ -233,6 +233,14 @@ def read_document(keys: KeyStore, key: str) -> dict[str, Any] | None:
     return document
 
 
+def group_attributes(keys: KeyStore, path: str) -> dict[str, Any]:
+    """Attributes of a group in either format; empty where there are none."""
+    at = f"{path}/" if path else ""
+    third = read_document(keys, f"{at}zarr.json")
+    attributes = third.get("attributes") if third is not None else read_document(keys, f"{at}.zattrs")
+    return attributes if isinstance(attributes, dict) else {}
+
+
 def _unreadable(keys: KeyStore, key: str, why: str) -> DamagedSourceError:
     return DamagedSourceError(
         f"the Zarr metadata at {keys.path}/{key} cannot be read",

@@ -6,26 +6,35 @@ import math
 import os
 from dataclasses import replace
 from itertools import islice
-from typing import Any
 
 from bigsvd.errors import OutsideError, SourceError
-from bigsvd.source.candidate import SPARSE, SPARSE_TYPES, Candidate, why_unusable
+from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type
-from bigsvd.source.hints import NO_HINT, Hint, annotated_hint, hint_from_names, sample_axis_from_names
+from bigsvd.source.packing import Packing, find_packing
 from bigsvd.source.rectangle import grid_shape
 from bigsvd.source.zarr_complete import AbsentChunks, absent_keys, count_absent_chunks
+from bigsvd.source.zarr_layout import levels_of, zarr_axes
 from bigsvd.source.zarr_metadata import ZarrMetadata, read_metadata
-from bigsvd.source.zarr_store import KeyStore, read_document
+from bigsvd.source.zarr_names import TEXT_CODEC
+from bigsvd.source.zarr_store import KeyStore, group_attributes
 from bigsvd.units import show_count
 
 MOST_NODES = 20_000
 DEEPEST = 32
 
 
-def walk_zarr(keys: KeyStore, start: str = "", most_nodes: int = MOST_NODES) -> list[Candidate]:
-    """List all arrays below a node; what another program left beside them (``._zarr.json``) is not looked at."""
+def walk_zarr(
+    keys: KeyStore, start: str = "", most_nodes: int = MOST_NODES, sparse_format: str | None = None
+) -> list[Candidate]:
+    """List all arrays below a node; what another program left beside them (``._zarr.json``) is not looked at.
+
+    `sparse_format` is as in `Access`.
+    """
+    # It reads short lists by a source, which describes itself by this file.
+    from bigsvd.source.sparse_zarr import sparse_members
+
     found: list[Candidate] = []
-    root = group_attributes(keys, "")
+    levels: dict[str, int] = {}
     waiting, seen = [start], 0
     while waiting:
         path = waiting.pop(0)
@@ -37,17 +46,19 @@ def walk_zarr(keys: KeyStore, start: str = "", most_nodes: int = MOST_NODES) -> 
         try:
             array = read_metadata(keys, path)
             attributes = group_attributes(keys, path) if array is None else {}
+            for level, name in enumerate(levels_of(attributes).paths):
+                levels.setdefault(f"{path}/{name}".strip("/"), level)
             if array is not None:
                 stored = stored_bytes(keys, path)
-                said = describe_zarr(array, path, root, stored)
+                said = replace(describe_zarr(array, path, keys, stored), level=levels.get(path))
                 # Where files are too many to be added up, they are too many to be looked for.
                 counted = said.usable and stored is not None
-                found.append(replace(said, absent_chunks=_absent(keys, path, array) if counted else None))
-            elif attributes.get("encoding-type") in SPARSE_TYPES:
-                found.append(Candidate(path, reason=SPARSE))
+                found.append(replace(said, absent_chunks=count_absent(keys, path, array) if counted else None))
             elif path.count("/") < DEEPEST:
+                members = sparse_members(keys, path, sparse_format, found)
                 below = islice(keys.children(path, links), most_nodes)
                 names = sorted(name for name, is_file in below if not is_file and not name.startswith("."))
+                names = [name for name in names if name not in members]
                 waiting += [f"{path}/{name}" if path else name for name in names]
             else:
                 found.append(Candidate(path, reason=f"groups below {DEEPEST} others are not looked into"))
@@ -67,7 +78,7 @@ def _linked(keys: KeyStore, link: str) -> Candidate:
     return Candidate(os.path.relpath(link, keys.path), reason=reason, outside=(target,))
 
 
-def _absent(keys: KeyStore, path: str, array: ZarrMetadata) -> int | None:
+def count_absent(keys: KeyStore, path: str, array: ZarrMetadata) -> int | None:
     """How many chunks were never written; None where there are too many to be looked for."""
     if math.prod(grid_shape(array.shape, array.chunks)) > 10_000:
         return None
@@ -76,26 +87,17 @@ def _absent(keys: KeyStore, path: str, array: ZarrMetadata) -> int | None:
     return count_absent_chunks(absent, keys, lambda place: at + array.key(place), array)[0]
 
 
-def group_attributes(keys: KeyStore, path: str) -> dict[str, Any]:
-    """Attributes of a group in either format; empty where there are none."""
-    at = f"{path}/" if path else ""
-    third = read_document(keys, f"{at}zarr.json")
-    attributes = third.get("attributes") if third is not None else read_document(keys, f"{at}.zattrs")
-    return attributes if isinstance(attributes, dict) else {}
-
-
-def describe_zarr(array: ZarrMetadata, path: str, root: dict[str, Any], stored: int | None) -> Candidate:
+def describe_zarr(
+    array: ZarrMetadata, path: str, keys: KeyStore, stored: int | None, *, follow: bool = False
+) -> Candidate:
     """Say all that is known of an array without opening it."""
     numeric = array.dtype is not None and decoded_type(array.dtype) is not None
     reason = why_unusable(array.shape, numeric, array.type_words)
-    if array.forbidden:
+    if array.forbidden == TEXT_CODEC and array.dtype is not None and array.dtype.kind == "O":
+        reason = "not numbers but text"
+    elif array.forbidden:
         reason = f"its codec {array.forbidden} makes objects, which can run what the writer liked: it is never decoded"
-    hint, hint_reason = zarr_hint(array, path, root) if not reason else NO_HINT
-    names = zarr_axis_names(array) if not reason else ()
-    sample_axes: tuple[int, ...] = ()
-    if len(array.shape) > 2:
-        sample_axes, hint_reason = sample_axis_from_names(names, _marker(array))
-    return Candidate(
+    said = Candidate(
         path=path,
         shape=array.shape,
         dtype=array.type_words,
@@ -105,30 +107,28 @@ def describe_zarr(array: ZarrMetadata, path: str, root: dict[str, Any], stored: 
         decoded_bytes=math.prod(array.shape) * array.dtype.itemsize if array.dtype is not None else None,
         usable=not reason,
         reason=reason,
-        samples_hint=hint,
-        hint_reason=hint_reason,
-        axis_names=names,
-        sample_axes=sample_axes,
+        packing=None if reason else zarr_packing(array),
     )
+    # Lists and texts are no matrices in any layout.
+    layout = numeric and len(array.shape) > 1 and 0 not in array.shape
+    return said.with_axes(zarr_axes(keys, path, array.shape, follow=follow)) if layout else said
 
 
-def zarr_hint(array: ZarrMetadata, path: str, root: dict[str, Any]) -> Hint:
-    """Look for markers of the AnnData layout, then at the names of the dimensions."""
-    hint = annotated_hint(path, root.get("encoding-type"))
-    if hint[0]:
-        return hint
-    return hint_from_names(zarr_axis_names(array), _marker(array))
+def zarr_packing(array: ZarrMetadata) -> Packing | None:
+    """What the attributes of an array say of decoding its entries.
 
-
-def _marker(array: ZarrMetadata) -> str:
-    """Where the names of the dimensions stand."""
-    return "dimension_names" if array.zarr_format == 3 else "_ARRAY_DIMENSIONS"
-
-
-def zarr_axis_names(array: ZarrMetadata) -> tuple[str, ...]:
-    """Names of the axes; empty where none has one, or their number is another."""
-    names = tuple(name if isinstance(name, str) else "" for name in array.dimension_names)
-    return names if any(names) and len(names) == len(array.shape) else ()
+    xarray keeps ``_FillValue`` of format 2 as the fill value of the array. That of others is 0 for want of another, so
+    it counts only where xarray named the dimensions and it is not 0, or where entries are scaled.
+    """
+    stored = decoded_type(array.dtype) if array.dtype is not None else None
+    attributes = array.attributes
+    if stored is None:
+        return None
+    ours = array.zarr_format == 2 and "_FillValue" not in attributes and "_ARRAY_DIMENSIONS" in attributes
+    scaled = "scale_factor" in attributes or "add_offset" in attributes
+    if ours and array.fill is not None and (array.fill != 0 or scaled):
+        attributes = {**attributes, "_FillValue": array.fill}
+    return find_packing(attributes, stored)
 
 
 def stored_bytes(keys: KeyStore, path: str, most_files: int = 10_000) -> int | None:

@@ -2,10 +2,10 @@
 
 from bigsvd.sweep.events import Control, Listener, OutOfTimeError, Progress, StoppedError
 from bigsvd.sweep.folding import fold, mirror
-from bigsvd.sweep.panels import PanelReader
-from bigsvd.sweep.partial import Partial
+from bigsvd.sweep.panels import Panel, PanelReader
+from bigsvd.sweep.partial import Partial, worst
 from bigsvd.sweep.scratch import Scratch
-from bigsvd.sweep.segment import SweepTask
+from bigsvd.sweep.task import SweepTask
 from bigsvd.sweep.waves import Engine, WaveKeeper, one_blas_thread
 
 __all__ = [
@@ -13,6 +13,7 @@ __all__ = [
     "Engine",
     "Listener",
     "OutOfTimeError",
+    "Panel",
     "PanelReader",
     "Partial",
     "Progress",
@@ -23,4 +24,5 @@ __all__ = [
     "fold",
     "mirror",
     "one_blas_thread",
+    "worst",
 ]

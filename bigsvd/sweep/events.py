@@ -15,8 +15,8 @@ class Progress:
     Attributes
     ----------
     stage : str
-        ``probe``, ``pilot``, ``sweep``, ``slices``, ``write`` or ``verify``; ``journal`` and ``certificate`` bring a
-        note only: where a run goes on, and what a sweep has certified.
+        ``missing``, ``probe``, ``pilot``, ``sweep``, ``slices``, ``write`` or ``verify``; ``journal`` and
+        ``certificate`` bring a note only: where a run goes on, and what a sweep has certified.
     sweep : int
         Number of the sweep, from 1; 0 outside sweeps.
     bytes_done, bytes_total : int

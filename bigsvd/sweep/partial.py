@@ -8,6 +8,9 @@ import numpy as np
 
 from bigsvd.sweep.folding import fold
 
+# Lines and columns with most bad entries that are named.
+MOST_NAMED = 3
+
 
 @dataclass(eq=False)
 class Partial:
@@ -19,6 +22,8 @@ class Partial:
         Lines summed over.
     energy : float
         ‖A_p‖²_F of the shifted panels.
+    cancelled : float
+        ‖1μᵀD‖²_F of what implicit centring subtracts from products of sparse panels; they round as if it were there.
     line_sum : ndarray, shape (across,), or None
         Sum of the lines: what is left of the mean.
     square_sum : ndarray, shape (across,), or None
@@ -38,11 +43,20 @@ class Partial:
     rounding : ndarray, shape (3, width), or None
         Units recomputed in double, Σ‖ΔY_u‖² and Σ‖ΔZ_u‖² per column.
     unit_energies : ndarray, shape (4,), or None
-        Beside `rounding`: all units, Σ‖A_u‖⁴ over them, Σ‖A_u‖² and Σ‖A_u‖⁴ over the units recomputed.
+        Beside `rounding`: all units, Σe² over them, Σe and Σe² over the units recomputed, with e of a unit its energy
+        and four times what cancels in it.
     bad : int
         NaN and infinities met.
+    infinite : int
+        The infinities among them.
     first_bad : (int, int) or None
         Stored row and column of the first.
+    bad_lines : int
+        Lines that hold any.
+    worst_lines : ndarray, shape (at most 3, 2), or None
+        The lines that hold most, and how many.
+    bad_across : ndarray, shape (across,), or None
+        How many each column holds.
     overflow : bool
         Finite entries whose squares overflow the working precision.
     beyond : bool
@@ -51,6 +65,7 @@ class Partial:
 
     lines: int = 0
     energy: float = 0.0
+    cancelled: float = 0.0
     line_sum: np.ndarray | None = None
     square_sum: np.ndarray | None = None
     lowest: np.ndarray | None = None
@@ -65,7 +80,11 @@ class Partial:
     rounding: np.ndarray | None = None
     unit_energies: np.ndarray | None = None
     bad: int = 0
+    infinite: int = 0
     first_bad: tuple[int, int] | None = None
+    bad_lines: int = 0
+    worst_lines: np.ndarray | None = None
+    bad_across: np.ndarray | None = None
     overflow: bool = False
     beyond: bool = False
 
@@ -79,13 +98,40 @@ class Partial:
             return
         units, squares, sampled, sampled_squares = self.unit_energies
         count = float(self.rounding[0].max(initial=0.0))
-        for row, every, recomputed in ((1, self.energy, sampled), (2, squares, sampled_squares)):
+        whole = self.energy + 4 * self.cancelled
+        for row, every, recomputed in ((1, whole, sampled), (2, squares, sampled_squares)):
             typical = every / units * count if count else 0.0
             if recomputed > 0:
                 self.rounding[row] *= max(1.0, typical / recomputed)
             else:
                 # Units of zeros show no rounding: one roundoff of what is typical stands for it.
                 self.rounding[row] = 2.0**-48 * typical
+
+    def count_bad(self, places: np.ndarray, across: int) -> None:
+        """Count entries that are no finite numbers.
+
+        Parameters
+        ----------
+        places : ndarray of int, shape (entries, 2)
+            Line of the sweep and place across it of each.
+        across : int
+            Entries of a line.
+        """
+        lines, per_line = np.unique(places[:, 0], return_counts=True)
+        counts = np.bincount(places[:, 1], minlength=across)
+        self.bad += len(places)
+        self.bad_lines += len(lines)
+        self.worst_lines = worst(self.worst_lines, np.stack([lines, per_line], axis=1))
+        self.bad_across = counts if self.bad_across is None else self.bad_across + counts
+
+
+def worst(first: np.ndarray | None, second: np.ndarray | None) -> np.ndarray | None:
+    """Of two lists of lines and counts the lines with most, of equal ones the earlier."""
+    given = [one for one in (first, second) if one is not None]
+    if not given:
+        return None
+    both = np.concatenate(given)
+    return both[np.lexsort((both[:, 0], -both[:, 1]))[:MOST_NAMED]]
 
 
 def combine(first: Partial, second: Partial) -> Partial:
@@ -95,7 +141,15 @@ def combine(first: Partial, second: Partial) -> Partial:
     """
     first.lines += second.lines
     first.energy += second.energy
+    first.cancelled += second.cancelled
     first.bad += second.bad
+    first.infinite += second.infinite
+    first.bad_lines += second.bad_lines
+    first.worst_lines = worst(first.worst_lines, second.worst_lines)
+    if first.bad_across is None or second.bad_across is None:
+        first.bad_across = second.bad_across if first.bad_across is None else first.bad_across
+    else:
+        first.bad_across += second.bad_across
     first.overflow |= second.overflow
     first.beyond |= second.beyond
     if second.first_bad is not None:

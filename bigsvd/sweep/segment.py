@@ -1,10 +1,9 @@
-"""The only loop that reads A: a run of panels, converted, multiplied, summed and folded by one worker."""
+"""What is done to the panels of a segment by one worker: converted, multiplied, summed and folded, zeros included."""
 
 from __future__ import annotations
 
-import threading
 from collections.abc import Iterator
-from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 
@@ -13,105 +12,26 @@ from bigsvd.prepare import LineStatistics, Preparation, line_statistics, prepare
 from bigsvd.sweep.events import Stopwatch
 from bigsvd.sweep.folding import add_gram
 from bigsvd.sweep.gathering import Gatherer
-from bigsvd.sweep.panels import PanelReader
 from bigsvd.sweep.partial import Partial
-from bigsvd.sweep.scratch import Scratch
+from bigsvd.sweep.task import SweepTask
 
 # Single-precision sums run over at most this many terms before they are added up in double.
 SINGLE_TERMS = 512
 EXACT_INTEGERS = 2**53
 
 
-@dataclass(frozen=True, eq=False)
-class SweepTask:
-    """What every segment of one sweep does with its panels.
-
-    Attributes
-    ----------
-    reader : PanelReader
-    preparation : Preparation
-    dtype : numpy.dtype
-        Working precision of conversion and products.
-    kind : str
-        ``basis`` multiplies by `block`; ``gram`` builds AᴴA; ``fold`` folds the panels themselves.
-    block : ndarray, shape (across, width), or None
-        Columns to multiply, in working precision.
-    scratch : Scratch or None
-        Where Y goes and earlier columns come from; None where only the products are wanted.
-    target : int
-        Number of the scratch block that is written.
-    ones : bool
-        Whether a column of ones is folded first, so that dropping it centres the triangle exactly.
-    add_energy : bool
-        Whether the energy is summed, which also tells NaN, infinity and overflow. Of a file whose words are those of
-        an earlier sweep all this is known.
-    add_lines : bool
-        Whether the lines are summed, for the mean.
-    learn : bool
-        Whether squares and extremes per column are taken.
-    line_features : bool
-        Whether line statistics are taken (lines are features).
-    sampled : frozenset of int
-        Panels whose first unit is recomputed in double, to measure rounding.
-    """
-
-    reader: PanelReader
-    preparation: Preparation
-    dtype: np.dtype
-    kind: str
-    block: np.ndarray | None = None
-    scratch: Scratch | None = None
-    target: int = 0
-    ones: bool = False
-    add_energy: bool = True
-    add_lines: bool = False
-    learn: bool = False
-    line_features: bool = False
-    sampled: frozenset[int] = frozenset()
-    only_count: threading.Event = field(default_factory=threading.Event)
-
-    @property
-    def wide(self) -> np.dtype:
-        """Type of all sums."""
-        return np.dtype(np.complex128 if self.dtype.kind == "c" else np.float64)
-
-
-def run_segment(task: SweepTask, first: int, stop: int) -> Partial:
-    """Sweep panels first … stop.
+class Segment:
+    """The sums and buffers of one segment, whose panels come with their zeros.
 
     Parameters
     ----------
     task : SweepTask
-    first, stop : int
-        Half-open range of panels.
-
-    Returns
-    -------
-    Partial
-        Sums over the panels, taken in order.
-
-    Notes
-    -----
-    Cost per panel: one read, 4·lines·across·width flops, 2·lines·columns² flops for the fold.
     """
-    with np.errstate(all="ignore"):
-        segment = _Segment(task)
-        for panel in range(first, stop):
-            segment.take(panel, last=panel + 1 == stop)
-        sums = segment.finish()
-    task.reader.control.spend(segment.watch.seconds)
-    return sums
-
-
-class _Segment:
-    """The sums and buffers of one segment."""
 
     def __init__(self, task: SweepTask) -> None:
         self.task = task
         self.across = task.reader.geometry.across
         self.raw = task.reader.buffer()
-        self.tile = tile_columns(self.across)
-        self.work = np.empty(UNIT_LINES * self.tile, task.dtype)
         # Deviations learnt in a sweep define the matrix for the rest of the run: in double, about a first mean.
         self.learning = task.preparation.about_mean()
         self.sums = Partial(ledger=[])
@@ -126,13 +46,22 @@ class _Segment:
             self.sums.gram = np.zeros((self.across, self.across), task.wide, order="F")
         if task.block is not None:
             self.sums.products = np.zeros((task.block.shape[1], self.across), task.wide)
-            self.product = np.empty(task.block.shape[1] * self.tile, task.dtype)
-            # Double multiplies faster with the long side first (76 against 61 GF a core), single does not (137, 144).
-            self.turned = np.ascontiguousarray(task.block.T) if task.dtype == task.wide else None
             if task.sampled:
                 self.sums.rounding = np.zeros((3, task.block.shape[1]))
                 self.sums.unit_energies = np.zeros(4) if task.add_energy else None
         self.gatherer = self._make_gatherer()
+        self._make_buffers()
+
+    def _make_buffers(self) -> None:
+        """Memory that every unit uses again."""
+        task = self.task
+        self.unit_lines = UNIT_LINES
+        self.tile = tile_columns(self.across)
+        self.work = np.empty(UNIT_LINES * self.tile, task.dtype)
+        if task.block is not None:
+            self.product = np.empty(task.block.shape[1] * self.tile, task.dtype)
+            # Double multiplies faster with the long side first (76 against 61 GF a core), single does not (137, 144).
+            self.turned = np.ascontiguousarray(task.block.T) if task.dtype == task.wide else None
 
     def _make_gatherer(self) -> Gatherer | None:
         """What folds the lines, or their products with earlier ones; None where nothing is folded."""
@@ -148,7 +77,7 @@ class _Segment:
         )  # fmt: skip
 
     def take(self, panel: int, *, last: bool) -> None:
-        """Read one panel and add it to the sums."""
+        """Read one panel and add it to the sums; `last` where no other follows."""
         task, reader = self.task, self.task.reader
         self.watch.start("read")
         raw = reader.fetch(panel, self.raw)
@@ -156,22 +85,35 @@ class _Segment:
             reader.announce(panel + 1)
         self.watch.start("convert")
         assert self.sums.ledger is not None
-        self.sums.ledger.append(_word_sum(raw))
-        lines = raw if reader.geometry.axis == 0 else raw.T
+        self.sums.ledger.append(sum(map(_word_sum, self._stored(raw))) % 2**64)
+        lines = self._lines(raw)
         start = reader.geometry.edges[panel]
         if task.only_count.is_set():
             self._count_bad(lines, start)
             return
         if task.add_energy and raw.dtype.kind in "iu" and raw.dtype.itemsize == 8:
-            self.sums.beyond |= bool(raw.max(initial=0) > EXACT_INTEGERS or raw.min(initial=0) < -EXACT_INTEGERS)
+            values = self._stored(raw)[0]
+            self.sums.beyond |= bool(values.max(initial=0) > EXACT_INTEGERS or values.min(initial=0) < -EXACT_INTEGERS)
         if task.learn:
-            self._extremes(lines)
-        for offset in range(0, len(lines), UNIT_LINES):
-            unit = lines[offset : offset + UNIT_LINES]
+            self._keep_extremes(*self._extremes(lines))
+        for offset in range(0, lines.shape[0], self.unit_lines):
+            unit = self._some(lines, offset, offset + self.unit_lines)
             self._take_unit(unit, start + offset, measure=offset == 0 and panel in task.sampled)
         self.watch.stop()
 
-    def _take_unit(self, unit: np.ndarray, start: int, *, measure: bool) -> None:
+    def _stored(self, panel: Any) -> tuple[np.ndarray, ...]:
+        """Everything that is stored of a panel: its values, and what places them."""
+        return (panel,)
+
+    def _lines(self, panel: Any) -> Any:
+        """A panel, lines first."""
+        return panel if self.task.reader.geometry.axis == 0 else panel.T
+
+    def _some(self, lines: Any, first: int, stop: int) -> Any:
+        """Lines first … stop of a panel, not copied."""
+        return lines[first:stop]
+
+    def _take_unit(self, unit: Any, start: int, *, measure: bool) -> None:
         """Convert a few lines, multiply them and add up."""
         task, sums = self.task, self.sums
         self.watch.start("convert")
@@ -191,14 +133,8 @@ class _Segment:
                 part = self._first_product(tile, columns)
                 tall = part if tall is None else np.add(tall, part, out=tall)
                 self.watch.start("convert")
-        # Every entry of the products is at most the energy, so this tells overflow before it happens.
-        if not energy < np.finfo(task.dtype).max:
-            self._not_finite(unit, start)
+        if not self._add_energy(energy, unit, start, measure=measure):
             return
-        sums.energy += energy
-        sums.lines += len(unit)
-        if sums.unit_energies is not None:
-            sums.unit_energies += (1.0, energy**2, energy * measure, energy**2 * measure)
         if task.kind == "fold":
             assert self.gatherer is not None
             self.gatherer.add(start, self._whole(unit, statistics))
@@ -212,18 +148,40 @@ class _Segment:
             self._second_product(unit, statistics, tall, tile if self.across <= self.tile else None)
             if measure:
                 self._measure(unit, statistics, tall)
-            if task.scratch is not None:
-                self.watch.start("scratch")
-                task.scratch.write(task.target, start, tall)
-                assert self.gatherer is not None
-                self.gatherer.add(start, tall)
+            self._keep_tall(tall, start)
 
-    def _statistics(self, unit: np.ndarray) -> LineStatistics | None:
+    def _add_energy(self, energy: float, unit: Any, start: int, *, measure: bool, cancelled: float = 0.0) -> bool:
+        """Add the energy of a unit; False where it is not finite, or overflows the working precision.
+
+        `cancelled` is what implicit centring subtracts from its products, see `Partial`.
+        """
+        # Every entry of the products is at most the energy, so this tells overflow before it happens.
+        if not energy < np.finfo(self.task.dtype).max:
+            self._not_finite(unit, start)
+            return False
+        sums = self.sums
+        sums.energy += energy
+        sums.cancelled += cancelled
+        sums.lines += unit.shape[0]
+        if sums.unit_energies is not None:
+            energy += 4 * cancelled
+            sums.unit_energies += (1.0, energy**2, energy * measure, energy**2 * measure)
+        return True
+
+    def _keep_tall(self, tall: np.ndarray, start: int) -> None:
+        """Write lines of Y, and fold them."""
+        task = self.task
+        if task.scratch is not None:
+            self.watch.start("scratch")
+            task.scratch.write(task.target, start, tall)
+            assert self.gatherer is not None
+            self.gatherer.add(start, tall)
+
+    def _statistics(self, unit: Any) -> LineStatistics | None:
         """Statistics of lines that are whole features."""
         if not self.task.line_features:
             return None
-        task = self.task
-        statistics = line_statistics(unit, scale=task.preparation.scale, rest=task.dtype == task.wide)
+        statistics = self._of_lines(unit)
         sums = self.sums
         assert sums.line_mean is not None
         assert sums.line_inverse_scale is not None
@@ -232,6 +190,11 @@ class _Segment:
         sums.line_inverse_scale.append(statistics.inverse_scale)
         sums.line_constant.append(statistics.constant)
         return statistics
+
+    def _of_lines(self, unit: Any) -> LineStatistics:
+        """Statistics of every line."""
+        task = self.task
+        return line_statistics(unit, scale=task.preparation.scale, rest=task.dtype == task.wide)
 
     def _tiles(
         self,
@@ -324,11 +287,14 @@ class _Segment:
         for (_, tile), (_, wide_tile) in zip(narrow, self._tiles(unit, statistics, task.wide), strict=True):
             self.sums.rounding[2] += _column_squares(single @ tile - exact.conj().T @ wide_tile)
 
-    def _extremes(self, lines: np.ndarray) -> None:
+    def _extremes(self, lines: Any) -> tuple[np.ndarray, np.ndarray]:
         """Smallest and largest stored entries per column."""
         if lines.dtype.kind == "c":
             lines = np.concatenate([lines.real, lines.imag], axis=1)
-        low, high = lines.min(axis=0), lines.max(axis=0)
+        return lines.min(axis=0), lines.max(axis=0)
+
+    def _keep_extremes(self, low: np.ndarray, high: np.ndarray) -> None:
+        """Combine them with those of earlier panels."""
         sums = self.sums
         if sums.lowest is None or sums.highest is None:
             sums.lowest, sums.highest = low, high
@@ -336,29 +302,37 @@ class _Segment:
             np.minimum(sums.lowest, low, out=sums.lowest)
             np.maximum(sums.highest, high, out=sums.highest)
 
-    def _not_finite(self, unit: np.ndarray, start: int) -> None:
+    def _not_finite(self, unit: Any, start: int) -> None:
         """Tell true NaN and infinity from squares that overflow."""
         if self._count_bad(unit, start):
             self.task.only_count.set()
         else:
             self.sums.overflow = True
 
-    def _count_bad(self, unit: np.ndarray, start: int) -> int:
+    def _count_bad(self, unit: Any, start: int) -> int:
         """Count entries that are not finite and keep the first."""
         if unit.dtype.kind not in "fc":
             return 0
-        bad = ~np.isfinite(unit)
-        count = int(bad.sum())
+        places = self._bad_places(unit)
+        count = len(places)
         if count:
-            places = np.argwhere(bad)
             places[:, 0] += start
+            self.sums.count_bad(places, self.across)
+            self.sums.infinite += int(np.count_nonzero(np.isinf(self._values(unit))))
             if self.task.reader.geometry.axis == 1:
                 places = places[:, ::-1]
             order = np.lexsort((places[:, 1], places[:, 0]))[0]
             place = (int(places[order, 0]), int(places[order, 1]))
             self.sums.first_bad = min(self.sums.first_bad or place, place)
-            self.sums.bad += count
         return count
+
+    def _values(self, unit: Any) -> np.ndarray:
+        """What is stored of a unit."""
+        return np.asarray(unit)
+
+    def _bad_places(self, unit: Any) -> np.ndarray:
+        """Line and place across of every entry that is not finite, shape (entries, 2)."""
+        return np.argwhere(~np.isfinite(unit))
 
     def finish(self) -> Partial:
         """Fold what is left and hand over the sums."""

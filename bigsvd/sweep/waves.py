@@ -8,8 +8,9 @@ from contextlib import contextmanager
 from typing import Any, Protocol
 
 from bigsvd.sweep.events import OutOfTimeError, StoppedError
+from bigsvd.sweep.one_segment import run_segment
 from bigsvd.sweep.partial import Partial, combine
-from bigsvd.sweep.segment import SweepTask, run_segment
+from bigsvd.sweep.task import SweepTask
 
 Compute = Callable[[Any], Partial]
 Wave = Sequence[tuple[int, int]]

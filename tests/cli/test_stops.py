@@ -18,6 +18,8 @@ from slow_runs import OPTIONS, kept, start, wait_for, write_slope
 from bigsvd import api
 from bigsvd.journal import read_standing
 
+pytestmark = pytest.mark.alone
+
 
 def digest(out: Path) -> dict[str, bytes]:
     """Every file of a result but the root document, which holds times."""

@@ -20,8 +20,8 @@ def test_every_row_is_tested_or_explained(row: int) -> None:
     assert table()[row] or explanations().get(row), f"row {row}, {WHAT[row]}: no test and no reason"
 
 
-def test_a_row_without_any_test_is_of_what_is_not_read_yet() -> None:
-    assert [row for row, names in table().items() if not names] in ([42], [])
+def test_no_row_is_without_a_test() -> None:
+    assert not [row for row, names in table().items() if not names]
 
 
 def test_every_test_that_is_named_is_there() -> None:

@@ -20,6 +20,8 @@ from bigsvd.errors import IncompleteResultError
 from bigsvd.journal import read_standing
 from bigsvd.sweep import PanelReader, events
 
+pytestmark = pytest.mark.alone
+
 # The same command line in a process of its own, with the short waves of these tests; it dies where it is told to.
 WORKER = """
 import os, signal, sys

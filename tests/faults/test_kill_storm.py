@@ -9,6 +9,8 @@ import pytest
 import soak
 from kill_storm import storm
 
+pytestmark = pytest.mark.alone
+
 
 @pytest.mark.parametrize(("number", "kills"), [(signal.SIGKILL, 4), (signal.SIGTERM, 2)])
 def test_44_and_45_runs_hit_at_random_moments_end_with_the_same_bits(number: int, kills: int, tmp_path: Path) -> None:

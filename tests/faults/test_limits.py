@@ -19,6 +19,8 @@ import bigsvd
 from bigsvd import machine
 from bigsvd.units import parse_bytes
 
+pytestmark = pytest.mark.alone
+
 MIB = 2**20
 linux = pytest.mark.skipif(not Path("/proc/self/status").exists(), reason="no /proc: no record of the kernel to read")
 

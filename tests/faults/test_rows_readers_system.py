@@ -30,7 +30,6 @@ ROWS = {
 }
 EXPLAINED = {
     3: "no network file system can be mounted here: the system's answer is put in its place (EIO, ESTALE, EACCES …)",
-    42: "labels of samples and features are not copied into the result yet, so that none can clash",
     50: "1e5 chunk files are listed without holding their names (a byte a chunk); 5,000 are made here",
 }
 READ = os.preadv

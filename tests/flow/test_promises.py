@@ -21,6 +21,8 @@ import bigsvd
 from bigsvd import machine
 from bigsvd.errors import MemoryCeilingError
 
+pytestmark = pytest.mark.alone
+
 MIB = 2**20
 
 

@@ -293,15 +293,34 @@ def test_whole_spectra_are_always_in_double() -> None:
 
 
 # ------------------------------------------------------------------------------------------------- samples and hints
-def test_labels_that_contradict_the_default_stop_the_plan() -> None:
-    hinted = spec(1000, 200, samples_hint="columns", hint_reason="row names look like features: 'gain_01'")
-    with pytest.raises(OptionError, match="the file says that samples are its columns") as refused:
-        plan_of(hinted)
-    assert refused.value.evidence == ("row names look like features: 'gain_01'",)
-    assert refused.value.remedy == "Give --samples columns, or --samples rows if the labels are wrong."
-    assert plan_of(hinted, samples="columns").samples == 200
-    assert plan_of(hinted, samples="rows").samples == 1000
+def test_a_sure_marker_settles_which_axis_holds_the_samples_and_the_plan_says_so() -> None:
+    hinted = spec(1000, 200, samples_hint="columns", hint_reason="its rows are named 'gene'")
+    plan = plan_of(hinted)
+    assert (plan.samples, plan.features, plan.request.samples) == (200, 1000, "columns")
+    assert "samples: columns (200); features: rows (1,000)" in plan.orientation_words()
+    assert plan.reading_words() == ["samples are its columns by the file: its rows are named 'gene'"]
     assert plan_of(replace(hinted, samples_hint="rows")).samples == 1000
+
+
+def test_the_user_overrules_a_marker_and_the_plan_remarks_it() -> None:
+    hinted = spec(1000, 200, samples_hint="columns", hint_reason="its rows are named 'gene'")
+    plan = plan_of(hinted, samples="rows")
+    assert plan.samples == 1000
+    assert plan.remarks == (
+        "--samples rows was given; the file says that samples are its columns (its rows are named 'gene')",
+    )
+    assert not plan.reading_words()
+    assert not plan_of(hinted, samples="columns").remarks
+
+
+def test_markers_that_contradict_each_other_stop_the_plan_until_it_is_said() -> None:
+    hinted = spec(1000, 200, samples_hint="contradictory", hint_reason="rows: 'time'; columns: 'cell'")
+    with pytest.raises(OptionError, match="contradict each other about which axis holds the samples") as refused:
+        plan_of(hinted)
+    assert refused.value.evidence == ("rows: 'time'; columns: 'cell'",)
+    assert refused.value.remedy == "Say it: --samples rows or --samples columns."
+    assert plan_of(hinted, samples="columns").samples == 200
+    assert not plan_of(hinted, samples="rows").remarks
 
 
 # ----------------------------------------------------------------------------------------------------------- refusals

@@ -55,6 +55,31 @@ def test_a_hint_is_given_with_its_reason() -> None:
     assert any(line.endswith("--samples columns") for line in lines)
 
 
+def test_matrices_of_which_the_same_is_said_are_named_together() -> None:
+    hints = {"samples_hint": "rows", "hint_reason": "rows are nights"}
+    four = [matrix(f"/m{number}", **hints, remarks=("a remark",)) for number in range(4)]
+    lines = survey_lines("n.h5", four, 100)
+    assert "/m0, /m1, /m2, /m3: samples are their rows (rows are nights)" in lines
+    assert "/m0, /m1, /m2, /m3: a remark" in lines
+    lines = survey_lines("n.h5", [*four, matrix("/m4", **hints)], 100)
+    assert "/m0, /m1, /m2 and 2 more matrices: samples are their rows (rows are nights)" in lines
+
+
+def test_contradictory_markers_are_said_with_what_to_add() -> None:
+    lines = survey_lines("n.h5", [matrix("/x", samples_hint="contradictory", hint_reason="rows: a; columns: b")], 200)
+    assert (
+        "/x: markers contradict each other about the samples (rows: a; columns: b); say --samples rows or --samples"
+        " columns"
+    ) in lines
+    assert any(line.endswith("--samples rows") for line in lines if "bigsvd decompose" in line)
+
+
+def test_layouts_are_said_with_their_marker_also_of_what_cannot_be_used() -> None:
+    group = Candidate("/matrix", reason="a sparse group", layout="feature-barcode", marker="barcodes beside data")
+    lines = survey_lines("n.h5", [group], 100)
+    assert "Taken for feature-barcode (barcodes beside data): /matrix" in lines
+
+
 def test_of_many_matrices_no_one_is_guessed() -> None:
     lines = survey_lines("n.h5", [matrix(f"/m{number}") for number in range(9)], 100)
     assert [line for line in lines if "bigsvd decompose" in line] == [

@@ -7,9 +7,13 @@ import re
 import threading
 import time
 
+import pytest
+
 from bigsvd.report import show_progress
 from bigsvd.report.progress import Reporter
 from bigsvd.sweep import Progress
+
+pytestmark = pytest.mark.alone
 
 MIB = 1 << 20
 

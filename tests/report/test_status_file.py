@@ -15,6 +15,8 @@ from bigsvd.report import read_status
 from bigsvd.report.status import EVERY, StatusFile
 from bigsvd.sweep import Progress
 
+pytestmark = pytest.mark.alone
+
 MIB = 1 << 20
 
 

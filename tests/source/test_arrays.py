@@ -199,8 +199,6 @@ def test_a_dataset_of_a_file_open_for_writing_or_closed_is_refused(tmp_path: Pat
 def test_other_objects_are_refused_by_name() -> None:
     with pytest.raises(UnsupportedMatrixError, match=r"MemoryStore cannot be opened again.*\n.*array\[:\]"):
         open_source(zarr.create_array({}, data=matrix("f4")))
-    with pytest.raises(UnsupportedMatrixError, match="sparse matrices are not read yet"):
-        open_source(scipy.sparse.eye_array(3))
     with pytest.raises(UnsupportedMatrixError, match=r"builtins\.list"):
         open_source([[1, 2], [3, 4]])
     with pytest.raises(UnsupportedMatrixError, match="Leave out matrix="):

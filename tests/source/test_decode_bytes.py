@@ -14,6 +14,8 @@ from hdf5_chains import CHAINS, OTHERS, write_chain
 
 from bigsvd.source import open_source
 
+pytestmark = pytest.mark.alone
+
 SHAPE, CHUNK = (2000, 4000), (2000, 2000)
 SMALL, SMALL_CHUNK = (40, 40), (20, 20)
 # The small file has the libraries loaded and their first buffers made before the count begins.

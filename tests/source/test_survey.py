@@ -132,7 +132,7 @@ def labelled(file: h5py.File) -> None:
         (labelled, "columns", "'cell'"),
         (lambda file: scaled(file, ("time", "pixel")), "rows", "'time'"),
         (lambda file: scaled(file, ("gene", "sample")), "columns", "'gene'"),
-        (lambda file: scaled(file, ("time", "cell")), None, ""),
+        (lambda file: scaled(file, ("time", "cell")), "contradictory", "names axis 1 'cell'"),
         (lambda file: scaled(file, ("lat", "lon")), None, ""),
     ],
 )
