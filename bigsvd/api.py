@@ -24,6 +24,7 @@ from bigsvd.drive import (
     check_slices,
     keep_run,
     make_forecast,
+    order_bytes,
     run,
     settle_missing,
     verify_factors,
@@ -55,6 +56,14 @@ def open_matrix(path: Any, matrix: str | None = None, **reading: Any) -> Source:
             Whether chunks that were never written stop the run, or are read as the fill value that the file declares.
         follow_links : bool
             Follow links in the file to other files outside its own folder.
+        sample_axes : str, int or sequence of them
+            Axes of an array of more than two, by number or name, that become the samples; all others become the
+            features. By default the axis that the file names time, frame, sample, cell or the like.
+        region : str, mapping or sequence of slices
+            Part of an array: ``"time=0:5000:2,y=100:200"``, ``"0:5000:2,100:200,:"``, or slices.
+        mask : path or ndarray
+            Features to take: an array of bool, or of 0 and 1, over their axes; ``FILE.npy``, ``FILE:PATH``, or its path
+            in the same file.
         sparse_format : {"csr", "csc"}
             Whether a sparse group that does not say it is compressed by rows or by columns.
         raw : bool
@@ -428,7 +437,8 @@ def _result_bytes(spec: MatrixSpec, rank: int) -> int:
     wide = np.dtype(np.complex128 if spec.dtype.kind == "c" else np.float64)
     # Which axis holds the samples does not change the sum over both sides.
     named = [plan_names(names.count, names.held) for names in (spec.row_names, spec.column_names) if names is not None]
-    return store_cost(spec.shape, rank, wide).memory_bytes + sum(cost.memory_bytes for cost in named)
+    names_bytes = sum(cost.memory_bytes for cost in named)
+    return store_cost(spec.shape, rank, wide).memory_bytes + names_bytes + order_bytes(spec)
 
 
 def _path_of(source: Any) -> Path | None:

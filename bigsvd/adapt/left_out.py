@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from bigsvd.source import MatrixSpec, Source, require_rectangle, take_names, tile_bytes, tiles
+from bigsvd.source import MatrixSpec, Side, Source, require_rectangle, take_names, tile_bytes, tiles
 
 Span = tuple[int, int]
 
@@ -24,6 +24,11 @@ def runs_of(numbers: np.ndarray) -> tuple[Span, ...]:
     firsts = numbers[np.concatenate([[0], breaks + 1])]
     lasts = numbers[np.concatenate([breaks, [len(numbers) - 1]])]
     return tuple((int(first), int(last) + 1) for first, last in zip(firsts, lasts, strict=True))
+
+
+def file_places(side: Side, lines: np.ndarray) -> np.ndarray:
+    """Places in file order, counted among all lines of a side, of some of them."""
+    return np.asarray(side.ranks(0, side.size)[lines])
 
 
 class LeftOutSource:
@@ -46,10 +51,19 @@ class LeftOutSource:
         shape[axis] = len(kept)
         # Where lines are missing, a chunk holds fewer; one at the edge of two panels is decoded for both.
         chunks[axis] = min(chunks[axis], shape[axis])
-        names = [spec.row_names, spec.column_names]
-        names[axis] = take_names(names[axis], kept)
+        names, edges, unfolding = [spec.row_names, spec.column_names], list(spec.edges), spec.unfolding
+        places = kept
+        if unfolding is not None:
+            # Names stand in the order of the file.
+            places = np.sort(file_places(unfolding.side(axis), kept))
+            unfolding = unfolding.only(axis, kept)
+            if chunks[axis] > 1 and unfolding.side(axis).tiles > 1:
+                edges[axis] = tuple(unfolding.side(axis).edges.tolist())
+                chunks[axis] = unfolding.side(axis).unit
+        names[axis] = take_names(names[axis], places)
         self.spec = replace(
             spec, row_names=names[0], column_names=names[1], shape=(shape[0], shape[1]), chunks=(chunks[0], chunks[1]),
+            edges=(edges[0], edges[1]), unfolding=unfolding,
             decode_bytes=spec.decode_bytes + tile_bytes(inner.spec), held_bytes=spec.held_bytes + kept.nbytes,
         )  # fmt: skip
 

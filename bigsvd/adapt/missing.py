@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 
 from bigsvd.adapt.census import Census
-from bigsvd.adapt.left_out import LeftOutSource, runs_of
+from bigsvd.adapt.left_out import LeftOutSource, file_places, runs_of
 from bigsvd.errors import NonFiniteError, OptionError
 from bigsvd.source import MatrixSpec, Missing, Source, check_complete, digest, require_rectangle
 from bigsvd.units import show_count, show_shape
@@ -120,7 +120,10 @@ class MissingSource:
         per_line = (census.rows, census.columns)[axis]
         kept = np.flatnonzero(per_line == 0)
         _refuse_little(spec, axis, kept, counted)
-        counted = replace(counted, left_out=runs_of(np.flatnonzero(per_line)))
+        dropped = np.flatnonzero(per_line)
+        if spec.unfolding is not None:
+            dropped = np.sort(file_places(spec.unfolding.side(axis), dropped))
+        counted = replace(counted, left_out=runs_of(dropped))
         return LeftOutSource(self.inner, _noted(spec, counted, holds=False), axis, kept)
 
 
@@ -204,11 +207,14 @@ def _refuse_infinite(spec: MatrixSpec, census: Census) -> None:
     if census.first_infinite is None:
         return
     row, column = census.first_infinite
+    place = f"row {show_count(row)}, column {show_count(column)}"
+    if spec.unfolding is not None:
+        place = spec.unfolding.place(row, column)
     what = "value is" if census.infinite == 1 else "values are"
     raise NonFiniteError(
         f"{spec.name}: {show_count(census.infinite)} {what} infinite, which does not count as missing",
         evidence=[
-            f"first at row {show_count(row)}, column {show_count(column)} (counted from 0)",
+            f"first at {place} (counted from 0)",
             f"{show_count(census.entries)} others are missing (NaN)",
         ],
         remedy="Replace the infinite values in the file, by NaN if they are to count as missing.",
@@ -224,7 +230,9 @@ def _refuse_empty(spec: MatrixSpec, census: Census) -> None:
         raise NonFiniteError(
             f"{spec.name}: {show_count(len(empty))} {'features have' if several else 'feature has'} no entry at all, so"
             " there is no mean to fill in",
-            evidence=[f"{axis if several else name} {_first(empty)} (counted from 0)"],
+            evidence=[f"{axis if several else name} {_first(empty)} (counted from 0)"]
+            if spec.unfolding is None
+            else [f"the first at {spec.unfolding.line(census.feature_axis, int(empty[0]))} (counted from 0)"],
             remedy=f"Leave them out of the file, or add --missing drop-{axis}, which leaves out all {axis} that are"
             " not whole.",
         )

@@ -24,14 +24,13 @@ def open_adapted(where: Any, matrix: str | None = None, reading: Reading | None 
     Returns
     -------
     Source
-        In this order, each only where it is asked for or the file calls for it: files joined, packed entries decoded,
-        rows and columns chosen, missing entries filled, entries mapped,
-        axes named.
+        In this order, each only where it is asked for or the file calls for it: axes unfolded, files joined, axes
+        named, packed entries decoded, rows and columns chosen, missing entries filled, entries mapped.
     """
     reading = reading or Reading()
     check_policy(reading.missing)
     matrix = choose_level(where, matrix, reading.level, reading.access)
-    source = open_source(where, matrix, reading.access)
+    source = open_source(where, matrix, reading.access, reading.axes)
     source = name_axes(source, reading.row_names, reading.column_names, reading.access)
     source = decode_packed(source, raw=reading.raw)
     return source if reading.missing == "refuse" else MissingSource(source, reading.missing)

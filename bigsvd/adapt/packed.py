@@ -89,7 +89,7 @@ class PackedSource:
         if out.size == 0:
             return
         if not out.flags.c_contiguous:
-            fill_by_bands(self.read, rows, columns, out, self.spec.chunks[0])
+            fill_by_bands(lambda box, part: self.read(box[0], box[1], part), (rows, columns), out, self.spec.chunks[0])
             return
         flat = out.reshape(-1)
         stored = np.dtype(self.packing.stored)

@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
+from typing import Any
 
-from bigsvd.source import Access
+from bigsvd.source import Access, AxisChoice
 
 
 @dataclass(frozen=True)
@@ -15,6 +16,8 @@ class Reading:
     ----------
     absent, follow_links, sparse_format
         See `Access`.
+    sample_axes, region, mask
+        See `AxisChoice`.
     raw : bool
         Take packed entries as they are stored.
     missing : str
@@ -28,6 +31,9 @@ class Reading:
 
     absent: str = "refuse"
     follow_links: bool = False
+    sample_axes: Any = None
+    region: Any = None
+    mask: Any = None
     sparse_format: str | None = None
     raw: bool = False
     missing: str = "refuse"
@@ -39,6 +45,11 @@ class Reading:
     def access(self) -> Access:
         """What is allowed while a file is opened."""
         return Access(self.absent, self.follow_links, self.sparse_format)
+
+    @property
+    def axes(self) -> AxisChoice:
+        """What becomes of the axes of an array."""
+        return AxisChoice(self.sample_axes, self.region, self.mask)
 
     @classmethod
     def names(cls) -> frozenset[str]:

@@ -79,6 +79,8 @@ def names_options(command: Command) -> Command:
 
 def reading_options(command: Command) -> Command:
     """Add the options that decide what the entries of FILE are; see `bigsvd.adapt.Reading`."""
+    for option in reversed(_AXES):
+        command = option(command)
     command = sparse_option(command)
     raw = "Take packed entries as stored: apply no scale_factor, add_offset, _FillValue or other such attribute."
     command = click.option("--raw", is_flag=True, default=None, help=raw)(command)
@@ -119,6 +121,19 @@ def _number(name: str, kind: type, metavar: str, text: str) -> Callable[[Any], A
     return click.option(name, type=kind, metavar=metavar, help=text)
 
 
+def _text(name: str, metavar: str, text: str) -> Callable[[Any], Any]:
+    """An option that takes text."""
+    return click.option(name, metavar=metavar, help=text)
+
+
+_AXES = (
+    _text(
+        "--sample-axes", "AXES", "Axes of a stack that become the samples, by number or name: 0 or time or time,z.  "
+        "[default: the one the file names so]"
+    ),
+    _text("--region", "PART", "Part of a stack: time=0:5000:2,y=100:200, or by position 0:5000:2,100:200,:"),
+    _text("--mask", "PATH", "Features to take, true or 1: FILE.npy, FILE:PATH, or an array in the same file."),
+)  # fmt: skip
 _DECOMPOSITION: tuple[Callable[[Any], Any], ...] = (
     matrix_option,
     reading_options,

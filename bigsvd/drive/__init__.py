@@ -1,6 +1,7 @@
 """Drives the engine: one decomposition to its certificate, its forecast, exact slices, record and second look."""
 
 from bigsvd.drive.deadline import Deadline
+from bigsvd.drive.file_order import order_bytes
 from bigsvd.drive.keeping import KeptRun, keep_run
 from bigsvd.drive.missing import settle_missing
 from bigsvd.drive.outcome import Outcome
@@ -20,6 +21,7 @@ __all__ = [
     "check_slices",
     "keep_run",
     "make_forecast",
+    "order_bytes",
     "run",
     "settle_missing",
     "verify_factors",

@@ -63,7 +63,8 @@ def _tiled(spec: MatrixSpec, room: int) -> MatrixSpec:
         longer = 0 if spec.chunks[0] > 1 else 1
         chunks = list(spec.chunks)
         chunks[longer] = -(-chunks[longer] // 2)
-        spec = replace(spec, chunks=(chunks[0], chunks[1]))
+        edges = (None, spec.edges[1]) if longer == 0 else (spec.edges[0], None)
+        spec = replace(spec, chunks=(chunks[0], chunks[1]), edges=edges)
     return spec
 
 

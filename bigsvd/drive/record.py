@@ -69,6 +69,7 @@ def run_record(
             "nonzeros": spec.nonzeros,
             "fingerprint": spec.fingerprint,
             "absent": None if spec.absent is None else asdict(spec.absent),
+            "unfolding": None if spec.unfolding is None else spec.unfolding.facts(),
             "decoded": spec.decoded,
             "missing": None if spec.missing is None else asdict(spec.missing),
             "layout": spec.layout,

@@ -61,6 +61,7 @@ class SliceSource:
         self._spec = replace(
             parent.spec, name=f"{parent.spec.name}[{rows[0]}:{rows[1]}, {columns[0]}:{columns[1]}]", shape=shape,
             chunks=(1, 1), stored_bytes=None, samples_hint=None, fingerprint="", row_names=None, column_names=None,
+            edges=(None, None), unfolding=None,
             # What is left of a sparse matrix is read as a dense rectangle.
             nonzeros=None, compressed_axis=None,
         )  # fmt: skip
@@ -260,8 +261,8 @@ def _decoded(spec: MatrixSpec, rectangle: Rectangle) -> int:
     """Bytes decoded to read a rectangle: whole chunks."""
     sides = []
     for side, (start, stop) in enumerate((rectangle.rows, rectangle.columns)):
-        unit = min(spec.chunks[side], spec.shape[side])
-        sides.append(min(-(-stop // unit) * unit, spec.shape[side]) - start // unit * unit)
+        first, last = spec.whole_chunks(side, start, stop)
+        sides.append(last - first)
     return sides[0] * sides[1] * spec.dtype.itemsize
 
 

@@ -216,10 +216,13 @@ class Sweeps:
             return
         row, column = sums.first_bad or (0, 0)
         what = "value is" if sums.bad == 1 else "values are"
+        place = f"row {show_count(row)}, column {show_count(column)}"
+        if self.plan.spec.unfolding is not None:
+            place = self.plan.spec.unfolding.place(row, column)
         raise NonFiniteError(
             f"{self.plan.spec.name}: {show_count(sums.bad)} {what} NaN or infinite, and a decomposition needs numbers",
             evidence=[
-                f"first at row {show_count(row)}, column {show_count(column)} (counted from 0)",
+                f"first at {place} (counted from 0)",
                 *_bad_lines(sums, self.plan),
                 *_decoded_words(self.plan),
             ],
@@ -352,6 +355,10 @@ def _bad_lines(sums: Partial, plan: Plan) -> list[str]:
     said = []
     for axis, (count, lines) in enumerate(found):
         name = ("row", "column")[axis]
+        if plan.spec.unfolding is not None:
+            most = "; ".join(f"{plan.spec.unfolding.line(axis, int(line))} ({show_count(int(n))})" for line, n in lines)
+            said.append(f"in {show_count(count)} of {show_count(plan.spec.shape[axis])} {name}s; most at {most}")
+            continue
         most = ", ".join(f"{show_count(int(line))} ({show_count(int(held))})" for line, held in lines)
         said.append(f"in {show_count(count)} of {show_count(plan.spec.shape[axis])} {name}s; most in {name} {most}")
     if sums.infinite:

@@ -10,12 +10,15 @@ from typing import Any
 import numpy as np
 
 from bigsvd.certify import SliceCheck
+from bigsvd.drive.file_order import FileOrder
 from bigsvd.drive.slices import check_slices
+from bigsvd.errors import OptionError
 from bigsvd.factors import Factors
 from bigsvd.plan import Plan
 from bigsvd.prepare import Preparation
 from bigsvd.source import Source
 from bigsvd.sweep import Control, Engine, PanelReader, Scratch, SweepTask
+from bigsvd.units import show_shape
 
 ROWS = 8192
 # What orthonormality and order may miss by rounding alone.
@@ -91,11 +94,23 @@ def verify_factors(
     checks = _inner_checks(factors)
     slices: tuple[SliceCheck, ...] = ()
     if source is not None and plan is not None:
+        _require_same_shape(factors, plan)
         checks += _outer_checks(factors, source, plan, control, folder)
         fresh = seed if seed is not None else int(factors.attributes["seed"]) + 1
         slices = check_slices(source, plan, str(factors.attributes["precision"]), folder, control, seed=fresh)
     agrees = all(check.ok for check in checks) and all(check.within_bounds for check in slices)
     return Verification(agrees, tuple(checks), slices, control.bytes_read, time.perf_counter() - started)
+
+
+def _require_same_shape(factors: Factors, plan: Plan) -> None:
+    """Refuse another matrix, or another part of one, before it is read."""
+    if (plan.samples, plan.features) != factors.shape:
+        raise OptionError(
+            f"the result is of {show_shape(factors.shape)} samples and features, the matrix given has"
+            f" {show_shape((plan.samples, plan.features))}",
+            evidence=[f"matrix: {plan.spec.name}", f"result of: {factors.attributes['source']['name']}"],
+            remedy="Give the matrix that the result was made from, with the options by which it was read.",
+        )
 
 
 def _inner_checks(factors: Factors) -> list[Check]:
@@ -133,12 +148,14 @@ def _outer_checks(factors: Factors, source: Source, plan: Plan, control: Control
     conjugate = not geometry.lines_are_samples
     short = factors.left_vectors if conjugate else factors.right_vectors
     tall = factors.right_vectors if conjugate else factors.left_vectors
-    block = np.ascontiguousarray(short[:], dtype=wide)
+    along, across = (FileOrder(plan.spec, axis) for axis in (geometry.axis, 1 - geometry.axis))
+    block = np.ascontiguousarray(across.swept(np.asarray(short[:])), dtype=wide)
     if conjugate:
         block = block.conj()
     preparation = Preparation(geometry.lines_are_samples, plan.centred, plan.scaled)
     if geometry.lines_are_samples:
-        preparation = preparation.learnt(factors.column_mean.astype(wide), 1.0 / factors.column_scale, wide)
+        mean, scale = across.swept(factors.column_mean), across.swept(factors.column_scale)
+        preparation = preparation.learnt(mean.astype(wide), 1.0 / scale, wide)
     scratch = Scratch(folder, geometry.lines, wide)
     engine = Engine(plan.workers)
     try:
@@ -155,7 +172,7 @@ def _outer_checks(factors: Factors, source: Source, plan: Plan, control: Control
         off = np.zeros(len(values))
         for start in range(0, geometry.lines, ROWS):
             stop = min(start + ROWS, geometry.lines)
-            vectors = np.asarray(tall[start:stop])
+            vectors = np.asarray(tall[start:stop] if along.same else factors.rows_at(tall, along.ranks(start, stop)))
             difference = scratch.read(start, stop) - (vectors.conj() if conjugate else vectors) * values
             off += np.sum(np.abs(difference) ** 2, axis=0)
     finally:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import replace
 from pathlib import Path
 from typing import Literal
@@ -9,11 +10,12 @@ from typing import Literal
 import numpy as np
 
 from bigsvd.certify import SliceCheck
+from bigsvd.drive.file_order import FileOrder, Sorter
 from bigsvd.drive.keeping import KeptRun
 from bigsvd.drive.outcome import Outcome
 from bigsvd.drive.probe import Forecast
 from bigsvd.drive.record import run_record, spectrum_record
-from bigsvd.factors import Factors, FactorsWriter
+from bigsvd.factors import Factors, FactorsWriter, StoredAxes
 from bigsvd.solve import TallVectors, column_phases
 from bigsvd.sweep import Control
 
@@ -77,18 +79,21 @@ def write_result(
         dtype=outcome.scratch.dtype,
         overwrite=overwrite,
         lock=kept.folder.lock if kept else None,
+        axes=None if plan.spec.unfolding is None else StoredAxes.of(plan.spec.unfolding),
         sample_names=plan.sample_names,
         feature_names=plan.feature_names,
     ) as writer:
         control.begin("write", (plan.samples + plan.features) * rank * outcome.scratch.dtype.itemsize)
         conjugate = tall_side == "right"
+        along, across = (FileOrder(plan.spec, axis) for axis in (plan.geometry.axis, 1 - plan.geometry.axis))
         gram = np.zeros((rank, rank), outcome.scratch.dtype)
-        for start, block in tall.blocks():
-            gram += block.conj().T @ block
+        for start, block in _in_file_order(tall, along, outcome, gram):
             writer.write_vectors(tall_side, start, block.conj() if conjugate else block)
             control.advance(block.nbytes, read=0)
-        writer.write_vectors(basis_side, 0, basis.conj() if conjugate else basis)
-        control.advance(basis.nbytes, read=0)
+        for start, block in across.blocks(basis):
+            writer.write_vectors(basis_side, start, block.conj() if conjugate else block)
+            control.advance(block.nbytes, read=0)
+        features = across if plan.geometry.lines_are_samples else along
         defects = {
             tall_side: float(np.linalg.norm(gram - np.eye(rank))),
             basis_side: float(np.linalg.norm(basis.conj().T @ basis - np.eye(rank))),
@@ -103,8 +108,8 @@ def write_result(
         record["remarks"] += writer.names_remarks
         return writer.finish(
             singular_values=certificate.value,
-            column_mean=outcome.mean,
-            column_scale=1.0 / outcome.inverse_scale,
+            column_mean=features.restore(outcome.mean),
+            column_scale=1.0 / features.restore(outcome.inverse_scale),
             spectrum=spectrum_record(outcome, certificate),
             certificate=certificate,
             attributes=record
@@ -113,3 +118,22 @@ def write_result(
                 "earlier_seconds": kept.journal.earlier_seconds if kept else 0.0,
             },
         )
+
+
+def _in_file_order(
+    tall: TallVectors, order: FileOrder, outcome: Outcome, gram: np.ndarray
+) -> Iterator[tuple[int, np.ndarray]]:
+    """Yield (first line, lines) of the tall vectors in file order, and add UᴴU to `gram`."""
+    if order.same:
+        for start, block in tall.blocks():
+            gram += block.conj().T @ block
+            yield start, block
+        return
+    sorter = Sorter(order, outcome.scratch.folder, len(gram), outcome.scratch.dtype)
+    try:
+        for start, block in tall.blocks():
+            gram += block.conj().T @ block
+            sorter.put(start, block)
+        yield from sorter.blocks()
+    finally:
+        sorter.close()

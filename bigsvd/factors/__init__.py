@@ -5,6 +5,7 @@ from bigsvd.factors.lock import OutputLock
 from bigsvd.factors.opening import open_factors
 from bigsvd.factors.place import Place, check_output, is_whole
 from bigsvd.factors.result import Factors
+from bigsvd.factors.stored_axes import StoredAxes
 from bigsvd.factors.writer import FactorsWriter
 
 __all__ = [
@@ -12,6 +13,7 @@ __all__ = [
     "FactorsWriter",
     "OutputLock",
     "Place",
+    "StoredAxes",
     "check_output",
     "is_whole",
     "open_factors",

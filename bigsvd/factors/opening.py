@@ -17,6 +17,7 @@ from bigsvd.factors.manifest import RESERVED, compare_files, incomplete, read_re
 from bigsvd.factors.place import Place, repair
 from bigsvd.factors.plain import from_plain
 from bigsvd.factors.result import Factors, Spectrum, root_identity
+from bigsvd.factors.stored_axes import StoredAxes, names_in
 
 if TYPE_CHECKING:
     import zarr
@@ -88,6 +89,8 @@ def load_factors(files: StoreFiles, record: dict[str, Any], path: Path | None, i
         assert isinstance(part, zarr.Group)
         return {key: np.asarray(array[...]) for key, array in part.arrays()}
 
+    labels = {name: np.asarray(vectors(name)[...]) for name in names_in(record) if name in group}
+
     def names(name: str) -> zarr.Array[Any] | None:
         return vectors(name) if name in group else None
 
@@ -101,6 +104,7 @@ def load_factors(files: StoreFiles, record: dict[str, Any], path: Path | None, i
         spectrum=Spectrum(**members("spectrum")),
         certificate=Certificate.restore(members("certificate"), from_plain(dict(group["certificate"].attrs))),
         attributes={key: from_plain(entry) for key, entry in record.items() if key not in RESERVED or key == "created"},
+        axes=StoredAxes.restore(record["axes"], labels) if "axes" in record else None,
         path=path,
         sample_names=names("row_name"),
         feature_names=names("column_name"),

@@ -26,6 +26,7 @@ from bigsvd.factors.files import FolderFiles, sync_folder
 from bigsvd.factors.layout import MEMBERS
 from bigsvd.factors.lock import OutputLock
 from bigsvd.factors.manifest import compare_files, read_record
+from bigsvd.factors.stored_axes import names_in
 from bigsvd.units import show_bytes
 
 _SUFFIXES = (".partial", ".replaced", ".lock", ".run", ".log")
@@ -300,7 +301,18 @@ def _check_owner(path: Path) -> None:
 
 def _strangers(folder: Path) -> list[str]:
     """Entries of a store's folder that no format of ours has."""
-    return sorted(name for name in os.listdir(folder) if name not in MEMBERS and not name.startswith(_LITTER))
+    # Labels of the axes of an unfolded array bear the names of these axes.
+    members = MEMBERS.union(names_in(_root_record(folder)))
+    return sorted(name for name in os.listdir(folder) if name not in members and not name.startswith(_LITTER))
+
+
+def _root_record(folder: Path) -> object:
+    """What the root metadata say under our name; None where they cannot be read."""
+    try:
+        with open(folder / "zarr.json", "rb") as file:
+            return json.load(file)["attributes"]["bigsvd"]
+    except (OSError, ValueError, KeyError, TypeError, RecursionError):
+        return None
 
 
 def _claims(folder: Path) -> bool | None:

@@ -6,12 +6,13 @@ import os
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, final
+from typing import TYPE_CHECKING, Any, Literal, final
 
 import numpy as np
 
 from bigsvd.certify import Certificate
 from bigsvd.errors import OptionError, ResultError
+from bigsvd.factors.stored_axes import StoredAxes
 from bigsvd.factors.strongest import strongest_features
 from bigsvd.units import show_count
 
@@ -69,6 +70,8 @@ class Factors:
         Source, preparation, plan, seed, versions and so on, as the run recorded them.
     path : Path or None
         The store; None in memory.
+    axes : StoredAxes or None
+        Of the array that the matrix was unfolded from: names, labels, mask; None where the file holds a matrix.
     sample_names, feature_names : zarr.Array or None
         Names of the rows of either side as text, read from disk when sliced; None where the file has none.
 
@@ -116,6 +119,7 @@ class Factors:
     certificate: Certificate
     attributes: dict[str, Any]
     path: Path | None
+    axes: StoredAxes | None = None
     sample_names: zarr.Array[Any] | None = None
     feature_names: zarr.Array[Any] | None = None
     _root: tuple[int, ...] = field(default=())
@@ -235,6 +239,50 @@ class Factors:
         rebuilt *= self.column_scale
         rebuilt += self.column_mean
         return rebuilt
+
+    def images(
+        self,
+        components: int | Sequence[int] | np.ndarray | None = None,
+        side: Literal["features", "samples"] = "features",
+    ) -> np.ndarray:
+        """Vectors folded back to the axes of the array that the matrix was unfolded from.
+
+        Parameters
+        ----------
+        components : int or sequence of int, optional
+            The first so many components, or the indices of some, from 0. All by default.
+        side : {"features", "samples"}
+            Right vectors over the axes of the features, or left vectors over those of the samples.
+
+        Returns
+        -------
+        ndarray, shape (components, *axes)
+            In double precision, axes in the order of the file (``axes.features`` or ``axes.samples`` name them); NaN
+            where the mask takes no feature.
+
+        Raises
+        ------
+        OptionError
+            If there is no such component or side, or the matrix was not unfolded from an array of more axes.
+
+        Notes
+        -----
+        Cost: one read of the vectors. Held: twice components × entries of the axes, and one chunk of vectors; ask for
+        a few components at a time where that is much.
+        """
+        if self.axes is None:
+            raise OptionError(
+                "there are no images: the file holds a matrix, not an array of more axes",
+                remedy="Use left_vectors or right_vectors.",
+            )
+        if side not in ("features", "samples"):
+            raise OptionError(f"side={side!r} is not a choice", remedy="Choose one of: features, samples.")
+        array = self.right_vectors if side == "features" else self.left_vectors
+        return self.axes.fold(self._take(array, range(array.shape[0]), self._components(components)), side)
+
+    def rows_at(self, array: zarr.Array[Any], rows: np.ndarray) -> np.ndarray:
+        """Rows of left or right vectors by their indices, in any order, all components; double precision."""
+        return self._take(array, rows, np.arange(self.rank))
 
     def __repr__(self) -> str:
         samples, features = (show_count(side) for side in self.shape)

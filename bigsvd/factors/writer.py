@@ -23,6 +23,7 @@ from bigsvd.factors.opening import load_factors
 from bigsvd.factors.place import Place, check_output, claim, install
 from bigsvd.factors.plain import to_plain
 from bigsvd.factors.result import Factors, root_identity
+from bigsvd.factors.stored_axes import StoredAxes
 from bigsvd.factors.vectors import ZSTD_LEVEL, VectorStream, empty_value
 from bigsvd.units import show_bytes
 
@@ -52,6 +53,8 @@ class FactorsWriter:
         Whether a bigsvd result at `out` may be replaced.
     lock : OutputLock, optional
         Held by the caller, who lets it go; otherwise the writer takes one for itself.
+    axes : StoredAxes, optional
+        Of the array that the matrix was unfolded from; rows of vectors are written in the order of that array.
     sample_names, feature_names : NameBlocks, optional
         Names of either side, written on entering. Those that cannot be had are left out, and `names_remarks` says so.
 
@@ -76,6 +79,7 @@ class FactorsWriter:
         dtype: np.dtype,
         overwrite: bool = False,
         lock: OutputLock | None = None,
+        axes: StoredAxes | None = None,
         sample_names: NameBlocks | None = None,
         feature_names: NameBlocks | None = None,
     ) -> None:
@@ -90,7 +94,7 @@ class FactorsWriter:
                 evidence=[f"shape: {shape}"],
                 remedy="Lower --rank.",
             )
-        self._shape, self._rank, self._overwrite = shape, rank, overwrite
+        self._shape, self._rank, self._overwrite, self._axes = shape, rank, overwrite, axes
         named = sum(names.count for names in (sample_names, feature_names) if names is not None)
         self._cost = store_cost(shape, rank, self._dtype, named)
         self._place = None if out is None else Place.at(out)
@@ -203,15 +207,17 @@ class FactorsWriter:
         record = self._record(attributes)
         facts = to_plain(certificate.facts(), "certificate")
         self._check_parts(values, computed, certificate)
-        parts = {name: (array, *VALUES[name]) for name, array in values.items()}
-        parts |= {f"spectrum/{name}": (computed[name], "computed") for name in SPECTRUM}
-        parts |= {f"certificate/{name}": (array, "component") for name, array in certificate.arrays().items()}
+        parts: dict[str, tuple[np.ndarray, tuple[str, ...]]]
+        parts = {name: (array, VALUES[name]) for name, array in values.items()}
+        parts |= {f"spectrum/{name}": (computed[name], ("computed",)) for name in SPECTRUM}
+        parts |= {f"certificate/{name}": (array, ("component",)) for name, array in certificate.arrays().items()}
+        parts |= {} if self._axes is None else self._axes.arrays()
         with self._guarded("last part"):
             for name in GROUPS:
                 self._group.create_group(name, attributes=facts if name == "certificate" else {})
-            for name, (array, dimension) in parts.items():
-                named = "column_name" if dimension == "column" and "column_name" in self._names else None
-                _put(self._group, name, array, dimension, _coordinates(named))
+            for name, (array, dimensions) in parts.items():
+                named = "column_name" if dimensions == ("column",) and "column_name" in self._names else None
+                _put(self._group, name, array, dimensions, _coordinates(named))
             self._files.settle()
             record["manifest"] = self._manifest()
             self._read_back({name: array for name, (array, _) in parts.items()})
@@ -228,7 +234,7 @@ class FactorsWriter:
 
         self._files = files
         store = files.store(read_only=False)
-        unfinished = {"bigsvd": {"format": FORMAT, "complete": False}}
+        unfinished = {"bigsvd": {"format": FORMAT, "complete": False, **self._axes_facts()}}
         self._group = zarr.create_group(store, zarr_format=3, attributes=unfinished)
         for name, names in self._given.items():
             if names is not None:
@@ -245,6 +251,10 @@ class FactorsWriter:
             self._names[name] = written
         self.names_remarks += written.remarks if written is not None else (why,)
 
+    def _axes_facts(self) -> dict[str, Any]:
+        """What the root attribute says of axes; nothing where the matrix was one from the start."""
+        return {} if self._axes is None else {"axes": self._axes.facts()}
+
     def _record(self, attributes: Mapping[str, Any]) -> dict[str, Any]:
         """The root attribute, its manifest still missing."""
         given = to_plain(attributes)
@@ -254,7 +264,15 @@ class FactorsWriter:
             )
         now = datetime.now(UTC).isoformat(timespec="seconds")
         shape = [*self._shape]
-        return {"format": FORMAT, "complete": True, "created": now, "shape": shape, "rank": self._rank, **given}
+        return {
+            "format": FORMAT,
+            "complete": True,
+            "created": now,
+            "shape": shape,
+            "rank": self._rank,
+            **self._axes_facts(),
+            **given,
+        }
 
     def _check_parts(
         self, values: Mapping[str, np.ndarray], spectrum: Mapping[str, np.ndarray], certificate: Certificate
@@ -393,18 +411,20 @@ def _coordinates(name: str | None) -> dict[str, str]:
     return {"coordinates": name} if name is not None else {}
 
 
-def _put(group: zarr.Group, name: str, values: np.ndarray, dimension: str, attributes: Mapping[str, Any]) -> None:
-    """Write one array of one dimension, every chunk of it, so that an absent one is always a loss."""
+def _put(
+    group: zarr.Group, name: str, values: np.ndarray, dimensions: tuple[str, ...], attributes: Mapping[str, Any]
+) -> None:
+    """Write one array, every chunk of it, so that an absent one is always a loss."""
     from zarr.codecs import ZstdCodec
 
     array = group.create_array(
         name,
         shape=values.shape,
         dtype=values.dtype,
-        chunks=(plan_chunk(len(values), values.itemsize),),
+        chunks=(plan_chunk(len(values), values[:1].nbytes), *values.shape[1:]),
         compressors=ZstdCodec(level=ZSTD_LEVEL, checksum=True),
         fill_value=empty_value(values.dtype),
-        dimension_names=(dimension,),
+        dimension_names=dimensions,
         attributes=dict(attributes),
         chunk_key_encoding={"name": "default", "separator": "."},
         config={"write_empty_chunks": True},

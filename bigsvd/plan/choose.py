@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import replace
 
 from bigsvd.plan.candidates import candidates, preference, price, terms_of, waves_of
@@ -16,6 +16,7 @@ from bigsvd.plan.reasons import explain, worker_words
 from bigsvd.plan.request import Request, check_request
 from bigsvd.source import LineNonzeros, MatrixSpec
 
+WORTH_READING_ONCE = 2.0
 ResultBytes = Callable[[int], int]
 
 
@@ -55,7 +56,8 @@ def make_plan(
     Returns
     -------
     Plan
-        The cheapest at nominal rates among all that fit.
+        The cheapest at nominal rates among all that fit; of an unfolded array one that decodes every chunk once a
+        sweep, unless it is twice as dear.
 
     Raises
     ------
@@ -79,7 +81,7 @@ def make_plan(
     found = [price(plan, rates) for plan in drafts(ceiling) if plan.planned_bytes <= ceiling]
     if not found:
         raise too_small(spec, request, ceiling, drafts, rates)
-    best = min(found, key=preference)
+    best = _best(found)
     workers = request.workers or processors or os.cpu_count() or 1
     workers = _fitting_workers(best, min(workers, 2 * best.leaves))
     reasons = (*explain(best, found, request), ("workers", worker_words(workers, request, best)))
@@ -90,6 +92,17 @@ def make_plan(
         waves=waves_of(best, rates),
     )  # fmt: skip
     return replace(made, nominal_phases=predict(made, rates=rates).wall)
+
+
+def _best(found: Sequence[Plan]) -> Plan:
+    """The plan that is made."""
+    best = min(found, key=preference)
+    if best.spec.unfolding is None or best.geometry.amplification <= MOST_AMPLIFICATION:
+        return best
+    # Nominal rates are those of files in the page cache, which stacks outgrow: reading 40 times is no bargain then.
+    once = (plan for plan in found if plan.geometry.amplification <= MOST_AMPLIFICATION)
+    spared = min(once, key=preference, default=best)
+    return spared if spared.nominal_seconds <= WORTH_READING_ONCE * best.nominal_seconds else best
 
 
 def _fitting_workers(plan: Plan, wanted: int) -> int:

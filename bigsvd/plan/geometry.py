@@ -124,35 +124,55 @@ def cut(
     if target > worth:
         target = target // worth * worth
     amplification = 1.0
+    edges = spec.edges[axis]
+    if edges is not None and panel_lines is None and room // line_bytes >= unit:
+        return _uneven(axis, lines, across, axis == samples_axis, _together(edges, target), line_bytes)
     if panel_lines is not None:
         height = panel_lines
-        if height % unit and height < lines:
-            amplification = _amplification(lines, unit, height)
+        if (edges is not None or height % unit) and height < lines:
+            amplification = _amplification(spec, axis, height)
     elif room // line_bytes >= unit:
         height = max(1, target // unit) * unit
     else:
         height = max(1, room // line_bytes)
-        amplification = _amplification(lines, unit, height)
-    edges = (*range(0, lines, height), lines)
+        amplification = _amplification(spec, axis, height)
+    cuts = (*range(0, lines, height), lines)
     tallest = min(height, lines)
     if line_nonzeros is None:
-        return Geometry(axis, lines, across, axis == samples_axis, edges, amplification, tallest * line_bytes)
-    fullest = int(max(line_nonzeros(start, stop) for start, stop in pairwise(edges)))
+        return Geometry(axis, lines, across, axis == samples_axis, cuts, amplification, tallest * line_bytes)
+    fullest = int(max(line_nonzeros(start, stop) for start, stop in pairwise(cuts)))
     units = (
         line_nonzeros(first, min(first + SPARSE_UNIT_LINES, stop))
-        for start, stop in pairwise(edges)
+        for start, stop in pairwise(cuts)
         for first in range(start, stop, SPARSE_UNIT_LINES)
     )
     held = sparse_bytes(spec, tallest, fullest)
-    return Geometry(axis, lines, across, axis == samples_axis, edges, amplification, held, fullest, int(max(units)))
+    return Geometry(axis, lines, across, axis == samples_axis, cuts, amplification, held, fullest, int(max(units)))
 
 
-def _amplification(lines: int, unit: int, height: int) -> float:
-    """Lines decoded over lines needed, when panels of `height` cut chunks of `unit` lines."""
-    decoded = 0
+def _together(edges: tuple[int, ...], target: int) -> tuple[int, ...]:
+    """Edges of panels of whole chunks of unequal size, each of at most `target` lines or of one chunk."""
+    kept = [0]
+    for before, edge in pairwise(edges):
+        if edge - kept[-1] > target and before > kept[-1]:
+            kept.append(before)
+    return (*kept, edges[-1])
+
+
+def _uneven(
+    axis: int, lines: int, across: int, lines_are_samples: bool, edges: tuple[int, ...], line_bytes: int
+) -> Geometry:
+    """A geometry of panels of unequal height."""
+    highest = max(stop - start for start, stop in pairwise(edges))
+    return Geometry(axis, lines, across, lines_are_samples, edges, 1.0, highest * line_bytes)
+
+
+def _amplification(spec: MatrixSpec, axis: int, height: int) -> float:
+    """Lines decoded over lines needed, when panels of `height` lines cut chunks."""
+    decoded, lines = 0, spec.shape[axis]
     for start in range(0, lines, height):
-        stop = min(start + height, lines)
-        decoded += min(math.ceil(stop / unit) * unit, lines) - start // unit * unit
+        first, last = spec.whole_chunks(axis, start, min(start + height, lines))
+        decoded += last - first
     return decoded / lines
 
 

@@ -96,6 +96,9 @@ class Plan:
         columns = self.widths.start + self.widths.test
         if self.route == "krylov":
             columns += (self.nominal_sweeps - 1) * (self.widths.grow + 2 * self.widths.test)
+        if self.spec.unfolding is not None and not self.spec.unfolding.side(self.geometry.axis).in_file_order:
+            # Vectors are put into the order of the file on disk.
+            columns += self.rank
         return self.geometry.lines * columns * entry
 
     @property
@@ -134,11 +137,22 @@ class Plan:
         """Whether features are scaled to unit variance."""
         return self.request.scale == "unit"
 
+    @property
+    def along(self) -> str:
+        """What panels are ranges of: rows or columns, of an unfolded array samples or features."""
+        if self.spec.unfolding is None:
+            return ("rows", "columns")[self.geometry.axis]
+        return "samples" if self.geometry.lines_are_samples else "features"
+
     def orientation_words(self) -> str:
         """Which axis holds what, and what is done to it, in words.
 
         For example ``samples: rows (100,000); features: columns (5,000); centred per column``.
         """
+        if self.spec.unfolding is not None:
+            done = ["centred per feature" if self.centred else "not centred"]
+            done += ["scaled to unit variance (n − 1) per feature"] * self.scaled
+            return ", ".join([self.spec.unfolding.words(), *done])
         samples, features = ("rows", "columns") if self.request.samples == "rows" else ("columns", "rows")
         one = features[:-1]
         done = [f"centred per {one}"] if self.centred else ["not centred"]

@@ -12,7 +12,7 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
     """Why this axis, these panels, this route and width."""
     spec, geometry = best.spec, best.geometry
     other = [plan for plan in found if plan.geometry.axis != geometry.axis]
-    along = ("rows", "columns")[geometry.axis]
+    along = best.along
     if request.axis != "auto":
         why = "as asked"
     elif not other and spec.storage == "sparse":
@@ -20,9 +20,17 @@ def explain(best: Plan, found: list[Plan], request: Request) -> tuple[tuple[str,
     elif not other:
         why = "the other axis does not fit under the ceiling"
     else:
-        rival = min(plan.nominal_seconds for plan in other)
-        why = f"nominally {show_seconds(best.nominal_seconds)} against {show_seconds(rival)} along the other axis"
-    axis = f"panels are ranges of {along}; {why}"
+        rival = min(other, key=lambda plan: plan.nominal_seconds)
+        seconds = show_seconds(best.nominal_seconds), show_seconds(rival.nominal_seconds)
+        why = f"nominally {seconds[0]} against {seconds[1]} along the other axis"
+        if spec.unfolding is not None and geometry.amplification < 1.05 < rival.geometry.amplification:
+            why += ", which would decode chunks several times"
+    swept = f"swept along {along}"
+    if spec.unfolding is None:
+        swept = f"panels are ranges of {along}"
+    else:
+        swept += f" {spec.unfolding.tile_words(geometry.axis)}".rstrip()
+    axis = f"{swept}; {why}"
     lines = geometry.edges[1] - geometry.edges[0]
     panels = (
         f"{show_count(geometry.panels)} panels of {show_count(lines)} {along}, {show_bytes(geometry.panel_bytes)} each"

@@ -170,6 +170,15 @@ def _check_numbers(request: Request) -> None:
 def _settle_samples(request: Request, spec: MatrixSpec) -> tuple[Samples, list[str]]:
     """What the user says, else what the file says, else rows; with a remark where the user overrules the file."""
     asked, hint = request.samples, spec.samples_hint
+    if spec.unfolding is not None:
+        settled: Samples = "rows" if spec.unfolding.samples_are_rows else "columns"
+        if asked not in (None, settled):
+            raise OptionError(
+                f"--samples {asked} was given, and the samples of this array are axes of it",
+                evidence=[spec.unfolding.words()],
+                remedy="Leave out --samples; --sample-axes says which axes become the samples.",
+            )
+        return settled, []
     if asked is not None:
         overruled = hint in ("rows", "columns") and hint != asked
         said = f"--samples {asked} was given; the file says that samples are its {hint} ({spec.hint_reason})"

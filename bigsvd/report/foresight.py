@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Protocol
 
 from bigsvd.plan import Costs, Plan
@@ -89,9 +90,7 @@ def plan_lines(forecast: Foresight, width: int) -> list[str]:
 def announcement(forecast: Foresight, width: int) -> list[str]:
     """Say a plan in short, before a run."""
     plan = forecast.plan
-    panels = (
-        f"{plan.geometry.panels:,} {'panel' if plan.geometry.panels == 1 else 'panels'} of {AXES[plan.geometry.axis]}"
-    )
+    panels = f"{plan.geometry.panels:,} {'panel' if plan.geometry.panels == 1 else 'panels'} of {plan.along}"
     memory = f"{show_bytes(plan.planned_bytes)} planned, ceiling {show_bytes(plan.ceiling)}"
     spec = plan.spec
     matrix = f"{spec.name}: {show_shape(spec.shape)} {spec.dtype}, {_size_words(plan)}"
@@ -109,12 +108,19 @@ def announcement(forecast: Foresight, width: int) -> list[str]:
     return labelled(pairs, width)
 
 
+def _source_facts(spec: MatrixSpec) -> Json:
+    """The matrix; of an unfolded array its axes in words, not every edge of its tiles."""
+    facts: Json = plain(replace(spec, edges=(None, None), unfolding=None))
+    del facts["edges"]
+    return facts | {"unfolding": None if spec.unfolding is None else plain(spec.unfolding.facts())}
+
+
 def plan_facts(forecast: Foresight) -> Json:
     """All of a plan as one JSON object; its keys are documented in docs/json.md."""
     plan = forecast.plan
     geometry = plan.geometry
     facts = {
-        "source": plan.spec,
+        "source": _source_facts(plan.spec),
         "request": plan.request,
         "orientation": plan.orientation_words(),
         "understood": plan.reading_words(),

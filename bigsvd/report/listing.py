@@ -43,7 +43,8 @@ def survey_lines(where: str, found: Sequence[Candidate], width: int) -> list[str
     if usable:
         lines += ["", *_matrix_table(usable, width)]
     lines += [line for words in _layouts(found) for line in ["", *wrap(words, width)]]
-    notes = [*_axes_notes(usable), *(words for one in usable for words in _notes(one))]
+    unfoldings = [_unfolding(one) for one in usable if one.many_axes]
+    notes = [*_axes_notes(usable), *unfoldings, *(words for one in usable for words in _notes(one))]
     lines += [line for words in notes for line in ["", *wrap(words, width)]]
     if usable:
         lines += ["", "To decompose, type:", *_to_type(where, usable)]
@@ -81,16 +82,27 @@ def command_line(where: str, candidate: Candidate, *, named: bool) -> str:
     words = ["bigsvd", "decompose", where, "--out", re.sub(r"[^\w.-]+", "_", stem).strip("_") + "_factors.zarr"]
     if named:
         words += ["--matrix", candidate.path]
-    if candidate.samples_hint == "columns":
+    if candidate.many_axes:
+        words += ["--sample-axes", candidate.option]
+    elif candidate.samples_hint == "columns":
         words += ["--samples", "columns"]
-    if candidate.packing is not None and candidate.packing.problem:
-        words.append("--raw")
     elif candidate.samples_hint == CONTRADICTORY:
         # Somebody has to say it; rows are what is meant most often.
         words += ["--samples", "rows"]
+    if candidate.packing is not None and candidate.packing.problem:
+        words.append("--raw")
     if candidate.outside:
         words.append("--follow-links")
     return " ".join(map(shell_word, words))
+
+
+def _unfolding(candidate: Candidate) -> str:
+    """Which axes of a stack become samples."""
+    names = candidate.axis_names or ("",) * len(candidate.shape)
+    axes = ", ".join(f"{number} {name}".strip() for number, name in enumerate(names))
+    if candidate.sample_axes:
+        return f"{_name(candidate)}: axes {axes}; samples are axis {candidate.option} ({candidate.hint_reason})"
+    return f"{_name(candidate)}: axes {axes}; usable with --sample-axes, which names those that become the samples"
 
 
 def _layouts(found: Sequence[Candidate]) -> list[str]:

@@ -2,6 +2,7 @@
 
 from bigsvd.source.access import Access
 from bigsvd.source.axes import CONTRADICTORY
+from bigsvd.source.axis_choice import AxisChoice
 from bigsvd.source.candidate import Candidate
 from bigsvd.source.complete import check_complete
 from bigsvd.source.names import Names, repeated, showable
@@ -12,10 +13,12 @@ from bigsvd.source.packing import Packing
 from bigsvd.source.rectangle import fill_by_bands, require_rectangle, tile_bytes, tiles
 from bigsvd.source.spec import LineNonzeros, LineSource, MatrixSpec, Missing, Source, line_counter
 from bigsvd.source.stamp import FileStamp, digest
+from bigsvd.source.unfolding import Side, Unfolding
 
 __all__ = [
     "CONTRADICTORY",
     "Access",
+    "AxisChoice",
     "Candidate",
     "FileStamp",
     "LineNonzeros",
@@ -24,7 +27,9 @@ __all__ = [
     "Missing",
     "Names",
     "Packing",
+    "Side",
     "Source",
+    "Unfolding",
     "check_complete",
     "digest",
     "fill_by_bands",

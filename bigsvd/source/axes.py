@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 from bigsvd.source.hints import Hint, word_of
@@ -40,6 +40,12 @@ class Axes:
         Names of either axis, not read yet.
     remarks : tuple of str
         Weaker signs, and why names were not taken.
+    axis_names : tuple of str
+        What the axes are called, empty texts for those without a name; empty where none has one.
+    sample_axes : tuple of int
+        Of an array of more than two axes: the one that markers say holds the samples; empty where they name several.
+    coordinates : tuple of (Names or None)
+        Of an array of more than two axes: labels along each; empty where no axis has any.
     """
 
     layout: str = ""
@@ -49,6 +55,9 @@ class Axes:
     row_names: Names | None = None
     column_names: Names | None = None
     remarks: tuple[str, ...] = ()
+    axis_names: tuple[str, ...] = ()
+    sample_axes: tuple[int, ...] = ()
+    coordinates: tuple[Names | None, ...] = ()
 
     @classmethod
     def of(
@@ -64,7 +73,7 @@ class Axes:
         """Settle what markers say; names whose number is not that of their axis are left out, and that is said."""
         marker = marker if len(marker) <= LONGEST_MARKER else f"{marker[:LONGEST_MARKER]}…"
         if len(shape) != 2:
-            return cls(layout, marker)
+            return cls(layout, marker)._of_many(votes, names, shape)
         said, kept = list(remarks), []
         for which, found, side in zip(("rows", "columns"), names, shape, strict=True):
             if found is not None and found.count != side:
@@ -73,6 +82,22 @@ class Axes:
             kept.append(found if found is not None and found.count == side else None)
         hint, reason = settle(votes)
         return cls(layout, marker, hint, reason, kept[0], kept[1], tuple(said))
+
+    def _of_many(self, votes: Sequence[Vote], names: Sequence[Names | None], shape: tuple[int, ...]) -> Axes:
+        """What markers say of an array of more than two axes."""
+        found = {axis for axis, _ in votes}
+        samples = tuple(found) if len(found) == 1 else ()
+        reason = "; ".join(dict.fromkeys(why for _, why in votes)) if samples else ""
+        labels: tuple[Names | None, ...] = ()
+        if len(names) == len(shape):
+            fitting = zip(names, shape, strict=True)
+            labels = tuple(one if one is not None and one.count == side else None for one, side in fitting)
+        labels = labels if any(label is not None for label in labels) else ()
+        return replace(self, hint_reason=reason, sample_axes=samples, coordinates=labels)
+
+    def called(self, names: Sequence[str | None]) -> Axes:
+        """The same with names of the axes."""
+        return replace(self, axis_names=tuple(name or "" for name in names) if any(names) else ())
 
 
 def settle(votes: Sequence[Vote]) -> Hint:
@@ -90,11 +115,11 @@ def settle(votes: Sequence[Vote]) -> Hint:
 
 
 def votes_of_dimensions(names: Sequence[str | None], marker: str) -> list[Vote]:
-    """Read the names of the two axes."""
+    """Read the names of the axes; that one holds features says where the samples are only if there are two."""
     votes = []
     for axis, name in enumerate(names):
         kind = word_of(name or "")
-        if kind:
+        if kind == "samples" or (kind and len(names) == 2):
             votes.append((axis if kind == "samples" else 1 - axis, f"{marker} names axis {axis} {name!r}"))
     return votes
 

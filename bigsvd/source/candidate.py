@@ -7,6 +7,7 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 
 from bigsvd.errors import NoMatrixError, SeveralMatricesError, UnsupportedMatrixError
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.axes import LABELS, Axes
 from bigsvd.source.names import Names
 from bigsvd.source.packing import Packing
@@ -43,6 +44,12 @@ class Candidate:
         Chunks that were never written; None where they were not counted.
     outside : tuple of str
         Other files that hold its entries, or to which a link leads, outside the folder of the file.
+    axis_names : tuple of str
+        Names of the axes, where the file has any.
+    sample_axes : tuple of int
+        Of an array of more than two axes: those that a marker says hold samples.
+    coordinates : tuple of (Names or None)
+        Of an array of more than two axes: labels along each; empty where no axis has any.
     nonzeros : int or None
         Entries stored, of a sparse matrix.
     sparse : bool
@@ -70,6 +77,9 @@ class Candidate:
     hint_reason: str = ""
     absent_chunks: int | None = None
     outside: tuple[str, ...] = ()
+    axis_names: tuple[str, ...] = ()
+    sample_axes: tuple[int, ...] = ()
+    coordinates: tuple[Names | None, ...] = ()
     nonzeros: int | None = None
     sparse: bool = False
     packing: Packing | None = None
@@ -84,8 +94,29 @@ class Candidate:
         """The same array with what was recognised around it."""
         return replace(
             self, layout=axes.layout, marker=axes.marker, samples_hint=axes.samples_hint, hint_reason=axes.hint_reason,
+            axis_names=axes.axis_names, sample_axes=axes.sample_axes, coordinates=axes.coordinates,
             row_names=axes.row_names, column_names=axes.column_names, remarks=axes.remarks,
         )  # fmt: skip
+
+    @property
+    def axes(self) -> ArrayAxes:
+        """What is known of the axes of an array that lies as one row after the other; chunks are left to its source."""
+        samples = self.sample_axes
+        if len(self.shape) == 2 and self.samples_hint in ("rows", "columns"):
+            samples = (("rows", "columns").index(self.samples_hint),)
+        labels = self.coordinates or ((self.row_names, self.column_names) if len(self.shape) == 2 else ())
+        return ArrayAxes(self.shape, None, self.axis_names, samples, self.hint_reason, coordinates=labels)
+
+    @property
+    def many_axes(self) -> bool:
+        """Whether axes must be run together before it is a matrix."""
+        return len(self.shape) > 2
+
+    @property
+    def option(self) -> str:
+        """What to give ``--sample-axes``: as the file says, else the first axis, which is common practice."""
+        axes = self.sample_axes or (0,)
+        return ",".join((self.axis_names[axis] if self.axis_names else "") or str(axis) for axis in axes)
 
     @property
     def line(self) -> str:
@@ -96,25 +127,30 @@ class Candidate:
 
 
 def why_unusable(shape: tuple[int, ...] | None, numeric: bool, type_words: str) -> str:
-    """Reason for which an array is no matrix; empty where it is one."""
+    """Reason for which an array can be no matrix; empty where it is one, or can be unfolded to one."""
     if shape is None:
         return "it holds no values"
     if not numeric:
         return f"not numbers but {type_words}"
-    if len(shape) != 2:
+    if len(shape) < 2:
         return "a single value" if not shape else f"{len(shape)}-D, and a matrix has 2 axes"
     if 0 in shape:
         return "it is empty"
     return ""
 
 
-def choose(candidates: Sequence[Candidate], where: str) -> Candidate:
-    """Take the one matrix that a file holds; refuse to guess between several, and say what is there if none is."""
+def choose(candidates: Sequence[Candidate], where: str, *, unfold: bool = False) -> Candidate:
+    """Take the one matrix that a file holds; refuse to guess between several, and say what is there if none is.
+
+    With `unfold`, arrays of more than two axes come before matrices.
+    """
     # Smaller copies of an image compete with nothing: they are taken only by their own name.
     usable = [candidate for candidate in candidates if candidate.usable and not candidate.level]
     # Numbers of regions stand beside the image that is meant.
     usable = [candidate for candidate in usable if candidate.layout != LABELS] or usable
-    matrices = [candidate for candidate in usable if min(candidate.shape) > 1]
+    full = [candidate for candidate in usable if sum(side > 1 for side in candidate.shape) > 1]
+    # Arrays of more axes stand behind matrices, unless they are asked for.
+    matrices = [candidate for candidate in full if candidate.many_axes == unfold] or full
     sparse = [candidate for candidate in candidates if candidate.sparse and not candidate.usable]
     # Files of some programs keep scalars and vectors as 1 × n matrices: they are taken only if there is nothing else.
     choice = matrices or usable

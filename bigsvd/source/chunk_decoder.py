@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from typing import Protocol
 
 import numpy as np
 
 from bigsvd.source.codecs import Stretch
-from bigsvd.source.positional import fill_from, read_rows
+from bigsvd.source.positional import fill_from, read_box
+from bigsvd.source.rectangle import as_matrix
 from bigsvd.source.unshuffle import unshuffle
 from bigsvd.source.workspace import Workspace
 
@@ -20,7 +22,7 @@ _STORED, _FIRST, _SECOND = 0, 1, 2
 class ChunkError(Exception):
     """A chunk that does not decode: where it stands in the grid, and lines that say what was found and expected."""
 
-    def __init__(self, coordinates: tuple[int, int], *evidence: str) -> None:
+    def __init__(self, coordinates: tuple[int, ...], *evidence: str) -> None:
         super().__init__(*evidence)
         self.coordinates = coordinates
         self.evidence = evidence
@@ -70,27 +72,27 @@ class ChunkDecoder:
         In the order in which the writer applied them.
     dtype : numpy.dtype
         Type of the stored entries.
-    chunk : (int, int)
-        Rows and columns of a whole chunk.
+    chunk : tuple of int
+        Shape of a whole chunk.
     column_major : bool
-        Whether entries lie column by column.
+        Whether entries lie in Fortran order.
     """
 
     def __init__(
-        self, stages: Sequence[Stage], dtype: np.dtype, chunk: tuple[int, int], *, column_major: bool = False
+        self, stages: Sequence[Stage], dtype: np.dtype, chunk: tuple[int, ...], *, column_major: bool = False
     ) -> None:
         self._stages = tuple(stages)
         self._dtype = dtype
         self._chunk = chunk
         self._column_major = column_major
-        self.bytes = chunk[0] * chunk[1] * dtype.itemsize
+        self.bytes = math.prod(chunk) * dtype.itemsize
         self.most_stored = most_stored(self.bytes)
         wanted = max((stage.room(self.bytes) for stage in self._stages), default=0)
         self._room = -(-wanted // _ALIGNED) * _ALIGNED
 
     def read(
-        self, descriptor: int, offset: int, size: int, rows: slice, columns: slice, out: np.ndarray,
-        workspace: Workspace, skipped: int = 0,
+        self, descriptor: int, offset: int, size: int, part: tuple[slice, ...], out: np.ndarray, workspace: Workspace,
+        skipped: int = 0,
     ) -> None:  # fmt: skip
         """Read a chunk of so many stored bytes from a file, and decode it; otherwise as `decode`."""
         every = (1 << len(self._stages)) - 1
@@ -98,12 +100,12 @@ class ChunkDecoder:
             # Nothing was done to its bytes: the chunk is a small contiguous array, of which a part is read.
             if size != self.bytes:
                 raise ValueError(f"{size:,} bytes are stored as they are, a chunk has {self.bytes:,}")
-            spans = (rows.start, rows.stop), (columns.start, columns.stop)
-            read_rows(descriptor, offset, self._chunk[1], self._dtype, *spans, out)
+            box = tuple((along.start, along.stop) for along in part)
+            read_box(descriptor, offset, self._chunk, self._dtype, box, out)
             return
         held = self.place_for(size, workspace)
         fill_from(descriptor, offset, held.bytes.data)
-        self.decode(held, rows, columns, out, workspace, skipped)
+        self.decode(held, part, out, workspace, skipped)
 
     def place_for(self, size: int, workspace: Workspace) -> Stretch:
         """Where the stored bytes of a chunk are to be read to."""
@@ -112,7 +114,7 @@ class ChunkDecoder:
         return Stretch(workspace.buffer(_STORED, self._room + size), self._room, self._room + size)
 
     def decode(
-        self, held: Stretch, rows: slice, columns: slice, out: np.ndarray, workspace: Workspace, skipped: int = 0
+        self, held: Stretch, part: tuple[slice, ...], out: np.ndarray, workspace: Workspace, skipped: int = 0
     ) -> None:
         """Decode a chunk.
 
@@ -120,8 +122,8 @@ class ChunkDecoder:
         ----------
         held : Stretch
             Stored bytes, from `place_for`; may be written over.
-        rows, columns : slice
-            Part of the chunk that is wanted.
+        part : tuple of slice
+            What is wanted of the chunk, along each axis.
         out : ndarray
             Native type, shape of that part; any strides.
         workspace : Workspace
@@ -137,9 +139,11 @@ class ChunkDecoder:
         item = self._dtype.itemsize
         todo = [stage for number, stage in enumerate(self._stages) if not skipped >> number & 1]
         shuffled = bool(todo) and item > 1 and not self._column_major and todo[0].shuffles(item)
-        if shuffled:
+        # Where the part is no rectangle, entries are brought together in a buffer before they are put into place.
+        flat = as_matrix(self._chunk, part, out) if shuffled else None
+        if flat is not None:
             todo.pop(0)
-        straight = None if shuffled else self._straight(out)
+        straight = None if flat is not None else self._straight(out)
         while todo:
             stage = todo.pop()
             if not todo and straight is not None:
@@ -151,12 +155,12 @@ class ChunkDecoder:
             raise ValueError(f"it decodes to {held.size:,} bytes, a chunk has {self.bytes:,}")
         if held.buffer is straight:
             return
-        if shuffled:
-            unshuffle(held.bytes, self._dtype, self._chunk, rows, columns, out, workspace)
+        if flat is not None:
+            unshuffle(held.bytes, self._dtype, *flat, workspace)
             return
         order = self._chunk[::-1] if self._column_major else self._chunk
         entries = held.bytes.view(self._dtype).reshape(order)
-        out[...] = (entries.T if self._column_major else entries)[rows, columns]
+        out[...] = (entries.T if self._column_major else entries)[part]
 
     def _straight(self, out: np.ndarray) -> np.ndarray | None:
         """The panel itself as bytes, where a whole chunk lies in it in one piece and as it is stored."""

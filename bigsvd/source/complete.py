@@ -54,15 +54,14 @@ def check_complete(source: Source) -> None:
         source.require_complete()
 
 
-def first_chunks(absent: np.ndarray, spec: MatrixSpec, chunks: tuple[int, int]) -> list[str]:
-    """Places of the first marked chunks of a grid, in storage order."""
-    return [show_chunk(place, spec.shape, chunks) for place in first_places(absent)]
+def first_chunks(absent: np.ndarray, shape: tuple[int, ...], chunks: tuple[int, ...]) -> list[str]:
+    """Places of the first marked chunks of the grid of an array, in storage order."""
+    return [show_chunk(place, shape, chunks) for place in first_places(absent)]
 
 
-def first_places(marked: np.ndarray) -> list[tuple[int, int]]:
+def first_places(marked: np.ndarray) -> list[tuple[int, ...]]:
     """Coordinates of the first marked chunks, in storage order."""
-    columns = marked.shape[1]
-    return [(int(n) // columns, int(n) % columns) for n in np.flatnonzero(marked)[:SHOWN]]
+    return [tuple(map(int, np.unravel_index(n, marked.shape))) for n in np.flatnonzero(marked)[:SHOWN]]
 
 
 def settle_absent(

@@ -2,14 +2,16 @@
 
 from __future__ import annotations
 
+import math
 from typing import Any
 
 import numpy as np
 
 from bigsvd.errors import BigsvdError, SourceError, UnsupportedMatrixError
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.candidate import why_unusable
 from bigsvd.source.entries import decoded_type, show_type, type_caution
-from bigsvd.source.rectangle import Span, require_rectangle, show_place
+from bigsvd.source.rectangle import Box, Span, require_box, require_rectangle, show_place
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.units import show_shape
 
@@ -19,13 +21,13 @@ class DaskSource:
 
     Parameters
     ----------
-    array : dask.array.Array, shape (m, n)
+    array : dask.array.Array, shape (m, n) or of more axes
         Chunks of known size that hold NumPy arrays.
     """
 
     def __init__(self, array: Any) -> None:
         self._array = array
-        self.spec = _spec(array)
+        self.spec, self.axes = _spec(array)
 
     def read(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Compute the half-open rectangle rows × columns into `out`; see `Source.read`.
@@ -37,12 +39,17 @@ class DaskSource:
         UnsupportedMatrixError
             If a chunk is not what the array's metadata promised.
         """
+        require_rectangle(self.spec, rows, columns, out)
+        self.read_box((rows, columns), out)
+
+    def read_box(self, box: Box, out: np.ndarray) -> None:
+        """Compute a half-open box into `out`; see `ArraySource.read_box`."""
         import dask.array as da
 
-        require_rectangle(self.spec, rows, columns, out)
+        require_box(self.axes.shape, self.spec.dtype, box, out)
         if out.size == 0:
             return
-        part = self._array[rows[0] : rows[1], columns[0] : columns[1]]
+        part = self._array[tuple(slice(*span) for span in box)]
         try:
             sink: Any = _Sink(out)
             da.store(part, sink, lock=False, scheduler="synchronous")
@@ -51,9 +58,9 @@ class DaskSource:
         except Exception as error:  # the graph is the caller's and raises what it likes
             raise SourceError(
                 "the dask graph failed while one of its rectangles was computed",
-                evidence=[show_place(rows, columns), f"{type(error).__name__}: {error}"],
+                evidence=[show_place(*box), f"{type(error).__name__}: {error}"],
                 remedy="Compute that rectangle by itself to see the failure: "
-                f"array[{rows[0]}:{rows[1]}, {columns[0]}:{columns[1]}].compute(scheduler='synchronous')",
+                f"array[{', '.join(f'{start}:{stop}' for start, stop in box)}].compute(scheduler='synchronous')",
             ) from error
 
     def close(self) -> None:
@@ -89,7 +96,7 @@ def _held(computed: np.dtype, promised: np.dtype) -> bool:
     return np.can_cast(computed, promised, "safe") or decoded_type(computed) == promised
 
 
-def _spec(array: Any) -> MatrixSpec:
+def _spec(array: Any) -> tuple[MatrixSpec, ArrayAxes]:
     stored = np.dtype(array.dtype)
     dtype = decoded_type(stored) if stored.names is None else None
     shape = tuple(array.shape)
@@ -101,19 +108,22 @@ def _spec(array: Any) -> MatrixSpec:
         raise UnsupportedMatrixError(
             f"the dask array is no matrix that can be decomposed: {reason}",
             evidence=[f"shape {shape}, {show_type(stored)}"],
-            remedy="Give a two-dimensional array of numbers; array.compute_chunk_sizes() finds unknown sizes."
+            remedy="Give an array of numbers of two or more axes; array.compute_chunk_sizes() finds unknown sizes."
             if not known
-            else "Give a two-dimensional dask array of NumPy chunks that hold numbers.",
+            else "Give a dask array of two or more axes of NumPy chunks that hold numbers.",
         )
-    largest = (max(array.chunks[0]), max(array.chunks[1]))
+    largest = tuple(int(max(sides)) for sides in array.chunks)
     regular = all(all(side == top for side in sides[:-1]) for sides, top in zip(array.chunks, largest, strict=True))
     cautions = () if regular else ("chunks of unequal size: those that straddle two panels are computed twice",)
-    return MatrixSpec(
+    sides = tuple(int(side) for side in shape)
+    borders = tuple((0, *map(int, np.cumsum(each))) for each in array.chunks)
+    spec = MatrixSpec(
         name="dask array",
-        shape=(int(shape[0]), int(shape[1])),
+        shape=(sides[0], math.prod(sides[1:])),
         dtype=dtype,
-        chunks=(int(largest[0]), int(largest[1])),
+        chunks=(largest[0], math.prod(largest[1:])),
         storage="graph",
         encoding=f"dask chunks {'' if regular else 'up to '}{show_shape(largest)}",
         cautions=type_caution(stored) + cautions,
     )
+    return spec, ArrayAxes(sides, largest, borders=() if regular else borders)

@@ -1,16 +1,19 @@
-"""A dense two-dimensional HDF5 dataset as a source."""
+"""A dense HDF5 dataset of two or more axes as a source."""
 
 from __future__ import annotations
 
 import errno
+import math
 import os
 import threading
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
 from bigsvd.errors import BigsvdError, DamagedSourceError, SourceError, UnsupportedMatrixError
 from bigsvd.source.access import STRICT, Access
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.chunk_decoder import ChunkError, decode_bytes
 from bigsvd.source.entries import decoded_type, pair_view, type_caution
 from bigsvd.source.fill import FillError, hdf5_fill
@@ -27,13 +30,16 @@ from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.positional import Descriptor, reading_bytes
 from bigsvd.source.rectangle import (
     BAND_BYTES,
+    Box,
     Span,
-    clip,
+    clip_box,
     fill_by_bands,
+    require_box,
     require_rectangle,
     require_sizes,
     show_chunk,
     show_place,
+    sides_of,
     touched,
 )
 from bigsvd.source.spec import MatrixSpec
@@ -49,7 +55,7 @@ class Hdf5Source:
     path : str
         Absolute path of the file.
     dataset : str
-        Path of a two-dimensional dataset of numbers inside it.
+        Path of a dataset of numbers inside it, of two or more axes.
     access : Access
         Whether chunks that were never written are filled, and links followed out of the folder.
     one_row : bool
@@ -67,7 +73,7 @@ class Hdf5Source:
             require_inside(file, dataset, Home(path, follow=access.follow_links))
             others = [os.path.abspath(file[dataset].file.filename), *other_files(file[dataset])]
             self.stamps += tuple(FileStamp.of(name) for name in others if name != path and os.path.exists(name))
-            self.spec = _spec(self._shown(file[dataset]), path, dataset, self.stamps, access)
+            self.spec, self.axes = _spec(self._shown(file[dataset]), path, dataset, self.stamps, access)
         self._opened()
 
     def _forget(self) -> None:
@@ -78,7 +84,8 @@ class Hdf5Source:
         self._process = 0
 
     def __getstate__(self) -> dict[str, Any]:
-        return {name: getattr(self, name) for name in ("path", "dataset", "access", "one_row", "stamps", "spec")}
+        names = ("path", "dataset", "access", "one_row", "stamps", "spec", "axes")
+        return {name: getattr(self, name) for name in names}
 
     def __setstate__(self, state: dict[str, Any]) -> None:
         self.__dict__.update(state)
@@ -134,24 +141,33 @@ class Hdf5Source:
     def read(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Read the half-open rectangle rows × columns into `out`; see `Source.read`."""
         require_rectangle(self.spec, rows, columns, out)
+        self.read_box((rows, columns), out)
+
+    def read_box(self, box: Box, out: np.ndarray) -> None:
+        """Read a half-open box into `out`; see `ArraySource.read_box`."""
+        require_box(self.axes.shape, self.spec.dtype, box, out)
         if out.size == 0:
             return
         try:
-            persist(lambda: self._opened()[1](rows, columns, out), self._open_anew)
+            persist(lambda: self._opened()[1](box, out), self._open_anew)
         except Exception as error:  # filters come from other packages and raise what they like
             self._require_unchanged()
             if isinstance(error, (BigsvdError, MemoryError)):
                 raise
-            raise self._damage(rows, columns, error) from error
+            raise self._damage(box, error) from error
         # The library answers zeros where a file was cut short after it was opened.
         self._require_unchanged()
 
     def announce(self, rows: Span, columns: Span) -> None:
         """Have the system fetch a rectangle that will be read soon; where the library reads, nothing is done."""
+        self.announce_box((rows, columns))
+
+    def announce_box(self, box: Box) -> None:
+        """Have the system fetch a box that will be read soon; where the library reads, nothing is done."""
         self._opened()
         direct = self._handles[4] if self._handles is not None else None
         if direct is not None:
-            direct.announce(rows, columns)
+            direct.announce(box)
 
     def _require_unchanged(self) -> None:
         for stamp in self.stamps:
@@ -176,35 +192,39 @@ class Hdf5Source:
                     self._retired.append(self._handles)
                 self._handles = None
 
-    def _damage(self, rows: Span, columns: Span, error: Exception) -> SourceError:
-        """Name the first chunk of the rectangle that does not decode, and say what is wrong with it."""
-        place, kept_back = [show_place(rows, columns)], refusal(error)
+    def _damage(self, box: Box, error: Exception) -> SourceError:
+        """Name the first chunk of the box that does not decode, and say what is wrong with it."""
+        place, kept_back = [show_place(*box)], refusal(error)
         if isinstance(error, ChunkError):
-            place = [show_chunk(error.coordinates, self.spec.shape, self.spec.chunks), *error.evidence]
+            place = [show_chunk(error.coordinates, self.axes.shape, self._unit), *error.evidence]
         if kept_back is not None:
             return unreadable(self.spec.name, place, kept_back)
-        evidence = place if isinstance(error, ChunkError) else self._search(rows, columns, error)
+        evidence = place if isinstance(error, ChunkError) else self._search(box, error)
         return DamagedSourceError(
             f"{self.spec.name} holds stored bytes that do not decode",
             evidence=evidence,
             remedy="Copy or download the file again, or write it again from its origin.",
         )
 
-    def _search(self, rows: Span, columns: Span, error: Exception) -> list[str]:
+    @property
+    def _unit(self) -> tuple[int, ...]:
+        """Shape of a chunk, or of a row where there are none."""
+        return self.axes.chunks or (1, *self.axes.shape[1:])
+
+    def _search(self, box: Box, error: Exception) -> list[str]:
         """Read chunk by chunk, since the library does not tell which one it failed at."""
-        chunks, (_, fill) = self.spec.chunks, self._opened()
-        for i, j in touched(rows, columns, chunks) if chunks[0] > 1 else ():
-            part_rows, part_columns = clip(i, chunks[0], rows), clip(j, chunks[1], columns)
-            part = np.empty((part_rows[1] - part_rows[0], part_columns[1] - part_columns[0]), self.spec.dtype)
+        chunks, (_, fill) = self._unit, self._opened()
+        for place in touched(box, chunks) if self.axes.chunks and chunks[0] > 1 else ():
+            part = clip_box(place, chunks, box)
             try:
-                fill(part_rows, part_columns, part)
+                fill(part, np.empty(sides_of(part), self.spec.dtype))
             except Exception as first:
                 return [
-                    show_chunk((i, j), self.spec.shape, chunks),
-                    f"a chunk has {chunks[0] * chunks[1] * self.spec.dtype.itemsize:,} bytes decoded",
+                    show_chunk(place, self.axes.shape, chunks),
+                    f"a chunk has {math.prod(chunks) * self.spec.dtype.itemsize:,} bytes decoded",
                     f"the library says: {first}",
                 ]
-        return [show_place(rows, columns), f"the library says: {error}"]
+        return [show_place(*box), f"the library says: {error}"]
 
 
 def library_reader(dataset: Any) -> Fill:
@@ -214,21 +234,21 @@ def library_reader(dataset: Any) -> Fill:
     pair = dataset.dtype.names
     chunk_rows = dataset.chunks[0] if dataset.chunks else 1
 
-    def read(rows: Span, columns: Span, out: np.ndarray) -> None:
+    def read(box: Box, out: np.ndarray) -> None:
         dtype = pair_view(out.dtype, pair) if pair else out.dtype
         file_space = h5py.h5s.create_simple(dataset.shape)
-        file_space.select_hyperslab((rows[0], columns[0]), out.shape)
+        file_space.select_hyperslab(tuple(start for start, _ in box), out.shape)
         memory_space = h5py.h5s.create_simple(out.shape)
         dataset.id.read(memory_space, file_space, out.view(dtype), h5py.h5t.py_create(dtype))
 
     # Neither function refers to itself: a cycle would keep the file open after its source is gone.
-    def fill(rows: Span, columns: Span, out: np.ndarray) -> None:
+    def fill(box: Box, out: np.ndarray) -> None:
         # Virtual datasets do not tell the filters of their sources; once imported, this costs nothing.
         register_plugins()
         if out.flags.c_contiguous:
-            read(rows, columns, out)
+            read(box, out)
         else:
-            fill_by_bands(read, rows, columns, out, chunk_rows)
+            fill_by_bands(read, box, out, chunk_rows)
 
     return fill
 
@@ -249,7 +269,9 @@ def open_dataset(file: Any, inside: str) -> Any:
     return dataset
 
 
-def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...], access: Access) -> MatrixSpec:
+def _spec(
+    dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...], access: Access
+) -> tuple[MatrixSpec, ArrayAxes]:
     said = describe(dataset, inside, follow=access.follow_links)
     stored = dataset.dtype
     dtype = decoded_type(stored)
@@ -262,14 +284,16 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...], a
     require_sizes(dataset.shape, dataset.chunks, stored.itemsize, f"{path}:{inside}")
     filters = filters_of(dataset)
     codecs = tuple(step.name for step in filters) if decodes_directly(dataset) else ("library",) * bool(filters)
-    rows, columns = dataset.shape
+    shape = tuple(dataset.shape)
     # Any range of a list that lies in one piece will do.
-    chunks = dataset.chunks or (1, 1 if isinstance(dataset, OneRow) else columns)
-    return MatrixSpec(
+    chunks = dataset.chunks or ((1, 1) if isinstance(dataset, OneRow) else (1, *shape[1:]))
+    unit = tuple(min(chunk, side) for chunk, side in zip(chunks, shape, strict=True))
+    axes = replace(said.axes, chunks=unit if dataset.chunks else None)
+    spec = MatrixSpec(
         name=f"{path}:{inside}",
-        shape=(rows, columns),
+        shape=(shape[0], math.prod(shape[1:])),
         dtype=dtype,
-        chunks=(min(chunks[0], rows), min(chunks[1], columns)),
+        chunks=(unit[0], math.prod(unit[1:])),
         storage="compressed" if filters else "plain",
         encoding=said.encoding,
         decode_bytes=_decode_bytes(dataset, chunks),
@@ -285,15 +309,16 @@ def _spec(dataset: Any, path: str, inside: str, stamps: tuple[FileStamp, ...], a
         row_names=said.row_names,
         column_names=said.column_names,
     )
+    return spec, axes
 
 
-def _decode_bytes(dataset: Any, chunks: tuple[int, int]) -> int:
+def _decode_bytes(dataset: Any, chunks: tuple[int, ...]) -> int:
     """Most bytes that a thread holds beside its panel; chunks may reach past the matrix."""
     item = dataset.dtype.itemsize
     if dataset.chunks is None or not filters_of(dataset):
-        direct = reading_bytes(chunks[1] * item)
+        direct = reading_bytes(math.prod(chunks[1:]) * item)
         return direct if plain_type(dataset) is not None else direct + BAND_BYTES
-    return decode_bytes(chunks[0] * chunks[1] * item) + (0 if decodes_directly(dataset) else BAND_BYTES)
+    return decode_bytes(math.prod(chunks) * item) + (0 if decodes_directly(dataset) else BAND_BYTES)
 
 
 def _remedy(dataset: Any, path: str) -> str:

@@ -19,7 +19,7 @@ class ChunkTable:
 
     Attributes
     ----------
-    offset : ndarray of int64, shape (chunk rows, chunk columns)
+    offset : ndarray of int64, shape of the chunk grid
         First byte in the file; -1 where the chunk was never written.
     size : ndarray of int64
         Stored bytes.
@@ -41,7 +41,7 @@ class ChunkTable:
         def note(chunk: Any) -> None:
             place = tuple(start // side for start, side in zip(chunk.chunk_offset, chunks, strict=True))
             # Chunks left outside when a dataset was made smaller are not part of it.
-            if place[0] < grid[0] and place[1] < grid[1]:
+            if all(at < side for at, side in zip(place, grid, strict=True)):
                 table.offset[place] = chunk.byte_offset
                 table.size[place] = chunk.size
                 table.skipped[place] = chunk.filter_mask
@@ -49,13 +49,13 @@ class ChunkTable:
         dataset.id.chunk_iter(note)
         return table
 
-    def at(self, i: int, j: int) -> tuple[int, int, int]:
+    def at(self, place: tuple[int, ...]) -> tuple[int, int, int]:
         """Address, stored size and skipped filters of one chunk."""
-        return int(self.offset[i, j]), int(self.size[i, j]), int(self.skipped[i, j])
+        return int(self.offset[place]), int(self.size[place]), int(self.skipped[place])
 
 
 def absent_chunks(dataset: Any, name: str) -> np.ndarray:
-    """Mark the chunks that were never written; shape (chunk rows, chunk columns), a byte a chunk.
+    """Mark the chunks that were never written; shape of the chunk grid, a byte a chunk.
 
     Raises
     ------
@@ -67,9 +67,9 @@ def absent_chunks(dataset: Any, name: str) -> np.ndarray:
     absent = np.ones(grid_shape(dataset.shape, chunks), np.bool_)
 
     def note(chunk: Any) -> None:
-        row, column = (start // side for start, side in zip(chunk.chunk_offset, chunks, strict=True))
-        if row < absent.shape[0] and column < absent.shape[1]:
-            absent[row, column] = False
+        place = tuple(start // side for start, side in zip(chunk.chunk_offset, chunks, strict=True))
+        if all(at < side for at, side in zip(place, absent.shape, strict=True)):
+            absent[place] = False
 
     dataset.id.chunk_iter(note)
     return absent

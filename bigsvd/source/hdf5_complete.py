@@ -27,7 +27,7 @@ def require_complete(dataset: Any, spec: MatrixSpec, home: Home, access: Access)
     Parameters
     ----------
     dataset : h5py.Dataset
-        Two-dimensional.
+        Of two or more axes.
     spec : MatrixSpec
         What is known of it.
     home : Home
@@ -58,7 +58,7 @@ def count_never_written(dataset: Any, spec: MatrixSpec) -> tuple[int, int, list[
     if dataset.id.get_num_chunks() >= grid:
         return 0, grid, []
     absent = absent_chunks(dataset, spec.name)
-    return int(absent.sum()), grid, first_chunks(absent, spec, dataset.chunks)
+    return int(absent.sum()), grid, first_chunks(absent, dataset.shape, dataset.chunks)
 
 
 def _folder(dataset: Any) -> str:

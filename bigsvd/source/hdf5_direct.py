@@ -20,11 +20,11 @@ from bigsvd.source.chunk_decoder import ChunkDecoder, ChunkError
 from bigsvd.source.codecs import FramingUnknownError
 from bigsvd.source.hdf5_chunks import MOST_CHUNKS, ChunkTable
 from bigsvd.source.hdf5_filters import filters_of
-from bigsvd.source.positional import announce, announce_rows, read_rows
-from bigsvd.source.rectangle import Span, clip, grid_shape, overlap, touched
+from bigsvd.source.positional import announce, read_box
+from bigsvd.source.rectangle import Box, clip_box, grid_shape, inside, touched
 from bigsvd.source.workspace import Workspace, Workspaces
 
-Fill = Callable[[Span, Span, np.ndarray], None]
+Fill = Callable[[Box, np.ndarray], None]
 
 
 @dataclass(frozen=True)
@@ -34,13 +34,13 @@ class DirectReader:
     Attributes
     ----------
     fill : callable
-        Reads a rectangle into a buffer.
+        Reads a box into a buffer.
     announce : callable
-        Has the system fetch a rectangle that will be read soon.
+        Has the system fetch a box that will be read soon.
     """
 
     fill: Fill
-    announce: Callable[[Span, Span], None]
+    announce: Callable[[Box], None]
 
 
 def direct_reader(dataset: Any, descriptor: int, library: Fill, fill: np.generic | None = None) -> DirectReader | None:
@@ -49,7 +49,7 @@ def direct_reader(dataset: Any, descriptor: int, library: Fill, fill: np.generic
     Parameters
     ----------
     dataset : h5py.Dataset
-        Two-dimensional, of numbers.
+        Of two or more axes, of numbers.
     descriptor : int
         The same file, open for reading.
     library : callable
@@ -67,10 +67,10 @@ def direct_reader(dataset: Any, descriptor: int, library: Fill, fill: np.generic
         offset = dataset.id.get_offset()
         if plist.get_layout() != h5py.h5d.CONTIGUOUS or plist.get_external_count() or offset is None:
             return None
-        width = dataset.shape[1]
+        shape = tuple(dataset.shape)
         return DirectReader(
-            lambda rows, columns, out: read_rows(descriptor, offset, width, stored, rows, columns, out),
-            partial(_announce_rows, descriptor, offset, width, stored.itemsize),
+            lambda box, out: read_box(descriptor, offset, shape, stored, box, out),
+            partial(_announce_box, descriptor, offset, shape, stored.itemsize),
         )
     if not decodes_directly(dataset) or math.prod(grid_shape(dataset.shape, dataset.chunks)) > MOST_CHUNKS:
         return None
@@ -78,13 +78,13 @@ def direct_reader(dataset: Any, descriptor: int, library: Fill, fill: np.generic
     return DirectReader(reader.fill, reader.announce) if reader.agrees_with(dataset) else None
 
 
-def _announce_rows(descriptor: int, offset: int, width: int, item: int, rows: Span, columns: Span) -> None:
-    """Announce whole rows, or a part of one; parts of several lie between others that are not wanted."""
-    if columns[1] - columns[0] == width:
-        announce_rows(descriptor, offset, width * item, rows)
-    elif rows[1] - rows[0] == 1:
-        start = rows[0] * width + columns[0]
-        announce(descriptor, offset + start * item, (columns[1] - columns[0]) * item)
+def _announce_box(descriptor: int, offset: int, shape: tuple[int, ...], item: int, box: Box) -> None:
+    """Announce a box that lies in one piece; parts of others lie between entries that are not wanted."""
+    parted = max((axis for axis, span in enumerate(box) if span != (0, shape[axis])), default=0)
+    if all(stop - start == 1 for start, stop in box[:parted]):
+        start = sum(span[0] * math.prod(shape[axis + 1 :]) for axis, span in enumerate(box))
+        size = (box[parted][1] - box[parted][0]) * math.prod(shape[parted + 1 :])
+        announce(descriptor, offset + start * item, size * item)
 
 
 def decodes_directly(dataset: Any) -> bool:
@@ -121,7 +121,7 @@ class _ChunkReader:
         self._library = library
         self._filters = filters_of(dataset)
         self._stored = stored
-        self._chunks: tuple[int, int] = dataset.chunks
+        self._chunks: tuple[int, ...] = dataset.chunks
         self._table = ChunkTable.of(dataset)
         self._decoder = ChunkDecoder(self._filters, stored, self._chunks)
         self._workspaces = Workspaces()
@@ -131,58 +131,54 @@ class _ChunkReader:
         places = np.argwhere(self._table.offset >= 0)
         if not len(places):
             return True
-        i, j = (int(part) for part in places[0])
-        _, raw = dataset.id.read_direct_chunk((i * self._chunks[0], j * self._chunks[1]))
-        offset, size, _ = self._table.at(i, j)
+        place = tuple(int(part) for part in places[0])
+        start = tuple(at * chunk for at, chunk in zip(place, self._chunks, strict=True))
+        _, raw = dataset.id.read_direct_chunk(start)
+        offset, size, _ = self._table.at(place)
         return len(raw) == size and os.pread(self._descriptor, size, offset) == raw
 
-    def announce(self, rows: Span, columns: Span) -> None:
-        """Have the system fetch the chunks that a rectangle touches."""
-        for i, j in touched(rows, columns, self._chunks):
-            offset, size, _ = self._table.at(i, j)
+    def announce(self, box: Box) -> None:
+        """Have the system fetch the chunks that a box touches."""
+        for place in touched(box, self._chunks):
+            offset, size, _ = self._table.at(place)
             if offset >= 0:
                 announce(self._descriptor, offset, size)
 
-    def fill(self, rows: Span, columns: Span, out: np.ndarray) -> None:
-        """Decode all chunks that a rectangle touches into a buffer."""
+    def fill(self, box: Box, out: np.ndarray) -> None:
+        """Decode all chunks that a box touches into a buffer."""
         with self._workspaces.lent() as workspace:
-            for i, j in touched(rows, columns, self._chunks):
-                inner_rows, outer_rows = overlap(i, self._chunks[0], rows)
-                inner_columns, outer_columns = overlap(j, self._chunks[1], columns)
-                part = out[outer_rows, outer_columns]
+            for place in touched(box, self._chunks):
+                inner, outer = inside(place, self._chunks, box)
+                part = out[outer]
                 try:
-                    self._decode(i, j, inner_rows, inner_columns, part, workspace)
+                    self._decode(place, inner, part, workspace)
                 except FramingUnknownError as framing:
-                    self._by_library(
-                        i, j, clip(i, self._chunks[0], rows), clip(j, self._chunks[1], columns), part, framing
-                    )
+                    self._by_library(place, clip_box(place, self._chunks, box), part, framing)
                 except (ChunkError, MemoryError):
                     raise
                 except Exception as error:  # every codec raises what it likes
-                    raise self._fault(i, j, error) from error
+                    raise self._fault(place, error) from error
 
-    def _decode(self, i: int, j: int, rows: slice, columns: slice, out: np.ndarray, workspace: Workspace) -> None:
-        offset, size, skipped = self._table.at(i, j)
+    def _decode(self, place: tuple[int, ...], inner: tuple[slice, ...], out: np.ndarray, workspace: Workspace) -> None:
+        offset, size, skipped = self._table.at(place)
         if offset < 0:
             if self._absent_value is None:
-                raise ChunkError((i, j), "it was never written")
+                raise ChunkError(place, "it was never written")
             out[...] = self._absent_value
             return
-        self._decoder.read(self._descriptor, offset, size, rows, columns, out, workspace, skipped)
+        self._decoder.read(self._descriptor, offset, size, inner, out, workspace, skipped)
 
-    def _by_library(
-        self, i: int, j: int, rows: Span, columns: Span, out: np.ndarray, framing: FramingUnknownError
-    ) -> None:
+    def _by_library(self, place: tuple[int, ...], box: Box, out: np.ndarray, framing: FramingUnknownError) -> None:
         try:
-            self._library(rows, columns, out)
+            self._library(box, out)
         except Exception as error:  # the library and its plugins raise what they like
-            raise self._fault(i, j, f"{framing}; the library says: {error}") from error
+            raise self._fault(place, f"{framing}; the library says: {error}") from error
 
-    def _fault(self, i: int, j: int, said: object) -> ChunkError:
-        offset, size, skipped = self._table.at(i, j)
+    def _fault(self, place: tuple[int, ...], said: object) -> ChunkError:
+        offset, size, skipped = self._table.at(place)
         names = [step.name for number, step in enumerate(self._filters) if not skipped >> number & 1]
         return ChunkError(
-            (i, j),
+            place,
             f"{size:,} bytes stored at byte {offset:,}, {' + '.join(names) or 'no filter'}; a chunk has"
             f" {self._decoder.bytes:,} bytes decoded",
             f"decoding says: {said}",

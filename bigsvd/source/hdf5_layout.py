@@ -51,7 +51,7 @@ def hdf5_axes(file: Any, inside: str, shape: Shape, home: Home) -> Axes:
         for recognise in (_annotated, _barcodes, _loom, _matlab, _nwb, _pandas, _dimensions, _pytables):
             found = recognise(file, thing, inside, shape, home)
             if found is not None:
-                return found
+                return found.called(_called(thing, shape))
         remarks = []
         if isinstance(thing, h5py.Dataset) and _R_MARK in thing.attrs:
             remarks.append(
@@ -193,7 +193,8 @@ def _matlab(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> Axe
         # A sparse group tells its rows by number, and is not turned.
         return Axes.of("MATLAB v7.3", marker, shape=shape)
     reason = "written by MATLAB, which stores a matrix transposed: its rows are the columns here"
-    return Axes.of("MATLAB v7.3", marker, [(1, reason)], shape=shape)
+    # Of more axes it says only that they are reversed, not what they hold.
+    return Axes.of("MATLAB v7.3", marker, [(1, reason)] if len(shape) == 2 else [], shape=shape)
 
 
 def _nwb(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> Axes | None:
@@ -251,7 +252,7 @@ def _dimensions(file: Any, thing: Any, inside: str, shape: Shape, home: Home) ->
     names = [
         hdf5_names_of(file, scale, home) if scale is not None and len(scale.shape) == 1 else None for _, scale in scales
     ]
-    votes = votes_of_dimensions(called, "the dimension scale") if len(shape) == 2 else []
+    votes = votes_of_dimensions(called, "the dimension scale")
     return Axes.of(layout, marker, votes, names, shape=shape)
 
 
@@ -262,6 +263,11 @@ def hdf5_names_of(file: Any, dataset: Any, home: Home) -> Names | None:
     return _names(file, dataset.name, home) if dataset.name and dataset.file.filename == file.filename else None
 
 
+def _called(thing: Any, shape: Shape) -> list[str]:
+    """Names of the axes."""
+    return [_scale(thing, axis)[0] for axis in range(len(shape))] if hasattr(thing, "dims") else []
+
+
 def _scale(thing: Any, axis: int) -> tuple[str, Any]:
     """Name of an axis, its label or that of the first scale attached to it; and the scale, if that holds values."""
     dimension = thing.dims[axis]
@@ -270,7 +276,9 @@ def _scale(thing: Any, axis: int) -> tuple[str, Any]:
     empty = scale is not None and attribute_text(scale, "NAME").startswith(_NO_VARIABLE)
     # h5py hands out bytes where a label is no UTF-8.
     text = name.decode("utf-8", "surrogateescape") if isinstance(name, bytes) else str(name)
-    return text.removeprefix("_nc4_non_coord_")[:LONGEST_WORD], None if empty else scale
+    text = text.removeprefix("_nc4_non_coord_")[:LONGEST_WORD]
+    # netCDF-4 makes up a name for a dimension without a scale of its own.
+    return "" if text.startswith("phony_dim_") else text, None if empty else scale
 
 
 def _pytables(file: Any, thing: Any, inside: str, shape: Shape, home: Home) -> Axes | None:

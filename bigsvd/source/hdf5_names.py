@@ -74,6 +74,15 @@ class Hdf5Names:
             else:
                 yield plain
 
+    def values(self) -> np.ndarray | None:
+        """What is stored, where that is a list of numbers; see `ValueStore`."""
+        if self.field or self.categories or self.also or self.dates:
+            return None
+        with library_errors_named(f"{self.path}:{self.inside}"), open_hdf5(self.path) as file:
+            require_path_inside(file, self.inside, Home(self.path, follow=self.follow))
+            dataset = file[self.inside]
+            return np.asarray(dataset[...]) if dataset.dtype.kind in "biuf" else None
+
     def _held(self, count: int) -> list[str]:
         """All distinct values of a categorical column, if they can be held."""
         words: list[str] = []

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 Hint = tuple[str | None, str]
-_SAMPLES = {"time", "frame", "frames", "sample", "samples", "cell", "cells", "obs"}
+_SAMPLES = {"time", "frame", "frames", "sample", "samples", "cell", "cells", "obs", "t"}
 _FEATURES = {"gene", "genes", "feature", "features", "var", "vars", "pixel", "pixels"}
 
 

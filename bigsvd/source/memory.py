@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 
 from bigsvd.errors import UnsupportedMatrixError
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.candidate import why_unusable
 from bigsvd.source.entries import decoded_type, show_type, type_caution
-from bigsvd.source.rectangle import Span, require_rectangle
+from bigsvd.source.rectangle import Box, Span, require_box, require_rectangle
 from bigsvd.source.spec import MatrixSpec
 
 
@@ -16,7 +19,7 @@ class MemorySource:
 
     Parameters
     ----------
-    array : ndarray, shape (m, n)
+    array : ndarray, shape (m, n) or of more axes
         Numbers of any type and strides. Masked entries are refused: they would be read as if they were there.
     """
 
@@ -28,11 +31,12 @@ class MemorySource:
             raise UnsupportedMatrixError(
                 "the array is no matrix that can be decomposed",
                 evidence=[reason, f"shape {self._array.shape}, type {show_type(self._array.dtype)}"],
-                remedy="Give a two-dimensional array of numbers.",
+                remedy="Give an array of numbers of two or more axes.",
             )
         if self._array.dtype.names is not None:
             self._array = self._array.view(dtype.newbyteorder(self._array.dtype[0].byteorder))
-        rows, columns = self._array.shape
+        self.axes = ArrayAxes(self._array.shape)
+        rows, columns = self._array.shape[0], math.prod(self._array.shape[1:])
         self.spec = MatrixSpec(
             name="array in memory",
             shape=(rows, columns),
@@ -46,7 +50,12 @@ class MemorySource:
     def read(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Copy the half-open rectangle rows × columns into `out`; see `Source.read`."""
         require_rectangle(self.spec, rows, columns, out)
-        np.copyto(out, self._array[rows[0] : rows[1], columns[0] : columns[1]], casting="same_kind")
+        self.read_box((rows, columns), out)
+
+    def read_box(self, box: Box, out: np.ndarray) -> None:
+        """Copy a half-open box into `out`; see `ArraySource.read_box`."""
+        require_box(self.axes.shape, self.spec.dtype, box, out)
+        np.copyto(out, self._array[tuple(slice(*span) for span in box)], casting="same_kind")
 
     def close(self) -> None:
         """Do nothing: the array belongs to the caller."""

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator
 from contextlib import AbstractContextManager
 from dataclasses import dataclass, replace
-from typing import Any, Protocol
+from typing import Any, Protocol, runtime_checkable
 
 import numpy as np
 
@@ -25,6 +25,15 @@ class NameStore(Protocol):
 
     def opened(self) -> AbstractContextManager[Read]:
         """Open it; yields what reads the names from one number up to another, asked for in order and without gaps."""
+        ...
+
+
+@runtime_checkable
+class ValueStore(Protocol):
+    """A store that may hold numbers, which names are written from."""
+
+    def values(self) -> np.ndarray | None:
+        """What is stored, where that is a list of numbers; None for everything else."""
         ...
 
 
@@ -72,6 +81,10 @@ class Names:
                 start += len(block)
                 letters = sum(map(len, block)) // len(block) + 1
                 size = max(1, min(4 * size, MOST_BLOCK, BLOCK_LETTERS // letters))
+
+    def values(self) -> np.ndarray | None:
+        """All of them as they are stored, where they are numbers; None where they are text."""
+        return self._store.values() if isinstance(self._store, ValueStore) else None
 
     def called(self, words: str) -> Names:
         """The same names, said to stand elsewhere."""

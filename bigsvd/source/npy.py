@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import errno
+import math
 import os
 import threading
 from typing import Any
@@ -10,11 +11,12 @@ from typing import Any
 import numpy as np
 
 from bigsvd.errors import DamagedSourceError, UnsupportedMatrixError
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.candidate import Candidate, why_unusable
 from bigsvd.source.entries import decoded_type, show_type, type_caution
 from bigsvd.source.persist import persist, refusal, unreadable
-from bigsvd.source.positional import Descriptor, announce_rows, read_rows, reading_bytes
-from bigsvd.source.rectangle import Span, require_rectangle, show_place
+from bigsvd.source.positional import Descriptor, announce_rows, read_box, reading_bytes
+from bigsvd.source.rectangle import Box, Span, require_box, require_rectangle, show_place
 from bigsvd.source.spec import MatrixSpec
 from bigsvd.source.stamp import FileStamp, digest
 
@@ -39,9 +41,12 @@ class NpySource:
             raise UnsupportedMatrixError(
                 f"{path} is no matrix that can be decomposed: {said.reason}",
                 evidence=[f"shape {shape}, {said.dtype}"],
-                remedy="Give a two-dimensional array of numbers.",
+                remedy="Give an array of numbers of two or more axes.",
             )
-        rows, columns = shape
+        self.axes = ArrayAxes(shape, reversed=self.column_order)
+        rows, columns = shape[0], math.prod(shape[1:])
+        # Entries that lie together: a row in C order, in Fortran order what runs along all axes but the last.
+        together = math.prod(shape[:-1] if self.column_order else shape[1:])
         self.spec = MatrixSpec(
             name=path,
             shape=(rows, columns),
@@ -49,7 +54,7 @@ class NpySource:
             chunks=(rows, 1) if self.column_order else (1, columns),
             storage="npy",
             encoding=said.encoding,
-            decode_bytes=reading_bytes((rows if self.column_order else columns) * self.stored.itemsize),
+            decode_bytes=reading_bytes(together * self.stored.itemsize),
             stored_bytes=said.stored_bytes,
             fingerprint=digest(self.stamps),
             cautions=type_caution(self.stored),
@@ -99,18 +104,21 @@ class NpySource:
     def read(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Read the half-open rectangle rows × columns into `out`; see `Source.read`."""
         require_rectangle(self.spec, rows, columns, out)
-        height, width = self.spec.shape
+        self.read_box((rows, columns), out)
+
+    def read_box(self, box: Box, out: np.ndarray) -> None:
+        """Read a half-open box into `out`; see `ArraySource.read_box`."""
+        require_box(self.axes.shape, self.spec.dtype, box, out)
+        lying, shape, target = box, self.axes.shape, out
         if self.column_order:
-            rows, columns, out, width = columns, rows, out.T, height
+            lying, shape, target = box[::-1], shape[::-1], out.T
         try:
-            persist(
-                lambda: read_rows(self._opened(), self.offset, width, self.stored, rows, columns, out), self._open_anew
-            )
+            persist(lambda: read_box(self._opened(), self.offset, shape, self.stored, lying, target), self._open_anew)
         except (OSError, EOFError) as error:
             self.stamps[0].require_unchanged()
             kept_back = refusal(error)
             if kept_back is not None:
-                raise unreadable(self.path, [show_place(rows, columns)], kept_back) from error
+                raise unreadable(self.path, [show_place(*box)], kept_back) from error
             raise DamagedSourceError(
                 f"{self.path} cannot be read to its end",
                 evidence=[str(error)],
@@ -120,11 +128,15 @@ class NpySource:
 
     def announce(self, rows: Span, columns: Span) -> None:
         """Have the system fetch a rectangle that will be read soon, where it is whole rows as they lie."""
-        height, width = self.spec.shape
+        self.announce_box((rows, columns))
+
+    def announce_box(self, box: Box) -> None:
+        """Have the system fetch a box that will be read soon, where it is whole rows as they lie."""
+        shape = self.axes.shape
         if self.column_order:
-            rows, columns, width = columns, rows, height
-        if columns[1] - columns[0] == width:
-            announce_rows(self._opened(), self.offset, width * self.stored.itemsize, rows)
+            box, shape = box[::-1], shape[::-1]
+        if all(span == (0, side) for span, side in zip(box[1:], shape[1:], strict=True)):
+            announce_rows(self._opened(), self.offset, math.prod(shape[1:]) * self.stored.itemsize, box[0])
 
     def require_complete(self) -> None:
         """Refuse a file that changed; its length was compared with its header when it was opened."""

@@ -10,14 +10,18 @@ import numpy as np
 
 from bigsvd.errors import NoMatrixError, OptionError, UnsupportedMatrixError
 from bigsvd.source.access import STRICT, Access
+from bigsvd.source.axis_choice import NO_CHOICE, AxisChoice
 from bigsvd.source.candidate import Candidate, choose, listing
 from bigsvd.source.container import container
 from bigsvd.source.home import Home
 from bigsvd.source.names import Names
-from bigsvd.source.spec import Source
+from bigsvd.source.spec import ArraySource, Source
+from bigsvd.source.unfolded import unfold
 
 
-def open_source(where: Any, matrix: str | None = None, access: Access = STRICT) -> Source:
+def open_source(
+    where: Any, matrix: str | None = None, access: Access = STRICT, choice: AxisChoice = NO_CHOICE
+) -> Source:
     """Open a matrix for reading in rectangles.
 
     Parameters
@@ -29,6 +33,8 @@ def open_source(where: Any, matrix: str | None = None, access: Access = STRICT) 
     access : Access
         Whether chunks that were never written are filled, and links followed out of the file's own folder; how a
         sparse group that does not say it is compressed.
+    choice : AxisChoice
+        Which axes of an array of more than two become samples, and which part of it is taken.
 
     Returns
     -------
@@ -37,32 +43,42 @@ def open_source(where: Any, matrix: str | None = None, access: Access = STRICT) 
     Raises
     ------
     OptionError
-        If it is said how a sparse group is compressed, and the matrix is none.
+        If axes, region or mask are not those of the array, or the matrix is sparse; if it is said how a sparse group is
+        compressed, and the matrix is none.
     NoMatrixError
         If there is no such file, or nothing under that path.
     SeveralMatricesError
         If the file holds several matrices and none is named; lists them.
     UnsupportedMatrixError
-        If what is there is no two-dimensional array of numbers, or cannot be decoded here.
+        If what is there is no array of numbers of two or more axes, or cannot be decoded here, or
+        nothing says which of more than two axes are the samples.
     DamagedSourceError
         If the file or its metadata cannot be read.
     """
-    source = _opened(where, matrix, access)
+    source = _opened(where, matrix, access, many=bool(choice))
     if access.sparse_format is not None and source.spec.compressed_axis is None:
         source.close()
         raise OptionError(
             f"--sparse-format {access.sparse_format} was given, but {source.spec.name} is not sparse",
             remedy="Leave out --sparse-format.",
         )
-    return source
+    if not isinstance(source, ArraySource):
+        if choice:
+            source.close()
+            raise OptionError(
+                f"--sample-axes, --region or --mask was given, but {source.spec.name} is sparse",
+                remedy="Leave them out.",
+            )
+        return source
+    return unfold(source, choice)
 
 
-def _opened(where: Any, matrix: str | None, access: Access) -> Source:
+def _opened(where: Any, matrix: str | None, access: Access, *, many: bool) -> Source:
     if isinstance(where, (str, os.PathLike)):
         path = _absolute(where)
         # Below a folder without metadata an array may still lie where it is said to lie.
         kind = "zarr" if matrix is not None and path.is_dir() else container(path)
-        return _OPENERS[kind](str(path), matrix, access)
+        return _OPENERS[kind](str(path), matrix, access, many)
     if matrix is not None:
         raise UnsupportedMatrixError(
             f"matrix={matrix!r} names an array inside a file, but what was given is {type(where).__name__}",
@@ -177,7 +193,7 @@ def _from_object(thing: Any, access: Access) -> Source:
     )
 
 
-def _open_hdf5(path: str, matrix: str | None, access: Access) -> Source:
+def _open_hdf5(path: str, matrix: str | None, access: Access, many: bool = False) -> Source:
     from bigsvd.source.hdf5 import Hdf5Source
     from bigsvd.source.hdf5_file import library_errors_named, open_hdf5
     from bigsvd.source.hdf5_walk import walk_hdf5
@@ -198,7 +214,7 @@ def _open_hdf5(path: str, matrix: str | None, access: Access) -> Source:
             inside, sparse = start, True
         else:
             found = walk_hdf5(file, home, start, sparse_format=access.sparse_format)
-            choice = choose(found, path if matrix is None else f"{path}:{start}")
+            choice = choose(found, path if matrix is None else f"{path}:{start}", unfold=many)
             inside, sparse = choice.path, choice.sparse
     return open_sparse_hdf5(path, inside, access) if sparse else Hdf5Source(path, inside, access)
 
@@ -226,7 +242,7 @@ def _survey_hdf5(path: str, access: Access) -> list[Candidate]:
         return walk_hdf5(file, Home(path, follow=access.follow_links), sparse_format=access.sparse_format)
 
 
-def _open_zarr(path: str, matrix: str | None, access: Access) -> Source:
+def _open_zarr(path: str, matrix: str | None, access: Access, many: bool = False) -> Source:
     from bigsvd.source.sparse_zarr import open_sparse_zarr
     from bigsvd.source.zarr_array import ZarrSource
     from bigsvd.source.zarr_metadata import read_metadata
@@ -246,7 +262,8 @@ def _open_zarr(path: str, matrix: str | None, access: Access) -> Source:
     sparse = open_sparse_zarr(path, start, access) if start else None
     if sparse is not None:
         return sparse
-    choice = choose(walk_zarr(keys, start, sparse_format=access.sparse_format), f"{path}:{start}" if start else path)
+    where = f"{path}:{start}" if start else path
+    choice = choose(walk_zarr(keys, start, sparse_format=access.sparse_format), where, unfold=many)
     found = open_sparse_zarr(path, choice.path, access) if choice.sparse else None
     return found or ZarrSource(path, choice.path, access)
 
@@ -258,7 +275,7 @@ def _survey_zarr(path: str, access: Access) -> list[Candidate]:
     return walk_zarr(open_keys(path, follow=access.follow_links), sparse_format=access.sparse_format)
 
 
-def _open_npy(path: str, matrix: str | None, access: Access) -> Source:
+def _open_npy(path: str, matrix: str | None, access: Access, many: bool = False) -> Source:
     from bigsvd.source.npy import NpySource
 
     if matrix is not None:
@@ -275,7 +292,7 @@ def _survey_npy(path: str, access: Access) -> list[Candidate]:
     return [describe_npy(path)]
 
 
-def _open_npz(path: str, matrix: str | None, access: Access) -> Source:
+def _open_npz(path: str, matrix: str | None, access: Access, many: bool = False) -> Source:
     from bigsvd.source.sparse_npz import open_sparse_npz
 
     if matrix is not None:

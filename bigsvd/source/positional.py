@@ -1,14 +1,16 @@
-"""Rows of an unencoded row-major array read by position in its file, straight into a buffer."""
+"""Parts of an unencoded row-major array read by position in its file, straight into a buffer."""
 
 from __future__ import annotations
 
 import contextlib
+import itertools
+import math
 import os
 
 import numpy as np
 
 from bigsvd.source.persist import persist
-from bigsvd.source.rectangle import Span
+from bigsvd.source.rectangle import Box, Span, merged
 
 # Rows of at least this size are read to where they belong: 7 GB/s a core with 8 kB, and 3.6 with 2 kB, for which the
 # way over a temporary makes 4.4.
@@ -72,6 +74,45 @@ def read_rows(
         last = min(first + band, height)
         fill_from(descriptor, start + first * row_bytes, raw[: (last - first - 1) * row_bytes + count * item].data)
         out[first:last] = np.ndarray((last - first, count), stored, raw, strides=(row_bytes, item))
+
+
+def read_box(descriptor: int, offset: int, shape: tuple[int, ...], stored: np.dtype, box: Box, out: np.ndarray) -> None:
+    """Read a box of an array of two or more axes that begins at byte `offset`.
+
+    Parameters
+    ----------
+    descriptor : int
+        As for `read_rows`.
+    offset : int
+        First byte of the array.
+    shape : tuple of int
+        Of the whole array, in C order.
+    stored : numpy.dtype
+    box : tuple of (int, int)
+        Half-open, a span for each axis.
+    out : ndarray, shape of the box
+        Any strides; native type of the entries.
+
+    Raises
+    ------
+    EOFError
+        If the file ends before the box does.
+    """
+    if not out.size:
+        return
+    # Axes behind the last that is not whole run together with it; so do those of the buffer, if they lie so.
+    parted = max((axis for axis, span in enumerate(box) if span != (0, shape[axis])), default=0)
+    for lead in range(max(0, parted - 1), len(shape) - 1):
+        if merged(out[(0,) * lead], 1) is not None:
+            break
+    width, inner = math.prod(shape[lead + 1 :]), math.prod(shape[lead + 2 :])
+    columns = (box[lead + 1][0] * inner, box[lead + 1][1] * inner)
+    strides = [math.prod(shape[axis + 1 :]) * stored.itemsize for axis in range(lead)]
+    for place in itertools.product(*(range(*span) for span in box[:lead])):
+        part = merged(out[tuple(at - span[0] for at, span in zip(place, box, strict=False))], 1)
+        assert part is not None
+        start = offset + sum(at * stride for at, stride in zip(place, strides, strict=True))
+        read_rows(descriptor, start, width, stored, box[lead], columns, part)
 
 
 def _scatter(descriptor: int, start: int, row_bytes: int, out: np.ndarray, *, together: bool) -> None:

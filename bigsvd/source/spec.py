@@ -2,14 +2,17 @@
 
 from __future__ import annotations
 
+import bisect
 from collections.abc import Callable
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Protocol, runtime_checkable
 
 import numpy as np
 
+from bigsvd.source.array_axes import ArrayAxes
 from bigsvd.source.names import Names
 from bigsvd.source.packing import Packing
+from bigsvd.source.unfolding import Unfolding
 from bigsvd.units import show_bytes, show_count
 
 if TYPE_CHECKING:
@@ -166,6 +169,11 @@ class MatrixSpec:
         The layout that the file was taken for, and what in it says so; empty for arrays in memory.
     row_names, column_names : Names or None
         Names along either axis, not read yet.
+    edges : pair of (tuple of int or None)
+        Where the chunks along rows and along columns begin, and the end, where they are of unequal size; None where
+        they follow from `chunks`, which then are the largest.
+    unfolding : Unfolding or None
+        How rows and columns stand for the axes of an array of more than two.
     """
 
     name: str
@@ -192,6 +200,16 @@ class MatrixSpec:
     marker: str = ""
     row_names: Names | None = None
     column_names: Names | None = None
+    edges: tuple[tuple[int, ...] | None, tuple[int, ...] | None] = (None, None)
+    unfolding: Unfolding | None = None
+
+    def whole_chunks(self, axis: int, start: int, stop: int) -> tuple[int, int]:
+        """The range of whole chunks that lines start … stop of an axis lie in."""
+        edges, side = self.edges[axis], self.shape[axis]
+        if edges is not None:
+            return edges[bisect.bisect_right(edges, start) - 1], edges[bisect.bisect_left(edges, stop)]
+        unit = min(self.chunks[axis], side)
+        return start // unit * unit, min(-(-stop // unit) * unit, side)
 
     @property
     def decoded_bytes(self) -> int:
@@ -229,6 +247,23 @@ class Source(Protocol):
 
     def close(self) -> None:
         """Release the file. Reading again opens it again."""
+        ...
+
+
+@runtime_checkable
+class ArraySource(Source, Protocol):
+    """An array of two or more axes that can be read in boxes, by several threads at once.
+
+    Of more than two axes its spec is that of the matrix whose rows are the first axis, and `read` is not offered.
+    """
+
+    @property
+    def axes(self) -> ArrayAxes:
+        """Its axes."""
+        ...
+
+    def read_box(self, box: tuple[tuple[int, int], ...], out: np.ndarray) -> None:
+        """Read a half-open box, a span for each axis, into `out` of its shape and of any strides; see `read`."""
         ...
 
 

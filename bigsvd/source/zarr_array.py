@@ -1,9 +1,11 @@
-"""A dense two-dimensional Zarr array, format 2 or 3, sharded or not, as a source."""
+"""A dense Zarr array of two or more axes, format 2 or 3, sharded or not, as a source."""
 
 from __future__ import annotations
 
+import math
 import os
 import threading
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -17,12 +19,16 @@ from bigsvd.source.fill import zarr_fill
 from bigsvd.source.packing import packing_cautions
 from bigsvd.source.persist import persist, refusal, unreadable
 from bigsvd.source.rectangle import (
+    Box,
     Span,
-    clip,
+    clip_box,
+    grid_shape,
+    require_box,
     require_rectangle,
     require_sizes,
     show_chunk,
     show_place,
+    sides_of,
     touched,
 )
 from bigsvd.source.spec import MatrixSpec
@@ -36,7 +42,7 @@ from bigsvd.source.zarr_walk import describe_zarr, stored_bytes
 from bigsvd.units import shell_word, show_shape
 
 MEANT = "write the array again with write_empty_chunks=True."
-_STATE = ("path", "inside", "access", "one_row", "spec", "stamps", "metadata", "_absent")
+_STATE = ("path", "inside", "access", "one_row", "spec", "axes", "stamps", "metadata", "_absent")
 
 
 class ZarrSource:
@@ -47,7 +53,7 @@ class ZarrSource:
     path : str
         Absolute path of a store: a directory or a zip file.
     inside : str
-        Path of a two-dimensional array of numbers inside it; empty where the store is that array.
+        Path of an array of numbers inside it, of two or more axes; empty where the store is that array.
     access : Access
         Whether chunks that were never written are filled, and links followed out of the store.
     one_row : bool
@@ -99,17 +105,18 @@ class ZarrSource:
                 evidence=[f"shape {show_shape(said.shape)}, {said.dtype}, {said.encoding}"],
                 remedy=f"See what else the store holds with: bigsvd inspect {shell_word(self.path)}",
             )
-        rows, columns = metadata.shape
-        chunks = metadata.chunks[0], metadata.chunks[1]
-        require_sizes((rows, columns), chunks, metadata.dtype.itemsize, name)
+        shape = metadata.shape
+        require_sizes(shape, metadata.chunks, metadata.dtype.itemsize, name)
         self.metadata: ZarrMetadata = metadata
+        unit = tuple(min(chunk, side) for chunk, side in zip(self._decoded_chunk, shape, strict=True))
+        self.axes = replace(said.axes, chunks=unit)
         marks = [self.path] if os.path.isfile(self.path) else self._mark_files()
         self.stamps = tuple(FileStamp.of(mark) for mark in marks)
         return MatrixSpec(
             name=name,
-            shape=(rows, columns),
+            shape=(shape[0], math.prod(shape[1:])),
             dtype=dtype,
-            chunks=(min(self._decoded_chunk[0], rows), min(self._decoded_chunk[1], columns)),
+            chunks=(unit[0], math.prod(unit[1:])),
             storage="zarr",
             encoding=said.encoding,
             decode_bytes=self._decode_bytes(metadata.dtype.itemsize),
@@ -137,15 +144,14 @@ class ZarrSource:
         return tuple(stage.name for stage in layout.stages) if layout is not None and self._direct else ("library",)
 
     @property
-    def _decoded_chunk(self) -> tuple[int, int]:
+    def _decoded_chunk(self) -> tuple[int, ...]:
         """What is read by itself: an inner chunk of a shard, which zarr-python is given whole."""
-        rows, columns = (self._direct and self.metadata.inner) or self.metadata.chunks
-        return rows, columns
+        return (self._direct and self.metadata.inner) or self.metadata.chunks
 
     def _decode_bytes(self, item: int) -> int:
         """Most bytes that a thread holds beside its panel."""
         index = self.metadata.index
-        chunk = self._decoded_chunk[0] * self._decoded_chunk[1] * item
+        chunk = math.prod(self._decoded_chunk) * item
         return decode_bytes(chunk) + (2 * index.bytes if index is not None else 0)
 
     def _mark_files(self) -> list[str]:
@@ -157,19 +163,18 @@ class ZarrSource:
         """Stamps of up to 64 chunk files spread over the array: enough to notice a store that was written again."""
         if os.path.isfile(self.path):
             return []
-        shape, chunks = self.metadata.shape, self.metadata.chunks
-        grid = [-(-side // chunk) for side, chunk in zip(shape, chunks, strict=True)]
-        numbers = sorted(set(np.linspace(0, grid[0] * grid[1] - 1, 64, dtype=np.int64).tolist()))
-        files = [os.path.join(self.path, self._key((n // grid[1], n % grid[1]))) for n in numbers]
+        grid = grid_shape(self.metadata.shape, self.metadata.chunks)
+        numbers = sorted(set(np.linspace(0, math.prod(grid) - 1, 64, dtype=np.int64).tolist()))
+        places = (tuple(map(int, np.unravel_index(number, grid))) for number in numbers)
+        files = [os.path.join(self.path, self._key(place)) for place in places]
         return [FileStamp.of(file) for file in files if os.path.isfile(file)]
 
     @property
-    def _chunks(self) -> tuple[int, int]:
-        """Unit of a stored key, which may reach past the matrix."""
-        rows, columns = self.metadata.chunks
-        return rows, columns
+    def _chunks(self) -> tuple[int, ...]:
+        """Unit of a stored key, which may reach past the array."""
+        return self.metadata.chunks
 
-    def _key(self, coordinates: tuple[int, int]) -> str:
+    def _key(self, coordinates: tuple[int, ...]) -> str:
         key = self.metadata.key(coordinates)
         return f"{self.inside}/{key}" if self.inside else key
 
@@ -210,25 +215,25 @@ class ZarrSource:
         self._library = python_reader(array)
         return self._library
 
-    def _accepted(self, chunk: tuple[int, int], inner: tuple[int, int] | None = None) -> np.generic | None:
+    def _accepted(self, chunk: tuple[int, ...], inner: tuple[int, ...] | None = None) -> np.generic | None:
         """Fill value of a chunk, or of one inside a shard, that was absent when the run began and may be; else None."""
         absent = self._absent
         if absent is None or not (chunk in absent if inner is None else absent.lacks(chunk, inner)):
             return None
         return self._fill_value()
 
-    def _by_library(self, rows: Span, columns: Span, out: np.ndarray) -> None:
+    def _by_library(self, box: Box, out: np.ndarray) -> None:
         """Read through zarr-python, which would answer an absent chunk with the fill value."""
         assert self.metadata.dtype is not None
         # It reads a value whole, however long; shards hold an index beside their chunks.
-        most = 2 * most_stored(self._chunks[0] * self._chunks[1] * self.metadata.dtype.itemsize) + 2**24
-        for coordinates in touched(rows, columns, self._chunks):
+        most = 2 * most_stored(math.prod(self._chunks) * self.metadata.dtype.itemsize) + 2**24
+        for coordinates in touched(box, self._chunks):
             size = self.keys.size(self._key(coordinates))
             if not size and self._accepted(coordinates) is None:
                 raise ChunkAbsentError(coordinates)
             if size and size > most:
                 raise ChunkError(coordinates, f"no codec makes so many of a chunk; {most:,} are the most that is read")
-        (self._library or self._open_library())(rows, columns, out)
+        (self._library or self._open_library())(box, out)
 
     def _unknown(self, error: Exception) -> UnsupportedMatrixError:
         return UnsupportedMatrixError(
@@ -240,46 +245,55 @@ class ZarrSource:
     def read(self, rows: Span, columns: Span, out: np.ndarray) -> None:
         """Read the half-open rectangle rows × columns into `out`; see `Source.read`."""
         require_rectangle(self.spec, rows, columns, out)
+        self.read_box((rows, columns), out)
+
+    def read_box(self, box: Box, out: np.ndarray) -> None:
+        """Read a half-open box into `out`; see `ArraySource.read_box`."""
+        require_box(self.axes.shape, self.spec.dtype, box, out)
         if out.size == 0:
             return
         reader = self._opened()
         try:
-            persist(lambda: reader(rows, columns, out))
+            persist(lambda: reader(box, out))
         except Exception as error:  # codecs come from other packages and raise what they like
             self._require_unchanged()
             if isinstance(error, (BigsvdError, MemoryError)):
                 raise
             kept_back = refusal(error)
             if kept_back is not None:
-                raise self._unreadable(rows, columns, error, kept_back) from error
-            raise self._damage(reader, rows, columns, error) from error
+                raise self._unreadable(box, error, kept_back) from error
+            raise self._damage(reader, box, error) from error
         self._require_unchanged()
 
     def announce(self, rows: Span, columns: Span) -> None:
         """Have the system fetch a rectangle that will be read soon; where zarr-python reads, nothing is done."""
+        self.announce_box((rows, columns))
+
+    def announce_box(self, box: Box) -> None:
+        """Have the system fetch a box that will be read soon; where zarr-python reads, nothing is done."""
         self._opened()
         if self._files is not None:
-            self._files.announce(rows, columns)
+            self._files.announce(box)
 
     def _require_unchanged(self) -> None:
         for stamp in self.stamps:
             stamp.require_unchanged()
 
-    def _unreadable(self, rows: Span, columns: Span, error: Exception, why: OSError) -> SourceError:
-        place = [show_place(rows, columns)]
+    def _unreadable(self, box: Box, error: Exception, why: OSError) -> SourceError:
+        place = [show_place(*box)]
         if isinstance(error, ChunkError):
-            chunk = show_chunk(error.coordinates, self.spec.shape, self._chunks)
+            chunk = show_chunk(error.coordinates, self.axes.shape, self._chunks)
             place = [f"{chunk}; key {self._key(error.coordinates)}", *error.evidence]
         return unreadable(self.spec.name, place, why)
 
-    def _damage(self, reader: Reader, rows: Span, columns: Span, error: Exception) -> DamagedSourceError:
-        """Name the first chunk of the rectangle that is absent or does not decode, and say what is wrong with it."""
-        found = error if isinstance(error, ChunkError) else self._search(reader, rows, columns, error)
+    def _damage(self, reader: Reader, box: Box, error: Exception) -> DamagedSourceError:
+        """Name the first chunk of the box that is absent or does not decode, and say what is wrong with it."""
+        found = error if isinstance(error, ChunkError) else self._search(reader, box, error)
         if found is None:
-            evidence = [show_place(rows, columns), f"zarr says: {error}"]
+            evidence = [show_place(*box), f"zarr says: {error}"]
         else:
             key = self._key(found.coordinates)
-            place = show_chunk(found.coordinates, self.spec.shape, self._chunks)
+            place = show_chunk(found.coordinates, self.axes.shape, self._chunks)
             if isinstance(found, ChunkAbsentError):
                 absent = [f"{place}; key {key}", *found.evidence]
                 return absent_error(self.spec, "a chunk is absent", absent, MEANT)
@@ -290,17 +304,16 @@ class ZarrSource:
             remedy="Copy that chunk again from the origin of the store, or write the array again.",
         )
 
-    def _search(self, reader: Reader, rows: Span, columns: Span, error: Exception) -> ChunkError | None:
+    def _search(self, reader: Reader, box: Box, error: Exception) -> ChunkError | None:
         """Read chunk by chunk, since zarr-python does not tell which one it failed at."""
         chunks = self._chunks
-        for i, j in touched(rows, columns, chunks):
-            part_rows, part_columns = clip(i, chunks[0], rows), clip(j, chunks[1], columns)
-            part = np.empty((part_rows[1] - part_rows[0], part_columns[1] - part_columns[0]), self.spec.dtype)
+        for place in touched(box, chunks):
+            part = clip_box(place, chunks, box)
             try:
-                reader(part_rows, part_columns, part)
+                reader(part, np.empty(sides_of(part), self.spec.dtype))
             except Exception as first:
-                decoded = chunks[0] * chunks[1] * self.spec.dtype.itemsize
-                return ChunkError((i, j), f"a chunk has {decoded:,} bytes decoded", f"zarr says: {first}")
+                decoded = math.prod(chunks) * self.spec.dtype.itemsize
+                return ChunkError(place, f"a chunk has {decoded:,} bytes decoded", f"zarr says: {first}")
         return None
 
     def require_complete(self) -> None:
@@ -314,7 +327,7 @@ class ZarrSource:
             raise DamagedSourceError(
                 f"{self.spec.name} is not complete: none of {absent.keys.size:,} chunks is stored under the key that"
                 " the metadata give",
-                evidence=[f"{self._key((0, 0))} is wanted; there are {', '.join(others)}"],
+                evidence=[f"{self._key((0,) * len(self._chunks))} is wanted; there are {', '.join(others)}"],
                 remedy="Correct the dimension separator in the metadata, or copy the store again.",
             )
         if self.metadata.inner is not None and self.metadata.index is None and not self.access.fills:
@@ -324,7 +337,7 @@ class ZarrSource:
                 remedy="Write the array again with plain shards, or add --absent fill to take the fill value for any.",
             )
         count, total, places = count_absent_chunks(absent, self.keys, self._key, self.metadata)
-        first = [f"{words}{show_chunk(place, self.spec.shape, self._chunks)}" for words, place in places]
+        first = [f"{words}{show_chunk(place, self.axes.shape, self._chunks)}" for words, place in places]
         self.spec = settle_absent(self.spec, count, total, first, self.access, self._fill_value, MEANT)
         if count:
             self._absent = absent

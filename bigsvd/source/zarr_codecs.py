@@ -110,7 +110,7 @@ def layout_2(document: dict[str, Any], dtype: np.dtype | None) -> ChunkLayout | 
 def layout_3(steps: Sequence[dict[str, Any]], dtype: np.dtype | None) -> ChunkLayout | None:
     """Layout that the codecs of one chunk in format 3 describe; None where any of them is not known here.
 
-    First come turns of the axes, of which one is known, then ``bytes``, then codecs from bytes to bytes.
+    First come turns of the axes, of which the reversal is known, then ``bytes``, then codecs from bytes to bytes.
     """
     named = [(step["name"], step.get("configuration") or {}) for step in steps]
     names = [name for name, _ in named]
@@ -120,11 +120,13 @@ def layout_3(steps: Sequence[dict[str, Any]], dtype: np.dtype | None) -> ChunkLa
     orders = [options.get("order") for _, options in named[:middle]]
     endian = named[middle][1].get("endian", "little")
     stages = _stages(named[middle + 1 :], _FORMAT_3)
-    if names[:middle] not in ([], ["transpose"]) or orders not in ([], [[0, 1]], [[1, 0]]):
+    turned = orders[0] if orders and isinstance(orders[0], list) else []
+    as_it_was, reversed_ = list(range(len(turned))), list(range(len(turned)))[::-1]
+    if names[:middle] not in ([], ["transpose"]) or turned not in (as_it_was, reversed_) or (orders and not turned):
         return None
     if stages is None or endian not in ("little", "big"):
         return None
-    return ChunkLayout(dtype.newbyteorder("<" if endian == "little" else ">"), orders == [[1, 0]], stages)
+    return ChunkLayout(dtype.newbyteorder("<" if endian == "little" else ">"), turned != as_it_was, stages)
 
 
 def _plain(dtype: np.dtype | None) -> TypeGuard[np.dtype]:

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
-from typing import Any
 
 import numpy as np
 
@@ -19,35 +19,41 @@ def absent_keys(keys: KeyStore, at: str, metadata: ZarrMetadata) -> np.ndarray:
 
     Returns
     -------
-    ndarray of bool, shape (chunk rows, chunk columns)
+    ndarray of bool, shape of the chunk grid
         True where no value is stored, or an empty one.
     """
-    rows, columns = metadata.shape
-    grid = grid_shape((rows, columns), (metadata.chunks[0], metadata.chunks[1]))
+    grid = grid_shape(metadata.shape, metadata.chunks)
     require_countable(grid, f"{keys.path}/{at}".rstrip("/"))
     absent = np.ones(grid, np.bool_)
     folder = "/".join(part for part in (at, metadata.prefix.rstrip("/") if "/" in metadata.prefix else "") if part)
-    if metadata.one_row:
-        start = "" if "/" in metadata.prefix else metadata.prefix
-        found = (pair for pair in keys.children(folder) if pair[0].startswith(start))
-        _note(absent[0], ((name.removeprefix(start), is_file) for name, is_file in found))
-    elif metadata.separator == "/":
-        for row, is_file in keys.children(folder):
-            if not is_file and row.isdecimal() and int(row) < absent.shape[0]:
-                _note(absent[int(row)], keys.children(f"{folder}/{row}" if folder else row))
-    else:
-        start = "" if "/" in metadata.prefix else metadata.prefix
-        for name, is_file in keys.children(folder):
-            row, _, column = name.removeprefix(start).partition(metadata.separator)
-            if is_file and name.startswith(start) and row.isdecimal() and int(row) < absent.shape[0]:
-                _note(absent[int(row)], [(column, is_file)])
+    if metadata.separator == "/" and not metadata.one_row:
+        _note_below(absent, keys, folder)
+        return absent
+    start = "" if "/" in metadata.prefix else metadata.prefix
+    # The first axis of a list that is shown as one row is in no name.
+    axes = slice(int(metadata.one_row), None)
+    for name, is_file in keys.children(folder):
+        place = name.removeprefix(start).split(metadata.separator)
+        known = is_file and name.startswith(start) and len(place) == len(grid[axes])
+        if known and all(_within(at, side) for at, side in zip(place, grid[axes], strict=True)):
+            absent[(*(0,) * metadata.one_row, *map(int, place))] = False
     return absent
 
 
-def _note(absent_row: np.ndarray, names: Any) -> None:
-    for column, is_file in names:
-        if is_file and column.isdecimal() and int(column) < len(absent_row):
-            absent_row[int(column)] = False
+def _note_below(absent: np.ndarray, keys: KeyStore, folder: str) -> None:
+    """Mark what is there below a folder, whose names count along the first axis."""
+    for name, is_file in keys.children(folder):
+        if not _within(name, len(absent)) or is_file != (absent.ndim == 1):
+            continue
+        if is_file:
+            absent[int(name)] = False
+        else:
+            _note_below(absent[int(name)], keys, f"{folder}/{name}" if folder else name)
+
+
+def _within(name: str, side: int) -> bool:
+    """Whether a name is the number of a chunk along an axis with so many."""
+    return name.isdecimal() and int(name) < side
 
 
 def other_names(keys: KeyStore, at: str) -> list[str]:
@@ -61,7 +67,7 @@ class AbsentChunks:
 
     Attributes
     ----------
-    keys : ndarray of bool, shape (chunk rows, chunk columns)
+    keys : ndarray of bool, shape of the chunk grid
         Of chunks or, of sharded arrays, of whole shards.
     inside : dict
         By coordinates of a shard, which of its inner chunks are; of those shards only that lack any.
@@ -69,37 +75,36 @@ class AbsentChunks:
 
     def __init__(self, keys: np.ndarray) -> None:
         self.keys = keys
-        self.inside: dict[tuple[int, int], np.ndarray] = {}
+        self.inside: dict[tuple[int, ...], np.ndarray] = {}
 
-    def __contains__(self, place: tuple[int, int]) -> bool:
+    def __contains__(self, place: tuple[int, ...]) -> bool:
         return bool(self.keys[place])
 
-    def lacks(self, shard: tuple[int, int], inner: tuple[int, int]) -> bool:
+    def lacks(self, shard: tuple[int, ...], inner: tuple[int, ...]) -> bool:
         """Whether a chunk inside a shard was found absent."""
         marked = self.inside.get(shard)
         return self.keys[shard] or (marked is not None and bool(marked[inner]))
 
 
 def count_absent_chunks(
-    absent: AbsentChunks, keys: KeyStore, key_of: Callable[[tuple[int, int]], str], metadata: ZarrMetadata
-) -> tuple[int, int, list[tuple[str, tuple[int, int]]]]:
+    absent: AbsentChunks, keys: KeyStore, key_of: Callable[[tuple[int, ...]], str], metadata: ZarrMetadata
+) -> tuple[int, int, list[tuple[str, tuple[int, ...]]]]:
     """Count the chunks that are absent, those inside shards too, which are marked.
 
     Returns
     -------
     count, of : int
         Absent ones, and all there should be.
-    places : list of (str, (int, int))
+    places : list of (str, tuple of int)
         Of the first: what lacks, in words, and the chunk or shard where it does.
     """
-    places: list[tuple[str, tuple[int, int]]]
+    places: list[tuple[str, tuple[int, ...]]]
     if metadata.inner is None:
         places = [("", place) for place in first_places(absent.keys)]
         return int(absent.keys.sum()), absent.keys.size, places
     count, of, places = 0, 0, []
-    for row, column in np.ndindex(absent.keys.shape):
-        shard, (rows, columns) = (row, column), inner_grid(metadata, (row, column))
-        missing, words = rows * columns, "the shard of "
+    for shard in np.ndindex(absent.keys.shape):
+        missing, words = math.prod(inner_grid(metadata, shard)), "the shard of "
         of += missing
         if not absent.keys[shard]:
             marked = absent_inside(keys, key_of(shard), shard, metadata)
@@ -113,7 +118,7 @@ def count_absent_chunks(
     return count, of, places
 
 
-def absent_inside(keys: KeyStore, key: str, place: tuple[int, int], metadata: ZarrMetadata) -> np.ndarray:
+def absent_inside(keys: KeyStore, key: str, place: tuple[int, ...], metadata: ZarrMetadata) -> np.ndarray:
     """Mark the inner chunks that the index of a shard names as never written; it is checked when the shard is read."""
     index = metadata.index
     used = inner_grid(metadata, place)
@@ -122,15 +127,14 @@ def absent_inside(keys: KeyStore, key: str, place: tuple[int, int], metadata: Za
     raw = keys.part(key, -index.bytes if index.at_end else 0, index.bytes)
     if len(raw) < index.bytes:
         return np.zeros(used, np.bool_)
-    return index.absent(index.table(np.frombuffer(raw, np.uint8)))[: used[0], : used[1]]
+    return index.absent(index.table(np.frombuffer(raw, np.uint8)))[tuple(slice(side) for side in used)]
 
 
-def inner_grid(metadata: ZarrMetadata, place: tuple[int, int]) -> tuple[int, int]:
-    """How many of a shard's inner chunks lie in the matrix, along each axis."""
-    rows, columns = (
+def inner_grid(metadata: ZarrMetadata, place: tuple[int, ...]) -> tuple[int, ...]:
+    """How many of a shard's inner chunks lie in the array, along each axis."""
+    return tuple(
         -(-min(outer, side - position * outer) // part)
         for outer, part, side, position in zip(
             metadata.chunks, metadata.inner or metadata.chunks, metadata.shape, place, strict=True
         )
     )
-    return rows, columns

@@ -20,11 +20,11 @@ from bigsvd.source.chunk_decoder import ChunkDecoder, ChunkError
 from bigsvd.source.codecs import FramingUnknownError
 from bigsvd.source.persist import persist
 from bigsvd.source.positional import announce
-from bigsvd.source.rectangle import Span, clip, overlap, touched
+from bigsvd.source.rectangle import Box, clip_box, inside, touched
 from bigsvd.source.workspace import Workspace, Workspaces
 from bigsvd.source.zarr_metadata import ZarrMetadata
 
-Fill = Callable[[Span, Span, np.ndarray], None]
+Fill = Callable[[Box, np.ndarray], None]
 
 
 class ChunkAbsentError(ChunkError):
@@ -34,17 +34,17 @@ class ChunkAbsentError(ChunkError):
 class Accepted(Protocol):
     """Which chunks may be absent."""
 
-    def __call__(self, chunk: tuple[int, int], inner: tuple[int, int] | None = None) -> np.generic | None:
+    def __call__(self, chunk: tuple[int, ...], inner: tuple[int, ...] | None = None) -> np.generic | None:
         """Value of an absent chunk, or of one inside a shard by its place there; None where it must be there."""
         ...
 
 
-def _none_accepted(chunk: tuple[int, int], inner: tuple[int, int] | None = None) -> np.generic | None:
+def _none_accepted(chunk: tuple[int, ...], inner: tuple[int, ...] | None = None) -> np.generic | None:
     return None
 
 
 class ZarrFiles:
-    """Reads rectangles of an array whose chunks are files in a directory.
+    """Reads boxes of an array whose chunks are files in a directory.
 
     Parameters
     ----------
@@ -60,7 +60,7 @@ class ZarrFiles:
 
     def __init__(
         self,
-        opened: Callable[[tuple[int, int]], int],
+        opened: Callable[[tuple[int, ...]], int],
         metadata: ZarrMetadata,
         library: Fill,
         accepted: Accepted = _none_accepted,
@@ -71,34 +71,33 @@ class ZarrFiles:
         self._open = opened
         self._accepted = accepted
         self._library = library
-        self._chunks = metadata.chunks[0], metadata.chunks[1]
+        self._chunks = metadata.chunks
         self._index = metadata.index
-        inner = metadata.inner or metadata.chunks
-        self._inner = inner[0], inner[1]
+        self._inner = metadata.inner or metadata.chunks
         self._decoder = ChunkDecoder(layout.stages, layout.dtype, self._inner, column_major=layout.column_major)
         self._workspaces = Workspaces()
 
-    def fill(self, rows: Span, columns: Span, out: np.ndarray) -> None:
-        """Decode all chunks that a rectangle touches into a buffer."""
+    def fill(self, box: Box, out: np.ndarray) -> None:
+        """Decode all chunks that a box touches into a buffer."""
         with self._workspaces.lent() as workspace:
-            for i, j in touched(rows, columns, self._chunks):
-                part_rows, part_columns = clip(i, self._chunks[0], rows), clip(j, self._chunks[1], columns)
-                part = out[_from(rows, part_rows), _from(columns, part_columns)]
+            for place in touched(box, self._chunks):
+                part = out[inside(place, self._chunks, box)[1]]
+                clipped = clip_box(place, self._chunks, box)
                 try:
                     # A handle that a server forgot is opened anew with the chunk.
-                    persist(partial(self._read, i, j, part_rows, part_columns, part, workspace))
+                    persist(partial(self._read, place, clipped, part, workspace))
                 except FramingUnknownError:
-                    self._library(part_rows, part_columns, part)
+                    self._library(clipped, part)
                 except (ChunkError, BigsvdError, MemoryError):
                     raise
                 except Exception as error:  # every codec raises what it likes
-                    raise ChunkError((i, j), *self._expected(), f"decoding says: {error}") from error
+                    raise ChunkError(place, *self._expected(), f"decoding says: {error}") from error
 
-    def announce(self, rows: Span, columns: Span) -> None:
-        """Have the system fetch the files that a rectangle touches; parts of shards are found while they are read."""
+    def announce(self, box: Box) -> None:
+        """Have the system fetch the files that a box touches; parts of shards are found while they are read."""
         if self._index is not None:
             return
-        for chunk in touched(rows, columns, self._chunks):
+        for chunk in touched(box, self._chunks):
             # Whoever reads it says what is wrong with it.
             with contextlib.suppress(OSError):
                 descriptor = self._open(chunk)
@@ -107,68 +106,61 @@ class ZarrFiles:
                 finally:
                     os.close(descriptor)
 
-    def _read(self, i: int, j: int, rows: Span, columns: Span, out: np.ndarray, workspace: Workspace) -> None:
+    def _read(self, place: tuple[int, ...], box: Box, out: np.ndarray, workspace: Workspace) -> None:
         try:
-            descriptor = self._open((i, j))
+            descriptor = self._open(place)
         except (FileNotFoundError, NotADirectoryError):
-            value = self._accepted((i, j))
+            value = self._accepted(place)
             if value is None:
-                raise ChunkAbsentError((i, j)) from None
+                raise ChunkAbsentError(place) from None
             out[...] = value
             return
         try:
             found = os.fstat(descriptor)
             # What stands there in its place was not left out on purpose.
             if not stat.S_ISREG(found.st_mode):
-                raise ChunkAbsentError((i, j), "what stands in its place is no file")
+                raise ChunkAbsentError(place, "what stands in its place is no file")
             if not found.st_size:
-                raise ChunkError((i, j), *self._expected(), "its file is empty: a copy that was never finished")
+                raise ChunkError(place, *self._expected(), "its file is empty: a copy that was never finished")
             if self._index is None:
-                self._decode(descriptor, 0, found.st_size, (i, j), rows, columns, out, workspace)
+                self._decode(descriptor, 0, found.st_size, place, box, out, workspace)
             else:
-                self._read_shard(descriptor, found.st_size, (i, j), rows, columns, out, workspace)
+                self._read_shard(descriptor, found.st_size, place, box, out, workspace)
         finally:
             os.close(descriptor)
 
     def _read_shard(
-        self, descriptor: int, size: int, shard: tuple[int, int], rows: Span, columns: Span, out: np.ndarray,
-        workspace: Workspace,
-    ) -> None:  # fmt: skip
+        self, descriptor: int, size: int, shard: tuple[int, ...], box: Box, out: np.ndarray, workspace: Workspace
+    ) -> None:
         """Decode the inner chunks that are wanted, each by itself."""
         assert self._index is not None
         table = self._index.read(descriptor, size)
-        first = shard[0] * self._chunks[0] // self._inner[0], shard[1] * self._chunks[1] // self._inner[1]
-        for i, j in touched(rows, columns, self._inner):
-            inner = i - first[0], j - first[1]
+        first = [at * outer // part for at, outer, part in zip(shard, self._chunks, self._inner, strict=True)]
+        for chunk in touched(box, self._inner):
+            inner = tuple(at - start for at, start in zip(chunk, first, strict=True))
             place = self._index.place(table, inner, size)
-            part_rows, part_columns = clip(i, self._inner[0], rows), clip(j, self._inner[1], columns)
-            part = out[_from(rows, part_rows), _from(columns, part_columns)]
+            clipped = clip_box(chunk, self._inner, box)
+            part = out[inside(chunk, self._inner, box)[1]]
             if place is None:
                 value = self._accepted(shard, inner)
                 if value is None:
-                    raise ChunkAbsentError(shard, f"the inner chunk {inner[0]}, {inner[1]} of its shard")
+                    raise ChunkAbsentError(shard, f"the inner chunk {', '.join(map(str, inner))} of its shard")
                 part[...] = value
                 continue
             try:
-                self._decode(descriptor, *place, (i, j), part_rows, part_columns, part, workspace)
+                self._decode(descriptor, *place, chunk, clipped, part, workspace)
             except (FramingUnknownError, MemoryError):
                 raise
             except Exception as error:  # every codec raises what it likes
-                where = f"inner chunk ({inner[0]}, {inner[1]}), {place[1]:,} bytes at byte {place[0]:,}"
+                where = f"inner chunk ({', '.join(map(str, inner))}), {place[1]:,} bytes at byte {place[0]:,}"
                 raise ChunkError(shard, where, *self._expected(), f"decoding says: {error}") from error
 
     def _decode(
-        self, descriptor: int, offset: int, size: int, chunk: tuple[int, int], rows: Span, columns: Span,
-        out: np.ndarray, workspace: Workspace,
+        self, descriptor: int, offset: int, size: int, chunk: tuple[int, ...], box: Box, out: np.ndarray,
+        workspace: Workspace,
     ) -> None:  # fmt: skip
-        inner_rows, _ = overlap(chunk[0], self._inner[0], rows)
-        inner_columns, _ = overlap(chunk[1], self._inner[1], columns)
-        self._decoder.read(descriptor, offset, size, inner_rows, inner_columns, out, workspace)
+        part, _ = inside(chunk, self._inner, box)
+        self._decoder.read(descriptor, offset, size, part, out, workspace)
 
     def _expected(self) -> tuple[str, ...]:
         return (f"a chunk has {self._decoder.bytes:,} bytes decoded",)
-
-
-def _from(whole: Span, part: Span) -> slice:
-    """Where a part of a span lies in the buffer of the whole."""
-    return slice(part[0] - whole[0], part[1] - whole[0])

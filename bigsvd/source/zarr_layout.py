@@ -37,12 +37,16 @@ def zarr_axes(keys: KeyStore, inside: str, shape: tuple[int, ...], *, follow: bo
     """
     try:
         above = _groups_above(keys, inside)
-        return (
+        found = (
             _annotated(keys, inside, shape, follow, above)
             or _pyramid(inside, shape, above)
             or _dimensions(keys, inside, shape, follow)
             or _plain(keys, inside, shape, follow)
         )
+        array = read_metadata(keys, inside)
+        if found.axis_names or array is None or len(array.dimension_names) != len(shape):
+            return found
+        return found.called([name[:LONGEST_WORD] if isinstance(name, str) else "" for name in array.dimension_names])
     except SourceError:
         # A marker that cannot be read is no marker; the matrix itself may be fine.
         return Axes("plain Zarr", "markers around it cannot be read")
@@ -96,7 +100,10 @@ def _pyramid(inside: str, shape: tuple[int, ...], above: Above) -> Axes | None:
             level = found.paths.index(at)
             said = f"level {level} of {len(found.paths)} of the image at {'/' + base}, {found.marker}"
             axes = f"; axes {' '.join(found.axes)}" if found.axes else ""
-            return Axes.of(LABELS if _labels(attributes, base) else "OME-Zarr", said + axes, shape=shape)
+            called = found.axes if len(found.axes) == len(shape) else ()
+            votes = votes_of_dimensions(called, found.marker)
+            layout = LABELS if _labels(attributes, base) else "OME-Zarr"
+            return Axes.of(layout, said + axes, votes, shape=shape).called(called)
     return None
 
 
@@ -164,7 +171,7 @@ def _dimensions(keys: KeyStore, inside: str, shape: tuple[int, ...], follow: boo
         taken = name is not None and "/" not in name and coordinate != inside
         names.append(_names(keys, coordinate, follow) if taken else None)
     said = [name and name[:LONGEST_WORD] for name in called]
-    votes = votes_of_dimensions(said, marker) if len(shape) == 2 else []
+    votes = votes_of_dimensions(said, marker)
     words = f"{marker} {' × '.join(name or '?' for name in said)}"
     return Axes.of("Zarr with named dimensions (xarray)", words, votes, names, shape=shape)
 

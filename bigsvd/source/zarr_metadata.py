@@ -41,9 +41,9 @@ class ZarrMetadata:
     fill : object
         What an absent chunk is read as.
     prefix, separator : str
-        A chunk is stored under prefix + i + separator + j.
+        A chunk is stored under prefix + i + separator + j …
     column_major, big_endian : bool
-        Whether entries of a chunk lie column by column, and with their highest byte first.
+        Whether entries of a chunk lie in Fortran order, and with their highest byte first.
     codecs : tuple of str
     attributes : dict
     dimension_names : tuple of str or None
@@ -87,7 +87,7 @@ class ZarrMetadata:
             one_row=True,
         )
 
-    def key(self, coordinates: tuple[int, int]) -> str:
+    def key(self, coordinates: tuple[int, ...]) -> str:
         """Key of a chunk, below the array."""
         return self.prefix + self.separator.join(map(str, coordinates[int(self.one_row) :]))
 

@@ -55,6 +55,14 @@ class ZarrNames:
         else:
             yield lambda start, stop: to_text(take(start, stop))
 
+    def values(self) -> np.ndarray | None:
+        """What is stored, where that is a list of numbers; see `ValueStore`."""
+        keys = open_keys(self.path, follow=self.follow)
+        found = _listed(keys, self.inside)
+        if self.categories or found.dtype is None or found.dtype.kind not in "biuf":
+            return None
+        return np.asarray(_reader(keys, self.inside)(0, found.shape[0]))
+
 
 def zarr_names(keys: KeyStore, inside: str, *, follow: bool = False) -> Names:
     """Say where the names under a path of a store are; they are not read.

@@ -1,4 +1,4 @@
-"""Rectangles of a Zarr array read through zarr-python, where its codecs are not all known here."""
+"""Boxes of a Zarr array read through zarr-python, where its codecs are not all known here."""
 
 from __future__ import annotations
 
@@ -8,10 +8,10 @@ from typing import Any
 
 import numpy as np
 
-from bigsvd.source.rectangle import Span
+from bigsvd.source.rectangle import Box
 from bigsvd.source.zarr_store import KeyStore, ZipKeys
 
-Reader = Callable[[Span, Span, np.ndarray], None]
+Reader = Callable[[Box, np.ndarray], None]
 
 
 def open_zarr(keys: KeyStore, inside: str, zarr_format: int) -> Any:
@@ -33,9 +33,10 @@ def python_reader(array: Any) -> Reader:
     wrap = default_buffer_prototype().nd_buffer.from_numpy_array
     pair = array.dtype.names
 
-    def read(rows: Span, columns: Span, out: np.ndarray) -> None:
-        selection: tuple[slice, ...] = (slice(*rows), slice(*columns))
+    def read(box: Box, out: np.ndarray) -> None:
+        selection = tuple(slice(*span) for span in box)
         if len(array.shape) == 1:
+            # A list, shown as a matrix of one row.
             selection, out = selection[1:], out[0]
         if pair:
             values = array[selection]

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import os
 from dataclasses import dataclass
 from typing import Any
@@ -21,7 +22,7 @@ class ShardIndex:
 
     Attributes
     ----------
-    sides : (int, int)
+    sides : tuple of int
         Inner chunks along each axis of a shard; of a list of numbers, (1, how many).
     checked : bool
         Whether a CRC-32C stands behind it.
@@ -29,7 +30,7 @@ class ShardIndex:
         Whether it is the last of the file, or the first.
     """
 
-    sides: tuple[int, int]
+    sides: tuple[int, ...]
     checked: bool
     at_end: bool
 
@@ -40,7 +41,7 @@ class ShardIndex:
         names = [name for name, _ in steps]
         if len(outer) == len(inner) == 1:
             outer, inner = (1, *outer), (1, *inner)
-        whole = len(outer) == len(inner) == 2 and all(
+        whole = len(outer) == len(inner) and all(
             part > 0 and side % part == 0 for side, part in zip(outer, inner, strict=True)
         )
         location = shard.get("index_location", "end")
@@ -48,15 +49,16 @@ class ShardIndex:
             return None
         if steps[0][1].get("endian", "little") != "little":
             return None
-        return cls((outer[0] // inner[0], outer[1] // inner[1]), len(names) == 2, location == "end")
+        sides = tuple(side // part for side, part in zip(outer, inner, strict=True))
+        return cls(sides, len(names) == 2, location == "end")
 
     @property
     def bytes(self) -> int:
         """Bytes of the index, its checksum included."""
-        return 16 * self.sides[0] * self.sides[1] + 4 * self.checked
+        return 16 * math.prod(self.sides) + 4 * self.checked
 
     def read(self, descriptor: int, size: int) -> np.ndarray:
-        """Read and check the index of a shard of so many bytes; shape (rows, columns, 2) of inner chunks."""
+        """Read and check the index of a shard of so many bytes; of shape (*sides, 2)."""
         if size < self.bytes:
             raise ValueError(f"the shard has {size:,} bytes, its index alone {self.bytes:,}")
         start = size - self.bytes if self.at_end else 0
@@ -71,10 +73,10 @@ class ShardIndex:
         return self.table(raw)
 
     def table(self, raw: np.ndarray) -> np.ndarray:
-        """Offsets and sizes in an index as it is stored, shape (rows, columns, 2) of inner chunks."""
-        return raw[: 16 * self.sides[0] * self.sides[1]].view("<u8").reshape(*self.sides, 2)
+        """Offsets and sizes in an index as it is stored, of shape (*sides, 2)."""
+        return raw[: 16 * math.prod(self.sides)].view("<u8").reshape(*self.sides, 2)
 
-    def place(self, table: np.ndarray, inner: tuple[int, int], size: int) -> tuple[int, int] | None:
+    def place(self, table: np.ndarray, inner: tuple[int, ...], size: int) -> tuple[int, int] | None:
         """Offset and size of one inner chunk in a shard of so many bytes; None where it was never written."""
         offset, length = (int(number) for number in table[inner])
         if offset == length == _ABSENT:
@@ -86,5 +88,5 @@ class ShardIndex:
         return offset, length
 
     def absent(self, table: np.ndarray) -> np.ndarray:
-        """Mark the inner chunks that were never written; shape (rows, columns) of inner chunks."""
-        return np.asarray(np.all(table == np.uint64(_ABSENT), axis=2))
+        """Mark the inner chunks that were never written; of shape `sides`."""
+        return np.asarray(np.all(table == np.uint64(_ABSENT), axis=-1))

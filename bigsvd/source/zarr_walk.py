@@ -80,7 +80,7 @@ def _linked(keys: KeyStore, link: str) -> Candidate:
 
 def count_absent(keys: KeyStore, path: str, array: ZarrMetadata) -> int | None:
     """How many chunks were never written; None where there are too many to be looked for."""
-    if math.prod(grid_shape((array.shape[0], array.shape[1]), (array.chunks[0], array.chunks[1]))) > 10_000:
+    if math.prod(grid_shape(array.shape, array.chunks)) > 10_000:
         return None
     at = f"{path}/" if path else ""
     absent = AbsentChunks(absent_keys(keys, path, array))

@@ -126,9 +126,8 @@ class PanelReader:
     def decoded(self, panel: int) -> int:
         """Bytes decoded to read a panel: more than its own where it is part of a chunk."""
         start, stop = self.geometry.edges[panel : panel + 2]
-        unit = min(self.source.spec.chunks[self.geometry.axis], self.geometry.lines)
-        lines = min(-(-stop // unit) * unit, self.geometry.lines) - start // unit * unit
-        return lines * self.geometry.across * self.dtype.itemsize
+        first, last = self.source.spec.whole_chunks(self.geometry.axis, start, stop)
+        return (last - first) * self.geometry.across * self.dtype.itemsize
 
     def forget(self) -> None:
         """Drop the kept panels."""

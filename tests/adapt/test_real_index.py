@@ -15,7 +15,7 @@ from bigsvd.source import check_complete, find_names, open_source
 # What is said of each trap of the folder's own list: words of the refusal, or of what is known of the matrix.
 TRAPS = {
     ("tiny_huge_1d_over_maxint.hdf5", "huge_1d"): "1-D, and a matrix has 2 axes",
-    ("bitshuffle.h5", "/entry/data/data"): "3-D, and a matrix has 2 axes",
+    ("bitshuffle.h5", "/entry/data/data"): "3-D, and nothing says which of its axes are the samples",
     ("float.h5", "/float16"): "opens as float16",
     ("float.h5", "/longdouble"): "opens as float64; entries stored as float128 are read in double precision",
     ("float.h5", "/quadprecision"): "Insufficient precision in available types",
@@ -31,12 +31,12 @@ TRAPS = {
     ("test.loom", "/matrix"): "samples columns",
     ("test_10X_cellranger3.h5", "/matrix"): "sparse by rows, 1,405 entries (14.1 %)",
     ("adata.h5ad", "/raw.X"): "sparse by rows, 174,400 entries (32.6 %)",
-    ("test_odd_datasets_latest.hdf5", "/8D_int16"): "8-D, and a matrix has 2 axes",
+    ("test_odd_datasets_latest.hdf5", "/8D_int16"): "8-D, and nothing says which of its axes are the samples",
     ("array_blosc.zarr", ""): "described by zarr.json; a .zarray lies beside it",
     ("hierarchy.zarr", "a/foo"): "100 of 100 chunks are absent",
     ("bitround_float32.zarr", ""): "bitround",
     ("array_optional.zarr", "array"): "the type 'optional'",
-    ("image-04.zarr", ""): "holds no matrix that can be read",
+    ("image-04.zarr", ""): "nothing says which of its axes are the samples",
 }
 
 

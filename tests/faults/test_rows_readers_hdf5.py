@@ -292,7 +292,7 @@ def test_32_a_group_or_a_choice_lists_what_there_is(scene: Scene) -> None:
         (h5py.Empty("f8"), "it holds no values"),
         (np.zeros((0, 5)), "it is empty"),
         (np.zeros((5, 0)), "it is empty"),
-        (np.zeros((3, 4, 5)), "3-D, and a matrix has 2 axes"),
+        (np.zeros((3, 4, 5)), "3-D, and nothing says which of its axes are the samples"),
     ],
 )
 def test_33_shapes_that_are_no_matrix_are_refused(scene: Scene, values: object, words: str) -> None:

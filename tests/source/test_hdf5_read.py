@@ -78,8 +78,8 @@ def test_reading_past_the_library_gives_the_same_bytes(
     for rows, columns in [((0, 37), (0, 23)), ((5, 31), (3, 20)), ((36, 37), (22, 23)), ((0, 20), (7, 21))]:
         shape = (rows[1] - rows[0], columns[1] - columns[0])
         found, wanted = np.zeros(shape, source.spec.dtype), np.ones(shape, source.spec.dtype)
-        fill(rows, columns, found)
-        library(rows, columns, wanted)
+        fill((rows, columns), found)
+        library((rows, columns), wanted)
         assert found.tobytes() == wanted.tobytes()
 
 
@@ -91,8 +91,8 @@ def test_contiguous_entries_past_the_library_give_the_same_bytes(tmp_path: Path,
     for rows, columns in [((0, 300), (0, 50)), ((17, 290), (0, 50)), ((3, 200), (11, 12)), ((299, 300), (49, 50))]:
         found = np.zeros((rows[1] - rows[0], columns[1] - columns[0]), source.spec.dtype)
         wanted = np.ones_like(found)
-        fill(rows, columns, found)
-        library_reader(dataset)(rows, columns, wanted)
+        fill((rows, columns), found)
+        library_reader(dataset)((rows, columns), wanted)
         assert found.tobytes() == wanted.tobytes()
 
 

@@ -36,7 +36,7 @@ def test_a_survey_of_hdf5_names_sizes_types_filters_and_reasons(tmp_path: Path) 
     assert x.decoded_bytes == 37 * 23 * 2
     assert x.stored_bytes
     assert found["/deep/er/y"].dtype == "float32 big-endian"
-    assert "3-D" in found["/deep/er/y"].reason
+    assert (found["/deep/er/y"].usable, found["/deep/er/y"].option) == (True, "0")
     assert found["/deep/er/y"].encoding == "contiguous"
     assert "not numbers but text" in found["/text"].reason
     assert "holds no values" in found["/null"].reason

@@ -104,8 +104,8 @@ def agree(path: Path) -> None:
     for rows, columns in RECTANGLES:
         shape = (rows[1] - rows[0], columns[1] - columns[0])
         found, wanted = np.zeros(shape, source.spec.dtype), np.ones(shape, source.spec.dtype)
-        direct(rows, columns, found)
-        library(rows, columns, wanted)
+        direct((rows, columns), found)
+        library((rows, columns), wanted)
         assert found.tobytes() == wanted.tobytes(), (rows, columns)
 
 
