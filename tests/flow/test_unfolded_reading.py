@@ -106,6 +106,26 @@ def test_frames_with_missing_entries_are_left_out_and_their_names_with_them(tmp_
     np.testing.assert_array_equal(again.axes.sample_mask, kept)
 
 
+@pytest.mark.parametrize("axis", ["rows", "columns"])
+def test_names_and_what_is_left_out_stand_in_the_order_of_the_file_where_samples_have_two_axes(
+    tmp_path: Path, axis: str
+) -> None:
+    values = film()[:, :, :16].reshape(T, 23, 4, 4)
+    values[3, 4, 1, 2] = values[89, 22, 0, 0] = np.nan
+    with h5py.File(tmp_path / "a.h5", "w") as file:
+        file.create_dataset("s", data=values, chunks=(32, 9, 4, 4))
+    (tmp_path / "names.txt").write_text("".join(f"n{number}\n" for number in range(T * 23)))
+    reading = {"sample_axes": "0,1", "missing": "drop-rows", "row_names": str(tmp_path / "names.txt")}
+    factors = bigsvd.decompose(tmp_path / "a.h5", tmp_path / "o.zarr", rank=4, axis=axis, tolerance=1e-8, **reading)
+    matrix = values.reshape(T * 23, 16)
+    kept = ~np.isnan(matrix).any(axis=1)
+    require_factors(factors, matrix[kept])
+    assert list(factors.sample_names[:]) == [f"n{number}" for number in np.flatnonzero(kept)]
+    assert factors.attributes["source"]["missing"]["left_out"] == [[3 * 23 + 4, 3 * 23 + 5], [T * 23 - 1, T * 23]]
+    np.testing.assert_array_equal(np.isnan(factors.images(1, side="samples")[0]), ~kept.reshape(T, 23))
+    assert bigsvd.verify(factors, tmp_path / "a.h5", **reading).agrees
+
+
 @pytest.mark.parametrize("zarr_format", [2, 3])
 def test_a_level_of_an_image_is_taken_and_then_unfolded(tmp_path: Path, zarr_format: int) -> None:
     group = zarr.create_group(tmp_path / "cells.zarr", zarr_format=zarr_format)
