@@ -190,7 +190,7 @@ class Side:
         --------
         >>> side = Side((np.array([0, 2, 3]), np.array([0, 2, 4]))).only(np.array([1, 4, 9]))
         >>> side.edges, side.file_order(0, 3)
-        (array([0, 1, 2, 3]), array([ 1,  2, 11]))
+        (array([0, 1, 2, 3]), array([1, 2, 9]))
         """
         chosen = np.zeros(math.prod(self.lengths), np.bool_)
         chosen[self.file_order(0, self.size)[kept]] = True
